@@ -1,0 +1,1 @@
+"""What the loop is: exact mathematics, without randomness or files."""

@@ -1,0 +1,346 @@
+"""Margins and sensitivity peaks, with dead time exact, of the loop as analogue and as sampled.
+
+Margins are the smallest over all crossovers; peaks are the supremum over all frequencies, both ends
+included.  A loop that is not stable has no margins.
+
+Source of the definitions: S. Skogestad and I. Postlethwaite, "Multivariable Feedback Control",
+2nd ed., Wiley, 2005, section 2.4 (from memory).
+"""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Callable
+from dataclasses import dataclass
+from typing import Final
+
+import numpy as np
+from numpy.typing import NDArray
+
+from workbench.errors import NotApplicable
+from workbench.model.feedback import Loop
+from workbench.model.sampled import SampledLoop
+from workbench.model.stability import Verdict, loop_verdict
+from workbench.model.transfer import Complex, TransferFunction
+from workbench.units import Figure
+
+Floats = NDArray[np.float64]
+Response = Callable[[Floats], Complex]
+
+_NOT_STABLE: Final = "the loop is not stable"
+_FINEST: Final = 60_000
+"""Most frequencies looked at in one sweep."""
+
+
+@dataclass(frozen=True)
+class Margins:
+    """How far the loop is from instability; every figure may be missing, with its reason."""
+
+    stable: bool
+    reason: str
+    """Why the loop is not stable; empty where it is."""
+    gain_margin: Figure
+    """Ratio above 1 by which the loop gain may grow."""
+    gain_margin_lower: Figure
+    """Ratio below 1 to which the loop gain may fall, where a fall can make the loop unstable."""
+    phase_margin_deg: Figure
+    delay_margin_s: Figure
+    """Further dead time that the loop survives [s]."""
+    max_sensitivity: Figure
+    """Ms, the largest |1/(1 + L)|."""
+    max_complementary_sensitivity: Figure
+    """Mt, the largest |L/(1 + L)|."""
+    gain_crossover_rad_s: Figure
+    phase_crossover_rad_s: Figure
+
+
+def analogue_margins(loop: Loop) -> Margins:
+    """Margins of the loop with an analogue controller, exact with dead time."""
+    open_loop = loop.open_loop()
+    verdict = loop_verdict(open_loop)
+    if not verdict.stable:
+        return _none(verdict)
+
+    def response(w: Floats) -> Complex:
+        return open_loop((1j * w).astype(np.complex128))
+
+    corners = _corners(open_loop)
+    grid = _grid(response, corners, max(open_loop.delays, default=0.0))
+    settled = _at_infinity(open_loop)
+    delayed = open_loop.dead_time > 0.0
+    return _margins(response, grid, open_loop, far=abs(settled) if delayed else settled)
+
+
+def sampled_margins(loop: Loop) -> Margins:
+    """Margins of the loop as sampled: hold, scan and computing delay included.
+
+    Frequencies run up to half the scan rate.
+    """
+    sampled = SampledLoop.of(loop)
+    verdict = sampled.verdict()
+    if not verdict.stable:
+        return _none(verdict)
+    top = math.pi / sampled.scan
+
+    def response(w: Floats) -> Complex:
+        return sampled.open_loop(np.exp(1j * w * sampled.scan))
+
+    open_loop = loop.open_loop()
+    delay = max(open_loop.delays, default=0.0) + loop.computing_delay + sampled.scan
+    corners = _corners(open_loop)
+    grid = _grid(response, corners[corners < top], delay, top)
+    last = float(response(np.array([top]))[0].real)
+    return _margins(response, grid, open_loop, far=last, far_at=top)
+
+
+def ultimate(plant: TransferFunction) -> tuple[float, float]:
+    """Ultimate gain and period: where proportional control of a plant just keeps swinging.
+
+    Parameters
+    ----------
+    plant
+        Stable or integrating, positive gain [%/%].
+
+    Returns
+    -------
+    tuple
+        Ku [%/%] and Pu [s].
+
+    Raises
+    ------
+    NotApplicable
+        The plant is unstable, or its phase never reaches -180 deg.
+    """
+    if any(p.real > 0 for p in plant.poles()):
+        raise NotApplicable("the plant is unstable", limit="wants a stable or integrating plant")
+
+    def response(w: Floats) -> Complex:
+        return plant((1j * w).astype(np.complex128))
+
+    grid = _grid(response, _corners(plant), max(plant.delays, default=0.0))
+    found = _phase_crossovers(response, grid, response(grid))
+    if not found:
+        raise NotApplicable(
+            "no proportional gain makes the loop swing for ever",
+            limit="wants a phase that reaches -180 deg",
+        )
+    gain, frequency = min(found)
+    return gain, 2.0 * math.pi / frequency
+
+
+def _none(verdict: Verdict) -> Margins:
+    missing = Figure(None, f"{_NOT_STABLE}: {verdict.reason}")
+    return Margins(False, verdict.reason, *([missing] * 8))
+
+
+# --- the frequencies to look at ------------------------------------------------------------------
+
+
+def _corners(function: TransferFunction) -> Floats:
+    """Frequencies where something happens [rad/s]: every root and every dead time."""
+    terms = (*function.numerator, *function.denominator)
+    found = [abs(r) for t in terms for r in t.polynomial.roots if r]
+    found += [1.0 / t.dead_time for t in terms if t.dead_time]
+    return np.array(sorted(found) or [1.0])
+
+
+def _at_infinity(function: TransferFunction) -> float:
+    """Limit of the rational part at high frequency, the dead times apart."""
+    if function.relative_degree > 0:
+        return 0.0
+    below = function.denominator[0].polynomial.coefficients[0]
+    order = function.denominator[0].polynomial.degree
+    tops = [t.polynomial for t in function.numerator if t.polynomial.degree == order]
+    if function.dead_time > 0.0:
+        return float(sum(abs(t.coefficients[0]) for t in tops) / abs(below))
+    return float(sum(t.coefficients[0] for t in tops) / below)
+
+
+def _grid(response: Response, corners: Floats, delay: float, top: float = math.inf) -> Floats:
+    """Frequencies dense enough that the response never turns unseen between two of them."""
+    low = float(corners.min(initial=min(1.0, top))) * 1e-3
+    high = min(float(corners.max(initial=low)) * 1e3, top)
+    coarse = np.geomspace(low, high, 30 * math.ceil(math.log10(high / low)) + 2)
+    pieces = [coarse]
+    if delay:
+        # Where the gain still matters the phase of the dead time must be followed turn by turn,
+        # and one whole turn beyond, which holds the last crossing that can count.
+        large = np.flatnonzero(np.abs(response(coarse)) > 0.3)
+        matters = float(coarse[large[-1]]) if len(large) else low
+        last = min(matters + 7.0 / delay, high)
+        count = min(int(last * delay / 0.2) + 2, _FINEST // 2)
+        pieces.append(np.linspace(low, last, count))
+    grid = np.unique(np.concatenate(pieces))
+    # A frequency on a pole of the imaginary axis itself has no value.
+    grid = grid[np.isfinite(response(grid))]
+    return _refined(response, grid)
+
+
+def _refined(response: Response, grid: Floats) -> Floats:
+    values = response(grid)
+    for _ in range(12):
+        step = np.abs(np.diff(values))
+        distance = np.abs(1.0 + values)
+        near = np.minimum(distance[1:], distance[:-1])
+        size = np.maximum(np.minimum(np.abs(values[1:]), np.abs(values[:-1])), 1e-3)
+        coarse = step > 0.35 * np.minimum(near, size)
+        if not coarse.any() or len(grid) + coarse.sum() > _FINEST:
+            break
+        extra = np.sqrt(grid[:-1][coarse] * grid[1:][coarse])
+        where = np.searchsorted(grid, extra)
+        grid = np.insert(grid, where, extra)
+        values = np.insert(values, where, response(extra))
+    return grid
+
+
+# --- crossovers and peaks ------------------------------------------------------------------------
+
+
+def _crossings(f: Callable[[Floats], Floats], low: Floats, high: Floats) -> Floats:
+    """Roots of f between brackets, all at once, by the Illinois variant of false position."""
+    if not len(low):
+        return low
+    a, b, fa, fb = low.copy(), high.copy(), f(low), f(high)
+    x = b
+    for _ in range(60):
+        x = np.where(fb == fa, b, b - fb * (b - a) / np.where(fb == fa, 1.0, fb - fa))
+        fx = f(x)
+        crossed = fx * fb < 0
+        fa = np.where(crossed, fb, fa / 2.0)
+        a = np.where(crossed, b, a)
+        b, fb = x, fx
+        if np.all((np.abs(fx) < 1e-12) | (np.abs(b - a) <= 1e-13 * np.abs(b))):
+            break
+    return x
+
+
+def _peak(f: Callable[[Floats], Floats], grid: Floats, values: Floats) -> float:
+    """Largest value of f on the grid, each promising hill climbed between its neighbours."""
+    best = float(values.max())
+    inside = np.flatnonzero((values[1:-1] >= values[:-2]) & (values[1:-1] >= values[2:])) + 1
+    inside = inside[values[inside] > 0.8 * best]
+    if not len(inside):
+        return best
+    low, high = grid[inside - 1], grid[inside + 1]
+    for _ in range(7):
+        points = np.linspace(low, high, 13)
+        heights = f(points.ravel()).reshape(points.shape)
+        top = heights.argmax(axis=0)
+        best = max(best, float(heights.max()))
+        columns = np.arange(points.shape[1])
+        low = points[np.maximum(top - 1, 0), columns]
+        high = points[np.minimum(top + 1, 12), columns]
+    return best
+
+
+def _margins(
+    response: Response,
+    grid: Floats,
+    open_loop: TransferFunction,
+    *,
+    far: float,
+    far_at: float | None = None,
+) -> Margins:
+    """All figures of a stable loop; `far` is the response at the last frequency, `far_at`."""
+    values = response(grid)
+    gain_low, gain_high, at_phase = _gain_margins(response, grid, values, open_loop, far, far_at)
+    phase, delay, at_gain = _phase_margins(response, grid, values)
+    if far_at is None and abs(far) >= 1.0:
+        # The least dead time makes a loop of neutral type whose gain at high frequency is too much.
+        delay = Figure.of(0.0)
+    ends = _ends(open_loop, far, delayed=far_at is None and open_loop.dead_time > 0.0)
+    sensitivity = _peak(lambda w: 1.0 / np.abs(1.0 + response(w)), grid, 1.0 / np.abs(1.0 + values))
+    complementary = _peak(
+        lambda w: np.abs(1.0 - 1.0 / (1.0 + response(w))), grid, np.abs(1.0 - 1.0 / (1.0 + values))
+    )
+    return Margins(
+        True,
+        "",
+        gain_high,
+        gain_low,
+        phase,
+        delay,
+        Figure.of(max(sensitivity, *(s for s, _ in ends))),
+        Figure.of(max(complementary, *(t for _, t in ends))),
+        at_gain,
+        at_phase,
+    )
+
+
+def _ends(open_loop: TransferFunction, far: float, *, delayed: bool) -> list[tuple[float, float]]:
+    """(|S|, |T|) at frequency 0 and at the last frequency."""
+    at_zero = open_loop.gain().value
+    ends = [(0.0, 1.0)] if at_zero is None else [_sizes(at_zero)]
+    # With dead time the far phase takes every value, so the worst of them counts.
+    ends.append(_sizes(-far) if delayed else _sizes(far))
+    return ends
+
+
+def _sizes(value: float) -> tuple[float, float]:
+    return abs(1.0 / (1.0 + value)), abs(value / (1.0 + value))
+
+
+def _gain_margins(
+    response: Response,
+    grid: Floats,
+    values: Complex,
+    open_loop: TransferFunction,
+    far: float,
+    far_at: float | None,
+) -> tuple[Figure, Figure, Figure]:
+    """Lower and upper gain margin, and the frequency of the upper one."""
+    found = _phase_crossovers(response, grid, values)
+    at_zero = open_loop.gain().value
+    if at_zero is not None and at_zero < 0.0:
+        found.append((-1.0 / at_zero, 0.0))
+    delayed = far_at is None and open_loop.dead_time > 0.0
+    if (delayed and far) or far < 0.0:
+        found.append((1.0 / abs(far), math.inf if far_at is None else far_at))
+    above = [pair for pair in found if pair[0] > 1.0]
+    below = [pair[0] for pair in found if pair[0] < 1.0]
+    lower = Figure.of(max(below)) if below else Figure(None, "no fall of the gain upsets this loop")
+    if not above:
+        never = Figure(None, "the phase never reaches -180 deg where more gain could matter")
+        return lower, never, never
+    margin, frequency = min(above)
+    if math.isinf(frequency):
+        place = Figure(None, "the smallest margin is the limit at infinite frequency")
+    else:
+        place = Figure.of(frequency)
+    return lower, Figure.of(margin), place
+
+
+def _phase_crossovers(
+    response: Response, grid: Floats, values: Complex
+) -> list[tuple[float, float]]:
+    """(1/|L|, frequency) wherever L crosses the negative real axis."""
+    turn = np.angle(-values)
+    cut = (turn[:-1] * turn[1:] <= 0.0) & (np.abs(turn[:-1] - turn[1:]) < math.pi)
+    at = _crossings(lambda w: np.angle(-response(w)), grid[:-1][cut], grid[1:][cut])
+    sizes = np.abs(response(at)) if len(at) else at
+    return [(float(1.0 / m), float(w)) for m, w in zip(sizes, at, strict=True) if m]
+
+
+def _phase_margins(
+    response: Response, grid: Floats, values: Complex
+) -> tuple[Figure, Figure, Figure]:
+    """Phase margin [deg], delay margin [s] and the crossover of the phase margin [rad/s]."""
+
+    def log_size(response: Complex) -> Floats:
+        return np.log(np.maximum(np.abs(response), 1e-300))
+
+    size = log_size(values)
+    cut = size[:-1] * size[1:] <= 0.0
+    at = _crossings(lambda w: log_size(response(w)), grid[:-1][cut], grid[1:][cut])
+    if not len(at):
+        never = Figure(None, "the loop gain never crosses 1")
+        return never, never, never
+    lag = np.angle(-response(at))
+    phase = np.degrees(np.abs(lag))
+    delay = np.where(lag > 0.0, lag, lag + 2.0 * math.pi) / at
+    narrowest = int(phase.argmin())
+    return (
+        Figure.of(float(phase[narrowest])),
+        Figure.of(float(delay.min())),
+        Figure.of(float(at[narrowest])),
+    )

@@ -1,0 +1,1 @@
+"""What to set: published tuning rules, with their limits and sources."""
