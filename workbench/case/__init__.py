@@ -1,0 +1,1 @@
+"""What we keep: the case file and its history."""

@@ -1,0 +1,1 @@
+"""What the plant did: reading records and finding the plant that made them."""

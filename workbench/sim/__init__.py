@@ -1,0 +1,1 @@
+"""What the loop does: the controller and the plant in sampled time."""

@@ -1,0 +1,67 @@
+"""The answers: a case goes in, frozen results come out.  Every front end asks here, only here.
+
+Everything that goes in or comes out is in the loop's own engineering units; percent of span is used
+between this room and the rooms below it.
+"""
+
+from workbench.study.assessment import (
+    Assessment,
+    LoopFigures,
+    PlantFigures,
+    Reduced,
+    assess,
+    reductions,
+)
+from workbench.study.evaluation import HANDOVER, Evaluation, cautions, evaluate
+from workbench.study.keep import (
+    FileCheck,
+    accept,
+    check_case,
+    chosen_candidate,
+    fit_record,
+    record_change,
+)
+from workbench.study.loop import action_of, controller_of, loop_of, plant_of, units_of
+from workbench.study.prediction import (
+    Prediction,
+    Response,
+    Trend,
+    predict,
+    respond,
+    respond_to_record,
+)
+from workbench.study.proposals import Proposal, Wish, propose, take
+
+__all__ = [
+    "HANDOVER",
+    "Assessment",
+    "Evaluation",
+    "FileCheck",
+    "LoopFigures",
+    "PlantFigures",
+    "Prediction",
+    "Proposal",
+    "Reduced",
+    "Response",
+    "Trend",
+    "Wish",
+    "accept",
+    "action_of",
+    "assess",
+    "cautions",
+    "check_case",
+    "chosen_candidate",
+    "controller_of",
+    "evaluate",
+    "fit_record",
+    "loop_of",
+    "plant_of",
+    "predict",
+    "propose",
+    "record_change",
+    "reductions",
+    "respond",
+    "respond_to_record",
+    "take",
+    "units_of",
+]

@@ -1,0 +1,230 @@
+"""From a record to a plant, from settings to the history, and whether a file still holds."""
+
+from __future__ import annotations
+
+import hashlib
+from collections.abc import Callable
+from dataclasses import dataclass, fields, replace
+from datetime import datetime
+from pathlib import Path
+from typing import Final
+
+from workbench import __version__
+from workbench.case.case import Case, Revision, with_settings
+from workbench.case.files import read_case
+from workbench.errors import (
+    InputError,
+    Problem,
+    WorkbenchError,
+    problem,
+)
+from workbench.model.pid import Controller
+from workbench.model.plant import Formula, Shape
+from workbench.records.identify import Candidate, Fit
+from workbench.records.identify import fit as fit_plants
+from workbench.records.record import read_record
+from workbench.study.assessment import assess
+from workbench.study.loop import controller_of
+from workbench.study.prediction import predict
+from workbench.units import Amount, rounded, text
+
+
+@dataclass(frozen=True)
+class FileCheck:
+    """Whether one case file is sound and its figures still come out."""
+
+    path: str
+    ok: bool
+    faults: tuple[Problem, ...]
+
+
+def fit_record(  # noqa: PLR0913 - one argument for each option of the command
+    path: str | Path,
+    *,
+    time: str | None = None,
+    pv: str | None = None,
+    op: str | None = None,
+    sp: str | None = None,
+    mode: str | None = None,
+    start: str | None = None,
+    end: str | None = None,
+    shapes: tuple[str, ...] = ("first-order", "integrating"),
+    noise_model: str = "auto",
+    drift: bool = True,
+    should_stop: Callable[[], bool] | None = None,
+) -> Fit:
+    """Fit plant models to a test record.  Raises `RecordError` or `CannotSolve`."""
+    record = read_record(path, time=time, pv=pv, op=op, sp=sp, mode=mode, start=start, end=end)
+    return fit_plants(
+        record, shapes=shapes, noise_model=noise_model, drift=drift, should_stop=should_stop
+    )
+
+
+def chosen_candidate(fit: Fit, shape: str | None = None) -> Candidate:
+    """The candidate of a shape, or the one the fit chose.
+
+    Raises `InputError` where the record cannot tell, or has no candidate of that shape.
+    """
+    wanted = shape or fit.chosen
+    for candidate in fit.candidates:
+        if candidate.shape == wanted:
+            return candidate
+    if wanted is None:
+        raise problem("the record cannot tell the plant", fit.reason or "take another record")
+    raise problem(f"the fit has no {wanted} candidate", "choose one that is listed", key="--shape")
+
+
+def accept(case: Case, fit: Fit, shape: str | None = None) -> Case:
+    """The case with the fitted plant, and where it came from; to four significant digits."""
+    candidate = chosen_candidate(fit, shape)
+    plant = replace(
+        case.plant,
+        process=_shape_as_typed(candidate.plant),
+        from_=Path(fit.record.path).name,
+        from_sha256=fit.record.sha256,
+    )
+    return replace(case, plant=plant)
+
+
+def _shape_as_typed(process: Shape) -> Shape:
+    if isinstance(process, Formula):
+        return process
+    changed: dict[str, object] = {}
+    for field in fields(process):
+        value = getattr(process, field.name)
+        if isinstance(value, Amount):
+            changed[field.name] = Amount(rounded(value.value), value.unit)
+        elif isinstance(value, float):
+            changed[field.name] = rounded(value)
+    return replace(process, **changed)  # type: ignore[arg-type]
+
+
+_RECORDED: Final = ("max_sensitivity", "load_iae", "setpoint_iae", "phase_margin_deg")
+"""Figures that a history entry keeps and a check makes again."""
+
+
+_SAME_FIGURE: Final = 0.005
+"""Share by which a figure made again may differ."""
+
+
+def record_change(
+    case: Case, *, who: str, why: str, now: datetime, kind: str = "installed"
+) -> Case:
+    """The case with a history entry for its present settings, and the figures predicted for them.
+
+    Raises `InputError` where the loop has no controller, or who or why is blank.
+    """
+    faults = [
+        Problem("is blank", mend, key)
+        for key, value, mend in (
+            ("who", who, "say who makes the change"),
+            ("why", why, "say why, in a few words"),
+        )
+        if not value.strip()
+    ]
+    if faults:
+        raise InputError(faults)
+    figures = _figures_now(case)
+    entry = Revision(
+        at=now,
+        who=who.strip(),
+        kind=kind,
+        why=why.strip(),
+        controller=controller_of(case),
+        program=__version__,
+        **{name: rounded(value, 6) for name, value in figures.items()},
+    )
+    return case.with_entry(entry)
+
+
+def _figures_now(case: Case) -> dict[str, float]:
+    """Figures of the loop as it will run; those that do not exist are left out."""
+    assessment = assess(case)
+    judged = assessment.judged
+    assert judged is not None
+    measures = predict(case).measures
+    found = {
+        "max_sensitivity": judged.margins.max_sensitivity,
+        "phase_margin_deg": judged.margins.phase_margin_deg,
+        "load_iae": measures.load_iae,
+        "setpoint_iae": measures.setpoint_iae,
+    }
+    if not judged.margins.stable:
+        return {}
+    return {name: figure.value for name, figure in found.items() if figure.value is not None}
+
+
+def check_case(path: str | Path) -> FileCheck:
+    """Whether a case file is sound: format, limits, its record, and its newest figures made again.
+
+    Raises `InputError` where the file is not there.
+    """
+    try:
+        file = read_case(path)
+    except InputError as fault:
+        if not Path(path).is_file():
+            raise
+        return FileCheck(str(path), False, fault.problems)
+    faults = [*_record_faults(file.case, Path(path)), *_figure_faults(file.case)]
+    placed = tuple(replace(fault, path=str(path)) for fault in faults)
+    return FileCheck(str(path), not placed, placed)
+
+
+def _record_faults(case: Case, path: Path) -> list[Problem]:
+    """The record that the plant came from, found by name and SHA-256."""
+    if not case.plant.from_:
+        return []
+    record = path.parent / case.plant.from_
+    if not record.is_file():
+        return [
+            Problem(
+                f"the record {case.plant.from_!r} is not beside the case",
+                "put it back, or accept a fit of another record",
+                "plant.from",
+            )
+        ]
+    digest = hashlib.sha256(record.read_bytes()).hexdigest()
+    if case.plant.from_sha256 and digest != case.plant.from_sha256:
+        return [
+            Problem(
+                f"the record {case.plant.from_!r} is not the one the plant was fitted to",
+                "fit it again, or put the old record back",
+                "plant.from_sha256",
+            )
+        ]
+    return []
+
+
+def _figure_faults(case: Case) -> list[Problem]:
+    """Figures of the newest settings in the history that no longer come out."""
+    number, entry = len(case.history), None
+    for revision in reversed(case.history):
+        if revision.controller is not None:
+            entry = revision
+            break
+        number -= 1
+    if entry is None or not any(getattr(entry, name) is not None for name in _RECORDED):
+        return []
+    try:
+        now = _figures_now(replace(case, controller=_controller_of_entry(case, entry)))
+    except WorkbenchError as fault:
+        return [Problem(f"the figures cannot be made again: {fault}", "", f"history {number}")]
+    faults = []
+    for name in _RECORDED:
+        then, value = getattr(entry, name), now.get(name)
+        if then is None or (value is not None and abs(value - then) <= _SAME_FIGURE * abs(then)):
+            continue
+        found = "does not exist now" if value is None else f"comes out as {text(value, digits=6)}"
+        faults.append(
+            Problem(
+                f"{name} was {text(then, digits=6)} and {found}",
+                "plant, scenario or settings changed since: save again with a reason",
+                f"history {number}",
+            )
+        )
+    return faults
+
+
+def _controller_of_entry(case: Case, entry: Revision) -> Controller:
+    """The entry's settings; what an entry does not name stays as the case has it."""
+    return controller_of(with_settings(case, entry))

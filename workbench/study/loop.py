@@ -1,0 +1,90 @@
+"""From a case to the mathematics: plant, controller and loop, in percent of span."""
+
+from __future__ import annotations
+
+from workbench.case.case import Case
+from workbench.errors import (
+    problem,
+)
+from workbench.model.feedback import Loop
+from workbench.model.pid import Controller
+from workbench.model.transfer import TransferFunction
+
+
+def units_of(case: Case) -> dict[str, str]:
+    """The loop's own units by quantity."""
+    pv, op = case.pv.unit, case.op.unit
+    return {"pv": pv, "op": op, "gain": f"{pv}/{op}", "slope_per_s": f"{pv}/({op} s)"}
+
+
+def plant_of(case: Case) -> TransferFunction:
+    """The plant [PV unit per OP unit].  Raises `InputError` where the case has none yet."""
+    if case.plant.process is None:
+        raise problem(
+            "the case has no plant yet", "enter one, or accept the fit of a record", key="plant"
+        )
+    return case.plant.process.transfer()
+
+
+def controller_of(case: Case) -> Controller:
+    """The controller.  Raises `InputError` where the case has none yet."""
+    if case.controller is None:
+        raise problem(
+            "the case has no controller yet", "give its gain or proportional band", key="controller"
+        )
+    return case.controller
+
+
+def action_of(case: Case) -> tuple[str, str]:
+    """The controller's action, and how it was chosen where it was not given.
+
+    Raises `InputError` for an unstable plant without a stated action.
+    """
+    given = case.controller.action if case.controller else None
+    if given is not None:
+        return given, ""
+    plant = plant_of(case)
+    if any(p.real > 0 for p in plant.poles()):
+        raise problem(
+            "is needed: the plant is unstable, so its gain does not tell the action",
+            "give reverse (OP rises when PV falls) or direct",
+            key="controller.action",
+        )
+    gain = plant.gain().value
+    slope = plant.slope().value
+    word, value = ("gain", gain) if gain else ("slope", slope)
+    if not value:
+        raise problem(
+            "is needed: the plant has neither a steady gain nor a slope to tell it",
+            "give reverse (OP rises when PV falls) or direct",
+            key="controller.action",
+        )
+    sign = "positive" if value > 0 else "negative"
+    action = "reverse" if value > 0 else "direct"
+    return action, f"{action} action, because the plant's {word} is {sign}"
+
+
+def loop_of(case: Case) -> Loop:
+    """The loop in percent of span.  Raises `InputError` where plant or controller is missing."""
+    controller = controller_of(case)
+    pv, op = case.pv, case.op
+    plant = plant_of(case) * (op.range.span / pv.range.span)
+    load = case.plant.load_path()
+    return Loop(
+        plant=plant,
+        load=plant if load is None else load * (100.0 / pv.range.span),
+        gains=controller.gains(),
+        reverse=action_of(case)[0] == "reverse",
+        scan=controller.scan_s,
+        computing_delay=controller.computing_delay_s,
+        pv_filter=pv.filter.seconds if pv.filter else 0.0,
+        low=None if op.min is None else op.range.percent(op.min - op.rest),
+        high=None if op.max is None else op.range.percent(op.max - op.rest),
+        rate=None if op.rate is None else op.range.percent(op.rate.per_second),
+        windup=controller.windup,
+    )
+
+
+def load_scale(case: Case) -> float:
+    """Load input of the percent loop for 1 unit of the case's load."""
+    return 100.0 / case.op.range.span if case.plant.load is None else 1.0
