@@ -14,28 +14,34 @@ from dataclasses import replace
 from typing import Any, Final, cast
 
 from workbench.case.reading import ASSUMED, assemble
+from workbench.case.drawing import show_part, spelled_out, told_as_typed
 from workbench.case.tables import (
+    PROCESSES,
     SHAPE,
     TABLES,
+    WITH_TIME_UNIT,
     Case,
     LoopTable,
     OpTable,
     PlantTable,
+    Process,
     PvTable,
     Revision,
     Values,
     defaults_of,
     known_keys,
     plant_values,
+    process_keys,
     shape_name,
     table_values,
     unknown_key,
 )
 from workbench.errors import InputError, Problem
+from workbench.model.blocks import Block, Blocks
 from workbench.model.formula import format_formula
-from workbench.model.plant import SHAPES, Formula, IntegratingLag, Oscillating, Shape, Vessel
+from workbench.model.plant import Formula, IntegratingLag, Oscillating, Vessel, write_function
 from workbench.model.transfer import TransferFunction
-from workbench.units import MISSING, TIME_UNITS, Amount, Quantity, Value, quantities
+from workbench.units import MISSING, TIME_UNITS, Amount, Quantity, Value
 
 __all__ = [
     "Case",
@@ -81,6 +87,9 @@ def show(case: Case, key: str) -> str:
 
     Raises `InputError` for a key that cannot be set now.
     """
+    part = show_part(case, key)
+    if part is not None:
+        return part
     declared = keys(case).get(key)
     if declared is None:
         raise InputError(unknown_key(key, list(keys(case)), shape_name(case.plant.process)))
@@ -142,8 +151,9 @@ def edit(case: Case, key: str, text: str) -> Case:
     """The case with one key set from typed text; empty text puts an optional key at its default.
 
     Setting `controller.gain` drops `proportional_band` and the other way round; setting
-    `plant.formula` makes the plant a formula; setting `plant.shape` keeps the values that the new
-    shape also has.  Raises `InputError` with the key, what is wrong and what is accepted.
+    `plant.formula` makes the plant a formula, setting `plant.blocks` blocks; setting `plant.shape`
+    keeps the values that the new shape also has.  The key `plant` is the whole plant on one line,
+    and `plant.block.valve.formula` one key of one block.  Raises `InputError` with the key, what is wrong and what is accepted.
     """
     return edit_all(case, {key: text})
 
@@ -153,6 +163,15 @@ def edit_all(case: Case, changes: Mapping[str, str]) -> Case:
 
     Raises `InputError` with every fault.
     """
+    spelled: Mapping[str, str] = {}
+    try:
+        spelled = spelled_out(case, changes)
+        return _edit_all(case, spelled)
+    except InputError as fault:
+        raise InputError(told_as_typed(fault.problems, case, changes, spelled)) from None
+
+
+def _edit_all(case: Case, changes: Mapping[str, str]) -> Case:
     shape, tables = _reshape(case, changes)
     has_load = case.plant.load is not None or bool(changes.get("plant.load", "").strip())
     known = {
@@ -201,16 +220,18 @@ def _reshape(case: Case, changes: Mapping[str, str]) -> tuple[str | None, dict[s
     shape = present
     if "plant.shape" in changes:
         word = changes["plant.shape"].strip().strip("\"'")
-        shape = word if word in SHAPES else (None if word in ("", "none") else present)
+        shape = word if word in PROCESSES else (None if word in ("", "none") else present)
     elif changes.get("plant.formula", "").strip():
         shape = "formula"
+    elif changes.get("plant.blocks", "").strip():
+        shape = "blocks"
     if shape != present and present is not None:
-        kept = quantities(SHAPES[shape]) if shape else {}
+        kept = process_keys(shape) if shape else {}
         has_load = case.plant.load is not None
-        for name in ("shape", *quantities(SHAPES[present])):
+        for name in ("shape", *process_keys(present)):
             if name not in kept and not (name == "time_unit" and has_load):
                 tables["plant"].pop(name, None)
-    if shape != present and shape not in (None, "formula"):
+    if shape != present and shape not in (None, *WITH_TIME_UNIT):
         tables["plant"]["shape"] = shape
     return shape, tables
 
@@ -225,9 +246,9 @@ def _set(
         optional = defaults_of(table, shape).get(key, None) is None
         if not words or (words == "none" and optional and declared.kind not in ("text", "filter")):
             values.pop(key, None)
-            if key == "load" and shape != "formula":
+            if key == "load" and shape not in WITH_TIME_UNIT:
                 values.pop("time_unit", None)
-        elif (table, key, words) == ("plant", "shape", "formula"):
+        elif (table, key) == ("plant", "shape") and words in WITH_TIME_UNIT:
             values.pop(key, None)
         else:
             values[key] = declared.parse(typed)
@@ -258,7 +279,7 @@ def with_settings(case: Case, entry: Revision) -> Case:
 
 def shape_keys(shape: str) -> tuple[str, ...]:
     """The keys that a plant shape cannot do without, in file order."""
-    return tuple(i.name for i in dataclasses.fields(SHAPES[shape]) if i.default is MISSING)
+    return tuple(i.name for i in dataclasses.fields(PROCESSES[shape]) if i.default is MISSING)
 
 
 def with_shape(case: Case, shape: str) -> Case:
@@ -266,8 +287,8 @@ def with_shape(case: Case, shape: str) -> Case:
 
     Values of the same name carry over.  slope = gain / time constant and back; a natural period is
     2 pi times the (mean) time constant and back; a vessel's flow / volume, over the loop's ranges,
-    is a slope and back; any shape becomes the formula that it is; a formula gives its gain or
-    slope, its dead time and its slowest stable lag.  What cannot be had so is assumed
+    is a slope and back; any shape becomes the formula that it is, or one block; a formula or blocks
+    give gain or slope, dead time and the slowest stable lag.  What cannot be had so is assumed
     (`assumed_keys` names it): no change of dynamics where there is such a value (one lag, a second
     lag of a tenth, no numerator time), else gain 1, time constant 10 s, volume 1.
     Raises `InputError` for an unknown shape, and for numbers that no other shape can hold.
@@ -275,7 +296,7 @@ def with_shape(case: Case, shape: str) -> Case:
     if shape == shape_name(case.plant.process):
         return case
     values, _ = _carried(case, _known_shape(shape))
-    return replace(case, plant=replace(case.plant, process=SHAPES[shape](**values)))
+    return replace(case, plant=replace(case.plant, process=PROCESSES[shape](**values)))
 
 
 def assumed_keys(case: Case, shape: str) -> tuple[str, ...]:
@@ -296,8 +317,11 @@ def _carried(case: Case, shape: str) -> tuple[dict[str, Any], list[str]]:
     known = {} if process is None else _equivalents(process, case.plant.time_unit, ranges)
     values: dict[str, Any] = {}
     assumed: list[str] = []
-    for item in dataclasses.fields(SHAPES[shape]):
-        if item.name in known:
+    for item in dataclasses.fields(PROCESSES[shape]):
+        if item.name == "blocks":
+            values["blocks"] = (Block(ASSUMED["name"], str(known.get("line", ASSUMED["formula"]))),)
+            assumed += [] if process else ["blocks"]
+        elif item.name in known:
             values[item.name] = known[item.name]
         elif item.default is MISSING:
             values[item.name] = ASSUMED[item.name]
@@ -315,13 +339,19 @@ def _carried(case: Case, shape: str) -> tuple[dict[str, Any], list[str]]:
     return values, assumed
 
 
-def _equivalents(process: Shape, time_unit: str, ranges: float) -> Values:
+def _equivalents(process: Process, time_unit: str, ranges: float) -> Values:
     """What a shape says about the keys of the others.
 
     A formula is in the plant's unit of time; `ranges` is the PV span over the OP span, by which a
     gain in percent becomes one in units.
     """
+    if isinstance(process, Blocks):
+        whole = process.transfer()
+        scaled = whole if time_unit == "s" else whole.with_time_unit(1 / TIME_UNITS[time_unit])
+        written: Values = {} if whole.has_delayed_feedback else {"formula": format_formula(scaled)}
+        return {**written, **_read_off(whole), "time_unit": time_unit}
     known: Values = {i.name: getattr(process, i.name) for i in dataclasses.fields(process)}
+    known["line"] = write_function(process)
     transfer = process.transfer() * (ranges if process.in_percent else 1.0)
     if isinstance(process, Vessel):
         known["slope"] = Amount(
@@ -335,6 +365,8 @@ def _equivalents(process: Shape, time_unit: str, ranges: float) -> Values:
             transfer if time_unit == "s" else transfer.with_time_unit(1 / TIME_UNITS[time_unit])
         )
         known["formula"], known["time_unit"] = format_formula(scaled), time_unit
+    if isinstance(process, Vessel):
+        known["line"] = known["formula"]
     if isinstance(process, Oscillating):
         lag = _tidy(process.natural_period.value / (2 * math.pi))
         known["time_constant"] = known["second_time_constant"] = Amount(
@@ -363,6 +395,8 @@ def _read_off(transfer: TransferFunction) -> Values:
         known["gain"] = _tidy(gain)
     if slope:
         known["slope"] = Amount(_tidy(slope), "/s")
+    if transfer.has_delayed_feedback:
+        return known
     decaying = [-pole.real for pole in transfer.poles() if pole.real < 0]
     if decaying:
         known["time_constant"] = Amount(_tidy(1 / min(decaying)), "s")

@@ -203,9 +203,13 @@ class _Lines:
 
     def of(self, key: str) -> int | None:
         """The line of a dotted key; `history[2].gain` is the gain of the second entry."""
-        table, _, rest = key.partition(".")
-        numbered = re.fullmatch(r"history\[(\d+)\]", table)
-        path = ["history", int(numbered[1]) - 1] if numbered else [table]
+        numbered = re.fullmatch(r"(history|plant\.block)\[(\d+)\](?:\.(.+))?", key)
+        if numbered:
+            path = [*numbered[1].split("."), int(numbered[2]) - 1]
+            rest = numbered[3]
+        else:
+            table, _, rest = key.partition(".")
+            path = [table]
         if rest:
             path.append(rest)
         if self._layout.setting(*path) is None and key in self._as_told:

@@ -13,6 +13,7 @@ from typing import Any, Final
 
 from workbench.case.tables import (
     AT_MEND,
+    PROCESSES,
     TABLES,
     Case,
     OpTable,
@@ -22,16 +23,19 @@ from workbench.case.tables import (
     Values,
     defaults_of,
     known_keys,
+    process_keys,
     spelling,
     unknown_key,
     values_of,
 )
 from workbench.errors import InputError, Problem
+from workbench.model.blocks import Block, Blocks, format_blocks, parse_blocks
 from workbench.model.pid import Controller
 from workbench.model.plant import SHAPES, Formula
 from workbench.sim.scenario import Scenario
 from workbench.units import (
     MISSING,
+    TIME_UNITS,
     Amount,
     Quantity,
     harmless,
@@ -92,6 +96,13 @@ def _read_table(name: str, raw: Mapping[str, object]) -> tuple[Values, set[str],
         if every and "shape" not in raw:
             faults.append(Problem("is missing", f"give {one_of(list(SHAPES))}", "plant.shape"))
             faulted.add("shape")
+        if shape == Blocks.shape:
+            raw, values, faults = _read_drawing(raw)
+            faulted |= {"blocks"} if faults else set()
+        if "blocks" in raw:
+            raw = {key: item for key, item in raw.items() if key != "blocks"}
+            mend = "write [[plant.block]] before the name and formula of each block"
+            faults.append(Problem("is how an edit writes it", mend, "plant.blocks"))
     known = {**every, **known_keys(name, shape, "load" in raw)}
     defaults = defaults_of(name, shape)
     for key, item in raw.items():
@@ -121,12 +132,66 @@ def _shape_in(raw: Mapping[str, object]) -> tuple[str | None, dict[str, Quantity
 
     A key is then read without asking whether it belongs: it may be right.
     """
-    word = raw.get("shape", "formula" if "formula" in raw else None)
-    if isinstance(word, str) and word in SHAPES:
+    kept = {"formula": Formula.shape, "block": Blocks.shape}
+    word = raw.get("shape", next((kept[key] for key in kept if key in raw), None))
+    if isinstance(word, str) and word in PROCESSES:
         return word, {}
     every = {key: each for kind in SHAPES.values() for key, each in quantities(kind).items()}
     del every["time_unit"]
     return None, every if word is not None or set(every) & set(raw) else {}
+
+
+def _read_drawing(raw: Mapping[str, object]) -> tuple[dict[str, object], Values, list[Problem]]:
+    """The plant's blocks out of a raw plant table: the rest, the blocks as one line, the faults."""
+    rest = {key: item for key, item in raw.items() if key not in ("block", "load_before")}
+    tables, given = raw.get("block"), {"load_before": raw.get("load_before", "")}
+    if not isinstance(tables, list) or not all(isinstance(each, dict) for each in tables):
+        what = "is missing" if tables is None else f"must be tables, not {shown(tables)}"
+        mend = "write [[plant.block]] before the name and formula of each block"
+        return rest, {}, [Problem(what, mend, "plant.block")]
+    faults: list[Problem] = []
+    values, _, found = _read_keys(given, quantities(Blocks))
+    faults += [replace(each, key=f"plant.{each.key}") for each in found]
+    blocks = []
+    for number, item in enumerate(tables, 1):
+        if len(faults) > MOST_FAULTS:
+            break
+        keys, bad, found = _read_keys(item, quantities(Block))
+        keys = {key: value.strip() for key, value in keys.items() if isinstance(value, str)}
+        made, more = _build(Block, keys, bad)
+        faults += [replace(p, key=f"plant.block[{number}].{p.key}") for p in (*found, *more)]
+        blocks.append(made)
+    if faults:
+        return rest, {}, faults
+    unit = raw.get("time_unit")
+    time_unit = unit if isinstance(unit, str) and unit in TIME_UNITS else "s"
+    try:
+        drawn = Blocks(tuple(blocks), time_unit, str(values["load_before"]).strip())
+    except InputError as fault:
+        return rest, {}, [replace(p, key=f"plant.{p.key or 'block'}") for p in fault.problems]
+    return rest, {"blocks": format_blocks(drawn)}, []
+
+
+def _read_keys(
+    raw: Mapping[str, object], known: Mapping[str, Quantity]
+) -> tuple[Values, set[str], list[Problem]]:
+    """The values of raw keys, the faulty keys, and the faults with their bare key."""
+    values: Values = {}
+    faulted: set[str] = set()
+    faults: list[Problem] = []
+    for key, item in raw.items():
+        declared = known.get(key)
+        if declared is None:
+            meant = nearest(key, list(known)) if len(key) <= 60 else ""
+            mend = f"did you mean {meant!r}?" if meant else f"use {one_of(list(known))}"
+            faults.append(Problem("is not a known key", mend, harmless(key, 60)))
+            continue
+        try:
+            values[key] = declared.read(item)
+        except InputError as fault:
+            faulted.add(key)
+            faults.extend(fault.at(key=key).problems)
+    return values, faulted, faults
 
 
 def _read_history(raw: object) -> tuple[tuple[Revision, ...], list[Problem]]:
@@ -233,16 +298,33 @@ def assemble(
 def _build_plant(values: Values, faulted: set[str]) -> tuple[PlantTable | None, list[Problem]]:
     given = dict(values)
     word = given.pop("shape", None)
-    shape = str(word) if word else ("formula" if {"formula"} & (set(given) | faulted) else None)
+    said = [each for each in ("formula", "blocks") if each in {*given, *faulted}]
+    shape = str(word) if word else (said[0] if said else None)
     if "shape" in faulted:
         return None, []
     faults: list[Problem] = []
-    process = None
-    if shape is not None:
+    process: Any = None
+    if shape == Blocks.shape:
+        process, faults = _build_blocks(given.pop("blocks", None), given, faulted)
+    elif shape is not None:
         own = {key: given.pop(key) for key in quantities(SHAPES[shape]) if key in given}
         process, faults = _build(SHAPES[shape], own, faulted)
     made, found = _build(PlantTable, {**given, "process": process}, faulted)
     return (None if faults else made), [*faults, *found]
+
+
+def _build_blocks(
+    line: object, given: Values, faulted: set[str]
+) -> tuple[Blocks | None, list[Problem]]:
+    if "blocks" in faulted:
+        return None, []
+    if line is None:
+        return None, [_missing("blocks", process_keys(Blocks.shape)["blocks"])]
+    unit = given.get("time_unit", "s")
+    try:
+        return parse_blocks(str(line), str(unit)), []
+    except InputError as fault:
+        return None, list(fault.at(key="blocks").problems)
 
 
 def _build(kind: type, values: Mapping[str, Any], faulted: set[str]) -> tuple[Any, list[Problem]]:
@@ -307,6 +389,7 @@ ASSUMED: Final[dict[str, Any]] = {
     "damping": 0.7,
     "lags": 1.0,
     "formula": "1/(10 s + 1)",
+    "name": "process",
 }
 """Values for required keys that are not known: a start for editing, a stand-in while checking."""
 
@@ -317,7 +400,6 @@ TOLD_WITH: Final[dict[tuple[type, str], tuple[str, ...]]] = {
     (OpTable, "min"): ("low", "high"),
     (OpTable, "max"): ("low", "high", "min"),
     (OpTable, "start"): ("low", "high", "min", "max"),
-    (OpTable, "valve_closes_on_rise"): ("meaning",),
     (PlantTable, "load"): ("time_unit",),
     (Formula, "formula"): ("time_unit",),
     (Controller, "gain"): ("form", "proportional_band"),

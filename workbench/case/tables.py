@@ -14,6 +14,7 @@ from datetime import datetime
 from typing import Any, ClassVar, Final
 
 from workbench.errors import InputError, Problem
+from workbench.model.blocks import Blocks, format_blocks
 from workbench.model.formula import parse_formula
 from workbench.model.pid import Controller
 from workbench.model.plant import SHAPES, Formula, Shape
@@ -159,19 +160,17 @@ class OpTable(_Table):
                 "give the operating point",
                 "start",
             )
-        if self.valve_closes_on_rise and self.meaning != "opening":
-            yield Problem(
-                "is true where OP is the signal",
-                'set meaning = "opening", or leave it out',
-                "valve_closes_on_rise",
-            )
+
+
+Process = Shape | Blocks
+"""What a plant can be: a shape with its numbers, a formula, or blocks."""
 
 
 @dataclass(frozen=True)
 class PlantTable(_Table):
     """The plant as the engineer entered it, and the record it came from."""
 
-    process: Shape | None = None
+    process: Process | None = None
     """The path from OP to PV; `None` until a shape is entered or a fit accepted."""
     load: str | None = quantity(
         "formula of the path from the upset to PV; left out: the upset enters at the plant's input",
@@ -188,21 +187,26 @@ class PlantTable(_Table):
 
     def __post_init__(self) -> None:
         # One unit serves both formulas, and none is kept where there is no formula to read.
-        if isinstance(self.process, Formula):
+        if isinstance(self.process, Formula | Blocks):
             object.__setattr__(self, "time_unit", self.process.time_unit)
         elif self.load is None:
             object.__setattr__(self, "time_unit", "s")
         super().__post_init__()
 
     def load_path(self) -> TransferFunction | None:
-        """From the upset, in its own unit, to PV [PV unit]; `None` where it is the plant itself."""
-        if self.load is None:
-            return None
-        return parse_formula(self.load, TIME_UNITS[self.time_unit])
+        """From the upset, in its own unit, to PV [PV unit]; `None` where it is the plant itself.
+
+        A plant of blocks has its own where the upset enters before one of them; `load` goes first.
+        """
+        if self.load is not None:
+            return parse_formula(self.load, TIME_UNITS[self.time_unit])
+        if isinstance(self.process, Blocks) and self.process.load_before:
+            return self.process.load()
+        return None
 
     def _faults(self) -> Iterator[Problem]:
         try:
-            if self.process is not None:
+            if self.process is not None and not isinstance(self.process, Blocks):
                 self.process.transfer()
         except InputError as fault:
             # Each number is accepted alone, but together they leave what can be computed.
@@ -351,7 +355,9 @@ def table_values(case: Case) -> dict[str, Values]:
 def plant_values(plant: PlantTable) -> Values:
     """The keys of the plant table that are not at their default, those of its shape among them."""
     values: Values = {}
-    if plant.process is not None:
+    if isinstance(plant.process, Blocks):
+        values["blocks"] = format_blocks(plant.process)
+    elif plant.process is not None:
         if not isinstance(plant.process, Formula):
             values["shape"] = plant.process.shape
         values.update(values_of(plant.process))
@@ -359,7 +365,7 @@ def plant_values(plant: PlantTable) -> Values:
     return values
 
 
-def shape_name(process: Shape | None) -> str | None:
+def shape_name(process: Process | None) -> str | None:
     """The word for the plant's shape; `None` where there is no plant yet."""
     return None if process is None else process.shape
 
@@ -370,19 +376,26 @@ def known_keys(table: str, shape: str | None, has_load: bool) -> dict[str, Quant
         return quantities(TABLES[table])
     own = {spelling(name): declared for name, declared in quantities(PlantTable).items()}
     known = {"shape": SHAPE}
-    known.update(quantities(SHAPES[shape]) if shape else {"formula": _FORMULA})
-    if not has_load and shape != "formula":
+    known.update(process_keys(shape) if shape else {"formula": _FORMULA})
+    if not has_load and shape not in WITH_TIME_UNIT:
         del own["time_unit"]
     # A formula's own time unit keeps its place beside the formula.
     known.update((name, declared) for name, declared in own.items() if name not in known)
     return known
 
 
+def process_keys(shape: str) -> dict[str, Quantity]:
+    """The keys that belong to a plant shape, in file order; blocks are one key, as one line."""
+    if shape == Blocks.shape:
+        return {"blocks": BLOCKS, "time_unit": quantities(Blocks)["time_unit"]}
+    return quantities(SHAPES[shape])
+
+
 def defaults_of(table: str, shape: str | None) -> dict[str, object]:
     """The default of each key of a table, `MISSING` where it must be given."""
     kinds: list[type] = [TABLES[table]]
     if table == "plant" and shape:
-        kinds.append(SHAPES[shape])
+        kinds.append(PROCESSES[shape])
     return {
         spelling(item.name): item.default for kind in kinds for item in dataclasses.fields(kind)
     }
@@ -397,11 +410,12 @@ def unknown_key(key: str, known: Iterable[str], shape: str | None = None) -> Pro
         return Problem("cannot be set", NOT_SET[key], key)
     if table == "plant" and name == "time_unit":
         return Problem("has no formula to apply to", "leave it out, or give formula or load", key)
-    if table == "plant" and any(name in quantities(kind) for kind in SHAPES.values()):
+    drawn = name in ("block", "load_before") and shape != Blocks.shape
+    if table == "plant" and (drawn or any(name in process_keys(each) for each in PROCESSES)):
         if shape is None:
             mend = "set plant.shape with all its keys, or plant.formula"
             return Problem("has no shape to belong to", mend, key)
-        wanted = one_of(list(quantities(SHAPES[shape]))).replace(" or ", " and ")
+        wanted = one_of(list(process_keys(shape))).replace(" or ", " and ")
         return Problem(f"does not belong to the shape {shape}", f"that takes {wanted}", key)
     siblings = [each.rpartition(".")[2] for each in known if each.startswith(f"{table}.")]
     same_name = [each for each in known if each.rpartition(".")[2] == name]
@@ -434,7 +448,22 @@ TABLES: Final[dict[str, type]] = {
 }
 """Tables of the case file, in file order; the history follows them."""
 
-SHAPE: Final = Quantity("shape of the plant", "choice", choices=tuple(SHAPES))
-"""The key `plant.shape`; left out where `plant.formula` is given."""
+PROCESSES: Final[dict[str, type[Process]]] = {**SHAPES, Blocks.shape: Blocks}
+"""Word of `plant.shape` -> what the plant then is."""
+
+WITH_TIME_UNIT: Final = (Formula.shape, Blocks.shape)
+"""Shapes whose formulas are in a unit of time of the plant's own."""
+
+SHAPE: Final = Quantity("shape of the plant", "choice", choices=tuple(PROCESSES))
+"""The key `plant.shape`; left out where the plant has `formula`, or blocks."""
+
+BLOCKS: Final = Quantity(
+    "blocks of the plant from OP to PV on one line",
+    "text",
+    "PV/OP",
+    example="valve: 1/(2 s + 1); process: 1.8/(40 s + 1)",
+    longest=20_000,
+)
+"""The key `plant.blocks` of an edit; the file has a `[[plant.block]]` table for each of them."""
 
 _FORMULA: Final = quantities(Formula)["formula"]

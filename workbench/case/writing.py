@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import difflib
 import re
 import tomllib
 from collections.abc import Iterator, Mapping, Sequence
@@ -13,9 +14,10 @@ import tomli_w
 from workbench.case.case import Case, Revision, default_value, keys
 from workbench.case.layout import Layout, Statement, read_layout
 from workbench.case.reading import entry_values
-from workbench.case.tables import TABLES, Values, table_values
+from workbench.case.tables import TABLES, Values, table_values, values_of
 from workbench.errors import InputError, Problem
-from workbench.units import Note, Quantity, Value
+from workbench.model.blocks import Block, Blocks
+from workbench.units import Note, Quantity, Value, quantities
 
 FORMAT: Final = 1
 """The format this program reads and writes."""
@@ -28,11 +30,13 @@ BYTE_ORDER_MARK: Final = "\ufeff"
 def format_case(case: Case) -> str:
     """The text of a new case file: declared order, defaults left out, one setting a line."""
     parts = [f"format = {FORMAT}\n"]
-    for table, values in table_values(case).items():
+    for table, values in _written_tables(case).items():
         if values or table == "controller":
             known = _declared(case, table)
             lines = [_line(key, known[key].write(value)) for key, value in values.items()]
             parts.append("".join([f"[{table}]\n", *lines]))
+        if table == "plant":
+            parts += ["".join(_block_lines(block)) for block in _blocks(case)]
     parts += ["".join(_entry_lines(entry)) for entry in case.history]
     return "\n".join(parts)
 
@@ -65,9 +69,62 @@ def _entry_lines(entry: Revision) -> Iterator[str]:
 
 
 def _declared(case: Case, table: str) -> dict[str, Quantity]:
-    """The keys of one table, in file order."""
+    """The keys of one table, in file order; of blocks, where the upset enters them."""
     start = f"{table}."
-    return {k.removeprefix(start): each for k, each in keys(case).items() if k.startswith(start)}
+    known = {k.removeprefix(start): each for k, each in keys(case).items() if k.startswith(start)}
+    if known.pop("blocks", None) and _load_before(case):
+        known["load_before"] = quantities(Blocks)["load_before"]
+    return known
+
+
+# --- the plant's blocks --------------------------------------------------------------------------
+
+
+def _written_tables(case: Case) -> dict[str, Values]:
+    """The tables without the plant's blocks, which have tables of their own."""
+    tables = table_values(case)
+    if tables["plant"].pop("blocks", None) and _load_before(case):
+        tables["plant"]["load_before"] = _load_before(case)
+    return tables
+
+
+def _blocks(case: Case) -> tuple[Block, ...]:
+    return case.plant.process.blocks if isinstance(case.plant.process, Blocks) else ()
+
+
+def _load_before(case: Case) -> str:
+    return case.plant.process.load_before if isinstance(case.plant.process, Blocks) else ""
+
+
+def _block_values(block: Block) -> dict[str, object]:
+    return {key: quantities(Block)[key].write(value) for key, value in values_of(block).items()}
+
+
+def _block_lines(block: Block) -> Iterator[str]:
+    yield "[[plant.block]]\n"
+    for key, value in _block_values(block).items():
+        yield _line(key, value)
+
+
+def _blocks_text(blocks: Sequence[Block]) -> str:
+    """The blocks as a list on one line, for a file that has them so."""
+    tables = []
+    for block in blocks:
+        pairs = (f"{key} = {_value_text(value)}" for key, value in _block_values(block).items())
+        tables.append("{ " + ", ".join(pairs) + " }")
+    return f"[{', '.join(tables)}]"
+
+
+def _pairs(old: Sequence[Block], new: Sequence[Block]) -> Iterator[tuple[int | None, int | None]]:
+    """Each old block with the one it becomes, in the new order; `None` for those gone and come."""
+    before, after = [block.name for block in old], [block.name for block in new]
+    match = difflib.SequenceMatcher(None, before, after, autojunk=False)
+    for kind, a, b, c, d in match.get_opcodes():
+        if kind == "equal" or b - a == d - c:
+            yield from zip(range(a, b), range(c, d), strict=True)
+        else:
+            yield from ((i, None) for i in range(a, b))
+            yield from ((None, i) for i in range(c, d))
 
 
 # --- the old text with its changes ---------------------------------------------------------------
@@ -88,12 +145,14 @@ class _Rewriting:
 
     def replaced(self) -> str:
         """The new text."""
-        before, after = table_values(self.old), table_values(self.new)
+        before, after = _written_tables(self.old), _written_tables(self.new)
         for table in TABLES:
             if table in before and table not in after:
                 self._drop_table(table)
             else:
                 self._table(table, before.get(table, {}), after.get(table, {}))
+            if table == "plant" and _blocks(self.old) != _blocks(self.new):
+                self._redraw()
         added = self._entries()
         text, pieces, at = self.layout.text, [], 0
         for start, end, piece in sorted(self.changes, key=lambda change: change[:2]):
@@ -117,7 +176,8 @@ class _Rewriting:
             for key in {**known, **before}
             if before.get(key, _ABSENT) != after.get(key, _ABSENT)
         }
-        if not changed:
+        redrawn = table == "plant" and _blocks(self.old) != _blocks(self.new)
+        if not changed and not (inline is not None and redrawn):
             return
         if inline is not None:
             self._rewrite_inline(inline, changed, known)
@@ -137,6 +197,58 @@ class _Rewriting:
                 self.changes.append((*place.value, _value_text(value)))
         if fresh:
             self._insert(table, fresh, list(known))
+
+    def _redraw(self) -> None:
+        """The tables of the plant's blocks; a list of them stays a list."""
+        old, new = _blocks(self.old), _blocks(self.new)
+        place = self.layout.setting("plant", "block")
+        if self.layout.setting("plant") is not None:
+            return  # the whole table is on one line and was written with it
+        if place is not None:
+            assert place.value is not None, "a setting has a value"
+            remarks = "".join(f"{each}\n" for each in place.remarks)
+            if new:
+                self.changes.append((place.start, place.start, remarks))
+                self.changes.append((*place.value, _blocks_text(new)))
+            else:
+                self.changes.append((place.start, place.end, remarks))
+            return
+        own = [each for each in self.layout.statements if each.path[:1] == ("plant",)]
+        at = max((each.end for each in own), default=0)
+        if self.layout.header("plant") is None and not any(len(s.path) > 2 for s in own):
+            at = self._end_of_table_before("plant")
+        for was, now in _pairs(old, new):
+            if was is not None:
+                table = [s for s in own if s.path[:3] == ("plant", "block", was)]
+                at = max(each.end for each in table)
+                if now is None:
+                    self.changes += [(each.start, each.end, "") for each in table]
+                else:
+                    self._reblock(was, old[was], new[now])
+            elif now is not None:
+                lines = "".join(_block_lines(new[now]))
+                self.changes.append((at, at, f"\n{lines}" if at else lines))
+
+    def _reblock(self, number: int, old: Block, new: Block) -> None:
+        """One `[[plant.block]]` table, line by line."""
+        before, after = _block_values(old), _block_values(new)
+        where = ("plant", "block", number)
+        header = self.layout.header(*where)
+        assert header is not None, "a table has a header"
+        at = header.end
+        for key in quantities(Block):
+            place = self.layout.setting(*where, key)
+            changed = before.get(key) != after.get(key)
+            if place is None and changed:
+                lead = re.match(r"[ \t]*", self.layout.text[header.start :])
+                line = _line(key, after[key])
+                self.changes.append((at, at, f"{lead[0] if lead else ''}{line}"))
+            elif place is not None and changed and key not in after:
+                self.changes.append((place.start, place.end, ""))
+            elif place is not None and changed:
+                assert place.value is not None, "a setting has a value"
+                self.changes.append((*place.value, _value_text(after[key])))
+            at = place.end if place is not None else at
 
     def _written(
         self, table: str, key: str, known: Mapping[str, Quantity], after: Values
@@ -159,8 +271,11 @@ class _Rewriting:
         start, end = place.value
         held = tomllib.loads(f"x = {self.layout.text[start:end]}")["x"]
         held.update(changed)
+        blocks = _blocks(self.new) if place.path == ("plant",) else ()
+        held.pop("block", None)
         order = [*(key for key in known if key in held), *(key for key in held if key not in known)]
         items = [f"{key} = {_value_text(held[key])}" for key in order if held[key] is not _ABSENT]
+        items += [f"block = {_blocks_text(blocks)}"] if blocks else []
         self.changes.append((start, end, "{ " + ", ".join(items) + " }" if items else "{}"))
 
     def _insert(self, table: str, fresh: Sequence[tuple[str, object]], order: list[str]) -> None:
@@ -198,7 +313,7 @@ class _Rewriting:
             each.end
             for each in statements
             if each.path[0] in list(TABLES)[: list(TABLES).index(table)]
-            and self.layout.header(each.path[0]) is not None
+            and (self.layout.header(each.path[0]) is not None or len(each.path) > 3)
         ]
         # Settings ahead of every header stay there, and the new header comes behind them.
         first = next((s.start for s in statements if s.value is None), len(self.layout.text))

@@ -8,15 +8,17 @@ the stretch's output back to its input).
 from __future__ import annotations
 
 import re
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from typing import Final
 
 from workbench.errors import InputError, ModelError, Problem
-from workbench.model.plant import Shape, read_function
+from workbench.model.plant import Shape, Vessel, read_function
 from workbench.model.transfer import TransferFunction
 from workbench.units import TIME_UNITS, check_fields, nearest, one_of, quantity
 
 _NAME: Final = re.compile(r"[^\W\d]\w*(?:[ -]\w+)*\Z")
+_WORDS: Final = {"beside", "less", "around", "before", "to"}
+"""Words of the one-line notation, which a name must leave alone."""
 MOST_BLOCKS: Final = 40
 """Blocks in one plant."""
 
@@ -49,6 +51,9 @@ class Block:
         check_fields(self)
         if not _NAME.match(self.name):
             raise _fault(f"{self.name!r} is no name for a block", "use letters and digits", "name")
+        taken = next((word for word in self.name.split() if word in _WORDS), None)
+        if taken:
+            raise _fault(f"{self.name!r} holds the word {taken!r}", "use another word", "name")
         if self.beside and self.around:
             raise _fault("stands beside and around", "keep one of beside and around", "around")
         if self.sign == "-" and not self.beside:
@@ -87,7 +92,17 @@ class Blocks:
     )
 
     def __post_init__(self) -> None:
+        check_fields(self)
+        faults: list[Problem] = []
+        for block in self.blocks[:MOST_BLOCKS]:
+            try:
+                self._function(block)
+            except InputError as fault:
+                faults.extend(fault.problems)
+        if faults:
+            raise ModelError(faults)
         self.transfer()
+        self.load()
 
     def transfer(self) -> TransferFunction:
         """PV units per OP unit, every inner loop closed."""
@@ -98,7 +113,7 @@ class Blocks:
         stages, _ = self._drawn()
         if not self.load_before:
             return self._path(0)
-        return self._path(_index(self.load_before, list(stages), "load_before"))
+        return self._path(_index(self.load_before, list(stages), "load_before", "load_before"))
 
     def _path(self, start: int) -> TransferFunction:
         """From the input of stage `start` to PV."""
@@ -115,29 +130,35 @@ class Blocks:
         names = [b.name for b in self.blocks]
         twice = next((n for n in names if names.count(n) > 1), None)
         if twice:
-            raise _fault(f"two blocks are called {twice!r}", "give each its own name")
+            last = len(names) - names[::-1].index(twice)
+            raise _fault(
+                f"two blocks are called {twice!r}", "give each its own name", _key(last, "name")
+            )
         stages: dict[str, TransferFunction] = {}
         for block in self.blocks:
             if not block.beside and not block.around:
                 stages[block.name] = self._function(block)
         if not stages:
             raise _fault("no block stands on the path itself", "leave out beside and around once")
-        for block in self.blocks:
+        for number, block in enumerate(self.blocks, 1):
             if block.beside:
-                at = list(stages)[_index(block.beside, list(stages), block.name)]
+                key = _key(number, "beside")
+                at = list(stages)[_index(block.beside, list(stages), block.name, key)]
                 function = self._function(block)
                 stages[at] = stages[at] + (function if block.sign == "+" else -function)
         return stages, self._stretches(list(stages))
 
     def _stretches(self, path: list[str]) -> list[_Stretch]:
         found = []
-        for block in self.blocks:
+        for number, block in enumerate(self.blocks, 1):
             if block.around:
+                key = _key(number, "around")
                 first, _, last = block.around.partition(" to ")
-                begin = _index(first.strip(), path, block.name)
-                end = _index(last.strip(), path, block.name) if last else begin
+                begin = _index(first.strip(), path, block.name, key)
+                end = _index(last.strip(), path, block.name, key) if last else begin
                 if end < begin:
-                    raise _fault(f"{block.name!r} goes around backwards", "name the first first")
+                    what = f"{block.name!r} goes around backwards"
+                    raise _fault(what, "name the first first", key)
                 found.append(_Stretch(begin, end, self._function(block)))
         found.sort(key=lambda s: s.last - s.first)
         for i, inner in enumerate(found):
@@ -151,19 +172,31 @@ class Blocks:
         return found
 
     def _function(self, block: Block) -> TransferFunction:
+        key = _key(self.blocks.index(block) + 1, "formula")
         try:
-            return read_function(block.formula, self.time_unit).transfer()
+            shape = read_function(block.formula, self.time_unit)
         except InputError as fault:
             first = fault.problems[0]
-            raise _fault(f"block {block.name!r}: {first.what}", first.mend, "formula") from None
+            subject = f"{first.key}: " if first.key not in ("", "formula") else ""
+            what = f"block {block.name!r}: {subject}{first.what}"
+            raise _fault(what, first.mend, key) from None
+        if isinstance(shape, Vessel):
+            what = f"block {block.name!r}: a vessel is a whole plant, from range to range"
+            raise _fault(what, "write integrating slope=... in PV units", key)
+        return shape.transfer()
 
 
-def _index(name: str, path: list[str], by: str) -> int:
+def _key(number: int, field: str) -> str:
+    """Where a fault is: the field of a block, counted from 1."""
+    return f"block[{number}].{field}"
+
+
+def _index(name: str, path: list[str], by: str, key: str) -> int:
     if name in path:
         return path.index(name)
     meant = nearest(name, path)
     hint = f"did you mean {meant!r}?" if meant else f"the path has {one_of(path)}"
-    raise _fault(f"{by!r} names the block {name!r}, which is not on the path", hint)
+    raise _fault(f"{by!r} names the block {name!r}, which is not on the path", hint, key)
 
 
 def _closed(
@@ -218,7 +251,12 @@ def parse_blocks(text: str, time_unit: str = "s") -> Blocks:
         head, colon, formula = piece.partition(":")
         if not colon:
             raise _fault(f"{piece[:40]!r} has no colon", "write a block as name: formula")
-        blocks.append(_block(head.strip(), formula.strip()))
+        try:
+            blocks.append(_block(head.strip(), formula.strip()))
+        except InputError as fault:
+            raise ModelError(
+                replace(p, key=_key(len(blocks) + 1, p.key)) for p in fault.problems
+            ) from None
     return Blocks(tuple(blocks), time_unit, load_before)
 
 

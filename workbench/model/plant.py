@@ -289,6 +289,15 @@ def read_function(text: str, time_unit: str = "s") -> Shape:
     return SHAPES[word](**values)  # type: ignore[arg-type]
 
 
+def write_function(shape: Shape) -> str:
+    """The one-line text of a shape, which `read_function` reads back; a formula is itself."""
+    if isinstance(shape, Formula):
+        return shape.formula
+    values = {name: (each, getattr(shape, name)) for name, each in quantities(type(shape)).items()}
+    pairs = (f"{name}={declared.show(value)}" for name, (declared, value) in values.items())
+    return f"{shape.shape} {', '.join(pairs)}"
+
+
 SHAPES: Final[dict[str, type[Shape]]] = {
     "first-order": FirstOrder,
     "second-order": SecondOrder,

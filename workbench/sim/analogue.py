@@ -29,7 +29,7 @@ from typing import Final
 import numpy as np
 from numpy.typing import NDArray
 
-from workbench.errors import InputError, problem
+from workbench.errors import InputError, Problem, problem
 from workbench.model.feedback import Loop
 from workbench.model.matrix import expm
 from workbench.sim.process import Entry, Process
@@ -41,8 +41,10 @@ _DEGREE: Final = 7
 """Degree of the polynomials."""
 _TOLERANCE: Final = 1e-7
 """Largest difference of order `_DEGREE` along a piece, as a share of the signal."""
-_MOST_PIECES: Final = 20_000
-_MOST_JUMPS: Final = 400
+MOST_PIECES: Final = 20_000
+"""Beyond, the end asked for is too far away."""
+_MOST_ECHOES: Final = 400
+"""Of one event; more are left where PV jumps with the output and a loop gain near 1."""
 _NODES: Final = np.linspace(0.0, 1.0, _DEGREE + 1)
 _TO_POWERS: Final = np.linalg.inv(np.vander(_NODES, increasing=True))
 """Values at the nodes -> coefficients in rising powers of the share of the piece."""
@@ -175,6 +177,17 @@ def _refuse_impulse(loop: Loop, process: Process) -> None:
         )
 
 
+class TooManyPieces(InputError):
+    """The loop moves too fast to be followed to the end asked for."""
+
+
+_TOO_LONG: Final = Problem(
+    "the loop moves too fast to be followed for so long",
+    "give an earlier end",
+    key="scenario.until",
+)
+
+
 # --- where things jump ---------------------------------------------------------------------------
 
 
@@ -194,25 +207,31 @@ def _smoothness(row_direct: float, row: Array, m: Array, column: Array) -> int:
 
 def _jumps(eq: Equations, events: list[tuple[float, int]], until: float) -> list[float]:
     """Instants at which pieces must begin, rising; `events` are (time, column of f)."""
-    k, m, mf = eq.output
-    loop_orders = [_smoothness(m[j], k, eq.m, eq.n[:, j]) for j in range(len(eq.delays))]
-    # (time, order, size): a jump that is not integrated is followed until its size has gone.
-    queue = [
-        (time, _smoothness(mf[column], k, eq.m, eq.f[:, column]), 1.0) for time, column in events
-    ]
-    heapq.heapify(queue)
     found: list[float] = []
-    while queue and len(found) < _MOST_JUMPS:
-        time, order, size = heapq.heappop(queue)
+    for time in sorted(time for event in events for time in _echoes(eq, event, until)):
         if not found or time - found[-1] > 1e-9 * until:
             found.append(time)
+    return found
+
+
+def _echoes(eq: Equations, event: tuple[float, int], until: float) -> set[float]:
+    """The instants at which one event is felt, the event itself and the sharpest echoes first."""
+    k, m, mf = eq.output
+    around = [_smoothness(m[j], k, eq.m, eq.n[:, j]) for j in range(len(eq.delays))]
+    time, column = event
+    # (order, -size, time): a jump that is not integrated is followed until its size has gone.
+    queue = [(_smoothness(mf[column], k, eq.m, eq.f[:, column]), -1.0, time)]
+    found: set[float] = set()
+    seen = set(queue)
+    while queue and len(found) < _MOST_ECHOES:
+        order, size, time = heapq.heappop(queue)
+        found.add(time)
         for j, delay in enumerate(eq.delays):
-            next_order = order + loop_orders[j]
-            next_size = min(size * abs(m[j]), 1e9) if loop_orders[j] == 0 else size
-            if next_order <= _DEGREE and next_size > 1e-8 and time + delay < until:
-                echo = (time + delay, next_order, next_size)
-                if echo not in queue:
-                    heapq.heappush(queue, echo)
+            later = size if around[j] else max(size * abs(m[j]), -1e9)
+            echo = (order + around[j], later, time + delay)
+            if echo[0] <= _DEGREE and later < -1e-8 and echo[2] < until and echo not in seen:
+                seen.add(echo)
+                heapq.heappush(queue, echo)
     return found
 
 
@@ -365,11 +384,16 @@ def _base(eq: Equations, until: float) -> tuple[float, float]:
 
 
 def solve(
-    loop: Loop, process: Process, setpoint: Step, load: Step, until: float
+    loop: Loop,
+    process: Process,
+    setpoint: Step,
+    load: Step,
+    until: float,
+    most_pieces: int = MOST_PIECES,
 ) -> tuple[list[Piece], bool]:
     """The course of the analogue loop from rest to `until` [s], and whether it was cut off.
 
-    Raises `InputError` where it would take too many pieces.
+    Raises `TooManyPieces`, and `InputError` as `equations` does.
     """
     eq = equations(loop, process, 1e-9 * until)
     events = [(setpoint.time, 0)] if setpoint.size else []
@@ -380,7 +404,7 @@ def solve(
         return [], False
     base, fastest = _base(eq, until)
     history = _History(eq.delays)
-    march = _March(eq, history, base, fastest)
+    march = _March(eq, history, base, fastest, most_pieces)
     for start, end in zip(marks, [*marks[1:], until], strict=True):
         f = np.zeros(eq.f.shape[1])
         if setpoint.time <= start + 1e-9 * until:
@@ -396,8 +420,10 @@ def solve(
 class _March:
     """Goes forward piece by piece, choosing their lengths."""
 
-    def __init__(self, eq: Equations, history: _History, base: float, fastest: float) -> None:
-        self.eq, self.history = eq, history
+    def __init__(
+        self, eq: Equations, history: _History, base: float, fastest: float, most_pieces: int
+    ) -> None:
+        self.eq, self.history, self.most_pieces = eq, history, most_pieces
         self.base, self.fastest = base, fastest
         self.state = np.zeros(len(eq.m))
         self.rules: dict[float, _Rule] = {}
@@ -432,8 +458,8 @@ class _March:
             if not bool((np.abs(y) <= BOUND).all()):
                 return True
             self.history.pieces.append(Piece(at, rule.length, (_TO_POWERS @ u).tolist(), y, u))
-            if len(self.history.pieces) > _MOST_PIECES:
-                raise _too_long()
+            if len(self.history.pieces) > self.most_pieces:
+                raise TooManyPieces(_TOO_LONG)
             self.state = result[2 * nodes :]
             self.largest_u = max(self.largest_u, float(np.abs(u).max()))
             self.largest_y = max(self.largest_y, float(np.abs(y).max()))
@@ -460,11 +486,3 @@ class _March:
         scale_y = max(self.largest_y, float(np.abs(y).max()), state * self.reads_y)
         error = max(abs(_DIFFERENCE @ u) / scale_u, abs(_DIFFERENCE @ y) / scale_y)
         return result, float(error) / _TOLERANCE
-
-
-def _too_long() -> InputError:
-    return problem(
-        f"the loop moves too fast to be followed for so long ({_MOST_PIECES} pieces)",
-        "give an earlier end",
-        key="scenario.until",
-    )

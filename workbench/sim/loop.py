@@ -9,6 +9,7 @@ from __future__ import annotations
 
 import math
 from dataclasses import dataclass, replace
+from itertools import pairwise
 from typing import Final
 
 import numpy as np
@@ -27,6 +28,8 @@ Array = NDArray[np.float64]
 MOST_SCANS: Final = 200_000
 _ROWS: Final = 3000
 """Rows an analogue trace has at least; a sampled one half as many."""
+_GLANCE: Final = 2_000
+"""Pieces that finding out how long to look is worth."""
 _FINE_STEPS: Final = 20_000
 """Steps in which an analogue loop with limits in force is followed."""
 
@@ -69,8 +72,9 @@ def simulate(loop: Loop, events: Events) -> Trace:
     Raises
     ------
     InputError
-        Too many scans for the end asked for; noise on an analogue controller; an analogue loop that
-        makes impulses.  `ModelError` for a plant with a dead time inside an inner feedback.
+        Too many scans, or too fast an analogue loop, for the end asked for; noise on an analogue
+        controller; an analogue loop that makes impulses.  `ModelError` for a plant with a dead time
+        inside an inner feedback.
 
     Notes
     -----
@@ -180,8 +184,8 @@ def _pv(held: Held, course: Course, load: Step, offset: float) -> Array:
     for back, weight in weights.items():
         pv[back:] += weight * course.outputs[: len(pv) - back]
     if load.size:
-        scans = [scan for whole, _ in held.arrivals(load) for scan in (whole, whole + 1)]
-        for scan, following in zip(scans, [*scans[1:], None], strict=True) if scans else []:
+        reached = {scan for whole, _ in held.arrivals(load) for scan in (whole, whole + 1)}
+        for scan, following in pairwise([*sorted(reached), len(pv)]):
             state, direct = held.upset(load, scan, offset)
             pv[scan:following] += float(c @ state) + direct
     return pv
@@ -199,7 +203,7 @@ def _in_force(held: Held, course: Course, time: Array, number: NDArray[np.signed
 # --- rows of an analogue loop --------------------------------------------------------------------
 
 
-def _analogue(loop: Loop, events: Events) -> Trace:
+def _analogue(loop: Loop, events: Events, most_pieces: int = analogue.MOST_PIECES) -> Trace:
     if events.noise:
         raise problem(
             "measurement noise has no meaning for an analogue controller",
@@ -209,7 +213,7 @@ def _analogue(loop: Loop, events: Events) -> Trace:
     whole = process(loop)
     setpoint = Step(events.setpoint_step, events.setpoint_at)
     load = Step(events.load_step, events.load_at)
-    pieces, diverged = analogue.solve(loop, whole, setpoint, load, events.until)
+    pieces, diverged = analogue.solve(loop, whole, setpoint, load, events.until, most_pieces)
     if _is_limited(loop, pieces):
         return _in_fine_steps(loop, whole, events)
     return _analogue_trace(pieces, events, diverged)
@@ -351,7 +355,9 @@ def settle_horizon(loop: Loop) -> float:
     longest = MOST_SCANS * loop.scan / 2.5 if loop.scan else math.inf
     window = guess = min(6.0 * _time_scale(loop), longest)
     for _ in range(6):
-        trace = simulate(free, Events(1.0, 0.0, 1.0, window, 2.0 * window))
+        trace = _look(free, window)
+        if trace is None:
+            break
         if trace.diverged:
             far = np.flatnonzero(np.abs(trace.pv) > 20.0)
             return _rounded_up(max(float(trace.time[far[0]]), 20 * (loop.scan or 0.0)))
@@ -381,6 +387,17 @@ def _time_scale(loop: Loop) -> float:
         elif slope and gains.proportional:
             scale += min(1.0 / abs(gains.proportional * slope), 10.0 * scale)
     return scale if scale > 0.0 else 1.0
+
+
+def _look(loop: Loop, window: float) -> Trace | None:
+    """Unit steps of setpoint and load, a window [s] for each; None where it would take too long."""
+    events = Events(1.0, 0.0, 1.0, window, 2.0 * window)
+    if loop.scan is not None:
+        return simulate(loop, events)
+    try:
+        return _analogue(loop, events, _GLANCE)
+    except analogue.TooManyPieces:
+        return None
 
 
 @dataclass(frozen=True)

@@ -8,7 +8,6 @@ and crossing times are exact for that, so the rows must be fine enough, as those
 
 from __future__ import annotations
 
-import dataclasses
 import math
 from collections.abc import Callable
 from dataclasses import dataclass
@@ -310,5 +309,3 @@ METRICS: Final[dict[str, Metric]] = {
     "final_op": Metric("OP at the end", "OP", _final_op),
 }
 """Field of `Measures` -> how it is found."""
-
-assert tuple(METRICS) == tuple(field.name for field in dataclasses.fields(Measures))

@@ -1,0 +1,529 @@
+"""The other pages: start, record, proposals, save, leave, drafts, help."""
+
+from __future__ import annotations
+
+import json
+from pathlib import Path
+
+import pytest
+
+from tests.screens.conftest import (
+    CASE,
+    page_of,
+    press,
+    run,
+    running,
+    settle,
+    text_of,
+    type_in,
+)
+from workbench import study
+from workbench.case.files import read_case
+from workbench.errors import problem
+from workbench.records.identify import Fit
+from workbench.screens import drafts
+from workbench.screens.help import HelpPage
+from workbench.screens.main import MainPage
+from workbench.screens.page import Page
+from workbench.screens.proposals import ProposalsPage
+from workbench.screens.record import RecordFitted, RecordPage
+from workbench.screens.saving import DraftPage, LeavePage, SavePage
+from workbench.screens.start import StartPage
+from workbench.screens.work import Work
+
+# --- the whole path ------------------------------------------------------------------------------
+
+
+def test_from_the_list_to_settings_saved_from_a_record(folder: Path) -> None:
+    keys = ["enter", "r", "enter", "a", "o", "enter", "down", "plus", "plus", "s"]
+
+    async def story() -> None:
+        async with running(Path()) as pilot:
+            page_of(pilot, StartPage)
+            await press(pilot, *keys[:1])
+            for key in keys[1:]:
+                await press(pilot, key)
+            await type_in(pilot, "cycling after the fan change")
+            await press(pilot, "enter")
+            assert "saved to tic-307.toml as entry 2" in text_of(pilot)
+            await press(pilot, "q")
+            page_of(pilot, StartPage)
+            await press(pilot, "q")
+
+    run(story())
+    assert len(keys) + 3 <= 25
+    case = read_case("tic-307.toml").case
+    assert case.history[-1].why == "cycling after the fan change"
+    assert case.history[-1].who == "tester"
+    assert case.history[-1].kind == "installed"
+    assert case.plant.from_ == "TIC-307_bump.csv"
+    assert study.check_case("tic-307.toml").faults == ()
+    assert not list(drafts.folder().glob("*"))
+
+
+# --- start ---------------------------------------------------------------------------------------
+
+
+def test_the_list_names_what_is_wrong_with_a_file_and_stays(folder: Path) -> None:
+    (folder / "a.toml").write_text("format = 1\n[loop]\ntag = 3\n")
+
+    async def story() -> None:
+        async with running(Path()) as pilot:
+            assert "must be text, not 3" in text_of(pilot)
+            await press(pilot, "enter")
+            page_of(pilot, StartPage)
+            assert "a.toml:3: loop.tag: must be text, not 3" in text_of(pilot)
+
+    run(story())
+
+
+def test_an_empty_folder_says_how_to_begin(tmp_path: Path) -> None:
+    empty = tmp_path / "empty"
+    empty.mkdir()
+
+    async def story() -> None:
+        async with running(empty) as pilot:
+            assert "no case files" in text_of(pilot)
+            assert "workbench new TAG" in text_of(pilot)
+            await press(pilot, "enter", "down", "up")
+
+    run(story())
+
+
+# --- record --------------------------------------------------------------------------------------
+
+
+def test_a_record_is_fitted_drawn_and_taken(work: Work) -> None:
+    async def story() -> None:
+        async with running(work) as pilot:
+            await press(pilot, "r")
+            assert "TIC-307_bump.csv" in text_of(pilot)
+            await press(pilot, "enter")
+            shown = text_of(pilot)
+            for words in ("PV record", "fit", "OP %", "first-order", "+-", "600 rows"):
+                assert words in shown
+            await press(pilot, "a")
+            page_of(pilot, MainPage)
+            assert "fit of the record" in text_of(pilot)
+            # exact: the plant that made the record (see conftest), within its noise
+            assert work.evaluation is not None
+            assert work.evaluation.assessment.plant.gain.value == pytest.approx(1.8, rel=0.02)
+            await press(pilot, "u")
+            assert not work.unsaved
+
+    run(story())
+
+
+def test_a_record_is_found_by_its_typed_path(work: Work, tmp_path: Path) -> None:
+    other = tmp_path / "other.csv"
+    Path("TIC-307_bump.csv").rename(other)
+
+    async def story() -> None:
+        async with running(work) as pilot:
+            await press(pilot, "r")
+            assert "no CSV file beside the case" in text_of(pilot)
+            await press(pilot, "t", "ctrl+u")
+            await type_in(pilot, str(tmp_path / "missing.csv"))
+            await press(pilot, "enter")
+            assert "missing.csv" in text_of(pilot)
+            await press(pilot, "ctrl+u")
+            await type_in(pilot, str(other))
+            await press(pilot, "enter")
+            assert page_of(pilot, RecordPage).candidates.fit is not None
+
+    run(story())
+
+
+def test_a_record_that_cannot_be_read_is_explained(work: Work) -> None:
+    Path("TIC-307_bump.csv").write_text("time_s,pv,op\n0,1,2\n1,abc,2\n")
+
+    async def story() -> None:
+        async with running(work) as pilot:
+            await press(pilot, "r", "enter")
+            page_of(pilot, RecordPage)
+            assert "TIC-307_bump.csv" in text_of(pilot)
+            await press(pilot, "a")
+            assert "choose a record first" in text_of(pilot)
+            await press(pilot, "escape")
+            page_of(pilot, MainPage)
+
+    run(story())
+
+
+def test_a_stopped_fit_is_not_shown_when_it_comes_in_late(
+    work: Work, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    real, kept = study.fit_record, []
+
+    def remembered(path: Path, **options: object) -> Fit:
+        kept.append(real(path))
+        return kept[-1]
+
+    async def story() -> None:
+        async with running(work) as pilot:
+            monkeypatch.setattr(study, "fit_record", remembered)
+            await press(pilot, "r", "enter")
+            page = page_of(pilot, RecordPage)
+            page.action_list()
+            page.candidates.fit = None
+            page._ticket += 1
+            page.on_record_fitted(RecordFitted(page._ticket - 1, kept[0]))
+            await settle(pilot)
+            assert page.candidates.fit is None
+            assert page.records.display
+
+    run(story())
+
+
+def test_moving_in_a_list_that_is_out_of_view_stays_inside_it(work: Work) -> None:
+    """Found by random keys: nothing is drawn, so nothing held the cursor inside."""
+    records = RecordPage(work).records
+    for step in (-3, 10_000, -10_000):
+        records.move(step)
+        assert records.chosen == Path("TIC-307_bump.csv")
+    table = ProposalsPage(work).table
+    table.move(-1)
+    assert table.chosen is None
+
+
+def test_a_page_may_be_closed_before_it_is_put_together(work: Work) -> None:
+    """Found by random keys."""
+
+    async def story() -> None:
+        async with running(work) as pilot:
+            page = page_of(pilot, MainPage)
+            for _ in range(3):
+                page.action_help()
+                pilot.app.pop_screen()
+            await settle(pilot)
+            page_of(pilot, MainPage)
+
+    run(story())
+
+
+# --- proposals -----------------------------------------------------------------------------------
+
+
+def test_proposals_are_judged_and_one_is_taken(work: Work) -> None:
+    async def story() -> None:
+        async with running(work) as pilot:
+            await press(pilot, "o")
+            table = page_of(pilot, ProposalsPage).table
+            shown = text_of(pilot)
+            for words in ("present", "simc-pi", "lambda-pi", "does not apply", "Ms", "load"):
+                assert words in shown
+            assert "integral in min/repeat" in shown
+            lines = shown.split("\n")
+            assert max(len(line) for line in lines) <= 80
+            chosen = table.chosen
+            assert chosen is not None
+            assert chosen.controller is not None
+            await press(pilot, "enter")
+            page_of(pilot, MainPage)
+            assert work.case == study.take(work._before[-1], chosen)
+            assert "u takes them back" in text_of(pilot)
+
+    run(story())
+
+
+def test_a_rule_that_does_not_apply_is_not_taken(work: Work) -> None:
+    async def story() -> None:
+        async with running(work) as pilot:
+            await press(pilot, "o")
+            page = page_of(pilot, ProposalsPage)
+            page.table.cursor = next(
+                row for row, proposal in enumerate(page.table.rows) if not proposal.applies
+            )
+            await press(pilot, "enter")
+            page_of(pilot, ProposalsPage)
+            assert "does not apply" in "".join(text_of(pilot).split("\n")[-5:])
+            assert not work.unsaved
+
+    run(story())
+
+
+# --- saving and leaving --------------------------------------------------------------------------
+
+
+def test_saving_needs_a_reason_and_shows_the_cautions(work: Work) -> None:
+    work.edit("controller.gain", "1.3")
+    before = Path("tic-307.toml").read_bytes()
+
+    async def story() -> None:
+        async with running(work) as pilot:
+            await press(pilot, "s")
+            shown = text_of(pilot)
+            assert "controller.gain" in shown
+            assert "1.1 -> 1.3" in shown
+            assert "management of change" in shown
+            await press(pilot, "enter")
+            assert "say why" in text_of(pilot)
+            assert Path("tic-307.toml").read_bytes() == before
+            await press(pilot, "escape")
+            page_of(pilot, MainPage)
+            assert work.unsaved
+
+    run(story())
+
+
+def test_the_kind_of_an_entry_is_chosen(work: Work) -> None:
+    async def story() -> None:
+        async with running(work) as pilot:
+            await press(pilot, "s")
+            await type_in(pilot, "for the meeting")
+            await press(pilot, "tab", "tab", "up", "enter")
+            assert work.case.history[-1].kind == "proposed"
+
+    run(story())
+
+
+def test_a_file_that_changed_meanwhile_is_not_overwritten_and_the_work_is_kept(
+    work: Work,
+) -> None:
+    work.edit("controller.gain", "1.3")
+    theirs = CASE.replace('area = "Drying"', 'area = "Dryers"')
+    Path("tic-307.toml").write_text(theirs, encoding="utf-8")
+
+    async def story() -> None:
+        async with running(work) as pilot:
+            await press(pilot, "s")
+            await type_in(pilot, "mine")
+            await press(pilot, "enter")
+            page_of(pilot, SavePage)
+            shown = text_of(pilot)
+            assert "not saved" in shown
+            assert "your work is kept" in shown
+            await press(pilot, "escape")
+            assert work.show("controller.gain") == "1.3"
+
+    run(story())
+    assert Path("tic-307.toml").read_text(encoding="utf-8") == theirs
+
+
+def test_undo_after_saving_leaves_the_history_alone(work: Work) -> None:
+    async def story() -> None:
+        async with running(work) as pilot:
+            await press(pilot, "down", "plus", "s")
+            await type_in(pilot, "quicker")
+            await press(pilot, "enter", "u")
+            assert work.show("controller.gain") == "1.1"
+            assert len(work.case.history) == 2
+            assert work.unsaved
+
+    run(story())
+
+
+def test_leaving_saved_work_asks_nothing(work: Work) -> None:
+    async def story() -> None:
+        async with running(work) as pilot:
+            await pilot.press("q")
+            await pilot.pause()
+            assert pilot.app.return_code == 0
+
+    run(story())
+
+
+def test_leaving_unsaved_work_asks_once_and_keeps_a_draft(work: Work) -> None:
+    async def story() -> None:
+        async with running(work) as pilot:
+            await press(pilot, "down", "plus", "q")
+            page_of(pilot, LeavePage)
+            assert "1.1 -> 1.122" in text_of(pilot)
+            await press(pilot, "escape")
+            page_of(pilot, MainPage)
+            await press(pilot, "q")
+            await pilot.press("d")
+            await pilot.pause()
+            assert pilot.app.return_code == 0
+
+    run(story())
+    kept = drafts.find(Path("tic-307.toml"))
+    assert kept is not None
+    assert kept.changes == {"controller.gain": "1.122"}
+
+
+def test_saving_while_leaving_leaves(work: Work) -> None:
+    async def story() -> None:
+        async with running(work) as pilot:
+            await press(pilot, "down", "plus", "q", "s")
+            await type_in(pilot, "quicker")
+            await pilot.press("enter")
+            await pilot.pause()
+            assert pilot.app.return_code == 0
+
+    run(story())
+    assert drafts.find(Path("tic-307.toml")) is None
+    assert len(read_case("tic-307.toml").case.history) == 2
+
+
+# --- drafts --------------------------------------------------------------------------------------
+
+
+def test_unsaved_work_is_offered_and_taken_up(folder: Path) -> None:
+    earlier = Work.open(Path("tic-307.toml"))
+    earlier.edit("controller.gain", "1.3")
+    earlier.edit("plant.formula", "2 exp(-5 s)/(30 s + 1)")
+    earlier.keeper.write()
+    work = Work.open(Path("tic-307.toml"))
+
+    async def story() -> None:
+        async with running(work) as pilot:
+            page_of(pilot, DraftPage)
+            assert "1.1 -> 1.3" in text_of(pilot)
+            await press(pilot, "enter")
+            page_of(pilot, MainPage)
+            assert work.case == earlier.case
+
+    run(story())
+
+
+def test_a_dropped_draft_is_gone(folder: Path) -> None:
+    earlier = Work.open(Path("tic-307.toml"))
+    earlier.edit("controller.gain", "1.3")
+    earlier.keeper.write()
+    work = Work.open(Path("tic-307.toml"))
+
+    async def story() -> None:
+        async with running(work) as pilot:
+            await press(pilot, "d")
+            page_of(pilot, MainPage)
+            assert not work.unsaved
+
+    run(story())
+    assert drafts.find(Path("tic-307.toml")) is None
+
+
+def test_a_draft_that_does_not_fit_any_more_is_explained(folder: Path) -> None:
+    earlier = Work.open(Path("tic-307.toml"))
+    earlier.edit("plant.time_constant", "50 s")
+    earlier.keeper.write()
+    changed = CASE.replace('shape = "first-order"\ngain = 1.6\ntime_constant = "45 s"\n', "")
+    changed = changed.replace('dead_time = "8 s"', 'formula = "2/(s+1)"')
+    Path("tic-307.toml").write_text(changed, encoding="utf-8")
+    work = Work.open(Path("tic-307.toml"))
+
+    async def story() -> None:
+        async with running(work) as pilot:
+            await press(pilot, "enter")
+            page_of(pilot, DraftPage)
+            assert "does not fit the file any more" in text_of(pilot)
+
+    run(story())
+    assert drafts.find(Path("tic-307.toml")) is not None
+
+
+@pytest.mark.parametrize(
+    "text", ["", "[]", "{}", "nonsense", '{"at": 1, "base": 2, "changes": 3}', "[" * 100_000]
+)
+def test_a_spoilt_draft_is_passed_over(folder: Path, text: str) -> None:
+    place = drafts.place(Path("tic-307.toml"))
+    place.parent.mkdir(parents=True)
+    place.write_text(text)
+    assert drafts.find(Path("tic-307.toml")) is None
+
+
+def test_a_draft_is_plain_json_in_the_words_of_the_file(work: Work) -> None:
+    work.edit("controller.integral", "40 s")
+    work.keeper.write()
+    kept = json.loads(drafts.place(Path("tic-307.toml")).read_text())
+    assert kept["changes"] == {"controller.integral": "40 s"}
+    work.undo()
+    work.keeper.write()
+    assert not drafts.place(Path("tic-307.toml")).exists()
+
+
+def test_a_draft_that_cannot_be_written_is_told(
+    work: Work, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    def refuse(self: drafts.Keeper) -> None:
+        raise OSError(28, "No space left on device")
+
+    async def story() -> None:
+        async with running(work) as pilot:
+            monkeypatch.setattr(drafts.Keeper, "write", refuse)
+            await press(pilot, "down", "plus")
+            assert "cannot be kept as a draft: No space left on device" in text_of(pilot)
+            assert work.show("controller.gain") == "1.122"
+
+    run(story())
+
+
+# --- help ----------------------------------------------------------------------------------------
+
+
+def pages() -> list[type[Page]]:
+    """Every page of the program."""
+    return [
+        StartPage,
+        MainPage,
+        RecordPage,
+        ProposalsPage,
+        SavePage,
+        LeavePage,
+        DraftPage,
+        HelpPage,
+    ]
+
+
+@pytest.mark.parametrize("kind", pages())
+def test_every_command_has_a_key_a_help_sentence_and_an_action(kind: type[Page]) -> None:
+    assert kind.about or kind is HelpPage
+    for command in kind.commands:
+        assert command.shown
+        if command.keys:
+            assert command.help
+            assert command.action
+            name = command.action.partition("(")[0]
+            assert name.startswith("app.") or hasattr(kind, f"action_{name}")
+
+
+EATEN = {"ctrl+s", "ctrl+q", "ctrl+b", "ctrl+a", "ctrl+c", "ctrl+z", "ctrl+d", "f1", "f10", "f11"}
+"""Keys that flow control, terminal multiplexers or terminals keep for themselves."""
+
+
+@pytest.mark.parametrize("kind", pages())
+def test_no_command_hangs_on_a_key_that_may_never_arrive(kind: type[Page]) -> None:
+    for command in kind.commands:
+        keys = set(filter(None, command.keys.split(",")))
+        # While something is typed every letter is text: there the help has F1 only.
+        if keys and kind is not SavePage:
+            assert keys - EATEN, command
+
+
+def test_the_key_line_fits_80_columns_on_every_page() -> None:
+    for kind in pages():
+        shown = [f"{command.shown} {command.words}" for command in kind.commands if command.words]
+        assert len(" ".join(shown)) <= 80, kind
+
+
+def test_help_explains_the_focused_panel_and_lists_every_key(work: Work) -> None:
+    async def story() -> None:
+        async with running(work, (160, 50)) as pilot:
+            await press(pilot, "4", "question_mark")
+            page_of(pilot, HelpPage)
+            shown = text_of(pilot)
+            assert "Sensitivity Ms: the largest factor" in shown
+            for command in MainPage.commands:
+                if command.help:
+                    assert command.help in shown
+            await press(pilot, "escape")
+            page_of(pilot, MainPage)
+
+    run(story())
+
+
+def test_a_refused_save_of_a_case_without_controller_is_explained(
+    work: Work, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    def refuse(*_: object, **__: object) -> None:
+        raise problem("the case has no controller yet", "give its gain", key="controller")
+
+    async def story() -> None:
+        async with running(work) as pilot:
+            monkeypatch.setattr(study, "record_change", refuse)
+            await press(pilot, "s")
+            await type_in(pilot, "why not")
+            await press(pilot, "enter")
+            assert "the case has no controller yet; give its gain" in text_of(pilot)
+
+    run(story())

@@ -1,0 +1,119 @@
+"""What is loaded when: a slow import is felt at every start, so each one has its moment.
+
+Wall-clock limits would be flaky on a shared machine; what a process has loaded is not.
+"""
+
+from __future__ import annotations
+
+import json
+import os
+import subprocess
+import sys
+from pathlib import Path
+from typing import Any, Final
+
+import pytest
+
+from workbench.options import COMMANDS
+
+ROOT: Final = Path(__file__).resolve().parents[1]
+LOOP: Final = ("--plant", "1.8 exp(-6 s)/(40 s + 1)", "--gain", "1.1", "--integral", "32 s")
+
+HEADLESS: Final = {
+    "assess": LOOP,
+    "predict": (*LOOP, "--scan", "1 s"),
+    "fit": (str(ROOT / "cases" / "TIC-307_bump.csv"),),
+    "propose": LOOP,
+    "check": (str(ROOT / "cases" / "TIC-307.toml"),),
+    "history": (str(ROOT / "cases" / "TIC-307.toml"),),
+    "new": ("XIC-1", *LOOP),
+}
+"""Command -> words after which it does its whole work."""
+
+_RUN_COMMAND: Final = """
+import json, pathlib, sys
+from workbench.cli import main
+status = main(sys.argv[2:])
+pathlib.Path(sys.argv[1]).write_text(json.dumps([status, sorted(sys.modules)]))
+"""
+
+
+def _run(script: str, folder: Path, *words: str) -> Any:
+    """What the script leaves in the file that it is given, as JSON."""
+    left = folder / "left.json"
+    done = subprocess.run(
+        [sys.executable, "-c", script, str(left), *words],
+        cwd=folder,
+        env={**os.environ, "PYTHONPATH": str(ROOT), "XDG_STATE_HOME": str(folder)},
+        stdin=subprocess.DEVNULL,
+        capture_output=True,
+        text=True,
+        timeout=120,
+        check=False,
+    )
+    assert left.exists(), f"{' '.join(words)}:\n{done.stdout}{done.stderr}"
+    return json.loads(left.read_text())
+
+
+def _roots(modules: list[str]) -> set[str]:
+    return {name.partition(".")[0] for name in modules}
+
+
+@pytest.mark.parametrize("words", [(), *((command,) for command in COMMANDS)])
+def test_help_loads_neither_numpy_nor_scipy(words: tuple[str, ...], tmp_path: Path) -> None:
+    status, modules = _run(_RUN_COMMAND, tmp_path, *words, "--help")
+
+    assert status == 0
+    assert not _roots(modules) & {"numpy", "scipy", "textual", "plotext", "rich"}
+
+
+@pytest.mark.parametrize("command", COMMANDS)
+def test_a_headless_command_never_loads_the_screen(command: str, tmp_path: Path) -> None:
+    assert command in HEADLESS, f"add a line for `workbench {command}` to HEADLESS in this file"
+    status, modules = _run(_RUN_COMMAND, tmp_path, command, *HEADLESS[command])
+
+    assert status == 0
+    assert not _roots(modules) & {"textual", "rich"}
+    assert not [name for name in modules if name.startswith(("workbench.screens", "scipy.signal"))]
+
+
+@pytest.mark.parametrize("command", ["assess", "predict", "check", "history", "new"])
+def test_a_quick_answer_needs_no_scipy(command: str, tmp_path: Path) -> None:
+    _, modules = _run(_RUN_COMMAND, tmp_path, command, *HEADLESS[command])
+
+    assert "scipy" not in _roots(modules)
+
+
+_DRAW_SCREEN: Final = """
+import asyncio, json, pathlib, sys
+from workbench.screens.app import WorkbenchApp
+from workbench.screens.work import Work
+
+async def loaded():
+    case = pathlib.Path(sys.argv[2])
+    app = WorkbenchApp(case, Work.open(case))
+    async with app.run_test(size=(80, 24)) as pilot:
+        for _ in range(2000):
+            if app.work.evaluation is not None:
+                break
+            await pilot.pause(0.01)
+        await pilot.pause()
+        strips = app.screen._compositor.render_strips()
+        shown = "\\n".join("".join(segment.text for segment in strip) for strip in strips)
+        return [shown, sorted(sys.modules)]
+
+pathlib.Path(sys.argv[1]).write_text(json.dumps(asyncio.run(loaded())))
+"""
+
+
+def test_the_first_screen_is_drawn_without_scipy(tmp_path: Path) -> None:
+    case = tmp_path / "TIC-307.toml"
+    case.write_bytes((ROOT / "cases" / "TIC-307.toml").read_bytes())
+    shown, modules = _run(_DRAW_SCREEN, tmp_path, str(case))
+
+    # Settings, trend and figures are all there.
+    assert "TIC-307" in shown
+    assert "Trend" in shown
+    assert "stable" in shown
+    assert "textual" in _roots(modules)
+    assert "scipy" not in _roots(modules)

@@ -1,0 +1,427 @@
+"""Numbers and a size in, a text picture out; the only module that knows plotext.
+
+plotext draws each curve into an empty canvas; the axes, the round ticks, the legend and the way the
+canvases are laid over each other are ours, so that two curves stay apart without colour.  Nothing
+reaches plotext that it could choke on: curves are cleaned, thinned, scaled to 0..1 and clipped to
+one span outside, because one NaN or one far-off point ends or hangs the whole process.
+"""
+
+from __future__ import annotations
+
+import math
+import threading
+from collections.abc import Sequence
+from dataclasses import dataclass
+from functools import lru_cache
+from typing import Any, Final
+
+import numpy as np
+from numpy.typing import NDArray
+
+from workbench.units import TIME_UNITS
+
+Floats = NDArray[np.float64]
+
+
+@dataclass(frozen=True)
+class Ink:
+    """How a kind of curve is drawn."""
+
+    unicode: str
+    """plotext's marker where the terminal has Unicode: a code word or one character."""
+    ascii: str
+    """One ASCII character."""
+    joined: bool = True
+    """Points joined by lines."""
+
+
+@dataclass(frozen=True)
+class Curve:
+    """One curve: x and y of the same length, (n,) each; anything not finite is left out."""
+
+    x: Floats
+    y: Floats
+    ink: str
+    """A key of INKS."""
+    name: str
+    """Word for the legend."""
+
+
+@dataclass(frozen=True)
+class Pane:
+    """Curves over one y axis."""
+
+    label: str
+    """What the y axis measures, with its unit."""
+    curves: tuple[Curve, ...]
+    """Later curves lie on top."""
+    bounds: tuple[float, float] | None = None
+    """The y axis never shows more than one span outside these, whatever the curves do."""
+    share: float = 1.0
+    """Share of the height."""
+
+
+@dataclass(frozen=True)
+class Picture:
+    """A picture made of characters."""
+
+    characters: NDArray[np.uint32]
+    """Code points, (height, width)."""
+    styles: NDArray[np.uint8]
+    """Index into STYLES for each character, (height, width)."""
+
+    @property
+    def rows(self) -> tuple[str, ...]:
+        """The picture as lines of text."""
+        return tuple("".join(map(chr, row)) for row in self.characters.tolist())
+
+
+SMALLEST: Final = (24, 6)
+"""Columns and rows below which there is nothing to see."""
+
+
+def draw(
+    panes: Sequence[Pane],
+    width: int,
+    height: int,
+    *,
+    x_limits: tuple[float, float] | None = None,
+    ascii_only: bool = False,
+) -> Picture:
+    """Draw panes above each other over one time axis.
+
+    Parameters
+    ----------
+    panes
+        From top to bottom; the x of every curve is a time [s].
+    width, height
+        Size of the picture in characters.
+    x_limits
+        Ends of the time axis [s]; left out, those of the curves.
+    ascii_only
+        Use no character above 0x7e.
+
+    Returns
+    -------
+    Picture
+        Exactly `height` rows of `width` characters, whatever the numbers were.
+    """
+    sheet = _Sheet(width, height, ascii_only)
+    if width < SMALLEST[0] or height < SMALLEST[1] or not panes:
+        sheet.text(0, 0, "too small to draw" if panes else "nothing to draw")
+        return sheet.picture()
+    x_axis = _time_axis(panes, x_limits)
+    heights = _heights(panes, height - 2)
+    axes = [_y_axis(pane, rows - 1) for pane, rows in zip(panes, heights, strict=True)]
+    gutter = min(9, max(axis.label_width for axis in axes))
+    x_axis = x_axis.with_ticks(max(2, (width - gutter - 1) // 10))
+    top = 0
+    for pane, rows, axis in zip(panes, heights, axes, strict=True):
+        sheet.legend(top, gutter, pane)
+        sheet.y_axis(top + 1, rows - 1, gutter, axis)
+        area = (top + 1, gutter + 1, rows - 1, width - gutter - 1)
+        for curve in pane.curves:
+            sheet.curve(area, curve, x_axis, axis)
+        top += rows
+    sheet.x_axis(top, gutter, x_axis)
+    return sheet.picture()
+
+
+# --- axes ----------------------------------------------------------------------------------------
+
+
+@dataclass(frozen=True)
+class Axis:
+    """Ends of an axis, and its ticks, in the unit of the curves."""
+
+    low: float
+    high: float
+    ticks: tuple[float, ...] = ()
+    labels: tuple[str, ...] = ()
+    unit: str = ""
+    """Unit of the labels of a time axis."""
+
+    @property
+    def label_width(self) -> int:
+        """Columns of the longest label."""
+        return max((len(label) for label in self.labels), default=1)
+
+    def share(self, values: Floats) -> Floats:
+        """Values as shares of the axis: 0 at the low end, 1 at the high end."""
+        # Halved before subtracting, so that no span of finite numbers overflows.
+        return (values / 2 - self.low / 2) / (self.high / 2 - self.low / 2)
+
+    def with_ticks(self, most: int) -> Axis:
+        """The axis with round ticks; a time axis in the unit that reads best."""
+        scale = TIME_UNITS[self.unit]
+        values, labels = round_ticks(self.low / scale, self.high / scale, most)
+        ticks = tuple(value * scale for value in values)
+        return Axis(self.low, self.high, ticks, labels, self.unit)
+
+
+def round_ticks(low: float, high: float, most: int) -> tuple[tuple[float, ...], tuple[str, ...]]:
+    """At most `most` round numbers from `low` to `high`, and their text.
+
+    >>> round_ticks(0.0, 1.0, 6)
+    ((0.0, 0.2, 0.4, 0.6, 0.8, 1.0), ('0.0', '0.2', '0.4', '0.6', '0.8', '1.0'))
+    >>> round_ticks(118.2, 127.4, 4)
+    ((120.0, 125.0), ('120', '125'))
+    """
+    step = _round_step(high / most - low / most)
+    # A step below the resolution of the numbers themselves would repeat the same tick.
+    first, last = math.ceil(low / step - 1e-9), math.floor(high / step + 1e-9)
+    if last - first > most:
+        return (low, high), (f"{low:.3g}", f"{high:.3g}")
+    values = tuple(float(f"{k * step:.12g}") + 0.0 for k in range(first, last + 1))
+    largest = max((abs(value) for value in values), default=0.0)
+    if largest >= 1e6 or (largest < 1e-3 and largest > 0):
+        return values, tuple(f"{value:.3g}" for value in values)
+    decimals = max(0, -math.floor(math.log10(step) + 1e-9))
+    return values, tuple(f"{value:.{decimals}f}" for value in values)
+
+
+def _round_step(least: float) -> float:
+    """The smallest of 1, 2, 5 times a power of ten that is not below `least`."""
+    least = min(max(least, 1e-290), 1e290)
+    power = 10.0 ** math.floor(math.log10(least))
+    for factor in (1.0, 2.0, 5.0):
+        if factor * power >= least * (1 - 1e-9):
+            return factor * power
+    return 10.0 * power
+
+
+def _finite(values: Floats) -> Floats:
+    kept: Floats = values[np.isfinite(values)]
+    return kept
+
+
+def _span(arrays: Sequence[Floats]) -> tuple[float, float] | None:
+    """Lowest and highest finite value, or `None` where there is none."""
+    kept = [values for values in map(_finite, arrays) if values.size]
+    if not kept:
+        return None
+    return float(min(v.min() for v in kept)), float(max(v.max() for v in kept))
+
+
+def _time_axis(panes: Sequence[Pane], limits: tuple[float, float] | None) -> Axis:
+    span = limits or _span([curve.x for pane in panes for curve in pane.curves]) or (0.0, 1.0)
+    low, high = (min(max(end, -1e12), 1e12) for end in span)
+    if high - low < 1e-9 * max(1.0, abs(low), abs(high)):
+        high = low + max(1.0, abs(low) * 1e-6)
+    length = high - low
+    unit = "s" if length < 600 else "min" if length < 4 * 3600 else "h"
+    return Axis(low, high, unit=unit)
+
+
+def _y_axis(pane: Pane, rows: int) -> Axis:
+    span = _span([curve.y for curve in pane.curves]) or pane.bounds or (0.0, 1.0)
+    low, high = (min(max(end, -1e290), 1e290) for end in span)
+    least = 0.0
+    if pane.bounds is not None:
+        size = abs(pane.bounds[1] - pane.bounds[0])
+        floor, ceiling = min(pane.bounds) - size, max(pane.bounds) + size
+        low, high = min(max(low, floor), ceiling), min(max(high, floor), ceiling)
+        # A straight line must not be blown up until its rounding shows.
+        least = 0.01 * size
+    least = max(least, 1e-6 * max(abs(low), abs(high), 1e-280))
+    if high - low < least:
+        middle = low + (high - low) / 2
+        low, high = middle - least / 2, middle + least / 2
+    # The ends sit on round numbers, so that the axis holds still while a setting is nudged.
+    grid = _round_step((high - low) / 20)
+    low, high = (math.floor(low / grid - 0.1) * grid, math.ceil(high / grid + 0.1) * grid)
+    ticks, labels = round_ticks(low, high, max(2, (rows + 1) // 3))
+    return Axis(low, high, ticks, labels)
+
+
+def _heights(panes: Sequence[Pane], height: int) -> list[int]:
+    """Rows for each pane, its legend line included; the first takes what is left over."""
+    total = sum(pane.share for pane in panes)
+    heights = [max(3, int(height * pane.share / total)) for pane in panes]
+    heights[0] += height - sum(heights)
+    return heights
+
+
+# --- the sheet -----------------------------------------------------------------------------------
+
+
+class _Sheet:
+    """Characters and styles being filled in."""
+
+    def __init__(self, width: int, height: int, ascii_only: bool) -> None:
+        self.width, self.height, self.ascii_only = max(0, width), max(0, height), ascii_only
+        self.characters = np.full((self.height, self.width), ord(" "), dtype=np.uint32)
+        self.styles = np.zeros((self.height, self.width), dtype=np.uint8)
+        self.lines = LINES[ascii_only]
+
+    def picture(self) -> Picture:
+        return Picture(self.characters, self.styles)
+
+    def text(self, row: int, column: int, words: str, style: str = "label") -> None:
+        words = words[: max(0, self.width - column)]
+        if not (0 <= row < self.height) or not words:
+            return
+        end = column + len(words)
+        self.characters[row, column:end] = [ord(character) for character in words]
+        self.styles[row, column:end] = STYLES.index(style)
+
+    def legend(self, row: int, gutter: int, pane: Pane) -> None:
+        self.text(row, gutter + 1, pane.label)
+        column = gutter + len(pane.label) + 3
+        seen: set[str] = set()
+        for curve in pane.curves:
+            if curve.name in seen or column + len(curve.name) + 3 > self.width:
+                continue
+            seen.add(curve.name)
+            ink = INKS[curve.ink]
+            sample = ink.ascii if self.ascii_only else SAMPLES.get(ink.unicode, ink.unicode)
+            self.text(row, column, sample * 2, curve.ink)
+            self.text(row, column + 3, curve.name)
+            column += len(curve.name) + 5
+
+    def y_axis(self, top: int, rows: int, gutter: int, axis: Axis) -> None:
+        for row in range(rows):
+            self.text(top + row, gutter, self.lines.side, "frame")
+        for value, label in zip(axis.ticks, axis.labels, strict=True):
+            row = top + _place(1 - _share(axis, value), rows)
+            self.text(row, gutter - len(label[:gutter]), label[:gutter])
+            self.text(row, gutter, self.lines.side_tick, "frame")
+
+    def x_axis(self, row: int, gutter: int, axis: Axis) -> None:
+        columns = self.width - gutter - 1
+        self.text(row, gutter, self.lines.corner + self.lines.base * columns, "frame")
+        free = 0
+        room = self.width - len(axis.unit) - 1
+        for value, label in zip(axis.ticks, axis.labels, strict=True):
+            column = gutter + 1 + _place(_share(axis, value), columns)
+            self.text(row, column, self.lines.base_tick, "frame")
+            start = max(0, column - (len(label) - 1) // 2)
+            if start >= free and start + len(label) <= room:
+                self.text(row + 1, start, label)
+                free = start + len(label) + 1
+        self.text(row + 1, room + 1, axis.unit)
+
+    def curve(self, area: tuple[int, int, int, int], curve: Curve, x: Axis, y: Axis) -> None:
+        top, left, rows, columns = area
+        points = thin(x.share(curve.x), y.share(curve.y), columns)
+        if points[0].size == 0:
+            return
+        ink = INKS[curve.ink]
+        marker = ink.ascii if self.ascii_only else ink.unicode
+        drawn = _plot(points[0].tobytes(), points[1].tobytes(), columns, rows, marker, ink.joined)
+        cells = self.characters[top : top + rows, left : left + columns]
+        styles = self.styles[top : top + rows, left : left + columns]
+        marked = (drawn != ord(" ")) & (drawn != _BRAILLE)
+        # Two curves through the same cell keep the dots of both.
+        both = marked & (cells > _BRAILLE) & (drawn > _BRAILLE) & (cells <= _BRAILLE + 255)
+        cells[both] |= drawn[both]
+        cells[marked & ~both] = drawn[marked & ~both]
+        styles[marked] = STYLES.index(curve.ink)
+
+
+_BRAILLE: Final = 0x2800
+
+
+def _share(axis: Axis, value: float) -> float:
+    return float(axis.share(np.array([value]))[0])
+
+
+def _place(share: float, cells: int) -> int:
+    """The cell in which plotext puts a share 0..1 of an axis."""
+    return min(max(round(share * (cells - 1)), 0), cells - 1)
+
+
+def thin(x: Floats, y: Floats, columns: int) -> tuple[Floats, Floats]:
+    """At most two points a column, in their order, peaks kept; x and y are shares of their axes.
+
+    What is not finite is dropped, what lies outside the axes is clipped to one span outside.
+    """
+    count = min(x.size, y.size)
+    x, y = x[:count], y[:count]
+    # Infinite values carry a direction, so they go to the edge; what has none is dropped.
+    kept = np.isfinite(x) & ~np.isnan(y) & (x >= -0.5) & (x <= 1.5)
+    x, y = x[kept], np.clip(y[kept], -1.0, 2.0)
+    order = np.argsort(x, kind="stable") if np.any(np.diff(x) < 0) else None
+    if order is not None:
+        x, y = x[order], y[order]
+    if x.size <= 2 * columns:
+        return x, y
+    column = np.floor(np.clip(x, 0.0, 1.0) * (columns - 1) + 0.5).astype(np.int64)
+    # Sorted by column and height, each column begins with its lowest point and ends with its peak.
+    by_height = np.lexsort((y, column))
+    starts = np.flatnonzero(np.diff(column, prepend=column[0] - 1))
+    ends = np.append(starts[1:], x.size) - 1
+    edges = np.array([0, x.size - 1])
+    chosen = np.unique(np.concatenate((edges, by_height[starts], by_height[ends])))
+    return x[chosen], y[chosen]
+
+
+# --- plotext -------------------------------------------------------------------------------------
+
+_one_at_a_time = threading.Lock()
+"""plotext keeps one figure for the whole process; two threads in it at once spoil both."""
+
+
+@lru_cache(maxsize=32)
+def _plot(
+    x: bytes, y: bytes, columns: int, rows: int, marker: str, joined: bool
+) -> NDArray[np.uint32]:
+    """One curve of thinned points on an empty canvas, as code points (rows, columns).
+
+    Remembered, because the pinned curves and the setpoint seldom change with a what-if.
+    """
+    # Here and not at the top: it costs 0.1 s, and the first screen is drawn without it.
+    import plotext
+
+    library: Any = plotext
+    with _one_at_a_time:
+        # Otherwise it trims the canvas to the size of the terminal it finds.
+        library.terminal.limit(False, False)
+        figure = library.figure
+        figure.clear()
+        figure.theme("colorless")
+        figure.plot_size(columns, rows)
+        figure.axes(False)
+        for axis in ("x", "y"):
+            figure.ruler(axis).lim(0.0, 1.0).ticks([], [])
+        signal = figure.signal(np.frombuffer(x).tolist(), np.frombuffer(y).tolist(), marker=marker)
+        figure.draw(signal.lines(joined))
+        drawn = figure.build().string(colorless=True)
+    text = "".join(line[:columns].ljust(columns) for line in drawn.split("\n")[:rows])
+    cells = np.frombuffer(text.encode("utf-32-le"), dtype=np.uint32)
+    return cells.reshape(rows, columns)
+
+
+# --- tables --------------------------------------------------------------------------------------
+
+
+@dataclass(frozen=True)
+class _Lines:
+    side: str
+    side_tick: str
+    base: str
+    base_tick: str
+    corner: str
+
+
+LINES: Final = {
+    False: _Lines("│", "┤", "─", "┬", "└"),
+    True: _Lines("|", "+", "-", "+", "+"),
+}
+"""Frame characters, by `ascii_only`."""
+
+SAMPLES: Final = {"braille": "⠒"}
+"""Legend sample of plotext's code words."""
+
+INKS: Final = {
+    "pinned": Ink("o", "o", joined=False),
+    "setpoint": Ink("─", "-", joined=False),
+    "pv": Ink("braille", "*"),
+    "output": Ink("braille", "*"),
+    "record": Ink("·", ".", joined=False),
+    "fit": Ink("braille", "*"),
+}
+"""Kinds of curve; no two that meet in a pane look alike without colour."""
+
+STYLES: Final = ("frame", "label", *INKS)
+"""What a picture's style numbers mean."""

@@ -1,0 +1,15 @@
+"""The screen: the only room that knows Textual."""
+
+import os
+
+# Textual reads these once, as it is imported.  They are only defaults: who sets them keeps them.
+for _name, _value in {
+    # A function key that a slow line splits in two must not become five commands.
+    "ESCDELAY": "300",
+    # Movement for its own sake costs kilobytes on a slow line.
+    "TEXTUAL_ANIMATIONS": "none",
+    "TEXTUAL_SMOOTH_SCROLL": "0",
+    # A dropped line would leave the terminal typing escape codes.
+    "TEXTUAL_DISABLE_KITTY_KEY": "1",
+}.items():
+    os.environ.setdefault(_name, _value)

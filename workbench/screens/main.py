@@ -1,0 +1,451 @@
+"""The main page: the loop, its settings, and what they do."""
+
+from __future__ import annotations
+
+from collections.abc import Iterable
+from typing import TYPE_CHECKING, Final
+
+from textual import on
+from textual.app import ComposeResult
+from textual.containers import Horizontal, Vertical
+from textual.message import Message
+from textual.widget import Widget
+from textual.worker import Worker, WorkerState
+
+from workbench import study
+from workbench.case.case import Case
+from workbench.errors import InputError, WorkbenchError
+from workbench.screens.cells import Divider, Line
+from workbench.screens.controller import ControllerPanel
+from workbench.screens.editor import Editor
+from workbench.screens.entry import Entry
+from workbench.screens.fields import FieldsPanel, label_of
+from workbench.screens.figures import FiguresPanel
+from workbench.screens.history import HistoryPanel
+from workbench.screens.keys import Command, bindings
+from workbench.screens.page import HELP, MOVING, Page
+from workbench.screens.panel import Panel
+from workbench.screens.plant import PlantPanel
+from workbench.screens.ranges import LoopPanel
+from workbench.screens.scenario import ScenarioPanel
+from workbench.screens.trend import TrendPanel
+from workbench.screens.work import LARGE, SMALL, Work
+from workbench.study import Evaluation
+
+if TYPE_CHECKING:
+    from textual.events import DescendantFocus
+
+ROOMY: Final = (140, 40)
+"""Columns and rows from which every panel is shown at once."""
+
+BURST_S: Final = 0.015
+"""Time over which changes are shown together [s]."""
+
+LONG_S: Final = 0.7
+"""Time after which it is said that answers are still being computed [s]."""
+
+LEFT: Final = 36
+"""Columns of the settings where panels share their places."""
+
+
+class CaseChanged(Message):
+    """Posted when the case is another one; a burst of them counts once."""
+
+    def can_replace(self, message: Message) -> bool:
+        """A later one says the same."""
+        return isinstance(message, CaseChanged)
+
+
+class Evaluated(Message):
+    """Posted when the answers for a case are there, or why there are none."""
+
+    def __init__(self, case: Case, evaluation: Evaluation | None, fault: str = "") -> None:
+        super().__init__()
+        self.case, self.evaluation, self.fault = case, evaluation, fault
+
+
+class DraftFailed(Message):
+    """Posted when the draft cannot be written."""
+
+    def __init__(self, reason: str) -> None:
+        super().__init__()
+        self.reason = reason
+
+
+class MainPage(Page):
+    """Plant, Controller, Trend, Figures, History, Scenario, Loop."""
+
+    about = (
+        "Choose a setting with the arrows and press Enter to type another value, or nudge it. Each "
+        "accepted change is predicted at once and drawn over the pinned prediction. '*' marks a "
+        "setting that is not what the file has.",
+        "Nothing is lost when the line drops: unsaved work is kept and offered the next time.",
+    )
+    commands = (
+        Command("enter,f4", "Enter", "", "edit", "type another value for the chosen setting", "F4"),
+        Command("plus,equals_sign", "+", "", f"nudge({SMALL})", "2 % up, or the next choice", "="),
+        Command("minus", "-", "", f"nudge({1 / SMALL})", "2 % down, or the choice before"),
+        Command("greater_than_sign,full_stop", ">", "", f"nudge({LARGE})", "20 % up", "."),
+        Command("less_than_sign,comma", "<", "", f"nudge({1 / LARGE})", "20 % down", ","),
+        Command("", "+-", "2%", "", ""),
+        Command("", "<>", "20%", "", ""),
+        Command("p,f5", "p", "pin", "pin", "pin the present prediction for comparison", "F5"),
+        Command("u,f6", "u", "undo", "undo", "undo the last change", "F6"),
+        Command("y,f7", "y", "redo", "redo", "redo what was undone", "F7"),
+        Command("r,f3", "r", "record", "record", "fit the plant to a test record", "F3"),
+        Command("o,f8", "o", "propose", "proposals", "settings by published rules, judged", "F8"),
+        Command("s,f2", "s", "save", "save", "save with a reason", "F2"),
+        Command("z,f9", "z", "zoom", "zoom", "the focused panel alone, and back", "F9"),
+        Command("q,ctrl+c", "q", "leave", "leave", "leave; asks about unsaved work", "ctrl+c"),
+        HELP,
+        *(
+            Command(kind.number, kind.number, "", f"panel('{kind.number}')", f"panel {kind.title}")
+            for kind in (
+                PlantPanel,
+                ControllerPanel,
+                TrendPanel,
+                FiguresPanel,
+                HistoryPanel,
+                ScenarioPanel,
+                LoopPanel,
+            )
+        ),
+        Command("tab", "Tab", "", "app.focus_next", "to the next panel"),
+        Command("shift+tab", "shift+Tab", "", "app.focus_previous", "to the panel before"),
+        *MOVING,
+    )
+    BINDINGS = bindings(commands)
+
+    def __init__(self, work: Work) -> None:
+        super().__init__()
+        self.work = work
+        self.panels: dict[str, Panel] = {
+            kind.number: kind(work, css_id=f"panel-{kind.number}") for kind in PANELS
+        }
+        panels = self.panels
+        self._left = Vertical(*(panels[number] for number in "1267"), id="left")
+        self._divider = Divider()
+        self._lower = Horizontal(panels["4"], panels["5"], id="lower")
+        self._right = Vertical(panels["3"], self._lower, id="right")
+        self.editor = Editor(work)
+        """The entry over the settings."""
+        self._in_view = {"left": "1", "lower": "4"}
+        self._zoomed = ""
+        self._evaluating: Case | None = None
+        self._answered: Case | None = None
+        self._has_painted = False
+        self._greeting: tuple[str, str] | None = None
+        self._arranged_for = 0
+        self._showing = False
+
+    # -- composition -------------------------------------------------------------------------------
+
+    def head(self) -> Line:
+        """The loop, and whether it is saved."""
+        loop = self.work.case.loop
+        count = len(self.work.told)
+        state = f"{count} not saved" if count else "not saved" if self.work.unsaved else "saved"
+        where = f" {self.work.path.name}: {state} "
+        name = f" {loop.tag}  {loop.service}"
+        fill = " " * max(1, self.size.width - len(name) - len(where))
+        return ((name, "title"), (fill, "plain"), (where, "changed" if count else "quiet"))
+
+    def body(self) -> Iterable[Widget]:
+        """Settings on the left; the trend above figures and history on the right."""
+        yield Horizontal(self._left, self._divider, self._right, id="body")
+
+    def compose(self) -> ComposeResult:
+        """The page, and the editor above it."""
+        yield from super().compose()
+        yield self.editor
+
+    def on_mount(self) -> None:
+        """Arrange for the size, and start computing once the frame is painted."""
+        super().on_mount()
+        self._arrange()
+        self.call_after_refresh(self._painted)
+
+    def on_resize(self) -> None:
+        """Another size, perhaps another arrangement."""
+        super().on_resize()
+        self._arrange()
+        self.redraw_head()
+        self.editor.leave()
+
+    def _arrange(self) -> None:
+        """Decide which panels are in view, and how high."""
+        self._arranged_for = len(self.work.quantities)
+        roomy = self.size.width >= ROOMY[0] and self.size.height >= ROOMY[1]
+        shown = set(self.panels)
+        if self._zoomed:
+            shown = {self._zoomed}
+        elif not roomy:
+            settings = {"1", "2"} if self._in_view["left"] in "12" else {"6", "7"}
+            shown = {"3", self._in_view["lower"], *settings}
+        for number, panel in self.panels.items():
+            panel.display = number in shown
+            partner = PARTNERS.get(number, "")
+            alone = not roomy and not self._zoomed and partner
+            panel.elsewhere = (f"{partner} {self.panels[partner].title}",) if alone else ()
+        left, right = self._left, self._right
+        left.display = bool(shown & set("1267"))
+        right.display = bool(shown & set("345"))
+        self._lower.display = bool(shown & set("45"))
+        self._divider.display = left.display and right.display
+        left.styles.width = LEFT if right.display and not roomy else "1fr"
+        if right.display and roomy:
+            left.styles.width = LEFT + 10
+        self._set_heights(shown, roomy)
+
+    def _set_heights(self, shown: set[str], roomy: bool) -> None:
+        settings = [number for number in "1267" if number in shown]
+        for number in settings:
+            panel = self.panels[number]
+            assert isinstance(panel, FieldsPanel)
+            formula = 2 if number == "1" and roomy else 0
+            last = number == settings[-1]
+            panel.styles.height = "1fr" if last else panel.wanted_height + formula
+        self.panels["3"].styles.height = "1fr" if self._zoomed else "12fr"
+        self._lower.styles.height = "1fr" if self._zoomed else "9fr"
+
+    # -- evaluating --------------------------------------------------------------------------------
+
+    def on_screen_resume(self) -> None:
+        """Another page may have changed the case."""
+        self.post_message(CaseChanged())
+        if self.focused is None:
+            self.panels["2" if self.work.case.controller else "1"].focus()
+        self.moved()
+
+    def on_case_changed(self, message: CaseChanged) -> None:
+        """Ask for the answers at once; show and keep the settings once for a burst of keys."""
+        if self._has_painted and not self._is_current():
+            self._evaluate()
+        if not self._showing:
+            self._showing = True
+            self.set_timer(BURST_S, self._show_settings)
+
+    def _show_settings(self) -> None:
+        self._showing = False
+        self.run_worker(self._keep_draft, thread=True, group="draft", exit_on_error=False)
+        if len(self.work.quantities) != self._arranged_for:
+            self._arrange()
+        self.redraw_head()
+        for panel in self.panels.values():
+            if isinstance(panel, FieldsPanel | HistoryPanel):
+                panel.redraw()
+
+    @property
+    def busy(self) -> bool:
+        """Answers or settings are still on their way to the screen."""
+        return self._evaluating is not None or self._showing or not self._has_painted
+
+    def _is_current(self) -> bool:
+        return self._answered == self.work.case
+
+    def _keep_draft(self) -> None:
+        try:
+            self.work.keeper.write()
+        except OSError as fault:
+            self.post_message(DraftFailed(str(fault.strerror)))
+
+    def on_draft_failed(self, message: DraftFailed) -> None:
+        """The engineer must know that only saving keeps the work now."""
+        self.tell(f"this work cannot be kept as a draft: {message.reason}; save it", "caution")
+
+    def _painted(self) -> None:
+        """The frame is there before the first answers are asked for."""
+        self._has_painted = True
+        self._evaluate()
+
+    def _evaluate(self) -> None:
+        """Compute in a thread, one case at a time: what comes in meanwhile is computed next."""
+        if self._evaluating is None:
+            self._evaluating = case = self.work.case
+            self.run_worker(
+                lambda: self._answers(case), thread=True, group="evaluate", exit_on_error=False
+            )
+            self.set_timer(LONG_S, lambda: self._still_computing(case))
+
+    def _still_computing(self, case: Case) -> None:
+        if self._evaluating is case:
+            self.tell("computing ...", "quiet")
+
+    def _answers(self, case: Case) -> None:
+        try:
+            self.post_message(Evaluated(case, study.evaluate(case)))
+        except WorkbenchError as fault:
+            self.post_message(Evaluated(case, None, str(fault)))
+
+    def on_evaluated(self, message: Evaluated) -> None:
+        """Show the answers, unless the case has moved on."""
+        self._evaluating = None
+        if message.case is not self.work.case:
+            self._evaluate()
+            return
+        self._answered = message.case
+        self.work.fault = message.fault
+        if message.evaluation is None:
+            self.tell(f"{message.fault}", "worse")
+        else:
+            self.work.evaluation = message.evaluation
+        if self.work.pinned is None:
+            self.work.pinned = self.work.evaluation
+        for panel in self.panels.values():
+            panel.redraw()
+
+    def on_worker_state_changed(self, event: Worker.StateChanged) -> None:
+        """A fault of the program itself must not take the work with it."""
+        if event.state is WorkerState.ERROR:
+            self._evaluating = None
+            fault = event.worker.error
+            self.tell(f"could not be computed ({type(fault).__name__}: {fault})", "worse")
+
+    # -- what the keys do --------------------------------------------------------------------------
+
+    def check_action(self, action: str, parameters: tuple[object, ...]) -> bool | None:
+        """While something is typed, the keys belong to it."""
+        return not self.editor.display
+
+    def action_panel(self, number: str) -> None:
+        """Bring a panel into view and give it the keys."""
+        place = "lower" if number in "45" else "left" if number in "1267" else ""
+        if place:
+            self._in_view[place] = number
+        if self._zoomed:
+            self._zoomed = number
+        self._arrange()
+        self.panels[number].focus()
+
+    def action_zoom(self) -> None:
+        """The focused panel alone, or all of them again."""
+        panel = self.focused_list()
+        self._zoomed = "" if self._zoomed or panel is None else panel.number
+        self._arrange()
+
+    def action_edit(self) -> None:
+        """Type another value for the chosen setting."""
+        panel = self.focused_list()
+        if isinstance(panel, FieldsPanel):
+            self.editor.open(panel)
+        else:
+            self.tell("choose a setting first: 1 Plant, 2 Controller, 6 Scenario, 7 Loop")
+
+    def action_nudge(self, factor: float) -> None:
+        """Change the chosen setting by a share."""
+        panel = self.focused_list()
+        if not isinstance(panel, FieldsPanel):
+            self.tell("choose a setting first: 1 Plant, 2 Controller, 6 Scenario, 7 Loop")
+            return
+        key = panel.key
+        try:
+            changed = self.work.nudge(key, factor)
+        except InputError as fault:
+            self.tell(str(fault), "worse")
+            return
+        if changed:
+            self.moved()
+            self.post_message(CaseChanged())
+
+    def action_pin(self) -> None:
+        """Compare with the present prediction from now on."""
+        if self.work.evaluation is not None and self._is_current():
+            self.work.pinned = self.work.evaluation
+            self.tell("pinned: figures and trend are compared with these settings")
+            for panel in self.panels.values():
+                panel.redraw()
+        else:
+            self.tell("still computing; press p again when the figures are there")
+
+    def action_undo(self) -> None:
+        """Back by one change."""
+        self.tell("undone" if self.work.undo() else "nothing to undo")
+        self.post_message(CaseChanged())
+
+    def action_redo(self) -> None:
+        """Forward by one change."""
+        self.tell("done again" if self.work.redo() else "nothing to redo")
+        self.post_message(CaseChanged())
+
+    def action_record(self) -> None:
+        """Open the Record page."""
+        self.program.show_record(self.work)
+
+    def action_proposals(self) -> None:
+        """Open the Proposals page."""
+        self.program.show_proposals(self.work)
+
+    def action_save(self) -> None:
+        """Open the Save page."""
+        self.program.show_save(self.work)
+
+    def action_leave(self) -> None:
+        """Leave the loop."""
+        self.program.leave(self.work)
+
+    # -- editing -----------------------------------------------------------------------------------
+
+    @on(Editor.Closed)
+    def edited(self, message: Editor.Closed) -> None:
+        """Back to the panel; a change is computed at once."""
+        if message.assumed:
+            named = ", ".join(label_of(key) for key in message.assumed)
+            self.greet(f"assumed, to be typed over: {named}", "caution")
+        message.panel.focus()
+        if message.changed:
+            self.post_message(CaseChanged())
+
+    @on(Entry.Submitted)
+    def submitted(self, message: Entry.Submitted) -> None:
+        """The editor deals with its own entry."""
+        message.stop()
+        self.editor.accept(message.value)
+
+    @on(Entry.Left)
+    def left(self, message: Entry.Left) -> None:
+        """Nothing is changed."""
+        message.stop()
+        self.editor.leave()
+
+    def on_descendant_focus(self, event: DescendantFocus) -> None:
+        """Say what the chosen setting is."""
+        self.moved()
+
+    def moved(self) -> None:
+        """The message line tells the meaning of the chosen setting."""
+        panel = self.focused_list()
+        if self._greeting:
+            self.tell(*self._greeting)
+            self._greeting = None
+        elif isinstance(panel, FieldsPanel):
+            self.tell(self._about(panel.key), "quiet")
+        elif panel is not None:
+            self.tell("", "quiet")
+
+    def _about(self, key: str) -> str:
+        """What a setting is, and what the file has."""
+        was = {changed: old for changed, old, _ in self.work.changes}
+        saved = f" In the file: {was[key] or 'left out'}." if key in was else ""
+        room = self.size.width - len(saved) - 16
+        meaning = self.work.quantities[key].meaning
+        meaning = meaning if len(meaning) <= room else meaning[: room - 1] + "…"
+        return f"Enter edits: {meaning}.{saved}"
+
+    def greet(self, words: str, tone: str = "plain") -> None:
+        """Say something as soon as the keys are back in a panel."""
+        self._greeting = (words, tone)
+
+
+PANELS: Final[tuple[type[Panel], ...]] = (
+    PlantPanel,
+    ControllerPanel,
+    TrendPanel,
+    FiguresPanel,
+    HistoryPanel,
+    ScenarioPanel,
+    LoopPanel,
+)
+"""Every panel of the main page, in the order of its key."""
+
+PARTNERS: Final = {"1": "6", "6": "1", "2": "7", "7": "2", "4": "5", "5": "4"}
+"""Panels that share a place where there is not room for all."""

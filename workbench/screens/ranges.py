@@ -1,0 +1,17 @@
+"""The Loop panel."""
+
+from __future__ import annotations
+
+from workbench.screens.fields import FieldsPanel
+
+
+class LoopPanel(FieldsPanel):
+    """The loop's name, and the ranges of its signals."""
+
+    number = "7"
+    title = "Loop"
+    tables = ("loop", "pv", "op")
+    help = (
+        "The loop's tag and service, and the range, the operating point and the limits of PV and "
+        "OP in engineering units.",
+    )

@@ -1,0 +1,78 @@
+"""The Trend panel: the prediction over the pinned one."""
+
+from __future__ import annotations
+
+import numpy as np
+from numpy.typing import NDArray
+
+from workbench import charts
+from workbench.charts import Curve, Pane, Picture
+from workbench.screens.cells import TONE_NUMBERS, Screenful
+from workbench.screens.panel import Panel, wrapped
+from workbench.study import Evaluation, Trend
+
+
+class TrendPanel(Panel):
+    """PV and SP above, OP below, on one time axis."""
+
+    number = "3"
+    title = "Trend"
+    help = (
+        "The predicted answer to the scenario: PV and SP above, OP below. The pinned prediction is "
+        "drawn as separate marks under the present one; p pins the present one.",
+    )
+
+    def content(self, width: int, height: int) -> Screenful:
+        """The title line above the picture."""
+        head = self.typeset([self.heading(width, self._remark())], width, 1)
+        body = self._picture(width, height - 1)
+        return Screenful(
+            np.concatenate([head.characters, body.characters]),
+            np.concatenate([head.tones, body.tones]),
+        )
+
+    def _remark(self) -> str:
+        evaluation = self.work.evaluation
+        if evaluation is None or evaluation.prediction is None:
+            return ""
+        return "grows without bound" if evaluation.prediction.diverged else ""
+
+    def _picture(self, width: int, height: int) -> Screenful:
+        evaluation = self.work.evaluation
+        if evaluation is None:
+            words = self.work.fault or "computing"
+            return self.typeset(wrapped(words, width, "quiet", " "), width, height)
+        if evaluation.prediction is None:
+            words = "no prediction without a controller"
+            return self.typeset(wrapped(words, width, "quiet", " "), width, height)
+        picture = charts.draw(self._panes(evaluation), width, height, ascii_only=self.ascii_only)
+        return as_cells(picture)
+
+    def _panes(self, evaluation: Evaluation) -> tuple[Pane, ...]:
+        case, present = self.work.case, _trend(evaluation)
+        pinned = self.work.pinned
+        earlier = None if pinned is None or pinned is evaluation else _trend(pinned)
+        pv, op = [], []
+        if earlier is not None:
+            pv.append(Curve(earlier.time, earlier.pv, "pinned", "pinned"))
+            op.append(Curve(earlier.time, earlier.output, "pinned", "pinned"))
+        if present is not None:
+            pv.append(Curve(present.time, present.setpoint, "setpoint", "SP"))
+            pv.append(Curve(present.time, present.pv, "pv", "PV"))
+            op.append(Curve(present.time, present.output, "output", "OP"))
+        return (
+            Pane(f"PV {case.pv.unit}", tuple(pv), (case.pv.low, case.pv.high), 2.0),
+            Pane(f"OP {case.op.unit}", tuple(op), (case.op.low, case.op.high), 1.0),
+        )
+
+
+def _trend(evaluation: Evaluation) -> Trend | None:
+    return None if evaluation.prediction is None else evaluation.prediction.trend
+
+
+_TONES: NDArray[np.uint8] = np.array([TONE_NUMBERS[name] for name in charts.STYLES], np.uint8)
+
+
+def as_cells(picture: Picture) -> Screenful:
+    """A picture as cells of a widget."""
+    return Screenful(picture.characters, _TONES[picture.styles])
