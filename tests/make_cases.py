@@ -196,6 +196,9 @@ form = "ideal"
 gain = 6.0
 integral = "1 min/repeat"
 derivative = "none"
+max_sensitivity = 2.05884
+load_iae = 185.857
+program = "0.1.0"
 """
 )
 
@@ -255,6 +258,9 @@ form = "ideal"
 gain = 0.8
 integral = "20 min"
 derivative = "none"
+max_sensitivity = 1.34705
+load_iae = 12323.7
+program = "0.1.0"
 """
 )
 
@@ -323,6 +329,9 @@ form = "ideal"
 proportional_band = 200.0
 integral = "6 repeats/min"
 derivative = "none"
+max_sensitivity = 1.1523
+load_iae = 39.7412
+program = "0.1.0"
 """
 )
 

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import json
+import math
 import os
 import signal
 import subprocess
@@ -157,7 +158,7 @@ def test_versions_are_printed(run: Run) -> None:
         (["nothere.toml"], "nothere.toml", "there is no such file or folder"),
         (["no/such"], "no/such", "there is no such file or folder"),
         (["oven.toml", "--ascii"], "screen", "needs a terminal"),
-        ([], "screen", "assess, predict, fit, propose, check, history or new"),
+        ([], "screen", "assess, predict, respond, fit, propose, check, history or new"),
         (["."], "screen", "needs a terminal"),
         (["--asci"], "--asci", "did you mean --ascii?"),
         (["--gain", "1"], "--gain", "is not an option"),
@@ -452,6 +453,147 @@ def test_a_loop_that_only_the_scan_upsets_is_answered_with_status_1(run: Run) ->
     words = ("assess", "--plant", "1/(s+1)", "--gain", "5", "--scan", "2 s", "--json")
     data = answer(run(*words), status=1)
     assert (data["loop"]["stable"], data["sampled"]["stable"]) == (True, False)
+
+
+ONE_LINE = {
+    "formula": "1.8 exp(-6 s)/(40 s + 1)",
+    "shape": "first-order gain=1.8, time_constant=40 s, dead_time=6 s",
+    "blocks": "valve: 1.8 exp(-6 s); process: first-order gain=1, time_constant=40 s",
+}
+"""The same plant in each of the ways to type it."""
+
+
+@pytest.mark.parametrize("command", ["assess", "predict", "propose", "respond"])
+def test_every_command_takes_a_plant_in_each_of_its_ways(run: Run, command: str) -> None:
+    settings = () if command == "respond" else ("--gain", "1.1", "--integral", "32 s")
+    found = [answer(run(command, "--plant", p, *settings, "--json")) for p in ONE_LINE.values()]
+    assert found[0] == found[1] == found[2]
+
+
+def test_a_drawn_plant_goes_into_a_new_file_and_out_again(run: Run) -> None:
+    line = "valve: 1/(2 s + 1); process: 1.8/(40 s + 1); positioner around valve: 3"
+    assert run("new", "TIC-903", "--plant", line, "--time-unit", "min", "--gain", "1").status == 0
+    assert Path("TIC-903.toml").read_text().count("[[plant.block]]") == 3
+    data = answer(run("assess", "TIC-903.toml", "--json"))
+    # exact: 1/(1 + 3) times 1.8
+    assert data["plant"]["gain"] == pytest.approx(0.45, rel=1e-12)
+    changed = ("--set", "plant.block.positioner.formula=1", "--json")
+    assert answer(run("assess", "TIC-903.toml", *changed))["plant"]["gain"] == pytest.approx(0.9)
+
+
+@pytest.mark.parametrize(
+    ("words", "where", "what"),
+    [
+        (("assess", "--plant", "valve: 1/("), "--plant: ", "block 'valve': column 3"),
+        (("assess", "--plant", "first-order gain=1"), "--plant: ", "lacks time_constant"),
+        (("assess", "--plant", "vessel volume=0, flow=1 /s"), "--plant: ", "volume: 0 is"),
+        (("predict", "--plant", "a: 1", "--gain", "1", "--load", "1/("), "--load: ", "column 3"),
+        (
+            ("assess", "oven.toml", "--set", "plant.load_before=x"),
+            "--set plant.load_before",
+            "needs",
+        ),
+        (("respond", *P, "--at", "-1 s"), "--at: ", "is below 0"),
+        (("respond", *P, "--width", "0 s"), "--width: ", "is not above 0"),
+        (("respond", *P, "--size", "big"), "--size: ", "give a number"),
+        (("respond", *P, "--input", "stpe"), "--input: ", "did you mean step?"),
+        (("respond", *P, "--record", "oven.csv", "--until", "9 s"), "--until: ", "beside --record"),
+        (("respond", *P, "--op", "x"), "--op: ", "without --record"),
+        (("respond", *P, "--record", "nothere.csv"), "nothere.csv: ", "is not there"),
+        (("respond", "--plant", "2", "--input", "impulse"), "respond: ", "infinite spike"),
+        (("respond", "--plant", "1/(s - 1)", "--until", "9 h"), "respond: ", "beyond every number"),
+    ],
+)
+def test_a_plant_or_a_response_that_cannot_be_is_one_line(
+    run: Run, words: tuple[str, ...], where: str, what: str
+) -> None:
+    line = run.refused(*words)
+    assert where in line
+    assert what in line
+
+
+def test_a_delayed_inner_feedback_is_judged_as_far_as_it_can_be(run: Run) -> None:
+    line = "valve: 1/(2 s + 1); process: exp(-6 s)/(40 s + 1); slave around valve to process: 0.3"
+    words = ("--plant", line, "--gain", "1", "--integral", "40 s", "--scan", "1 s")
+    data = answer(run("assess", *words, "--json"))
+    assert data["sampled"] is None
+    assert data["sampled_reason"] == "a dead time inside an inner feedback"
+    assert data["plant"]["poles"] is None
+    assert data["loop"]["stable"]
+    assert "Loop, sampled" in run("assess", *words).out
+    line = run.refused("predict", *words)
+    assert line.startswith("--plant: cannot be predicted: a dead time inside an inner")
+    assert run("propose", *words, "--json").status == 0
+
+
+def test_assess_tells_gains_both_ways_valve_distance_and_small_models(run: Run) -> None:
+    words = ("--plant", "2/((40 s + 1)(8 s + 1)(2 s + 1))", "--gain", "1.5", "--pv-range", "0:50")
+    data = answer(run("assess", *words, "--small-models", "--json"))
+    # exact: 2 times 100/50, 1.5 times 100/50, and the half rule's 1.8 of 40 s + 8 s / 2
+    assert data["plant"]["gain_percent_per_percent"] == 4.0
+    assert (data["loop"]["gain"], data["loop"]["gain_op_per_pv"]) == (1.5, 3.0)
+    assert data["plant"]["small_models"][0]["formula"] == "2 exp(-6 s)/(44 s + 1)"
+    assert data["valve"] == {"meaning": "signal", "closes_on_rise": False}
+    assert "small_models" not in answer(run("assess", *words, "--json"))["plant"]
+    text = run("assess", *words, "--small-models").out
+    for said in (
+        "one lag, half rule",
+        "4 in percent of both spans",
+        "at its limit if the loop gain",
+    ):
+        assert said in text
+    assert "integrating: PV moves 0.8 %/min" in run("assess", "--plant", "0.8/(60 s)").out
+
+
+def test_an_air_to_close_valve_is_no_fault(run: Run) -> None:
+    data = answer(run("assess", "oven.toml", "--set", "op.valve_closes_on_rise=true", "--json"))
+    assert data["valve"] == {"meaning": "signal", "closes_on_rise": True}
+
+
+@pytest.mark.parametrize(
+    ("words", "final", "peak"),
+    [
+        # exact: 1.8 exp(-6 s)/(40 s + 1) at s = 0, its response after 234 s, its slope at first
+        ((), 1.8, None),
+        (("--size", "-2"), -3.6, None),
+        (("--input", "pulse", "--width", "10 s"), 0.0, 1.8 * (1 - math.exp(-0.25))),
+        (("--input", "impulse"), 0.0, 0.045),
+        (("--input", "doublet", "--width", "9 s", "--at", "5 s"), 0.0, None),
+    ],
+)
+def test_respond_tells_final_value_and_peak(
+    run: Run, words: tuple[str, ...], final: float, peak: float | None
+) -> None:
+    data = answer(run("respond", *P, *words, "--json"))
+    assert data["final_value"] == pytest.approx(final, abs=1e-12)
+    assert peak is None or data["peak"] == pytest.approx(peak, rel=1e-6)
+    assert "final change of PV" in run("respond", *P, *words).out
+
+
+def test_respond_writes_a_trend_that_is_exact(run: Run) -> None:
+    done = run("respond", *P, "--until", "100 s", "--trend", "t.csv", "--json")
+    assert answer(done)["until_s"] == 100.0
+    lines = Path("t.csv").read_text().splitlines()
+    assert lines[0] == "time_s,op,pv"
+    for line in lines[1::50]:
+        t, op, pv = map(float, line.split(","))
+        # exact
+        assert op == 1.0
+        assert pv == pytest.approx(1.8 * -math.expm1(-max(0.0, t - 6) / 40), abs=1e-12)
+
+
+def test_respond_answers_a_record_and_a_growing_plant(run: Run) -> None:
+    Path("r.csv").write_text(
+        "time_s,pv,valve\n" + "".join(f"{t},0,{5 + (t > 3)}\n" for t in range(99))
+    )
+    data = answer(run("respond", *P, "--record", "r.csv", "--op", "valve", "--json"))
+    assert (data["input"], data["final_value"]) == ("record", None)
+    # exact: 1 step at 4 s, over 98 - 4 - 6 s
+    assert data["last_value"] == pytest.approx(1.8 * -math.expm1(-88 / 40), rel=1e-12)
+    data = answer(run("respond", "--plant", "1/(9 s - 1)", "--json"))
+    assert "grows without end" in data["final_value_reason"]
+    assert "without end" in data["peak_reason"]
+    assert "OP as recorded" in run("respond", *P, "--record", "r.csv", "--op", "valve").out
 
 
 def test_predict_keeps_its_keys(run: Run) -> None:

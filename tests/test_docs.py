@@ -34,6 +34,7 @@ import pytest
 
 from tests.screens.conftest import press, running, text_of, type_in
 from workbench.case.tables import SHAPE, TABLES, PlantTable, Revision
+from workbench.model.blocks import Block, Blocks
 from workbench.model.plant import SHAPES
 from workbench.options import COMMANDS, INLINE, SCREEN, Option
 from workbench.screens.work import Work
@@ -134,7 +135,12 @@ def case_keys() -> str:
             for row in _key_rows(kind)
             if row[0] not in seen
         ]
-        parts.append(_table(("shape", *heads), shape_rows))
+        parts += [
+            _table(("shape", *heads), shape_rows),
+            "**`[[plant.block]]`** in place of shape and formula: one table for each block, from OP"
+            " to PV; `[plant]` may then have `time_unit` and `load_before`",
+            _table(heads, [*_key_rows(Block), *_key_rows(Blocks)]),
+        ]
     rows = [
         ("`at`", "when the entry was made", "date and time with its offset", "needed"),
         *_key_rows(Revision),

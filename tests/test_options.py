@@ -83,7 +83,7 @@ def test_options_become_keys_of_the_case() -> None:
     )
     assert given.changes() == {
         "scenario.setpoint_step": "-2",
-        "plant.formula": "-2/(3 s+1)",
+        "plant": "-2/(3 s+1)",
         "controller.gain": "1",
         "pv.low": "-50",
         "pv.high": "150",
@@ -123,7 +123,7 @@ def test_options_become_keys_of_the_case() -> None:
         ("assess", ["--pv-range", "5"], "--pv-range: '5' is not two numbers", "LOW:HIGH"),
         ("assess", ["--pv-range", "1:2:3"], "--pv-range: '1:2:3' is not two", "LOW:HIGH"),
         ("assess", ["--start", "5:"], "--start: has an empty value", "PV:OP"),
-        ("assess", ["--plant", ""], "--plant: has an empty value", "FORMULA"),
+        ("assess", ["--plant", ""], "--plant: has an empty value", "PLANT"),
         (
             "assess",
             ["--gain", "1", "--proportional-band", "50"],

@@ -65,11 +65,14 @@ def test_an_assessment_says_its_figures_with_their_units() -> None:
         "\n"
         "Plant\n"
         "  formula    1.8 exp(-6 s)/(40 s + 1)\n"
-        "  gain       1.8 degC per %\n"
+        "  gain       1.8 degC per %, 0.72 in percent of both spans\n"
         "  dead time  6 s\n"
         "  stable     yes\n"
         "  poles      -0.025 1/s\n"
         "  zeros      none\n"
+        "  OP is      the signal to the valve, which opens as it rises\n"
+        "\n"
+        "Controller gain 1.1 in percent of both spans, 0.44 % per degC.\n"
     )
     # Exact: with integral action PV follows a setpoint step and forgets a load step.
     assert line(text, "final PV, setpoint step of 1") == "final PV, setpoint step of 1 1 degC"

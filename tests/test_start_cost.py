@@ -22,6 +22,7 @@ LOOP: Final = ("--plant", "1.8 exp(-6 s)/(40 s + 1)", "--gain", "1.1", "--integr
 HEADLESS: Final = {
     "assess": LOOP,
     "predict": (*LOOP, "--scan", "1 s"),
+    "respond": ("--plant", LOOP[1]),
     "fit": (str(ROOT / "cases" / "TIC-307_bump.csv"),),
     "propose": LOOP,
     "check": (str(ROOT / "cases" / "TIC-307.toml"),),
@@ -77,7 +78,7 @@ def test_a_headless_command_never_loads_the_screen(command: str, tmp_path: Path)
     assert not [name for name in modules if name.startswith(("workbench.screens", "scipy.signal"))]
 
 
-@pytest.mark.parametrize("command", ["assess", "predict", "check", "history", "new"])
+@pytest.mark.parametrize("command", ["assess", "predict", "respond", "check", "history", "new"])
 def test_a_quick_answer_needs_no_scipy(command: str, tmp_path: Path) -> None:
     _, modules = _run(_RUN_COMMAND, tmp_path, command, *HEADLESS[command])
 

@@ -114,9 +114,14 @@ def _assess(given: Given) -> Answer:
 
     case = _loop(given)
     found = study.assess(case)
+    found = replace(found, notes=study.cautions(case, found))
+    small = None
+    if "--small-models" in given:
+        with _progress("reducing the plant"):
+            small = study.reductions(case)
     return Answer(
-        report.assess_text(case, found, study.units_of(case), _width()),
-        report.assess_data(case, found, study.units_of(case)),
+        report.assess_text(case, found, study.units_of(case), _width(), small),
+        report.assess_data(case, found, study.units_of(case), small),
         Status.DONE if report.is_stable(found) else Status.NO,
     )
 
@@ -133,8 +138,9 @@ def _predict(given: Given) -> Answer:
     if case.controller is None:
         raise _no_controller(given)
     with _progress("predicting"):
-        evaluation = study.evaluate(case)
-        prediction = study.predict(case, seed=seed)
+        evaluation = study.evaluate(case, seed)
+        # Where there is no prediction, asking for it says why.
+        prediction = evaluation.prediction or study.predict(case, seed)
     if trend_file is not None:
         _replace_file(trend_file, report.trend_csv(prediction.trend))
     units = study.units_of(case)
@@ -155,6 +161,52 @@ def _no_controller(given: Given) -> InputError:
     what = "has no [controller] table, and a prediction needs a controller"
     mend = "write one in the file, or give one with --set controller.gain=1"
     return InputError(Problem(what, mend, path=given.file))
+
+
+def _respond(given: Given) -> Answer:
+    """The plant alone, from rest."""
+    from workbench import study
+    from workbench.model.response import INPUTS, Signal
+    from workbench.records.record import read_record
+
+    trend_file, record_file = given.word("--trend"), given.word("--record")
+    if trend_file is not None:
+        _check_target(trend_file)
+    if record_file is not None:
+        beside = next((name for name in _SIGNAL if name in given), "")
+        if beside:
+            raise problem("is given beside --record", "keep one of the two", key=beside)
+    else:
+        beside = next((name for name in ("--time", "--op") if name in given), "")
+        if beside:
+            raise problem("is given without --record", "name the record", key=beside)
+    kind = given.choice("--input", tuple(INPUTS)) or "step"
+    size, at = given.number("--size"), given.seconds("--at", or_zero=True) or 0.0
+    width, period = given.seconds("--width"), given.seconds("--period")
+    until = given.seconds("--until")
+    case = _loop(given)
+    plant = study.plant_of(case)
+    with _progress("responding"):
+        if record_file is not None:
+            record = read_record(record_file, time=given.word("--time"), op=given.word("--op"))
+            response, signal = study.respond_to_record(plant, record), None
+        else:
+            own = study.response_horizon(plant, Signal()) / 6.0
+            signal = Signal(
+                kind, 1.0 if size is None else size, at, width or own, period or 4.0 * own
+            )
+            response = study.respond(plant, signal, until or study.response_horizon(plant, signal))
+    if trend_file is not None:
+        _replace_file(trend_file, report.response_csv(response))
+    units = study.units_of(case)
+    return Answer(
+        report.respond_text(case, response, signal, units, trend_file, _width()),
+        report.respond_data(case, response, signal, units),
+    )
+
+
+_SIGNAL: Final = ("--input", "--size", "--at", "--width", "--period", "--until")
+"""Options of an input that a record stands in for."""
 
 
 def _fit(given: Given) -> Answer:
@@ -606,6 +658,7 @@ _STATUSES: Final = (
 VERBS: Final[dict[str, Callable[[Given], Answer]]] = {
     "assess": _assess,
     "predict": _predict,
+    "respond": _respond,
     "fit": _fit,
     "propose": _propose,
     "check": _check,

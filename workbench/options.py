@@ -90,10 +90,12 @@ class Given:
         if key in {word.partition("=")[0].strip() for word in self.options.get("--set", ())}:
             return f"--set {key}"
         name = next((name for name, option in self.known.items() if key in option.keys), "")
+        if not name and key.startswith("plant.") and "--plant" in self:
+            name = "--plant"
         # Without a file, an option that was left out is still where the fault is mended.
         return name if name in self.options or self.command == "new" or not self.file else ""
 
-    def number(self, name: str, *, above: float) -> float | None:
+    def number(self, name: str, *, above: float = -math.inf) -> float | None:
         """The plain number of an option.  Raises `InputError`."""
         word = self.word(name)
         if word is None:
@@ -106,7 +108,7 @@ class Given:
             comma = ", with a point in place of the comma" if "," in word else ""
             raise problem(
                 f"{harmless(word, 40)!r} is not accepted",
-                f"give a number above {above:g}{comma}",
+                f"give a number{f' above {above:g}' if math.isfinite(above) else ''}{comma}",
                 key=name,
             )
         return value
@@ -126,8 +128,8 @@ class Given:
             numbers.append(int(digits))
         return numbers
 
-    def seconds(self, name: str) -> float | None:
-        """The time [s] of an option, above 0.  Raises `InputError`."""
+    def seconds(self, name: str, *, or_zero: bool = False) -> float | None:
+        """The time [s] of an option, above 0, or from 0.  Raises `InputError`."""
         word = self.word(name)
         if word is None:
             return None
@@ -135,8 +137,9 @@ class Given:
             amount = read_amount(word, tuple(TIME_UNITS), "30 s")
         except InputError as fault:
             raise fault.at(key=name) from None
-        if amount.value <= 0:
-            raise problem(f"{amount} is not above 0", 'write it like "30 s"', key=name)
+        if amount.value < 0 or (amount.value == 0 and not or_zero):
+            least = "below 0" if or_zero else "not above 0"
+            raise problem(f"{amount} is {least}", 'write it like "30 s"', key=name)
         return amount.seconds
 
     def choice(self, name: str, choices: tuple[str, ...]) -> str | None:
@@ -293,7 +296,8 @@ class Grammar:
         lines += ["", "Options:", *option_lines([*own, _HELP], width)]
         if INLINE[0] in self.options:
             title = "The loop, in place of a CASE" if "CASE" in self.operand else "The loop"
-            lines += ["", f"{title}:", *option_lines(INLINE, width)]
+            inline = [option for option in self.options if option in INLINE]
+            lines += ["", f"{title}:", *option_lines(inline, width)]
         return [*lines, "", "Example:", f"  {self.example}"]
 
 
@@ -341,9 +345,11 @@ _HELP: Final = Option("--help", "", "this text")
 INLINE: Final[tuple[Option, ...]] = (
     Option(
         "--plant",
-        "FORMULA",
-        'path from OP to PV in s, PV units per OP unit, like "1.8 exp(-6 s)/(40 s + 1)"',
-        keys=("plant.formula",),
+        "PLANT",
+        'path from OP to PV, PV units per OP unit: a formula in s, "1.8 exp(-6 s)/(40 s + 1)"; a'
+        ' shape with its values, "first-order gain=1.8, time_constant=40 s, dead_time=6 s"; or'
+        ' blocks, "valve: 1/(2 s + 1); process: 1.8/(40 s + 1)"',
+        keys=("plant",),
     ),
     Option(
         "--load",
@@ -352,7 +358,7 @@ INLINE: Final[tuple[Option, ...]] = (
         "the plant itself: the upset enters at its input",
         ("plant.load",),
     ),
-    Option("--time-unit", "s|min|h", "unit of s in both formulas", "s", ("plant.time_unit",)),
+    Option("--time-unit", "s|min|h", "unit of s in the formulas", "s", ("plant.time_unit",)),
     Option(
         "--form",
         "ideal|series|parallel",
@@ -468,6 +474,13 @@ INLINE: Final[tuple[Option, ...]] = (
 )
 """The inline loop options, in place of a case file."""
 
+PLANT_ALONE: Final = tuple(
+    option
+    for option in INLINE
+    if option.name in ("--plant", "--time-unit", "--pv-range", "--op-range")
+)
+"""The inline options that tell of a plant without its loop."""
+
 JSON: Final = Option("--json", "", "one JSON object in place of the text")
 SET: Final = Option(
     "--set",
@@ -509,6 +522,30 @@ RUN: Final[tuple[Option, ...]] = (
     Option("--seed", "N", "which noise, a whole number", "0"),
     Option("--trend", "FILE.csv", "writes the trend: time_s,sp,pv,op"),
 )
+SMALL_MODELS: Final = Option(
+    "--small-models", "", "the plant as one and two lags with dead time, and how far off each is"
+)
+MOVES: Final[tuple[Option, ...]] = (
+    Option(
+        "--input", "step|ramp|pulse|doublet|sine|impulse", "what moves the plant's input", "step"
+    ),
+    Option(
+        "--size",
+        "X",
+        "height of a step, pulse or doublet, amplitude of a sine, OP units; OP units per s of a"
+        " ramp, OP units x s of an impulse",
+        "1",
+    ),
+    Option("--at", "TIME", "when it begins", "0 s"),
+    Option("--width", "TIME", "of a pulse, or of each half of a doublet", "the plant's own lag"),
+    Option("--period", "TIME", "of a sine", "four times the plant's own lag"),
+    Option("--until", "TIME", "end of the response", "long enough to see all of it"),
+    Option("--record", "FILE.csv", "answers the OP of this record in place of --input"),
+    Option("--time", "COLUMN", "column of time in the record", "time_s or timestamp"),
+    Option("--op", "COLUMN", "column of the controller output in the record", "op"),
+    Option("--trend", "FILE.csv", "writes the response: time_s,op,pv"),
+)
+"""What `respond` does to a plant."""
 FIT: Final[tuple[Option, ...]] = (
     Option("--time", "COLUMN", "column of time", "time_s or timestamp"),
     Option("--pv", "COLUMN", "column of the process variable", "pv"),
@@ -558,7 +595,7 @@ COMMANDS: Final[dict[str, Grammar]] = {
             "assess",
             "Gain, final values, stability and margins of a loop; a plant alone is enough.",
             "[CASE]",
-            (SET, *INLINE, JSON),
+            (SMALL_MODELS, SET, *INLINE, JSON),
             'workbench assess --plant "1.8 exp(-6 s)/(40 s + 1)" --gain 1.1 --integral "32 s"',
         ),
         Grammar(
@@ -567,6 +604,13 @@ COMMANDS: Final[dict[str, Grammar]] = {
             "[CASE]",
             (*RUN, SET, *INLINE, JSON),
             'workbench predict cases/TIC-307.toml --setpoint-step -2 --until "30 min"',
+        ),
+        Grammar(
+            "respond",
+            "What the plant alone does, from rest, when its input is moved.",
+            "[CASE]",
+            (*MOVES, SET, *PLANT_ALONE, JSON),
+            'workbench respond --plant "1.8 exp(-6 s)/(40 s + 1)" --input pulse --width "30 s"',
         ),
         Grammar(
             "fit",

@@ -19,6 +19,8 @@ from workbench.units import Amount, Figure, Note, harmless, quantities, text, ti
 if TYPE_CHECKING:
     from workbench.case.case import Case, Revision
     from workbench.model.pid import Controller
+    from workbench.model.response import Signal
+    from workbench.model.robustness import Margins
     from workbench.records.identify import Candidate, Fit
     from workbench.study import (
         Assessment,
@@ -28,6 +30,8 @@ if TYPE_CHECKING:
         PlantFigures,
         Prediction,
         Proposal,
+        Reduced,
+        Response,
         Trend,
     )
 
@@ -188,16 +192,28 @@ def _derivative_s(controller: Controller | None) -> Figure:
 # --- assess ---------------------------------------------------------------------------------------
 
 
-def assess_data(case: Case, found: Assessment, units: Mapping[str, str]) -> Json:
-    """The assessment as `assess --json` prints it."""
-    data: Json = {"tag": case.loop.tag, "plant": _plant_data(found.plant)}
+def assess_data(
+    case: Case,
+    found: Assessment,
+    units: Mapping[str, str],
+    small: Sequence[Reduced] | None = None,
+) -> Json:
+    """The assessment as `assess --json` prints it, with the small models where they are given."""
+    plant = _plant_data(found.plant)
+    if small is not None:
+        plant["small_models"] = [_small_data(model) for model in small]
+    data: Json = {"tag": case.loop.tag, "plant": plant}
     missing = "there is no controller"
     if found.loop is not None:
-        missing = "the controller has no scan interval"
+        missing = found.sampled_reason or "the controller has no scan interval"
     for key, loop in (("loop", found.loop), ("sampled", found.sampled)):
-        data[key] = None if loop is None else _loop_data(loop)
+        data[key] = None if loop is None else _loop_data(loop, found)
         if loop is None:
             data[f"{key}_reason"] = missing
+    data["valve"] = {
+        "meaning": case.op.meaning,
+        "closes_on_rise": bool(case.op.valve_closes_on_rise),
+    }
     data["action"] = found.action
     if found.action is None:
         data["action_reason"] = missing
@@ -209,12 +225,27 @@ def assess_data(case: Case, found: Assessment, units: Mapping[str, str]) -> Json
 def _plant_data(plant: PlantFigures) -> Json:
     data: Json = {"formula": plant.formula}
     _put(data, "gain", plant.gain)
+    _put(data, "gain_percent_per_percent", plant.gain_percent)
     _put(data, "slope_per_s", plant.slope_per_s)
     data["stable"] = bool(plant.stable)
     data["integrating"] = bool(plant.integrating)
-    data["poles"] = _pairs(plant.poles)
-    data["zeros"] = _pairs(plant.zeros)
+    for key, values, reason in (
+        ("poles", plant.poles, plant.poles_reason),
+        ("zeros", plant.zeros, plant.zeros_reason),
+    ):
+        data[key] = None if reason else _pairs(values)
+        if reason:
+            data[f"{key}_reason"] = reason
     data["dead_time_s"] = float(plant.dead_time_s)
+    return data
+
+
+def _small_data(model: Reduced) -> Json:
+    data: Json = {"method": model.method, "lags": model.lags, "formula": model.formula or None}
+    if model.reason:
+        data["formula_reason"] = model.reason
+    _put(data, "peak_step_error_percent", model.peak_step_error_percent)
+    _put(data, "phase_error_deg", model.phase_error_deg)
     return data
 
 
@@ -231,9 +262,11 @@ _MARGINS: Final = (
 """Field of `Margins` and key in JSON -> words, unit."""
 
 
-def _loop_data(loop: LoopFigures) -> Json:
+def _loop_data(loop: LoopFigures, found: Assessment) -> Json:
     margins = loop.margins
     data: Json = {"stable": bool(margins.stable)}
+    _put(data, "gain", Figure(found.gain))
+    _put(data, "gain_op_per_pv", Figure(found.gain_op_per_pv))
     if not margins.stable:
         data["stable_reason"] = margins.reason
     for key, _, _ in _MARGINS:
@@ -243,28 +276,74 @@ def _loop_data(loop: LoopFigures) -> Json:
     return data
 
 
-def assess_text(case: Case, found: Assessment, units: Mapping[str, str], width: int) -> str:
-    """The assessment for people."""
+def assess_text(
+    case: Case,
+    found: Assessment,
+    units: Mapping[str, str],
+    width: int,
+    small: Sequence[Reduced] | None = None,
+) -> str:
+    """The assessment for people, with the small models where they are given."""
     pv, op = units["pv"], units["op"]
     plant = found.plant
     rows: Rows = [("formula", plant.formula)]
     if plant.integrating:
+        rows.append(("gain", f"none, {plant.gain.reason}"))
         rows.append(("slope", _figure(plant.slope_per_s, f"{pv}/s per {op}")))
     else:
-        rows.append(("gain", _figure(plant.gain, f"{pv} per {op}")))
+        percent = f", {_figure(plant.gain_percent)} in percent of both spans"
+        percent = "" if plant.gain.value is None else percent
+        rows.append(("gain", _figure(plant.gain, f"{pv} per {op}") + percent))
     rows += [
         ("dead time", time_text(plant.dead_time_s)),
         ("stable", _yes(plant.stable) + (", integrating" if plant.integrating else "")),
-        ("poles", _points(plant.poles)),
-        ("zeros", _points(plant.zeros)),
+        ("poles", plant.poles_reason or _points(plant.poles)),
+        ("zeros", plant.zeros_reason or _points(plant.zeros)),
+        ("OP is", found.valve),
     ]
     lines = [*_title(case, width, found.action), "Plant", *_table(rows, width)]
+    if small is not None:
+        lines += ["", "Small models of the plant", *_small_rows(small, width)]
+    if found.gain is not None:
+        own = f"{text(found.gain)} in percent of both spans, {text(found.gain_op_per_pv)} {op}"
+        lines += ["", wrapped(f"Controller gain {own} per {pv}.", width)]
     for title, loop in (("analogue", found.loop), ("sampled", found.sampled)):
         if loop is not None:
             lines += ["", f"Loop, {title}", *_table(_loop_rows(loop, units), width)]
     if found.loop is None:
         lines += ["", wrapped("No controller is given, so no loop is judged.", width)]
-    return "\n".join([*lines, *_notes(found.notes, width)])
+    if found.sampled_reason:
+        lines += ["", "Loop, sampled", *_table([("none", found.sampled_reason)], width)]
+    told = [note for note in found.notes if not note.text.startswith("NOT STABLE")]
+    return "\n".join([*lines, *_notes(told, width)])
+
+
+def _small_rows(small: Sequence[Reduced], width: int) -> list[str]:
+    rows = []
+    for model in small:
+        lags = "one lag" if model.lags == 1 else f"{model.lags} lags"
+        off = (
+            f"; off by {_figure(model.peak_step_error_percent, '%')} of the step response at most,"
+            f" phase {_figure(model.phase_error_deg, 'deg')} at the phase crossover"
+        )
+        said = f"none: {model.reason}" if model.reason else f"{model.formula}{off}"
+        rows.append((f"{lags}, {model.method}", said))
+    return _table(rows or [("none", "the plant is such a model already")], width)
+
+
+def _distance(margins: Margins) -> str:
+    """How far the loop is from instability, in plain words."""
+    up, down, delay = margins.gain_margin, margins.gain_margin_lower, margins.delay_margin_s
+    limits = []
+    if up.value is not None:
+        limits.append(f"the loop gain were {text(up.value, digits=3)} times as large")
+    if down.value is not None:
+        limits.append(f"it fell to {text(down.value, digits=3)} of what it is")
+    if delay.value is not None:
+        limits.append(f"the dead time were {time_text(delay.value, 3)} longer")
+    if not limits:
+        return "no gain and no dead time upsets it"
+    return "at its limit if " + ", or if ".join(limits)
 
 
 def _title(case: Case, width: int, action: str | None = None) -> list[str]:
@@ -293,6 +372,7 @@ def _loop_rows(loop: LoopFigures, units: Mapping[str, str]) -> Rows:
         rows.append((label, _time(figure) if unit == "s" else _figure(figure, unit)))
     pv = units["pv"]
     rows += [
+        ("distance", _distance(margins)),
         ("final PV, setpoint step of 1", _figure(loop.final_pv_after_setpoint_step, pv)),
         ("final PV, load step of 1", _figure(loop.final_pv_after_load_step, pv)),
     ]
@@ -437,6 +517,70 @@ def trend_csv(trend: Trend) -> str:
     columns = (trend.time, trend.setpoint, trend.pv, trend.output)
     for row in zip(*(column.tolist() for column in columns), strict=True):
         writer.writerow([f"{value:.10g}" for value in row])
+    return out.getvalue()
+
+
+# --- respond --------------------------------------------------------------------------------------
+
+
+def respond_data(
+    case: Case, response: Response, signal: Signal | None, units: Mapping[str, str]
+) -> Json:
+    """The open-loop response as `respond --json` prints it; without a signal a record's OP."""
+    data: Json = {"tag": case.loop.tag, "input": "record" if signal is None else signal.kind}
+    if signal is not None:
+        data["size"], data["at_s"] = float(signal.size), float(signal.at)
+        if signal.kind in ("pulse", "doublet"):
+            data["width_s"] = float(signal.width)
+        if signal.kind == "sine":
+            data["period_s"] = float(signal.period)
+    _put(data, "final_value", response.final_value)
+    _put(data, "peak", response.peak)
+    data["last_value"] = float(response.pv[-1])
+    data["until_s"] = float(response.time[-1])
+    data["units"] = dict(units)
+    return data
+
+
+def respond_text(
+    case: Case,
+    response: Response,
+    signal: Signal | None,
+    units: Mapping[str, str],
+    trend_file: str | None,
+    width: int,
+) -> str:
+    """The open-loop response for people; changes from rest."""
+    pv = units["pv"]
+    what = "OP as recorded" if signal is None else _signal_words(signal, units["op"])
+    rows = [
+        ("input", what),
+        ("final change of PV", _figure(response.final_value, pv)),
+        ("largest change of PV", _figure(response.peak, pv)),
+        ("at the last, " + time_text(float(response.time[-1])), text(float(response.pv[-1]), pv)),
+    ]
+    lines = [*_title(case, width)[:1], "", *_table(rows, width, "")]
+    if trend_file is not None:
+        lines += ["", wrapped(f"The response is in {trend_file}.", width)]
+    return "\n".join(lines)
+
+
+def _signal_words(signal: Signal, op: str) -> str:
+    unit = {"ramp": f"{op}/s", "impulse": f"{op} s"}.get(signal.kind, op)
+    words = f"{signal.kind} of {text(signal.size, unit)} at {time_text(signal.at)}"
+    if signal.kind in ("pulse", "doublet"):
+        words += f", {'each half' if signal.kind == 'doublet' else 'for'} {time_text(signal.width)}"
+    return words + (f", period {time_text(signal.period)}" if signal.kind == "sine" else "")
+
+
+def response_csv(response: Response) -> str:
+    """The response as a CSV file: `time_s,op,pv`, changes from rest."""
+    out = io.StringIO()
+    writer = csv.writer(out, lineterminator="\n")
+    writer.writerow(("time_s", "op", "pv"))
+    columns = (response.time, response.op, response.pv)
+    for row in zip(*(column.tolist() for column in columns), strict=True):
+        writer.writerow([f"{value:.15g}" for value in row])
     return out.getvalue()
 
 

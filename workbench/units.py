@@ -12,7 +12,10 @@ import dataclasses
 import difflib
 import math
 import re
+from collections.abc import Mapping
 from dataclasses import dataclass
+from functools import cache
+from types import MappingProxyType
 from typing import Any, Final, Literal
 
 from workbench.errors import InputError, Problem, problem
@@ -394,13 +397,20 @@ def quantity(
     return dataclasses.field(default=default, metadata={"quantity": declared})
 
 
-def quantities(table: type) -> dict[str, Quantity]:
+def quantities(table: type) -> Mapping[str, Quantity]:
     """The declared quantities of a dataclass, in order."""
-    return {
-        field.name: field.metadata["quantity"]
-        for field in dataclasses.fields(table)
-        if "quantity" in field.metadata
-    }
+    return _declared(table)
+
+
+@cache
+def _declared(table: type) -> Mapping[str, Quantity]:
+    return MappingProxyType(
+        {
+            field.name: field.metadata["quantity"]
+            for field in dataclasses.fields(table)
+            if "quantity" in field.metadata
+        }
+    )
 
 
 def check_fields(table: object) -> None:

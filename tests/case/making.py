@@ -11,6 +11,7 @@ from hypothesis import strategies as st
 
 from workbench.case.case import Case, LoopTable, OpTable, PlantTable, PvTable, Revision
 from workbench.errors import InputError
+from workbench.model.blocks import Block, Blocks
 from workbench.model.pid import Controller
 from workbench.model.plant import SHAPES, FirstOrder
 from workbench.sim.scenario import Scenario
@@ -20,6 +21,9 @@ DATA: Final = Path(__file__).resolve().parents[1] / "data" / "cases"
 
 DRYER: Final = DATA / "dryer.toml"
 """A file kept by hand, odd spacing, quoted key, comments and all."""
+
+DRAWN: Final = DATA / "blocks.toml"
+"""A file whose plant is drawn as blocks, kept by hand."""
 
 DOTTED: Final = DATA / "dotted.toml"
 """A file of dotted keys, an inline table and a history list."""
@@ -143,12 +147,32 @@ def revisions(draw: st.DrawFn) -> Revision:
 
 
 @st.composite
+def drawings(draw: st.DrawFn) -> Blocks:
+    """Blocks in series, some with another beside them, perhaps with one around two of them."""
+    count = draw(st.integers(1, 4))
+    path = [f"{draw(st.sampled_from(['valve', 'Kessel 2', 'x-y']))} {n}" for n in range(count)]
+    formulas = st.sampled_from([*FORMULAS[:2], "first-order gain=2, time_constant=3 min", "0.5"])
+    blocks = [Block(name, draw(formulas)) for name in path]
+    for number, name in enumerate(path):
+        if draw(st.booleans()):
+            sign = draw(st.sampled_from(["+", "-"]))
+            # 7 adds up with none of the formulas to nothing.
+            blocks.append(Block(f"leak {number}", "7", beside=name, sign=sign))
+    if draw(st.booleans()):
+        blocks.append(Block("slave", "0.01", around=f"{path[0]} to {path[-1]}"))
+    load_before = draw(st.sampled_from(["", *path]))
+    return Blocks(tuple(blocks), draw(st.sampled_from(["s", "min", "h"])), load_before)
+
+
+@st.composite
 def cases(draw: st.DrawFn) -> Case:
     """Any case that can be kept."""
     tag = draw(st.text(min_size=1, max_size=30).filter(lambda text: text.strip() != ""))
-    shape = draw(st.one_of(st.none(), st.sampled_from(list(SHAPES))))
+    shape = draw(st.one_of(st.none(), st.sampled_from([*SHAPES, "blocks"])))
     given = {"lags": 3.0} if shape == "equal-lags" else {}
-    process = None if shape is None else draw(tables(SHAPES[shape], **given))
+    process = None
+    if shape is not None:
+        process = draw(drawings() if shape == "blocks" else tables(SHAPES[shape], **given))
     return Case(
         draw(tables(LoopTable, tag=tag)),
         draw(tables(PvTable)),

@@ -28,8 +28,9 @@ from workbench.case.case import (
     with_shape,
 )
 from workbench.case.reading import ASSUMED, TOLD_WITH, read_tables
-from workbench.case.tables import TABLES
+from workbench.case.tables import PROCESSES, TABLES
 from workbench.errors import InputError
+from workbench.model.blocks import Block, Blocks, parse_blocks
 from workbench.model.pid import Controller
 from workbench.model.plant import (
     SHAPES,
@@ -112,7 +113,9 @@ def test_what_is_shown_can_be_typed_back(case: Case) -> None:
 @given(cases(), st.data())
 @settings(max_examples=30)
 def test_an_edit_changes_its_own_key_only(case: Case, data: st.DataObject) -> None:
-    free = [key for key in keys(case) if key not in ("plant.shape", "plant.formula")]
+    # These bring or take the keys that go with them.
+    bound = ("plant.shape", "plant.formula", "plant.blocks", "plant.load")
+    free = [key for key in keys(case) if key not in bound]
     key = data.draw(st.sampled_from(free))
     declared = keys(case)[key]
     text = declared.show(data.draw(values(declared)))
@@ -303,8 +306,8 @@ def test_a_load_formula_goes_with_its_time_unit() -> None:
     assert edit(case, "plant.load", "").plant == a_case().plant
 
 
-@pytest.mark.parametrize("shape", list(SHAPES))
-@pytest.mark.parametrize("first", list(SHAPES))
+@pytest.mark.parametrize("shape", list(PROCESSES))
+@pytest.mark.parametrize("first", list(PROCESSES))
 def test_any_shape_turns_into_any_other(first: str, shape: str) -> None:
     start = with_shape(new_case("X-1"), first)
     turned = with_shape(start, shape)
@@ -312,6 +315,135 @@ def test_any_shape_turns_into_any_other(first: str, shape: str) -> None:
     assert turned.plant.process is not None
     assert turned.plant.process.shape == shape
     assert set(assumed_keys(start, shape)) <= {f"plant.{key}" for key in shape_keys(shape)}
+
+
+# --- blocks ---------------------------------------------------------------------------------------
+
+DRYER_LINE = "valve: 1/(2 s + 1); dryer: 1.8 exp(-6 s)/(40 s + 1); slave around valve: 4"
+
+
+def drawn(line: str = DRYER_LINE) -> Case:
+    return edit(a_case(), "plant.blocks", line)
+
+
+def test_blocks_typed_on_one_line_make_the_plant() -> None:
+    case = drawn()
+
+    assert case.plant.process == parse_blocks(DRYER_LINE)
+    assert show(case, "plant.blocks") == show(case, "plant") == DRYER_LINE
+    assert show(case, "plant.shape") == "blocks"
+    assert "plant.gain" not in keys(case)
+    assert edit(case, "plant", "1/(3 s + 1)").plant.process == Formula("1/(3 s + 1)")
+
+
+def test_one_key_of_one_block_is_set_like_any_other() -> None:
+    case = edit(drawn(), "plant.block.dryer.formula", "2/(50 s + 1)")
+
+    assert case == drawn(DRYER_LINE.replace("1.8 exp(-6 s)/(40 s + 1)", "2/(50 s + 1)"))
+    assert show(case, "plant.block.dryer.formula") == "2/(50 s + 1)"
+    assert show(case, "plant.block.slave.around") == "valve"
+    both = {"plant.block.slave.around": "", "plant.block.slave.beside": "dryer"}
+    assert "slave beside dryer: 4" in show(edit_all(drawn(), both), "plant.blocks")
+    assert [key for key, _, _ in differences(drawn(), case)] == ["plant.blocks"]
+
+
+def test_a_block_renamed_keeps_what_is_drawn_to_it() -> None:
+    case = edit(edit(drawn(), "plant.load_before", "valve"), "plant.block.valve.name", "actuator")
+
+    assert show(case, "plant") == (
+        "actuator: 1/(2 s + 1); dryer: 1.8 exp(-6 s)/(40 s + 1); slave around actuator: 4; "
+        "upset before actuator"
+    )
+
+
+def test_blocks_are_added_and_taken_out_by_the_line() -> None:
+    longer = edit(drawn(), "plant.blocks", f"{DRYER_LINE}; sensor: 1/(s + 1)")
+    process = longer.plant.process
+
+    assert isinstance(process, Blocks)
+    assert process.blocks[-1] == Block("sensor", "1/(s + 1)")
+    assert edit(longer, "plant.blocks", DRYER_LINE) == drawn()
+
+
+def test_the_upset_enters_where_the_drawing_says() -> None:
+    case = edit(drawn(), "plant.load_before", "dryer")
+    path = case.plant.load_path()
+
+    # exact: from the dryer's input on, 1.8 at s = 0; the inner feedback lies before it
+    assert path is not None
+    assert path.gain().value == pytest.approx(1.8, rel=1e-12)
+    assert drawn().plant.load_path() is None
+    own = edit(case, "plant.load", "3/(2 s + 1)").plant.load_path()
+    assert own is not None
+    assert own.gain().value == pytest.approx(3.0, rel=1e-12)
+
+
+@pytest.mark.parametrize(
+    ("key", "text", "words"),
+    [
+        ("plant.block.dyer.formula", "1", "there is no block 'dyer'; did you mean 'dryer'?"),
+        ("plant.block.dryer.formla", "1", "is not a known key; did you mean 'formula'?"),
+        ("plant.block.dryer.formula", "1/(", "block 'dryer': column 3"),
+        ("plant.block.dryer.sign", "-", "is - where no block stands beside"),
+        ("plant.block.dryer.name", "a beside b", "holds the word 'beside'"),
+        ("plant.load_before", "dyer", "not on the path; did you mean 'dryer'?"),
+        ("plant.blocks", "a: 1/(s", "block 'a': column 3"),
+        ("plant.blocks", "a 1/s", "has no colon"),
+        ("plant.blocks", "a: vessel volume=3, flow=1 /s", "a vessel is a whole plant"),
+        ("plant", "a: 1/(s", "block 'a': column 3"),
+        ("plant", "first-order gain=x, time_constant=4 s", "gain: must be a number, not 'x'"),
+        ("plant", "1/(s", "column 3"),
+        ("plant.gain", "1", "does not belong to the shape blocks; that takes blocks and time_unit"),
+    ],
+)
+def test_a_drawing_is_refused_by_the_key_that_was_typed(key: str, text: str, words: str) -> None:
+    told = refused(drawn(), key, text)
+
+    assert told.startswith(f"{key}: ")
+    assert words in told
+
+
+def test_a_key_of_blocks_needs_blocks() -> None:
+    assert "needs a plant of blocks" in refused(a_case(), "plant.load_before", "valve")
+    assert "needs a plant of blocks" in refused(a_case(), "plant.block.valve.formula", "1")
+
+
+@pytest.mark.parametrize(
+    "line",
+    [
+        "first-order gain=1.8, time_constant=40 s, dead_time=6 s",
+        "vessel volume=10, flow=40 /h, dead_time=0 s",
+        "1.8 exp(-6 s)/(40 s + 1)",
+        DRYER_LINE,
+        "",
+    ],
+)
+def test_the_whole_plant_on_one_line_is_what_is_shown(line: str) -> None:
+    case = edit(a_case(), "plant", line)
+
+    assert show(case, "plant") == line
+    assert edit(drawn(), "plant", line).plant == case.plant
+
+
+def test_a_shape_becomes_one_block_and_blocks_the_formula_that_they_are() -> None:
+    case = with_shape(a_case(), "blocks")
+    line = "process: first-order gain=1.8, time_constant=40 s, dead_time=6 s"
+    assert show(case, "plant") == line
+    assert assumed_keys(a_case(), "blocks") == ()
+
+    formula = with_shape(case, "formula").plant.process
+    assert formula == Formula("1.8 exp(-6 s)/(40 s + 1)")
+    first = with_shape(case, "first-order").plant.process
+    assert first == FirstOrder(1.8, Amount(40, "s"), Amount(6, "s"))
+
+
+def test_a_vessel_becomes_a_block_in_units() -> None:
+    tank = edit_all(a_case(), {"plant": "vessel volume=10, flow=40 /h", "pv.high": "250"})
+    block = with_shape(tank, "blocks").plant.process
+
+    # exact: 40 / 10 per hour of the ranges, times 250/100 units, over 3600 s
+    assert block is not None
+    assert block.transfer().slope().value == pytest.approx(40 / 10 * 2.5 / 3600, rel=1e-12)
 
 
 def test_gain_and_slope_turn_into_each_other_by_the_time_constant() -> None:
@@ -396,13 +528,17 @@ def test_an_oscillating_plant_has_the_lag_of_its_period() -> None:
 
 
 def test_numbers_that_cannot_be_taken_over_are_told() -> None:
-    tiny = Amount(1e-200, "s")
-    case = a_case(plant=PlantTable(FirstOrder(1e200, tiny)))
+    case = a_case(plant=PlantTable(FirstOrder(1e304, Amount(1e-6, "s"))))
     with pytest.raises(InputError, match=r"plant\.shape: cannot take over"):
         with_shape(case, "integrating")
-    assert "plant.shape: a coefficient is not finite" in refused(
-        a_case(), "plant.time_constant", "1e308 h"
-    )
+    lead = {
+        "shape": "lead",
+        "gain": "1e308",
+        "numerator_time": "90 s",
+        "second_time_constant": "1 s",
+    }
+    with pytest.raises(InputError, match=r"plant\.shape: a coefficient is not finite"):
+        edit_all(a_case(), {f"plant.{key}": typed for key, typed in lead.items()})
 
 
 def test_an_unknown_shape_is_refused_with_the_nearest_spelling() -> None:

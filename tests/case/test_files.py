@@ -18,10 +18,20 @@ import pytest
 from hypothesis import assume, given, settings
 from hypothesis import strategies as st
 
-from tests.case.making import DATA, DOTTED, DRYER, a_case, an_entry, cases, revisions, values
+from tests.case.making import (
+    DATA,
+    DOTTED,
+    DRAWN,
+    DRYER,
+    a_case,
+    an_entry,
+    cases,
+    revisions,
+    values,
+)
 from tests.case.saving import started
 from workbench.case import files
-from workbench.case.case import Case, edit, edit_all, keys, new_case, with_shape
+from workbench.case.case import Case, edit, edit_all, keys, new_case, show, with_shape
 from workbench.case.files import (
     CaseFile,
     changed_on_disk,
@@ -31,9 +41,10 @@ from workbench.case.files import (
     save_case,
     write_new,
 )
+from workbench.case.tables import PROCESSES
 from workbench.case.writing import changed_text, format_case
 from workbench.errors import CaseFileError, InputError
-from workbench.model.plant import SHAPES, Formula
+from workbench.model.plant import Formula
 from workbench.units import Amount
 
 # --- files with faults ---------------------------------------------------------------------------
@@ -83,6 +94,30 @@ BAD: dict[str, tuple[str, ...]] = {
     "loop_missing": ("|loop.tag|is missing; give the loop tag",),
     "no_equals": ("7||is not TOML, column 5: expected '='",),
     "not_toml": ("7||write text and times in quotes",),
+    "plant_blocks": (
+        "7|plant.load_before|must be text, not 3; put it in quotes",
+        "9|plant.block[1].formula|is missing; give the formula of the block",
+        "11|plant.block[1].formla|is not a known key; did you mean 'formula'?",
+        "14|plant.block[2].name|'4' is no name for a block",
+        "15|plant.block[2].formula|must be text, not 7",
+        "20|plant.block[3].sign|is - where no block stands beside",
+        "25|plant.block[4].sign|'plus' is not accepted; use + or -",
+    ),
+    "plant_blocks_beside_shape": (
+        "6|plant.block|does not belong to the shape first-order",
+        "10|plant.load_before|does not belong to the shape first-order",
+    ),
+    "plant_blocks_drawn": (
+        "7|plant.time_unit|'fortnight' is not accepted; use s, min or h",
+        "11|plant.block[1].formula|block 'valve': column 3: this bracket is not closed",
+        "15|plant.block[2].formula|block 'process': gain: 0 is outside what is accepted",
+    ),
+    "plant_blocks_joined": ("13|plant.block[2].beside|did you mean 'valve'?",),
+    "plant_blocks_load": (
+        "7|plant.load_before|'upset' names the block 'proces', which is not on the path",
+        "8|plant.blocks|is how an edit writes it; write [[plant.block]] before",
+    ),
+    "plant_blocks_no_tables": ("7|plant.block|must be tables, not 'valve: 1/(2 s + 1)'",),
     "plant_formula": (
         "7|plant.formula|column 16: a product right after a division can be read two ways",
         "8|plant.load|column 1: the character '_' has no meaning here",
@@ -315,7 +350,8 @@ def bare() -> str:
 
 def styles() -> st.SearchStrategy[str]:
     """Hand-made files with either line end, with and without mark and last newline."""
-    texts = st.sampled_from([DRYER.read_text("utf-8"), DOTTED.read_text("utf-8"), bare()])
+    files = [path.read_text("utf-8") for path in (DRYER, DOTTED, DRAWN)]
+    texts = st.sampled_from([*files, bare()])
     dressed = st.tuples(texts, st.sampled_from(["\n", "\r\n"]), st.sampled_from(["", "\ufeff"]))
     whole = dressed.map(lambda t: t[2] + t[0].replace("\n", t[1]))
     return st.tuples(whole, st.booleans()).map(lambda t: t[0].rstrip() if t[1] else t[0])
@@ -333,7 +369,7 @@ def hunks(old: str, new: str) -> list[tuple[list[str], list[str]]]:
 @settings(max_examples=100)
 def test_changing_one_key_changes_only_its_line(text: str, data: st.DataObject) -> None:
     case = parse_case(text)
-    bound = ("plant.shape", "plant.formula", "plant.load", "controller.gain")
+    bound = ("plant.shape", "plant.formula", "plant.blocks", "plant.load", "controller.gain")
     free = [k for k in keys(case) if k not in bound and not k.endswith("proportional_band")]
     key = data.draw(st.sampled_from(free))
     typed = data.draw(st.one_of(values(keys(case)[key]).map(keys(case)[key].show), st.just("")))
@@ -436,9 +472,120 @@ def test_another_shape_changes_only_its_lines(tmp_path: Path) -> None:
     ]
 
 
-@pytest.mark.parametrize("shape", list(SHAPES))
+BLOCK_EDITS: tuple[tuple[dict[str, str], tuple[list[str], list[str]]], ...] = (
+    (
+        {"plant.block.valve.formula": "1/(3 s + 1)"},
+        (
+            ['formula = "1/(2 s + 1)"         # stroke test, spring\n'],
+            ['formula = "1/(3 s + 1)"         # stroke test, spring\n'],
+        ),
+    ),
+    ({"plant.block.leak.sign": ""}, (['sign = "-"                      # it cools\n'], [])),
+    ({"plant.block.leak.formula": "2"}, (['formula = "0.2/(90 s + 1)"\n'], ['formula = "2"\n'])),
+    ({"plant.block.sensor.beside": "dryer"}, ([], ['beside = "dryer"\n'])),
+    ({"plant.block.leak.name": "loss"}, (['"name" = "leak"\n'], ['"name" = "loss"\n'])),
+    (
+        {"plant.load_before": ""},
+        (['load_before = "dryer"           # wet feed comes in here\n'], []),
+    ),
+    (
+        {"plant.time_unit": "min"},
+        (
+            ['time_unit = "s"                 # of every formula\n'],
+            ['time_unit = "min"                 # of every formula\n'],
+        ),
+    ),
+)
+"""Changes of one key of a drawing, and the only line that changes with it."""
+
+
+@pytest.mark.parametrize(("changes", "hunk"), BLOCK_EDITS)
+@pytest.mark.parametrize("newline", ["\n", "\r\n"])
+def test_one_key_of_a_block_changes_one_line(
+    changes: dict[str, str], hunk: tuple[list[str], list[str]], newline: str
+) -> None:
+    text = DRAWN.read_text("utf-8").replace("\n", newline)
+    case = parse_case(text)
+    edited = edit_all(case, changes)
+    changed, _ = changed_text(text, case, edited)
+
+    assert parse_case(changed) == edited
+    found = hunks(text, changed)
+    assert found == [tuple([line.replace("\n", newline) for line in part] for part in hunk)]
+
+
+def test_a_block_comes_and_goes_with_its_own_lines(tmp_path: Path) -> None:
+    old = DRAWN.read_text("utf-8")
+    text, file = saved(
+        tmp_path / "x.toml",
+        old,
+        lambda case: edit(
+            case,
+            "plant.blocks",
+            show(case, "plant").replace("leak less dryer: 0.2/(90 s + 1); ", ""),
+        ),
+    )
+    [(gone, come)] = hunks(old, text)
+    assert come == []
+    assert [line.partition(" =")[0] for line in gone[:3]] == [
+        "[[plant.block]]\n",
+        '"name"',
+        "formula",
+    ]
+
+    longer = f"{show(file.case, 'plant')}; filter: 1/(s + 1)"
+    text, _ = saved(tmp_path / "x.toml", text, lambda case: edit(case, "plant.blocks", longer))
+    assert '\n[[plant.block]]\nname = "filter"\nformula = "1/(s + 1)"\n\n[controller]\n' in text
+
+
+STYLED: tuple[str, ...] = (
+    'plant = { shape = "first-order", gain = 1.0, time_constant = "3 s" }\n',
+    'plant = { time_unit = "min", block = [{ name = "a", formula = "1/(s + 1)" }] }\n',
+    'plant.shape = "first-order"\nplant.gain = 1\nplant.time_constant = "3 s"\n',
+    'plant.block = [{ name = "a", formula = "1/(s + 1)" }]\n[pv]\nhigh = 4\n',
+    '[plant]\nblock = [\n  { name = "a", formula = "1/(s + 1)" }, # why\n]\n[op]\nhigh = 3\n',
+    '[controller]\ngain = 1\n[[plant.block]]\nname = "a"\nformula = "2"\n',
+    "[controller]\ngain = 1\n",
+)
+
+
+@pytest.mark.parametrize("style", STYLED)
+@pytest.mark.parametrize(
+    "line",
+    [
+        "a: 1/(3 s + 1); b: 1/s",
+        "z: 1/(3 s + 1); y around z: 1; upset before z",
+        "1/s",
+        "none",
+        "vessel volume=1, flow=2 /h",
+    ],
+)
+def test_a_drawing_can_be_saved_over_any_style(style: str, line: str) -> None:
+    text = f'format = 1\nloop.tag = "X"\n{style}'
+    case = parse_case(text)
+    edited = edit_all(case, {"plant": line, "controller.gain": "3", "pv.noise": "0.1"})
+    changed, _ = changed_text(text, case, edited)
+
+    assert parse_case(changed) == edited
+    assert ("# why" in changed) == ("# why" in text)
+    again, _ = changed_text(changed, edited, case)
+    assert parse_case(again) == case
+
+
+def test_a_file_says_what_it_drew() -> None:
+    case = read_case(DRAWN).case
+
+    assert show(case, "plant") == (
+        "valve: 1/(2 s + 1); positioner around valve: 4; "
+        "dryer: first-order gain=9, time_constant=40 s, dead_time=6 s; "
+        "leak less dryer: 0.2/(90 s + 1); sensor: 1/(3 s + 1); upset before dryer"
+    )
+    assert parse_case(format_case(case)) == case
+
+
+@pytest.mark.parametrize("shape", list(PROCESSES))
 def test_every_shape_can_be_saved_over_every_style(tmp_path: Path, shape: str) -> None:
-    for text in (DRYER.read_text("utf-8"), DOTTED.read_text("utf-8"), bare()):
+    for text in (*(p.read_text("utf-8") for p in (DRYER, DOTTED, DRAWN)), bare()):
         saved(tmp_path / "x.toml", text, lambda case: with_shape(case, shape))
 
 

@@ -269,8 +269,19 @@ def _mutated(rng: np.random.Generator) -> str:
 
 
 def _fault(text: str) -> tuple[float, str]:
-    """Seconds of work for one input, and what is wrong with how it was met, if anything is."""
-    started = time.process_time()
+    """Seconds for one input, and what is wrong with how it was met, if anything is."""
+    seconds, wrong = _met(text)
+    if seconds > 1.0:
+        # A pause of the machine is not the formula's: what was slow is timed again.
+        parse_formula.cache_clear()
+        seconds = min(seconds, _met(text)[0])
+    if seconds > 1.0 and not wrong:
+        wrong = f"took {seconds:.1f} s"
+    return seconds, f"{wrong}: {text!r}" if wrong else ""
+
+
+def _met(text: str) -> tuple[float, str]:
+    started = time.perf_counter()
     try:
         parse_formula(text)
         wrong = ""
@@ -280,10 +291,7 @@ def _fault(text: str) -> tuple[float, str]:
         wrong = "" if in_one_line else f"said {said!r}"
     except Exception as raised:  # noqa: BLE001
         wrong = f"raised {raised!r}"
-    seconds = time.process_time() - started
-    if seconds > 1.0 and not wrong:
-        wrong = f"took {seconds:.1f} s"
-    return seconds, f"{wrong}: {text!r}" if wrong else ""
+    return time.perf_counter() - started, wrong
 
 
 def fuzzed(size: int, seed: int) -> tuple[float, list[str]]:

@@ -134,9 +134,10 @@ def _other(value: Callable[[Any], Any], low: float, high: float) -> Other:
         gain_margins, phases, delays = [], [], []
         for i in range(len(grid) - 1):
             a, b = coarse[i], coarse[i + 1]
-            if a.imag * b.imag < 0 and a.real < 0 and b.real < 0:
+            if a.imag * b.imag < 0 and min(a.real, b.real) < 0:
                 w = bisected(lambda w: mpmath.im(value(w)), grid[i], grid[i + 1])
-                gain_margins.append(float(-1 / mpmath.re(value(w))))
+                if mpmath.re(value(w)) < 0:
+                    gain_margins.append(float(-1 / mpmath.re(value(w))))
             if (abs(a) - 1) * (abs(b) - 1) < 0:
                 w = bisected(lambda w: abs(value(w)) - 1, grid[i], grid[i + 1])
                 lag = mpmath.arg(-value(w))
@@ -203,8 +204,8 @@ def test_margins_agree_with_another_route(name: str) -> None:
         control = gains.proportional + gains.integral / s + gains.derivative * s / lag
         return control * mpmath.fsum(path(s) for path in paths)
 
-    crossover = margins.gain_crossover_rad_s.value or 0.1
-    other = _other(value, 0.02 * crossover, 60.0 * crossover)
+    at = (margins.gain_crossover_rad_s.value or 0.1, margins.phase_crossover_rad_s.value or 0.1)
+    other = _other(value, 0.02 * min(at), 60.0 * max(at))
     for field in fields(other):
         expected = getattr(other, field.name)
         found: Figure = getattr(margins, field.name)
@@ -236,24 +237,22 @@ def brinks(size: int, seed: int) -> tuple[float, list[str]]:
     """Margins of random stable loops against the verdict: (share wrong, failures).
 
     The gain a millionth short of each margin leaves the loop stable, a millionth beyond does not;
-    so with the dead time.  Where the gain margin is the limit at high frequency it is compared with
-    that limit, exactly.
+    so with the dead time.
     """
     rng = np.random.default_rng(seed)
     judged, failures = 0, []
     while judged < size:
-        drawn = random_loop(rng)
-        loop = drawn.open_loop
+        loop = random_loop(rng).open_loop
         if not loop_verdict(loop).stable:
             continue
         judged += 1
         margins = analogue_margins(_loop(loop, Gains(1.0)))
-        failures += [f"{wrong}: {loop}" for wrong in _brink_faults(loop, margins, drawn.neutral)]
+        failures += [f"{wrong}: {loop}" for wrong in _brink_faults(loop, margins)]
         failures += [f"{wrong}: {loop}" for wrong in _bound_faults(margins)]
     return len(failures) / size, failures
 
 
-def _brink_faults(loop: TransferFunction, margins: Margins, neutral: float) -> list[str]:
+def _brink_faults(loop: TransferFunction, margins: Margins) -> list[str]:
     wrong = []
     tries: list[tuple[str, Figure, Callable[[float], TransferFunction], float]] = [
         ("gain margin", margins.gain_margin, lambda k: k * loop, 1.0),
@@ -261,10 +260,7 @@ def _brink_faults(loop: TransferFunction, margins: Margins, neutral: float) -> l
         ("delay margin", margins.delay_margin_s, lambda d: _later(loop, d), 1.0),
     ]
     for name, figure, made, direction in tries:
-        if figure.value and name == "gain margin" and figure.value * neutral > 0.9999:
-            if abs(figure.value * neutral - 1.0) > 1e-9:
-                wrong.append(f"gain margin {figure.value} beside a far gain of {neutral}")
-        elif figure.value:
+        if figure.value:
             before = loop_verdict(made(figure.value * (1.0 - direction * 1e-6))).stable
             beyond = loop_verdict(made(figure.value * (1.0 + direction * 1e-6))).stable
             if not before or beyond:
@@ -291,9 +287,30 @@ def _bound_faults(margins: Margins) -> list[str]:
 
 
 def test_margins_found_are_margins_made() -> None:
-    share, failures = brinks(60, seed=21)
+    share, failures = brinks(25, seed=21)
     assert failures == []
     assert share == 0.0
+
+
+@pytest.mark.parametrize(
+    "loop",
+    [
+        # Paths that add up again far above the first crossing; the last two are of neutral type.
+        Path((0.8,), ((9.0, 1.0), (0.2, 1.0)), 0.3).transfer()
+        + Path((0.7,), ((9.0, 1.0), (0.2, 1.0)), 16.0).transfer(),
+        Path((1.169, 2.526), ((4.03, 1.0),), 0.398).transfer()
+        + Path((1.370, 2.959), ((4.03, 1.0),), 16.2).transfer(),
+        Path((0.0026, 0.0165, 0.0064), ((1.0, 0.0), (2.5, 1.0)), 0.395).transfer()
+        + Path((0.00095, 0.006, 0.0023), ((1.0, 0.0), (2.5, 1.0)), 17.9).transfer(),
+    ],
+)
+def test_dead_times_that_meet_again_at_high_frequency_are_not_overlooked(
+    loop: TransferFunction,
+) -> None:
+    margins = analogue_margins(_loop(loop, Gains(1.0)))
+    assert margins.stable
+    assert _brink_faults(loop, margins) == []
+    assert _bound_faults(margins) == []
 
 
 # --- figures that do not exist, and why ----------------------------------------------------------
@@ -484,7 +501,7 @@ def _gain_margin_difference(paths: list[Path], settings: Scanned, margins: Margi
 
 
 def test_sampled_verdicts_and_gain_margins_agree_with_eigenvalues() -> None:
-    worst, failures = sampled_verdicts(50, seed=31)
+    worst, failures = sampled_verdicts(30, seed=31)
     assert failures == []
     assert worst < 1e-6
 

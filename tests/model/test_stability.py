@@ -316,6 +316,41 @@ def test_the_verdict_does_not_depend_on_the_unit_of_time(
     )
 
 
+@pytest.mark.parametrize(
+    ("gain", "lag", "delay", "stable"),
+    [
+        # exact: |L| < 1 at every frequency
+        (0.9, 0.01, 1e4, True),
+        (0.999, 0.01, 1e4, True),
+        (0.9, 1.0, 3.6e5, True),
+        # exact: |L| = 1 at sqrt(gain^2 - 1)/lag, where the dead time alone turns thousands of times
+        (1.1, 0.01, 1e4, False),
+        (1e6, 0.01, 1e4, False),
+    ],
+)
+def test_a_dead_time_of_a_million_lags_is_judged_at_once(
+    gain: float, lag: float, delay: float, stable: bool
+) -> None:
+    started = time.process_time()
+    verdict = loop_verdict(TransferFunction.ratio((gain,), [(lag, 1.0)], delay))
+    assert time.process_time() - started < 0.5
+    assert verdict.stable is stable
+    assert verdict.unstable_roots is not None
+    if not stable:
+        # exact: a pair of roots for each turn of L outside the unit circle, to one
+        turns = math.sqrt(gain**2 - 1.0) / lag * delay / (2.0 * math.pi)
+        assert verdict.unstable_roots / 2.0 == pytest.approx(turns, abs=1.0, rel=1e-9)
+
+
+@pytest.mark.parametrize("far", [0.99, 0.9999, 0.999999, 1.000001, 1.01])
+def test_a_neutral_loop_is_judged_however_near_the_limit(far: float) -> None:
+    # exact: |L| = |far s + 0.3|/|s + 1| stays below 1 for far below 1, and not above
+    started = time.process_time()
+    verdict = loop_verdict(TransferFunction.ratio((far, 0.3), [(1.0, 1.0)], 10.0))
+    assert time.process_time() - started < 0.5
+    assert verdict.stable is (far < 1.0)
+
+
 # --- speed ---------------------------------------------------------------------------------------
 
 

@@ -126,12 +126,13 @@ async def running(
 
 async def settle(pilot: Pilot[None]) -> None:
     """Wait until every page has its answers and nothing is left to paint."""
-    for _ in range(600):
-        await pilot.pause(0.02)
+    await pilot.pause()
+    for _ in range(1200):
         pages = pilot.app.screen_stack
         waiting = any(isinstance(page, MainPage) and page.busy for page in pages)
         if not waiting and not any(worker.is_running for worker in pilot.app.workers):
             break
+        await asyncio.sleep(0.01)
     else:
         raise AssertionError("the screen did not come to rest within 12 s")
     await pilot.pause()

@@ -9,7 +9,6 @@ import pytest
 from tests.screens.conftest import compare_with_golden, press, run, running, text_of, type_in
 from workbench.screens.work import Work
 
-
 Steps = tuple[tuple[str, tuple[str, ...]], ...]
 """Name of a screen, and the keys that lead to it from the one before."""
 

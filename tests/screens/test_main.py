@@ -60,7 +60,7 @@ def test_a_refused_entry_says_why_beside_it_and_stays_open(work: Work) -> None:
             shown = text_of(pilot)
             assert "-3 is outside what is accepted; give a number at least 0" in shown
             assert page_of(pilot, MainPage).editor.display
-            await press(pilot, "escape")
+            await press(pilot, "tab", "f2", "escape")
             assert not page_of(pilot, MainPage).editor.display
             assert not work.unsaved
 
@@ -205,6 +205,70 @@ def test_a_formula_is_typed_in_place(work: Work) -> None:
 
 
 @pytest.mark.parametrize("size", [(80, 24), (160, 50)])
+def test_blocks_are_typed_on_one_line_and_the_total_is_shown(
+    work: Work, size: tuple[int, int]
+) -> None:
+    line = "valve: 1/(2 s + 1); dryer: 1.5 exp(-4 s)/(30 s + 1)"
+
+    async def story() -> None:
+        async with running(work, size) as pilot:
+            await press(pilot, "1", "enter")
+            await type_in(pilot, "blocks")
+            await press(pilot, "enter")
+            own = "process: first-order gain=1.6, time_constant=45 s, dead_time=8 s"
+            assert work.show("plant.blocks") == own
+            assert "1.6 exp(-8 s)/(45 s + 1)" in text_of(pilot)
+            await press(pilot, "down", "enter")
+            await type_in(pilot, line)
+            await press(pilot, "enter")
+            assert work.show("plant.blocks") == line
+            whole = "1.5 exp(-4 s)/((2 s + 1) (30 s + 1))"
+            assert (whole if size[0] > 80 else whole[:25]) in text_of(pilot)
+            # exact: 1.5 times 100/250
+            assert "gain 1.5 degC per %, 0.6 %/%" in text_of(pilot)
+
+    run(story())
+
+
+def test_a_block_typed_wrong_says_which_beside_it(work: Work) -> None:
+    work.edit("plant.shape", "blocks")
+
+    async def story() -> None:
+        async with running(work) as pilot:
+            await press(pilot, "1", "down", "enter")
+            await type_in(pilot, "valve: 1/(2 s + 1); dryer: 1.5 exp(-4 s)/(30 s + 1")
+            await press(pilot, "enter")
+            assert "block 'dryer'" in text_of(pilot)
+            assert work.show("plant.blocks").startswith("process: ")
+
+    run(story())
+
+
+def test_a_vessel_is_chosen_and_told_by_its_slope(work: Work) -> None:
+    async def story() -> None:
+        async with running(work, (160, 50)) as pilot:
+            await press(pilot, "1", "enter")
+            await type_in(pilot, "vessel")
+            await press(pilot, "enter")
+            assert work.show("plant.volume") == "1"
+            assert "integrating: PV moves" in text_of(pilot)
+
+    run(story())
+
+
+def test_what_cannot_be_predicted_says_why_on_the_screen(work: Work) -> None:
+    work.edit("plant.blocks", "dryer: 1.5 exp(-4 s)/(30 s + 1); slave around dryer: 0.2")
+
+    async def story() -> None:
+        async with running(work, (160, 50)) as pilot:
+            shown = text_of(pilot)
+            assert "no prediction: a dead time inside an inner feedback" in shown
+            assert "stable (analogue loop)" in shown
+
+    run(story())
+
+
+@pytest.mark.parametrize("size", [(80, 24), (160, 50)])
 def test_every_panel_is_reached_by_its_key_and_alone_by_zoom(
     work: Work, size: tuple[int, int]
 ) -> None:
@@ -257,9 +321,9 @@ def test_a_burst_of_keys_is_computed_far_fewer_times_than_there_are_keys(
 ) -> None:
     real, asked = study.evaluate, []
 
-    def counted(case: Case) -> Evaluation:
+    def counted(case: Case, like: Evaluation | None = None) -> Evaluation:
         asked.append(case)
-        return real(case)
+        return real(case, like=like)
 
     async def story() -> None:
         async with running(work) as pilot:
@@ -300,7 +364,7 @@ def test_a_late_answer_for_an_older_case_is_dropped(
 def test_answers_that_cannot_be_had_are_explained_and_the_case_stays(
     work: Work, monkeypatch: pytest.MonkeyPatch
 ) -> None:
-    def refuse(case: Case) -> Evaluation:
+    def refuse(case: Case, like: Evaluation | None = None) -> Evaluation:
         raise problem("the case has no plant yet", "enter one", key="plant")
 
     async def story() -> None:
@@ -316,7 +380,7 @@ def test_answers_that_cannot_be_had_are_explained_and_the_case_stays(
 def test_a_fault_of_the_program_in_the_background_does_not_end_it(
     work: Work, monkeypatch: pytest.MonkeyPatch
 ) -> None:
-    def stumble(case: Case) -> Evaluation:
+    def stumble(case: Case, like: Evaluation | None = None) -> Evaluation:
         raise ZeroDivisionError("by zero")
 
     async def story() -> None:
@@ -353,9 +417,9 @@ def test_a_later_change_message_stands_for_an_earlier_one() -> None:
 def test_the_page_stays_live_while_it_computes(work: Work, monkeypatch: pytest.MonkeyPatch) -> None:
     real, gate = study.evaluate, threading.Event()
 
-    def slow(case: Case) -> Evaluation:
+    def slow(case: Case, like: Evaluation | None = None) -> Evaluation:
         gate.wait(10)
-        return real(case)
+        return real(case, like=like)
 
     async def story() -> None:
         async with running(work) as pilot:

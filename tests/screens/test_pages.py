@@ -335,6 +335,8 @@ def test_leaving_unsaved_work_asks_once_and_keeps_a_draft(work: Work) -> None:
             await pilot.press("d")
             await pilot.pause()
             assert pilot.app.return_code == 0
+        async with running(Path()) as pilot:
+            assert "tic-307.toml  unsaved work" in text_of(pilot)
 
     run(story())
     kept = drafts.find(Path("tic-307.toml"))

@@ -13,8 +13,8 @@ from collections.abc import Mapping
 from dataclasses import replace
 from typing import Any, Final, cast
 
-from workbench.case.reading import ASSUMED, assemble
 from workbench.case.drawing import show_part, spelled_out, told_as_typed
+from workbench.case.reading import ASSUMED, assemble
 from workbench.case.tables import (
     PROCESSES,
     SHAPE,
@@ -153,7 +153,9 @@ def edit(case: Case, key: str, text: str) -> Case:
     Setting `controller.gain` drops `proportional_band` and the other way round; setting
     `plant.formula` makes the plant a formula, setting `plant.blocks` blocks; setting `plant.shape`
     keeps the values that the new shape also has.  The key `plant` is the whole plant on one line,
-    and `plant.block.valve.formula` one key of one block.  Raises `InputError` with the key, what is wrong and what is accepted.
+    and `plant.block.valve.formula` one key of one block.
+
+    Raises `InputError` with the key, what is wrong and what is accepted.
     """
     return edit_all(case, {key: text})
 

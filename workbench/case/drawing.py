@@ -111,7 +111,13 @@ def _with_parts(drawn: Blocks, parts: Mapping[str, str], unit: str) -> Blocks:
             load_before = typed.strip()
             continue
         try:
-            blocks[part[1]] = _with_part(blocks, part[1], part[2], typed)
+            changed = _with_part(blocks, part[1], part[2], typed)
+            if part[2] == "name":
+                blocks = {
+                    old: _renamed(each, part[1], changed.name) for old, each in blocks.items()
+                }
+                load_before = changed.name if load_before == part[1] else load_before
+            blocks[part[1]] = changed
         except InputError as fault:
             faults.extend(replace(p, key=key) for p in fault.problems)
     if faults:
@@ -138,6 +144,13 @@ def _with_part(blocks: Mapping[str, Block], name: str, field: str, typed: str) -
     if not typed.strip() and field == "sign":
         return replace(blocks[name], sign="+")
     return replace(blocks[name], **{field: str(declared.parse(typed)).strip()})
+
+
+def _renamed(block: Block, old: str, new: str) -> Block:
+    """The block with the name of another one changed."""
+    ends = [end.strip() for end in block.around.split(" to ")]
+    around = " to ".join(new if end == old else end for end in ends)
+    return replace(block, beside=new if block.beside == old else block.beside, around=around)
 
 
 def told_as_typed(

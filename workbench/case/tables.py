@@ -193,6 +193,11 @@ class PlantTable(_Table):
             object.__setattr__(self, "time_unit", "s")
         super().__post_init__()
 
+    @property
+    def process_is_drawn(self) -> bool:
+        """The plant is made of blocks."""
+        return isinstance(self.process, Blocks)
+
     def load_path(self) -> TransferFunction | None:
         """From the upset, in its own unit, to PV [PV unit]; `None` where it is the plant itself.
 
@@ -373,7 +378,7 @@ def shape_name(process: Process | None) -> str | None:
 def known_keys(table: str, shape: str | None, has_load: bool) -> dict[str, Quantity]:
     """The keys of a table that can be set, in file order, with what each means."""
     if table != "plant":
-        return quantities(TABLES[table])
+        return dict(quantities(TABLES[table]))
     own = {spelling(name): declared for name, declared in quantities(PlantTable).items()}
     known = {"shape": SHAPE}
     known.update(process_keys(shape) if shape else {"formula": _FORMULA})
@@ -388,7 +393,7 @@ def process_keys(shape: str) -> dict[str, Quantity]:
     """The keys that belong to a plant shape, in file order; blocks are one key, as one line."""
     if shape == Blocks.shape:
         return {"blocks": BLOCKS, "time_unit": quantities(Blocks)["time_unit"]}
-    return quantities(SHAPES[shape])
+    return dict(quantities(SHAPES[shape]))
 
 
 def defaults_of(table: str, shape: str | None) -> dict[str, object]:

@@ -176,6 +176,14 @@ class _Rewriting:
             for key in {**known, **before}
             if before.get(key, _ABSENT) != after.get(key, _ABSENT)
         }
+        if table == "plant":
+            # A key at its default is in neither case, and may not belong to the new shape.
+            held = [
+                each.path[1]
+                for each in self.layout.statements
+                if each.path[:1] == ("plant",) and len(each.path) == 2 and each.value is not None
+            ]
+            changed |= {str(key): _ABSENT for key in held if key not in {*known, "block"}}
         redrawn = table == "plant" and _blocks(self.old) != _blocks(self.new)
         if not changed and not (inline is not None and redrawn):
             return

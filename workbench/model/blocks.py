@@ -113,7 +113,7 @@ class Blocks:
         stages, _ = self._drawn()
         if not self.load_before:
             return self._path(0)
-        return self._path(_index(self.load_before, list(stages), "load_before", "load_before"))
+        return self._path(_index(self.load_before, list(stages), "upset", "load_before"))
 
     def _path(self, start: int) -> TransferFunction:
         """From the input of stage `start` to PV."""

@@ -20,7 +20,7 @@ from numpy.typing import NDArray
 from workbench.errors import NotApplicable
 from workbench.model.feedback import Loop
 from workbench.model.sampled import SampledLoop
-from workbench.model.stability import Verdict, loop_verdict
+from workbench.model.stability import Verdict, loop_verdict, plant_verdict
 from workbench.model.transfer import Complex, TransferFunction
 from workbench.units import Figure
 
@@ -30,6 +30,8 @@ Response = Callable[[Floats], Complex]
 _NOT_STABLE: Final = "the loop is not stable"
 _FINEST: Final = 60_000
 """Most frequencies looked at in one sweep."""
+_MATTERS: Final = 0.3
+"""Gain down to which the phase of the dead time is followed turn by turn."""
 
 
 @dataclass(frozen=True)
@@ -65,10 +67,19 @@ def analogue_margins(loop: Loop) -> Margins:
         return open_loop((1j * w).astype(np.complex128))
 
     corners = _corners(open_loop)
-    grid = _grid(response, corners, max(open_loop.delays, default=0.0))
+    terms = (*open_loop.numerator, *open_loop.denominator)
+    delays = {t.dead_time for t in terms} - {0.0}
+    longest = max(delays, default=0.0)
     settled = _at_infinity(open_loop)
-    delayed = open_loop.dead_time > 0.0
-    return _margins(response, grid, open_loop, far=abs(settled) if delayed else settled)
+    far = abs(settled) if open_loop.dead_time > 0.0 else settled
+    margins = _margins(response, _grid(response, corners, longest), open_loop, far=far)
+    if len(delays) < 2:
+        return margins
+    # Paths of different dead time add up again at higher frequencies, wherever they are together
+    # large enough to undercut the margin found so far.
+    least = min(_MATTERS, 0.5 / (margins.gain_margin.value or 1000.0))
+    grid = _grid(response, corners, longest, least=least, finest=8 * _FINEST)
+    return _margins(response, grid, open_loop, far=far)
 
 
 def sampled_margins(loop: Loop) -> Margins:
@@ -111,7 +122,11 @@ def ultimate(plant: TransferFunction) -> tuple[float, float]:
     NotApplicable
         The plant is unstable, or its phase never reaches -180 deg.
     """
-    if any(p.real > 0 for p in plant.poles()):
+    if plant.has_delayed_feedback:
+        unstable = plant.integrators <= 0 and not plant_verdict(plant).stable
+    else:
+        unstable = any(p.real > 0 for p in plant.poles())
+    if unstable:
         raise NotApplicable("the plant is unstable", limit="wants a stable or integrating plant")
 
     def response(w: Floats) -> Complex:
@@ -156,7 +171,15 @@ def _at_infinity(function: TransferFunction) -> float:
     return float(sum(t.coefficients[0] for t in tops) / below)
 
 
-def _grid(response: Response, corners: Floats, delay: float, top: float = math.inf) -> Floats:
+def _grid(
+    response: Response,
+    corners: Floats,
+    delay: float,
+    top: float = math.inf,
+    *,
+    least: float = _MATTERS,
+    finest: int = _FINEST,
+) -> Floats:
     """Frequencies dense enough that the response never turns unseen between two of them."""
     low = float(corners.min(initial=min(1.0, top))) * 1e-3
     high = min(float(corners.max(initial=low)) * 1e3, top)
@@ -165,18 +188,18 @@ def _grid(response: Response, corners: Floats, delay: float, top: float = math.i
     if delay:
         # Where the gain still matters the phase of the dead time must be followed turn by turn,
         # and one whole turn beyond, which holds the last crossing that can count.
-        large = np.flatnonzero(np.abs(response(coarse)) > 0.3)
+        large = np.flatnonzero(np.abs(response(coarse)) > least)
         matters = float(coarse[large[-1]]) if len(large) else low
         last = min(matters + 7.0 / delay, high)
-        count = min(int(last * delay / 0.2) + 2, _FINEST // 2)
+        count = min(int(last * delay / 0.2) + 2, finest // 2)
         pieces.append(np.linspace(low, last, count))
     grid = np.unique(np.concatenate(pieces))
     # A frequency on a pole of the imaginary axis itself has no value.
     grid = grid[np.isfinite(response(grid))]
-    return _refined(response, grid)
+    return _refined(response, grid, finest)
 
 
-def _refined(response: Response, grid: Floats) -> Floats:
+def _refined(response: Response, grid: Floats, finest: int) -> Floats:
     values = response(grid)
     for _ in range(12):
         step = np.abs(np.diff(values))
@@ -184,7 +207,7 @@ def _refined(response: Response, grid: Floats) -> Floats:
         near = np.minimum(distance[1:], distance[:-1])
         size = np.maximum(np.minimum(np.abs(values[1:]), np.abs(values[:-1])), 1e-3)
         coarse = step > 0.35 * np.minimum(near, size)
-        if not coarse.any() or len(grid) + coarse.sum() > _FINEST:
+        if not coarse.any() or len(grid) + coarse.sum() > finest:
             break
         extra = np.sqrt(grid[:-1][coarse] * grid[1:][coarse])
         where = np.searchsorted(grid, extra)

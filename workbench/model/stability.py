@@ -2,7 +2,8 @@
 
 The characteristic function is F(s) = sum_k p_k(s) exp(-L_k s).  Its roots in the right half plane
 are counted by the argument principle along the imaginary axis.  The axis is cut into pieces on each
-of which F provably stays inside a disc that does not hold 0, so its angle cannot turn unseen.
+of which F, or the term that outweighs the others, provably stays inside a disc that does not hold
+0, so that its angle cannot turn unseen.
 """
 
 from __future__ import annotations
@@ -46,33 +47,25 @@ class _Characteristic:
     def order(self) -> int:
         return int(self.ascending.shape[1]) - 1
 
-    def __call__(self, w: NDArray[np.float64]) -> NDArray[np.complex128]:
+    def polynomials(self, w: NDArray[np.float64]) -> NDArray[np.complex128]:
+        """p_k(jw) without the dead times, shape (terms, n)."""
         s = 1j * w
-        total = np.zeros(len(w), complex)
-        for row, delay in zip(self.ascending, self.delays, strict=True):
-            value = np.full(len(w), complex(row[-1]))
-            for c in row[-2::-1]:
-                value = value * s + c
-            total += value * np.exp(-delay * s) if delay else value
-        return total
+        value = np.repeat(self.ascending[:, -1:].astype(complex), len(w), axis=1)
+        for c in self.ascending.T[-2::-1]:
+            value = value * s + c[:, None]
+        return value
 
-    def size(self, w: NDArray[np.float64]) -> NDArray[np.float64]:
-        """Upper bound of |F(jw)| from the size of its terms."""
-        return _polynomial(np.abs(self.ascending).sum(axis=0), w)
+    def turned(self, w: NDArray[np.float64]) -> NDArray[np.complex128]:
+        """exp(-j w L_k), shape (terms, n)."""
+        return np.asarray(np.exp(-1j * self.delays[:, None] * w), np.complex128)
 
     def steepness(self, w: NDArray[np.float64]) -> NDArray[np.float64]:
-        """Upper bound of |dF(jv)/dv| for every v from 0 to w."""
-        sizes = np.abs(self.ascending)
-        slopes = sizes[:, 1:] * np.arange(1, self.order + 1)
-        delayed = (sizes * self.delays[:, None]).sum(axis=0)
-        return _polynomial(slopes.sum(axis=0), w) + _polynomial(delayed, w)
-
-
-def _polynomial(ascending: NDArray[np.float64], w: NDArray[np.float64]) -> NDArray[np.float64]:
-    value = np.full(len(w), ascending[-1] if len(ascending) else 0.0)
-    for c in ascending[-2::-1]:
-        value = value * w + c
-    return value
+        """Upper bounds of |d p_k(jv)/dv| for every v from 0 to w, shape (terms, n)."""
+        slopes = np.abs(self.ascending[:, 1:]) * np.arange(1.0, self.order + 1.0)
+        value = np.repeat(slopes[:, -1:], len(w), axis=1)
+        for c in slopes.T[-2::-1]:
+            value = value * w + c[:, None]
+        return np.asarray(value, np.float64)
 
 
 def verdict(characteristic: Terms) -> Verdict:
@@ -117,14 +110,7 @@ def verdict(characteristic: Terms) -> Verdict:
     total = np.abs(table).sum(axis=0)
     if abs(table[:, 0].sum()) <= _ON_THE_AXIS * total[0]:
         return Verdict(False, None, "a root at s = 0: the loop does not come to rest")
-    f = _scaled(table, delays)
-    if len(delays) == 2 and _turns_too_often(f):
-        return Verdict(
-            False,
-            None,
-            "many roots in the right half plane: the gain is far too high for the dead time",
-        )
-    return _count(f, neutral)
+    return _count(_scaled(table, delays), neutral)
 
 
 def _scaled(table: NDArray[np.float64], delays: NDArray[np.float64]) -> _Characteristic:
@@ -135,40 +121,21 @@ def _scaled(table: NDArray[np.float64], delays: NDArray[np.float64]) -> _Charact
     return _Characteristic(scaled / np.abs(scaled).max(), delays * unit)
 
 
-def _turns_too_often(f: _Characteristic) -> bool:
-    """Whether p1 exp(-L s) outweighs p0 over so wide a band that F must have unstable roots.
-
-    In the band F turns clockwise with the dead time, by far more than the polynomials can undo.
-    """
-    w = np.geomspace(1e-6, 1e9, 400)
-    now, late = (np.abs(_Characteristic(row[None, :], np.zeros(1))(w)) for row in f.ascending)
-    band = np.flatnonzero(late > 1.5 * now)
-    if not len(band):
-        return False
-    edges = np.flatnonzero(np.diff(band) > 1)
-    starts, ends = band[np.r_[0, edges + 1]], band[np.r_[edges, len(band) - 1]]
-    turned = float((w[ends] - w[starts]).sum() * f.delays[1])
-    return turned > 1000.0 + 20.0 * math.pi * f.order
-
-
 def _count(f: _Characteristic, neutral: float) -> Verdict:
     """Half the axis suffices: the other half mirrors it."""
     order = f.order
-    sizes = np.abs(f.ascending).sum(axis=0)
-    leading = abs(f.ascending[0, order]) * (1.0 - neutral)
-    # Fujiwara's bound: above it the leading power outweighs everything else together.
-    powers = np.arange(order, 0, -1)
-    top = 2.0 * float(((sizes[:order] / leading) ** (1.0 / powers)).max())
+    top = _highest(f, neutral)
     start = min(0.5 * top, 0.1 / (order + float(f.delays.max())))
     pieces = max(2, math.ceil(math.log(top / start) / 0.3))
-    edges = np.concatenate(([0.0], np.geomspace(start, top, pieces)))
-    ends, on_axis = _certified(f, edges)
-    if on_axis:
+    turned = _turned(f, np.concatenate(([0.0], np.geomspace(start, top, pieces))))
+    if turned is None:
         return Verdict(False, None, "a root on the stability boundary: the swing never dies out")
-    values = f(ends)
-    turned = float(np.angle(values[1:] / values[:-1]).sum())
-    last = values[-1] / (f.ascending[0, order] * (1j * top) ** order)
-    turned -= float(np.angle(last))
+    # Beyond the top p_0 outweighs the rest, and its leading power the rest of p_0.
+    end = np.array([top])
+    values = f.polynomials(end)
+    lead = f.ascending[0, order] * (1j * top) ** order
+    turned -= float(np.angle((values * f.turned(end)).sum() / values[0, 0]))
+    turned -= float(np.angle(values[0, 0] / lead))
     roots = round(order / 2 - turned / math.pi)
     if roots == 0:
         return STABLE
@@ -176,23 +143,85 @@ def _count(f: _Characteristic, neutral: float) -> Verdict:
     return Verdict(False, roots, f"{roots} {noun} in the right half plane: the swing grows")
 
 
-def _certified(f: _Characteristic, edges: NDArray[np.float64]) -> tuple[NDArray[np.float64], bool]:
-    """Cut points of the axis between which F stays in a disc without 0; True if F meets 0."""
+def _highest(f: _Characteristic, neutral: float) -> float:
+    """A frequency above which |p_0| > sum of the other |p_k| and s^n outweighs the rest of p_0.
+
+    With x = w^2 and weights m_k, (sum |p_k|)^2 <= (sum m_k)(sum |p_k|^2/m_k), a polynomial in x.
+    Bounds of roots: M. Fujiwara, Tohoku Math. J. 10, 1916, 167-171; of positive roots, from the
+    negative coefficients alone, J.B. Kioustelidis, J. Comput. Appl. Math. 16, 1986, 241-244 (both
+    from memory).
+    """
+    order = f.order
+    lead = abs(f.ascending[0, order])
+    own = np.abs(f.ascending[0, :order]) / lead
+    powers = np.arange(order, 0, -1)
+    top = 2.0 * float((own ** (1.0 / powers)).max())
+    if len(f.delays) > 1:
+        # The weights follow the gains at high frequency, so that little is lost near neutral 1.
+        others = len(f.delays) - 1
+        weights = np.abs(f.ascending[1:, order]) / lead + (1.0 - neutral) / (2.0 * others)
+        squares = np.array([_square(row) for row in f.ascending / lead])
+        excess = squares[0] - weights.sum() * (squares[1:] / weights[:, None]).sum(axis=0)
+        short = np.maximum(-excess[:order] / excess[order], 0.0)
+        top = max(top, math.sqrt(2.0 * float((short ** (1.0 / powers)).max())))
+    return top or 1.0
+
+
+def _square(ascending: NDArray[np.float64]) -> NDArray[np.float64]:
+    """|p(jw)|^2 as a polynomial in w^2, ascending."""
+    mirrored = ascending * (-1.0) ** np.arange(len(ascending))
+    product = np.convolve(ascending, mirrored)[::2]
+    return np.asarray(product * (-1.0) ** np.arange(len(product)), np.float64)
+
+
+def _turned(f: _Characteristic, edges: NDArray[np.float64]) -> float | None:
+    """By how much F turns about 0 from the first to the last edge [rad]; None where it meets 0.
+
+    The axis is cut until on each piece either F stays in a disc without 0, or one p_k stays in such
+    a disc and outweighs all others together: then F turns as p_k exp(-j w L_k) does, however often
+    that is, apart from what its two ends differ.
+    """
     low, high = edges[:-1], edges[1:]
-    done: list[NDArray[np.float64]] = [edges[:1]]
+    ends: list[NDArray[np.float64]] = []
+    leaders: list[NDArray[np.intp]] = []
     while len(low):
         middle, half = 0.5 * (low + high), 0.5 * (high - low)
-        value = np.abs(f(middle))
-        safe = value > f.steepness(high) * half
-        done.append(high[safe])
-        low, middle, high, value = (x[~safe] for x in (low, middle, high, value))
-        if np.any(value <= _ON_THE_AXIS * f.size(middle)) or len(low) > _MOST_PIECES:
-            return edges, True
-        quarter = (high - low) / 4.0
-        cuts = [low + k * quarter for k in range(5)]
+        values = f.polynomials(middle)
+        sizes, slack = np.abs(values), f.steepness(high) * half
+        value = np.abs((values * f.turned(middle)).sum(axis=0))
+        # A term moves by its own steepness and by its turning, at its largest on the piece.
+        moved = slack + f.delays[:, None] * half * (sizes + slack)
+        ahead = 2.0 * sizes - (sizes + slack).sum(axis=0)
+        leader = np.where(value > moved.sum(axis=0), -1, ahead.argmax(axis=0))
+        safe = (leader < 0) | (ahead.max(axis=0) > 0.0)
+        ends.append(high[safe])
+        leaders.append(leader[safe])
+        low, high, value, sizes = low[~safe], high[~safe], value[~safe], sizes[:, ~safe]
+        if np.any(value <= _ON_THE_AXIS * sizes.sum(axis=0)) or len(low) > _MOST_PIECES:
+            return None
+        cuts = [low + k * ((high - low) / 4.0) for k in range(5)]
         cuts[4] = high
         low, high = np.concatenate(cuts[:4]), np.concatenate(cuts[1:])
-    return np.sort(np.concatenate(done)), False
+    at = np.concatenate((edges[:1], *ends))
+    order = np.argsort(at)
+    return _added_up(f, at[order], np.concatenate(leaders)[order[1:] - 1])
+
+
+def _added_up(f: _Characteristic, at: NDArray[np.float64], leader: NDArray[np.intp]) -> float:
+    """The turning of F over the pieces between the points `at`, each with its leading term."""
+    polynomials = f.polynomials(at)
+    terms = polynomials * f.turned(at)
+    values = terms.sum(axis=0)
+    total = float(np.angle(values[1:] / values[:-1])[leader < 0].sum())
+    for k, delay in enumerate(f.delays):
+        led = np.flatnonzero(leader == k)
+        if len(led):
+            p, rest = polynomials[k], np.angle(values / np.where(terms[k] == 0, 1.0, terms[k]))
+            total += float(np.angle(p[led + 1] / p[led]).sum())
+            total += float(
+                (rest[led + 1] - rest[led]).sum() - delay * (at[led + 1] - at[led]).sum()
+            )
+    return total
 
 
 def plant_verdict(plant: TransferFunction) -> Verdict:

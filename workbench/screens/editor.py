@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Iterable
 
+from textual import events
 from textual.app import ComposeResult
 from textual.containers import Vertical
 from textual.message import Message
@@ -84,6 +85,11 @@ class Editor(Vertical):
         self.styles.width, self.styles.height = width, height
         beside.styles.height = len(beside.shown)
         beside.redraw()
+
+    def on_key(self, event: events.Key) -> None:
+        """The keys stay here until the entry is closed."""
+        if event.key in ("tab", "shift+tab"):
+            event.stop()
 
     def accept(self, text: str) -> None:
         """Set the value, or say what is wrong with it."""

@@ -44,7 +44,8 @@ class FiguresPanel(Panel):
         "another one; 'worse' says so where it got worse by more than 1 %.",
         "Sensitivity Ms: the largest factor by which the loop magnifies an upset; below 1.6 is "
         "calm, above 2 is nervous. IAE: integral of the absolute error.",
-        "Floor: no controller can do better after this load step. Lines with '!' are cautions.",
+        "Floor: no controller can do better after this load step. Own gain: the controller's gain "
+        "in units instead of percent of span. Lines with '!' are cautions.",
     )
 
     def body(self, width: int) -> list[Line]:
@@ -158,6 +159,11 @@ def _floor(name: str) -> Callable[[Evaluation], Figure | None]:
     return read
 
 
+def _own_gain(evaluation: Evaluation) -> Figure | None:
+    gain = evaluation.assessment.gain_op_per_pv
+    return None if gain is None else Figure(gain)
+
+
 FIGURES: Final = (
     Row("Sensitivity Ms", _margin("max_sensitivity"), "", "lower"),
     Row("Gain margin", _margin("gain_margin"), "", "higher"),
@@ -177,5 +183,6 @@ FIGURES: Final = (
     Row("Final OP", _measure("final_op"), "OP"),
     Row("Peak floor", _floor("floor_peak_deviation"), "PV"),
     Row("IAE floor", _floor("floor_load_iae"), "PV s"),
+    Row("Own gain", _own_gain, "OP per PV"),
 )
 """The figures shown, the most telling first."""

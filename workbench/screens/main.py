@@ -273,7 +273,8 @@ class MainPage(Page):
 
     def _answers(self, case: Case) -> None:
         try:
-            self.post_message(Evaluated(case, study.evaluate(case)))
+            pinned = self.work.pinned
+            self.post_message(Evaluated(case, study.evaluate(case, like=pinned)))
         except WorkbenchError as fault:
             self.post_message(Evaluated(case, None, str(fault)))
 

@@ -331,7 +331,7 @@ class RecordPage(Page):
             self.tell("choose a record first", "plain")
             return
         try:
-            self.work.change(study.accept(self.work.case, fit, chosen.shape))
+            self.work.change(study.accept(self.work.case, fit, chosen.shape, self.work.path.parent))
         except WorkbenchError as fault:
             self.tell(f"{fault}", "worse")
             return

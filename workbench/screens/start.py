@@ -10,6 +10,7 @@ from textual.widget import Widget
 
 from workbench.case.files import read_case
 from workbench.errors import InputError
+from workbench.screens import drafts
 from workbench.screens.cells import Line
 from workbench.screens.keys import Command, bindings
 from workbench.screens.page import HELP, MOVING, Page
@@ -28,6 +29,8 @@ class Entry:
     tag: str
     service: str
     fault: str = ""
+    has_draft: bool = False
+    """Unsaved work of an earlier session waits."""
 
 
 class CaseList(Listing):
@@ -59,9 +62,11 @@ class CaseList(Listing):
         for row, entry in enumerate(self.entries):
             tone = "chosen" if row == self.cursor else "plain"
             mark = ">" if row == self.cursor else " "
-            name = f"{mark} {entry.tag[:15]:<16}{entry.service[:35]:<36}"
+            name = f"{mark} {entry.tag[:15]:<16}{entry.service[:31]:<32}"
             words = entry.fault or entry.path.name
-            lines.append(((name, tone), (f" {words}", "worse" if entry.fault else "quiet")))
+            remark = "  unsaved work" if entry.has_draft else ""
+            tones = ("worse" if entry.fault else "quiet", "changed")
+            lines.append(((name, tone), (f" {words}", tones[0]), (remark, tones[1])))
         return lines or [
             (("  no case files (*.toml) in this folder", "plain"),),
             (("  `workbench new TAG` writes one; open it with `workbench TAG.toml`", "quiet"),),
@@ -73,7 +78,7 @@ def _entry(path: Path) -> Entry:
         loop = read_case(path).case.loop
     except InputError as fault:
         return Entry(path, path.stem, path.name, fault.problems[0].what)
-    return Entry(path, loop.tag, loop.service)
+    return Entry(path, loop.tag, loop.service, has_draft=drafts.place(path).exists())
 
 
 class StartPage(Page):

@@ -43,7 +43,8 @@ class TrendPanel(Panel):
             words = self.work.fault or "computing"
             return self.typeset(wrapped(words, width, "quiet", " "), width, height)
         if evaluation.prediction is None:
-            words = "no prediction without a controller"
+            missing = evaluation.prediction_reason
+            words = f"no prediction: {missing}" if missing else "no prediction without a controller"
             return self.typeset(wrapped(words, width, "quiet", " "), width, height)
         picture = charts.draw(self._panes(evaluation), width, height, ascii_only=self.ascii_only)
         return as_cells(picture)

@@ -29,6 +29,7 @@ from workbench.study.prediction import (
     predict,
     respond,
     respond_to_record,
+    response_horizon,
 )
 from workbench.study.proposals import Proposal, Wish, propose, take
 
@@ -62,6 +63,7 @@ __all__ = [
     "reductions",
     "respond",
     "respond_to_record",
+    "response_horizon",
     "take",
     "units_of",
 ]

@@ -7,6 +7,7 @@ from dataclasses import dataclass, replace
 from workbench.case.case import Case
 from workbench.errors import (
     CannotSolve,
+    ModelError,
     NotApplicable,
 )
 from workbench.model.feedback import Loop
@@ -15,8 +16,16 @@ from workbench.model.reduction import SmallModel, best_fit, half_rule, misfit
 from workbench.model.robustness import Margins, analogue_margins, sampled_margins
 from workbench.model.stability import plant_verdict
 from workbench.model.transfer import TransferFunction
-from workbench.study.loop import action_of, load_scale, loop_of, plant_of
-from workbench.units import Figure, Note, rounded
+from workbench.study.loop import (
+    action_of,
+    load_scale,
+    loop_of,
+    no_time_domain,
+    plant_of,
+    runs_away,
+    units_of,
+)
+from workbench.units import RATE_UNITS, Amount, Figure, Note, rounded, text
 
 
 @dataclass(frozen=True)
@@ -26,6 +35,8 @@ class PlantFigures:
     formula: str
     gain: Figure
     """[PV unit per OP unit]"""
+    gain_percent: Figure
+    """The same in percent of PV span per percent of OP span."""
     slope_per_s: Figure
     """[PV unit per OP unit and second]; 0 where the plant does not integrate."""
     stable: bool
@@ -35,6 +46,10 @@ class PlantFigures:
     zeros: tuple[complex, ...]
     """[1/s]"""
     dead_time_s: float
+    """The smallest from OP to PV."""
+    poles_reason: str = ""
+    """Why the poles cannot be listed."""
+    zeros_reason: str = ""
 
 
 @dataclass(frozen=True)
@@ -59,6 +74,14 @@ class Assessment:
     action: str | None
     """The controller's action, given or chosen."""
     notes: tuple[Note, ...] = ()
+    sampled_reason: str = ""
+    """Why there are no sampled figures although there is a scan interval."""
+    gain: float | None = None
+    """The controller's gain [%/%]."""
+    gain_op_per_pv: float | None = None
+    """The same in OP units per PV unit."""
+    valve: str = ""
+    """What OP is and which way the valve goes, whatever the sign of the plant."""
 
     @property
     def judged(self) -> LoopFigures | None:
@@ -72,39 +95,73 @@ def assess(case: Case) -> Assessment:
     Raises `InputError` where the case has no plant.
     """
     plant = plant_of(case)
-    figures = _plant_figures(plant)
+    figures, valve = _plant_figures(case, plant), valve_words(case)
     if case.controller is None:
-        return Assessment(figures, None, None, None, tuple(_plant_notes(plant)))
+        notes = tuple(_plant_notes(plant))
+        return Assessment(figures, None, None, None, notes, valve=valve)
     action, chosen = action_of(case)
-    notes = [*_plant_notes(plant), *([Note("info", chosen)] if chosen else [])]
+    notes = (*_plant_notes(plant), *([Note("info", chosen)] if chosen else []))
     loop = loop_of(case)
     analogue = _loop_figures(case, loop, analogue_margins(replace(loop, scan=None)))
-    sampled = None
+    sampled, missing = None, ""
     if loop.scan is not None:
-        sampled = _loop_figures(case, loop, sampled_margins(loop))
-    return Assessment(figures, analogue, sampled, action, tuple(notes))
+        missing = no_time_domain(loop.plant)
+        if not missing:
+            sampled = _loop_figures(case, loop, sampled_margins(loop))
+    gain = case.controller.gain_value
+    scale = case.op.range.span / case.pv.range.span
+    return Assessment(figures, analogue, sampled, action, notes, missing, gain, gain * scale, valve)
 
 
-def _plant_figures(plant: TransferFunction) -> PlantFigures:
+def valve_words(case: Case) -> str:
+    """What OP is and what the valve does as it rises."""
+    closes = case.op.valve_closes_on_rise
+    if case.op.meaning == "opening":
+        falls = ", and the signal to the valve falls as it rises" if closes else ""
+        return f"the opening of the valve{falls}"
+    return f"the signal to the valve, which {'closes' if closes else 'opens'} as it rises"
+
+
+def _plant_figures(case: Case, plant: TransferFunction) -> PlantFigures:
+    gain, slope = plant.gain(), plant.slope()
+    if gain.value is None and slope.value is not None:
+        gain = Figure(None, f"integrating: PV moves {_slope_words(case, slope.value)}")
+    delayed = plant.has_delayed_feedback
     return PlantFigures(
         formula=format_formula(plant),
-        gain=plant.gain(),
-        slope_per_s=plant.slope(),
+        gain=gain,
+        gain_percent=gain.times(case.op.range.span / case.pv.range.span),
+        slope_per_s=slope,
         stable=plant_verdict(plant).stable,
         integrating=plant.integrators > 0,
-        poles=plant.poles(),
+        poles=() if delayed else plant.poles(),
         zeros=plant.zeros(),
         dead_time_s=plant.dead_time,
+        poles_reason="infinitely many: a dead time inside an inner feedback" if delayed else "",
+        zeros_reason="paths of unequal dead time: infinitely many"
+        if len(plant.numerator) > 1
+        else "",
     )
+
+
+def _slope_words(case: Case, slope: float) -> str:
+    """A slope [PV unit per OP unit and second] in the unit of time that reads best."""
+    rates = [Amount(1.0, unit) for unit in RATE_UNITS]
+    best = next((r for r in rates if abs(slope) >= 0.1 * r.per_second), rates[-1])
+    pv, op = units_of(case)["pv"], units_of(case)["op"]
+    return f"{text(slope / best.per_second)} {pv}{best.unit} per {op} of OP"
 
 
 def _plant_notes(plant: TransferFunction) -> list[Note]:
     notes = []
-    if any(p.real > 0 for p in plant.poles()):
+    if runs_away(plant):
         notes.append(Note("caution", "the plant is unstable: without its controller it runs away"))
-    if any(z.real > 0 for z in plant.zeros()):
-        notes.append(Note("caution", "inverse response: PV first moves the wrong way"))
-    for pole in plant.poles():
+    growing = [z for z in plant.zeros() if z.real > 0]
+    # An even number of them makes PV turn and turn again, and set out the right way.
+    if growing:
+        first = "PV first moves the wrong way" if len(growing) % 2 else "PV turns back on its way"
+        notes.append(Note("caution", f"inverse response: {first}"))
+    for pole in () if plant.has_delayed_feedback else plant.poles():
         if any(abs(pole - zero) <= 0.01 * abs(pole) for zero in plant.zeros()):
             notes.append(
                 Note("caution", f"a pole and a zero near {pole.real:.4g} 1/s nearly cancel")
@@ -124,6 +181,12 @@ def _loop_figures(case: Case, loop: Loop, margins: Margins) -> LoopFigures:
 
 def _final_after_load(loop: Loop) -> Figure:
     """Limit for a unit load step, once the load path's own poles are known to let it exist."""
+    if loop.load.has_delayed_feedback or loop.plant.has_delayed_feedback:
+        # An inner feedback that both share is part of the loop, and that is stable.
+        shared = loop.load.denominator == loop.plant.denominator
+        if not shared and not plant_verdict(loop.load).stable:
+            return Figure(None, "the load path is not stable by itself")
+        return loop.from_load().gain()
     inside = loop.plant.poles()
     for pole in loop.load.poles():
         if pole.real >= 0 and pole != 0 and pole not in inside:
@@ -138,7 +201,7 @@ class Reduced:
     method: str
     lags: int
     formula: str
-    peak_step_error_percent: float
+    peak_step_error_percent: Figure
     phase_error_deg: Figure
     reason: str = ""
     """Why there is no such model."""
@@ -156,17 +219,20 @@ def reductions(case: Case) -> tuple[Reduced, ...]:
             try:
                 model = make(plant, lags)
             except (NotApplicable, CannotSolve) as refusal:
-                rows.append(
-                    Reduced(method, lags, "", 0.0, Figure(None, str(refusal)), str(refusal))
-                )
+                none = Figure(None, str(refusal))
+                rows.append(Reduced(method, lags, "", none, none, str(refusal)))
                 continue
             if model.exact:
                 return ()
-            off = misfit(plant, model)
             formula = format_formula(_as_typed_model(model).transfer())
-            rows.append(
-                Reduced(method, lags, formula, off.peak_step_error_percent, off.phase_error_deg)
-            )
+            try:
+                off = misfit(plant, model)
+            except ModelError as fault:
+                none = Figure(None, no_time_domain(plant) or fault.problems[0].what)
+                rows.append(Reduced(method, lags, formula, none, none))
+            else:
+                error = Figure.of(off.peak_step_error_percent)
+                rows.append(Reduced(method, lags, formula, error, off.phase_error_deg))
     return tuple(rows)
 
 

@@ -10,7 +10,7 @@ from workbench.errors import (
     InputError,
 )
 from workbench.study.assessment import Assessment, assess
-from workbench.study.loop import action_of, controller_of
+from workbench.study.loop import action_of, controller_of, no_time_domain, plant_of
 from workbench.study.prediction import Prediction, predict
 from workbench.units import Note, text
 
@@ -31,15 +31,24 @@ class Evaluation:
     case: Case
     assessment: Assessment
     prediction: Prediction | None
-    """Missing without a controller."""
+    """Missing without a controller, or with the reason."""
     cautions: tuple[Note, ...]
+    prediction_reason: str = ""
+    """Why there is no prediction although there is a controller."""
 
 
-def evaluate(case: Case, seed: int = 0) -> Evaluation:
-    """Everything a screen shows of one case.  Raises `InputError` where it has no plant."""
+def evaluate(case: Case, seed: int = 0, like: Evaluation | None = None) -> Evaluation:
+    """Everything a screen shows of one case, over the same time as `like` where its end is open.
+
+    Raises `InputError` where the case has no plant.
+    """
     assessment = assess(case)
-    prediction = None if case.controller is None else predict(case, seed)
-    return Evaluation(case, assessment, prediction, cautions(case, assessment, prediction))
+    prediction, missing = None, ""
+    if case.controller is not None:
+        missing = no_time_domain(plant_of(case))
+        prediction = None if missing else predict(case, seed, like.prediction if like else None)
+    notes = cautions(case, assessment, prediction)
+    return Evaluation(case, assessment, prediction, notes, missing)
 
 
 def cautions(
@@ -50,6 +59,10 @@ def cautions(
     judged = assessment.judged
     if judged is None:
         return tuple(notes)
+    missing = no_time_domain(plant_of(case))
+    if missing:
+        judged_as = "judged as analogue and " if assessment.sampled_reason else ""
+        notes.append(Note("caution", f"{judged_as}not predicted: {missing}"))
     margins = judged.margins
     if not margins.stable:
         notes.insert(0, Note("caution", f"NOT STABLE: {margins.reason}"))

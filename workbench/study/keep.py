@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import hashlib
+import os
 from collections.abc import Callable
 from dataclasses import dataclass, fields, replace
 from datetime import datetime
@@ -24,7 +25,7 @@ from workbench.records.identify import Candidate, Fit
 from workbench.records.identify import fit as fit_plants
 from workbench.records.record import read_record
 from workbench.study.assessment import assess
-from workbench.study.loop import controller_of
+from workbench.study.loop import controller_of, no_time_domain, plant_of
 from workbench.study.prediction import predict
 from workbench.units import Amount, rounded, text
 
@@ -74,13 +75,17 @@ def chosen_candidate(fit: Fit, shape: str | None = None) -> Candidate:
     raise problem(f"the fit has no {wanted} candidate", "choose one that is listed", key="--shape")
 
 
-def accept(case: Case, fit: Fit, shape: str | None = None) -> Case:
-    """The case with the fitted plant, and where it came from; to four significant digits."""
+def accept(case: Case, fit: Fit, shape: str | None = None, folder: Path | None = None) -> Case:
+    """The case with the fitted plant, and where it came from; to four significant digits.
+
+    The record is named as seen from `folder`, where the case file lies; without it, by its name.
+    """
     candidate = chosen_candidate(fit, shape)
+    record = Path(fit.record.path)
     plant = replace(
         case.plant,
         process=_shape_as_typed(candidate.plant),
-        from_=Path(fit.record.path).name,
+        from_=record.name if folder is None else os.path.relpath(record, folder),
         from_sha256=fit.record.sha256,
     )
     return replace(case, plant=plant)
@@ -142,15 +147,15 @@ def _figures_now(case: Case) -> dict[str, float]:
     assessment = assess(case)
     judged = assessment.judged
     assert judged is not None
-    measures = predict(case).measures
+    if not judged.margins.stable:
+        return {}
     found = {
         "max_sensitivity": judged.margins.max_sensitivity,
         "phase_margin_deg": judged.margins.phase_margin_deg,
-        "load_iae": measures.load_iae,
-        "setpoint_iae": measures.setpoint_iae,
     }
-    if not judged.margins.stable:
-        return {}
+    if not no_time_domain(plant_of(case)):
+        measures = predict(case).measures
+        found |= {"load_iae": measures.load_iae, "setpoint_iae": measures.setpoint_iae}
     return {name: figure.value for name, figure in found.items() if figure.value is not None}
 
 

@@ -4,10 +4,13 @@ from __future__ import annotations
 
 from workbench.case.case import Case
 from workbench.errors import (
+    ModelError,
     problem,
 )
+from workbench.model.blocks import Blocks
 from workbench.model.feedback import Loop
 from workbench.model.pid import Controller
+from workbench.model.stability import plant_verdict
 from workbench.model.transfer import TransferFunction
 
 
@@ -19,11 +22,36 @@ def units_of(case: Case) -> dict[str, str]:
 
 def plant_of(case: Case) -> TransferFunction:
     """The plant [PV unit per OP unit].  Raises `InputError` where the case has none yet."""
-    if case.plant.process is None:
+    process = case.plant.process
+    if process is None:
         raise problem(
             "the case has no plant yet", "enter one, or accept the fit of a record", key="plant"
         )
-    return case.plant.process.transfer()
+    whole = process.transfer()
+    if isinstance(process, Blocks) or not process.in_percent:
+        return whole
+    return whole * (case.pv.range.span / case.op.range.span)
+
+
+def plant_in_percent(case: Case) -> TransferFunction:
+    """The plant [%/%].  Raises `InputError` where the case has none yet."""
+    return plant_of(case) * (case.op.range.span / case.pv.range.span)
+
+
+def runs_away(plant: TransferFunction) -> bool:
+    """The plant is unstable; integrating alone does not make it so."""
+    if plant.has_delayed_feedback:
+        return plant.integrators <= 0 and not plant_verdict(plant).stable
+    return any(p.real > 0 for p in plant.poles())
+
+
+def no_time_domain(plant: TransferFunction) -> str:
+    """Why neither a prediction nor sampled figures can be computed; nothing where they can."""
+    try:
+        plant.realise()
+    except ModelError as fault:
+        return fault.problems[0].what
+    return ""
 
 
 def controller_of(case: Case) -> Controller:
@@ -44,7 +72,7 @@ def action_of(case: Case) -> tuple[str, str]:
     if given is not None:
         return given, ""
     plant = plant_of(case)
-    if any(p.real > 0 for p in plant.poles()):
+    if runs_away(plant):
         raise problem(
             "is needed: the plant is unstable, so its gain does not tell the action",
             "give reverse (OP rises when PV falls) or direct",
@@ -68,7 +96,7 @@ def loop_of(case: Case) -> Loop:
     """The loop in percent of span.  Raises `InputError` where plant or controller is missing."""
     controller = controller_of(case)
     pv, op = case.pv, case.op
-    plant = plant_of(case) * (op.range.span / pv.range.span)
+    plant = plant_in_percent(case)
     load = case.plant.load_path()
     return Loop(
         plant=plant,
@@ -87,4 +115,4 @@ def loop_of(case: Case) -> Loop:
 
 def load_scale(case: Case) -> float:
     """Load input of the percent loop for 1 unit of the case's load."""
-    return 100.0 / case.op.range.span if case.plant.load is None else 1.0
+    return 100.0 / case.op.range.span if case.plant.load_path() is None else 1.0

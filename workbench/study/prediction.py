@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 from dataclasses import dataclass, replace
 from typing import Final, Literal
 
@@ -9,6 +10,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from workbench.case.case import Case
+from workbench.errors import ModelError, Problem, problem
 from workbench.model.feedback import Loop
 from workbench.model.response import (
     Signal,
@@ -22,8 +24,8 @@ from workbench.records.record import Record
 from workbench.sim.loop import settle_horizon, simulate
 from workbench.sim.metrics import Measures, measure
 from workbench.sim.scenario import Events
-from workbench.study.loop import load_scale, loop_of
-from workbench.units import Figure
+from workbench.study.loop import load_scale, loop_of, no_time_domain
+from workbench.units import Figure, rounded, text
 
 Floats = NDArray[np.float64]
 
@@ -61,13 +63,24 @@ class Prediction:
     """The loop ran away and the trend was cut off."""
 
 
-def predict(case: Case, seed: int = 0) -> Prediction:
+def predict(case: Case, seed: int = 0, like: Prediction | None = None) -> Prediction:
     """Run the closed loop through the case's scenario.
 
-    Raises `InputError` where plant or controller is missing.
+    Where the scenario leaves its end open it lasts long enough to settle, or as long as the
+    prediction `like` with which it is to be compared.
+
+    Raises `InputError` where plant or controller is missing, or the plant has a dead time inside an
+    inner feedback.
     """
     loop = loop_of(case)
-    events = _events(case, loop, seed)
+    missing = no_time_domain(loop.plant)
+    if missing:
+        raise problem(
+            f"cannot be predicted: {missing}",
+            "`workbench assess` judges this loop; for a trend draw the plant without that feedback",
+            key="plant",
+        )
+    events = _events(case, loop, seed, like)
     trace = simulate(loop, events)
     pv, op = case.pv, case.op
     trend = Trend(
@@ -93,22 +106,26 @@ def predict(case: Case, seed: int = 0) -> Prediction:
     )
 
 
-def _events(case: Case, loop: Loop, seed: int) -> Events:
+def _events(case: Case, loop: Loop, seed: int, like: Prediction | None) -> Events:
     """The scenario made definite, every default filled in."""
     scenario, pv = case.scenario, case.pv
     setpoint_step, load_step = scenario.setpoint_step, scenario.load_step
     at = scenario.setpoint_at.seconds
     load_at = scenario.load_at.seconds if scenario.load_at else 0.0
     until = scenario.until.seconds if scenario.until else None
-    horizon = settle_horizon(loop) if until is None else 0.0
-    if setpoint_step is None and load_step is None:
-        setpoint_step = pv.range.units(5.0)
-        load_step = case.op.range.units(5.0)
-        if scenario.load_at is None:
-            load_at = at + (horizon if until is None else (until - at) / 2.0)
-    moves = [t for t, step in ((at, setpoint_step), (load_at, load_step)) if step]
+    halved = setpoint_step is None and load_step is None
+    if halved:
+        setpoint_step, load_step = pv.range.units(5.0), case.op.range.units(5.0)
+        halved = scenario.load_at is None
     if until is None:
-        until = max(moves, default=0.0) + horizon
+        moves = [t for t, step in ((at, setpoint_step), (load_at, load_step)) if step]
+        last = at if halved else max(moves, default=0.0)
+        until = last + settle_horizon(loop) * (2.0 if halved else 1.0)
+        # Comparable as long as neither is squeezed into a corner of the other.
+        if like is not None and until / 3.0 <= like.until_s <= until * 3.0:
+            until = like.until_s
+    if halved:
+        load_at = at + (until - at) / 2.0
     return Events(
         setpoint_step=pv.range.percent(setpoint_step or 0.0),
         setpoint_at=at,
@@ -175,7 +192,7 @@ class Response:
     """The output, as a deviation from rest."""
     final_value: Figure
     peak: Figure
-    """Largest deviation within the time asked for, with its sign."""
+    """Largest deviation within the time asked for, with its sign; none where PV grows for ever."""
 
 
 def respond(plant: TransferFunction, signal: Signal, until: float, rows: int = 1001) -> Response:
@@ -197,15 +214,59 @@ def respond(plant: TransferFunction, signal: Signal, until: float, rows: int = 1
     ModelError
         A response that begins with an infinite spike, or a width or period of 0.
     """
+    missing = no_time_domain(plant)
+    if missing:
+        raise ModelError(Problem(f"cannot be answered: {missing}", "draw it without that feedback"))
     transform = plant * signal.transform()
     time = np.linspace(0.0, until, rows)
-    pv = impulse_response(transform, time)
-    peak = float(pv[np.abs(pv).argmax()])
-    return Response(time, signal.values(time), pv, final_value(transform), Figure.of(peak))
+    with np.errstate(over="ignore", invalid="ignore"):
+        pv = impulse_response(transform, time)
+    if not np.isfinite(pv).all():
+        raise ModelError(Problem("grows beyond every number", "give an earlier end"))
+    final = final_value(transform)
+    return Response(time, signal.values(time), pv, final, _peak(transform, time, pv, final))
+
+
+def _peak(transform: TransferFunction, time: Floats, pv: Floats, final: Figure) -> Figure:
+    """The largest deviation, between the rows too: about the largest of them, and at the jumps."""
+    at = int(np.abs(pv).argmax())
+    swings = "swings for ever" in final.reason
+    if final.value is None and not swings and at == len(pv) - 1:
+        return Figure(None, f"PV moves on without end, and is {text(float(pv[-1]))} at the last")
+    near = np.linspace(time[max(at - 1, 0)], time[min(at + 1, len(time) - 1)], 401)
+    jumps = [delay for delay in transform.delays if delay <= time[-1]]
+    closer = impulse_response(transform, np.unique([*near, *jumps]))
+    return Figure.of(float(max((float(pv[at]), *closer.tolist()), key=abs)))
+
+
+def response_horizon(plant: TransferFunction, signal: Signal) -> float:
+    """Long enough to see all of a response [s], to two digits.
+
+    A stable part settles within the sum of its lags and 5 times their root mean square sum; what
+    grows is followed for 3 of its time constants, a sine for 5 periods.
+    """
+    poles = () if plant.has_delayed_feedback else plant.poles()
+    lags = [1.0 / abs(p.real) for p in poles if p.real < 0.0]
+    swings = [2.0 * math.pi / p.imag for p in poles if p.imag > 0.0 and p.real == 0.0]
+    growing = [1.0 / p.real for p in poles if p.real > 0.0]
+    settles = sum(lags) + 5.0 * math.sqrt(sum(lag * lag for lag in lags))
+    own = max([settles, *(3.0 * t for t in growing), *(5.0 * t for t in swings)])
+    if growing:
+        own = min(own, 20.0 * min(growing))
+    dead = 3.0 * max(plant.delays, default=0.0)
+    moves = {"pulse": 2.0 * signal.width, "doublet": 3.0 * signal.width, "sine": 5 * signal.period}
+    total = signal.at + moves.get(signal.kind, 0.0) + own + dead
+    return rounded(total - signal.at or 60.0, 2) + signal.at
 
 
 def respond_to_record(plant: TransferFunction, record: Record) -> Response:
-    """Response of a plant to the OP of a record, held between rows; deviations from its start."""
+    """Response of a plant to the OP of a record, held between rows; deviations from its start.
+
+    Raises `ModelError` for a dead time inside an inner feedback.
+    """
+    missing = no_time_domain(plant)
+    if missing:
+        raise ModelError(Problem(f"cannot be answered: {missing}", "draw it without that feedback"))
     op = record.op - record.op[0]
     pv = held_response(plant, record.time, op, record.time)
     none = Figure(None, "a recorded input has no last value to hold for ever")

@@ -15,7 +15,7 @@ from workbench.errors import (
 from workbench.model.pid import Controller, settings_like
 from workbench.model.reduction import half_rule
 from workbench.model.robustness import analogue_margins, sampled_margins, ultimate
-from workbench.study.loop import action_of, loop_of, plant_of
+from workbench.study.loop import action_of, loop_of, no_time_domain, plant_in_percent
 from workbench.study.prediction import predict
 from workbench.tune import rules
 from workbench.units import Amount, Figure, nearest, plain, rounded, text
@@ -106,7 +106,7 @@ def _proposal(case: Case, method: str, wish: Wish) -> Proposal:
 
 def _rule_plant(case: Case, wish: Wish) -> rules.Plant:
     """The plant as rules see it: percent of span, and positive for the action it asks for."""
-    plant = plant_of(case) * (case.op.range.span / case.pv.range.span)
+    plant = plant_in_percent(case)
     upright = plant if action_of(case)[0] == "reverse" else -plant
 
     @cache
@@ -121,12 +121,17 @@ def _judged(
 ) -> Proposal:
     trial = replace(case, controller=settings)
     loop = loop_of(trial)
-    margins = analogue_margins(loop) if loop.scan is None else sampled_margins(loop)
+    missing = no_time_domain(loop.plant)
+    analogue = loop.scan is None or missing
+    margins = analogue_margins(replace(loop, scan=None)) if analogue else sampled_margins(loop)
     if not margins.stable:
         none = Figure(None, f"the loop is not stable: {margins.reason}")
         reason = f"not stable on this loop: {margins.reason}"
         return Proposal(method, title, source, settings, True, reason, none, none, none, none)
-    measures = predict(trial).measures
+    setpoint_iae = load_iae = Figure(None, f"not predicted: {missing}")
+    if not missing:
+        measures = predict(trial).measures
+        setpoint_iae, load_iae = measures.setpoint_iae, measures.load_iae
     peak = margins.max_sensitivity
     within = peak.value is not None and peak.value <= wish.max_sensitivity
     reason = ""
@@ -142,8 +147,8 @@ def _judged(
         reason,
         peak,
         margins.phase_margin_deg,
-        measures.setpoint_iae,
-        measures.load_iae,
+        setpoint_iae,
+        load_iae,
         within,
     )
 
