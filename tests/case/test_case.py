@@ -390,6 +390,8 @@ def test_the_upset_enters_where_the_drawing_says() -> None:
         ("plant.blocks", "a: 1/(s", "block 'a': column 3"),
         ("plant.blocks", "a 1/s", "has no colon"),
         ("plant.blocks", "a: vessel volume=3, flow=1 /s", "a vessel is a whole plant"),
+        ("plant.blocks", "a: 1; b around a: -s/(s + 1)", "makes an improper plant"),
+        ("plant.blocks", "a: 1/s; b less a: 1/s", "the paths cancel to nothing"),
         ("plant", "a: 1/(s", "block 'a': column 3"),
         ("plant", "first-order gain=x, time_constant=4 s", "gain: must be a number, not 'x'"),
         ("plant", "1/(s", "column 3"),

@@ -101,7 +101,14 @@ class Blocks:
                 faults.extend(fault.problems)
         if faults:
             raise ModelError(faults)
-        self.transfer()
+        whole = self.transfer()
+        if not whole.numerator:
+            raise _fault("the paths cancel to nothing", "draw a plant that answers to its input")
+        if not whole.is_proper:
+            raise _fault(
+                "the inner feedback makes an improper plant: more leads than lags",
+                "put a lag into it",
+            )
         self.load()
 
     def transfer(self) -> TransferFunction:
