@@ -89,7 +89,7 @@ def label_of(key: str) -> str:
 
 def with_unit(text: str, quantity: Quantity, work: Work) -> str:
     """A setting with the unit of a plain number; amounts carry theirs already."""
-    if quantity.kind != "number" or quantity.unit == "%/%" or not text:
+    if quantity.kind != "number" or not text:
         return text
     unit = work.unit(quantity)
     return f"{text} {unit}" if unit else text

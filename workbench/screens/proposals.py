@@ -183,8 +183,10 @@ class ProposalsPage(Page):
         """In which units the columns are."""
         times = [(name, self.table.unit(name)) for name in ("integral", "derivative")]
         named = [f"{name} in {unit}" for name, unit in times if unit]
-        iae = f"load and SP: IAE in {self.work.case.pv.unit} s"
-        return "; ".join([*named, "PM in deg", iae])
+        iae = f"IAE in {self.work.case.pv.unit} s"
+        controller = self.work.case.controller
+        band = controller is not None and controller.proportional_band is not None
+        return "; ".join(["band in %" if band else "gain in %/%", *named, "PM in deg", iae])
 
     def on_worker_state_changed(self, event: Worker.StateChanged) -> None:
         """A fault of the program itself must not take the work with it."""

@@ -127,7 +127,9 @@ class Candidates(Panel):
     def lines(self, width: int, height: int) -> Iterable[Line]:
         """A line of column names under the title."""
         title, *rest = super().lines(width, height - 1)
-        columns = "  shape          gain or slope        time constant    dead time        agrees"
+        unit = study.units_of(self.work.case)["gain"]
+        gain = f"gain {unit}, or /s"[:20]  # an integrating plant has its slope there
+        columns = f"  shape          {gain:<21}time constant    dead time        agrees"
         return (title, ((columns[:width], "label"),), *rest)
 
     def body(self, width: int) -> list[Line]:
