@@ -24,6 +24,7 @@ HEADLESS: Final = {
     "predict": (*LOOP, "--scan", "1 s"),
     "fit": (str(ROOT / "cases" / "TIC-307_bump.csv"),),
     "propose": LOOP,
+    "convert": ("--to", "series", *LOOP),
     "check": (str(ROOT / "cases" / "TIC-307.toml"),),
     "history": (str(ROOT / "cases" / "TIC-307.toml"),),
     "new": ("XIC-1", *LOOP),

@@ -22,6 +22,7 @@ if TYPE_CHECKING:
     from workbench.records.identify import Candidate, Fit
     from workbench.study import (
         Assessment,
+        Conversion,
         Evaluation,
         FileCheck,
         LoopFigures,
@@ -154,9 +155,9 @@ def settings_text(controller: Controller) -> str:
     return ", ".join(parts)
 
 
-def _amount(amount: Amount | None) -> str:
-    """An amount as it is read: four digits, in its own unit."""
-    return "none" if amount is None else text(amount.value, amount.unit)
+def _amount(amount: Amount | None, digits: int = 4) -> str:
+    """An amount as it is read, in its own unit."""
+    return "none" if amount is None else text(amount.value, amount.unit, digits)
 
 
 def _integral_s(controller: Controller | None) -> Figure:
@@ -691,6 +692,85 @@ def _proposal_table(
     below = [[one[0], *right] for one, right in zip(settings, judged, strict=True)]
     heads = [["", *judged_head[0]], ["", *judged_head[1]], ["method", *judged_head[2]]]
     return [*_grid(settings_head, settings), "", *_grid(heads, below)]
+
+
+# --- convert --------------------------------------------------------------------------------------
+
+
+def convert_data(case: Case, found: Conversion, units: Mapping[str, str]) -> Json:
+    """The conversion as `convert --json` prints it; the settings in the words of a case file."""
+    data: Json = {"tag": case.loop.tag, "form": found.form}
+    controller = found.controller
+    none = Figure(None, f"the {found.form} form cannot hold these settings")
+    if controller is None:
+        for key in _CONVERTED:
+            _put(data, key, none)
+    else:
+        said = _settings_data(controller)
+        data |= {key: said[key] for key in _CONVERTED if key in said}
+        data["gain"] = float(controller.gain_value)
+    filter_time = none if controller is None else Figure(controller.gains().filter_time)
+    _put(data, "integral_s", none if controller is None else _integral_s(controller))
+    _put(data, "derivative_s", none if controller is None else _derivative_s(controller))
+    _put(data, "derivative_filter_s", filter_time)
+    data["exact"] = found.exact
+    data["reason"] = found.reason
+    data["notes"] = _noted(found.notes)
+    data["units"] = {**units, "gain": "%/%"}
+    return data
+
+
+_CONVERTED: Final = (
+    "gain",
+    "proportional_band",
+    "integral",
+    "derivative",
+    "derivative_filter",
+    "setpoint_weight",
+    "derivative_on",
+)
+"""Settings that `convert` answers with, as the case file spells them."""
+
+
+def convert_text(case: Case, found: Conversion, width: int) -> str:
+    """The conversion for people."""
+    lines = [*_title(case, width), f"In the {found.form} form"]
+    controller = found.controller
+    if controller is None:
+        rows: Rows = [("refused", found.reason)]
+        return "\n".join([*lines, *_table(rows, width)])
+    if controller.gain is None:
+        rows = [("proportional band", text(controller.proportional_band, "%", _TYPED))]
+    else:
+        rows = [("gain", text(controller.gain, "", _TYPED))]
+    rows += [
+        ("integral", _amount(controller.integral, _TYPED)),
+        ("derivative", _amount(controller.derivative, _TYPED)),
+    ]
+    if controller.derivative is not None:
+        rows.append(("derivative filter", _filter_words(controller)))
+        rows.append(("derivative on", controller.derivative_on))
+    rows.append(("setpoint weight", text(controller.setpoint_weight, "", _TYPED)))
+    same = "yes, the same path from PV to OP" if found.exact else "no, only nearly"
+    rows.append(("exact", same))
+    return "\n".join([*lines, *_table(rows, width), *_notes(found.notes, width), *_handover(width)])
+
+
+_TYPED: Final = 6
+"""Digits of settings that are to be typed into a controller and stay the same controller."""
+
+
+def _filter_words(controller: Controller) -> str:
+    """The derivative filter as a time and as N, since some controllers take one and some the other.
+
+    For a controller with a derivative part.
+    """
+    filter_time = controller.gains().filter_time
+    if not filter_time:
+        return "none"
+    derivative_s = _derivative_s(controller).value
+    share = "" if derivative_s is None else f", N = {text(derivative_s / filter_time, '', _TYPED)}"
+    return f"{text(filter_time, 's', _TYPED)}{share}"
 
 
 # --- check ----------------------------------------------------------------------------------------

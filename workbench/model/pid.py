@@ -271,7 +271,8 @@ def _series(settings: Controller) -> Gains:
     tf = _filter_time(settings, td)
     per_ti = 1.0 / settings.integral.seconds if settings.integral else 0.0
     kp = 1.0 + (td - tf) * per_ti
-    kd = td - tf * kp
+    # Equal to td - tf kp, and exactly 0 where the filter cancels one of the two times.
+    kd = (td - tf) * (1.0 - tf * per_ti)
     on_error = settings.derivative_on == "error"
     b_kp = b + (td - tf) * per_ti if on_error else b
     c_kd = b * td - tf * b_kp if on_error else 0.0
