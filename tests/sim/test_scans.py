@@ -19,7 +19,9 @@ from workbench.model.transfer import TransferFunction
 from workbench.sim.controller import Algorithm
 from workbench.sim.loop import Trace, simulate
 from workbench.sim.process import process
-from workbench.sim.scans import Clock, Held, Step, run, step_through
+from workbench.sim.leaps import run
+from workbench.sim.scans import Clock, Held, step_through
+from workbench.sim.signals import Step
 from workbench.sim.scenario import Events
 
 

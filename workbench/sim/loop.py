@@ -9,7 +9,6 @@ from __future__ import annotations
 
 import math
 from dataclasses import dataclass, replace
-from itertools import pairwise
 from typing import Final
 
 import numpy as np
@@ -20,8 +19,10 @@ from workbench.model.feedback import Loop
 from workbench.sim import analogue
 from workbench.sim.controller import Algorithm
 from workbench.sim.process import Process, process
-from workbench.sim.scans import Clock, Course, Held, Step, first_scan, run, step_through
+from workbench.sim.leaps import follow, run
+from workbench.sim.scans import Clock, Course, Held, Run, inputs
 from workbench.sim.scenario import Events
+from workbench.sim.signals import Signal, Step
 
 Array = NDArray[np.float64]
 
@@ -90,15 +91,12 @@ def simulate(loop: Loop, events: Events) -> Trace:
     noise = None
     if events.noise:
         noise = np.random.default_rng(events.seed).normal(0.0, events.noise, scans)
-    course = run(
-        held,
-        Algorithm.of(loop, loop.scan),
-        scans,
-        Step(events.setpoint_step, events.setpoint_at),
-        Step(events.load_step, events.load_at),
-        None if noise is None else noise.tolist(),
+    given = inputs(
+        held, scans, Step(events.setpoint_step, events.setpoint_at), _load(events), noise
     )
-    return _sampled_trace(held, course, events, noise)
+    whole_run = Run(held, Algorithm.of(loop, loop.scan), given, scans)
+    follow(whole_run, scans)
+    return _sampled_trace(held, whole_run.course(), events)
 
 
 def _scans(until: float, clock: Clock) -> int:
@@ -114,32 +112,36 @@ def _scans(until: float, clock: Clock) -> int:
 # --- rows of a sampled loop ----------------------------------------------------------------------
 
 
-def _sampled_trace(held: Held, course: Course, events: Events, noise: Array | None) -> Trace:
-    clock, load = held.clock, Step(events.load_step, events.load_at)
+def _sampled_trace(held: Held, course: Course, events: Events) -> Trace:
+    clock, load = held.clock, _load(events)
+    scans = len(course.pv)
     # Rows at the same places in every scan, and single ones where something happens in between.
     offsets = _offsets(held, events.until)
-    times, numbers, pv = [], [], []
-    scans = len(course.pv)
-    every = np.arange(scans)
-    for offset in offsets:
-        times.append(every * clock.scan + offset)
-        numbers.append(every)
-        pv.append(_pv(held, course, load, offset))
-    for scan, rest in sorted({clock.place(time) for time in _between(held, events)}):
-        if scan < scans:
-            times.append(np.array([scan * clock.scan + rest]))
-            numbers.append(np.array([scan]))
-            pv.append(_pv(held, course, load, rest)[scan : scan + 1])
-    time, number = np.concatenate(times), np.concatenate(numbers)
-    order = np.argsort(time, kind="stable")
-    same = np.diff(time[order], prepend=-1.0) <= 1e-9 * clock.scan
-    order = order[(time[order] <= events.until + 1e-9 * clock.scan) & ~same]
-    time, number, values = time[order], number[order], np.concatenate(pv)[order]
-    measured = values if noise is None else values + noise[number]
+    time: Array = np.add.outer(np.arange(scans) * clock.scan, offsets).ravel()
+    values = np.column_stack([_pv(held, course, load, offset) for offset in offsets]).ravel()
+    number = np.repeat(np.arange(scans), len(offsets))
+    single = sorted({clock.place(instant) for instant in _between(held, events)})
+    single = [(scan, rest) for scan, rest in single if scan < scans and rest not in offsets]
+    for scan, rest in single:
+        instant = scan * clock.scan + rest
+        place = int(np.searchsorted(time, instant))
+        time = _with(time, place, instant)
+        values = _with(values, place, _pv_once(held, course, load, scan, rest))
+        number = np.concatenate([number[:place], [scan], number[place:]])
+    if time[-1] > events.until + 1e-9 * clock.scan:
+        last = int(np.searchsorted(time, events.until + 1e-9 * clock.scan))
+        time, values, number = time[:last], values[:last], number[:last]
+    measured = values
+    if course.measured is not course.pv:
+        measured = values + (course.measured - course.pv)[number]
     setpoint = np.where(time >= events.setpoint_at - 1e-9 * clock.scan, events.setpoint_step, 0.0)
     return Trace(
         time, setpoint, values, _in_force(held, course, time, number), measured, course.diverged
     )
+
+
+def _with(values: Array, place: int, value: float) -> Array:
+    return np.concatenate([values[:place], [value], values[place:]])
 
 
 def _offsets(held: Held, until: float) -> list[float]:
@@ -155,7 +157,9 @@ def _offsets(held: Held, until: float) -> list[float]:
 def _shortest_lag(whole: Process) -> float:
     if not len(whole.c):
         return math.inf
-    rate = float(np.abs(np.linalg.eigvals(whole.a)).max())
+    is_triangular = not np.triu(whole.a, 1).any()
+    rates = np.diag(whole.a) if is_triangular else np.linalg.eigvals(whole.a)
+    rate = float(np.abs(rates).max())
     return 1.0 / rate if rate else math.inf
 
 
@@ -174,30 +178,51 @@ def _between(held: Held, events: Events) -> list[float]:
     return [time for time in found if time <= events.until]
 
 
-def _pv(held: Held, course: Course, load: Step, offset: float) -> Array:
-    """PV [%] at `offset` [s] after every scan (n_scans,)."""
+def _weights(held: Held, offset: float) -> tuple[Array, dict[int, float]]:
+    """PV at `offset` [s] after a scan: weights on the state and on the outputs of scans back."""
     part, c = held.over(offset), held.process.c
-    pv = course.states @ (c @ part.phi)
     weights = dict(part.weights)
     for back, tap in part.taps.items():
         weights[back] = weights.get(back, 0.0) + float(c @ tap)
+    return c @ part.phi, weights
+
+
+def _pv(held: Held, course: Course, load: Signal, offset: float) -> Array:
+    """PV [%] at `offset` [s] after every scan (n_scans,)."""
+    if offset == held.clock.lead:
+        return course.pv
+    row, weights = _weights(held, offset)
+    pv = course.states @ row
     for back, weight in weights.items():
-        pv[back:] += weight * course.outputs[: len(pv) - back]
-    if load.size:
-        reached = {scan for whole, _ in held.arrivals(load) for scan in (whole, whole + 1)}
-        for scan, following in pairwise([*sorted(reached), len(pv)]):
-            state, direct = held.upset(load, scan, offset)
-            pv[scan:following] += float(c @ state) + direct
-    return pv
+        pv[back:] += weight * course.acting[: max(0, len(pv) - back)]
+    state, direct = held.upset(load, len(pv), offset)
+    return np.asarray(pv + state @ held.process.c + direct, np.float64)
+
+
+def _pv_once(held: Held, course: Course, load: Signal, scan: int, offset: float) -> float:
+    """PV [%] at `offset` [s] after one scan."""
+    row, weights = _weights(held, offset)
+    pv = float(course.states[scan] @ row)
+    for back, weight in weights.items():
+        if scan >= back:
+            pv += weight * float(course.acting[scan - back])
+    state, direct = held.upset(load, scan + 1, offset)
+    return pv + float(state[-1] @ held.process.c) + float(direct[-1])
 
 
 def _in_force(held: Held, course: Course, time: Array, number: NDArray[np.signedinteger]) -> Array:
     """The output in force at each row."""
     clock = held.clock
     whole, rest = clock.place(clock.computing_delay)
+    if not whole and not rest:
+        return course.outputs[number]
     late = time - number * clock.scan < rest - 1e-9 * clock.scan
     computed = number - whole - late
     return np.where(computed >= 0, course.outputs[np.maximum(computed, 0)], 0.0)
+
+
+def _load(events: Events) -> Signal:
+    return (Step(events.load_step, events.load_at),)
 
 
 # --- rows of an analogue loop --------------------------------------------------------------------
@@ -284,15 +309,15 @@ def _in_fine_steps(loop: Loop, whole: Process, events: Events) -> Trace:
     setpoint = Step(events.setpoint_step, events.setpoint_at)
     load = Step(events.load_step, events.load_at)
     last, rest = clock.place(events.until)
-    course = step_through(held, _corrected(loop, clock.scan), last + 1, setpoint, load)
+    course = run(held, _corrected(loop, clock.scan), last + 1, setpoint, load)
     keep = _rows_to_keep(course, held, events)
     time: Array = np.asarray(keep * clock.scan, np.float64)
-    pv, output = _pv(held, course, load, 0.0)[keep], course.outputs[keep]
+    pv, output = _pv(held, course, (load,), 0.0)[keep], course.outputs[keep]
     if rest and not course.diverged:
         time = np.append(time, events.until)
-        pv = np.append(pv, _pv(held, course, load, rest)[-1])
+        pv = np.append(pv, _pv_once(held, course, (load,), len(course.pv) - 1, rest))
         output = np.append(output, output[-1])
-    seen = first_scan(events.setpoint_at, clock) * clock.scan
+    seen = clock.first_scan(events.setpoint_at) * clock.scan
     return Trace(
         time, np.where(time >= seen, events.setpoint_step, 0.0), pv, output, pv, course.diverged
     )
@@ -333,7 +358,7 @@ def _rows_to_keep(course: Course, held: Held, events: Events) -> NDArray[np.intp
     stride = max(1, count // _ROWS)
     corner = np.abs(np.diff(course.outputs, n=2, prepend=[0.0, 0.0]))
     sharp = np.flatnonzero(corner > 1e-3 * max(float(np.abs(course.outputs).max()), 1e-300))
-    marks = [first_scan(t, held.clock) for t in (events.setpoint_at, events.load_at)]
+    marks = [held.clock.first_scan(t) for t in (events.setpoint_at, events.load_at)]
     near = np.concatenate([sharp - 1, sharp, marks, np.array(marks) - 1]).astype(np.intp)
     near = near[(near >= 0) & (near < count)]
     return np.unique(np.concatenate([np.arange(0, count, stride), near, [count - 1]]))

@@ -1,0 +1,487 @@
+"""The sampled loop in leaps: whole stretches at once wherever it is linear.
+
+Free of its limits the loop is s' = S s over one scan, s being the plant's state, the parts of the
+controller and the outputs still on their way; held at a limit, or moving at its fastest, it is
+another such loop, as the output then takes its next value from the one before.  A stretch is worked
+out by powers of S: the first 64 of them by doubling, then every 64th state, then all of it as one
+product.  It counts up to the first scan at which the condition of its mode fails; that scan is
+stepped, and the mode it ends in is the next one tried.
+
+What comes from far back - outputs on their way through a long dead time - is known beforehand for
+as many scans as it is far, and so it enters as a given input instead of making S large; so do noise
+and signals from outside that change at every scan.
+"""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Sequence
+from dataclasses import dataclass
+from enum import Enum
+from functools import cached_property
+from typing import Final
+
+import numpy as np
+from numpy.typing import NDArray
+
+from workbench.sim.controller import Algorithm
+from workbench.sim.scans import BOUND, Course, Held, Run, inputs
+from workbench.sim.signals import Step
+
+Array = NDArray[np.float64]
+
+_NEAR: Final = 60
+"""Scans of dead time that a state is kept for; more are given inputs."""
+_BLOCK: Final = 64
+"""Scans whose powers of S are kept; with given inputs, `_GIVEN_BLOCK`."""
+_GIVEN_BLOCK: Final = 50
+_LEAST: Final = 12
+"""Fewer scans than this are stepped."""
+_LARGEST: Final = 1e100
+"""Powers of an unstable loop are not taken further."""
+
+
+class Mode(Enum):
+    """What the output does, scan by scan."""
+
+    FREE = "what the algorithm wants"
+    SLIDING = "the same, while the integral would drive it into a limit and is not advanced"
+    HELD = "stands at a limit or moves at its fastest"
+    FROZEN = "the same, and the integral is not advanced"
+
+
+def run(
+    held: Held,
+    algorithm: Algorithm,
+    scans: int,
+    setpoint: Step,
+    load: Step,
+    noise: Sequence[float] | None = None,
+) -> Course:
+    """The course of the loop over a number of scans, from rest."""
+    given = inputs(held, scans, setpoint, (load,), None if noise is None else np.array(noise))
+    whole = Run(held, algorithm, given, scans)
+    follow(whole, scans)
+    return whole.course()
+
+
+def follow(whole: Run, end: int) -> None:
+    """Go on to scan `end` in automatic: in leaps where the loop is linear, else scan by scan."""
+    step = whole.algorithm.start(whole.memory)
+    if whole.algorithm.reshapes or whole.through is not None or whole.received is not None:
+        whole.step(end, step)
+        return
+    leaps = Leaps(whole)
+    cuts = [end] if whole.inputs.varying else [cut for cut in whole.inputs.cuts if cut < end]
+    cuts = sorted({*cuts, end})
+    by_hand, place = 1, 0
+    while whole.at < end and not whole.diverged:
+        while cuts[place] <= whole.at:
+            place += 1
+        stop = cuts[place]
+        while stop - whole.at < _LEAST and place + 1 < len(cuts):
+            if cuts[place + 1] - stop >= _LEAST:
+                break
+            place += 1
+            stop = cuts[place]
+        if stop - whole.at < 2 * _LEAST:
+            whole.step(stop, step)
+            continue
+        gone = leaps.leap(stop)
+        if whole.at == stop or whole.diverged or gone >= 4 * _BLOCK:
+            by_hand = 1
+        if whole.at < stop and not whole.diverged:
+            # Where the modes change quickly, more and more is stepped before the next try.
+            whole.step(min(stop, whole.at + by_hand), step)
+            by_hand = min(2 * by_hand, 4 * _BLOCK) if gone < _BLOCK else 1
+
+
+@dataclass(frozen=True)
+class _Layout:
+    """Where things stand among the columns of the loop over one scan."""
+
+    n: int
+    """States of the plant; filtered PV, I and D follow them."""
+    near: int
+    """Outputs kept, the newest first."""
+    far: tuple[int, ...]
+    """Scans back of the outputs that are given."""
+
+    @property
+    def newest(self) -> int:
+        return self.n + 3
+
+    @property
+    def slope(self) -> int:
+        """By how much a held output moves in a scan."""
+        return self.newest + self.near
+
+    @property
+    def setpoint(self) -> int:
+        """The setpoint; what the upset adds to PV and to the state follows it."""
+        return self.slope + 1
+
+    @property
+    def change(self) -> int:
+        """Of the setpoint since the scan before."""
+        return self.setpoint + 2 + self.n
+
+    @property
+    def size(self) -> int:
+        return self.change + 1 + len(self.far)
+
+
+class Leaps:
+    """Leaps of one run; it goes on from wherever the run stands."""
+
+    def __init__(self, whole: Run) -> None:
+        self.run = whole
+        self.varying = whole.inputs.varying
+        taps = whole.held.over(whole.held.clock.scan).taps
+        backs = {*taps, *whole.weights}
+        self.at = _Layout(
+            len(whole.x),
+            max([1, *(back for back in backs if back <= _NEAR)]),
+            tuple(sorted(back for back in backs if back > _NEAR)),
+        )
+        self.longest = min(self.at.far, default=whole.scans)
+        self._powers: dict[Mode, _Powers] = {}
+
+    def leap(self, stop: int) -> int:
+        """Go on in the present mode while it lasts, at most to `stop`; the scans it went."""
+        whole, start = self.run, self.run.at
+        mode, slope = self._mode()
+        reach = _BLOCK - 1
+        while whole.at < stop and not whole.diverged:
+            wanted = min(stop - whole.at, self.longest)
+            if whole.algorithm.is_limited:
+                wanted = min(wanted, reach)
+                reach = 4 * reach + 3
+            if self._stretch(mode, slope, wanted) < wanted:
+                break
+        return whole.at - start
+
+    def _mode(self) -> tuple[Mode, float]:
+        """What the latest scan did, and the move of a held output [%]."""
+        whole, algorithm, m = self.run, self.run.algorithm, self.run.memory
+        if not algorithm.is_limited or not whole.at:
+            return Mode.FREE, 0.0
+        before = float(whole.acting[whole.back + whole.at - 2]) if whole.at > 1 else 0.0
+        moved = m.output - algorithm.sign * before
+        low, high = algorithm.bounds()
+        if m.output in (low, high):
+            side, slope = (1.0 if m.output == high else -1.0), 0.0
+        elif algorithm.move - abs(moved) <= 1e-12 * abs(moved):
+            side = math.copysign(1.0, moved)
+            slope = side * algorithm.move
+        else:
+            gained = self._gained()
+            stuck = m.proportional + m.derivative + m.integral + gained
+            beyond = stuck > high if gained > 0.0 else stuck < low
+            return (Mode.SLIDING if algorithm.conditional and beyond else Mode.FREE), 0.0
+        frozen = algorithm.conditional and side * self._gained() > 0.0
+        return (Mode.FROZEN if frozen else Mode.HELD), slope
+
+    def _gained(self) -> float:
+        whole = self.run
+        setpoint = float(whole.inputs.setpoint[whole.at - 1])
+        return whole.algorithm.advance * (setpoint - whole.memory.filtered)
+
+    # --- one stretch ---
+
+    def _stretch(self, mode: Mode, slope: float, wanted: int) -> int:
+        """Go on in a mode for at most `wanted` scans; how many it lasted."""
+        whole, at, start = self.run, self.at, self.run.at
+        powers = self._of(mode)
+        state = self._state(slope)
+        if self.varying or at.far:
+            rows, blocks = powers.driven(state, self._given(wanted), wanted)
+        else:
+            rows, blocks = powers.alone(state, wanted)
+        wanted = min(wanted, len(rows[0]))
+        wanted_output, gained = rows[at.n + 1][:wanted], rows[at.n + 2][:wanted]
+        output = self._output(mode, slope, wanted_output, gained)
+        if whole.algorithm.is_limited:
+            wanted = self._lasting(mode, slope, output, wanted_output, gained)
+        pv = rows[at.n][:wanted] + whole.inputs.direct[start : start + wanted]
+        if not (pv.max(initial=0.0) <= BOUND and pv.min(initial=0.0) >= -BOUND):
+            wanted = int(np.argmin(np.abs(pv) <= BOUND))
+            whole.diverged = True
+        whole.states[start : start + wanted] = rows[: at.n, :wanted].T
+        whole.pv[start : start + wanted] = pv[:wanted]
+        if whole.inputs.noise is not None:
+            noise = whole.inputs.noise[start : start + wanted]
+            whole.measured[start : start + wanted] = pv[:wanted] + noise
+        placed = start + whole.back
+        np.multiply(
+            output[:wanted], whole.algorithm.sign, out=whole.acting[placed : placed + wanted]
+        )
+        whole.at += wanted
+        if wanted:
+            self._remember(powers.after(blocks, rows, wanted))
+        return wanted
+
+    def _output(self, mode: Mode, slope: float, wanted: Array, gained: Array) -> Array:
+        if mode is Mode.FREE:
+            return wanted
+        if mode is Mode.SLIDING:
+            return np.asarray(wanted - gained, np.float64)
+        return self.run.memory.output + slope * np.arange(1.0, len(wanted) + 1.0)
+
+    def _lasting(
+        self, mode: Mode, slope: float, output: Array, wanted: Array, gained: Array
+    ) -> int:
+        """For how many scans the condition of a mode holds."""
+        algorithm, first = self.run.algorithm, self.run.memory.output
+        low, high = algorithm.bounds()
+        kept = (output >= low) & (output <= high)
+        if mode in (Mode.FREE, Mode.SLIDING):
+            before = np.concatenate([[first], output[:-1]])
+            lowest, highest = low, high
+            if math.isfinite(algorithm.move):
+                lowest = np.maximum(low, before - algorithm.move)
+                highest = np.minimum(high, before + algorithm.move)
+                kept &= (output >= lowest) & (output <= highest)
+            if mode is Mode.SLIDING:
+                kept &= np.where(gained > 0.0, wanted > highest, wanted < lowest)
+        else:
+            side = math.copysign(1.0, slope) if slope else 1.0 if first == high else -1.0
+            kept &= side * (wanted - output) > 0.0
+            if mode is Mode.FROZEN:
+                kept &= (side * gained > 0.0) & (side * (wanted - gained - output) >= 0.0)
+            elif algorithm.conditional:
+                kept &= side * gained <= 0.0
+        return len(kept) if kept.all() else int(np.argmin(kept))
+
+    def _state(self, slope: float) -> Array:
+        whole, at, m = self.run, self.at, self.run.memory
+        state = np.zeros(at.setpoint if self.varying else at.change)
+        state[: at.n] = whole.x
+        state[at.n : at.newest] = m.filtered, m.integral, m.derivative
+        placed = whole.back + whole.at
+        state[at.newest : at.slope] = whole.acting[placed - at.near : placed][::-1]
+        state[at.slope] = whole.algorithm.sign * slope
+        if not self.varying:
+            given, k = whole.inputs, whole.at
+            state[at.setpoint] = given.setpoint[k]
+            state[at.setpoint + 1] = given.direct[k]
+            state[at.setpoint + 2 :] = given.state[k]
+        return state
+
+    def _given(self, count: int) -> Array:
+        """What is given to each of the next scans, (count, inputs)."""
+        whole, at, k = self.run, self.at, self.run.at
+        columns = []
+        if self.varying:
+            given = whole.inputs
+            setpoint = given.setpoint[k : k + count]
+            direct = given.direct[k : k + count]
+            if given.noise is not None:
+                direct = direct + given.noise[k : k + count]
+            last = given.setpoint[k - 1] if k else 0.0
+            columns = [setpoint, direct, *given.state[k : k + count].T]
+            columns.append(np.diff(setpoint, prepend=last))
+        placed = whole.back + k
+        columns += [whole.acting[placed - far : placed - far + count] for far in at.far]
+        return np.column_stack(columns)
+
+    def _remember(self, core: Array) -> None:
+        """Leave the run as a step would have left it; `core` is the plant's state, then yf, I, D."""
+        whole, n, algorithm = self.run, self.at.n, self.run.algorithm
+        whole.x = core[:n]
+        m, setpoint = whole.memory, float(whole.inputs.setpoint[whole.at - 1])
+        m.filtered, m.integral, m.derivative = map(float, core[n : n + 3])
+        m.seen = algorithm.derivative_weight * setpoint - m.filtered
+        weighted = algorithm.setpoint_weight * setpoint - m.filtered
+        m.proportional = algorithm.proportional * weighted
+        m.output = algorithm.sign * float(whole.acting[whole.back + whole.at - 1])
+
+    # --- the loop over one scan ---
+
+    def _of(self, mode: Mode) -> _Powers:
+        if mode not in self._powers:
+            over_scan, seen = self._one_scan(mode)
+            kept = self.at.setpoint if self.varying else self.at.change
+            given = [*range(kept, self.at.change + 1)] if self.varying else []
+            given += range(self.at.change + 1, self.at.size)
+            block = _GIVEN_BLOCK if given else _BLOCK
+            self._powers[mode] = _Powers(
+                over_scan[:kept, :kept],
+                over_scan[:kept, given],
+                seen[:, :kept],
+                seen[:, given],
+                block,
+                self.at.n,
+            )
+        return self._powers[mode]
+
+    def _one_scan(self, mode: Mode) -> tuple[Array, Array]:
+        """The next state, and what is read of a scan (PV, then v and what I gains), as rows."""
+        at, a, n = self.at, self.run.algorithm, self.at.n
+        unit = np.eye(at.size)
+        y = unit[at.setpoint + 1].copy()
+        y[:n] = self.run.read
+        for back, weight in self.run.weights.items():
+            y[self._place(back)] += weight
+        setpoint, filtered = unit[at.setpoint], unit[n]
+        f = a.smooth * y
+        f[n] += 1.0 - a.smooth
+        gained = a.advance * (setpoint - f)
+        derivative = a.kick * (filtered - f)
+        derivative[n + 2] += a.keep
+        derivative[at.change] += a.kick * a.derivative_weight
+        wanted = -a.proportional * f + derivative + gained
+        wanted[at.setpoint] += a.proportional * a.setpoint_weight
+        wanted[n + 1] += 1.0
+        output = self._next_output(mode, wanted, gained)
+        following = unit[: at.change].copy()
+        following[: at.newest] = 0.0
+        over = self.run.held.over(self.run.held.clock.scan)
+        following[:n, :n] = over.phi
+        following[:n, at.setpoint + 2 : at.change] = np.eye(n)
+        for back, tap in over.taps.items():
+            if back:
+                following[:n, self._place(back)] += tap
+            else:
+                following[:n] += tap[:, np.newaxis] * output
+        following[n], following[n + 2] = f, derivative
+        following[n + 1, n + 1] = 1.0
+        if mode in (Mode.FREE, Mode.HELD):
+            following[n + 1] += gained
+        if mode is Mode.HELD and a.release:
+            following[n + 1] += a.release * (a.sign * output - wanted)
+        following[at.newest] = output
+        following[at.newest + 1 : at.slope] = unit[at.newest : at.slope - 1]
+        # What the upset adds to PV at once, and the noise with it, is not read but added later.
+        y[at.setpoint + 1] = 0.0
+        return following, np.vstack([y, wanted, gained])
+
+    def _next_output(self, mode: Mode, wanted: Array, gained: Array) -> Array:
+        sign = self.run.algorithm.sign
+        if mode is Mode.FREE:
+            return sign * wanted
+        if mode is Mode.SLIDING:
+            return sign * (wanted - gained)
+        output = np.zeros(self.at.size)
+        output[[self.at.newest, self.at.slope]] = 1.0
+        return output
+
+    def _place(self, back: int) -> int:
+        """The column of an output of scans back, 1 or more."""
+        if back <= self.at.near:
+            return self.at.newest + back - 1
+        return self.at.change + 1 + self.at.far.index(back)
+
+
+class _Powers:
+    """s' = A s + B w and the rows C s + D w, many scans at once."""
+
+    def __init__(self, a: Array, b: Array, c: Array, d: Array, block: int, n: int) -> None:
+        self.a, self.b, self.block, self.n = np.ascontiguousarray(a), b, block, n
+        size = len(a)
+        # Read at each scan: the plant's state, the rows, and with given inputs yf, I and D.
+        unit = np.eye(size)
+        core = unit[n : n + 3] if b.shape[1] else unit[:0]
+        self.read = np.concatenate([unit[:n], c, core])
+        self.direct = np.zeros((len(self.read), b.shape[1]))
+        self.direct[n : n + len(c)] = d
+        ahead = np.empty((len(self.read), block, size))
+        ahead[:, 0] = self.read
+        self.steps = [self.a]
+        done = 1
+        while done < block:
+            more = min(done, block - done)
+            np.matmul(ahead[:, :more], self.steps[-1], out=ahead[:, done : done + more])
+            done += more
+            self.steps.append(self.steps[-1] @ self.steps[-1])
+        self.ahead = ahead
+        self.wide = ahead.reshape(-1, size).T
+        self.over = [self._over_block()]
+
+    def _over_block(self) -> Array:
+        """S to the power of a block."""
+        whole = np.eye(len(self.a))
+        for k, power in enumerate(self.steps):
+            if self.block >> k & 1:
+                whole = whole @ power
+        return whole
+
+    def alone(self, state: Array, wanted: int) -> tuple[Array, Array]:
+        """The rows (rows, scans) without given inputs, and the state at every block."""
+        count = wanted // self.block + 1
+        blocks = np.empty((count, len(state)))
+        blocks[0] = state
+        done = 1
+        for k in range(count.bit_length()):
+            if done >= count:
+                break
+            if k == len(self.over):
+                self.over.append(self.over[-1] @ self.over[-1])
+            if not np.abs(self.over[k]).max() < _LARGEST:
+                break
+            more = min(done, count - done)
+            np.matmul(blocks[:more], self.over[k].T, out=blocks[done : done + more])
+            done += more
+        blocks = blocks[:done]
+        found = blocks @ self.wide
+        return self._in_order(found)[:, :wanted], blocks
+
+    def _in_order(self, found: Array) -> Array:
+        rows = found.reshape(len(found), len(self.read), self.block)
+        return rows.transpose(1, 0, 2).reshape(len(self.read), -1)
+
+    def driven(self, state: Array, given: Array, wanted: int) -> tuple[Array, Array]:
+        """The same with given inputs (wanted, inputs); one more scan is read than asked for."""
+        inputs, count = given.shape[1], wanted // self.block + 1
+        padded = np.zeros((count, self.block * inputs))
+        padded.reshape(-1)[: given.size] = given.reshape(-1)
+        pushed = padded @ self._pushed
+        blocks = np.empty((count, len(state)))
+        blocks[0] = state
+        across = self.over[0].T
+        for k in range(count - 1):
+            blocks[k + 1] = blocks[k] @ across + pushed[k]
+        found = blocks @ self.wide + padded @ self._answers
+        return self._in_order(found)[:, : wanted + 1], blocks
+
+    @cached_property
+    def _pushed(self) -> Array:
+        """The inputs of a block -> what they add to the state at its end."""
+        columns = np.empty((self.block, len(self.a), self.b.shape[1]))
+        columns[0] = self.b
+        done = 1
+        for power in self.steps:
+            if done >= self.block:
+                break
+            more = min(done, self.block - done)
+            np.matmul(power, columns[:more], out=columns[done : done + more])
+            done += more
+        return columns[::-1].transpose(0, 2, 1).reshape(-1, len(self.a))
+
+    @cached_property
+    def _answers(self) -> Array:
+        """The inputs of a block -> what they add to the rows read in it."""
+        block, inputs = self.block, self.b.shape[1]
+        later = self.ahead @ self.b
+        answers = np.zeros((len(self.read), 2 * block, inputs))
+        answers[:, block] = self.direct
+        answers[:, block + 1 :] = later[:, :-1]
+        scan = np.arange(block)
+        lag = scan[:, np.newaxis] - scan + block
+        # (rows, read at, given at, inputs) -> (given at, inputs, rows, read at)
+        spread = answers[:, lag]
+        return spread.transpose(2, 3, 0, 1).reshape(block * inputs, -1)
+
+    def after(self, blocks: Array, rows: Array, scans: int) -> Array:
+        """The plant's state, yf, I and D after a number of scans of a stretch."""
+        if self.b.shape[1]:
+            return np.concatenate([rows[: self.n, scans], rows[-3:, scans]])
+        whole, rest = divmod(scans, self.block)
+        if whole >= len(blocks):
+            state = self.over[0] @ blocks[-1]
+        else:
+            state = blocks[whole]
+        for k, power in enumerate(self.steps):
+            if rest >> k & 1:
+                state = power @ state
+        return state[: self.n + 3].copy()
