@@ -37,6 +37,13 @@ class Numbers:
     upset: float = 1.0
     low: float = -math.inf
     high: float = math.inf
+    weights: tuple[float, float] = (1.0, 0.0)
+    """Of the setpoint in the proportional and in the derivative part."""
+
+    def outside(self) -> tuple[list[float], list[float]]:
+        """Setpoint and upset at every scan."""
+        later = self.scans - self.upset_at
+        return [self.setpoint] * self.scans, [0.0] * self.upset_at + [self.upset] * later
 
     def modes(self) -> tuple[int, tuple[float, float, float], tuple[float, float, float]]:
         """Whole scans of dead time, and for each lag what it keeps and what it takes of the output
@@ -48,85 +55,91 @@ class Numbers:
         for lag, other in ((first, second), (second, first)):
             size = self.gain * lag / (lag - other)
             late = math.exp(-(1.0 - part) / lag)
-            found.append((math.exp(-1.0 / lag), size * (1 - late), size * (late - math.exp(-1.0 / lag))))
+            found.append(
+                (math.exp(-1.0 / lag), size * (1 - late), size * (late - math.exp(-1.0 / lag)))
+            )
         return whole, found[0], found[1]
 
 
-def plain(n: Numbers) -> list[float]:
-    """PV at every scan, without limits: as lean as a loop in plain Python gets."""
+def plain(n: Numbers) -> tuple[list[float], list[float]]:
+    """PV and OP at every scan, without limits: as lean as a loop in plain Python gets."""
     whole, (a1, b1, c1), (a2, b2, c2) = n.modes()
     kp, ki, kept, kick = n.kp, n.ki, n.tf / (n.tf + 1.0), n.kd / (n.tf + 1.0)
-    r, upset, upset_at = n.setpoint, 0.0, n.upset_at
+    b, c = n.weights
     x1 = x2 = integral = derivative = last = older = 0.0
     moved = [0.0] * whole
-    pv = []
-    keep, move = pv.append, moved.append
-    for k in range(n.scans):
+    pv: list[float] = []
+    op: list[float] = []
+    keep, put, move = pv.append, op.append, moved.append
+    for k, (r, upset) in enumerate(zip(*n.outside(), strict=True)):
         y = x1 + x2
         keep(y)
         integral += ki * (r - y)
-        derivative = kept * derivative + kick * (last - y)
-        last = y
-        if k == upset_at:
-            upset = n.upset
-        move(kp * (r - y) + integral + derivative + upset)
-        newer = moved[k]
-        x1 = a1 * x1 + b1 * newer + c1 * older
-        x2 = a2 * x2 + b2 * newer + c2 * older
-        older = newer
-    return pv
-
-
-def plain_limited(n: Numbers) -> list[float]:
-    """The same with limits on the output and conditional integration."""
-    whole, (a1, b1, c1), (a2, b2, c2) = n.modes()
-    kp, ki, kept, kick = n.kp, n.ki, n.tf / (n.tf + 1.0), n.kd / (n.tf + 1.0)
-    low, high = n.low, n.high
-    r, upset, upset_at = n.setpoint, 0.0, n.upset_at
-    x1 = x2 = integral = derivative = last = older = 0.0
-    moved = [0.0] * whole
-    pv = []
-    keep, move = pv.append, moved.append
-    for k in range(n.scans):
-        y = x1 + x2
-        keep(y)
-        gained = ki * (r - y)
-        derivative = kept * derivative + kick * (last - y)
-        last = y
-        u = kp * (r - y) + derivative + integral
-        if (u + gained > high) if gained > 0.0 else (u + gained < low):
-            u = high if u > high else low if u < low else u
-        else:
-            integral += gained
-            u += gained
-            u = high if u > high else low if u < low else u
-        if k == upset_at:
-            upset = n.upset
+        seen = c * r - y
+        derivative = kept * derivative + kick * (seen - last)
+        last = seen
+        u = kp * (b * r - y) + integral + derivative
+        put(u)
         move(u + upset)
         newer = moved[k]
         x1 = a1 * x1 + b1 * newer + c1 * older
         x2 = a2 * x2 + b2 * newer + c2 * older
         older = newer
-    return pv
+    return pv, op
+
+
+def plain_limited(n: Numbers) -> tuple[list[float], list[float]]:
+    """The same with limits on the output and conditional integration."""
+    whole, (a1, b1, c1), (a2, b2, c2) = n.modes()
+    kp, ki, kept, kick = n.kp, n.ki, n.tf / (n.tf + 1.0), n.kd / (n.tf + 1.0)
+    b, c = n.weights
+    low, high = n.low, n.high
+    x1 = x2 = integral = derivative = last = older = 0.0
+    moved = [0.0] * whole
+    pv: list[float] = []
+    op: list[float] = []
+    keep, put, move = pv.append, op.append, moved.append
+    for k, (r, upset) in enumerate(zip(*n.outside(), strict=True)):
+        y = x1 + x2
+        keep(y)
+        gained = ki * (r - y)
+        seen = c * r - y
+        derivative = kept * derivative + kick * (seen - last)
+        last = seen
+        u = kp * (b * r - y) + derivative + integral
+        if not ((u + gained > high) if gained > 0.0 else (u + gained < low)):
+            integral += gained
+            u += gained
+        u = high if u > high else low if u < low else u
+        put(u)
+        move(u + upset)
+        newer = moved[k]
+        x1 = a1 * x1 + b1 * newer + c1 * older
+        x2 = a2 * x2 + b2 * newer + c2 * older
+        older = newer
+    return pv, op
 
 
 _IN_C: Final = r"""
-#include <math.h>
-void loop(const double *p, int scans, int whole, int upset_at, double *moved, double *pv) {
+void loop(const double *p, int scans, int whole, const double *setpoint, const double *upset,
+          double *moved, double *pv, double *op) {
     double a1 = p[0], b1 = p[1], c1 = p[2], a2 = p[3], b2 = p[4], c2 = p[5];
-    double kp = p[6], ki = p[7], kept = p[8], kick = p[9], r = p[10], low = p[12], high = p[13];
-    double x1 = 0, x2 = 0, integral = 0, derivative = 0, last = 0, older = 0, upset = 0;
+    double kp = p[6], ki = p[7], kept = p[8], kick = p[9], b = p[10], c = p[11];
+    double low = p[12], high = p[13];
+    double x1 = 0, x2 = 0, integral = 0, derivative = 0, last = 0, older = 0;
     for (int k = 0; k < scans; k++) {
-        double y = x1 + x2, gained = ki * (r - y);
+        double r = setpoint[k], y = x1 + x2, gained = ki * (r - y), seen = c * r - y;
         pv[k] = y;
-        derivative = kept * derivative + kick * (last - y);
-        last = y;
-        double u = kp * (r - y) + derivative + integral;
-        int further = gained > 0 ? u + gained > high : u + gained < low;
-        if (!further) { integral += gained; u += gained; }
+        derivative = kept * derivative + kick * (seen - last);
+        last = seen;
+        double u = kp * (b * r - y) + derivative + integral;
+        if (!(gained > 0 ? u + gained > high : u + gained < low)) {
+            integral += gained;
+            u += gained;
+        }
         u = u > high ? high : u < low ? low : u;
-        if (k == upset_at) upset = p[11];
-        moved[k + whole] = u + upset;
+        op[k] = u;
+        moved[k + whole] = u + upset[k];
         double newer = moved[k];
         x1 = a1 * x1 + b1 * newer + c1 * older;
         x2 = a2 * x2 + b2 * newer + c2 * older;
@@ -152,11 +165,13 @@ def in_c(folder: Path) -> Callable[[Numbers], NDArray[np.float64]] | None:
     def run(n: Numbers) -> NDArray[np.float64]:
         whole, first, second = n.modes()
         kept, kick = n.tf / (n.tf + 1.0), n.kd / (n.tf + 1.0)
-        settings = [n.kp, n.ki, kept, kick, n.setpoint, n.upset, n.low, n.high]
-        numbers = np.array([*first, *second, *settings])
-        moved, pv = np.zeros(n.scans + whole), np.empty(n.scans)
-        pointers = [ctypes.c_void_p(a.ctypes.data) for a in (numbers, moved, pv)]
-        function(pointers[0], n.scans, whole, n.upset_at, pointers[1], pointers[2])
+        numbers = np.array([*first, *second, n.kp, n.ki, kept, kick, *n.weights, n.low, n.high])
+        setpoint, upset = (np.array(values) for values in n.outside())
+        moved, pv, op = np.zeros(n.scans + whole), np.empty(n.scans), np.empty(n.scans)
+        given, *rest = (
+            ctypes.c_void_p(a.ctypes.data) for a in (numbers, setpoint, upset, moved, pv, op)
+        )
+        function(given, n.scans, whole, *rest)
         return pv
 
     return run

@@ -73,6 +73,8 @@ class Memory:
     """P of the latest scan [%]."""
     output: float = 0.0
     """u [%]."""
+    frozen: bool = False
+    """The integral was not advanced in the latest scan."""
 
 
 @dataclass(frozen=True)
@@ -211,7 +213,8 @@ class Algorithm:
             m.seen = seen
             lowest, highest = max(low, m.output - move), min(high, m.output + move)
             wanted = m.proportional + m.derivative + m.integral + gained
-            if conditional and (wanted > highest if gained > 0.0 else wanted < lowest):
+            m.frozen = conditional and (wanted > highest if gained > 0.0 else wanted < lowest)
+            if m.frozen:
                 wanted -= gained
             else:
                 m.integral += gained

@@ -34,9 +34,11 @@ _NEAR: Final = 60
 """Scans of dead time that a state is kept for; more are given inputs."""
 _BLOCK: Final = 64
 """Scans whose powers of S are kept; with given inputs, `_GIVEN_BLOCK`."""
-_GIVEN_BLOCK: Final = 50
+_GIVEN_BLOCK: Final = 38
 _LEAST: Final = 12
 """Fewer scans than this are stepped."""
+_FEW: Final = 2
+"""Half the scans that are stepped where a mode ends."""
 _LARGEST: Final = 1e100
 """Powers of an unstable loop are not taken further."""
 
@@ -74,7 +76,7 @@ def follow(whole: Run, end: int) -> None:
     leaps = Leaps(whole)
     cuts = [end] if whole.inputs.varying else [cut for cut in whole.inputs.cuts if cut < end]
     cuts = sorted({*cuts, end})
-    by_hand, place = 1, 0
+    by_hand, place = _FEW, 0
     while whole.at < end and not whole.diverged:
         while cuts[place] <= whole.at:
             place += 1
@@ -88,12 +90,10 @@ def follow(whole: Run, end: int) -> None:
             whole.step(stop, step)
             continue
         gone = leaps.leap(stop)
-        if whole.at == stop or whole.diverged or gone >= 4 * _BLOCK:
-            by_hand = 1
+        # Where the modes change quickly, more and more is stepped before the next try.
+        by_hand = min(2 * by_hand, 4 * _BLOCK) if gone < _BLOCK else _FEW
         if whole.at < stop and not whole.diverged:
-            # Where the modes change quickly, more and more is stepped before the next try.
             whole.step(min(stop, whole.at + by_hand), step)
-            by_hand = min(2 * by_hand, 4 * _BLOCK) if gone < _BLOCK else 1
 
 
 @dataclass(frozen=True)
@@ -156,7 +156,7 @@ class Leaps:
             wanted = min(stop - whole.at, self.longest)
             if whole.algorithm.is_limited:
                 wanted = min(wanted, reach)
-                reach = 4 * reach + 3
+                reach = 16 * reach + 15
             if self._stretch(mode, slope, wanted) < wanted:
                 break
         return whole.at - start
@@ -168,24 +168,12 @@ class Leaps:
             return Mode.FREE, 0.0
         before = float(whole.acting[whole.back + whole.at - 2]) if whole.at > 1 else 0.0
         moved = m.output - algorithm.sign * before
-        low, high = algorithm.bounds()
-        if m.output in (low, high):
-            side, slope = (1.0 if m.output == high else -1.0), 0.0
-        elif algorithm.move - abs(moved) <= 1e-12 * abs(moved):
-            side = math.copysign(1.0, moved)
-            slope = side * algorithm.move
-        else:
-            gained = self._gained()
-            stuck = m.proportional + m.derivative + m.integral + gained
-            beyond = stuck > high if gained > 0.0 else stuck < low
-            return (Mode.SLIDING if algorithm.conditional and beyond else Mode.FREE), 0.0
-        frozen = algorithm.conditional and side * self._gained() > 0.0
-        return (Mode.FROZEN if frozen else Mode.HELD), slope
-
-    def _gained(self) -> float:
-        whole = self.run
-        setpoint = float(whole.inputs.setpoint[whole.at - 1])
-        return whole.algorithm.advance * (setpoint - whole.memory.filtered)
+        if m.output in algorithm.bounds():
+            return (Mode.FROZEN if m.frozen else Mode.HELD), 0.0
+        if algorithm.move - abs(moved) <= 1e-12 * abs(moved):
+            slope = math.copysign(algorithm.move, moved)
+            return (Mode.FROZEN if m.frozen else Mode.HELD), slope
+        return (Mode.SLIDING if m.frozen else Mode.FREE), 0.0
 
     # --- one stretch ---
 
@@ -198,16 +186,16 @@ class Leaps:
             rows, blocks = powers.driven(state, self._given(wanted), wanted)
         else:
             rows, blocks = powers.alone(state, wanted)
-        wanted = min(wanted, len(rows[0]))
-        wanted_output, gained = rows[at.n + 1][:wanted], rows[at.n + 2][:wanted]
-        output = self._output(mode, slope, wanted_output, gained)
+        wanted = min(wanted, rows.count)
+        output = self._output(mode, slope, rows, wanted)
         if whole.algorithm.is_limited:
-            wanted = self._lasting(mode, slope, output, wanted_output, gained)
-        pv = rows[at.n][:wanted] + whole.inputs.direct[start : start + wanted]
+            wanted = self._lasting(mode, slope, output, rows)
+        pv = rows.row(at.n, wanted) + whole.inputs.direct[start : start + wanted]
         if not (pv.max(initial=0.0) <= BOUND and pv.min(initial=0.0) >= -BOUND):
             wanted = int(np.argmin(np.abs(pv) <= BOUND))
             whole.diverged = True
-        whole.states[start : start + wanted] = rows[: at.n, :wanted].T
+        for i in range(at.n):
+            whole.states[i, start : start + wanted] = rows.row(i, wanted)
         whole.pv[start : start + wanted] = pv[:wanted]
         if whole.inputs.noise is not None:
             noise = whole.inputs.noise[start : start + wanted]
@@ -218,26 +206,27 @@ class Leaps:
         )
         whole.at += wanted
         if wanted:
-            self._remember(powers.after(blocks, rows, wanted))
+            self._remember(powers.after(blocks, rows, wanted), mode)
         return wanted
 
-    def _output(self, mode: Mode, slope: float, wanted: Array, gained: Array) -> Array:
+    def _output(self, mode: Mode, slope: float, rows: _Rows, count: int) -> Array:
+        """Before the action [%], (count,)."""
+        n = self.at.n
         if mode is Mode.FREE:
-            return wanted
+            return rows.row(n + 1, count)
         if mode is Mode.SLIDING:
-            return np.asarray(wanted - gained, np.float64)
-        return self.run.memory.output + slope * np.arange(1.0, len(wanted) + 1.0)
+            return np.asarray(rows.row(n + 1, count) - rows.row(n + 2, count), np.float64)
+        return self.run.memory.output + slope * np.arange(1.0, count + 1.0)
 
-    def _lasting(
-        self, mode: Mode, slope: float, output: Array, wanted: Array, gained: Array
-    ) -> int:
+    def _lasting(self, mode: Mode, slope: float, output: Array, rows: _Rows) -> int:
         """For how many scans the condition of a mode holds."""
-        algorithm, first = self.run.algorithm, self.run.memory.output
+        algorithm, first, n = self.run.algorithm, self.run.memory.output, self.at.n
+        wanted, gained = rows.row(n + 1, len(output)), rows.row(n + 2, len(output))
         low, high = algorithm.bounds()
         kept = (output >= low) & (output <= high)
         if mode in (Mode.FREE, Mode.SLIDING):
             before = np.concatenate([[first], output[:-1]])
-            lowest, highest = low, high
+            lowest, highest = np.full(1, low), np.full(1, high)
             if math.isfinite(algorithm.move):
                 lowest = np.maximum(low, before - algorithm.move)
                 highest = np.minimum(high, before + algorithm.move)
@@ -285,8 +274,8 @@ class Leaps:
         columns += [whole.acting[placed - far : placed - far + count] for far in at.far]
         return np.column_stack(columns)
 
-    def _remember(self, core: Array) -> None:
-        """Leave the run as a step would have left it; `core` is the plant's state, then yf, I, D."""
+    def _remember(self, core: Array, mode: Mode) -> None:
+        """Leave the run as a step would have left it; `core` is the plant's state, yf, I and D."""
         whole, n, algorithm = self.run, self.at.n, self.run.algorithm
         whole.x = core[:n]
         m, setpoint = whole.memory, float(whole.inputs.setpoint[whole.at - 1])
@@ -295,6 +284,7 @@ class Leaps:
         weighted = algorithm.setpoint_weight * setpoint - m.filtered
         m.proportional = algorithm.proportional * weighted
         m.output = algorithm.sign * float(whole.acting[whole.back + whole.at - 1])
+        m.frozen = mode in (Mode.SLIDING, Mode.FROZEN)
 
     # --- the loop over one scan ---
 
@@ -373,6 +363,24 @@ class Leaps:
         return self.at.change + 1 + self.at.far.index(back)
 
 
+class _Rows:
+    """What was read at each scan of a stretch, block by block: (blocks, rows, scans of a block)."""
+
+    def __init__(self, found: Array, count: int) -> None:
+        self.found = found
+        self.count = min(count, found.shape[0] * found.shape[2])
+        """Scans."""
+
+    def row(self, k: int, count: int) -> Array:
+        """One row at the first `count` scans."""
+        return self.found[:, k].reshape(-1)[:count]
+
+    def at(self, scan: int) -> Array:
+        """All rows at one scan."""
+        block, rest = divmod(scan, self.found.shape[2])
+        return self.found[block, :, rest]
+
+
 class _Powers:
     """s' = A s + B w and the rows C s + D w, many scans at once."""
 
@@ -400,13 +408,14 @@ class _Powers:
 
     def _over_block(self) -> Array:
         """S to the power of a block."""
-        whole = np.eye(len(self.a))
+        whole: Array | None = None
         for k, power in enumerate(self.steps):
             if self.block >> k & 1:
-                whole = whole @ power
+                whole = power if whole is None else whole @ power
+        assert whole is not None
         return whole
 
-    def alone(self, state: Array, wanted: int) -> tuple[Array, Array]:
+    def alone(self, state: Array, wanted: int) -> tuple[_Rows, Array]:
         """The rows (rows, scans) without given inputs, and the state at every block."""
         count = wanted // self.block + 1
         blocks = np.empty((count, len(state)))
@@ -423,14 +432,12 @@ class _Powers:
             np.matmul(blocks[:more], self.over[k].T, out=blocks[done : done + more])
             done += more
         blocks = blocks[:done]
-        found = blocks @ self.wide
-        return self._in_order(found)[:, :wanted], blocks
+        return self._rows(blocks @ self.wide, wanted), blocks
 
-    def _in_order(self, found: Array) -> Array:
-        rows = found.reshape(len(found), len(self.read), self.block)
-        return rows.transpose(1, 0, 2).reshape(len(self.read), -1)
+    def _rows(self, found: Array, count: int) -> _Rows:
+        return _Rows(found.reshape(len(found), len(self.read), self.block), count)
 
-    def driven(self, state: Array, given: Array, wanted: int) -> tuple[Array, Array]:
+    def driven(self, state: Array, given: Array, wanted: int) -> tuple[_Rows, Array]:
         """The same with given inputs (wanted, inputs); one more scan is read than asked for."""
         inputs, count = given.shape[1], wanted // self.block + 1
         padded = np.zeros((count, self.block * inputs))
@@ -441,8 +448,9 @@ class _Powers:
         across = self.over[0].T
         for k in range(count - 1):
             blocks[k + 1] = blocks[k] @ across + pushed[k]
-        found = blocks @ self.wide + padded @ self._answers
-        return self._in_order(found)[:, : wanted + 1], blocks
+        found = blocks @ self.wide
+        found += padded @ self._answers
+        return self._rows(found, wanted + 1), blocks
 
     @cached_property
     def _pushed(self) -> Array:
@@ -472,16 +480,14 @@ class _Powers:
         spread = answers[:, lag]
         return spread.transpose(2, 3, 0, 1).reshape(block * inputs, -1)
 
-    def after(self, blocks: Array, rows: Array, scans: int) -> Array:
+    def after(self, blocks: Array, rows: _Rows, scans: int) -> Array:
         """The plant's state, yf, I and D after a number of scans of a stretch."""
         if self.b.shape[1]:
-            return np.concatenate([rows[: self.n, scans], rows[-3:, scans]])
+            read = rows.at(scans)
+            return np.concatenate([read[: self.n], read[-3:]])
         whole, rest = divmod(scans, self.block)
-        if whole >= len(blocks):
-            state = self.over[0] @ blocks[-1]
-        else:
-            state = blocks[whole]
+        state = blocks[whole] if whole < len(blocks) else self.over[0] @ blocks[-1]
         for k, power in enumerate(self.steps):
             if rest >> k & 1:
                 state = power @ state
-        return state[: self.n + 3].copy()
+        return np.array(state[: self.n + 3], np.float64)

@@ -18,8 +18,8 @@ from workbench.errors import problem
 from workbench.model.feedback import Loop
 from workbench.sim import analogue
 from workbench.sim.controller import Algorithm
-from workbench.sim.process import Process, process
 from workbench.sim.leaps import follow, run
+from workbench.sim.process import Process, process
 from workbench.sim.scans import Clock, Course, Held, Run, inputs
 from workbench.sim.scenario import Events
 from workbench.sim.signals import Signal, Step
@@ -117,9 +117,13 @@ def _sampled_trace(held: Held, course: Course, events: Events) -> Trace:
     scans = len(course.pv)
     # Rows at the same places in every scan, and single ones where something happens in between.
     offsets = _offsets(held, events.until)
-    time: Array = np.add.outer(np.arange(scans) * clock.scan, offsets).ravel()
-    values = np.column_stack([_pv(held, course, load, offset) for offset in offsets]).ravel()
-    number = np.repeat(np.arange(scans), len(offsets))
+    number = np.arange(scans)
+    time: Array = number * np.float64(clock.scan)
+    values = course.pv
+    if len(offsets) > 1 or clock.lead:
+        time = np.add.outer(time, offsets).ravel()
+        values = np.column_stack([_pv(held, course, load, offset) for offset in offsets]).ravel()
+        number = np.repeat(number, len(offsets))
     single = sorted({clock.place(instant) for instant in _between(held, events)})
     single = [(scan, rest) for scan, rest in single if scan < scans and rest not in offsets]
     for scan, rest in single:
@@ -215,7 +219,7 @@ def _in_force(held: Held, course: Course, time: Array, number: NDArray[np.signed
     clock = held.clock
     whole, rest = clock.place(clock.computing_delay)
     if not whole and not rest:
-        return course.outputs[number]
+        return np.asarray(course.outputs[number], np.float64)
     late = time - number * clock.scan < rest - 1e-9 * clock.scan
     computed = number - whole - late
     return np.where(computed >= 0, course.outputs[np.maximum(computed, 0)], 0.0)

@@ -183,7 +183,8 @@ class Held:
                 state[whole] += self.hold(entry, time - rest)[1] * part.size
                 pv[whole] += entry.d * part.size
             state[following:] += self.hold(entry, time)[1] * part.size
-            pv[following:] += entry.d * part.size
+            if entry.d:
+                pv[following:] += entry.d * part.size
             return
         # The signal drives the plant from a small state of its own: x' = A x + b (w C), w' = W w.
         rates, start, shown = _generator(part)
@@ -191,8 +192,12 @@ class Held:
             moved = _driven(self.process.a, entry.b, rates, shown, time - rest)
             state[whole] += moved @ start
             pv[whole] += entry.d * float(part.values(np.array([part.time + time - rest]))[0])
-        since = np.arange(following, len(pv)) * self.clock.scan - (whole * self.clock.scan + rest)
-        moving = np.column_stack([_generator_at(part, since), part.values(part.time + since + time)])
+        since: Array = np.arange(float(following), len(pv)) - whole
+        since *= self.clock.scan
+        since -= rest
+        moving = np.column_stack(
+            [_generator_at(part, since), part.values(part.time + since + time)]
+        )
         state[following:] += moving[:, :-1] @ _driven(self.process.a, entry.b, rates, shown, time).T
         pv[following:] += entry.d * moving[:, -1]
 
@@ -260,10 +265,10 @@ def inputs(
         moved = np.flatnonzero(np.diff(taken, prepend=0.0))
         marks |= {*moved.tolist(), *(moved + 1).tolist()}
     load = tuple(part for part in load if not isinstance(part, Step) or part.size)
-    state, _ = held.upset(load, scans, clock.scan)
-    ahead, direct = held.upset(load, scans, clock.lead)
-    if clock.lead:
-        direct = direct + ahead @ held.process.c
+    state, direct = held.upset(load, scans, clock.scan)
+    if clock.lead or direct.any():
+        ahead, direct = held.upset(load, scans, clock.lead)
+        direct += ahead @ held.process.c
     for part in load:
         for entry in held.process.load:
             whole, _ = clock.place(part.time + entry.dead_time)
@@ -300,7 +305,7 @@ class Run:
         self.back = max([1, *taps, *self.weights])
         """How far back outputs still act [scans]."""
         self.x = np.zeros(n)
-        self.states = np.empty((self.scans, n))
+        self.states = np.empty((n, self.scans))
         self.pv = np.empty(self.scans)
         self.measured = self.pv if self._is_plain else np.empty(self.scans)
         self.acting = np.zeros(self.back + self.scans)
@@ -318,7 +323,7 @@ class Run:
         done = self.at
         acting = self.acting[self.back : self.back + done]
         return Course(
-            self.states[:done],
+            self.states[:, :done].T,
             self.outputs[:done],
             self.pv[:done],
             self.diverged,
@@ -347,7 +352,12 @@ class Run:
 
         Plain numbers and lists: for a handful of states they are far faster than arrays.
         """
-        over, start, back, given = self.held.over(self.held.clock.scan), self.at, self.back, self.inputs
+        over, start, back, given = (
+            self.held.over(self.held.clock.scan),
+            self.at,
+            self.back,
+            self.inputs,
+        )
         x, row = self.x.tolist(), self.read.tolist()
         acting: list[float] = self.acting[start : start + back].tolist()
         outputs, states, pv, measured = [], [], [], []
@@ -357,12 +367,15 @@ class Run:
         upset = given.state[start:end].tolist()
         noise = [0.0] * (end - start) if given.noise is None else given.noise[start:end].tolist()
         outside = zip(
-            given.setpoint[start:end].tolist(), given.direct[start:end].tolist(), noise, upset,
+            given.setpoint[start:end].tolist(),
+            given.direct[start:end].tolist(),
+            noise,
+            upset,
             strict=True,
         )
         through, received = self.through, self.received
-        for i, (setpoint, y, disturbance, pushed) in enumerate(outside):
-            y += sum(map(mul, row, x))
+        for i, (setpoint, direct, disturbance, pushed) in enumerate(outside):
+            y = direct + sum(map(mul, row, x))
             for place, weight in backs:
                 y += weight * acting[i + place]
             if not -BOUND <= y <= BOUND:
@@ -377,11 +390,10 @@ class Run:
             output = by(setpoint, seen)
             outputs.append(output)
             acting.append(output if through is None else through(output))
-            # A list, for the plant's own output may be among what acts.
             moved = [*x, *[acting[i + tap] for tap in taps]]
             x = [sum(map(mul, line, moved)) + push for line, push in zip(rows, pushed, strict=True)]
         done = start + len(pv)
-        self.states[start:done] = np.array(states).reshape(len(pv), len(self.x))
+        self.states[:, start:done] = np.array(states).reshape(len(pv), len(self.x)).T
         self.pv[start:done] = pv
         if not self._is_plain:
             self.measured[start:done] = measured
@@ -398,4 +410,3 @@ def step_through(
     whole = Run(held, algorithm, inputs(held, scans, setpoint, (load,)), scans)
     whole.step(scans, algorithm.start(whole.memory))
     return whole.course()
-
