@@ -125,6 +125,8 @@ _MEASURE_SCALE: Final[dict[str, Literal["pv", "op"]]] = {
     "setpoint_iae": "pv",
     "load_iae": "pv",
     "load_peak_deviation": "pv",
+    "setpoint_itae": "pv",
+    "load_itae": "pv",
     "final_pv": "pv",
     "output_travel": "op",
     "final_op": "op",
@@ -139,6 +141,8 @@ def _in_units(case: Case, measures: Measures) -> Measures:
         name: getattr(measures, name).times(spans[kind] / 100.0)
         for name, kind in _MEASURE_SCALE.items()
     }
+    for name in ("setpoint_ise", "load_ise"):
+        scaled[name] = getattr(measures, name).times((case.pv.range.span / 100.0) ** 2)
     for name, rest in (("final_pv", case.pv.rest), ("final_op", case.op.rest)):
         if scaled[name].value is not None:
             scaled[name] = Figure(scaled[name].value + rest)
