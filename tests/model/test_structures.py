@@ -13,9 +13,10 @@ from hypothesis import strategies as st
 
 from workbench.errors import InputError
 from workbench.model.feedback import Loop
+from workbench.model.feedforward import ideal_feedforward
 from workbench.model.pid import Gains
 from workbench.model.robustness import analogue_margins, sampled_margins
-from workbench.model.structures import NOTHING, Compensated, answer, inner_upset, over_inner
+from workbench.model.structures import NOTHING, Structure, after_upset, answer
 from workbench.model.transfer import TransferFunction
 
 POINTS = (0.003j, 0.11j, 2.7j, 0.05 + 0.4j)
@@ -28,11 +29,11 @@ def lag(gain: float, time: float, dead_time: float = 0.0) -> TransferFunction:
 DEAD_TIMES = st.just(0.0) | st.floats(0.01, 1.0)
 
 
-def smith(closed_loop_time: float, gain: float = 2.0, time: float = 3.0) -> Compensated:
+def smith(closed_loop_time: float, gain: float = 2.0, time: float = 3.0) -> Structure:
     """The exact model of a first-order plant with dead time 1 s, K = T/(k lambda), Ti = T."""
     plant = lag(gain, time, 1.0)
     k = time / (gain * closed_loop_time)
-    return Compensated(plant, plant, Gains(k, k / time), model=plant)
+    return Structure(plant, plant, Gains(k, k / time), model=plant)
 
 
 # --- compensation with an exact model ------------------------------------------------------------
@@ -66,7 +67,7 @@ def test_an_exact_model_leaves_the_dead_time_outside(
 
 def test_an_integrating_plant_does_not_come_back_after_a_load() -> None:
     plant = TransferFunction.ratio((0.1,), [(1.0, 0.0)], 4.0)
-    loop = Compensated(plant, plant, Gains(2.0, 0.1), model=plant)
+    loop = Structure(plant, plant, Gains(2.0, 0.1), model=plant)
     assert analogue_margins(loop).stable
     # exact: G0 = 0.1/s and C = 2 + 0.1/s give y/d -> 0.1 4 at s = 0, the slope times the dead time
     assert loop.from_load().gain().value == pytest.approx(0.4, rel=1e-9)
@@ -77,7 +78,7 @@ def test_an_integrating_plant_does_not_come_back_after_a_load() -> None:
 
 
 @st.composite
-def compensated(draw: st.DrawFn) -> Compensated:
+def compensated(draw: st.DrawFn) -> Structure:
     one, other = st.floats(0.5, 3.0), st.floats(0.5, 20.0)
     plant = lag(draw(one), draw(other), 5.0 * draw(DEAD_TIMES))
     model = lag(draw(one), draw(other), 5.0 * draw(DEAD_TIMES))
@@ -86,7 +87,7 @@ def compensated(draw: st.DrawFn) -> Compensated:
             tuple(replace(term, dead_time=2.0 * term.dead_time) for term in plant.numerator),
             plant.denominator,
         )
-    return Compensated(
+    return Structure(
         plant,
         lag(draw(one), draw(other), 5.0 * draw(DEAD_TIMES)),
         Gains(
@@ -99,8 +100,9 @@ def compensated(draw: st.DrawFn) -> Compensated:
 
 
 @given(compensated(), st.sampled_from(POINTS))
-def test_a_compensated_loop_is_its_block_diagram(loop: Compensated, s: complex) -> None:
+def test_a_compensated_loop_is_its_block_diagram(loop: Structure, s: complex) -> None:
     # other route: the blocks in plain complex numbers
+    assert loop.model is not None
     g, gd, m = (f(s) for f in (loop.plant, loop.load, loop.model))
     m0 = m * cmath.exp(loop.model.dead_time * s)
     q = loop.sign * loop.gains.from_pv()(s) * loop.filter()(s)
@@ -114,7 +116,8 @@ def test_a_compensated_loop_is_its_block_diagram(loop: Compensated, s: complex) 
 
 
 @given(compensated())
-def test_a_model_without_dead_time_changes_nothing(loop: Compensated) -> None:
+def test_a_model_without_dead_time_changes_nothing(loop: Structure) -> None:
+    assert loop.model is not None
     model = TransferFunction(
         tuple(replace(term, dead_time=0.0) for term in loop.model.numerator), loop.model.denominator
     )
@@ -145,7 +148,7 @@ def test_an_exact_model_as_sampled() -> None:
     h, scans, k, time = 0.5, 6, 2.0, 4.0
     plant = lag(k, time, scans * h)
     gains = Gains(0.8, 0.2)
-    loop = Compensated(plant, plant, gains, scan=h, model=plant)
+    loop = Structure(plant, plant, gains, scan=h, model=plant)
     z = np.exp(1j * np.array([0.01, 0.4, 2.0]))
     a = math.exp(-h / time)
     p0 = k * (1.0 - a) / (z - a)
@@ -187,14 +190,14 @@ def test_the_sampled_gain_margin_is_where_the_sampled_loop_is_lost() -> None:
 def test_a_model_that_cannot_be_run_is_refused(model: TransferFunction, words: str) -> None:
     plant = lag(2.0, 3.0, 1.0)
     with pytest.raises(InputError, match=words):
-        Compensated(plant, plant, Gains(1.0), model=model)
+        Structure(plant, plant, Gains(1.0), model=model)
 
 
 # --- cascade -------------------------------------------------------------------------------------
 
 
 @st.composite
-def cascades(draw: st.DrawFn) -> tuple[Loop, Loop]:
+def cascades(draw: st.DrawFn) -> Structure:
     fast = lag(draw(st.floats(0.3, 2.0)), draw(st.floats(0.5, 3.0)), draw(DEAD_TIMES))
     slow = lag(draw(st.floats(0.5, 3.0)), draw(st.floats(8.0, 40.0)), 6.0 * draw(DEAD_TIMES))
     inner = Loop(
@@ -203,69 +206,93 @@ def cascades(draw: st.DrawFn) -> tuple[Loop, Loop]:
         Gains(draw(st.floats(0.1, 1.0)), draw(st.floats(0.05, 0.5)), setpoint_weight=0.5),
         reverse=draw(st.booleans()),
     )
-    outer = Loop(
+    return Structure(
         slow,
         slow,
         Gains(draw(st.floats(0.2, 2.0)), draw(st.floats(0.01, 0.1)), 1.0, 0.3),
         pv_filter=draw(st.sampled_from([0.0, 1.0])),
+        inner=inner,
     )
-    return outer, inner
 
 
 @given(cascades(), st.sampled_from(POINTS))
-def test_a_cascade_is_its_block_diagram(pair: tuple[Loop, Loop], s: complex) -> None:
+def test_a_cascade_is_its_block_diagram(loop: Structure, s: complex) -> None:
     # other route: the blocks in plain complex numbers
-    outer, inner = pair
+    inner = loop.inner
+    assert inner is not None
     within = inner.sign * inner.gains.from_pv()(s) * inner.plant(s)
     through = inner.sign * inner.gains.from_setpoint()(s) * inner.plant(s) / (1.0 + within)
-    back = outer.gains.from_pv()(s) * outer.filter()(s) * outer.plant(s)
-    loop = over_inner(outer, inner)
+    back = loop.gains.from_pv()(s) * loop.filter()(s) * loop.plant(s)
     assert answer(inner)(s) == pytest.approx(through, rel=1e-9)
     assert loop.open_loop()(s) == pytest.approx(back * through, rel=1e-9)
-    wanted = inner.load(s) / (1.0 + within) * outer.plant(s)
-    assert inner_upset(outer, inner)(s) == pytest.approx(wanted, rel=1e-9)
+    assert after_upset(inner)(s) == pytest.approx(inner.load(s) / (1.0 + within), rel=1e-9)
+
+
+OUTER = Loop(lag(1.5, 20.0, 4.0), NOTHING, Gains(1.2, 0.06))
+
+
+def over(inner: Loop) -> Structure:
+    return Structure(OUTER.plant, OUTER.load, OUTER.gains, inner=inner)
 
 
 def test_an_inner_loop_without_dead_time_is_a_lag() -> None:
     # exact: G2 = 2/(3 s + 1) under a gain of 4 is 8/(3 s + 9)
-    outer = Loop(lag(1.5, 20.0, 4.0), NOTHING, Gains(1.2, 0.06))
-    inner = Loop(lag(2.0, 3.0), NOTHING, Gains(4.0))
-    single = replace(outer, plant=TransferFunction.ratio((8.0,), [(3.0, 9.0)]) * outer.plant)
-    one, other = analogue_margins(over_inner(outer, inner)), analogue_margins(single)
+    single = replace(OUTER, plant=TransferFunction.ratio((8.0,), [(3.0, 9.0)]) * OUTER.plant)
+    one = analogue_margins(over(Loop(lag(2.0, 3.0), NOTHING, Gains(4.0))))
+    other = analogue_margins(single)
     assert one.max_sensitivity.value == pytest.approx(other.max_sensitivity.value, rel=1e-9)
     assert one.gain_margin.value == pytest.approx(other.gain_margin.value, rel=1e-9)
     assert one.delay_margin_s.value == pytest.approx(other.delay_margin_s.value, rel=1e-9)
 
 
 def test_an_infinitely_fast_inner_loop_is_not_there() -> None:
-    outer = Loop(lag(1.5, 20.0, 4.0), NOTHING, Gains(1.2, 0.06))
-    inner = Loop(lag(2.0, 3.0), NOTHING, Gains(3e7, 1e7))
-    one, other = analogue_margins(over_inner(outer, inner)), analogue_margins(outer)
+    one = analogue_margins(over(Loop(lag(2.0, 3.0), NOTHING, Gains(3e7, 1e7))))
+    other = analogue_margins(OUTER)
     assert one.max_sensitivity.value == pytest.approx(other.max_sensitivity.value, rel=1e-5)
 
 
 def test_the_inner_integral_action_hides_no_root() -> None:
     # An uncancelled s would make every cascade with integral action inside look unstable.
-    outer = Loop(lag(1.0, 20.0, 2.0), NOTHING, Gains(1.0, 0.05))
     inner = Loop(lag(1.0, 2.0, 0.5), NOTHING, Gains(1.0, 0.4))
-    margins = analogue_margins(over_inner(outer, inner))
-    assert margins.stable
+    assert analogue_margins(over(inner)).stable
     assert answer(inner).gain().value == pytest.approx(1.0)
 
 
+def test_an_inner_loop_by_itself_leaves_the_outer_one_open() -> None:
+    inner = Loop(lag(1.0, 2.0, 0.5), NOTHING, Gains(1.0, 0.4))
+    assert replace(over(inner), inner_mode="manual").open_loop()(0.1j) == 0.0
+
+
 @given(cascades())
-def test_a_cascade_at_its_gain_margin_swings(pair: tuple[Loop, Loop]) -> None:
-    outer, inner = pair
-    assume(inner.reverse and analogue_margins(inner).stable)
-    margin = analogue_margins(over_inner(outer, inner)).gain_margin.value
+def test_a_cascade_at_its_gain_margin_swings(loop: Structure) -> None:
+    assert loop.inner is not None
+    assume(loop.inner.reverse and analogue_margins(loop.inner).stable)
+    margin = analogue_margins(loop).gain_margin.value
     assume(margin is not None and margin < 50.0)
     assert margin is not None
     for share, stable in ((0.98, True), (1.02, False)):
-        g = outer.gains
+        g, more = loop.gains, share * margin
         scaled = replace(
             g,
-            proportional=share * margin * g.proportional,
-            integral=share * margin * g.integral,
-            derivative=share * margin * g.derivative,
+            proportional=more * g.proportional,
+            integral=more * g.integral,
+            derivative=more * g.derivative,
         )
-        assert analogue_margins(over_inner(replace(outer, gains=scaled), inner)).stable is stable
+        assert analogue_margins(replace(loop, gains=scaled)).stable is stable
+
+
+# --- feedforward ---------------------------------------------------------------------------------
+
+
+def test_feedforward_changes_the_upset_and_not_the_loop() -> None:
+    plant, load = lag(2.0, 10.0, 3.0), lag(-1.5, 4.0, 5.0)
+    ideal = ideal_feedforward(plant, load).feedforward
+    single = Loop(plant, load, Gains(1.2, 0.08))
+    whole = Structure(plant, load, single.gains, feedforward=ideal)
+    half = replace(whole, feedforward=replace(ideal, gain=0.5 * ideal.gain))
+    for s in POINTS:
+        assert whole.open_loop()(s) == pytest.approx(single.open_loop()(s), rel=1e-12)
+        assert whole.from_setpoint()(s) == pytest.approx(single.from_setpoint()(s), rel=1e-12)
+        # exact: the ideal leaves nothing, half of it half
+        assert abs(whole.from_load()(s)) < 1e-12
+        assert half.from_load()(s) == pytest.approx(0.5 * single.from_load()(s), rel=1e-9)

@@ -21,7 +21,7 @@ from workbench.errors import NotApplicable
 from workbench.model.feedback import Loop
 from workbench.model.sampled import SampledLoop
 from workbench.model.stability import Verdict, loop_verdict
-from workbench.model.structures import Compensated
+from workbench.model.structures import Structure
 from workbench.model.transfer import Complex, TransferFunction
 from workbench.units import Figure
 
@@ -77,7 +77,7 @@ def sampled_margins(loop: Loop) -> Margins:
 
     Frequencies run up to half the scan rate.
     """
-    sampled = loop.sampled() if isinstance(loop, Compensated) else SampledLoop.of(loop)
+    sampled = loop.sampled() if isinstance(loop, Structure) else SampledLoop.of(loop)
     verdict = sampled.verdict()
     if not verdict.stable:
         return _none(verdict)

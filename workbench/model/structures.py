@@ -1,30 +1,32 @@
-"""More than one controller or model round a plant: dead-time compensation and cascade, as loops.
+"""What is built round a loop: dead-time compensation, feedforward, cascade; still one loop.
 
-Each is a `Loop`, so that margins and answers are asked for as of any loop; a dead time inside a
-feedback is exact.  Signals are percent of span, time is in seconds.
+A `Structure` is a `Loop` whose open loop, answer to the setpoint and answer to the upset are those
+of the whole, so that margins are asked for as of any loop; a dead time inside a feedback is exact.
+Signals are percent of span, time is in seconds.  With Q = C F from PV to OP and the plant G
 
-Compensation.  The controller is given what PV would be without the dead time L of its model:
-y + (M0 - M) u, M = M0 exp(-L s), filtered as PV is.  With Q = C F and the plant G
-
-    L(s) = Q G / (1 + Q (M0 - M)),   y/r = C_r G / (1 + Q (G + M0 - M))
-
-Cascade.  The output of the outer controller is the setpoint of an inner loop, whose answer T to it
-stands between that output and the outer plant:  L(s) = C F T G,  T = C_r2 G2 / (1 + C2 F2 G2).
+compensation  the controller is given what PV would be without the dead time L of its model,
+              y + (M0 - M) u, M = M0 exp(-L s), filtered as PV is:
+              L(s) = Q G / (1 + Q (M0 - M)),   y/r = C_r G / (1 + Q (G + M0 - M))
+feedforward   FF v is added to the output for a measured upset v, so that Gd + G FF takes the place
+              of the load path Gd; the open loop stays
+cascade       the output is the setpoint of an inner loop, and T G takes the place of G, where
+              T = C_r2 G2 / (1 + C2 F2 G2) is what the inner loop makes of its setpoint
 
 Source
 ------
 Compensation: O.J.M. Smith, "Closer control of loops with dead time", Chem. Eng. Prog. 53(5), 1957,
-217-219, from memory.  Cascade: block algebra.
+217-219, from memory.  Feedforward and cascade: block algebra.
 """
 
 from __future__ import annotations
 
 from collections import Counter
-from dataclasses import dataclass, fields, replace
+from dataclasses import dataclass, fields
 from typing import Final
 
 from workbench.errors import problem
 from workbench.model.feedback import Loop
+from workbench.model.feedforward import Feedforward
 from workbench.model.sampled import SampledLoop
 from workbench.model.stability import Verdict
 from workbench.model.transfer import Complex, Delayed, Factored, TransferFunction
@@ -32,18 +34,24 @@ from workbench.model.transfer import Complex, Delayed, Factored, TransferFunctio
 NOTHING: Final = TransferFunction.constant(0.0)
 
 
-# --- dead-time compensation ----------------------------------------------------------------------
-
-
 @dataclass(frozen=True)
-class Compensated(Loop):
-    """A loop whose controller works with a model of the plant, which may be wrong."""
+class Structure(Loop):
+    """A loop with what is built round it; what is left out is not there."""
 
-    model: TransferFunction = NOTHING
-    """M, from OP [%] to PV [%], as the controller believes the plant to be."""
+    model: TransferFunction | None = None
+    """M, from OP [%] to PV [%], as the controller believes the plant to be; it may be wrong."""
+    feedforward: Feedforward | None = None
+    """From the upset [its own unit] to OP [%]."""
+    inner: Loop | None = None
+    """Its plant goes from its own output [%] to the inner PV, and `plant` from there to PV; OP and
+    the inner PV are in percent of the same span."""
+    inner_mode: str = "cascade"
+    """cascade, automatic (its own setpoint) or manual (its own output)."""
 
     def __post_init__(self) -> None:
         """Raises `InputError` for a model that no controller can run."""
+        if self.model is None:
+            return
         if self.model.has_delayed_feedback:
             raise problem("has a dead time inside a feedback", "give it without", key="model")
         if any(pole.real > 0.0 for pole in self.model.poles()):
@@ -55,31 +63,56 @@ class Compensated(Loop):
         if not self.model.is_proper:
             raise problem("has more leads than lags", "give it a further lag", key="model")
 
+    @property
+    def acted_on(self) -> TransferFunction:
+        """What the output acts on: the plant, behind the inner loop where there is one."""
+        if self.inner is None:
+            return self.plant
+        return (answer(self.inner) if self.inner_mode == "cascade" else NOTHING) * self.plant
+
+    @property
+    def upset(self) -> TransferFunction:
+        """From the upset to PV without the controller, with inner loop and feedforward."""
+        reached = self.load
+        if self.inner is not None:
+            manual = self.inner_mode == "manual"
+            reached = (
+                reached + (self.inner.load if manual else after_upset(self.inner)) * self.plant
+            )
+        if self.feedforward is not None:
+            reached = reached + self.acted_on * self.feedforward.transfer()
+        return reached
+
     def correction(self) -> TransferFunction:
         """M0 - M: what is added to PV [%] for the output [%]."""
+        if self.model is None:
+            return NOTHING
         ahead = self.model.dead_time
         top = tuple(Delayed(t.dead_time - ahead, t.polynomial) for t in self.model.numerator)
         return TransferFunction(top, self.model.denominator) - self.model
 
     def open_loop(self) -> TransferFunction:
         """L(s), broken at the plant's input: its delay margin is what the plant may differ by."""
-        plant, correction = _on_one_denominator(self.plant, self.correction())
+        plant, correction = _on_one_denominator(self.acted_on, self.correction())
         return _closed(self._back() * plant, self._back() * correction)
 
     def from_setpoint(self) -> TransferFunction:
         """PV [%] for the setpoint [%], analogue loop."""
-        forward = self.sign * self.gains.from_setpoint() * self.plant
+        forward = self.sign * self.gains.from_setpoint() * self.acted_on
         return _closed(forward, self._back() * self._met())
 
     def from_load(self) -> TransferFunction:
         """PV [%] for the upset [its own unit], analogue loop."""
         inside = 1.0 + self._back() * self.correction()
-        return _closed(self.load * inside, self._back() * self._met())
+        return _closed(self.upset * inside, self._back() * self._met())
 
-    def sampled(self) -> CompensatedSampled:
-        """The open loop in z; the model is run at the scan, with the computing delay."""
-        alone = SampledLoop.of(self.around(self.plant))
-        return CompensatedSampled(
+    def sampled(self) -> SampledStructure:
+        """The open loop in z; the model is run at the scan, with the computing delay.
+
+        Raises `ModelError` for an inner loop with a dead time: two scans have no single z.
+        """
+        alone = SampledLoop.of(self.around(self.acted_on))
+        return SampledStructure(
             alone.loop,
             alone.scan,
             alone.phi,
@@ -90,7 +123,7 @@ class Compensated(Loop):
         )
 
     def around(self, plant: TransferFunction) -> Loop:
-        """The same controller without its model, round another plant."""
+        """The controller alone, round another plant."""
         same = {field.name: getattr(self, field.name) for field in fields(Loop)}
         return Loop(**{**same, "plant": plant})
 
@@ -100,12 +133,12 @@ class Compensated(Loop):
 
     def _met(self) -> TransferFunction:
         """G + M0 - M, the plant as the controller meets it."""
-        return self.plant + self.correction()
+        return self.acted_on + self.correction()
 
 
 @dataclass(frozen=True)
-class CompensatedSampled(SampledLoop):
-    """The open loop in z of a compensated loop, broken at the plant's input."""
+class SampledStructure(SampledLoop):
+    """The open loop in z of a structure, broken at the plant's input."""
 
     correction: SampledLoop
     """Round M0 - M."""
@@ -121,26 +154,7 @@ class CompensatedSampled(SampledLoop):
         return self.met.verdict()
 
 
-# --- cascade -------------------------------------------------------------------------------------
-
-
-def over_inner(outer: Loop, inner: Loop) -> Loop:
-    """The outer loop of a cascade as a single loop, both controllers analogue.
-
-    Parameters
-    ----------
-    outer
-        Its plant goes from the inner PV [% of its span] to the outer PV [%]; its output is the
-        setpoint of the inner loop [% of the same span].
-    inner
-        Its plant goes from the inner output [%] to the inner PV [%].
-
-    Returns
-    -------
-    Loop
-        The outer controller round the inner loop's answer to its setpoint and the outer plant.
-    """
-    return replace(outer, plant=answer(inner) * outer.plant)
+# --- the inner loop ------------------------------------------------------------------------------
 
 
 def answer(loop: Loop) -> TransferFunction:
@@ -151,9 +165,9 @@ def answer(loop: Loop) -> TransferFunction:
     return _closed(loop.sign * loop.gains.from_setpoint() * loop.plant, loop.open_loop())
 
 
-def inner_upset(outer: Loop, inner: Loop) -> TransferFunction:
-    """From the upset of the inner loop to the outer PV, the outer controller at rest."""
-    return _closed(inner.load, inner.open_loop()) * outer.plant
+def after_upset(loop: Loop) -> TransferFunction:
+    """PV for the upset, as `from_load`, with nothing written that cancels."""
+    return _closed(loop.load, loop.open_loop())
 
 
 # --- algebra -------------------------------------------------------------------------------------

@@ -44,10 +44,12 @@ def passage(
     events: Events,
     instruments: Instruments,
     made: Callable[[Loop], Algorithm] | None = None,
+    by: Callable[[float, float], float] | None = None,
 ) -> Passage:
     """The passage of a loop through its events, scan by scan or in leaps.
 
-    `made` gives the algorithm of a loop, the sampled one where it is left out.
+    `made` gives the algorithm of a loop, the sampled one where it is left out; `by` is executed in
+    its place while the loop is in automatic.
     """
     scans = clock.place(events.until)[0] + 1
     held, made = Held(whole, clock), made or (lambda one: Algorithm.of(one, clock.scan))
@@ -60,7 +62,7 @@ def passage(
     )
     run.memory.integral = algorithm.sign * loop.bias
     plants = [(0, held)]
-    happening = _Happening(run, events, False)
+    happening = _Happening(run, events, False, by)
     for scan in [*happening.marks(clock, scans), scans]:
         happening.until(scan)
         if run.diverged or scan == scans:
@@ -86,6 +88,8 @@ class _Happening:
     run: Run
     events: Events
     is_manual: bool
+    by: Callable[[float, float], float] | None
+    """What is executed in automatic, where it is not the algorithm alone."""
 
     def marks(self, clock: Clock, scans: int) -> list[int]:
         """Scans at which something changes."""
@@ -102,7 +106,7 @@ class _Happening:
         """Go on to a scan, and take its mode."""
         run = self.run
         if run.at < scan and not self.is_manual:
-            follow(run, scan)
+            follow(run, scan) if self.by is None else run.step(scan, self.by)
         elif run.at < scan:
             goal = self.events.manual_output
             if goal is None:

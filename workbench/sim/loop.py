@@ -16,6 +16,7 @@ from numpy.typing import NDArray
 
 from workbench.errors import problem
 from workbench.model.feedback import Loop
+from workbench.model.structures import Structure
 from workbench.sim import analogue, signals
 from workbench.sim.controller import Algorithm
 from workbench.sim.course import Passage, passage
@@ -24,6 +25,7 @@ from workbench.sim.process import Process, process
 from workbench.sim.scans import Clock, Course, Held
 from workbench.sim.scenario import Events
 from workbench.sim.signals import Signal, Step
+from workbench.sim.structures import Execution, Inside, as_played
 
 Array = NDArray[np.float64]
 
@@ -56,6 +58,8 @@ class Trace:
     has a resolution or stops at its range."""
     diverged: bool = False
     """The loop is unstable and was cut off where it left 1e6 %."""
+    inner: Inside | None = None
+    """What the inner loop of a cascade did, at its own scans."""
 
 
 def simulate(loop: Loop, events: Events, instruments: Instruments = _PLAIN) -> Trace:
@@ -81,7 +85,8 @@ def simulate(loop: Loop, events: Events, instruments: Instruments = _PLAIN) -> T
     ------
     InputError
         Too many scans, or too fast an analogue loop, for the end asked for; noise on an analogue
-        controller; an analogue loop that makes impulses.  `ModelError` for a plant with a dead time
+        controller; an analogue loop that makes impulses; a structure without a scan, or with two
+        that do not go together.  `ModelError` for a plant with a dead time
         inside an inner feedback.
 
     Notes
@@ -90,11 +95,26 @@ def simulate(loop: Loop, events: Events, instruments: Instruments = _PLAIN) -> T
     steps or more, and to about 1e-3, while a limit or rate limit of the output is in force, and
     where more happens than a step of each, or something in the loop is not linear.
     """
+    if isinstance(loop, Structure):
+        return _structured(loop, events, instruments)
     if loop.scan is None:
         return _analogue(loop, events, instruments)
     clock = Clock(loop.scan, loop.computing_delay)
     _check(events.until, clock)
     return _sampled_trace(passage(loop, process(loop), clock, events, instruments), events)
+
+
+def _structured(loop: Structure, events: Events, instruments: Instruments) -> Trace:
+    """A loop with compensation, feedforward or an inner loop."""
+    played = as_played(loop, events)
+    assert played.scan is not None
+    clock = Clock(played.scan, played.computing_delay)
+    _check(events.until, clock)
+    execution = Execution(loop, clock, events, instruments)
+    outside = execution.outside(instruments)
+    found = passage(played, process(played), clock, events, outside, by=execution.step)
+    own = replace(found.course, outputs=np.array(execution.outputs))
+    return replace(_sampled_trace(replace(found, course=own), events), inner=execution.inside())
 
 
 def _check(until: float, clock: Clock) -> None:
@@ -400,7 +420,9 @@ def settle_horizon(loop: Loop) -> float:
     without integral action) gets a few of its own time scales, so that one sees what it does.
     """
     free = replace(loop, low=None, high=None, rate=None)
-    longest = MOST_SCANS * loop.scan / 2.5 if loop.scan else math.inf
+    # A cascade is played at the scan of its inner loop.
+    shortest = loop.inner.scan if isinstance(loop, Structure) and loop.inner else loop.scan
+    longest = MOST_SCANS * shortest / 2.5 if shortest else math.inf
     window = guess = min(6.0 * _time_scale(loop), longest)
     for _ in range(6):
         trace = _look(free, window)
