@@ -21,8 +21,8 @@ from workbench.model.transfer import TransferFunction
 from workbench.records.record import Record
 from workbench.sim.loop import settle_horizon, simulate
 from workbench.sim.metrics import Measures, measure
-from workbench.sim.scenario import Events
-from workbench.study.loop import load_scale, loop_of
+from workbench.sim.scenario import Events, Scenario
+from workbench.study.loop import instruments_of, load_scale, loop_of
 from workbench.units import Figure
 
 Floats = NDArray[np.float64]
@@ -68,7 +68,7 @@ def predict(case: Case, seed: int = 0) -> Prediction:
     """
     loop = loop_of(case)
     events = _events(case, loop, seed)
-    trace = simulate(loop, events)
+    trace = simulate(loop, events, instruments_of(case))
     pv, op = case.pv, case.op
     trend = Trend(
         trace.time,
@@ -106,9 +106,7 @@ def _events(case: Case, loop: Loop, seed: int) -> Events:
         load_step = case.op.range.units(5.0)
         if scenario.load_at is None:
             load_at = at + (horizon if until is None else (until - at) / 2.0)
-    moves = [t for t, step in ((at, setpoint_step), (load_at, load_step)) if step]
-    if until is None:
-        until = max(moves, default=0.0) + horizon
+    until = until or _last_move(scenario, at, load_at, setpoint_step, load_step) + horizon
     return Events(
         setpoint_step=pv.range.percent(setpoint_step or 0.0),
         setpoint_at=at,
@@ -118,7 +116,38 @@ def _events(case: Case, loop: Loop, seed: int) -> Events:
         # Noise is what a scan samples: an analogue controller has no scans to give it to.
         noise=pv.range.percent(pv.noise) if loop.scan else 0.0,
         seed=seed,
+        setpoint_ramp=scenario.setpoint_ramp.seconds if scenario.setpoint_ramp else 0.0,
+        load_shape=scenario.load_shape,
+        load_time=scenario.load_time.seconds if scenario.load_time else 0.0,
+        load_record=scenario.recorded_load(),
+        manual_at=scenario.manual_at.seconds if scenario.manual_at else None,
+        manual_output=None
+        if scenario.manual_output is None
+        else case.op.range.percent(scenario.manual_output - case.op.rest),
+        automatic_at=scenario.automatic_at.seconds if scenario.automatic_at else None,
+        change_at=scenario.change_at.seconds if scenario.change_at else None,
+        gain_factor=scenario.gain_factor,
+        dead_time_factor=scenario.dead_time_factor,
     )
+
+
+_SWINGS: Final = 8
+"""Periods of a sine that a prediction without an end shows."""
+
+
+def _last_move(
+    scenario: Scenario, at: float, load_at: float, setpoint: float | None, load: float | None
+) -> float:
+    """When the last thing happens that has to settle [s]."""
+    time = scenario.load_time.seconds if scenario.load_time else 0.0
+    lasting = {"step": 0.0, "sine": _SWINGS * time, "record": 0.0}.get(scenario.load_shape, time)
+    if scenario.load_shape == "record":
+        lasting = scenario.recorded_load()[-1][0]
+    moves = [at + (scenario.setpoint_ramp.seconds if scenario.setpoint_ramp else 0.0)]
+    moves = moves if setpoint else []
+    moves += [load_at + lasting] if load else []
+    others = (scenario.manual_at, scenario.automatic_at, scenario.change_at)
+    return max([*moves, *(other.seconds for other in others if other)], default=0.0)
 
 
 _MEASURE_SCALE: Final[dict[str, Literal["pv", "op"]]] = {
@@ -157,6 +186,9 @@ def _floor(loop: Loop, events: Events) -> tuple[Figure, Figure]:
     """
     if not events.load_step:
         none = Figure(None, "the scenario has no load step")
+        return none, none
+    if not events.are_steps:
+        none = Figure(None, "it is only known for a load step, in automatic, on one plant")
         return none, none
     first = loop.load.dead_time + loop.plant.dead_time + loop.computing_delay
     shown = loop.plant.dead_time + loop.computing_delay
