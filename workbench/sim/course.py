@@ -156,5 +156,5 @@ def _spliced(before: Inputs, later: Inputs, scan: int) -> Inputs:
         state=np.concatenate([before.state[:scan], later.state[scan:]]),
         direct=np.concatenate([before.direct[:scan], later.direct[scan:]]),
         cuts=tuple(sorted({*before.cuts, *later.cuts, scan})),
-        varying=before.varying or later.varying,
+        varying=before.varying | later.varying,
     )

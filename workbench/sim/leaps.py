@@ -74,8 +74,7 @@ def follow(whole: Run, end: int) -> None:
         whole.step(end, step)
         return
     leaps = Leaps(whole)
-    cuts = [end] if whole.inputs.varying else [cut for cut in whole.inputs.cuts if cut < end]
-    cuts = sorted({*cuts, end})
+    cuts = [*(cut for cut in whole.inputs.cuts if cut < end), end]
     by_hand, place = _FEW, 0
     while whole.at < end and not whole.diverged:
         while cuts[place] <= whole.at:
@@ -130,13 +129,19 @@ class _Layout:
     def size(self) -> int:
         return self.change + 1 + len(self.far)
 
+    def given(self, varying: frozenset[str]) -> list[int]:
+        """Columns that are given to each scan, in the order of `Leaps.given_to`."""
+        found = [self.setpoint, self.change] if "setpoint" in varying else []
+        found += [self.setpoint + 1] if {"load", "noise"} & varying else []
+        found += range(self.setpoint + 2, self.change) if "load" in varying else []
+        return [*found, *range(self.change + 1, self.size)]
+
 
 class Leaps:
     """Leaps of one run; it goes on from wherever the run stands."""
 
     def __init__(self, whole: Run) -> None:
         self.run = whole
-        self.varying = whole.inputs.varying
         taps = whole.held.over(whole.held.clock.scan).taps
         backs = {*taps, *whole.weights}
         self.at = _Layout(
@@ -145,6 +150,9 @@ class Leaps:
             tuple(sorted(back for back in backs if back > _NEAR)),
         )
         self.longest = min(self.at.far, default=whole.scans)
+        self.given = self.at.given(whole.inputs.varying)
+        """Columns that are not kept but given to each scan."""
+        self.kept = [k for k in range(self.at.change) if k not in self.given]
         self._powers: dict[Mode, _Powers] = {}
 
     def leap(self, stop: int) -> int:
@@ -182,8 +190,8 @@ class Leaps:
         whole, at, start = self.run, self.at, self.run.at
         powers = self._of(mode)
         state = self._state(slope)
-        if self.varying or at.far:
-            rows, blocks = powers.driven(state, self._given(wanted), wanted)
+        if self.given:
+            rows, blocks = powers.driven(state, self.given_to(wanted), wanted)
         else:
             rows, blocks = powers.alone(state, wanted)
         wanted = min(wanted, rows.count)
@@ -244,32 +252,31 @@ class Leaps:
 
     def _state(self, slope: float) -> Array:
         whole, at, m = self.run, self.at, self.run.memory
-        state = np.zeros(at.setpoint if self.varying else at.change)
+        state = np.zeros(at.change)
         state[: at.n] = whole.x
         state[at.n : at.newest] = m.filtered, m.integral, m.derivative
         placed = whole.back + whole.at
         state[at.newest : at.slope] = whole.acting[placed - at.near : placed][::-1]
         state[at.slope] = whole.algorithm.sign * slope
-        if not self.varying:
-            given, k = whole.inputs, whole.at
-            state[at.setpoint] = given.setpoint[k]
-            state[at.setpoint + 1] = given.direct[k]
-            state[at.setpoint + 2 :] = given.state[k]
-        return state
+        given, k = whole.inputs, whole.at
+        state[at.setpoint] = given.setpoint[k]
+        state[at.setpoint + 1] = given.direct[k]
+        state[at.setpoint + 2 :] = given.state[k]
+        return state[self.kept] if len(self.kept) < at.change else state
 
-    def _given(self, count: int) -> Array:
+    def given_to(self, count: int) -> Array:
         """What is given to each of the next scans, (count, inputs)."""
         whole, at, k = self.run, self.at, self.run.at
-        columns = []
-        if self.varying:
-            given = whole.inputs
+        columns, given = [], whole.inputs
+        if "setpoint" in given.varying:
             setpoint = given.setpoint[k : k + count]
-            direct = given.direct[k : k + count]
-            if given.noise is not None:
-                direct = direct + given.noise[k : k + count]
             last = given.setpoint[k - 1] if k else 0.0
-            columns = [setpoint, direct, *given.state[k : k + count].T]
-            columns.append(np.diff(setpoint, prepend=last))
+            columns += [setpoint, np.diff(setpoint, prepend=last)]
+        if {"load", "noise"} & given.varying:
+            direct = given.direct[k : k + count]
+            columns.append(direct if given.noise is None else direct + given.noise[k : k + count])
+        if "load" in given.varying:
+            columns += [*given.state[k : k + count].T]
         placed = whole.back + k
         columns += [whole.acting[placed - far : placed - far + count] for far in at.far]
         return np.column_stack(columns)
@@ -291,16 +298,13 @@ class Leaps:
     def _of(self, mode: Mode) -> _Powers:
         if mode not in self._powers:
             over_scan, seen = self._one_scan(mode)
-            kept = self.at.setpoint if self.varying else self.at.change
-            given = [*range(kept, self.at.change + 1)] if self.varying else []
-            given += range(self.at.change + 1, self.at.size)
-            block = _GIVEN_BLOCK if given else _BLOCK
+            rows = over_scan[self.kept]
             self._powers[mode] = _Powers(
-                over_scan[:kept, :kept],
-                over_scan[:kept, given],
-                seen[:, :kept],
-                seen[:, given],
-                block,
+                rows[:, self.kept],
+                rows[:, self.given],
+                seen[:, self.kept],
+                seen[:, self.given],
+                _GIVEN_BLOCK if self.given else _BLOCK,
                 self.at.n,
             )
         return self._powers[mode]

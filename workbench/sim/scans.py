@@ -26,6 +26,8 @@ Array = NDArray[np.float64]
 
 BOUND: Final = 1e6
 """A PV or output beyond this [%] has left every instrument: the loop is cut off there."""
+_FEW_STEPS: Final = 4
+"""More steps of an upset than this are taken as a signal that changes at any scan."""
 _SAME: Final = 1e-9
 """Instants closer than this share of a scan are the same instant."""
 
@@ -240,9 +242,9 @@ class Inputs:
     noise: Array | None
     """(scans,), what the sensor adds to that [%]."""
     cuts: tuple[int, ...]
-    """Scans, rising from 0 to the last, between which nothing of it changes."""
-    varying: bool
-    """It may change at any scan, and the cuts say nothing."""
+    """Scans, rising from 0 to the last, between which nothing changes that is not `varying`."""
+    varying: frozenset[str]
+    """What may change at any scan: setpoint, load, noise."""
 
 
 def inputs(
@@ -254,7 +256,7 @@ def inputs(
 ) -> Inputs:
     """The inputs of a run; the setpoint as steps, or as the controller takes it at each scan."""
     clock = held.clock
-    marks = {0, scans}
+    marks, varying = {0, scans}, set[str]()
     if isinstance(setpoint, Step):
         seen = clock.first_scan(setpoint.time) if setpoint.size else scans
         marks |= {seen, seen + 1}
@@ -262,21 +264,23 @@ def inputs(
         taken[seen:] = setpoint.size
     else:
         taken = setpoint
-        moved = np.flatnonzero(np.diff(taken, prepend=0.0))
-        marks |= {*moved.tolist(), *(moved + 1).tolist()}
+        varying.add("setpoint")
     load = tuple(part for part in load if not isinstance(part, Step) or part.size)
     state, direct = held.upset(load, scans, clock.scan)
     if clock.lead or direct.any():
         ahead, direct = held.upset(load, scans, clock.lead)
         direct += ahead @ held.process.c
-    for part in load:
-        for entry in held.process.load:
-            whole, _ = clock.place(part.time + entry.dead_time)
-            marks |= {whole, whole + 1}
-    steady = noise is None and all(isinstance(part, Step) for part in load)
+    if len(load) > _FEW_STEPS or not all(isinstance(part, Step) for part in load):
+        varying.add("load")
+    else:
+        for part in load:
+            for entry in held.process.load:
+                whole, _ = clock.place(part.time + entry.dead_time)
+                marks |= {whole, whole + 1}
+    if noise is not None:
+        varying.add("noise")
     cuts = tuple(sorted(mark for mark in marks if 0 <= mark <= scans))
-    varying = not steady or len(cuts) > 12
-    return Inputs(taken, state, direct, noise, cuts, varying)
+    return Inputs(taken, state, direct, noise, cuts, frozenset(varying))
 
 
 # --- the run -------------------------------------------------------------------------------------
