@@ -29,6 +29,7 @@ from tests.plain import sampled_pv
 from tests.sim.campaigns import (
     analogue_by_mpmath,
     changed_loops,
+    leapt_loops,
     limited_loops,
     sampled_by_mpmath,
 )
@@ -439,6 +440,9 @@ CAMPAIGNS: Final[dict[str, Campaign]] = {
     ),
     "analogue loops by mpmath": Campaign(
         _judged(analogue_by_mpmath, 202, 1e-5, "largest error, share of the step"), 3, 50
+    ),
+    "leaps of anything": Campaign(
+        _judged(leapt_loops, 205, 1e-9, "leap and step apart, share of the largest"), 40, 2000
     ),
     "loops that meet limits": Campaign(
         _judged(limited_loops, 203, 1e-9, "leap and step apart [%]"), 100, 2000

@@ -8,6 +8,7 @@ from __future__ import annotations
 
 import math
 import random
+from collections.abc import Callable
 from dataclasses import replace
 
 import numpy as np
@@ -240,3 +241,88 @@ def changed_loops(size: int, seed: int) -> tuple[float, list[str]]:
         if course.outputs.min() < loop.low or course.outputs.max() > loop.high:
             failures.append(f"the output leaves its limits: {loop} {events}")
     return max(worst, 0.0), failures
+
+
+# --- leaps ---------------------------------------------------------------------------------------
+
+
+class Stepped(Instruments):
+    """Plain instruments that keep the engine from leaping."""
+
+    def received(self) -> Callable[[float], float]:
+        """PV as it is."""
+        return lambda pv: pv
+
+
+def _anything(draw: random.Random) -> tuple[Loop, Events]:
+    lag = draw.uniform(3.0, 40.0)
+    terms = [
+        Term(
+            draw.uniform(0.3, 1.5),
+            tuple(lag * draw.uniform(0.2, 1.0) for _ in range(draw.randint(0, 2))),
+            draw.choice((0.0, 2.0, 7.3, 61.0, 130.0)),
+        ).function()
+        for _ in range(draw.randint(1, 2))
+    ]
+    plant = terms[0] if len(terms) == 1 else terms[0] + terms[1]
+    load = draw.choice((plant, Term(draw.uniform(0.2, 2.0), (lag,), 3.3).function()))
+    kp = draw.uniform(0.02, 0.4)
+    kd = draw.choice((0.0, kp * 4.0))
+    low, high, rate = (draw.choice((None, draw.uniform(0.3, 6.0))) for _ in range(3))
+    loop = Loop(
+        plant,
+        load,
+        Gains(
+            *(kp, draw.choice((0.0, kp / 12.0)), kd, kd / kp / 6.0),
+            *(draw.uniform(0.0, 1.0), draw.choice((0.0, 1.0))),
+        ),
+        reverse=draw.random() < 0.8,
+        scan=1.0,
+        computing_delay=draw.choice((0.0, 0.3)),
+        pv_filter=draw.choice((0.0, 3.0)),
+        low=None if low is None else -low,
+        high=high,
+        rate=rate,
+        windup=draw.choice(("conditional", "tracking", "external-reset")),
+        setpoint_rate=draw.choice((None, 0.2)),
+        setpoint_filter=draw.choice((0.0, 4.0)),
+    )
+    events = Events(
+        *(draw.uniform(-6.0, 6.0), draw.choice((0.0, 4.0, 7.5))),
+        *(draw.uniform(-4.0, 4.0), draw.uniform(100.0, 200.0), 500.0),
+        noise=draw.choice((0.0, 0.0, 0.1)),
+        setpoint_ramp=draw.choice((0.0, 0.0, 30.0)),
+        load_shape=draw.choice(("step", "step", "ramp", "pulse", "sine")),
+        load_time=60.0,
+        change_at=draw.choice((None, 250.0)),
+        gain_factor=1.3,
+        dead_time_factor=draw.choice((0.7, 1.6)),
+    )
+    return loop, events
+
+
+def leapt_loops(size: int, seed: int) -> tuple[float, list[str]]:
+    """Loops with everything that leaps know, against the same loops stepped; a share of what moves.
+
+    Loops that grow are compared up to where they have become 100 times as large as their events.
+    """
+    draw, worst = random.Random(seed), 0.0
+    failures: list[str] = []
+    for _ in range(size):
+        loop, events = _anything(draw)
+        whole, clock = process(loop), Clock(1.0, loop.computing_delay)
+        leapt = passage(loop, whole, clock, events, Instruments()).course
+        stepped = passage(loop, whole, clock, events, Stepped()).course
+        large = np.flatnonzero(np.abs(stepped.pv) + np.abs(stepped.outputs) > 1e3)
+        end = int(large[0]) if len(large) else len(stepped.pv)
+        apart = 0.0
+        for one, other in ((leapt.pv, stepped.pv), (leapt.outputs, stepped.outputs)):
+            size_of = max(1.0, float(np.abs(other[:end]).max(initial=0.0)))
+            if len(one) < end:
+                failures.append(f"the leap ends at {len(one)}, before {end}: {loop} {events}")
+                break
+            apart = max(apart, float(np.abs(one[:end] - other[:end]).max(initial=0.0)) / size_of)
+        worst = max(worst, apart)
+        if not apart <= 1e-9:
+            failures.append(f"leap and step are {apart:g} apart: {loop} {events}")
+    return worst, failures
