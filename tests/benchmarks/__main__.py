@@ -254,15 +254,14 @@ def main() -> int:
     if wanted:
         return 0
     with tempfile.TemporaryDirectory() as folder:
-        compiled = in_c(Path(folder))
+        compiled = in_c(Path(folder), LINEAR)
         name = f"linear loop, {SCANS} scans"
         if compiled is None:
             print(f"{name:40} beside C: skipped, there is no cc here")
         else:
+            assert np.abs(compiled() - plain(LINEAR)[0]).max() < 1e-9
             c = compiled
-            _in_turn(
-                name, 25, _simulated(LINEAR), ("in C, cc -O3", lambda: _seconds(lambda: c(LINEAR)))
-            )
+            _in_turn(name, 25, _simulated(LINEAR), ("in C, cc -O3", lambda: _seconds(c)))
     per_scan = [1e6 * _family() for _ in range(5)]
     low, middle, high = statistics.quantiles(per_scan, n=4)
     name = "1,000 plants side by side"

@@ -149,29 +149,31 @@ void loop(const double *p, int scans, int whole, const double *setpoint, const d
 """
 
 
-def in_c(folder: Path) -> Callable[[Numbers], NDArray[np.float64]] | None:
-    """The same recursion compiled in `folder` with `cc -O3`; None where there is no compiler."""
+def in_c(folder: Path, n: Numbers) -> Callable[[], NDArray[np.float64]] | None:
+    """The same recursion compiled in `folder` with `cc -O3`, its numbers laid out beforehand.
+
+    Calling it gives PV.  None where there is no compiler.
+    """
     compiler = shutil.which("cc")
     if compiler is None:
         return None
     source, library = folder / "loop.c", folder / "loop.so"
     source.write_text(_IN_C)
     subprocess.run(
-        [compiler, "-O3", "-shared", "-fPIC", "-o", str(library), str(source), "-lm"], check=True
+        [compiler, "-O3", "-shared", "-fPIC", "-o", str(library), str(source)], check=True
     )
     function = ctypes.CDLL(str(library)).loop
     function.restype = None
+    whole, first, second = n.modes()
+    kept, kick = n.tf / (n.tf + 1.0), n.kd / (n.tf + 1.0)
+    numbers = np.array([*first, *second, n.kp, n.ki, kept, kick, *n.weights, n.low, n.high])
+    setpoint, upset = (np.array(values) for values in n.outside())
+    moved, pv, op = np.zeros(n.scans + whole), np.empty(n.scans), np.empty(n.scans)
+    arrays = (numbers, setpoint, upset, moved, pv, op)
+    given, *rest = (ctypes.c_void_p(array.ctypes.data) for array in arrays)
 
-    def run(n: Numbers) -> NDArray[np.float64]:
-        whole, first, second = n.modes()
-        kept, kick = n.tf / (n.tf + 1.0), n.kd / (n.tf + 1.0)
-        numbers = np.array([*first, *second, n.kp, n.ki, kept, kick, *n.weights, n.low, n.high])
-        setpoint, upset = (np.array(values) for values in n.outside())
-        moved, pv, op = np.zeros(n.scans + whole), np.empty(n.scans), np.empty(n.scans)
-        given, *rest = (
-            ctypes.c_void_p(a.ctypes.data) for a in (numbers, setpoint, upset, moved, pv, op)
-        )
+    def run(held: tuple[NDArray[np.float64], ...] = arrays) -> NDArray[np.float64]:
         function(given, n.scans, whole, *rest)
-        return pv
+        return held[-2]
 
     return run

@@ -196,7 +196,10 @@ def _between(held: Held, events: Events) -> list[float]:
     found = [events.until]
     if events.setpoint_step:
         found += [part.time for part in events.setpoint]
-    if events.load_step:
+    # Where the scans are that close, what comes in between is drawn well enough from one to the
+    # next, but for a jump of PV.
+    is_close = held.clock.scan <= events.until / _ROWS
+    if events.load_step and (not is_close or any(entry.d for entry in held.process.load)):
         for part in events.load[:_CORNERS]:
             found.append(part.time)
             for entry in held.process.load:
