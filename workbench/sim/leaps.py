@@ -74,7 +74,7 @@ def follow(whole: Run, end: int) -> None:
         whole.step(end, step)
         return
     leaps = Leaps(whole)
-    cuts = [*(cut for cut in whole.inputs.cuts if cut < end), end]
+    cuts = [*(cut for cut in whole.inputs.cuts if cut < end and _matters(whole, cut)), end]
     by_hand, place = _FEW, 0
     while whole.at < end and not whole.diverged:
         while cuts[place] <= whole.at:
@@ -93,6 +93,18 @@ def follow(whole: Run, end: int) -> None:
         by_hand = min(2 * by_hand, 4 * _BLOCK) if gone < _BLOCK else _FEW
         if whole.at < stop and not whole.diverged:
             whole.step(min(stop, whole.at + by_hand), step)
+
+
+def _matters(whole: Run, cut: int) -> bool:
+    """Something is other at this scan than at the one before, or the derivative sees it move."""
+    given, algorithm = whole.inputs, whole.algorithm
+    if not cut or (algorithm.kick and algorithm.derivative_weight):
+        return True
+    return bool(
+        given.setpoint[cut] != given.setpoint[cut - 1]
+        or given.direct[cut] != given.direct[cut - 1]
+        or (given.state[cut] != given.state[cut - 1]).any()
+    )
 
 
 @dataclass(frozen=True)

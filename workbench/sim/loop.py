@@ -158,14 +158,11 @@ def _sampled_trace(found: Passage, events: Events) -> Trace:
         measured = course.measured[number]
     elif course.measured is not course.pv:
         measured = values + (course.measured - course.pv)[number]
-    return Trace(
-        time,
-        signals.values(events.setpoint, time + 1e-9 * clock.scan),
-        values,
-        _in_force(held, course, time, number),
-        measured,
-        course.diverged,
-    )
+    # Where every row is a scan and its output acts at once, the outputs are in force as they are.
+    is_plain = len(time) == scans and not clock.computing_delay
+    output = course.outputs if is_plain else _in_force(held, course, time, number)
+    setpoint = signals.values(events.setpoint, time + 1e-9 * clock.scan)
+    return Trace(time, setpoint, values, output, measured, course.diverged)
 
 
 def _with(values: Array, place: int, value: float) -> Array:
@@ -185,9 +182,11 @@ def _offsets(held: Held, until: float) -> list[float]:
 def _shortest_lag(whole: Process) -> float:
     if not len(whole.c):
         return math.inf
-    is_triangular = not np.triu(whole.a, 1).any()
-    rates = np.diag(whole.a) if is_triangular else np.linalg.eigvals(whole.a)
-    rate = float(np.abs(rates).max())
+    rows = whole.a.tolist()
+    if any(any(row[i + 1 :]) for i, row in enumerate(rows)):
+        rate = float(np.abs(np.linalg.eigvals(whole.a)).max())
+    else:
+        rate = max(abs(row[i]) for i, row in enumerate(rows))
     return 1.0 / rate if rate else math.inf
 
 

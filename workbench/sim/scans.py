@@ -97,12 +97,17 @@ class Held:
             for entry in process.output
         ]
         self._parts: dict[float, Part] = {}
-        entering = (*process.output, *process.load)
-        self._column = {id(entry): k for k, entry in enumerate(entering)}
+        # Ways in that are the same but for their dead time, as those of output and load through
+        # one plant, are worked out once.
+        columns: dict[bytes, int] = {}
+        self._column = {
+            id(entry): columns.setdefault(entry.b.tobytes(), len(columns))
+            for entry in (*process.output, *process.load)
+        }
         n = len(process.c)
-        self._inputs = np.array([entry.b for entry in entering]).reshape(len(entering), n).T
+        self._inputs = np.array([np.frombuffer(b) for b in columns]).reshape(len(columns), n).T
         self._known: dict[float, tuple[Array, Array]] = {
-            0.0: (np.eye(n), np.zeros((n, len(entering))))
+            0.0: (np.eye(n), np.zeros((n, len(columns))))
         }
         self._learn([rest for _, _, rest in self.entries])
 
@@ -152,7 +157,10 @@ class Held:
 
     def reading(self) -> tuple[Array, dict[int, float]]:
         """PV as the controller reads it: weights on the state and on the outputs of scans back."""
-        part, c = self.over(self.clock.lead), self.process.c
+        c = self.process.c
+        if not self.clock.lead and not any(entry.d for entry in self.process.output):
+            return c, {}
+        part = self.over(self.clock.lead)
         weights = dict(part.weights)
         for back, tap in part.taps.items():
             weights[back] = weights.get(back, 0.0) + float(c @ tap)
@@ -267,7 +275,7 @@ def inputs(
         varying.add("setpoint")
     load = tuple(part for part in load if not isinstance(part, Step) or part.size)
     state, direct = held.upset(load, scans, clock.scan)
-    if clock.lead or direct.any():
+    if clock.lead or any(entry.d for entry in held.process.load):
         ahead, direct = held.upset(load, scans, clock.lead)
         direct += ahead @ held.process.c
     if len(load) > _FEW_STEPS or not all(isinstance(part, Step) for part in load):

@@ -63,6 +63,8 @@ Signal = tuple[Step | Ramp | Sine, ...]
 
 def values(signal: Signal, time: Array) -> Array:
     """A signal at the instants (n,) [s]."""
+    if len(signal) == 1:
+        return signal[0].values(time)
     total = np.zeros(len(time))
     for part in signal:
         total += part.values(time)
