@@ -120,12 +120,13 @@ def holds(
 
     Notes
     -----
-    Over short intervals, |A| t <= 1/2, the power series of (exp(A t) - 1)/(A t) to the 15th power
-    is exact to double precision and needs a handful of products (its powers grouped by fours, as
-    M.S. Paterson and L.J. Stockmeyer, SIAM J. Comput. 2(1), 1973, 60-66, from memory).
+    Over short intervals, the largest row sum of |A| t at most 1/2, the power series of
+    (exp(A t) - 1)/(A t) to the 15th power is exact to double precision and needs a handful of
+    products (its powers grouped by fours, as M.S. Paterson and L.J. Stockmeyer, SIAM J. Comput.
+    2(1), 1973, 60-66, from memory).
     """
     n, longest = len(a), max(intervals, default=0.0)
-    if not n or float(np.abs(a).sum(axis=0).max()) * longest > 0.5:
+    if not n or max(sum(map(abs, row)) for row in a.tolist()) * longest > 0.5:
         return [_held_alone(a, b, interval) for interval in intervals]
     square = a @ a
     powers = np.empty((4, n, n))

@@ -39,8 +39,8 @@ _LEAST: Final = 12
 """Fewer scans than this are stepped."""
 _FEW: Final = 2
 """Half the scans that are stepped where a mode ends."""
-_LARGEST: Final = 1e100
-"""Powers of an unstable loop are not taken further."""
+_LARGEST: Final = 1e200
+"""Powers of an unstable loop whose squares sum up to this are not taken further."""
 
 
 class Mode(Enum):
@@ -310,12 +310,14 @@ class Leaps:
     def _of(self, mode: Mode) -> _Powers:
         if mode not in self._powers:
             over_scan, seen = self._one_scan(mode)
-            rows = over_scan[self.kept]
+            # Without given inputs everything is kept, as it stands.
+            kept: list[int] | slice = self.kept if self.given else slice(self.at.change)
+            rows = over_scan[kept]
             self._powers[mode] = _Powers(
-                rows[:, self.kept],
-                rows[:, self.given],
-                seen[:, self.kept],
-                seen[:, self.given],
+                rows[:, kept],
+                rows[:, self.given] if self.given else rows[:, :0],
+                seen[:, kept],
+                seen[:, self.given] if self.given else seen[:, :0],
                 _GIVEN_BLOCK if self.given else _BLOCK,
                 self.at.n,
             )
@@ -442,7 +444,7 @@ class _Powers:
                 break
             if k == len(self.over):
                 self.over.append(self.over[-1] @ self.over[-1])
-            if not np.abs(self.over[k]).max() < _LARGEST:
+            if not np.vdot(self.over[k], self.over[k]) < _LARGEST:
                 break
             more = min(done, count - done)
             np.matmul(blocks[:more], self.over[k].T, out=blocks[done : done + more])
