@@ -26,6 +26,13 @@ from tests.model.test_robustness import brinks, sampled_verdicts
 from tests.model.test_stability import verdicts
 from tests.model.test_transfer import laws, limits, step_responses
 from tests.plain import sampled_pv
+from tests.sim.campaigns import (
+    analogue_by_mpmath,
+    changed_loops,
+    leapt_loops,
+    limited_loops,
+    sampled_by_mpmath,
+)
 from tests.sim.series import Path as Way
 from tests.sim.series import Rational, responses
 from workbench.case.files import parse_case
@@ -408,6 +415,21 @@ CAMPAIGNS: Final[dict[str, Campaign]] = {
     ),
     "analogue trends": Campaign(analogue_trends, 3, 60),
     "sampled trends": Campaign(sampled_trends, 10, 1000),
+    "sampled loops by mpmath": Campaign(
+        _judged(sampled_by_mpmath, 201, 1e-9, "largest error, share of the step"), 5, 100
+    ),
+    "analogue loops by mpmath": Campaign(
+        _judged(analogue_by_mpmath, 202, 1e-5, "largest error, share of the step"), 3, 50
+    ),
+    "leaps of anything": Campaign(
+        _judged(leapt_loops, 205, 1e-9, "leap and step apart, share of the largest"), 40, 2000
+    ),
+    "loops that meet limits": Campaign(
+        _judged(limited_loops, 203, 1e-9, "leap and step apart [%]"), 100, 2000
+    ),
+    "modes and settings changed": Campaign(
+        _judged(changed_loops, 204, 1e-9, "moved further than asked [%]"), 100, 2000
+    ),
     "sampled margins": Campaign(sampled_brinks, 5, 500),
     "fits of made records": Campaign(fitted_records, 10, 400),
     "damaged case files": Campaign(damaged_files, 100, 20_000),

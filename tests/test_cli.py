@@ -5,6 +5,7 @@ from __future__ import annotations
 import json
 import math
 import os
+import re
 import signal
 import subprocess
 import sys
@@ -158,7 +159,7 @@ def test_versions_are_printed(run: Run) -> None:
         (["nothere.toml"], "nothere.toml", "there is no such file or folder"),
         (["no/such"], "no/such", "there is no such file or folder"),
         (["oven.toml", "--ascii"], "screen", "needs a terminal"),
-        ([], "screen", "assess, predict, respond, fit, propose, check, history or new"),
+        ([], "screen", "assess, predict, respond, fit, propose, convert, check, history or new"),
         (["."], "screen", "needs a terminal"),
         (["--asci"], "--asci", "did you mean --ascii?"),
         (["--gain", "1"], "--gain", "is not an option"),
@@ -273,6 +274,15 @@ BAD = [
     ("propose oven.toml --for both", "--for: ", "load or setpoint"),
     ("propose oven.toml --closed-loop-time 30", "--closed-loop-time: ", "has no unit"),
     ("propose oven.toml --max-sensitivity 0.5", "--max-sensitivity: ", "above 1"),
+    ("convert oven.toml", "--to: ", "ideal, parallel or series"),
+    ("convert oven.toml --to idel", "--to: ", "did you mean ideal?"),
+    ("convert plant.toml --to series", "plant.toml: ", "a conversion needs a controller"),
+    ("convert --to series", "--gain: ", "a conversion needs a controller"),
+    ("convert oven.toml --to parallel --integral-as s", "--integral-as: ", "1/s or 1/min"),
+    ("convert oven.toml --to series --integral-as 1/s", "--integral-as: ", "the series form"),
+    ("convert oven.toml --to series --gain-as PB", "--gain-as: ", "gain or band"),
+    ("convert oven.toml --to series --derivative-as ms", "--derivative-as: ", "s, min or h"),
+    ("convert oven.toml --to series --gain 1", "--gain: ", "--set key=value"),
     ("new ../x", "TAG: ", "cannot be a file's name"),
     ("new a/b", "TAG: ", "cannot be a file's name"),
     ("new .x", "TAG: ", "cannot be a file's name"),
@@ -734,6 +744,57 @@ def test_propose_says_no_where_no_rule_applies_or_the_limit_is_not_met(run: Run)
     done = run("propose", "oven.toml", "--max-sensitivity", "1.01", "--json")
     assert not any(row["within_limit"] for row in answer(done, status=1)["proposals"])
     assert run("propose", "oven.toml", "--method", "present").status == 0
+
+
+CONVERT_KEYS = (
+    "form",
+    "gain",
+    "integral",
+    "derivative",
+    "derivative_filter",
+    "setpoint_weight",
+    "exact",
+)
+IDEAL = ("--gain", "2", "--integral", "24 s", "--derivative", "6 s", "--derivative-filter", "none")
+
+
+def test_convert_keeps_its_keys_and_needs_no_plant(run: Run) -> None:
+    data = answer(run("convert", "--to", "series", *IDEAL, "--json"))
+    # published rule (K.J. Astrom and T. Hagglund, PID Controllers, 1995, from memory), recomputed
+    assert {key: data[key] for key in CONVERT_KEYS} == {
+        "form": "series",
+        "gain": 1.0,
+        "integral": "12 s",
+        "derivative": "12 s",
+        "derivative_filter": "none",
+        "setpoint_weight": 1.0,
+        "exact": True,
+    }
+    assert (data["integral_s"], data["derivative_s"], data["derivative_filter_s"]) == (12, 12, 0)
+    assert "setpoint weight of 2" in data["notes"][0]["text"]
+
+
+def test_convert_writes_the_units_asked_for(run: Run) -> None:
+    units = ("--gain-as", "band", "--integral-as", "1/s", "--derivative-as", "min")
+    data = answer(run("convert", "--to", "parallel", *IDEAL, *units, "--json"))
+    # exact: 100/2 %, 2/24 1/s, 2 6 s
+    assert (data["gain"], data["proportional_band"]) == (2.0, 50.0)
+    assert float(data["integral"].removesuffix(" 1/s")) == pytest.approx(2 / 24)
+    assert data["derivative"] == "0.2 min"
+    done = run("convert", "oven.toml", "--to", "ideal", "--integral-as", "repeats/min")
+    # exact: 60/32
+    assert re.search(r"^  integral +1\.875 repeats/min$", done.out, re.MULTILINE)
+
+
+def test_settings_that_a_form_cannot_hold_are_answered_with_status_1(run: Run) -> None:
+    shorter = ("20 s" if word == "24 s" else word for word in IDEAL)
+    words = ("convert", "--to", "series", *shorter)
+    data = answer(run(*words, "--json"), status=1)
+    assert (data["gain"], data["exact"]) == (None, False)
+    assert "at most 5 s" in data["reason"]
+    done = run(*words)
+    assert done.status == 1
+    assert "refused" in done.out
 
 
 def test_check_lists_every_fault(run: Run) -> None:

@@ -25,6 +25,7 @@ HEADLESS: Final = {
     "respond": ("--plant", LOOP[1]),
     "fit": (str(ROOT / "cases" / "TIC-307_bump.csv"),),
     "propose": LOOP,
+    "convert": ("--to", "series", *LOOP),
     "check": (str(ROOT / "cases" / "TIC-307.toml"),),
     "history": (str(ROOT / "cases" / "TIC-307.toml"),),
     "new": ("XIC-1", *LOOP),

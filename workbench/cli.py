@@ -27,7 +27,15 @@ from typing import TYPE_CHECKING, Final, TextIO
 from workbench import __version__, report
 from workbench.errors import InputError, Problem, WorkbenchError, problem
 from workbench.options import COMMANDS, SCREEN, Given, Grammar, Option, option_lines
-from workbench.units import Note, harmless, nearest, one_of
+from workbench.units import (
+    GAIN_RATE_UNITS,
+    INTEGRAL_UNITS,
+    TIME_UNITS,
+    Note,
+    harmless,
+    nearest,
+    one_of,
+)
 
 if TYPE_CHECKING:
     from workbench.case.case import Case
@@ -56,7 +64,7 @@ class Answer:
 # --- the loop of a command ------------------------------------------------------------------------
 
 
-def _loop(given: Given, *, gain: str = "") -> Case:
+def _loop(given: Given, *, gain: str = "", needs_plant: bool = True) -> Case:
     """The case that the command works on: a file with changes, or the inline options.
 
     `gain` stands in where inline options tell of a controller and leave its gain open.
@@ -79,7 +87,7 @@ def _loop(given: Given, *, gain: str = "") -> Case:
         raise problem(
             "is given without a CASE", "name a case file, or use the inline options", key="--set"
         )
-    if "--plant" not in given:
+    if needs_plant and "--plant" not in given:
         raise problem(
             "is missing" if inline else "neither a CASE nor --plant is given",
             'name a case file, or give a plant like --plant "1.8 exp(-6 s)/(40 s + 1)"',
@@ -136,7 +144,7 @@ def _predict(given: Given) -> Answer:
         _check_target(trend_file)
     case = _loop(given)
     if case.controller is None:
-        raise _no_controller(given)
+        raise _no_controller(given, "a prediction")
     with _progress("predicting"):
         evaluation = study.evaluate(case, seed)
         # Where there is no prediction, asking for it says why.
@@ -151,14 +159,14 @@ def _predict(given: Given) -> Answer:
     )
 
 
-def _no_controller(given: Given) -> InputError:
+def _no_controller(given: Given, what_for: str) -> InputError:
     if not given.file:
         return problem(
-            "is missing: a prediction needs a controller",
+            f"is missing: {what_for} needs a controller",
             "give --gain or --proportional-band",
             key="--gain",
         )
-    what = "has no [controller] table, and a prediction needs a controller"
+    what = f"has no [controller] table, and {what_for} needs a controller"
     mend = "write one in the file, or give one with --set controller.gain=1"
     return InputError(Problem(what, mend, path=given.file))
 
@@ -263,6 +271,30 @@ def _propose(given: Given) -> Answer:
         report.propose_text(case, proposals, notes, units, _width()),
         report.propose_data(case, proposals, notes, units),
         Status.DONE if done else Status.NO,
+    )
+
+
+def _convert(given: Given) -> Answer:
+    """The same controller in another form and other units."""
+    from workbench import study
+    from workbench.model.conversion import HELD_BY, Units
+
+    form = given.choice("--to", tuple(HELD_BY))
+    if form is None:
+        raise problem("is missing", f"name the form wanted: {one_of(list(HELD_BY))}", key="--to")
+    units = Units(
+        given.choice("--gain-as", ("gain", "band")),
+        given.choice("--integral-as", (*INTEGRAL_UNITS, *GAIN_RATE_UNITS)),
+        given.choice("--derivative-as", tuple(TIME_UNITS)),
+    )
+    case = _loop(given, needs_plant=False)
+    if case.controller is None:
+        raise _no_controller(given, "a conversion")
+    found = study.convert(case, form, units)
+    return Answer(
+        report.convert_text(case, found, _width()),
+        report.convert_data(case, found, study.units_of(case)),
+        Status.NO if found.controller is None else Status.DONE,
     )
 
 
@@ -661,6 +693,7 @@ VERBS: Final[dict[str, Callable[[Given], Answer]]] = {
     "respond": _respond,
     "fit": _fit,
     "propose": _propose,
+    "convert": _convert,
     "check": _check,
     "history": _history,
     "new": _new,

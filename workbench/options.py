@@ -567,6 +567,17 @@ WISHES: Final[tuple[Option, ...]] = (
     Option("--max-sensitivity", "MS", "limit on the peak of the sensitivity", "1.7"),
     Option("--method", "NAME", "this method only", "every method that applies"),
 )
+CONVERSION: Final[tuple[Option, ...]] = (
+    Option("--to", "FORM", "the form wanted: ideal, series or parallel", "needed"),
+    Option("--gain-as", "gain|band", "gain, or proportional band", "as it is given"),
+    Option(
+        "--integral-as",
+        "UNIT",
+        "s, min/repeat, repeats/min ...; in the parallel form 1/s or 1/min",
+        "as it is given, or what comes nearest to it",
+    ),
+    Option("--derivative-as", "s|min|h", "unit of the derivative", "as it is given"),
+)
 BETWEEN: Final = Option(
     "--between", "A B", "what changed between two entries, numbered from 1 (oldest)", count=2
 )
@@ -626,6 +637,13 @@ COMMANDS: Final[dict[str, Grammar]] = {
             "[CASE]",
             (*WISHES, SET, *INLINE, JSON),
             "workbench propose cases/TIC-307.toml --for load",
+        ),
+        Grammar(
+            "convert",
+            "The same controller in another form and other units; a plant is not needed.",
+            "[CASE]",
+            (*CONVERSION, SET, *INLINE, JSON),
+            'workbench convert --to series --gain 2 --integral "30 s" --derivative "6 s"',
         ),
         Grammar(
             "check",

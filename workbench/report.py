@@ -24,6 +24,7 @@ if TYPE_CHECKING:
     from workbench.records.identify import Candidate, Fit
     from workbench.study import (
         Assessment,
+        Conversion,
         Evaluation,
         FileCheck,
         LoopFigures,
@@ -158,9 +159,9 @@ def settings_text(controller: Controller) -> str:
     return ", ".join(parts)
 
 
-def _amount(amount: Amount | None) -> str:
-    """An amount as it is read: four digits, in its own unit."""
-    return "none" if amount is None else text(amount.value, amount.unit)
+def _amount(amount: Amount | None, digits: int = 4) -> str:
+    """An amount as it is read, in its own unit."""
+    return "none" if amount is None else text(amount.value, amount.unit, digits)
 
 
 def _integral_s(controller: Controller | None) -> Figure:
@@ -384,11 +385,23 @@ def _loop_rows(loop: LoopFigures, units: Mapping[str, str]) -> Rows:
 _MEASURES: Final = (
     ("setpoint", "iae", "setpoint_iae", "integral absolute error", "{pv} s"),
     ("setpoint", "overshoot_percent", "setpoint_overshoot_percent", "overshoot", "%"),
-    ("setpoint", "rise_time_s", "setpoint_rise_time_s", "rise time", "s"),
+    ("setpoint", "rise_time_s", "setpoint_rise_time_s", "rise time, 10 to 90 %", "s"),
     ("setpoint", "settling_time_s", "setpoint_settling_time_s", "settling time", "s"),
+    (
+        *("setpoint", "control_rise_time_s", "setpoint_control_rise_time_s"),
+        *("control rise time, to within 2 %", "s"),
+    ),
+    ("setpoint", "ise", "setpoint_ise", "integral squared error", "{pv}2 s"),
+    ("setpoint", "itae", "setpoint_itae", "integral of time and absolute error", "{pv} s2"),
+    ("setpoint", "decay_ratio", "setpoint_decay_ratio", "decay ratio", ""),
+    ("setpoint", "period_s", "setpoint_period_s", "period of the swing", "s"),
     ("load", "iae", "load_iae", "integral absolute error", "{pv} s"),
     ("load", "peak_deviation", "load_peak_deviation", "peak deviation", "{pv}"),
     ("load", "settling_time_s", "load_settling_time_s", "settling time", "s"),
+    ("load", "ise", "load_ise", "integral squared error", "{pv}2 s"),
+    ("load", "itae", "load_itae", "integral of time and absolute error", "{pv} s2"),
+    ("load", "decay_ratio", "load_decay_ratio", "decay ratio", ""),
+    ("load", "period_s", "load_period_s", "period of the swing", "s"),
     ("output", "travel", "output_travel", "travel", "{op}"),
     ("output", "reversals", "output_reversals", "reversals", ""),
     ("output", "time_at_limit_s", "output_time_at_limit_s", "time at a limit", "s"),
@@ -835,6 +848,85 @@ def _proposal_table(
     below = [[one[0], *right] for one, right in zip(settings, judged, strict=True)]
     heads = [["", *judged_head[0]], ["", *judged_head[1]], ["method", *judged_head[2]]]
     return [*_grid(settings_head, settings), "", *_grid(heads, below)]
+
+
+# --- convert --------------------------------------------------------------------------------------
+
+
+def convert_data(case: Case, found: Conversion, units: Mapping[str, str]) -> Json:
+    """The conversion as `convert --json` prints it; the settings in the words of a case file."""
+    data: Json = {"tag": case.loop.tag, "form": found.form}
+    controller = found.controller
+    none = Figure(None, f"the {found.form} form cannot hold these settings")
+    if controller is None:
+        for key in _CONVERTED:
+            _put(data, key, none)
+    else:
+        said = _settings_data(controller)
+        data |= {key: said[key] for key in _CONVERTED if key in said}
+        data["gain"] = float(controller.gain_value)
+    filter_time = none if controller is None else Figure(controller.gains().filter_time)
+    _put(data, "integral_s", none if controller is None else _integral_s(controller))
+    _put(data, "derivative_s", none if controller is None else _derivative_s(controller))
+    _put(data, "derivative_filter_s", filter_time)
+    data["exact"] = found.exact
+    data["reason"] = found.reason
+    data["notes"] = _noted(found.notes)
+    data["units"] = {**units, "gain": "%/%"}
+    return data
+
+
+_CONVERTED: Final = (
+    "gain",
+    "proportional_band",
+    "integral",
+    "derivative",
+    "derivative_filter",
+    "setpoint_weight",
+    "derivative_on",
+)
+"""Settings that `convert` answers with, as the case file spells them."""
+
+
+def convert_text(case: Case, found: Conversion, width: int) -> str:
+    """The conversion for people."""
+    lines = [*_title(case, width), f"In the {found.form} form"]
+    controller = found.controller
+    if controller is None:
+        rows: Rows = [("refused", found.reason)]
+        return "\n".join([*lines, *_table(rows, width)])
+    if controller.gain is None:
+        rows = [("proportional band", text(controller.proportional_band, "%", _TYPED))]
+    else:
+        rows = [("gain", text(controller.gain, "", _TYPED))]
+    rows += [
+        ("integral", _amount(controller.integral, _TYPED)),
+        ("derivative", _amount(controller.derivative, _TYPED)),
+    ]
+    if controller.derivative is not None:
+        rows.append(("derivative filter", _filter_words(controller)))
+        rows.append(("derivative on", controller.derivative_on))
+    rows.append(("setpoint weight", text(controller.setpoint_weight, "", _TYPED)))
+    same = "yes, the same path from PV to OP" if found.exact else "no, only nearly"
+    rows.append(("exact", same))
+    return "\n".join([*lines, *_table(rows, width), *_notes(found.notes, width), *_handover(width)])
+
+
+_TYPED: Final = 6
+"""Digits of settings that are to be typed into a controller and stay the same controller."""
+
+
+def _filter_words(controller: Controller) -> str:
+    """The derivative filter as a time and as N, since some controllers take one and some the other.
+
+    For a controller with a derivative part.
+    """
+    filter_time = controller.gains().filter_time
+    if not filter_time:
+        return "none"
+    derivative_s = _derivative_s(controller).value
+    share = "" if derivative_s is None else f", N = {text(derivative_s / filter_time, '', _TYPED)}"
+    return f"{text(filter_time, 's', _TYPED)}{share}"
 
 
 # --- check ----------------------------------------------------------------------------------------

@@ -8,26 +8,32 @@ that could be done says something anywhere.
 from __future__ import annotations
 
 import asyncio
+import math
 import os
 import pty
+import random
 import select
 import statistics
 import subprocess
 import sys
+import tempfile
 import time
+import tracemalloc
 from collections.abc import Callable, Sequence
+from dataclasses import replace
 from pathlib import Path
 from typing import Final
 
 import numpy as np
 
-from tests.plain import sampled_pv
+from tests.benchmarks.recursion import Numbers, in_c, plain, plain_limited
 from workbench import study
 from workbench.case.case import edit
 from workbench.case.files import read_case
 from workbench.model.feedback import Loop
 from workbench.model.pid import Gains
 from workbench.model.transfer import TransferFunction
+from workbench.sim.family import side_by_side
 from workbench.sim.loop import simulate
 from workbench.sim.scenario import Events
 
@@ -81,16 +87,50 @@ def _process(*words: str) -> float:
 
 
 SCANS: Final = 3600
-_PLANT: Final = (1.8, 40.0, 6.0)
-_GAINS: Final = Gains(1.1, 1.1 / 32.0)
-_TRANSFER: Final = TransferFunction.ratio((_PLANT[0],), [(_PLANT[1], 1.0)], _PLANT[2])
-_LOOP: Final = Loop(_TRANSFER, _TRANSFER, _GAINS, scan=1.0)
-_EVENTS: Final = Events(1.0, 0.0, 1.0, 1800.0, SCANS - 1.0)
+LINEAR: Final = Numbers(1.8, (40.0, 8.0), 8.3, 1.1, 1.1 / 32.0, 4.0, 0.4, SCANS, SCANS // 2)
+LATE: Final = replace(LINEAR, dead_time=300.0, kp=0.3, ki=0.3 / 150.0)
+SATURATING: Final = replace(LINEAR, setpoint=20.0, upset=-5.0, low=-12.5, high=12.5)
 
 
-def _recursion() -> list[float]:
-    upset = [0.0] * 1800 + [1.0] * (SCANS - 1800)
-    return sampled_pv(_PLANT, _GAINS, 1.0, 0.0, [1.0] * SCANS, upset)
+def _loop(n: Numbers) -> Loop:
+    plant = TransferFunction.ratio((n.gain,), [(lag, 1.0) for lag in n.lags], n.dead_time)
+    low, high = (bound if math.isfinite(bound) else None for bound in (n.low, n.high))
+    gains = Gains(n.kp, n.ki, n.kd, n.tf, *n.weights)
+    return Loop(plant, plant, gains, scan=1.0, low=low, high=high)
+
+
+def _events(n: Numbers) -> Events:
+    return Events(n.setpoint, 0.0, n.upset, float(n.upset_at), n.scans - 1.0)
+
+
+def _simulated(n: Numbers) -> Callable[[], float]:
+    """Our time for a loop, the making of its model included."""
+    return lambda: _seconds(lambda: simulate(_loop(n), _events(n)))
+
+
+def _family() -> float:
+    """1,000 plants side by side [s per plant and scan], the making of their models included."""
+    draw = random.Random(1)
+    numbers = [
+        replace(
+            LINEAR,
+            gain=draw.uniform(1.0, 3.0),
+            lags=(draw.uniform(20.0, 60.0), draw.uniform(4.0, 12.0)),
+            dead_time=draw.uniform(4.0, 12.0),
+        )
+        for _ in range(1000)
+    ]
+    took = _seconds(lambda: side_by_side([_loop(n) for n in numbers], _events(LINEAR)))
+    return took / len(numbers) / SCANS
+
+
+def _largest_megabytes(n: Numbers) -> float:
+    """Most memory that a run holds at once."""
+    tracemalloc.start()
+    simulate(_loop(n), _events(n))
+    peak = tracemalloc.get_traced_memory()[1]
+    tracemalloc.stop()
+    return peak / 1e6
 
 
 def _what_if(gains: Sequence[str]) -> float:
@@ -149,8 +189,23 @@ ROWS: Final[
     (
         f"linear loop, {SCANS} scans",
         25,
-        lambda: _seconds(lambda: simulate(_LOOP, _EVENTS)),
-        ("the same recursion in plain Python", lambda: _seconds(_recursion)),
+        _simulated(LINEAR),
+        ("the same recursion in plain Python", lambda: _seconds(lambda: plain(LINEAR))),
+    ),
+    (
+        "dead time of 300 scans",
+        25,
+        _simulated(LATE),
+        ("the same recursion in plain Python", lambda: _seconds(lambda: plain(LATE))),
+    ),
+    (
+        "output saturating twice",
+        25,
+        _simulated(SATURATING),
+        (
+            "the same recursion in plain Python",
+            lambda: _seconds(lambda: plain_limited(SATURATING)),
+        ),
     ),
     ("what-if: every figure and the trend", 25, lambda: _what_if(("1.05",)), None),
     ("what-if on the screen, key to redrawn", 7, _nudge_on_screen, None),
@@ -163,28 +218,56 @@ ROWS: Final[
 def _spread(times: Sequence[float]) -> str:
     """Median and middle half, in milliseconds."""
     low, middle, high = statistics.quantiles(times, n=4)
-    return f"{1e3 * middle:8.1f} ms ({1e3 * low:.1f} to {1e3 * high:.1f})"
+    return f"{1e3 * middle:8.2f} ms ({1e3 * low:.2f} to {1e3 * high:.2f})"
+
+
+def _in_turn(
+    name: str,
+    count: int,
+    ours: Callable[[], float],
+    yardstick: tuple[str, Callable[[], float]] | None,
+) -> None:
+    ours()
+    mine, others = [], []
+    for _ in range(count):
+        # In turn, so that both meet the same disturbances.
+        mine.append(ours())
+        if yardstick is not None:
+            others.append(yardstick[1]())
+    print(f"{name:40} {_spread(mine)}")
+    if yardstick is not None:
+        ratio = statistics.median(mine) / statistics.median(others)
+        print(f"  {yardstick[0]:38} {_spread(others)}   ratio {ratio:.2f}", flush=True)
 
 
 def main() -> int:
-    """Measure and print."""
-    # Once for nothing, so that neither side pays for reading files the first time.
-    simulate(_LOOP, _EVENTS)
-    pv = simulate(_LOOP, _EVENTS).pv
-    assert len(pv) >= SCANS
-    assert np.isfinite(pv).all()
+    """Measure and print; words choose the rows that begin with them."""
+    wanted = tuple(sys.argv[1:])
+    for n, recursion in ((LINEAR, plain), (LATE, plain), (SATURATING, plain_limited)):
+        # The yardsticks do the same work, or they measure nothing.
+        trace = simulate(_loop(n), _events(n))
+        rows = np.searchsorted(trace.time, np.arange(n.scans) - 1e-6)
+        assert np.abs(trace.pv[rows] - recursion(n)[0]).max() < 1e-9 * max(1.0, n.setpoint)
     for name, count, ours, yardstick in ROWS:
-        ours()
-        mine, others = [], []
-        for _ in range(count):
-            # In turn, so that both meet the same disturbances.
-            mine.append(ours())
-            if yardstick is not None:
-                others.append(yardstick[1]())
-        print(f"{name:40} {_spread(mine)}")
-        if yardstick is not None:
-            ratio = statistics.median(mine) / statistics.median(others)
-            print(f"  {yardstick[0]:38} {_spread(others)}   ratio {ratio:.2f}", flush=True)
+        if not wanted or name.startswith(wanted):
+            _in_turn(name, count, ours, yardstick)
+    if wanted:
+        return 0
+    with tempfile.TemporaryDirectory() as folder:
+        compiled = in_c(Path(folder), LINEAR)
+        name = f"linear loop, {SCANS} scans"
+        if compiled is None:
+            print(f"{name:40} beside C: skipped, there is no cc here")
+        else:
+            assert np.abs(compiled() - plain(LINEAR)[0]).max() < 1e-9
+            c = compiled
+            _in_turn(name, 25, _simulated(LINEAR), ("in C, cc -O3", lambda: _seconds(c)))
+    per_scan = [1e6 * _family() for _ in range(5)]
+    low, middle, high = statistics.quantiles(per_scan, n=4)
+    name = "1,000 plants side by side"
+    print(f"{name:40} {middle:8.3f} us per plant and scan ({low:.3f} to {high:.3f})")
+    for name, n in (("linear", LINEAR), ("300 scans late", LATE), ("saturating", SATURATING)):
+        print(f"{f'memory of a run, {name}':40} {_largest_megabytes(n):8.2f} MB")
     return 0
 
 

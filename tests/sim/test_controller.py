@@ -12,7 +12,7 @@ from workbench.errors import InputError
 from workbench.model.feedback import Loop
 from workbench.model.pid import Gains
 from workbench.model.transfer import TransferFunction
-from workbench.sim.controller import Algorithm
+from workbench.sim.controller import Algorithm, Memory
 
 PLANT = TransferFunction.ratio((1.0,), [(10.0, 1.0)])
 
@@ -103,6 +103,66 @@ def test_without_integral_nothing_is_given_back() -> None:
     step = algorithm(Gains(2.0), high=1.0, windup="tracking").start()
     step(5.0, 0.0)
     assert step(0.25, 0.0) == 0.5
+
+
+def test_incremental_execution_is_positional_while_nothing_limits() -> None:
+    # exact: the sum of the changes is the whole
+    gains = Gains(2.0, 0.5, 3.0, 1.0, 0.7)
+    positional = algorithm(gains).start()
+    incremental = algorithm(gains, incremental=True, low=-1e3, high=1e3).start()
+    for i in range(50):
+        pv = math.sin(0.3 * i)
+        assert incremental(1.0, pv) == pytest.approx(positional(1.0, pv), abs=1e-12)
+
+
+def test_incremental_execution_adds_to_the_output_that_the_limit_left() -> None:
+    # exact: u + Kp (change of e) + Ki h e, Kp 1, Ki 0.5, limit 2
+    step = algorithm(Gains(1.0, 0.5), incremental=True, high=2.0).start()
+    assert step(4.0, 0.0) == 2.0
+    assert step(4.0, 0.0) == 2.0
+    assert step(1.0, 0.0) == pytest.approx(2.0 - 3.0 + 0.5)
+
+
+def test_incremental_execution_without_integral_action_is_refused() -> None:
+    with pytest.raises(InputError, match="incremental without integral action"):
+        algorithm(Gains(1.0), incremental=True)
+
+
+def test_dead_zone_takes_its_width_off_the_error() -> None:
+    # exact: Kp 2, Ki 0.5, zone 1: e 3 acts as 2, e -0.5 not at all
+    step = algorithm(Gains(2.0, 0.5), dead_zone=1.0).start()
+    assert step(3.0, 0.0) == pytest.approx(4.0 + 1.0)
+    assert step(0.0, 0.5) == pytest.approx(1.0)
+
+
+def test_gain_grows_with_the_error() -> None:
+    # exact: a share of 0.2 at no error, so that an error of 50 % acts as 50 (0.2 + 0.8/2) = 30
+    step = algorithm(Gains(1.0), gain_at_rest=0.2).start()
+    assert step(50.0, 0.0) == pytest.approx(30.0)
+    assert step(0.0, 0.0) == 0.0
+    assert step(-100.0, 0.0) == pytest.approx(-100.0)
+
+
+def test_manual_ends_where_automatic_goes_on() -> None:
+    # exact: in manual I = u - P, so the first scan of automatic moves by Ki h e alone
+    made, memory = algorithm(Gains(2.0, 0.5), low=-20.0, high=20.0), Memory()
+    manual = made.in_manual(memory, 7.0)
+    assert [manual(3.0, 1.0), manual(3.0, 1.0)] == [7.0, 7.0]
+    assert made.start(memory)(3.0, 1.0) == pytest.approx(7.0 + 0.5 * 2.0)
+
+
+def test_manual_keeps_to_limits_and_rate() -> None:
+    made, memory = algorithm(Gains(2.0, 0.5), high=5.0, rate=2.0), Memory()
+    manual = made.in_manual(memory, 9.0)
+    assert [manual(0.0, 0.0) for _ in range(4)] == [2.0, 4.0, 5.0, 5.0]
+
+
+def test_new_settings_leave_the_output_where_it_is() -> None:
+    # exact: P goes from 2 e to 6 e, I makes up for it; then only Ki h e is added
+    first, second, memory = algorithm(Gains(2.0, 0.5)), algorithm(Gains(6.0, 0.1)), Memory()
+    before = first.start(memory)(2.0, 0.5)
+    second.takes_over(memory, first, 2.0)
+    assert second.start(memory)(2.0, 0.5) == pytest.approx(before + 0.1 * 1.5)
 
 
 def test_an_unknown_way_of_holding_the_integral_is_refused() -> None:

@@ -50,6 +50,42 @@ def test_a_first_order_answer_has_its_closed_form_figures() -> None:
     assert value(seen.final_pv) == pytest.approx(2.0, abs=1e-7)
 
 
+def test_integrals_of_a_first_order_answer() -> None:
+    # exact: error s exp(-t/T) gives ISE s^2 T/2 and ITAE s T^2; within 2 % after T ln 50
+    t = np.linspace(0.0, 300.0, 60001)
+    events = Events(2.0, 0.0, 0.0, 0.0, 300.0)
+    seen = measure(trace(t, 2.0 * (1.0 - np.exp(-t / 10.0)), np.full_like(t, 2.0)), events)
+    assert value(seen.setpoint_ise) == pytest.approx(20.0, rel=1e-5)
+    assert value(seen.setpoint_itae) == pytest.approx(200.0, rel=1e-5)
+    assert value(seen.setpoint_control_rise_time_s) == pytest.approx(10 * math.log(50), rel=1e-5)
+    assert "does not swing" in seen.setpoint_decay_ratio.reason
+
+
+def test_time_and_error_are_exact_through_a_change_of_sign() -> None:
+    # exact: |1 - t| over 0 to 3: 1/6 up to 1, then the integral of t (t - 1), 14/3
+    t = np.array([0.0, 3.0])
+    seen = measure(trace(t, t, np.ones(2)), Events(1.0, 0.0, 0.0, 0.0, 3.0))
+    assert value(seen.setpoint_itae) == pytest.approx(1.0 / 6.0 + 14.0 / 3.0)
+    assert value(seen.setpoint_ise) == pytest.approx(3.0)
+
+
+@pytest.mark.parametrize("damping", [0.1, 0.215, 0.4])
+def test_decay_ratio_and_period_of_a_second_order_loop(damping: float) -> None:
+    # exact: exp(-2 pi z / sqrt(1 - z^2)) and 2 pi / (w sqrt(1 - z^2)), w = 1/(2 z T); a quarter at
+    # a damping of 0.215
+    plant = TransferFunction.ratio((1.0,), [(1.0, 1.0)])
+    loop = Loop(plant, plant, Gains(0.0, 1.0 / (4.0 * damping**2)))
+    root = math.sqrt(1.0 - damping**2)
+    seen = measure(
+        simulate(loop, Events(1.0, 0.0, 0.0, 0.0, 60.0)), Events(1.0, 0.0, 0.0, 0.0, 60.0)
+    )
+    assert value(seen.setpoint_decay_ratio) == pytest.approx(
+        math.exp(-2.0 * math.pi * damping / root), abs=1e-4
+    )
+    period = 2.0 * math.pi * 2.0 * damping / root
+    assert value(seen.setpoint_period_s) == pytest.approx(period, rel=2e-2)
+
+
 @pytest.mark.parametrize(
     ("damping", "percent"),
     # published and exact: exp(-pi z / sqrt(1 - z^2)); 52.7, 16.3, 9.5, 4.6 and 1.5 % in textbooks

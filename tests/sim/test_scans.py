@@ -17,10 +17,12 @@ from workbench.model.feedback import Loop
 from workbench.model.pid import Gains
 from workbench.model.transfer import TransferFunction
 from workbench.sim.controller import Algorithm
+from workbench.sim.leaps import run
 from workbench.sim.loop import Trace, simulate
 from workbench.sim.process import process
-from workbench.sim.scans import Clock, Held, Step, run, step_through
+from workbench.sim.scans import Clock, Held, step_through
 from workbench.sim.scenario import Events
+from workbench.sim.signals import Step
 
 
 @dataclass(frozen=True)

@@ -33,6 +33,7 @@ from workbench.model.blocks import Block, Blocks, format_blocks, parse_blocks
 from workbench.model.pid import Controller
 from workbench.model.plant import SHAPES, Formula
 from workbench.sim.scenario import Scenario
+from workbench.sim.valve import Valve
 from workbench.units import (
     MISSING,
     TIME_UNITS,
@@ -407,6 +408,14 @@ TOLD_WITH: Final[dict[tuple[type, str], tuple[str, ...]]] = {
     (Controller, "integral"): ("form",),
     (Controller, "computing_delay"): ("scan",),
     (Controller, "derivative_filter"): ("form", "gain", "derivative"),
+    (Controller, "execution"): ("integral",),
+    (Controller, "bias"): ("integral",),
+    (Valve, "table"): ("characteristic",),
+    (Valve, "slip_jump"): ("stick_slip",),
+    (Valve, "signal_high"): ("signal_low",),
+    (Scenario, "load_time"): ("load_shape",),
+    (Scenario, "load_record"): ("load_shape",),
+    (Scenario, "automatic_at"): ("manual_at",),
     (Scenario, "setpoint_at"): ("until",),
     (Scenario, "load_at"): ("until",),
 }

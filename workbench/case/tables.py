@@ -19,7 +19,9 @@ from workbench.model.formula import parse_formula
 from workbench.model.pid import Controller
 from workbench.model.plant import SHAPES, Formula, Shape
 from workbench.model.transfer import TransferFunction
+from workbench.sim.instruments import Measurement
 from workbench.sim.scenario import Scenario
+from workbench.sim.valve import Valve
 from workbench.units import (
     MISSING,
     TIME_UNITS,
@@ -259,7 +261,13 @@ class Revision(_Table):
     )
     program: str = quantity("version of the program that made the entry", "text", default="")
 
-    INSTALLATION: ClassVar[tuple[str, ...]] = ("action", "scan", "computing_delay", "windup")
+    INSTALLATION: ClassVar[tuple[str, ...]] = (
+        "action",
+        "scan",
+        "computing_delay",
+        "windup",
+        "execution",
+    )
     """Settings of how the controller is built in; an entry that does not name one leaves it be."""
 
     def controller_keys(self) -> dict[str, str]:
@@ -316,6 +324,8 @@ class Case:
     controller: Controller | None = None
     scenario: Scenario = Scenario()
     history: tuple[Revision, ...] = ()
+    valve: Valve = Valve()
+    measurement: Measurement = Measurement()
 
     def with_entry(self, entry: Revision) -> Case:
         """The case with one more entry at the end of its history."""
@@ -353,6 +363,8 @@ def table_values(case: Case) -> dict[str, Values]:
     }
     if case.controller is not None:
         tables["controller"] = values_of(case.controller)
+    tables["valve"] = values_of(case.valve)
+    tables["measurement"] = values_of(case.measurement)
     tables["scenario"] = values_of(case.scenario)
     return tables
 
@@ -449,6 +461,8 @@ TABLES: Final[dict[str, type]] = {
     "op": OpTable,
     "plant": PlantTable,
     "controller": Controller,
+    "valve": Valve,
+    "measurement": Measurement,
     "scenario": Scenario,
 }
 """Tables of the case file, in file order; the history follows them."""

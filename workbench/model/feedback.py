@@ -38,6 +38,18 @@ class Loop:
     """Fastest change of the output [%/s]."""
     windup: str = "conditional"
     """How the integral is held at a limit: conditional, tracking or external-reset."""
+    incremental: bool = False
+    """The controller adds changes to its output (velocity algorithm)."""
+    dead_zone: float = 0.0
+    """An error up to this counts as none [% of PV span]."""
+    gain_at_rest: float = 1.0
+    """Share of the gain that is left at no error; below 1 the gain grows with the error."""
+    bias: float = 0.0
+    """Manual reset: the output at no error, less where OP rests [%]; without integral action."""
+    setpoint_rate: float | None = None
+    """Fastest change of the setpoint that the controller follows [% of PV span/s]."""
+    setpoint_filter: float = 0.0
+    """Time constant of the first-order filter of the setpoint [s]."""
 
     @property
     def sign(self) -> float:

@@ -127,6 +127,43 @@ class Controller:
         default="conditional",
         choices=("conditional", "tracking", "external-reset"),
     )
+    execution: str = quantity(
+        "positional: the output is computed anew at every scan; incremental: its changes are",
+        "choice",
+        default="positional",
+        choices=("positional", "incremental"),
+    )
+    dead_zone: float = quantity(
+        "error up to which the controller sees none", "number", "PV", low=0, default=0.0
+    )
+    gain_at_rest: float = quantity(
+        "share of the gain left at no error; it grows to 1 at an error of the whole PV span",
+        "number",
+        low=0,
+        high=1,
+        default=1.0,
+    )
+    bias: float | None = quantity(
+        "manual reset: OP at no error, without integral action; left out: the operating point",
+        "number",
+        "OP",
+        default=None,
+    )
+    setpoint_rate: Amount | None = quantity(
+        "fastest change of the setpoint that the controller follows",
+        "rate",
+        "PV",
+        above=0,
+        default=None,
+        example="0.5 /s",
+    )
+    setpoint_filter: Amount | None = quantity(
+        "time constant of the setpoint's first-order filter",
+        "duration",
+        low=0,
+        default=None,
+        example="10 s",
+    )
 
     def __post_init__(self) -> None:
         check_fields(self)
@@ -161,6 +198,22 @@ class Controller:
                     f"has the unit {self.integral.unit!r} in the {self.form} form",
                     f"use {one_of(units)}",
                     "integral",
+                )
+            )
+        if self.execution == "incremental" and self.integral is None:
+            faults.append(
+                Problem(
+                    "is incremental without integral action: PV would never come back",
+                    "give an integral time, or positional",
+                    "execution",
+                )
+            )
+        if self.bias is not None and self.integral is not None:
+            faults.append(
+                Problem(
+                    "is given beside integral action, which finds the output by itself",
+                    "leave one of bias and integral out",
+                    "bias",
                 )
             )
         if self.scan is not None and self.scan.seconds >= 3600:
@@ -271,7 +324,8 @@ def _series(settings: Controller) -> Gains:
     tf = _filter_time(settings, td)
     per_ti = 1.0 / settings.integral.seconds if settings.integral else 0.0
     kp = 1.0 + (td - tf) * per_ti
-    kd = td - tf * kp
+    # Equal to td - tf kp, and exactly 0 where the filter cancels one of the two times.
+    kd = (td - tf) * (1.0 - tf * per_ti)
     on_error = settings.derivative_on == "error"
     b_kp = b + (td - tf) * per_ti if on_error else b
     c_kd = b * td - tf * b_kp if on_error else 0.0

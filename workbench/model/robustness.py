@@ -21,6 +21,7 @@ from workbench.errors import NotApplicable
 from workbench.model.feedback import Loop
 from workbench.model.sampled import SampledLoop
 from workbench.model.stability import Verdict, loop_verdict, plant_verdict
+from workbench.model.structures import Structure
 from workbench.model.transfer import Complex, TransferFunction
 from workbench.units import Figure
 
@@ -87,7 +88,7 @@ def sampled_margins(loop: Loop) -> Margins:
 
     Frequencies run up to half the scan rate.
     """
-    sampled = SampledLoop.of(loop)
+    sampled = loop.sampled() if isinstance(loop, Structure) else SampledLoop.of(loop)
     verdict = sampled.verdict()
     if not verdict.stable:
         return _none(verdict)

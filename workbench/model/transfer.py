@@ -49,7 +49,9 @@ class Factored:
     @classmethod
     def of(cls, coefficients: Sequence[float], power: int = 1) -> Factored:
         """From one list of coefficients in descending powers."""
-        trimmed = tuple(np.trim_zeros(np.asarray(coefficients, float), "f").tolist())
+        trimmed = tuple(map(float, coefficients))
+        while trimmed and trimmed[0] == 0.0:
+            trimmed = trimmed[1:]
         if not trimmed:
             return cls(0.0)
         at_origin = 0
@@ -575,7 +577,7 @@ def _divided(
 ) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
     """Quotient and remainder of all its powers; numpy's own drops what is below 1e-8."""
     degree = len(factor) - 1
-    rest = np.pad(numerator, (max(0, degree + 1 - len(numerator)), 0))
+    rest = np.concatenate([np.zeros(max(0, degree + 1 - len(numerator))), numerator])
     steps = len(rest) - degree
     quotient = np.empty(steps)
     for i in range(steps):

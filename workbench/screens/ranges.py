@@ -10,8 +10,10 @@ class LoopPanel(FieldsPanel):
 
     number = "7"
     title = "Loop"
-    tables = ("loop", "pv", "op")
+    tables = ("loop", "pv", "op", "valve", "measurement")
     help = (
         "The loop's tag and service, and the range, the operating point and the limits of PV and "
         "OP in engineering units.",
+        "What the valve makes of OP, and how PV is measured; a healthy valve and a plain sensor "
+        "where nothing is set.",
     )

@@ -33,7 +33,8 @@ from workbench.errors import InputError, Problem, problem
 from workbench.model.feedback import Loop
 from workbench.model.matrix import expm
 from workbench.sim.process import Entry, Process
-from workbench.sim.scans import BOUND, Step
+from workbench.sim.scans import BOUND
+from workbench.sim.signals import Step
 
 Array = NDArray[np.float64]
 

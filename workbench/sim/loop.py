@@ -9,7 +9,6 @@ from __future__ import annotations
 
 import math
 from dataclasses import dataclass, replace
-from itertools import pairwise
 from typing import Final
 
 import numpy as np
@@ -17,17 +16,25 @@ from numpy.typing import NDArray
 
 from workbench.errors import problem
 from workbench.model.feedback import Loop
-from workbench.sim import analogue
+from workbench.model.structures import Structure
+from workbench.sim import analogue, signals
 from workbench.sim.controller import Algorithm
+from workbench.sim.course import Passage, passage
+from workbench.sim.instruments import Instruments
 from workbench.sim.process import Process, process
-from workbench.sim.scans import Clock, Course, Held, Step, first_scan, run, step_through
+from workbench.sim.scans import Clock, Course, Held
 from workbench.sim.scenario import Events
+from workbench.sim.signals import Signal, Step
+from workbench.sim.structures import Execution, Inside, as_played
 
 Array = NDArray[np.float64]
 
 MOST_SCANS: Final = 200_000
 _ROWS: Final = 3000
 """Rows an analogue trace has at least; a sampled one half as many."""
+_CORNERS: Final = 200
+"""Corners of an upset that get a row of their own; more are felt, but not drawn to the instant."""
+_PLAIN: Final = Instruments()
 _GLANCE: Final = 2_000
 """Pieces that finding out how long to look is worth."""
 _FINE_STEPS: Final = 20_000
@@ -47,13 +54,16 @@ class Trace:
     output: Array
     """[% of OP span], a deviation; in force from its row on."""
     measured: Array
-    """PV with the noise of the latest scan [% of PV span]."""
+    """PV with the noise of the latest scan [% of PV span]; what the sensor showed then, where it
+    has a resolution or stops at its range."""
     diverged: bool = False
     """The loop is unstable and was cut off where it left 1e6 %."""
+    inner: Inside | None = None
+    """What the inner loop of a cascade did, at its own scans."""
 
 
-def simulate(loop: Loop, events: Events) -> Trace:
-    """The course of a loop from rest through a setpoint step, an upset step and noise.
+def simulate(loop: Loop, events: Events, instruments: Instruments = _PLAIN) -> Trace:
+    """The course of a loop from rest through its events.
 
     Parameters
     ----------
@@ -63,6 +73,8 @@ def simulate(loop: Loop, events: Events) -> Trace:
         its true instant, and the output changes after the computing delay and is held.
     events
         Steps [% of PV span; unit of the load path], instants and end [s], noise [% of PV span].
+    instruments
+        The valve after the output, the sensor before the controller.
 
     Returns
     -------
@@ -73,73 +85,88 @@ def simulate(loop: Loop, events: Events) -> Trace:
     ------
     InputError
         Too many scans, or too fast an analogue loop, for the end asked for; noise on an analogue
-        controller; an analogue loop that makes impulses.  `ModelError` for a plant with a dead time
+        controller; an analogue loop that makes impulses; a structure without a scan, or with two
+        that do not go together.  `ModelError` for a plant with a dead time
         inside an inner feedback.
 
     Notes
     -----
-    Sampled: exact but for rounding.  Analogue: about 1e-7 of the step; while a limit or rate limit
-    of the output is in force, about 1e-3 (followed in 20 000 fine steps or more).
+    Sampled: exact but for rounding.  Analogue: about 1e-7 of the step; followed in 20 000 fine
+    steps or more, and to about 1e-3, while a limit or rate limit of the output is in force, and
+    where more happens than a step of each, or something in the loop is not linear.
     """
+    if isinstance(loop, Structure):
+        return _structured(loop, events, instruments)
     if loop.scan is None:
-        return _analogue(loop, events)
-    whole = process(loop)
+        return _analogue(loop, events, instruments)
     clock = Clock(loop.scan, loop.computing_delay)
-    scans = _scans(events.until, clock)
-    held = Held(whole, clock)
-    noise = None
-    if events.noise:
-        noise = np.random.default_rng(events.seed).normal(0.0, events.noise, scans)
-    course = run(
-        held,
-        Algorithm.of(loop, loop.scan),
-        scans,
-        Step(events.setpoint_step, events.setpoint_at),
-        Step(events.load_step, events.load_at),
-        None if noise is None else noise.tolist(),
-    )
-    return _sampled_trace(held, course, events, noise)
+    _check(events.until, clock)
+    return _sampled_trace(passage(loop, process(loop), clock, events, instruments), events)
 
 
-def _scans(until: float, clock: Clock) -> int:
+def _structured(loop: Structure, events: Events, instruments: Instruments) -> Trace:
+    """A loop with compensation, feedforward or an inner loop."""
+    played = as_played(loop, events)
+    assert played.scan is not None
+    clock = Clock(played.scan, played.computing_delay)
+    _check(events.until, clock)
+    execution = Execution(loop, clock, events, instruments)
+    outside = execution.outside(instruments)
+    found = passage(played, process(played), clock, events, outside, by=execution.step)
+    own = replace(found.course, outputs=np.array(execution.outputs))
+    return replace(_sampled_trace(replace(found, course=own), events), inner=execution.inside())
+
+
+def _check(until: float, clock: Clock) -> None:
     if until > MOST_SCANS * clock.scan:
         raise problem(
             f"{until / clock.scan:.0f} scans are too many (at most {MOST_SCANS})",
             "give an earlier end, or a longer scan",
             key="scenario.until",
         )
-    return clock.place(until)[0] + 1
 
 
 # --- rows of a sampled loop ----------------------------------------------------------------------
 
 
-def _sampled_trace(held: Held, course: Course, events: Events, noise: Array | None) -> Trace:
-    clock, load = held.clock, Step(events.load_step, events.load_at)
+def _sampled_trace(found: Passage, events: Events) -> Trace:
+    course, held = found.course, found.plants[0][1]
+    clock, load = held.clock, events.load
+    scans = len(course.pv)
     # Rows at the same places in every scan, and single ones where something happens in between.
     offsets = _offsets(held, events.until)
-    times, numbers, pv = [], [], []
-    scans = len(course.pv)
-    every = np.arange(scans)
-    for offset in offsets:
-        times.append(every * clock.scan + offset)
-        numbers.append(every)
-        pv.append(_pv(held, course, load, offset))
-    for scan, rest in sorted({clock.place(time) for time in _between(held, events)}):
-        if scan < scans:
-            times.append(np.array([scan * clock.scan + rest]))
-            numbers.append(np.array([scan]))
-            pv.append(_pv(held, course, load, rest)[scan : scan + 1])
-    time, number = np.concatenate(times), np.concatenate(numbers)
-    order = np.argsort(time, kind="stable")
-    same = np.diff(time[order], prepend=-1.0) <= 1e-9 * clock.scan
-    order = order[(time[order] <= events.until + 1e-9 * clock.scan) & ~same]
-    time, number, values = time[order], number[order], np.concatenate(pv)[order]
-    measured = values if noise is None else values + noise[number]
-    setpoint = np.where(time >= events.setpoint_at - 1e-9 * clock.scan, events.setpoint_step, 0.0)
-    return Trace(
-        time, setpoint, values, _in_force(held, course, time, number), measured, course.diverged
-    )
+    number = np.arange(scans)
+    time: Array = number * np.float64(clock.scan)
+    values = course.pv
+    if len(offsets) > 1 or clock.lead:
+        time = np.add.outer(time, offsets).ravel()
+        values = np.column_stack([_pv(found, load, offset) for offset in offsets]).ravel()
+        number = np.repeat(number, len(offsets))
+    single = sorted({clock.place(instant) for instant in _between(held, events)})
+    single = [(scan, rest) for scan, rest in single if scan < scans and rest not in offsets]
+    for scan, rest in single:
+        instant = scan * clock.scan + rest
+        place = int(np.searchsorted(time, instant))
+        time = _with(time, place, instant)
+        values = _with(values, place, _pv_once(found, load, scan, rest))
+        number = np.concatenate([number[:place], [scan], number[place:]])
+    if time[-1] > events.until + 1e-9 * clock.scan:
+        last = int(np.searchsorted(time, events.until + 1e-9 * clock.scan))
+        time, values, number = time[:last], values[:last], number[:last]
+    measured = values
+    if found.is_held:
+        measured = course.measured[number]
+    elif course.measured is not course.pv:
+        measured = values + (course.measured - course.pv)[number]
+    # Where every row is a scan and its output acts at once, the outputs are in force as they are.
+    is_plain = len(time) == scans and not clock.computing_delay
+    output = course.outputs if is_plain else _in_force(held, course, time, number)
+    setpoint = signals.values(events.setpoint, time + 1e-9 * clock.scan)
+    return Trace(time, setpoint, values, output, measured, course.diverged)
+
+
+def _with(values: Array, place: int, value: float) -> Array:
+    return np.concatenate([values[:place], [value], values[place:]])
 
 
 def _offsets(held: Held, until: float) -> list[float]:
@@ -155,7 +182,11 @@ def _offsets(held: Held, until: float) -> list[float]:
 def _shortest_lag(whole: Process) -> float:
     if not len(whole.c):
         return math.inf
-    rate = float(np.abs(np.linalg.eigvals(whole.a)).max())
+    rows = whole.a.tolist()
+    if any(any(row[i + 1 :]) for i, row in enumerate(rows)):
+        rate = float(np.abs(np.linalg.eigvals(whole.a)).max())
+    else:
+        rate = max(abs(row[i]) for i, row in enumerate(rows))
     return 1.0 / rate if rate else math.inf
 
 
@@ -163,38 +194,66 @@ def _between(held: Held, events: Events) -> list[float]:
     """Instants that need a row of their own [s]."""
     found = [events.until]
     if events.setpoint_step:
-        found.append(events.setpoint_at)
-    if events.load_step:
-        found.append(events.load_at)
-        for entry in held.process.load:
-            arrival = events.load_at + entry.dead_time
-            found.append(arrival)
-            if entry.d:
-                found.append(max(0.0, arrival - 1e-6 * held.clock.scan))
+        found += [part.time for part in events.setpoint]
+    # Where the scans are that close, what comes in between is drawn well enough from one to the
+    # next, but for a jump of PV.
+    is_close = held.clock.scan <= events.until / _ROWS
+    if events.load_step and (not is_close or any(entry.d for entry in held.process.load)):
+        for part in events.load[:_CORNERS]:
+            found.append(part.time)
+            for entry in held.process.load:
+                arrival = part.time + entry.dead_time
+                found.append(arrival)
+                if entry.d:
+                    found.append(max(0.0, arrival - 1e-6 * held.clock.scan))
     return [time for time in found if time <= events.until]
 
 
-def _pv(held: Held, course: Course, load: Step, offset: float) -> Array:
-    """PV [%] at `offset` [s] after every scan (n_scans,)."""
+def _weights(held: Held, offset: float) -> tuple[Array, dict[int, float]]:
+    """PV at `offset` [s] after a scan: weights on the state and on the outputs of scans back."""
     part, c = held.over(offset), held.process.c
-    pv = course.states @ (c @ part.phi)
     weights = dict(part.weights)
     for back, tap in part.taps.items():
         weights[back] = weights.get(back, 0.0) + float(c @ tap)
+    return c @ part.phi, weights
+
+
+def _pv(found: Passage, load: Signal, offset: float) -> Array:
+    """PV [%] at `offset` [s] after every scan (n_scans,)."""
+    course, scans = found.course, len(found.course.pv)
+    if offset == found.plants[0][1].clock.lead:
+        return course.pv
+    parts = []
+    ends = [start for start, _ in found.plants[1:]]
+    for (start, held), end in zip(found.plants, [*ends, scans], strict=True):
+        row, weights = _weights(held, offset)
+        pv = course.states @ row
+        for back, weight in weights.items():
+            pv[back:] += weight * course.acting[: max(0, scans - back)]
+        state, direct = held.upset(load, scans, offset)
+        parts.append((pv + state @ held.process.c + direct)[start:end])
+    return np.concatenate(parts)
+
+
+def _pv_once(found: Passage, load: Signal, scan: int, offset: float) -> float:
+    """PV [%] at `offset` [s] after one scan."""
+    course = found.course
+    held = next(plant for start, plant in reversed(found.plants) if start <= scan)
+    row, weights = _weights(held, offset)
+    pv = float(course.states[scan] @ row)
     for back, weight in weights.items():
-        pv[back:] += weight * course.outputs[: len(pv) - back]
-    if load.size:
-        reached = {scan for whole, _ in held.arrivals(load) for scan in (whole, whole + 1)}
-        for scan, following in pairwise([*sorted(reached), len(pv)]):
-            state, direct = held.upset(load, scan, offset)
-            pv[scan:following] += float(c @ state) + direct
-    return pv
+        if scan >= back:
+            pv += weight * float(course.acting[scan - back])
+    state, direct = held.upset(load, scan + 1, offset)
+    return pv + float(state[-1] @ held.process.c) + float(direct[-1])
 
 
 def _in_force(held: Held, course: Course, time: Array, number: NDArray[np.signedinteger]) -> Array:
     """The output in force at each row."""
     clock = held.clock
     whole, rest = clock.place(clock.computing_delay)
+    if not whole and not rest:
+        return np.asarray(course.outputs[number], np.float64)
     late = time - number * clock.scan < rest - 1e-9 * clock.scan
     computed = number - whole - late
     return np.where(computed >= 0, course.outputs[np.maximum(computed, 0)], 0.0)
@@ -203,7 +262,12 @@ def _in_force(held: Held, course: Course, time: Array, number: NDArray[np.signed
 # --- rows of an analogue loop --------------------------------------------------------------------
 
 
-def _analogue(loop: Loop, events: Events, most_pieces: int = analogue.MOST_PIECES) -> Trace:
+def _analogue(
+    loop: Loop,
+    events: Events,
+    instruments: Instruments = _PLAIN,
+    most_pieces: int = analogue.MOST_PIECES,
+) -> Trace:
     if events.noise:
         raise problem(
             "measurement noise has no meaning for an analogue controller",
@@ -211,12 +275,20 @@ def _analogue(loop: Loop, events: Events, most_pieces: int = analogue.MOST_PIECE
             key="controller.scan",
         )
     whole = process(loop)
+    if not (events.are_steps and instruments.are_plain and _is_linear(loop)):
+        return _in_fine_steps(loop, whole, events, instruments)
     setpoint = Step(events.setpoint_step, events.setpoint_at)
     load = Step(events.load_step, events.load_at)
     pieces, diverged = analogue.solve(loop, whole, setpoint, load, events.until, most_pieces)
     if _is_limited(loop, pieces):
-        return _in_fine_steps(loop, whole, events)
+        return _in_fine_steps(loop, whole, events, instruments)
     return _analogue_trace(pieces, events, diverged)
+
+
+def _is_linear(loop: Loop) -> bool:
+    """Apart from the limits of its output."""
+    shaped = loop.setpoint_rate is not None or loop.setpoint_filter or loop.bias
+    return not (loop.dead_zone or loop.gain_at_rest != 1.0 or shaped)
 
 
 def _is_limited(loop: Loop, pieces: list[analogue.Piece]) -> bool:
@@ -265,8 +337,8 @@ def _analogue_trace(pieces: list[analogue.Piece], events: Events, diverged: bool
     )
 
 
-def _in_fine_steps(loop: Loop, whole: Process, events: Events) -> Trace:
-    """An analogue loop held back by its limits, in steps so short that they do not show.
+def _in_fine_steps(loop: Loop, whole: Process, events: Events, instruments: Instruments) -> Trace:
+    """An analogue loop that is not linear throughout, in steps so short that they do not show.
 
     PV is read half a step ahead, and the parts of the controller are corrected by half a step, so
     that holding and summing leave an error of the second order in the step while no limit is met.
@@ -280,22 +352,20 @@ def _in_fine_steps(loop: Loop, whole: Process, events: Events) -> Trace:
             key="controller.scan",
         )
     clock = _fine_clock(loop, whole, events)
-    held = Held(whole, clock)
-    setpoint = Step(events.setpoint_step, events.setpoint_at)
-    load = Step(events.load_step, events.load_at)
-    last, rest = clock.place(events.until)
-    course = step_through(held, _corrected(loop, clock.scan), last + 1, setpoint, load)
-    keep = _rows_to_keep(course, held, events)
+    rest = clock.place(events.until)[1]
+    found = passage(
+        loop, whole, clock, events, instruments, lambda one: _corrected(one, clock.scan)
+    )
+    course = found.course
+    keep = _rows_to_keep(course, clock, events)
     time: Array = np.asarray(keep * clock.scan, np.float64)
-    pv, output = _pv(held, course, load, 0.0)[keep], course.outputs[keep]
+    pv, output = _pv(found, events.load, 0.0)[keep], course.outputs[keep]
     if rest and not course.diverged:
         time = np.append(time, events.until)
-        pv = np.append(pv, _pv(held, course, load, rest)[-1])
+        pv = np.append(pv, _pv_once(found, events.load, len(course.pv) - 1, rest))
         output = np.append(output, output[-1])
-    seen = first_scan(events.setpoint_at, clock) * clock.scan
-    return Trace(
-        time, np.where(time >= seen, events.setpoint_step, 0.0), pv, output, pv, course.diverged
-    )
+    setpoint = signals.values(events.setpoint, time + 1e-9 * clock.scan)
+    return Trace(time, setpoint, pv, output, pv, course.diverged)
 
 
 def _fine_clock(loop: Loop, whole: Process, events: Events) -> Clock:
@@ -327,13 +397,13 @@ def _corrected(loop: Loop, h: float) -> Algorithm:
     )
 
 
-def _rows_to_keep(course: Course, held: Held, events: Events) -> NDArray[np.intp]:
+def _rows_to_keep(course: Course, clock: Clock, events: Events) -> NDArray[np.intp]:
     """Every few steps, and all of those where the output turns a corner."""
     count = len(course.pv)
     stride = max(1, count // _ROWS)
     corner = np.abs(np.diff(course.outputs, n=2, prepend=[0.0, 0.0]))
     sharp = np.flatnonzero(corner > 1e-3 * max(float(np.abs(course.outputs).max()), 1e-300))
-    marks = [first_scan(t, held.clock) for t in (events.setpoint_at, events.load_at)]
+    marks = [clock.first_scan(t) for t in (events.setpoint_at, events.load_at)]
     near = np.concatenate([sharp - 1, sharp, marks, np.array(marks) - 1]).astype(np.intp)
     near = near[(near >= 0) & (near < count)]
     return np.unique(np.concatenate([np.arange(0, count, stride), near, [count - 1]]))
@@ -352,7 +422,9 @@ def settle_horizon(loop: Loop) -> float:
     without integral action) gets a few of its own time scales, so that one sees what it does.
     """
     free = replace(loop, low=None, high=None, rate=None)
-    longest = MOST_SCANS * loop.scan / 2.5 if loop.scan else math.inf
+    # A cascade is played at the scan of its inner loop.
+    shortest = loop.inner.scan if isinstance(loop, Structure) and loop.inner else loop.scan
+    longest = MOST_SCANS * shortest / 2.5 if shortest else math.inf
     window = guess = min(6.0 * _time_scale(loop), longest)
     for _ in range(6):
         trace = _look(free, window)
@@ -395,7 +467,7 @@ def _look(loop: Loop, window: float) -> Trace | None:
     if loop.scan is not None:
         return simulate(loop, events)
     try:
-        return _analogue(loop, events, _GLANCE)
+        return _analogue(loop, events, most_pieces=_GLANCE)
     except analogue.TooManyPieces:
         return None
 

@@ -4,6 +4,12 @@ output has to do for it.
 The setpoint window runs from the setpoint step to the load step (or the end), the load window from
 the load step to the end.  Between rows PV is taken as straight and the output as held; integrals
 and crossing times are exact for that, so the rows must be fine enough, as those of `loop` are.
+
+The rise time is the common one, from 10 to 90 % of the step.  The control rise time is another
+figure: from the step to when PV first comes within 2 % of it, as IEC 60050-351 has it (entry
+351-45-36, from memory).  Settling is from the step to when PV stays within the band for good (entry
+351-45-37, from memory), 2 % of the setpoint step, or 5 % of the load's peak deviation.  Decay ratio
+and period are read from the first two peaks of PV beyond the setpoint on the same side.
 """
 
 from __future__ import annotations
@@ -12,6 +18,7 @@ import math
 from collections.abc import Callable
 from dataclasses import dataclass
 from functools import cached_property
+from itertools import pairwise
 from typing import Final
 
 import numpy as np
@@ -19,6 +26,7 @@ from numpy.typing import NDArray
 
 from workbench.sim.loop import Trace
 from workbench.sim.scenario import Events
+from workbench.sim.signals import values
 from workbench.units import Figure
 
 Array = NDArray[np.float64]
@@ -39,12 +47,30 @@ class Measures:
     """From 10 to 90 % of the setpoint step."""
     setpoint_settling_time_s: Figure
     """From the step to the last time outside +-2 % of it."""
+    setpoint_control_rise_time_s: Figure
+    """From the step to the first time within +-2 % of it."""
+    setpoint_ise: Figure
+    """Integral of the squared error over the setpoint window [%^2 s]."""
+    setpoint_itae: Figure
+    """Integral of time from the step times the absolute error [% s^2]."""
+    setpoint_decay_ratio: Figure
+    """Second overshoot to first."""
+    setpoint_period_s: Figure
+    """From the first overshoot to the second."""
     load_iae: Figure
     """Integral of the absolute error over the load window [% s]."""
     load_peak_deviation: Figure
     """Largest distance of PV from the setpoint after the load step [%], not below 0."""
     load_settling_time_s: Figure
     """From the load step to the last time outside +-5 % of the peak deviation."""
+    load_ise: Figure
+    """Integral of the squared error over the load window [%^2 s]."""
+    load_itae: Figure
+    """Integral of time from the load step times the absolute error [% s^2]."""
+    load_decay_ratio: Figure
+    """Second peak deviation on the side of the first, to the first."""
+    load_period_s: Figure
+    """From the one to the other."""
     output_travel: Figure
     """Sum of all moves of the output, the first included [%]."""
     output_reversals: Figure
@@ -105,7 +131,7 @@ class Run:
         if end < self.events.until and rows.any():
             # The window ends where PV may jump: what counts is PV just before.
             pv[-1] = pv[-2]
-        setpoint = np.where(time >= self.events.setpoint_at, self.events.setpoint_step, 0.0)
+        setpoint = values(self.events.setpoint, time)
         return _Window(time - start, setpoint - pv)
 
 
@@ -186,6 +212,16 @@ def _first_crossing(time: Array, signal: Array, level: float) -> float | None:
     return float(time[i - 1] + share * (time[i] - time[i - 1]))
 
 
+def _control_rise(run: Run) -> Figure:
+    window, step = run.setpoint_window, run.events.setpoint_step
+    if isinstance(window, str):
+        return Figure(None, window)
+    reached = _first_crossing(window.time, 1.0 - window.error / step, 0.98)
+    if reached is None:
+        return Figure(None, "PV does not come within 2 % of the setpoint step in its window")
+    return Figure.of(reached)
+
+
 def _setpoint_settling(run: Run) -> Figure:
     window = run.setpoint_window
     if isinstance(window, str):
@@ -228,6 +264,68 @@ def _load_settling(run: Run) -> Figure:
     if isinstance(window, str) or peak.value is None:
         return Figure(None, peak.reason)
     return _settling(window, 0.05 * peak.value, "5 % of the peak deviation")
+
+
+# --- both ----------------------------------------------------------------------------------------
+
+
+def _ise(window: _Window | str) -> Figure:
+    if isinstance(window, str):
+        return Figure(None, window)
+    left, right = window.error[:-1], window.error[1:]
+    squares = (left * left + left * right + right * right) / 3.0
+    return Figure.of(float((squares * np.diff(window.time)).sum()))
+
+
+def _itae(window: _Window | str) -> Figure:
+    if isinstance(window, str):
+        return Figure(None, window)
+    time, error = _with_crossings(window.time, window.error)
+    early, late, left, right = time[:-1], time[1:], np.abs(error[:-1]), np.abs(error[1:])
+    # Simpson's rule, exact for a straight line times the time.
+    middle = (early + late) * (left + right)
+    return Figure.of(float(((early * left + middle + late * right) * (late - early)).sum() / 6.0))
+
+
+def _with_crossings(time: Array, error: Array) -> tuple[Array, Array]:
+    """The same straight lines with a row where they go through 0 (n_rows,)."""
+    k = np.flatnonzero(error[:-1] * error[1:] < 0.0)
+    share = error[k] / (error[k] - error[k + 1])
+    crossing = time[k] + share * (time[k + 1] - time[k])
+    return np.insert(time, k + 1, crossing), np.insert(error, k + 1, 0.0)
+
+
+def _beyond(run: Run) -> float:
+    """The sign of the error while PV is beyond the setpoint."""
+    return -math.copysign(1.0, run.events.setpoint_step)
+
+
+def _swing(window: _Window | str, side: float = 0.0) -> tuple[Figure, Figure]:
+    """Decay ratio and period [s] of the peaks of the error on one side, 0 being that of the first.
+
+    A peak is the largest error between two changes of its sign.
+    """
+    if isinstance(window, str):
+        return Figure(None, window), Figure(None, window)
+    error, largest = window.error, float(np.abs(window.error).max())
+    # Rounding about 0 is no swing.
+    signs = np.where(np.abs(error) > 1e-4 * largest, np.sign(error), 0.0)
+    felt = np.flatnonzero(signs)
+    starts = felt[np.flatnonzero(np.diff(signs[felt], prepend=0.0))]
+    peaks = []
+    for start, end in pairwise([*starts.tolist(), len(error)]):
+        side = side or float(signs[start])
+        top = start + int(np.abs(error[start:end]).argmax())
+        if signs[start] == side and top < len(error) - 1:
+            peaks.append(top)
+    if len(peaks) < 2:
+        none = Figure(None, "PV does not swing to the same side twice")
+        return none, none
+    first, second = peaks[:2]
+    return (
+        Figure.of(abs(float(error[second] / error[first]))),
+        Figure.of(float(window.time[second] - window.time[first])),
+    )
 
 
 # --- the output ----------------------------------------------------------------------------------
@@ -299,9 +397,28 @@ METRICS: Final[dict[str, Metric]] = {
     "setpoint_overshoot_percent": Metric("overshoot", "%", _overshoot),
     "setpoint_rise_time_s": Metric("rise time, 10 to 90 %", "s", _rise_time),
     "setpoint_settling_time_s": Metric("settling time, 2 %", "s", _setpoint_settling),
+    "setpoint_control_rise_time_s": Metric("control rise time, 2 %", "s", _control_rise),
+    "setpoint_ise": Metric(
+        "integral of the squared error", "PV2 s", lambda run: _ise(run.setpoint_window)
+    ),
+    "setpoint_itae": Metric(
+        "integral of time and absolute error", "PV s2", lambda run: _itae(run.setpoint_window)
+    ),
+    "setpoint_decay_ratio": Metric(
+        "decay ratio", "", lambda run: _swing(run.setpoint_window, _beyond(run))[0]
+    ),
+    "setpoint_period_s": Metric(
+        "period of the swing", "s", lambda run: _swing(run.setpoint_window, _beyond(run))[1]
+    ),
     "load_iae": Metric("integral of the absolute error", "PV s", _load_iae),
     "load_peak_deviation": Metric("peak deviation", "PV", _load_peak),
     "load_settling_time_s": Metric("settling time, 5 % of the peak", "s", _load_settling),
+    "load_ise": Metric("integral of the squared error", "PV2 s", lambda run: _ise(run.load_window)),
+    "load_itae": Metric(
+        "integral of time and absolute error", "PV s2", lambda run: _itae(run.load_window)
+    ),
+    "load_decay_ratio": Metric("decay ratio", "", lambda run: _swing(run.load_window)[0]),
+    "load_period_s": Metric("period of the swing", "s", lambda run: _swing(run.load_window)[1]),
     "output_travel": Metric("travel of the output", "OP", _travel),
     "output_reversals": Metric("reversals of the output", "", _reversals),
     "output_time_at_limit_s": Metric("time at an output limit", "s", _time_at_limit),

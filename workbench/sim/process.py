@@ -52,7 +52,10 @@ def process(loop: Loop) -> Process:
 
     Raises `ModelError` for an improper path or a dead time inside an inner feedback.
     """
-    plant, load = _on_one_denominator(loop.plant, loop.load)
+    if loop.load is loop.plant:
+        plant = load = loop.plant.realise()
+    else:
+        plant, load = _on_one_denominator(loop.plant, loop.load)
     # Turning the realisation round (transposing it) moves the dead times from the outputs to the
     # inputs; as both have the same denominator, they then share A and C.  Listing the states
     # backwards keeps A lower triangular, for which the matrix exponential is at its best.

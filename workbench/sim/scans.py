@@ -1,35 +1,35 @@
-"""The sampled loop, scan by scan: exact plant between scans, the algorithm of `controller` at them.
+"""The sampled loop at its scans: exact plant between them, the algorithm of `controller` at them.
 
 The output is held between its changes, so the plant's answer over a scan is exact, with every dead
-time a whole number of scans and a fraction.  While nothing limits the output and there is no noise
-the loop is linear and its course is worked out in leaps (powers of one matrix); otherwise it is
-stepped.  Both give the same numbers.
+time a whole number of scans and a fraction.  The loop is stepped here, scan by scan in plain
+numbers; wherever it is linear for a while - no limit met, or held at one - `leaps` takes the whole
+stretch at once.  Both give the same numbers.
 """
 
 from __future__ import annotations
 
 import math
-from collections.abc import Sequence
-from dataclasses import dataclass
-from itertools import pairwise
+from collections.abc import Callable, Sequence
+from dataclasses import dataclass, field
 from operator import mul
 from typing import Final
 
 import numpy as np
 from numpy.typing import NDArray
 
-from workbench.model.matrix import hold
-from workbench.sim.controller import Algorithm
+from workbench.model.matrix import hold, holds
+from workbench.sim.controller import Algorithm, Memory
 from workbench.sim.process import Entry, Process
+from workbench.sim.signals import Ramp, Signal, Sine, Step
 
 Array = NDArray[np.float64]
 
 BOUND: Final = 1e6
 """A PV or output beyond this [%] has left every instrument: the loop is cut off there."""
+_FEW_STEPS: Final = 4
+"""More steps of an upset than this are taken as a signal that changes at any scan."""
 _SAME: Final = 1e-9
 """Instants closer than this share of a scan are the same instant."""
-_LARGEST_LEAP: Final = 60
-"""Most states a leap is worth: beyond, stepping is as fast."""
 
 
 @dataclass(frozen=True)
@@ -47,16 +47,13 @@ class Clock:
         """A time as whole scans and the rest in seconds, 0 <= rest < scan."""
         whole = math.floor(time / self.scan + _SAME)
         rest = time - whole * self.scan
-        return whole, rest if rest > _SAME * self.scan else 0.0
+        # Without the last digits, so that equal rests of different times are the same number.
+        return whole, round(rest / self.scan, 11) * self.scan if rest > _SAME * self.scan else 0.0
 
-
-@dataclass(frozen=True)
-class Step:
-    """An input that changes once: `size` from `time` on."""
-
-    size: float
-    time: float
-    """[s]"""
+    def first_scan(self, time: float) -> int:
+        """The first scan that sees what happened at `time`."""
+        whole, rest = self.place(time)
+        return whole + (rest > 0.0)
 
 
 @dataclass(frozen=True)
@@ -70,11 +67,18 @@ class Course:
     pv: Array
     """(n_scans,), what each scan sampled, without noise [%]."""
     diverged: bool
+    acting: Array
+    """(n_scans,), what came through the valve of it [%]; the output itself where it is healthy."""
+    measured: Array
+    """(n_scans,), PV as the controller received it [%]."""
+
+
+# --- the plant between scans ---------------------------------------------------------------------
 
 
 @dataclass(frozen=True)
-class _Piece:
-    """The plant over part of a scan, the input held."""
+class Part:
+    """The plant over part of a scan, the output held."""
 
     phi: Array
     taps: dict[int, Array]
@@ -88,293 +92,333 @@ class Held:
 
     def __init__(self, process: Process, clock: Clock) -> None:
         self.process, self.clock = process, clock
-        self._known: dict[float, _Piece] = {}
         self.entries = [
             (entry, *clock.place(entry.dead_time + clock.computing_delay))
             for entry in process.output
         ]
+        self._parts: dict[float, Part] = {}
+        # Ways in that are the same but for their dead time, as those of output and load through
+        # one plant, are worked out once.
+        columns: dict[bytes, int] = {}
+        self._column = {
+            id(entry): columns.setdefault(entry.b.tobytes(), len(columns))
+            for entry in (*process.output, *process.load)
+        }
+        n = len(process.c)
+        self._inputs = np.array([np.frombuffer(b) for b in columns]).reshape(len(columns), n).T
+        self._known: dict[float, tuple[Array, Array]] = {
+            0.0: (np.eye(n), np.zeros((n, len(columns))))
+        }
+        self._learn([rest for _, _, rest in self.entries])
 
-    def _hold(self, entry: Entry, time: float) -> tuple[Array, Array]:
-        return hold(self.process.a, entry.b, time)
+    def _learn(self, rests: Sequence[float]) -> None:
+        """The answers that a whole scan is made of, all in one go."""
+        scan = self.clock.scan
+        wanted = {rest for rest in rests if rest} or {scan}
+        wanted |= {scan - rest for rest in wanted if rest < scan}
+        intervals = tuple(wanted)
+        found = holds(self.process.a, self._inputs, intervals)
+        self._known.update(zip(intervals, found, strict=True))
+        if scan not in self._known:
+            rest = next(rest for rest in rests if rest)
+            phi, gamma = self._known[rest]
+            later, new = self._known[scan - rest]
+            self._known[scan] = later @ phi, later @ gamma + new
 
-    def over(self, time: float) -> _Piece:
+    def hold(self, entry: Entry, time: float) -> tuple[Array, Array]:
+        """The plant's answer to an input through `entry` held for `time` [s]."""
+        if time not in self._known:
+            self._known[time] = holds(self.process.a, self._inputs, (time,))[0]
+        phi, gamma = self._known[time]
+        return phi, gamma[:, self._column[id(entry)]]
+
+    def over(self, time: float) -> Part:
         """From a scan to `time` after it, 0 <= time <= scan."""
-        if time in self._known:
-            return self._known[time]
+        if time in self._parts:
+            return self._parts[time]
         taps: dict[int, Array] = {}
         weights: dict[int, float] = {}
-        n = len(self.process.c)
-        phi = hold(self.process.a, np.zeros(n), time)[0]
         for entry, whole, rest in self.entries:
-            arrived = max(0.0, time - rest)
-            after, new = self._hold(entry, arrived)
-            _, old = self._hold(entry, min(time, rest))
-            taps[whole] = taps.get(whole, np.zeros(n)) + new
-            taps[whole + 1] = taps.get(whole + 1, np.zeros(n)) + after @ old
+            after, new = self.hold(entry, max(0.0, time - rest))
+            old = self.hold(entry, min(time, rest))[1]
+            for back, tap in ((whole, new), (whole + 1, after @ old)):
+                taps[back] = taps[back] + tap if back in taps else tap
             # PV is sampled just before what arrives at that same instant.
             late = time < rest or time == rest == 0.0
             back = whole + 1 if late else whole
             weights[back] = weights.get(back, 0.0) + entry.d
+        if time not in self._known:
+            self._known[time] = holds(self.process.a, self._inputs, (time,))[0]
         taps = {back: tap for back, tap in taps.items() if tap.any()}
         weights = {back: weight for back, weight in weights.items() if weight}
-        piece = _Piece(phi, taps, weights)
-        self._known[time] = piece
-        return piece
+        part = Part(self._known[time][0], taps, weights)
+        self._parts[time] = part
+        return part
 
-    def upset(self, load: Step, scan: int, time: float) -> tuple[Array, float]:
-        """What the upset adds to the state and to PV from a scan to `time` after it."""
-        state, pv = np.zeros(len(self.process.c)), 0.0
-        for entry in self.process.load:
-            whole, rest = self.clock.place(load.time + entry.dead_time)
-            if scan < whole or (scan == whole and time < rest):
-                continue
-            lasting = time if scan > whole else time - rest
-            state += self._hold(entry, lasting)[1] * load.size
-            pv += entry.d * load.size
+    def reading(self) -> tuple[Array, dict[int, float]]:
+        """PV as the controller reads it: weights on the state and on the outputs of scans back."""
+        c = self.process.c
+        if not self.clock.lead and not any(entry.d for entry in self.process.output):
+            return c, {}
+        part = self.over(self.clock.lead)
+        weights = dict(part.weights)
+        for back, tap in part.taps.items():
+            weights[back] = weights.get(back, 0.0) + float(c @ tap)
+        if 0 in weights:  # reading ahead of an output that is not known yet: the one before is held
+            weights[1] = weights.get(1, 0.0) + weights.pop(0)
+        return c @ part.phi, {back: weight for back, weight in weights.items() if weight}
+
+    # --- what comes from outside ---
+
+    def upset(self, load: Signal, scans: int, time: float) -> tuple[Array, Array]:
+        """What an upset adds to the state (scans, n) and to PV (scans,) up to `time` after a scan.
+
+        Each scan by itself: what it adds to the state from that scan on.
+        """
+        state, pv = np.zeros((scans, len(self.process.c))), np.zeros(scans)
+        for part in load:
+            for entry in self.process.load:
+                self._add(part, entry, time, state, pv)
         return state, pv
 
-    def arrivals(self, load: Step) -> list[tuple[int, float]]:
-        """Where the upset reaches PV: (scan, time after it)."""
-        if not load.size:
-            return []
-        return [self.clock.place(load.time + entry.dead_time) for entry in self.process.load]
+    def _add(
+        self, part: Step | Ramp | Sine, entry: Entry, time: float, state: Array, pv: Array
+    ) -> None:
+        whole, rest = self.clock.place(part.time + entry.dead_time)
+        if whole >= len(pv):
+            return
+        following = whole + 1
+        if isinstance(part, Step):
+            if time >= rest:
+                state[whole] += self.hold(entry, time - rest)[1] * part.size
+                pv[whole] += entry.d * part.size
+            state[following:] += self.hold(entry, time)[1] * part.size
+            if entry.d:
+                pv[following:] += entry.d * part.size
+            return
+        # The signal drives the plant from a small state of its own: x' = A x + b (w C), w' = W w.
+        rates, start, shown = _generator(part)
+        if time >= rest:
+            moved = _driven(self.process.a, entry.b, rates, shown, time - rest)
+            state[whole] += moved @ start
+            pv[whole] += entry.d * float(part.values(np.array([part.time + time - rest]))[0])
+        since: Array = np.arange(float(following), len(pv)) - whole
+        since *= self.clock.scan
+        since -= rest
+        moving = np.column_stack(
+            [_generator_at(part, since), part.values(part.time + since + time)]
+        )
+        state[following:] += moving[:, :-1] @ _driven(self.process.a, entry.b, rates, shown, time).T
+        pv[following:] += entry.d * moving[:, -1]
+
+
+def _generator(part: Ramp | Sine) -> tuple[Array, Array, Array]:
+    """Rates W (2, 2), start (2,) and reading (2,) of the small system that makes the signal."""
+    if isinstance(part, Ramp):
+        return np.array([[0.0, 1.0], [0.0, 0.0]]), np.array([0.0, part.slope]), np.array([1.0, 0.0])
+    w = 2.0 * math.pi / part.period
+    return np.array([[0.0, w], [-w, 0.0]]), np.array([0.0, part.amplitude]), np.array([1.0, 0.0])
+
+
+def _generator_at(part: Ramp | Sine, since: Array) -> Array:
+    """Its state (n, 2) at times after its start (n,) [s]."""
+    if isinstance(part, Ramp):
+        return np.column_stack([part.slope * since, np.full(len(since), part.slope)])
+    angle = 2.0 * math.pi / part.period * since
+    return part.amplitude * np.column_stack([np.sin(angle), np.cos(angle)])
+
+
+def _driven(a: Array, b: Array, rates: Array, shown: Array, time: float) -> Array:
+    """What the signal's state at the start adds to the plant's over `time` [s], (n, 2)."""
+    n = len(b)
+    whole = np.zeros((n + 2, n + 2))
+    # Both below one diagonal: the signal first, so that a triangular A stays triangular.
+    whole[:2, :2], whole[2:, 2:], whole[2:, :2] = rates, a, np.outer(b, shown)
+    return hold(whole, np.zeros(n + 2), time)[0][2:, :2]
 
 
 @dataclass(frozen=True)
-class _Segment:
-    """Scans over which everything from outside stays the same."""
+class Inputs:
+    """What every scan meets from outside."""
 
-    start: int
-    end: int
-    setpoint: float
-    change: float
-    """Of the setpoint since the scan before."""
+    setpoint: Array
+    """(scans,) [%]"""
     state: Array
-    """What the upset adds to the state in a scan."""
-    pv: float
-    """What the upset adds directly to the sampled PV."""
+    """(scans, n), what the upset adds to the state in the scan."""
+    direct: Array
+    """(scans,), what the upset adds to PV as it is read [%]."""
+    noise: Array | None
+    """(scans,), what the sensor adds to that [%]."""
+    cuts: tuple[int, ...]
+    """Scans, rising from 0 to the last, between which nothing changes that is not `varying`."""
+    varying: frozenset[str]
+    """What may change at any scan: setpoint, load, noise."""
 
 
-def first_scan(time: float, clock: Clock) -> int:
-    """The first scan that sees what happened at `time`."""
-    whole, rest = clock.place(time)
-    return whole + (rest > 0.0)
-
-
-def _segments(held: Held, scans: int, setpoint: Step, load: Step) -> list[_Segment]:
-    seen = first_scan(setpoint.time, held.clock) if setpoint.size else scans
-    marks = {0, seen, seen + 1, scans}
-    for whole, _ in held.arrivals(load):
-        marks |= {whole, whole + 1, whole + 2}
-    cuts = sorted(mark for mark in marks if 0 <= mark <= scans)
-    found = []
-    for start, end in pairwise(cuts):
-        found.append(
-            _Segment(
-                start,
-                end,
-                setpoint.size if start >= seen else 0.0,
-                setpoint.size if start == seen else 0.0,
-                held.upset(load, start, held.clock.scan)[0],
-                held.upset(load, start, held.clock.lead)[1],
-            )
-        )
-    return found
-
-
-def run(
+def inputs(
     held: Held,
-    algorithm: Algorithm,
     scans: int,
-    setpoint: Step,
-    load: Step,
-    noise: Sequence[float] | None = None,
-) -> Course:
-    """The course of the loop over a number of scans, from rest."""
-    segments = _segments(held, scans, setpoint, load)
-    if noise is None:
-        course = _leap(held, algorithm, segments, load)
-        if course is not None and not _is_held_back(algorithm, course.outputs):
-            return course
-    return _scan_by_scan(held, algorithm, segments, load, noise)
+    setpoint: Array | Step,
+    load: Signal,
+    noise: Array | None = None,
+) -> Inputs:
+    """The inputs of a run; the setpoint as steps, or as the controller takes it at each scan."""
+    clock = held.clock
+    marks, varying = {0, scans}, set[str]()
+    if isinstance(setpoint, Step):
+        seen = clock.first_scan(setpoint.time) if setpoint.size else scans
+        marks |= {seen, seen + 1}
+        taken = np.zeros(scans)
+        taken[seen:] = setpoint.size
+    else:
+        taken = setpoint
+        varying.add("setpoint")
+    load = tuple(part for part in load if not isinstance(part, Step) or part.size)
+    state, direct = held.upset(load, scans, clock.scan)
+    if clock.lead or any(entry.d for entry in held.process.load):
+        ahead, direct = held.upset(load, scans, clock.lead)
+        direct += ahead @ held.process.c
+    if len(load) > _FEW_STEPS or not all(isinstance(part, Step) for part in load):
+        varying.add("load")
+    else:
+        for part in load:
+            for entry in held.process.load:
+                whole, _ = clock.place(part.time + entry.dead_time)
+                marks |= {whole, whole + 1}
+    if noise is not None:
+        varying.add("noise")
+    cuts = tuple(sorted(mark for mark in marks if 0 <= mark <= scans))
+    return Inputs(taken, state, direct, noise, cuts, frozenset(varying))
+
+
+# --- the run -------------------------------------------------------------------------------------
+
+
+@dataclass
+class Run:
+    """A loop under way: what it has done so far, and what the next scan starts from."""
+
+    held: Held
+    algorithm: Algorithm
+    inputs: Inputs
+    scans: int
+    through: Callable[[float], float] | None = None
+    """What comes through the valve of an output [%]; None is all of it."""
+    received: Callable[[float], float] | None = None
+    """What the controller receives of a PV [%]; None is all of it."""
+    at: int = 0
+    memory: Memory = field(default_factory=Memory)
+    diverged: bool = False
+
+    def __post_init__(self) -> None:
+        n = len(self.held.process.c)
+        self.read, self.weights = self.held.reading()
+        taps = self.held.over(self.held.clock.scan).taps
+        self.back = max([1, *taps, *self.weights])
+        """How far back outputs still act [scans]."""
+        self.x = np.zeros(n)
+        self.states = np.empty((n, self.scans))
+        self.pv = np.empty(self.scans)
+        self.measured = self.pv if self._is_plain else np.empty(self.scans)
+        self.acting = np.zeros(self.back + self.scans)
+        """What the plant was given, from `back` scans before the start on."""
+        self.outputs = self.acting[self.back :]
+        if self.through is not None:
+            self.outputs = np.zeros(self.scans)
+
+    @property
+    def _is_plain(self) -> bool:
+        return self.inputs.noise is None and self.received is None
+
+    def course(self) -> Course:
+        """What the loop went through up to here."""
+        done = self.at
+        acting = self.acting[self.back : self.back + done]
+        return Course(
+            self.states[:, :done].T,
+            self.outputs[:done],
+            self.pv[:done],
+            self.diverged,
+            acting,
+            self.measured[:done],
+        )
+
+    def change(self, held: Held) -> None:
+        """Go on with a plant of the same states whose gain or dead times are others."""
+        past = self.acting[self.back : self.back + self.at]
+        self.held = held
+        self.read, self.weights = held.reading()
+        before, self.back = self.back, max([1, *held.over(held.clock.scan).taps, *self.weights])
+        earlier = self.acting[:before]
+        longer = np.zeros(self.back + self.scans)
+        kept = min(before, self.back)
+        longer[self.back - kept : self.back] = earlier[before - kept :]
+        longer[self.back : self.back + self.at] = past
+        shared = self.through is None
+        self.acting = longer
+        if shared:
+            self.outputs = self.acting[self.back :]
+
+    def step(self, end: int, by: Callable[[float, float], float]) -> None:
+        """Scan by scan up to `end`, the controller executed by `by`.
+
+        Plain numbers and lists: for a handful of states they are far faster than arrays.
+        """
+        over, start, back, given = (
+            self.held.over(self.held.clock.scan),
+            self.at,
+            self.back,
+            self.inputs,
+        )
+        x, row = self.x.tolist(), self.read.tolist()
+        acting: list[float] = self.acting[start : start + back].tolist()
+        outputs, states, pv, measured = [], [], [], []
+        backs = [(back - far, weight) for far, weight in self.weights.items()]
+        taps = [back - far for far in over.taps]
+        rows = np.column_stack([over.phi, *over.taps.values()]).tolist()
+        upset = given.state[start:end].tolist()
+        noise = [0.0] * (end - start) if given.noise is None else given.noise[start:end].tolist()
+        outside = zip(
+            given.setpoint[start:end].tolist(),
+            given.direct[start:end].tolist(),
+            noise,
+            upset,
+            strict=True,
+        )
+        through, received = self.through, self.received
+        for i, (setpoint, direct, disturbance, pushed) in enumerate(outside):
+            y = direct + sum(map(mul, row, x))
+            for place, weight in backs:
+                y += weight * acting[i + place]
+            if not -BOUND <= y <= BOUND:
+                self.diverged = True
+                break
+            states.append(x)
+            pv.append(y)
+            seen = y + disturbance
+            if received is not None:
+                seen = received(seen)
+            measured.append(seen)
+            output = by(setpoint, seen)
+            outputs.append(output)
+            acting.append(output if through is None else through(output))
+            moved = [*x, *[acting[i + tap] for tap in taps]]
+            x = [sum(map(mul, line, moved)) + push for line, push in zip(rows, pushed, strict=True)]
+        done = start + len(pv)
+        self.states[:, start:done] = np.array(states).reshape(len(pv), len(self.x)).T
+        self.pv[start:done] = pv
+        if not self._is_plain:
+            self.measured[start:done] = measured
+        self.acting[start + back : done + back] = acting[back:]
+        if self.through is not None:
+            self.outputs[start:done] = outputs
+        self.x, self.at = np.array(x), done
 
 
 def step_through(
     held: Held, algorithm: Algorithm, scans: int, setpoint: Step, load: Step
 ) -> Course:
-    """As `run`, where it is known that leaping will not do."""
-    return _scan_by_scan(held, algorithm, _segments(held, scans, setpoint, load), load, None)
-
-
-def _is_held_back(algorithm: Algorithm, outputs: Array) -> bool:
-    if not algorithm.is_limited:
-        return False
-    moves = np.abs(np.diff(outputs, prepend=0.0))
-    within = (outputs >= algorithm.low) & (outputs <= algorithm.high) & (moves <= algorithm.move)
-    return not bool(within.all())
-
-
-# --- stepping ------------------------------------------------------------------------------------
-
-
-def _reading(held: Held, load: Step, segment: _Segment) -> tuple[Array, dict[int, float], float]:
-    """PV as the controller reads it: weights on the state and on earlier outputs, and the rest."""
-    read = held.over(held.clock.lead)
-    c = held.process.c
-    weights = dict(read.weights)
-    for back, tap in read.taps.items():
-        weights[back] = weights.get(back, 0.0) + float(c @ tap)
-    if 0 in weights:  # reading ahead of an output that is not known yet: the one before is held
-        weights[1] = weights.get(1, 0.0) + weights.pop(0)
-    upset = held.upset(load, segment.start, held.clock.lead)[0] if held.clock.lead else None
-    rest = segment.pv + (float(c @ upset) if upset is not None else 0.0)
-    return c @ read.phi, {back: w for back, w in weights.items() if w}, rest
-
-
-def _scan_by_scan(
-    held: Held,
-    algorithm: Algorithm,
-    segments: list[_Segment],
-    load: Step,
-    noise: Sequence[float] | None,
-) -> Course:
-    """Plain numbers and lists: for a handful of states they are far faster than arrays."""
-    over = held.over(held.clock.scan)
-    step = algorithm.start()
-    x = [0.0] * len(held.process.c)
-    states: list[list[float]] = []
-    pv: list[float] = []
-    _, weights, _ = _reading(held, load, segments[0])
-    memory = max([1, *over.taps, *weights])
-    outputs = [0.0] * memory
-    diverged = False
-    for segment in segments:
-        read, weights, rest = _reading(held, load, segment)
-        row = read.tolist()
-        backs = [(memory - back, weight) for back, weight in weights.items()]
-        taps = [memory - back for back in over.taps]
-        columns = [*over.taps.values(), segment.state]
-        rows = np.column_stack([over.phi, *columns]).tolist()
-        setpoint = segment.setpoint
-        for i in range(segment.start, segment.end):
-            y = sum(map(mul, row, x)) + rest
-            for back, weight in backs:
-                y += weight * outputs[i + back]
-            if not -BOUND <= y <= BOUND:
-                diverged = True
-                break
-            states.append(x)
-            pv.append(y)
-            outputs.append(step(setpoint, y if noise is None else y + noise[i]))
-            acting = [*x, *[outputs[i + tap] for tap in taps], 1.0]
-            x = [sum(map(mul, line, acting)) for line in rows]
-        if diverged:
-            break
-    return _course(np.array(states), np.array(outputs[memory:]), np.array(pv), held, diverged)
-
-
-def _course(states: Array, outputs: Array, pv: Array, held: Held, diverged: bool) -> Course:
-    return Course(states.reshape(len(pv), len(held.process.c)), outputs, pv, diverged)
-
-
-# --- leaping -------------------------------------------------------------------------------------
-
-
-@dataclass(frozen=True)
-class _Linear:
-    """The whole loop over one scan: s' = S s + inputs, over [x, yf, I, D, earlier outputs, 1]."""
-
-    matrix: Array
-    setpoint: Array
-    change: Array
-    pv: Array
-    """Columns: what the setpoint, its change and a shift of PV add to the next state."""
-    read: Array
-    """Row: PV as sampled."""
-    newest: int
-    """Where the next state keeps the output just computed."""
-
-
-def _linear(held: Held, algorithm: Algorithm, weights: dict[int, float], read: Array) -> _Linear:
-    over = held.over(held.clock.scan)
-    n, memory = len(held.process.c), max([1, *over.taps, *weights])
-    size = n + 3 + memory + 1
-    filtered, integral, derivative, newest = n, n + 1, n + 2, n + 3
-    # Rows over [state, 1] and, behind it, the setpoint, its change and the shift of PV.
-    setpoint, change, shift = size, size + 1, size + 2
-    unit = np.eye(size + 3)
-    y = unit[shift].copy()
-    y[:n] += read
-    for back, weight in weights.items():
-        y[newest + back - 1] += weight
-    f = unit[filtered] + algorithm.smooth * (y - unit[filtered])
-    i = unit[integral] + algorithm.advance * (unit[setpoint] - f)
-    seen = algorithm.derivative_weight * unit[change] - (f - unit[filtered])
-    d = algorithm.keep * unit[derivative] + algorithm.kick * seen
-    p = algorithm.proportional * (algorithm.setpoint_weight * unit[setpoint] - f)
-    u = algorithm.sign * (p + i + d)
-    following = np.zeros((size, size + 3))
-    following[:n, :n] = over.phi
-    for back, tap in over.taps.items():
-        following[:n] += np.outer(tap, u if back == 0 else unit[newest + back - 1])
-    following[filtered], following[integral], following[derivative] = f, i, d
-    following[newest] = u
-    following[newest + 1 : size - 1] = unit[newest : newest + memory - 1]
-    following[size - 1] = unit[size - 1]
-    return _Linear(
-        following[:, :size],
-        following[:, setpoint],
-        following[:, change],
-        following[:, shift],
-        y[:size],
-        newest,
-    )
-
-
-def _leap(held: Held, algorithm: Algorithm, segments: list[_Segment], load: Step) -> Course | None:
-    """The course of the linear loop, or None where leaping would not pay or not work."""
-    read, weights, _ = _reading(held, load, segments[0])
-    loop = _linear(held, algorithm, weights, read)
-    size, n = len(loop.matrix), len(held.process.c)
-    if size > _LARGEST_LEAP:
-        return None
-    start = np.zeros(size)
-    start[-1] = 1.0
-    states, outputs, pv = [], [], []
-    for segment in segments:
-        rest = _reading(held, load, segment)[2]
-        matrix = loop.matrix.copy()
-        matrix[:, -1] += loop.setpoint * segment.setpoint + loop.change * segment.change
-        matrix[:, -1] += loop.pv * rest
-        matrix[:n, -1] += segment.state
-        wanted = segment.end - segment.start
-        with np.errstate(over="ignore", invalid="ignore"):
-            course = _powers(matrix, start, wanted + 1, loop.read)
-        if not np.isfinite(course).all():
-            return None
-        sampled = loop.read @ course + rest
-        beyond = np.flatnonzero(~(np.abs(sampled) <= BOUND))
-        end = int(beyond[0]) if len(beyond) else min(wanted, course.shape[1] - 1)
-        states.append(course[:n, :end].T)
-        outputs.append(course[loop.newest, 1 : end + 1])
-        pv.append(sampled[:end])
-        if end < wanted:
-            break
-        start = course[:, -1]
-    diverged = sum(map(len, pv)) < segments[-1].end
-    return _course(
-        np.concatenate(states), np.concatenate(outputs), np.concatenate(pv), held, diverged
-    )
-
-
-def _powers(matrix: Array, start: Array, wanted: int, read: Array) -> Array:
-    """start, S start, S^2 start ... as columns; shorter where PV leaves the bound on the way."""
-    course = start[:, np.newaxis]
-    power = matrix
-    while course.shape[1] < wanted:
-        more = power @ course[:, : wanted - course.shape[1]]
-        course = np.concatenate([course, more], axis=1)
-        if not bool((np.abs(read @ more) <= 10 * BOUND).all()):
-            break
-        power = power @ power
-    return course
+    """As `run`, each scan by itself."""
+    whole = Run(held, algorithm, inputs(held, scans, setpoint, (load,)), scans)
+    whole.step(scans, algorithm.start(whole.memory))
+    return whole.course()

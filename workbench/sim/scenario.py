@@ -1,10 +1,13 @@
-"""What happens to the loop: a setpoint move and an upset, and the noise on the measurement."""
+"""What happens to the loop: setpoint moves, upsets, modes, a plant that changes, and noise."""
 
 from __future__ import annotations
 
+from collections.abc import Iterator
 from dataclasses import dataclass
 
-from workbench.errors import problem
+from workbench.errors import InputError, Problem
+from workbench.model.pid import Gains
+from workbench.sim.signals import Ramp, Signal, Sine, Step
 from workbench.units import Amount, check_fields, quantity
 
 
@@ -20,6 +23,13 @@ class Scenario:
     setpoint_at: Amount = quantity(
         "time of the setpoint step", "duration", low=0, default=Amount(0, "s"), example="60 s"
     )
+    setpoint_ramp: Amount | None = quantity(
+        "time in which the setpoint moves; left out: at once",
+        "duration",
+        low=0,
+        default=None,
+        example="120 s",
+    )
     load_step: float | None = quantity(
         "load step, at the plant's input or in the unit of the load path's input",
         "number",
@@ -33,6 +43,44 @@ class Scenario:
         default=None,
         example="900 s",
     )
+    load_shape: str = quantity(
+        "course of the upset: a step, a ramp up to the step, a pulse, a sine, or a record",
+        "choice",
+        default="step",
+        choices=("step", "ramp", "pulse", "sine", "record"),
+    )
+    load_time: Amount | None = quantity(
+        "time of the ramp, width of the pulse, period of the sine",
+        "duration",
+        above=0,
+        default=None,
+        example="120 s",
+    )
+    load_record: str = quantity(
+        "recorded upset: seconds after load_at and values, in shares of the load step",
+        "text",
+        default="",
+        example="0:0.2 60:1 180:-0.4 300:0",
+        longest=20_000,
+    )
+    manual_at: Amount | None = quantity(
+        "when the controller is put in manual", "duration", low=0, default=None, example="300 s"
+    )
+    manual_output: float | None = quantity(
+        "output that the operator then gives; left out: as it is", "number", "OP", default=None
+    )
+    automatic_at: Amount | None = quantity(
+        "when it is put back in automatic", "duration", low=0, default=None, example="600 s"
+    )
+    change_at: Amount | None = quantity(
+        "when the plant changes", "duration", low=0, default=None, example="600 s"
+    )
+    gain_factor: float = quantity(
+        "what the plant's gain is then multiplied by", "number", low=0, default=1.0
+    )
+    dead_time_factor: float = quantity(
+        "what its dead time is then multiplied by", "number", low=0, default=1.0
+    )
     until: Amount | None = quantity(
         "end of the prediction; left out: long enough for both to settle",
         "duration",
@@ -43,14 +91,42 @@ class Scenario:
 
     def __post_init__(self) -> None:
         check_fields(self)
-        if self.until is None:
-            return
+        faults = list(self._faults())
+        if faults:
+            raise InputError(faults)
+
+    def _faults(self) -> Iterator[Problem]:
         for name in ("setpoint_at", "load_at"):
             at = getattr(self, name)
-            if at is not None and at.seconds >= self.until.seconds:
-                raise problem(
-                    f"{at} is not before the end at {self.until}", "give an earlier time", key=name
+            if self.until and at is not None and at.seconds >= self.until.seconds:
+                yield Problem(
+                    f"{at} is not before the end at {self.until}", "give an earlier time", name
                 )
+        if self.load_shape in ("ramp", "pulse", "sine") and self.load_time is None:
+            yield Problem(f"is missing for a {self.load_shape}", "give it", "load_time")
+        if self.load_shape == "record" or self.load_record:
+            try:
+                if not self.recorded_load():
+                    yield Problem("is missing for a record", "give it", "load_record")
+            except ValueError:
+                mend = "give rising seconds and values like 0:0.2 60:1 180:0"
+                yield Problem("cannot be read", mend, "load_record")
+        if self.automatic_at is not None and (
+            self.manual_at is None or self.automatic_at.seconds <= self.manual_at.seconds
+        ):
+            mend = "give manual_at before it, or leave it out"
+            yield Problem("does not come after manual", mend, "automatic_at")
+
+    def recorded_load(self) -> tuple[tuple[float, float], ...]:
+        """Seconds after `load_at` and shares of the load step.  Raises `ValueError`."""
+        pairs = [pair.partition(":") for pair in self.load_record.split()]
+        found = tuple((float(time), float(value)) for time, _, value in pairs)
+        times = [time for time, _ in found]
+        if times != sorted(set(times)) or any(not 0 <= time < 1e9 for time in times):
+            raise ValueError(self.load_record)
+        if any(not abs(value) < 1e9 for _, value in found):
+            raise ValueError(self.load_record)
+        return found
 
 
 @dataclass(frozen=True)
@@ -70,3 +146,60 @@ class Events:
     noise: float = 0.0
     """Standard deviation of the measurement noise [% of PV span]."""
     seed: int = 0
+    setpoint_ramp: float = 0.0
+    """Time in which the setpoint moves [s]."""
+    load_shape: str = "step"
+    """step, ramp, pulse, sine or record."""
+    load_time: float = 0.0
+    """Of the ramp, the pulse, or the sine's period [s]."""
+    load_record: tuple[tuple[float, float], ...] = ()
+    """Seconds after `load_at`, and shares of the load step held from there on."""
+    manual_at: float | None = None
+    """[s]"""
+    manual_output: float | None = None
+    """[% of OP span], a deviation; `None` leaves it as it is."""
+    automatic_at: float | None = None
+    """[s]"""
+    change_at: float | None = None
+    """When the plant changes [s]; it does at the first scan not before."""
+    gain_factor: float = 1.0
+    dead_time_factor: float = 1.0
+    settings_at: float | None = None
+    """When the controller gets other settings [s]."""
+    settings: Gains | None = None
+    """Those settings."""
+
+    @property
+    def setpoint(self) -> Signal:
+        """The setpoint over time [%]."""
+        if not self.setpoint_ramp:
+            return (Step(self.setpoint_step, self.setpoint_at),)
+        slope, end = self.setpoint_step / self.setpoint_ramp, self.setpoint_at + self.setpoint_ramp
+        return Ramp(slope, self.setpoint_at), Ramp(-slope, end)
+
+    @property
+    def load(self) -> Signal:
+        """The upset over time, in the unit that the load path takes."""
+        size, at, time = self.load_step, self.load_at, self.load_time
+        if self.load_shape == "ramp":
+            return Ramp(size / time, at), Ramp(-size / time, at + time)
+        if self.load_shape == "pulse":
+            return Step(size, at), Step(-size, at + time)
+        if self.load_shape == "sine":
+            return (Sine(size, time, at),)
+        if self.load_shape == "record":
+            shares = [0.0, *(share for _, share in self.load_record)]
+            return tuple(
+                Step(size * (share - before), at + time)
+                for (time, share), before in zip(self.load_record, shares, strict=False)
+            )
+        return (Step(size, at),)
+
+    @property
+    def are_steps(self) -> bool:
+        """Nothing happens but one step of each, so that the analogue loop stays one and linear."""
+        return (
+            not self.setpoint_ramp
+            and self.load_shape == "step"
+            and self.manual_at is self.change_at is self.settings_at is None
+        )

@@ -12,6 +12,7 @@ from workbench.study.assessment import (
     assess,
     reductions,
 )
+from workbench.study.conversion import Conversion, convert
 from workbench.study.evaluation import HANDOVER, Evaluation, cautions, evaluate
 from workbench.study.keep import (
     FileCheck,
@@ -36,6 +37,7 @@ from workbench.study.proposals import Proposal, Wish, propose, take
 __all__ = [
     "HANDOVER",
     "Assessment",
+    "Conversion",
     "Evaluation",
     "FileCheck",
     "LoopFigures",
@@ -53,6 +55,7 @@ __all__ = [
     "check_case",
     "chosen_candidate",
     "controller_of",
+    "convert",
     "evaluate",
     "fit_record",
     "loop_of",

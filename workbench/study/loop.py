@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+import math
+
 from workbench.case.case import Case
 from workbench.errors import (
     ModelError,
@@ -12,6 +14,7 @@ from workbench.model.feedback import Loop
 from workbench.model.pid import Controller
 from workbench.model.stability import plant_verdict
 from workbench.model.transfer import TransferFunction
+from workbench.sim.instruments import Instruments
 
 
 def units_of(case: Case) -> dict[str, str]:
@@ -98,6 +101,10 @@ def loop_of(case: Case) -> Loop:
     pv, op = case.pv, case.op
     plant = plant_in_percent(case)
     load = case.plant.load_path()
+    if case.measurement.lag and case.measurement.lag.seconds:
+        # The sensor's lag is felt by everything that is measured: PV is what the sensor shows.
+        sensor = TransferFunction.ratio((1.0,), [(case.measurement.lag.seconds, 1.0)])
+        plant, load = plant * sensor, None if load is None else load * sensor
     return Loop(
         plant=plant,
         load=plant if load is None else load * (100.0 / pv.range.span),
@@ -110,6 +117,28 @@ def loop_of(case: Case) -> Loop:
         high=None if op.max is None else op.range.percent(op.max - op.rest),
         rate=None if op.rate is None else op.range.percent(op.rate.per_second),
         windup=controller.windup,
+        incremental=controller.execution == "incremental",
+        dead_zone=pv.range.percent(controller.dead_zone),
+        gain_at_rest=controller.gain_at_rest,
+        bias=0.0 if controller.bias is None else op.range.percent(controller.bias - op.rest),
+        setpoint_rate=None
+        if controller.setpoint_rate is None
+        else pv.range.percent(controller.setpoint_rate.per_second),
+        setpoint_filter=controller.setpoint_filter.seconds if controller.setpoint_filter else 0.0,
+    )
+
+
+def instruments_of(case: Case) -> Instruments:
+    """The valve and the sensor, in percent of span; the sensor's lag is in the loop itself."""
+    pv, op, measured = case.pv, case.op, case.measurement
+    return Instruments(
+        valve=case.valve,
+        op_rest=op.range.percent(op.rest - op.low),
+        closes_on_rise=op.meaning == "signal" and op.valve_closes_on_rise,
+        resolution=pv.range.percent(measured.resolution),
+        low=pv.range.percent(pv.low - pv.rest) if measured.clips else -math.inf,
+        high=pv.range.percent(pv.high - pv.rest) if measured.clips else math.inf,
+        noise_correlation=measured.noise_correlation.seconds if measured.noise_correlation else 0.0,
     )
 
 

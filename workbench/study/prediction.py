@@ -23,8 +23,8 @@ from workbench.model.transfer import TransferFunction
 from workbench.records.record import Record
 from workbench.sim.loop import settle_horizon, simulate
 from workbench.sim.metrics import Measures, measure
-from workbench.sim.scenario import Events
-from workbench.study.loop import load_scale, loop_of, no_time_domain
+from workbench.sim.scenario import Events, Scenario
+from workbench.study.loop import instruments_of, load_scale, loop_of, no_time_domain
 from workbench.units import Figure, rounded, text
 
 Floats = NDArray[np.float64]
@@ -81,7 +81,7 @@ def predict(case: Case, seed: int = 0, like: Prediction | None = None) -> Predic
             key="plant",
         )
     events = _events(case, loop, seed, like)
-    trace = simulate(loop, events)
+    trace = simulate(loop, events, instruments_of(case))
     pv, op = case.pv, case.op
     trend = Trend(
         trace.time,
@@ -118,9 +118,9 @@ def _events(case: Case, loop: Loop, seed: int, like: Prediction | None) -> Event
         setpoint_step, load_step = pv.range.units(5.0), case.op.range.units(5.0)
         halved = scenario.load_at is None
     if until is None:
-        moves = [t for t, step in ((at, setpoint_step), (load_at, load_step)) if step]
-        last = at if halved else max(moves, default=0.0)
-        until = last + settle_horizon(loop) * (2.0 if halved else 1.0)
+        horizon = settle_horizon(loop)
+        load_at = at + horizon if halved else load_at
+        until = _last_move(scenario, at, load_at, setpoint_step, load_step) + horizon
         # Comparable as long as neither is squeezed into a corner of the other.
         if like is not None and until / 3.0 <= like.until_s <= until * 3.0:
             until = like.until_s
@@ -135,13 +135,46 @@ def _events(case: Case, loop: Loop, seed: int, like: Prediction | None) -> Event
         # Noise is what a scan samples: an analogue controller has no scans to give it to.
         noise=pv.range.percent(pv.noise) if loop.scan else 0.0,
         seed=seed,
+        setpoint_ramp=scenario.setpoint_ramp.seconds if scenario.setpoint_ramp else 0.0,
+        load_shape=scenario.load_shape,
+        load_time=scenario.load_time.seconds if scenario.load_time else 0.0,
+        load_record=scenario.recorded_load(),
+        manual_at=scenario.manual_at.seconds if scenario.manual_at else None,
+        manual_output=None
+        if scenario.manual_output is None
+        else case.op.range.percent(scenario.manual_output - case.op.rest),
+        automatic_at=scenario.automatic_at.seconds if scenario.automatic_at else None,
+        change_at=scenario.change_at.seconds if scenario.change_at else None,
+        gain_factor=scenario.gain_factor,
+        dead_time_factor=scenario.dead_time_factor,
     )
+
+
+_SWINGS: Final = 8
+"""Periods of a sine that a prediction without an end shows."""
+
+
+def _last_move(
+    scenario: Scenario, at: float, load_at: float, setpoint: float | None, load: float | None
+) -> float:
+    """When the last thing happens that has to settle [s]."""
+    time = scenario.load_time.seconds if scenario.load_time else 0.0
+    lasting = {"step": 0.0, "sine": _SWINGS * time, "record": 0.0}.get(scenario.load_shape, time)
+    if scenario.load_shape == "record":
+        lasting = scenario.recorded_load()[-1][0]
+    moves = [at + (scenario.setpoint_ramp.seconds if scenario.setpoint_ramp else 0.0)]
+    moves = moves if setpoint else []
+    moves += [load_at + lasting] if load else []
+    others = (scenario.manual_at, scenario.automatic_at, scenario.change_at)
+    return max([*moves, *(other.seconds for other in others if other)], default=0.0)
 
 
 _MEASURE_SCALE: Final[dict[str, Literal["pv", "op"]]] = {
     "setpoint_iae": "pv",
     "load_iae": "pv",
     "load_peak_deviation": "pv",
+    "setpoint_itae": "pv",
+    "load_itae": "pv",
     "final_pv": "pv",
     "output_travel": "op",
     "final_op": "op",
@@ -156,6 +189,8 @@ def _in_units(case: Case, measures: Measures) -> Measures:
         name: getattr(measures, name).times(spans[kind] / 100.0)
         for name, kind in _MEASURE_SCALE.items()
     }
+    for name in ("setpoint_ise", "load_ise"):
+        scaled[name] = getattr(measures, name).times((case.pv.range.span / 100.0) ** 2)
     for name, rest in (("final_pv", case.pv.rest), ("final_op", case.op.rest)):
         if scaled[name].value is not None:
             scaled[name] = Figure(scaled[name].value + rest)
@@ -170,6 +205,9 @@ def _floor(loop: Loop, events: Events) -> tuple[Figure, Figure]:
     """
     if not events.load_step:
         none = Figure(None, "the scenario has no load step")
+        return none, none
+    if not events.are_steps:
+        none = Figure(None, "it is only known for a load step, in automatic, on one plant")
         return none, none
     first = loop.load.dead_time + loop.plant.dead_time + loop.computing_delay
     shown = loop.plant.dead_time + loop.computing_delay

@@ -1,0 +1,122 @@
+"""Keys of the case file that say what the controller, the valve and the sensor really do."""
+
+from __future__ import annotations
+
+import numpy as np
+import pytest
+
+from workbench import study
+from workbench.case.case import Case, edit_all, new_case
+from workbench.case.files import parse_case
+from workbench.case.writing import format_case
+from workbench.errors import InputError
+
+PLANT = {
+    "plant.shape": "first-order",
+    "plant.gain": "1.5",
+    "plant.time_constant": "20 s",
+    "plant.dead_time": "4 s",
+}
+
+
+def a_case(**changes: str) -> Case:
+    """A loop with a scan of 1 s; `controller__gain` stands for the key `controller.gain`."""
+    given = {
+        "pv.low": "0",
+        "pv.high": "200",
+        "controller.gain": "1.2",
+        "controller.integral": "18 s",
+        "controller.scan": "1 s",
+        "scenario.setpoint_step": "8",
+        "scenario.load_step": "4",
+        "scenario.load_at": "200 s",
+        "scenario.until": "400 s",
+    }
+    given.update({key.replace("__", "."): text for key, text in changes.items()})
+    return edit_all(new_case("TIC-1"), {**PLANT, **given})
+
+
+KEYS = {
+    "incremental": {"controller__execution": "incremental", "op__max": "54"},
+    "dead zone": {"controller__dead_zone": "2"},
+    "gain that grows": {"controller__gain_at_rest": "0.3"},
+    "setpoint rate": {"controller__setpoint_rate": "0.5 /s"},
+    "setpoint filter": {"controller__setpoint_filter": "10 s"},
+    "manual reset": {"controller__integral": "none", "controller__bias": "53"},
+    "stick-slip": {"valve__stick_slip": "3", "valve__slip_jump": "1"},
+    "deadband": {"valve__deadband": "1"},
+    "resolution": {"valve__resolution": "0.5"},
+    "stroke": {"valve__stroke_time": "60 s"},
+    "signal limits": {"valve__signal_high": "53"},
+    "equal percentage": {"valve__characteristic": "equal-percentage", "valve__rangeability": "30"},
+    "table": {"valve__characteristic": "table", "valve__table": "0:0 50:20 100:100"},
+    "sensor lag": {"measurement__lag": "6 s"},
+    "sensor resolution": {"measurement__resolution": "1"},
+    "correlated noise": {"pv__noise": "0.5", "measurement__noise_correlation": "10 s"},
+    "setpoint ramp": {"scenario__setpoint_ramp": "60 s"},
+    "load ramp": {"scenario__load_shape": "ramp", "scenario__load_time": "60 s"},
+    "load pulse": {"scenario__load_shape": "pulse", "scenario__load_time": "30 s"},
+    "load sine": {"scenario__load_shape": "sine", "scenario__load_time": "90 s"},
+    "load record": {"scenario__load_shape": "record", "scenario__load_record": "0:1 20:0.5 50:0"},
+    "manual": {
+        "scenario__manual_at": "50 s",
+        "scenario__manual_output": "58",
+        "scenario__automatic_at": "120 s",
+    },
+    "plant change": {
+        "scenario__change_at": "220 s",
+        "scenario__gain_factor": "1.5",
+        "scenario__dead_time_factor": "2",
+    },
+}
+
+
+@pytest.mark.parametrize("name", KEYS)
+def test_each_key_is_felt_and_comes_back_from_the_file(name: str) -> None:
+    plain, case = a_case(), a_case(**KEYS[name])
+    assert parse_case(format_case(case)) == case
+    before, after = study.predict(plain).trend, study.predict(case).trend
+    instants = np.arange(1.0, 400.0)
+    pairs = ((before.pv, after.pv), (before.output, after.output))
+    apart = max(
+        float(
+            np.abs(np.interp(instants, before.time, a) - np.interp(instants, after.time, b)).max()
+        )
+        for a, b in pairs
+    )
+    assert apart > 0.05
+
+
+def test_values_come_in_the_loop_s_own_units() -> None:
+    # exact: 50 % of OP's span is the middle; manual gives 58 of 0 to 100
+    trend = study.predict(a_case(**KEYS["manual"])).trend
+    held = (trend.time >= 51.0) & (trend.time < 119.0)
+    assert set(trend.output[held].tolist()) == {58.0}
+    # exact: at most 0.5 of PV a second from where PV rests, in the middle of 0 to 200
+    slow = study.predict(a_case(controller__setpoint_rate="0.5 /s", controller__integral="none"))
+    first = slow.trend.output[np.searchsorted(slow.trend.time, [0.0, 1.0, 2.0])]
+    assert first == pytest.approx(50.0 + 1.2 * np.array([0.25, 0.5, 0.75]))
+
+
+def test_a_sensor_lag_counts_in_the_margins() -> None:
+    quick, slow = (
+        study.assess(case).sampled for case in (a_case(), a_case(measurement__lag="6 s"))
+    )
+    assert quick is not None
+    assert slow is not None
+    assert (slow.margins.phase_margin_deg.value or 0) < (quick.margins.phase_margin_deg.value or 0)
+
+
+@pytest.mark.parametrize(
+    ("changes", "words"),
+    [
+        ({"controller__integral": "none", "controller__execution": "incremental"}, "incremental"),
+        ({"controller__bias": "45"}, "beside integral action"),
+        ({"scenario__load_shape": "sine"}, "missing for a sine"),
+        ({"scenario__load_shape": "record", "scenario__load_record": "5:1 2:0"}, "cannot be read"),
+        ({"scenario__automatic_at": "9 s"}, "does not come after manual"),
+    ],
+)
+def test_what_cannot_be_is_refused(changes: dict[str, str], words: str) -> None:
+    with pytest.raises(InputError, match=words):
+        a_case(**changes)
