@@ -141,7 +141,7 @@ class Held:
 
 
 @dataclass(frozen=True)
-class _Segment:
+class Segment:
     """Scans over which everything from outside stays the same."""
 
     start: int
@@ -161,7 +161,8 @@ def first_scan(time: float, clock: Clock) -> int:
     return whole + (rest > 0.0)
 
 
-def _segments(held: Held, scans: int, setpoint: Step, load: Step) -> list[_Segment]:
+def segments_of(held: Held, scans: int, setpoint: Step, load: Step) -> list[Segment]:
+    """The scans in stretches over which nothing changes from outside."""
     seen = first_scan(setpoint.time, held.clock) if setpoint.size else scans
     marks = {0, seen, seen + 1, scans}
     for whole, _ in held.arrivals(load):
@@ -170,7 +171,7 @@ def _segments(held: Held, scans: int, setpoint: Step, load: Step) -> list[_Segme
     found = []
     for start, end in pairwise(cuts):
         found.append(
-            _Segment(
+            Segment(
                 start,
                 end,
                 setpoint.size if start >= seen else 0.0,
@@ -191,10 +192,10 @@ def run(
     noise: Sequence[float] | None = None,
 ) -> Course:
     """The course of the loop over a number of scans, from rest."""
-    segments = _segments(held, scans, setpoint, load)
+    segments = segments_of(held, scans, setpoint, load)
     if noise is None:
-        course = _leap(held, algorithm, segments, load)
-        if course is not None and not _is_held_back(algorithm, course.outputs):
+        course = leap(held, algorithm, segments, load)
+        if course is not None:
             return course
     return _scan_by_scan(held, algorithm, segments, load, noise)
 
@@ -203,7 +204,7 @@ def step_through(
     held: Held, algorithm: Algorithm, scans: int, setpoint: Step, load: Step
 ) -> Course:
     """As `run`, where it is known that leaping will not do."""
-    return _scan_by_scan(held, algorithm, _segments(held, scans, setpoint, load), load, None)
+    return _scan_by_scan(held, algorithm, segments_of(held, scans, setpoint, load), load, None)
 
 
 def _is_held_back(algorithm: Algorithm, outputs: Array) -> bool:
@@ -217,7 +218,7 @@ def _is_held_back(algorithm: Algorithm, outputs: Array) -> bool:
 # --- stepping ------------------------------------------------------------------------------------
 
 
-def _reading(held: Held, load: Step, segment: _Segment) -> tuple[Array, dict[int, float], float]:
+def reading(held: Held, load: Step, segment: Segment) -> tuple[Array, dict[int, float], float]:
     """PV as the controller reads it: weights on the state and on earlier outputs, and the rest."""
     read = held.over(held.clock.lead)
     c = held.process.c
@@ -234,7 +235,7 @@ def _reading(held: Held, load: Step, segment: _Segment) -> tuple[Array, dict[int
 def _scan_by_scan(
     held: Held,
     algorithm: Algorithm,
-    segments: list[_Segment],
+    segments: list[Segment],
     load: Step,
     noise: Sequence[float] | None,
 ) -> Course:
@@ -244,12 +245,12 @@ def _scan_by_scan(
     x = [0.0] * len(held.process.c)
     states: list[list[float]] = []
     pv: list[float] = []
-    _, weights, _ = _reading(held, load, segments[0])
+    _, weights, _ = reading(held, load, segments[0])
     memory = max([1, *over.taps, *weights])
     outputs = [0.0] * memory
     diverged = False
     for segment in segments:
-        read, weights, rest = _reading(held, load, segment)
+        read, weights, rest = reading(held, load, segment)
         row = read.tolist()
         backs = [(memory - back, weight) for back, weight in weights.items()]
         taps = [memory - back for back in over.taps]
@@ -331,9 +332,21 @@ def _linear(held: Held, algorithm: Algorithm, weights: dict[int, float], read: A
     )
 
 
-def _leap(held: Held, algorithm: Algorithm, segments: list[_Segment], load: Step) -> Course | None:
+def leap(
+    held: Held, algorithm: Algorithm, segments: Sequence[Segment], load: Step
+) -> Course | None:
+    """The course without noise in leaps, or None where something holds the output back."""
+    course = _leap(held, algorithm, segments, load)
+    if course is None or _is_held_back(algorithm, course.outputs):
+        return None
+    return course
+
+
+def _leap(
+    held: Held, algorithm: Algorithm, segments: Sequence[Segment], load: Step
+) -> Course | None:
     """The course of the linear loop, or None where leaping would not pay or not work."""
-    read, weights, _ = _reading(held, load, segments[0])
+    read, weights, _ = reading(held, load, segments[0])
     loop = _linear(held, algorithm, weights, read)
     size, n = len(loop.matrix), len(held.process.c)
     if size > _LARGEST_LEAP:
@@ -342,7 +355,7 @@ def _leap(held: Held, algorithm: Algorithm, segments: list[_Segment], load: Step
     start[-1] = 1.0
     states, outputs, pv = [], [], []
     for segment in segments:
-        rest = _reading(held, load, segment)[2]
+        rest = reading(held, load, segment)[2]
         matrix = loop.matrix.copy()
         matrix[:, -1] += loop.setpoint * segment.setpoint + loop.change * segment.change
         matrix[:, -1] += loop.pv * rest

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import math
+from collections.abc import Sequence
 from dataclasses import dataclass, replace
 from typing import Final, Literal
 
@@ -21,7 +22,7 @@ from workbench.model.response import (
 )
 from workbench.model.transfer import TransferFunction
 from workbench.records.record import Record
-from workbench.sim.loop import settle_horizon, simulate
+from workbench.sim.loop import settle_horizon, simulate, simulate_together
 from workbench.sim.metrics import Measures, measure
 from workbench.sim.scenario import Events
 from workbench.study.loop import load_scale, loop_of, no_time_domain
@@ -104,6 +105,25 @@ def predict(case: Case, seed: int = 0, like: Prediction | None = None) -> Predic
         floor_load_iae=iae.times(to_pv),
         diverged=trace.diverged,
     )
+
+
+def measures_together(cases: Sequence[Case]) -> list[Measures]:
+    """The measures of what `predict` gives for each case, faster where only settings differ.
+
+    Raises `InputError` where plant or controller is missing, or a loop cannot be predicted.
+    """
+    loops = [loop_of(case) for case in cases]
+    alike: dict[Events, list[int]] = {}
+    for number, (case, loop) in enumerate(zip(cases, loops, strict=True)):
+        alike.setdefault(_events(case, loop, 0, None), []).append(number)
+    found: dict[int, Measures] = {}
+    for events, numbers in alike.items():
+        traces = simulate_together([loops[number] for number in numbers], events)
+        for number, trace in zip(numbers, traces, strict=True):
+            loop = loops[number]
+            measures = measure(trace, events, low=loop.low, high=loop.high)
+            found[number] = _in_units(cases[number], measures)
+    return [found[number] for number in range(len(cases))]
 
 
 def _events(case: Case, loop: Loop, seed: int, like: Prediction | None) -> Events:

@@ -5,7 +5,7 @@ from __future__ import annotations
 import math
 from dataclasses import dataclass, replace
 from functools import cache
-from typing import Literal
+from typing import Final, Literal
 
 from workbench.case.case import Case
 from workbench.errors import (
@@ -16,7 +16,7 @@ from workbench.model.pid import Controller, settings_like
 from workbench.model.reduction import double_integrator, half_rule, unstable_lag
 from workbench.model.robustness import analogue_margins, sampled_margins, ultimate
 from workbench.study.loop import action_of, loop_of, no_time_domain, plant_in_percent
-from workbench.study.prediction import predict
+from workbench.study.prediction import measures_together
 from workbench.tune import rules
 from workbench.tune.oscillation import astrom_hagglund_relay
 from workbench.tune.tuning import Ultimate
@@ -98,6 +98,7 @@ def propose(case: Case, wish: Wish | None = None) -> tuple[Proposal, ...]:
     methods = known if wish.method is None else tuple(m for m in known if m == wish.method)
     plant = _rule_plant(case, wish)
     rows = [_proposal(case, method, wish, plant) for method in methods]
+    present, *rows = _with_errors(case, [present, *rows])
     rows.sort(key=lambda row: _rank(row, wish))
     return (present, *rows)
 
@@ -169,19 +170,15 @@ def _rule_plant(case: Case, wish: Wish) -> rules.Plant:
 def _judged(
     case: Case, settings: Controller, method: str, title: str, source: str, wish: Wish
 ) -> Proposal:
+    """A row with its margins; how far PV errs is added for all rows at once."""
     trial = replace(case, controller=settings)
     loop = loop_of(trial)
-    missing = no_time_domain(loop.plant)
-    analogue = loop.scan is None or missing
+    analogue = loop.scan is None or no_time_domain(loop.plant)
     margins = analogue_margins(replace(loop, scan=None)) if analogue else sampled_margins(loop)
     if not margins.stable:
         none = Figure(None, f"the loop is not stable: {margins.reason}")
         reason = f"not stable on this loop: {margins.reason}"
         return Proposal(method, title, source, settings, True, reason, none, none, none, none)
-    setpoint_iae = load_iae = Figure(None, f"not predicted: {missing}")
-    if not missing:
-        measures = predict(trial).measures
-        setpoint_iae, load_iae = measures.setpoint_iae, measures.load_iae
     peak = margins.max_sensitivity
     within = peak.value is not None and peak.value <= wish.max_sensitivity
     reason = ""
@@ -197,10 +194,35 @@ def _judged(
         reason,
         peak,
         margins.phase_margin_deg,
-        setpoint_iae,
-        load_iae,
+        _LATER,
+        _LATER,
         within,
     )
+
+
+_LATER: Final = Figure(None, "not predicted yet")
+"""Stands in a stable row until all rows are predicted together."""
+
+
+def _with_errors(case: Case, rows: list[Proposal]) -> list[Proposal]:
+    """The rows with the integral errors that the scenario predicts for those that are stable."""
+    missing = no_time_domain(plant_in_percent(case))
+    stable = [
+        number
+        for number, row in enumerate(rows)
+        if row.controller is not None and row.load_iae is _LATER
+    ]
+    if missing:
+        none = Figure(None, f"not predicted: {missing}")
+        measured = [(none, none)] * len(stable)
+    else:
+        trials = [replace(case, controller=rows[number].controller) for number in stable]
+        found = measures_together(trials)
+        measured = [(measures.setpoint_iae, measures.load_iae) for measures in found]
+    filled = list(rows)
+    for number, (setpoint_iae, load_iae) in zip(stable, measured, strict=True):
+        filled[number] = replace(rows[number], setpoint_iae=setpoint_iae, load_iae=load_iae)
+    return filled
 
 
 def take(case: Case, proposal: Proposal) -> Case:
