@@ -273,6 +273,9 @@ BAD = [
     ("propose oven.toml --method simc", "--method: ", "did you mean 'simc-pi'?"),
     ("propose oven.toml --for both", "--for: ", "load or setpoint"),
     ("propose oven.toml --closed-loop-time 30", "--closed-loop-time: ", "has no unit"),
+    ("propose oven.toml --relay 5:1", "--relay: ", "5:1.2:36 s"),
+    ("propose oven.toml --largest-upset 0", "--largest-upset: ", "above 0"),
+    ("propose oven.toml --allowed-deviation -1", "--allowed-deviation: ", "above 0"),
     ("propose oven.toml --max-sensitivity 0.5", "--max-sensitivity: ", "above 1"),
     ("convert oven.toml", "--to: ", "ideal, parallel or series"),
     ("convert oven.toml --to idel", "--to: ", "did you mean ideal?"),
@@ -726,6 +729,21 @@ def test_propose_keeps_its_keys(run: Run) -> None:
     assert (present["method"], present["gain"], present["integral_s"]) == ("present", 1.1, 32.0)
     assert present["derivative_s"] == 0.0
     assert any(row["applies"] for row in data["proposals"][1:])
+
+
+def test_propose_takes_a_relay_test_and_the_needs_of_a_level(run: Run) -> None:
+    words = ("--method", "ziegler-nichols-ultimate-p", "--relay", "5:2:36 s")
+    row = answer(run("propose", *P, *words, "--json"))["proposals"][-1]
+    # exact: 0.5 4 5/(pi 2)
+    assert row["gain"] == pytest.approx(5 / math.pi, rel=1e-12)
+    assert "quarter" in row["objective"]
+    assert "180" in row["limits"]
+    level = ("--plant", "0.001/s", "--method", "averaging-level-p")
+    needs = ("--largest-upset", "20", "--allowed-deviation", "10")
+    row = answer(run("propose", *level, *needs, "--json"))["proposals"][-1]
+    # exact: 20/10
+    assert row["gain"] == pytest.approx(2.0, rel=1e-12)
+    assert run("propose", *level).status == 1
 
 
 def test_propose_needs_no_controller(run: Run) -> None:

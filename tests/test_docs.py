@@ -170,11 +170,13 @@ def commands() -> str:
 
 
 def rules() -> str:
-    """Every tuning method, with what it was published in."""
-    methods: dict[str, list[str]] = {}
+    """Every tuning method, with what it aims at, its limits, and what it was published in."""
+    methods: dict[tuple[str, str, str], list[str]] = {}
     for method, rule in RULES.items():
-        methods.setdefault(rule.source, []).append(f"`{method}`")
-    return _table(("methods", "source"), ((", ".join(m), source) for source, m in methods.items()))
+        told = (rule.objective, rule.limits, rule.source)
+        methods.setdefault(told, []).append(f"`{method}`")
+    rows = ((", ".join(names), *told) for told, names in methods.items())
+    return _table(("methods", "aims at", "published for", "source"), rows)
 
 
 TABLES_MADE: Final[dict[str, Callable[[], str]]] = {

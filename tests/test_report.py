@@ -136,7 +136,9 @@ def test_proposals_stand_in_one_table_where_it_fits() -> None:
     assert {len(row) for row in table[1:]} == {len(table[0])} or len(
         {len(row) for row in table if row.startswith(("simc", "lambda", "present"))}
     ) == 1
-    assert "Not proposed\n  simc-pid" in wide
+    assert "Not proposed\n  imc-integrating-pid" in wide
+    assert "Aims\n" in wide
+    assert "a gain margin of 3 with a phase margin of 60 deg; for one lag" in " ".join(wide.split())
     # A source is told once for all its methods.
     assert wide.count("Optimum settings") == 1
     for sentence in study.HANDOVER:

@@ -405,6 +405,62 @@ def test_settings_taken_are_what_a_person_types() -> None:
         study.take(case, refused)
 
 
+def found(case: Case, wish: study.Wish) -> study.Proposal:
+    """The row of the one method asked for."""
+    return study.propose(case, wish)[-1]
+
+
+def test_every_rule_says_what_it_aims_at_and_for_what_it_was_published() -> None:
+    present, *rows = study.propose(a_case())
+
+    assert present.objective == present.limits == ""
+    assert len(rows) >= 50
+    assert all(row.objective and row.limits and row.published_form for row in rows)
+    series = next(row for row in rows if row.method == "simc-improved-pid")
+    assert series.published_form == "series"
+
+
+def test_a_relay_test_stands_for_the_ultimate_gain_of_the_plant() -> None:
+    # exact: half steps of 8 % of OP and 5 degC of 250, Ku = 4 8/(pi 2), Tyreus-Luyben Ku/3.2
+    wish = study.Wish(method="tyreus-luyben-pi", relay=study.RelayTest(8.0, 5.0, 30.0))
+    controller = found(a_case(), wish).controller
+
+    assert controller is not None
+    assert controller.gain == pytest.approx(16.0 / math.pi / 3.2, rel=1e-12)
+    assert controller.integral is not None
+    assert controller.integral.seconds == pytest.approx(66.0, rel=1e-12)
+    # exact: a hysteresis of 3 degC leaves 4 of the 5
+    with_hysteresis = replace(wish, relay=study.RelayTest(8.0, 5.0, 30.0, 3.0))
+    controller = found(a_case(), with_hysteresis).controller
+    assert controller is not None
+    assert controller.gain == pytest.approx(20.0 / math.pi / 3.2, rel=1e-12)
+
+
+def test_a_level_is_averaged_in_its_own_units() -> None:
+    # exact: 20 % of OP over 25 degC of 250 is a gain of 2 %/%
+    case = a_case(plant="integrating slope=0.01 /s")
+    wish = study.Wish(method="averaging-level-p", largest_upset=20.0, allowed_deviation=25.0)
+    controller = found(case, wish).controller
+
+    assert controller is not None
+    assert controller.gain == pytest.approx(2.0, rel=1e-12)
+    assert not found(case, study.Wish(method="averaging-level-p")).applies
+
+
+@pytest.mark.parametrize(
+    ("plant", "methods"),
+    [
+        ("exp(-6 s)/(40 s - 1)", {"imc-unstable-pid"}),
+        ("0.001 exp(-6 s)/s^2", {"simc-double-integrating-pid"}),
+    ],
+)
+def test_a_plant_without_a_small_model_has_its_own_rule(plant: str, methods: set[str]) -> None:
+    rows = study.propose(a_case(plant=plant, controller_action="reverse"))
+
+    assert {row.method for row in rows[1:] if row.applies} == methods
+    assert all(row.max_sensitivity.value for row in rows if row.method in methods)
+
+
 def test_a_fit_taken_over_is_rounded_and_knows_its_record() -> None:
     fit = study.fit_record(CASES / "TIC-307_bump.csv", shapes=("first-order",))
     case = study.accept(a_case(), fit)

@@ -247,11 +247,15 @@ def _propose(given: Given) -> Answer:
     from workbench import study
 
     limit = given.number("--max-sensitivity", above=1.0)
+    swing = given.swing("--relay")
     wish = study.Wish(
         goal="setpoint" if given.choice("--for", ("load", "setpoint")) == "setpoint" else "load",
         closed_loop_time=given.seconds("--closed-loop-time"),
         max_sensitivity=study.Wish.max_sensitivity if limit is None else limit,
         method=given.word("--method"),
+        largest_upset=given.number("--largest-upset", above=0.0),
+        allowed_deviation=given.number("--allowed-deviation", above=0.0),
+        relay=None if swing is None else study.RelayTest(*swing),
     )
     # What a controller is like, its gain left open, is enough to propose settings for it.
     case = _loop(given, gain="1")

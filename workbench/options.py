@@ -131,8 +131,9 @@ class Given:
     def seconds(self, name: str, *, or_zero: bool = False) -> float | None:
         """The time [s] of an option, above 0, or from 0.  Raises `InputError`."""
         word = self.word(name)
-        if word is None:
-            return None
+        return None if word is None else self._time(name, word, or_zero=or_zero)
+
+    def _time(self, name: str, word: str, *, or_zero: bool = False) -> float:
         try:
             amount = read_amount(word, tuple(TIME_UNITS), "30 s")
         except InputError as fault:
@@ -141,6 +142,27 @@ class Given:
             least = "below 0" if or_zero else "not above 0"
             raise problem(f"{amount} is {least}", 'write it like "30 s"', key=name)
         return amount.seconds
+
+    def swing(self, name: str) -> tuple[float, float, float, float] | None:
+        """A relay test: OP and PV amplitudes, period [s], hysteresis.  Raises `InputError`."""
+        word = self.word(name)
+        if word is None:
+            return None
+        output, pv, time, *rest = [part.strip() for part in word.split(":")] + [""] * 2
+        numbers = []
+        for part in (output, pv, (rest or ["0"])[0] or "0"):
+            try:
+                numbers.append(float(part))
+            except ValueError:
+                numbers.append(math.nan)
+        sound = word.count(":") in (2, 3) and all(map(math.isfinite, numbers))
+        if not (sound and numbers[0] > 0.0 and numbers[1] > numbers[2] >= 0.0):
+            raise problem(
+                f"{harmless(word, 40)!r} is no relay test",
+                'write it like "5:1.2:36 s", amplitudes above 0 and the hysteresis below the swing',
+                key=name,
+            )
+        return numbers[0], numbers[1], self._time(name, time), numbers[2]
 
     def choice(self, name: str, choices: tuple[str, ...]) -> str | None:
         """The word of an option that takes one of a few.  Raises `InputError`."""
@@ -566,6 +588,20 @@ WISHES: Final[tuple[Option, ...]] = (
     ),
     Option("--max-sensitivity", "MS", "limit on the peak of the sensitivity", "1.7"),
     Option("--method", "NAME", "this method only", "every method that applies"),
+    Option(
+        "--largest-upset",
+        "CHANGE",
+        "for levels: largest lasting upset, as the change of OP that balances it, OP units",
+    ),
+    Option(
+        "--allowed-deviation", "CHANGE", "for levels: how far PV may leave its setpoint, PV units"
+    ),
+    Option(
+        "--relay",
+        "OP:PV:TIME[:HYSTERESIS]",
+        "a relay test in place of the plant's ultimate gain: half of the output's step, half of the"
+        " PV's swing, period, half of the hysteresis",
+    ),
 )
 CONVERSION: Final[tuple[Option, ...]] = (
     Option("--to", "FORM", "the form wanted: ideal, series or parallel", "needed"),

@@ -757,6 +757,9 @@ def _proposal_data(proposal: Proposal) -> Json:
         "method": proposal.method,
         "title": proposal.title,
         "source": proposal.source,
+        "objective": proposal.objective,
+        "limits": proposal.limits,
+        "published_form": proposal.published_form,
         "form": None if controller is None else controller.form,
         **({"form_reason": proposal.reason} if controller is None else {}),
     }
@@ -786,21 +789,25 @@ def propose_text(
         lines += _proposal_table(fitting, units, width)
     if not any(proposal.method != "present" for proposal in fitting):
         lines += ["", "No method gives settings for this loop."]
-    for title, rows in (
-        ("Not proposed", [(p.method, p.reason) for p in proposals if not p.applies]),
-        ("Remarks", [(p.method, p.reason) for p in fitting if p.reason]),
-    ):
-        if rows:
-            lines += ["", title, *_table(rows, width)]
-    sources: dict[str, list[str]] = {}
-    for proposal in fitting:
-        if proposal.method != "present":
-            sources.setdefault(proposal.source, []).append(proposal.method)
-    if sources:
-        lines += ["", "Sources"]
-    for source, methods in sources.items():
-        lines.append(wrapped(f"{', '.join(methods)}: {source}", width, "  ", "    "))
+    lines += _grouped(
+        "Not proposed", [(p.reason, p.method) for p in proposals if not p.applies], width
+    )
+    remarks = [(p.method, p.reason) for p in fitting if p.reason]
+    if remarks:
+        lines += ["", "Remarks", *_table(remarks, width)]
+    rules = [proposal for proposal in fitting if proposal.method != "present"]
+    lines += _grouped("Aims", [(f"{p.objective}; for {p.limits}", p.method) for p in rules], width)
+    lines += _grouped("Sources", [(p.source, p.method) for p in rules], width)
     return "\n".join([*lines, *_notes(notes, width), *_handover(width)])
+
+
+def _grouped(title: str, told: Sequence[tuple[str, str]], width: int) -> list[str]:
+    """Methods of which the same is to be said, and what; nothing where nothing is."""
+    methods: dict[str, list[str]] = {}
+    for words, method in told:
+        methods.setdefault(words, []).append(method)
+    said = [f"{', '.join(names)}: {words}" for words, names in methods.items()]
+    return ["", title, *(wrapped(line, width, "  ", "    ") for line in said)] if said else []
 
 
 def _proposal_table(

@@ -164,17 +164,6 @@ class HalfRuleCase:
     worth: str
 
 
-@dataclass(frozen=True)
-class TuningCase:
-    """(K, Ti, Td) in the ideal form."""
-
-    name: str
-    plant: Plant
-    settings: tuple[float, float, float]
-    source: str
-    worth: str
-
-
 # --- the tables ----------------------------------------------------------------------------------
 
 MARGINS: Final = (
@@ -1226,58 +1215,6 @@ HALF_RULES: Final = (
         Plant(1.0, (6.0, 2.0, 2.0), 1.0, (-1.0,), 0),
         (6.0, 3.0, 3.0),
         S03,
-        "published rule, value recomputed, from memory",
-    ),
-)
-
-TUNINGS: Final = (
-    TuningCase(
-        "rule-k2th1tau10-ZN-open_PI-set",
-        Plant(2.0, (10.0,), 1.0, (), 0),
-        (4.5, 3.3333333, 0.0),
-        ZN42,
-        "published rule, value recomputed",
-    ),
-    TuningCase(
-        "rule-k2th1tau10-ZN-open_PID-set",
-        Plant(2.0, (10.0,), 1.0, (), 0),
-        (6.0, 2.0, 0.5),
-        ZN42,
-        "published rule, value recomputed",
-    ),
-    TuningCase(
-        "rule-k2th1tau10-ZN-ult_PI-set",
-        Plant(2.0, (10.0,), 1.0, (), 0),
-        (3.6788746, 3.2083366, 0.0),
-        ZN42,
-        "published rule, value recomputed, from memory",
-    ),
-    TuningCase(
-        "rule-k2th1tau10-ZN-ult_PID-set",
-        Plant(2.0, (10.0,), 1.0, (), 0),
-        (4.9051662, 1.925002, 0.48125049),
-        ZN42,
-        "published rule, value recomputed, from memory",
-    ),
-    TuningCase(
-        "rule-k1th1tau1-ZN-open_PI-set",
-        Plant(1.0, (1.0,), 1.0, (), 0),
-        (0.9, 3.3333333, 0.0),
-        ZN42,
-        "published rule, value recomputed",
-    ),
-    TuningCase(
-        "rule-k1th1tau1-ZN-ult_PI-set",
-        Plant(1.0, (1.0,), 1.0, (), 0),
-        (1.0178219, 2.5808836, 0.0),
-        ZN42,
-        "published rule, value recomputed, from memory",
-    ),
-    TuningCase(
-        "rule-k1th1tau1-ZN-ult_PID-set",
-        Plant(1.0, (1.0,), 1.0, (), 0),
-        (1.3570958, 1.5485301, 0.38713253),
-        ZN42,
         "published rule, value recomputed, from memory",
     ),
 )

@@ -210,7 +210,7 @@ def test_proposals_are_judged_and_one_is_taken(work: Work) -> None:
             await press(pilot, "o")
             table = page_of(pilot, ProposalsPage).table
             shown = text_of(pilot)
-            for words in ("present", "simc-pi", "lambda-pi", "does not apply", "Ms", "load"):
+            for words in ("present", "amigo-pi", "lambda-pi", "aims at", "Ms", "load"):
                 assert words in shown
             assert "integral in min/repeat" in shown
             lines = shown.split("\n")
@@ -222,6 +222,27 @@ def test_proposals_are_judged_and_one_is_taken(work: Work) -> None:
             page_of(pilot, MainPage)
             assert work.case == study.take(work._before[-1], chosen)
             assert "u takes them back" in text_of(pilot)
+
+    run(story())
+
+
+def test_the_list_of_rules_scrolls_with_what_is_told_of_each(work: Work) -> None:
+    async def story() -> None:
+        async with running(work) as pilot:
+            await press(pilot, "o")
+            table = page_of(pilot, ProposalsPage).table
+            for row, proposal in enumerate(table.rows):
+                table.cursor = row
+                table.redraw()
+                await settle(pilot)
+                lines = text_of(pilot).split("\n")
+                assert len(lines) <= 25
+                assert max(len(line) for line in lines) <= 80
+                assert any(line.startswith(f"> {proposal.method} ") for line in lines)
+                # The whole source can be read.
+                assert proposal.source.split()[-1] in " ".join(lines[14:])
+            await press(pilot, "end")
+            assert "does not apply" in text_of(pilot)
 
     run(story())
 

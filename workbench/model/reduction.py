@@ -204,3 +204,76 @@ def _horizon(plant: TransferFunction) -> float:
     """Long enough for a step response to show everything [s]."""
     slowest = [1.0 / abs(p.real) for p in plant.poles() if p.real < 0.0]
     return 6.0 * sum(slowest) + 3.0 * max(plant.delays, default=0.0) or 1.0
+
+
+# --- plants that a lag does not stand for --------------------------------------------------------
+
+
+@dataclass(frozen=True)
+class UnstableLag:
+    """k exp(-L s)/(T s - 1)."""
+
+    gain: float
+    time_constant: float
+    """[s], positive."""
+    dead_time: float
+    """[s]"""
+
+
+@dataclass(frozen=True)
+class DoubleIntegrator:
+    """k'' exp(-L s)/s^2."""
+
+    gain: float
+    """[per s^2]"""
+    dead_time: float
+    """[s]"""
+
+
+def unstable_lag(plant: TransferFunction) -> UnstableLag:
+    """The unstable lag of a plant; its stable lags and inverse responses count as dead time.
+
+    Raises `NotApplicable` where the plant is anything else.
+    """
+    poles = _real_poles(plant)
+    growing = [1.0 / p for p in poles if p > 0]
+    if len(growing) != 1 or any(p == 0 for p in poles):
+        raise NotApplicable("the plant has not one unstable lag", limit="published for one")
+    lags = sum(-1.0 / p for p in poles if p < 0)
+    gain = plant.gain().value
+    assert gain is not None
+    return UnstableLag(-gain, growing[0], plant.dead_time + lags + _inverse_response(plant))
+
+
+def double_integrator(plant: TransferFunction) -> DoubleIntegrator:
+    """The double integrator of a plant, its lags counted as dead time by the half rule.
+
+    Raises `NotApplicable` where the plant is anything else.
+    """
+    poles = _real_poles(plant)
+    if sum(1 for p in poles if p == 0) != 2 or any(p > 0 for p in poles):
+        raise NotApplicable(
+            "the plant does not integrate twice", limit="published for one that does"
+        )
+    lags = sorted((-1.0 / p for p in poles if p), reverse=True)
+    delay = plant.dead_time + sum(lags) - 0.5 * max(lags, default=0.0) + _inverse_response(plant)
+    twice = plant * TransferFunction.ratio((1.0, 0.0), [(1.0,)])
+    acceleration = twice.slope().value
+    assert acceleration is not None
+    return DoubleIntegrator(acceleration, delay)
+
+
+def _real_poles(plant: TransferFunction) -> list[float]:
+    if plant.has_delayed_feedback or len(plant.numerator) != 1:
+        raise _refuse("the plant has more than one path or an inner feedback")
+    poles = plant.poles()
+    if any(abs(p.imag) > 1e-9 * abs(p) for p in poles):
+        raise _refuse("the plant oscillates by itself")
+    return [p.real for p in poles]
+
+
+def _inverse_response(plant: TransferFunction) -> float:
+    zeros = plant.zeros()
+    if any(z.real <= 0 or abs(z.imag) > 1e-9 * abs(z) for z in zeros):
+        raise _refuse("the plant has a lead or differentiates")
+    return sum(1.0 / z.real for z in zeros)

@@ -121,8 +121,10 @@ def ultimate(plant: TransferFunction) -> tuple[float, float]:
     Raises
     ------
     NotApplicable
-        The plant is unstable, or its phase never reaches -180 deg.
+        The plant is unstable or integrates twice, or its phase never reaches -180 deg.
     """
+    if plant.integrators > 1:
+        raise NotApplicable("no proportional gain is stable", limit="wants a swing to begin")
     if plant.has_delayed_feedback:
         unstable = plant.integrators <= 0 and not plant_verdict(plant).stable
     else:

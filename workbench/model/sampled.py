@@ -89,15 +89,25 @@ class SampledLoop:
 
     def plant(self, z: Complex) -> Complex:
         """Held plant from U to Y at the points z, shape (n,)."""
-        n = len(self.gamma)
-        states = np.zeros((len(z), n), complex)
-        if n:
-            shifted = z[:, None, None] * np.eye(n) - self.phi
-            states = np.linalg.solve(shifted, self.gamma.astype(complex)[None, :, None])[..., 0]
+        states = self._states(z)
         total = np.zeros_like(z)
         for r in self.readings:
             total += z ** (-r.scans) * (states @ r.state + r.held + r.before / z)
         return total
+
+    def _states(self, z: Complex) -> Complex:
+        """(z - phi)^-1 gamma at the points z, shape (len(z), n)."""
+        n = len(self.gamma)
+        if n > 1 and np.triu(self.phi, 1).any():
+            shifted = z[:, None, None] * np.eye(n) - self.phi
+            solved = np.linalg.solve(shifted, self.gamma.astype(complex)[None, :, None])[..., 0]
+            return np.asarray(solved, np.complex128)
+        # Real lags one after the other make phi lower triangular: each state from those before it.
+        states = np.zeros((len(z), n), complex)
+        for row in range(n):
+            known = states[:, :row] @ self.phi[row, :row]
+            states[:, row] = (self.gamma[row] + known) / (z - self.phi[row, row])
+        return states
 
     def open_loop(self, z: Complex) -> Complex:
         """L(z) from the controller's error back to PV as the controller filters it."""

@@ -113,11 +113,12 @@ class ProposalTable(Panel):
         if chosen is None:
             return []
         lines: list[Line] = [(("─" * width, "frame"),)]
-        lines += wrapped(f"{chosen.title}, {chosen.source}", width, "plain")
         if chosen.reason:
-            lines += remark(chosen.reason, width, "caution")
+            lines += remark(chosen.reason, width, "caution")[:2]
+        aim = f" aims at {chosen.objective}; for {chosen.limits}." if chosen.objective else ""
+        lines += wrapped(f"{chosen.title}{':' if aim else ','}{aim} {chosen.source}", width)
         # A fixed height, so that the list does not jump as the cursor moves.
-        return [*lines, *[()] * 6][:6]
+        return [*lines, *[()] * 8][:8]
 
 
 def _figure(figure: Figure, digits: int) -> str:

@@ -32,7 +32,7 @@ from workbench.study.prediction import (
     respond_to_record,
     response_horizon,
 )
-from workbench.study.proposals import Proposal, Wish, propose, take
+from workbench.study.proposals import Proposal, RelayTest, Wish, propose, take
 
 __all__ = [
     "HANDOVER",
@@ -45,6 +45,7 @@ __all__ = [
     "Prediction",
     "Proposal",
     "Reduced",
+    "RelayTest",
     "Response",
     "Trend",
     "Wish",

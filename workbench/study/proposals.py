@@ -5,7 +5,7 @@ from __future__ import annotations
 import math
 from dataclasses import dataclass, replace
 from functools import cache
-from typing import Literal
+from typing import Final, Literal
 
 from workbench.case.case import Case
 from workbench.errors import (
@@ -13,12 +13,28 @@ from workbench.errors import (
     problem,
 )
 from workbench.model.pid import Controller, settings_like
-from workbench.model.reduction import half_rule
+from workbench.model.reduction import double_integrator, half_rule, unstable_lag
 from workbench.model.robustness import analogue_margins, sampled_margins, ultimate
 from workbench.study.loop import action_of, loop_of, no_time_domain, plant_in_percent
 from workbench.study.prediction import predict
 from workbench.tune import rules
+from workbench.tune.oscillation import astrom_hagglund_relay
+from workbench.tune.tuning import Ultimate
 from workbench.units import Amount, Figure, nearest, plain, rounded, text
+
+
+@dataclass(frozen=True)
+class RelayTest:
+    """The steady swing that a relay in place of the controller made; halves of peak to peak."""
+
+    output: float
+    """[OP unit]"""
+    swing: float
+    """[PV unit]"""
+    period: float
+    """[s]"""
+    hysteresis: float = 0.0
+    """[PV unit]"""
 
 
 @dataclass(frozen=True)
@@ -30,6 +46,12 @@ class Wish:
     """[s]"""
     max_sensitivity: float = 1.7
     method: str | None = None
+    largest_upset: float | None = None
+    """Largest lasting upset, as the change of OP that balances it [OP unit]."""
+    allowed_deviation: float | None = None
+    """By how much PV may leave its setpoint [PV unit]."""
+    relay: RelayTest | None = None
+    """Gives the ultimate gain and period in place of the plant's."""
 
 
 @dataclass(frozen=True)
@@ -49,6 +71,11 @@ class Proposal:
     load_iae: Figure
     within_limit: bool = False
     """Stable, and the maximum sensitivity is within the limit asked for."""
+    objective: str = ""
+    """What a rule aims at."""
+    limits: str = ""
+    """The plants that a rule was published for."""
+    published_form: str = ""
 
 
 def propose(case: Case, wish: Wish | None = None) -> tuple[Proposal, ...]:
@@ -69,7 +96,9 @@ def propose(case: Case, wish: Wish | None = None) -> tuple[Proposal, ...]:
         raise problem(f"the method {wish.method!r} is not known", hint, key="--method")
     present = _present(case, wish)
     methods = known if wish.method is None else tuple(m for m in known if m == wish.method)
-    rows = [_proposal(case, method, wish) for method in methods]
+    plant = _rule_plant(case, wish)
+    rows = [_proposal(case, method, wish, plant) for method in methods]
+    present, *rows = _with_errors(case, [present, *rows])
     rows.sort(key=lambda row: _rank(row, wish))
     return (present, *rows)
 
@@ -91,47 +120,63 @@ def _present(case: Case, wish: Wish) -> Proposal:
     return _judged(case, case.controller, "present", title, source, wish)
 
 
-def _proposal(case: Case, method: str, wish: Wish) -> Proposal:
+def _proposal(case: Case, method: str, wish: Wish, plant: rules.Plant) -> Proposal:
     rule = rules.RULES[method]
     like = case.controller or Controller(gain=1.0)
     try:
-        tuning = rule.settings(_rule_plant(case, wish))
+        tuning = rule.settings(plant)
         settings = settings_like(
             like, tuning.gain, tuning.integral_time, tuning.derivative_time, tuning.form
         )
     except NotApplicable as refusal:
-        return _blank(method, rule.title, rule.source, str(refusal))
-    return _judged(case, settings, method, rule.title, rule.source, wish)
+        row = _blank(method, rule.title, rule.source, str(refusal))
+    else:
+        row = _judged(case, settings, method, rule.title, rule.source, wish)
+    return replace(row, objective=rule.objective, limits=rule.limits, published_form=rule.form)
 
 
 def _rule_plant(case: Case, wish: Wish) -> rules.Plant:
     """The plant as rules see it: percent of span, and positive for the action it asks for."""
     plant = plant_in_percent(case)
     upright = plant if action_of(case)[0] == "reverse" else -plant
+    pv, op = case.pv.range, case.op.range
 
     @cache
-    def found() -> rules.Ultimate:
-        return rules.Ultimate(*ultimate(upright))
+    def swing() -> Ultimate:
+        test = wish.relay
+        if test is None:
+            return Ultimate(*ultimate(upright))
+        return astrom_hagglund_relay(
+            op.percent(test.output),
+            pv.percent(test.swing),
+            test.period,
+            pv.percent(test.hysteresis),
+        )
 
-    return rules.Plant(lambda lags: half_rule(upright, lags), found, wish.closed_loop_time)
+    upset, deviation = wish.largest_upset, wish.allowed_deviation
+    return rules.Plant(
+        cache(lambda lags: half_rule(upright, lags)),
+        swing,
+        wish.closed_loop_time,
+        None if upset is None else op.percent(upset),
+        None if deviation is None else pv.percent(deviation),
+        lambda: unstable_lag(upright),
+        lambda: double_integrator(upright),
+    )
 
 
 def _judged(
     case: Case, settings: Controller, method: str, title: str, source: str, wish: Wish
 ) -> Proposal:
+    """A row with its margins; how far PV errs is added for all rows at once."""
     trial = replace(case, controller=settings)
     loop = loop_of(trial)
-    missing = no_time_domain(loop.plant)
-    analogue = loop.scan is None or missing
+    analogue = loop.scan is None or no_time_domain(loop.plant)
     margins = analogue_margins(replace(loop, scan=None)) if analogue else sampled_margins(loop)
     if not margins.stable:
         none = Figure(None, f"the loop is not stable: {margins.reason}")
         reason = f"not stable on this loop: {margins.reason}"
         return Proposal(method, title, source, settings, True, reason, none, none, none, none)
-    setpoint_iae = load_iae = Figure(None, f"not predicted: {missing}")
-    if not missing:
-        measures = predict(trial).measures
-        setpoint_iae, load_iae = measures.setpoint_iae, measures.load_iae
     peak = margins.max_sensitivity
     within = peak.value is not None and peak.value <= wish.max_sensitivity
     reason = ""
@@ -147,10 +192,35 @@ def _judged(
         reason,
         peak,
         margins.phase_margin_deg,
-        setpoint_iae,
-        load_iae,
+        _LATER,
+        _LATER,
         within,
     )
+
+
+_LATER: Final = Figure(None, "not predicted yet")
+"""Stands in a stable row until all rows are predicted together."""
+
+
+def _with_errors(case: Case, rows: list[Proposal]) -> list[Proposal]:
+    """The rows with the integral errors that the scenario predicts for those that are stable."""
+    missing = no_time_domain(plant_in_percent(case))
+    stable = [
+        number
+        for number, row in enumerate(rows)
+        if row.controller is not None and row.load_iae is _LATER
+    ]
+    if missing:
+        none = Figure(None, f"not predicted: {missing}")
+        measured = [(none, none)] * len(stable)
+    else:
+        trials = [replace(case, controller=rows[number].controller) for number in stable]
+        found = [predict(trial).measures for trial in trials]
+        measured = [(measures.setpoint_iae, measures.load_iae) for measures in found]
+    filled = list(rows)
+    for number, (setpoint_iae, load_iae) in zip(stable, measured, strict=True):
+        filled[number] = replace(rows[number], setpoint_iae=setpoint_iae, load_iae=load_iae)
+    return filled
 
 
 def take(case: Case, proposal: Proposal) -> Case:

@@ -1,280 +1,31 @@
-"""Published tuning rules: one pure function each, with its limits and its source.
+"""The table of published tuning rules: what each is for, its limits and its source.
 
 A rule takes a small model in percent of span and seconds and gives settings in the form it was
-published for.  Gains come out positive: the controller's action carries the sign.  Symbols in the
-formulas: k gain, k' slope of an integrating plant, T time constant, L dead time, a = k L/T or k' L.
+published for.  Gains come out positive: the controller's action carries the sign.  The formulas
+stand in the modules of their families: `closed_loop_time`, `oscillation`, `robust`,
+`integral_criteria` and `level`.
 """
 
 from __future__ import annotations
 
 from collections.abc import Callable
 from dataclasses import dataclass
-from typing import Final, Literal
+from typing import Final
 
 from workbench.errors import NotApplicable
-from workbench.model.reduction import SmallModel
-
-ZIEGLER_NICHOLS: Final = (
-    'J.G. Ziegler and N.B. Nichols, "Optimum settings for automatic controllers", '
-    "Trans. ASME 64, 1942, 759-768"
-)
-SKOGESTAD: Final = (
-    'S. Skogestad, "Simple analytic rules for model reduction and PID controller tuning", '
-    "J. Process Control 13(4), 2003, 291-309"
-)
-DAHLIN: Final = (
-    'E.B. Dahlin, "Designing and tuning digital controllers", Instrum. Control Syst. 41(6), 1968, '
-    "77-83 (from memory)"
-)
-CHIEN_FRUEHAUF: Final = (
-    'I.-L. Chien and P.S. Fruehauf, "Consider IMC tuning to improve controller performance", '
-    "Chem. Eng. Prog. 86(10), 1990, 33-41 (from memory)"
-)
+from workbench.model.reduction import DoubleIntegrator, SmallModel, UnstableLag
+from workbench.tune import closed_loop_time as speed
+from workbench.tune import integral_criteria as integrals
+from workbench.tune import level, oscillation, robust
+from workbench.tune.tuning import Form, Tuning, Ultimate
 
 
-@dataclass(frozen=True)
-class Tuning:
-    """Settings as a rule gives them."""
-
-    gain: float
-    """[%/%]"""
-    integral_time: float | None = None
-    """[s]; none for proportional-only."""
-    derivative_time: float = 0.0
-    """[s]"""
-    form: Literal["ideal", "series"] = "ideal"
-    """The form that the rule was published for."""
+def _no_unstable_lag() -> UnstableLag:
+    raise NotApplicable("the plant has not one unstable lag", limit="published for one")
 
 
-@dataclass(frozen=True)
-class Ultimate:
-    """Where proportional control just keeps swinging."""
-
-    gain: float
-    """Ku [%/%], positive."""
-    period: float
-    """Pu [s]"""
-
-
-# --- closed-loop time constant chosen by the engineer --------------------------------------------
-
-
-def dahlin_lambda_pi(model: SmallModel, closed_loop_time: float | None) -> Tuning:
-    """PI settings that ask for a first-order answer to the setpoint with time constant lambda.
-
-    self-regulating   K = T/(k (lambda + L)),   Ti = T
-    integrating       K = (2 lambda + L)/(k' (lambda + L)^2),   Ti = 2 lambda + L
-
-    Parameters
-    ----------
-    model
-        One lag, or integrating, with dead time [s].
-    closed_loop_time
-        lambda [s]; `None` takes the larger of T and 3 L (common practice).
-
-    Returns
-    -------
-    Tuning
-        Ideal PI.
-
-    Raises
-    ------
-    NotApplicable
-        Where there is neither a lag nor a dead time to take lambda from.
-
-    Source
-    ------
-    E.B. Dahlin, Instrum. Control Syst. 41(6), 1968, 77-83; integrating plants: I.-L. Chien and
-    P.S. Fruehauf, Chem. Eng. Prog. 86(10), 1990, 33-41; both from memory.
-
-    Examples
-    --------
-    >>> dahlin_lambda_pi(SmallModel(2.0, False, 60.0, 0.0, 10.0, True), 20.0)
-    Tuning(gain=1.0, integral_time=60.0, derivative_time=0.0, form='ideal')
-    """
-    k, t, delay = abs(model.gain), model.time_constant, model.dead_time
-    wanted = closed_loop_time if closed_loop_time is not None else max(t, 3.0 * delay)
-    if wanted + delay <= 0.0:
-        raise NotApplicable("no dead time to take lambda from", limit="give a closed-loop time")
-    if model.integrating:
-        return Tuning((2 * wanted + delay) / (k * (wanted + delay) ** 2), 2 * wanted + delay)
-    return Tuning(t / (k * (wanted + delay)), t)
-
-
-def skogestad_simc_pi(model: SmallModel, closed_loop_time: float | None) -> Tuning:
-    """SIMC PI settings.
-
-    self-regulating   K = T/(k (tau_c + L)),   Ti = min(T, 4 (tau_c + L))
-    integrating       K = 1/(k' (tau_c + L)),   Ti = 4 (tau_c + L)
-
-    Parameters
-    ----------
-    model
-        One lag, or integrating, with dead time [s].
-    closed_loop_time
-        tau_c [s]; `None` takes tau_c = L, the published choice for tight control.
-
-    Returns
-    -------
-    Tuning
-        Ideal PI, which is series PI too.
-
-    Raises
-    ------
-    NotApplicable
-        Dead time 0 and no closed-loop time given.
-
-    Source
-    ------
-    S. Skogestad, J. Process Control 13(4), 2003, 291-309, table 1.
-
-    Examples
-    --------
-    >>> skogestad_simc_pi(SmallModel(1.0, False, 1.0, 0.0, 1.0, True), None).gain
-    0.5
-    """
-    gain, integral_time = _simc(model, closed_loop_time)
-    return Tuning(gain, integral_time)
-
-
-def skogestad_simc_pid(model: SmallModel, closed_loop_time: float | None) -> Tuning:
-    """SIMC PID settings in the series form: as SIMC PI, with Td = T2.
-
-    Parameters
-    ----------
-    model
-        Two lags, or integrating with a lag, with dead time [s].
-    closed_loop_time
-        tau_c [s]; `None` takes tau_c = L, the published choice for tight control.
-
-    Returns
-    -------
-    Tuning
-        Series PID.
-
-    Raises
-    ------
-    NotApplicable
-        No second lag, or dead time 0 and no closed-loop time given.
-
-    Source
-    ------
-    S. Skogestad, J. Process Control 13(4), 2003, 291-309, table 1.
-
-    Examples
-    --------
-    >>> skogestad_simc_pid(SmallModel(1.0, False, 8.0, 2.0, 1.0, True), None)
-    Tuning(gain=4.0, integral_time=8.0, derivative_time=2.0, form='series')
-    """
-    if model.second_time_constant <= 0.0:
-        raise NotApplicable("the plant has no second lag", limit="derivative pays only with one")
-    gain, integral_time = _simc(model, closed_loop_time)
-    return Tuning(gain, integral_time, model.second_time_constant, "series")
-
-
-def _simc(model: SmallModel, closed_loop_time: float | None) -> tuple[float, float]:
-    speed = (model.dead_time if closed_loop_time is None else closed_loop_time) + model.dead_time
-    if speed <= 0.0:
-        raise NotApplicable(
-            "no dead time to take the speed from", limit="give a closed-loop time", source=SKOGESTAD
-        )
-    k = abs(model.gain)
-    if model.integrating:
-        return 1.0 / (k * speed), 4.0 * speed
-    return model.time_constant / (k * speed), min(model.time_constant, 4.0 * speed)
-
-
-# --- quarter amplitude damping -------------------------------------------------------------------
-
-
-def ziegler_nichols_reaction(model: SmallModel, kind: Literal["p", "pi", "pid"]) -> Tuning:
-    """Settings from the reaction curve.
-
-    P    K = 1/a
-    PI   K = 0.9/a,   Ti = L/0.3
-    PID  K = 1.2/a,   Ti = 2 L,   Td = L/2
-
-    Parameters
-    ----------
-    model
-        One lag, or integrating, with dead time [s].
-    kind
-        Which row.
-
-    Returns
-    -------
-    Tuning
-        Ideal form.
-
-    Raises
-    ------
-    NotApplicable
-        Dead time 0.
-
-    Notes
-    -----
-    Aims at a decay ratio of a quarter: fast, lively and easily upset by a change of the plant.
-
-    Source
-    ------
-    J.G. Ziegler and N.B. Nichols, Trans. ASME 64, 1942, 759-768.
-
-    Examples
-    --------
-    >>> ziegler_nichols_reaction(SmallModel(1.0, False, 10.0, 0.0, 1.0, True), "pid")
-    Tuning(gain=12.0, integral_time=2.0, derivative_time=0.5, form='ideal')
-    """
-    delay = model.dead_time
-    if delay <= 0.0:
-        raise NotApplicable("dead time 0 s", limit="wants a dead time", source=ZIEGLER_NICHOLS)
-    a = abs(model.gain) * delay / (1.0 if model.integrating else model.time_constant)
-    if kind == "p":
-        return Tuning(1.0 / a)
-    if kind == "pi":
-        return Tuning(0.9 / a, delay / 0.3)
-    return Tuning(1.2 / a, 2.0 * delay, delay / 2.0)
-
-
-def ziegler_nichols_ultimate(ultimate: Ultimate, kind: Literal["p", "pi", "pid"]) -> Tuning:
-    """Settings from the ultimate gain and period.
-
-    P    K = 0.5 Ku
-    PI   K = 0.45 Ku,   Ti = Pu/1.2
-    PID  K = 0.6 Ku,    Ti = Pu/2,   Td = Pu/8
-
-    Parameters
-    ----------
-    ultimate
-        Ku [%/%] and Pu [s].
-    kind
-        Which row.
-
-    Returns
-    -------
-    Tuning
-        Ideal form.
-
-    Notes
-    -----
-    Aims at a decay ratio of a quarter: fast, lively and easily upset by a change of the plant.
-
-    Source
-    ------
-    J.G. Ziegler and N.B. Nichols, Trans. ASME 64, 1942, 759-768; the PID row from memory.
-
-    Examples
-    --------
-    >>> ziegler_nichols_ultimate(Ultimate(10.0, 8.0), "pid")
-    Tuning(gain=6.0, integral_time=4.0, derivative_time=1.0, form='ideal')
-    """
-    if kind == "p":
-        return Tuning(0.5 * ultimate.gain)
-    if kind == "pi":
-        return Tuning(0.45 * ultimate.gain, ultimate.period / 1.2)
-    return Tuning(0.6 * ultimate.gain, ultimate.period / 2.0, ultimate.period / 8.0)
-
-
-# --- the table -----------------------------------------------------------------------------------
+def _no_double_integrator() -> DoubleIntegrator:
+    raise NotApplicable("the plant does not integrate twice", limit="published for one that does")
 
 
 @dataclass(frozen=True)
@@ -284,8 +35,15 @@ class Plant:
     small_model: Callable[[int], SmallModel]
     """By the half rule, with one or two lags."""
     ultimate: Callable[[], Ultimate]
-    closed_loop_time: float | None
+    """Of the plant, or as a relay test found it."""
+    closed_loop_time: float | None = None
     """As the engineer asked for it [s]."""
+    largest_upset: float | None = None
+    """Largest lasting step at the plant's input [% of OP span]."""
+    allowed_deviation: float | None = None
+    """By how much PV may leave its setpoint [% of PV span]."""
+    unstable_lag: Callable[[], UnstableLag] = _no_unstable_lag
+    double_integrator: Callable[[], DoubleIntegrator] = _no_double_integrator
 
 
 @dataclass(frozen=True)
@@ -294,66 +52,439 @@ class Rule:
 
     title: str
     source: str
+    objective: str
+    """What the settings aim at, as the end of a sentence that begins with "aims at"."""
+    limits: str
+    """The plants it was published for."""
     function: Callable[..., Tuning]
     """The published formulas; its docstring states limits and source."""
     settings: Callable[[Plant], Tuning]
     """The rule applied to a plant."""
+    form: Form = "ideal"
+    """The form it was published for."""
 
+
+_ANY: Final = "one lag, or integrating, with dead time"
+_SIMC: Final = f"{_ANY}; without dead time a closed-loop time is needed"
+_SHARE: Final = "one lag, L/T 0.1 to 1"
+_SWINGS: Final = "a plant whose phase reaches -180 deg"
+_QUARTER: Final = "a decay ratio of a quarter: fast, lively, easily upset by a changed plant"
+_GIVEN: Final = "a first-order answer to the setpoint with the closed-loop time constant"
+_SMOOTH: Final = "the smoothest output that keeps the level within the allowed deviation"
+_AVERAGED: Final = "an integrating plant whose dead time is at most 0.1/(K k')"
+_TIGHT: Final = "tight control with good margins, Ms near 1.6"
 
 RULES: Final[dict[str, Rule]] = {
     "lambda-pi": Rule(
         "lambda PI",
-        f"{DAHLIN}; integrating plants: {CHIEN_FRUEHAUF}",
-        dahlin_lambda_pi,
-        lambda p: dahlin_lambda_pi(p.small_model(1), p.closed_loop_time),
+        f"{speed.DAHLIN}; integrating plants: {speed.CHIEN_FRUEHAUF}",
+        _GIVEN,
+        _SIMC,
+        speed.dahlin_lambda_pi,
+        lambda p: speed.dahlin_lambda_pi(p.small_model(1), p.closed_loop_time),
+    ),
+    "imc-pi": Rule(
+        "internal model control PI",
+        speed.RIVERA,
+        _GIVEN,
+        "one lag; closed-loop time at least 1.7 L",
+        speed.rivera_imc_pi,
+        lambda p: speed.rivera_imc_pi(p.small_model(1), p.closed_loop_time),
+    ),
+    "imc-improved-pi": Rule(
+        "internal model control improved PI",
+        speed.RIVERA,
+        _GIVEN,
+        "one lag; closed-loop time at least 1.7 L",
+        speed.rivera_imc_improved_pi,
+        lambda p: speed.rivera_imc_improved_pi(p.small_model(1), p.closed_loop_time),
+    ),
+    "imc-pid": Rule(
+        "internal model control PID",
+        speed.RIVERA,
+        _GIVEN,
+        "one lag; closed-loop time at least 0.8 L",
+        speed.rivera_imc_pid,
+        lambda p: speed.rivera_imc_pid(p.small_model(1), p.closed_loop_time),
+    ),
+    "imc-integrating-pid": Rule(
+        "internal model control PID, integrating",
+        speed.CHIEN_FRUEHAUF,
+        _GIVEN,
+        "integrating, with dead time",
+        speed.chien_fruehauf_integrating_pid,
+        lambda p: speed.chien_fruehauf_integrating_pid(p.small_model(1), p.closed_loop_time),
+    ),
+    "imc-integrating-lag-pid": Rule(
+        "internal model control PID, integrating with a lag",
+        speed.CHIEN_FRUEHAUF,
+        _GIVEN,
+        "integrating with one lag, with dead time",
+        speed.chien_fruehauf_integrating_lag_pid,
+        lambda p: speed.chien_fruehauf_integrating_lag_pid(p.small_model(2), p.closed_loop_time),
+    ),
+    "imc-unstable-pid": Rule(
+        "internal model control PID, unstable",
+        speed.LEE_LEE_PARK,
+        _GIVEN,
+        "one unstable lag, L/T at most 0.6",
+        speed.lee_imc_unstable_pid,
+        lambda p: speed.lee_imc_unstable_pid(p.unstable_lag(), p.closed_loop_time),
     ),
     "simc-pi": Rule(
         "SIMC PI",
-        SKOGESTAD,
-        skogestad_simc_pi,
-        lambda p: skogestad_simc_pi(p.small_model(1), p.closed_loop_time),
+        speed.SKOGESTAD,
+        _TIGHT,
+        _SIMC,
+        speed.skogestad_simc_pi,
+        lambda p: speed.skogestad_simc_pi(p.small_model(1), p.closed_loop_time),
     ),
     "simc-pid": Rule(
         "SIMC PID",
-        SKOGESTAD,
-        skogestad_simc_pid,
-        lambda p: skogestad_simc_pid(p.small_model(2), p.closed_loop_time),
+        speed.SKOGESTAD,
+        _TIGHT,
+        "two lags, or integrating with a lag, with dead time",
+        speed.skogestad_simc_pid,
+        lambda p: speed.skogestad_simc_pid(p.small_model(2), p.closed_loop_time),
+        "series",
+    ),
+    "simc-improved-pi": Rule(
+        "improved SIMC PI",
+        speed.GRIMHOLT_SKOGESTAD_2012,
+        _TIGHT,
+        _SIMC,
+        speed.grimholt_skogestad_simc_improved_pi,
+        lambda p: speed.grimholt_skogestad_simc_improved_pi(p.small_model(1), p.closed_loop_time),
+    ),
+    "simc-improved-pid": Rule(
+        "improved SIMC PID",
+        speed.GRIMHOLT_SKOGESTAD_2018,
+        _TIGHT,
+        _ANY,
+        speed.grimholt_skogestad_simc_improved_pid,
+        lambda p: speed.grimholt_skogestad_simc_improved_pid(p.small_model(1), p.closed_loop_time),
+        "series",
+    ),
+    "simc-double-integrating-pid": Rule(
+        "SIMC PID, integrating twice",
+        speed.SKOGESTAD,
+        _TIGHT,
+        "integrating twice; without dead time a closed-loop time is needed",
+        speed.skogestad_simc_double_integrating,
+        lambda p: speed.skogestad_simc_double_integrating(
+            p.double_integrator(), p.closed_loop_time
+        ),
+        "series",
+    ),
+    "amigo-pi": Rule(
+        "AMIGO PI",
+        robust.AMIGO,
+        "the largest integral gain with Ms and Mt at most 1.4",
+        _ANY,
+        robust.astrom_hagglund_amigo_pi,
+        lambda p: robust.astrom_hagglund_amigo_pi(p.small_model(1)),
+    ),
+    "amigo-pid": Rule(
+        "AMIGO PID",
+        robust.AMIGO,
+        "the largest integral gain with Ms and Mt at most 1.4",
+        _ANY,
+        robust.astrom_hagglund_amigo_pid,
+        lambda p: robust.astrom_hagglund_amigo_pid(p.small_model(1)),
+    ),
+    "hagglund-astrom-pi": Rule(
+        "Hagglund-Astrom PI",
+        robust.HAGGLUND_ASTROM,
+        "the largest integral gain with Ms and Mt at most 1.4",
+        _ANY,
+        robust.hagglund_astrom_pi,
+        lambda p: robust.hagglund_astrom_pi(p.small_model(1)),
+    ),
+    "ho-hang-cao-pi": Rule(
+        "gain and phase margin PI",
+        robust.HO_HANG_CAO,
+        "a gain margin of 3 with a phase margin of 60 deg",
+        "one lag, with dead time",
+        robust.ho_hang_cao_pi,
+        lambda p: robust.ho_hang_cao_pi(p.small_model(1), 3.0, 60.0),
+    ),
+    "tyreus-luyben-pi": Rule(
+        "Tyreus-Luyben PI",
+        oscillation.TYREUS_LUYBEN,
+        "a closed-loop resonance of 2 dB on integrating plants",
+        _SWINGS,
+        oscillation.tyreus_luyben,
+        lambda p: oscillation.tyreus_luyben(p.ultimate(), "pi"),
+    ),
+    "tyreus-luyben-pid": Rule(
+        "Tyreus-Luyben PID",
+        oscillation.TYREUS_LUYBEN,
+        "a closed-loop resonance of 2 dB on integrating plants",
+        _SWINGS,
+        oscillation.tyreus_luyben,
+        lambda p: oscillation.tyreus_luyben(p.ultimate(), "pid"),
+    ),
+    "cohen-coon-p": Rule(
+        "Cohen-Coon P",
+        oscillation.COHEN_COON,
+        _QUARTER,
+        "one lag, with dead time, L/T at most 1",
+        oscillation.cohen_coon,
+        lambda p: oscillation.cohen_coon(p.small_model(1), "p"),
+    ),
+    "cohen-coon-pi": Rule(
+        "Cohen-Coon PI",
+        oscillation.COHEN_COON,
+        _QUARTER,
+        "one lag, with dead time, L/T at most 1",
+        oscillation.cohen_coon,
+        lambda p: oscillation.cohen_coon(p.small_model(1), "pi"),
+    ),
+    "cohen-coon-pid": Rule(
+        "Cohen-Coon PID",
+        oscillation.COHEN_COON,
+        _QUARTER,
+        "one lag, with dead time, L/T at most 1",
+        oscillation.cohen_coon,
+        lambda p: oscillation.cohen_coon(p.small_model(1), "pid"),
+    ),
+    "chr-0-p": Rule(
+        "Chien-Hrones-Reswick no overshoot, P",
+        oscillation.CHIEN_HRONES_RESWICK,
+        "the quickest answer to a load or setpoint step with no overshoot",
+        _SHARE,
+        oscillation.chien_hrones_reswick,
+        lambda p: oscillation.chien_hrones_reswick(p.small_model(1), "load", 0, "p"),
+    ),
+    "chr-load-0-pi": Rule(
+        "Chien-Hrones-Reswick load, no overshoot, PI",
+        oscillation.CHIEN_HRONES_RESWICK,
+        "the quickest answer to a load step with no overshoot",
+        _SHARE,
+        oscillation.chien_hrones_reswick,
+        lambda p: oscillation.chien_hrones_reswick(p.small_model(1), "load", 0, "pi"),
+    ),
+    "chr-load-0-pid": Rule(
+        "Chien-Hrones-Reswick load, no overshoot, PID",
+        oscillation.CHIEN_HRONES_RESWICK,
+        "the quickest answer to a load step with no overshoot",
+        _SHARE,
+        oscillation.chien_hrones_reswick,
+        lambda p: oscillation.chien_hrones_reswick(p.small_model(1), "load", 0, "pid"),
+    ),
+    "chr-20-p": Rule(
+        "Chien-Hrones-Reswick 20 % overshoot, P",
+        oscillation.CHIEN_HRONES_RESWICK,
+        "the quickest answer to a load or setpoint step with 20 % overshoot",
+        _SHARE,
+        oscillation.chien_hrones_reswick,
+        lambda p: oscillation.chien_hrones_reswick(p.small_model(1), "load", 20, "p"),
+    ),
+    "chr-load-20-pi": Rule(
+        "Chien-Hrones-Reswick load, 20 % overshoot, PI",
+        oscillation.CHIEN_HRONES_RESWICK,
+        "the quickest answer to a load step with 20 % overshoot",
+        _SHARE,
+        oscillation.chien_hrones_reswick,
+        lambda p: oscillation.chien_hrones_reswick(p.small_model(1), "load", 20, "pi"),
+    ),
+    "chr-load-20-pid": Rule(
+        "Chien-Hrones-Reswick load, 20 % overshoot, PID",
+        oscillation.CHIEN_HRONES_RESWICK,
+        "the quickest answer to a load step with 20 % overshoot",
+        _SHARE,
+        oscillation.chien_hrones_reswick,
+        lambda p: oscillation.chien_hrones_reswick(p.small_model(1), "load", 20, "pid"),
+    ),
+    "chr-setpoint-0-pi": Rule(
+        "Chien-Hrones-Reswick setpoint, no overshoot, PI",
+        oscillation.CHIEN_HRONES_RESWICK,
+        "the quickest answer to a setpoint step with no overshoot",
+        _SHARE,
+        oscillation.chien_hrones_reswick,
+        lambda p: oscillation.chien_hrones_reswick(p.small_model(1), "setpoint", 0, "pi"),
+    ),
+    "chr-setpoint-0-pid": Rule(
+        "Chien-Hrones-Reswick setpoint, no overshoot, PID",
+        oscillation.CHIEN_HRONES_RESWICK,
+        "the quickest answer to a setpoint step with no overshoot",
+        _SHARE,
+        oscillation.chien_hrones_reswick,
+        lambda p: oscillation.chien_hrones_reswick(p.small_model(1), "setpoint", 0, "pid"),
+    ),
+    "chr-setpoint-20-pi": Rule(
+        "Chien-Hrones-Reswick setpoint, 20 % overshoot, PI",
+        oscillation.CHIEN_HRONES_RESWICK,
+        "the quickest answer to a setpoint step with 20 % overshoot",
+        _SHARE,
+        oscillation.chien_hrones_reswick,
+        lambda p: oscillation.chien_hrones_reswick(p.small_model(1), "setpoint", 20, "pi"),
+    ),
+    "chr-setpoint-20-pid": Rule(
+        "Chien-Hrones-Reswick setpoint, 20 % overshoot, PID",
+        oscillation.CHIEN_HRONES_RESWICK,
+        "the quickest answer to a setpoint step with 20 % overshoot",
+        _SHARE,
+        oscillation.chien_hrones_reswick,
+        lambda p: oscillation.chien_hrones_reswick(p.small_model(1), "setpoint", 20, "pid"),
     ),
     "ziegler-nichols-reaction-p": Rule(
         "Ziegler-Nichols reaction curve P",
-        ZIEGLER_NICHOLS,
-        ziegler_nichols_reaction,
-        lambda p: ziegler_nichols_reaction(p.small_model(1), "p"),
+        oscillation.ZIEGLER_NICHOLS,
+        _QUARTER,
+        _ANY,
+        oscillation.ziegler_nichols_reaction,
+        lambda p: oscillation.ziegler_nichols_reaction(p.small_model(1), "p"),
     ),
     "ziegler-nichols-reaction-pi": Rule(
         "Ziegler-Nichols reaction curve PI",
-        ZIEGLER_NICHOLS,
-        ziegler_nichols_reaction,
-        lambda p: ziegler_nichols_reaction(p.small_model(1), "pi"),
+        oscillation.ZIEGLER_NICHOLS,
+        _QUARTER,
+        _ANY,
+        oscillation.ziegler_nichols_reaction,
+        lambda p: oscillation.ziegler_nichols_reaction(p.small_model(1), "pi"),
     ),
     "ziegler-nichols-reaction-pid": Rule(
         "Ziegler-Nichols reaction curve PID",
-        ZIEGLER_NICHOLS,
-        ziegler_nichols_reaction,
-        lambda p: ziegler_nichols_reaction(p.small_model(1), "pid"),
+        oscillation.ZIEGLER_NICHOLS,
+        _QUARTER,
+        _ANY,
+        oscillation.ziegler_nichols_reaction,
+        lambda p: oscillation.ziegler_nichols_reaction(p.small_model(1), "pid"),
     ),
     "ziegler-nichols-ultimate-p": Rule(
         "Ziegler-Nichols ultimate P",
-        ZIEGLER_NICHOLS,
-        ziegler_nichols_ultimate,
-        lambda p: ziegler_nichols_ultimate(p.ultimate(), "p"),
+        oscillation.ZIEGLER_NICHOLS,
+        _QUARTER,
+        _SWINGS,
+        oscillation.ziegler_nichols_ultimate,
+        lambda p: oscillation.ziegler_nichols_ultimate(p.ultimate(), "p"),
     ),
     "ziegler-nichols-ultimate-pi": Rule(
         "Ziegler-Nichols ultimate PI",
-        ZIEGLER_NICHOLS,
-        ziegler_nichols_ultimate,
-        lambda p: ziegler_nichols_ultimate(p.ultimate(), "pi"),
+        oscillation.ZIEGLER_NICHOLS,
+        _QUARTER,
+        _SWINGS,
+        oscillation.ziegler_nichols_ultimate,
+        lambda p: oscillation.ziegler_nichols_ultimate(p.ultimate(), "pi"),
     ),
     "ziegler-nichols-ultimate-pid": Rule(
         "Ziegler-Nichols ultimate PID",
-        ZIEGLER_NICHOLS,
-        ziegler_nichols_ultimate,
-        lambda p: ziegler_nichols_ultimate(p.ultimate(), "pid"),
+        oscillation.ZIEGLER_NICHOLS,
+        _QUARTER,
+        _SWINGS,
+        oscillation.ziegler_nichols_ultimate,
+        lambda p: oscillation.ziegler_nichols_ultimate(p.ultimate(), "pid"),
+    ),
+    "lopez-iae-load-pi": Rule(
+        "Lopez least IAE after a load step, PI",
+        integrals.LOPEZ,
+        "the least IAE after a load step, whatever the margins",
+        _SHARE,
+        integrals.lopez_load,
+        lambda p: integrals.lopez_load(p.small_model(1), "iae", "pi"),
+    ),
+    "lopez-ise-load-pi": Rule(
+        "Lopez least ISE after a load step, PI",
+        integrals.LOPEZ,
+        "the least ISE after a load step, whatever the margins",
+        _SHARE,
+        integrals.lopez_load,
+        lambda p: integrals.lopez_load(p.small_model(1), "ise", "pi"),
+    ),
+    "lopez-itae-load-pi": Rule(
+        "Lopez least ITAE after a load step, PI",
+        integrals.LOPEZ,
+        "the least ITAE after a load step, whatever the margins",
+        _SHARE,
+        integrals.lopez_load,
+        lambda p: integrals.lopez_load(p.small_model(1), "itae", "pi"),
+    ),
+    "lopez-iae-load-pid": Rule(
+        "Lopez least IAE after a load step, PID",
+        integrals.LOPEZ,
+        "the least IAE after a load step, whatever the margins",
+        _SHARE,
+        integrals.lopez_load,
+        lambda p: integrals.lopez_load(p.small_model(1), "iae", "pid"),
+    ),
+    "lopez-ise-load-pid": Rule(
+        "Lopez least ISE after a load step, PID",
+        integrals.LOPEZ,
+        "the least ISE after a load step, whatever the margins",
+        _SHARE,
+        integrals.lopez_load,
+        lambda p: integrals.lopez_load(p.small_model(1), "ise", "pid"),
+    ),
+    "lopez-itae-load-pid": Rule(
+        "Lopez least ITAE after a load step, PID",
+        integrals.LOPEZ,
+        "the least ITAE after a load step, whatever the margins",
+        _SHARE,
+        integrals.lopez_load,
+        lambda p: integrals.lopez_load(p.small_model(1), "itae", "pid"),
+    ),
+    "rovira-iae-setpoint-pi": Rule(
+        "Rovira least IAE after a setpoint step, PI",
+        integrals.ROVIRA,
+        "the least IAE after a setpoint step, whatever the margins",
+        _SHARE,
+        integrals.rovira_setpoint,
+        lambda p: integrals.rovira_setpoint(p.small_model(1), "iae", "pi"),
+    ),
+    "rovira-itae-setpoint-pi": Rule(
+        "Rovira least ITAE after a setpoint step, PI",
+        integrals.ROVIRA,
+        "the least ITAE after a setpoint step, whatever the margins",
+        _SHARE,
+        integrals.rovira_setpoint,
+        lambda p: integrals.rovira_setpoint(p.small_model(1), "itae", "pi"),
+    ),
+    "rovira-iae-setpoint-pid": Rule(
+        "Rovira least IAE after a setpoint step, PID",
+        integrals.ROVIRA,
+        "the least IAE after a setpoint step, whatever the margins",
+        _SHARE,
+        integrals.rovira_setpoint,
+        lambda p: integrals.rovira_setpoint(p.small_model(1), "iae", "pid"),
+    ),
+    "rovira-itae-setpoint-pid": Rule(
+        "Rovira least ITAE after a setpoint step, PID",
+        integrals.ROVIRA,
+        "the least ITAE after a setpoint step, whatever the margins",
+        _SHARE,
+        integrals.rovira_setpoint,
+        lambda p: integrals.rovira_setpoint(p.small_model(1), "itae", "pid"),
+    ),
+    "averaging-level-p": Rule(
+        "averaging level P",
+        level.SKOGESTAD_SMOOTH,
+        _SMOOTH,
+        _AVERAGED,
+        level.skogestad_averaging_level,
+        lambda p: level.skogestad_averaging_level(
+            p.small_model(1), p.largest_upset, p.allowed_deviation, "p"
+        ),
+    ),
+    "averaging-level-pi": Rule(
+        "averaging level PI",
+        level.SKOGESTAD_SMOOTH_PI,
+        _SMOOTH,
+        _AVERAGED,
+        level.skogestad_averaging_level,
+        lambda p: level.skogestad_averaging_level(
+            p.small_model(1), p.largest_upset, p.allowed_deviation, "pi"
+        ),
+    ),
+    "tight-level-pi": Rule(
+        "tight level PI",
+        level.SKOGESTAD_SMOOTH,
+        "the tightest level that the dead time allows with good margins",
+        "integrating, with dead time",
+        level.skogestad_tight_level,
+        lambda p: level.skogestad_tight_level(
+            p.small_model(1), p.largest_upset, p.allowed_deviation
+        ),
     ),
 }
 """Method name, as commands and files write it -> the rule."""
