@@ -94,8 +94,9 @@ EVENTS = Events(1.0, 2.4, 0.7, 31.3, 60.0)
 
 
 def at_scans(trace: Trace, scan: float, until: float = 60.0) -> tuple[Array, Array]:
-    """PV and OP at the scans."""
-    times = np.arange(math.floor(until / scan + 1e-9) + 1) * scan
+    """PV and OP at the scans; a loop that ran away has fewer."""
+    last = min(until, float(trace.time[-1]))
+    times = np.arange(math.floor(last / scan + 1e-9) + 1) * scan
     rows = np.searchsorted(trace.time, times - 1e-9)
     assert np.abs(trace.time[rows] - times).max() < 1e-9
     return trace.pv[rows], trace.output[rows]

@@ -16,6 +16,7 @@ from workbench.model.robustness import Margins, analogue_margins, sampled_margin
 from workbench.model.stability import plant_verdict
 from workbench.model.transfer import TransferFunction
 from workbench.study.loop import action_of, load_scale, loop_of, plant_of
+from workbench.study.structure import has_one_scan, structure_notes
 from workbench.units import Figure, Note, rounded
 
 
@@ -78,9 +79,10 @@ def assess(case: Case) -> Assessment:
     action, chosen = action_of(case)
     notes = [*_plant_notes(plant), *([Note("info", chosen)] if chosen else [])]
     loop = loop_of(case)
+    notes += structure_notes(case, loop)
     analogue = _loop_figures(case, loop, analogue_margins(replace(loop, scan=None)))
     sampled = None
-    if loop.scan is not None:
+    if has_one_scan(loop):
         sampled = _loop_figures(case, loop, sampled_margins(loop))
     return Assessment(figures, analogue, sampled, action, tuple(notes))
 

@@ -17,6 +17,7 @@ from workbench.model.reduction import half_rule
 from workbench.model.robustness import analogue_margins, sampled_margins, ultimate
 from workbench.study.loop import action_of, loop_of, plant_of
 from workbench.study.prediction import predict
+from workbench.study.structure import has_one_scan
 from workbench.tune import rules
 from workbench.units import Amount, Figure, nearest, plain, rounded, text
 
@@ -121,7 +122,7 @@ def _judged(
 ) -> Proposal:
     trial = replace(case, controller=settings)
     loop = loop_of(trial)
-    margins = analogue_margins(loop) if loop.scan is None else sampled_margins(loop)
+    margins = sampled_margins(loop) if has_one_scan(loop) else analogue_margins(loop)
     if not margins.stable:
         none = Figure(None, f"the loop is not stable: {margins.reason}")
         reason = f"not stable on this loop: {margins.reason}"
