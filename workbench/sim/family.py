@@ -55,7 +55,8 @@ def side_by_side(loops: Sequence[Loop], events: Events) -> Family:
     Raises
     ------
     InputError
-        An analogue loop, or loops of different scans; noise.
+        An analogue loop, or loops of different scans; noise; more than a step of each; a manual
+        reset, or a rate limit or filter of the setpoint.
     """
     scans = {(loop.scan, loop.computing_delay) for loop in loops}
     scan, delay = next(iter(scans), (None, 0.0))
@@ -64,6 +65,15 @@ def side_by_side(loops: Sequence[Loop], events: Events) -> Family:
             "only sampled loops of one scan, without noise, run side by side",
             "give all of them the same scan",
             key="controller.scan",
+        )
+    shaped = any(
+        loop.setpoint_rate is not None or loop.setpoint_filter or loop.bias for loop in loops
+    )
+    if shaped or not events.are_steps:
+        raise problem(
+            "only one step of setpoint and of load, as it is given, is run side by side",
+            "leave out what else happens, and what shapes the setpoint",
+            key="scenario",
         )
     clock = Clock(scan, delay)
     count = clock.place(events.until)[0] + 1
