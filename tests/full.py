@@ -33,6 +33,7 @@ from tests.sim.campaigns import (
     limited_loops,
     sampled_by_mpmath,
 )
+from tests.sim.cascades import cascades_at_limits
 from tests.sim.series import Path as Way
 from tests.sim.series import Rational, responses
 from workbench.case.files import parse_case
@@ -429,6 +430,9 @@ CAMPAIGNS: Final[dict[str, Campaign]] = {
     ),
     "modes and settings changed": Campaign(
         _judged(changed_loops, 204, 1e-9, "moved further than asked [%]"), 100, 2000
+    ),
+    "inner loops at limits": Campaign(
+        _judged(cascades_at_limits, 206, 0.0, "outer output goes on into the limit [%]"), 40, 2000
     ),
     "sampled margins": Campaign(sampled_brinks, 5, 500),
     "fits of made records": Campaign(fitted_records, 10, 400),

@@ -443,6 +443,14 @@ def predict_data(evaluation: Evaluation, prediction: Prediction, units: Mapping[
         "until_s": float(prediction.until_s),
     }
     data["diverged"] = bool(prediction.diverged)
+    if prediction.inner is not None:
+        inner = prediction.inner
+        data["inner"] = {
+            "final_setpoint": float(inner.setpoint[-1]),
+            "final_pv": float(inner.pv[-1]),
+            "final_op": float(inner.output[-1]),
+            "time_at_limit_s": inner.time_at_limit_s,
+        }
     data["notes"] = _noted(evaluation.cautions)
     data["units"] = dict(units)
     return data
@@ -478,6 +486,15 @@ def predict_text(
     lines += _table(_event_rows(evaluation.case, prediction, units), width, "")
     for group, title in _GROUPS.items():
         lines += ["", title, *_table(_measure_rows(prediction, group, units), width)]
+    if prediction.inner is not None:
+        inner, op = prediction.inner, units["op"]
+        rows: Rows = [
+            ("setpoint at the end", text(float(inner.setpoint[-1]), op)),
+            ("PV at the end", text(float(inner.pv[-1]), op)),
+            ("output at the end", text(float(inner.output[-1]))),
+            ("time at a limit", time_text(inner.time_at_limit_s)),
+        ]
+        lines += ["", "Inner loop", *_table(rows, width)]
     rows = [
         ("peak deviation", _figure(prediction.floor_peak_deviation, units["pv"])),
         ("integral absolute error", _figure(prediction.floor_load_iae, f"{units['pv']} s")),

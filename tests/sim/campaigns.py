@@ -132,16 +132,16 @@ def _limited(draw: random.Random) -> Loop:
     late = draw.choice((0.0, 1.0, 80.0, draw.uniform(0.0, 9.0)))
     gain = draw.uniform(0.5, 2.0)
     plant = TransferFunction.ratio((gain if reverse else -gain,), [(lag, 1.0)], late)
-    kp = draw.uniform(0.2, 3.0) * (lag / (lag + 4.0 * late)) / gain
+    kp = draw.uniform(0.5, 8.0) * (lag / (lag + 4.0 * late)) / gain
     return Loop(
         plant,
         plant,
-        Gains(kp, kp / draw.uniform(3.0, 40.0), setpoint_weight=draw.uniform(0.0, 1.0)),
+        Gains(kp, kp / draw.uniform(2.0, 25.0), setpoint_weight=draw.uniform(0.0, 1.0)),
         reverse=reverse,
         scan=1.0,
         computing_delay=draw.choice((0.0, 0.0, 0.4, 1.0)),
-        low=-draw.uniform(0.5, 12.0),
-        high=draw.uniform(0.5, 12.0),
+        low=-draw.uniform(0.3, 6.0),
+        high=draw.uniform(0.3, 6.0),
         rate=draw.choice((None, None, draw.uniform(0.1, 4.0))),
         windup=draw.choice(("conditional", "tracking", "external-reset")),
         incremental=draw.random() < 0.2,
@@ -154,7 +154,10 @@ def limited_loops(size: int, seed: int) -> tuple[float, list[str]]:
     failures: list[str] = []
     for _ in range(size):
         loop = _limited(draw)
-        move, load = draw.uniform(-8.0, 8.0), draw.choice((0.0, draw.uniform(-6.0, 6.0)))
+        # Most setpoints can be reached within the limits, and take the output to one on the way.
+        reach = draw.choice((loop.low, loop.high)) or 0.0
+        move = draw.uniform(0.3, 1.1) * reach * (loop.plant.gain().value or 0.0)
+        load = draw.choice((0.0, 0.0, draw.uniform(-6.0, 6.0)))
         happening = (Step(move, draw.choice((0.0, 4.0))), Step(load, draw.uniform(150.0, 220.0)))
         algorithm = Algorithm.of(loop, 1.0)
         held = Held(process(loop), Clock(1.0, loop.computing_delay))

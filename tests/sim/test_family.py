@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from dataclasses import replace
+
 import numpy as np
 import pytest
 
@@ -70,6 +72,14 @@ def test_a_loop_that_runs_away_does_not_disturb_the_others() -> None:
     assert np.isfinite(family.pv).all()
     assert np.isfinite(family.output).all()
     assert family.pv[:, :-1] == pytest.approx(alone.pv, abs=1e-12)
+
+
+def test_what_is_not_the_same_for_all_is_refused() -> None:
+    plant = lag(1.0, 10.0)
+    with pytest.raises(InputError, match="leave out what else happens"):
+        side_by_side([Loop(plant, plant, Gains(1.0), scan=1.0, bias=2.0)], EVENTS)
+    with pytest.raises(InputError, match="leave out what else happens"):
+        side_by_side([Loop(plant, plant, Gains(1.0), scan=1.0)], replace(EVENTS, manual_at=5.0))
 
 
 def test_loops_of_different_scans_are_refused() -> None:

@@ -19,6 +19,7 @@ from workbench.model.feedforward import Feedforward
 from workbench.model.pid import Gains
 from workbench.model.structures import NOTHING, Structure
 from workbench.model.transfer import TransferFunction
+from workbench.sim.family import side_by_side
 from workbench.sim.instruments import Instruments
 from workbench.sim.loop import Trace, settle_horizon, simulate
 from workbench.sim.scenario import Events
@@ -94,8 +95,9 @@ EVENTS = Events(1.0, 2.4, 0.7, 31.3, 60.0)
 
 
 def at_scans(trace: Trace, scan: float, until: float = 60.0) -> tuple[Array, Array]:
-    """PV and OP at the scans."""
-    times = np.arange(math.floor(until / scan + 1e-9) + 1) * scan
+    """PV and OP at the scans; a loop that ran away has fewer."""
+    last = min(until, float(trace.time[-1]))
+    times = np.arange(math.floor(last / scan + 1e-9) + 1) * scan
     rows = np.searchsorted(trace.time, times - 1e-9)
     assert np.abs(trace.time[rows] - times).max() < 1e-9
     return trace.pv[rows], trace.output[rows]
@@ -378,6 +380,13 @@ def test_what_is_not_played_with_a_structure_is_refused(asked: dict[str, Any], k
     with pytest.raises(InputError, match="is not played with") as refused:
         simulate(loop, replace(EVENTS, **asked))
     assert refused.value.problems[0].key == key
+
+
+def test_structures_are_not_run_side_by_side() -> None:
+    plant = SLOW.function()
+    loop = Structure(plant, plant, PI, scan=0.5, feedforward=Feedforward(-1.0))
+    with pytest.raises(InputError, match="are not run side by side"):
+        side_by_side([loop, loop], EVENTS)
 
 
 def test_a_plant_may_change_while_its_model_stays() -> None:

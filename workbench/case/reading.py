@@ -11,6 +11,7 @@ from dataclasses import replace
 from datetime import datetime
 from typing import Any, Final
 
+from workbench.case.structures import CompensationTable, FeedforwardTable, InnerTable
 from workbench.case.tables import (
     AT_MEND,
     PROCESSES,
@@ -410,6 +411,13 @@ TOLD_WITH: Final[dict[tuple[type, str], tuple[str, ...]]] = {
     (Controller, "derivative_filter"): ("form", "gain", "derivative"),
     (Controller, "execution"): ("integral",),
     (Controller, "bias"): ("integral",),
+    (CompensationTable, "model"): ("time_unit",),
+    (FeedforwardTable, "lead"): ("lag",),
+    (InnerTable, "plant"): ("time_unit",),
+    (InnerTable, "high"): ("low",),
+    (InnerTable, "min"): ("low", "high"),
+    (InnerTable, "max"): ("low", "high", "min"),
+    (InnerTable, "start"): ("low", "high", "min", "max"),
     (Valve, "table"): ("characteristic",),
     (Valve, "slip_jump"): ("stick_slip",),
     (Valve, "signal_high"): ("signal_low",),

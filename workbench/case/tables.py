@@ -13,6 +13,7 @@ from dataclasses import dataclass, field, replace
 from datetime import datetime
 from typing import Any, ClassVar, Final
 
+from workbench.case.structures import CompensationTable, FeedforwardTable, InnerTable
 from workbench.errors import InputError, Problem
 from workbench.model.blocks import Blocks, format_blocks
 from workbench.model.formula import parse_formula
@@ -326,6 +327,9 @@ class Case:
     history: tuple[Revision, ...] = ()
     valve: Valve = Valve()
     measurement: Measurement = Measurement()
+    compensation: CompensationTable = CompensationTable()
+    feedforward: FeedforwardTable = FeedforwardTable()
+    inner: InnerTable = InnerTable()
 
     def with_entry(self, entry: Revision) -> Case:
         """The case with one more entry at the end of its history."""
@@ -363,9 +367,8 @@ def table_values(case: Case) -> dict[str, Values]:
     }
     if case.controller is not None:
         tables["controller"] = values_of(case.controller)
-    tables["valve"] = values_of(case.valve)
-    tables["measurement"] = values_of(case.measurement)
-    tables["scenario"] = values_of(case.scenario)
+    for name in ("compensation", "feedforward", "inner", "valve", "measurement", "scenario"):
+        tables[name] = values_of(getattr(case, name))
     return tables
 
 
@@ -461,6 +464,9 @@ TABLES: Final[dict[str, type]] = {
     "op": OpTable,
     "plant": PlantTable,
     "controller": Controller,
+    "compensation": CompensationTable,
+    "feedforward": FeedforwardTable,
+    "inner": InnerTable,
     "valve": Valve,
     "measurement": Measurement,
     "scenario": Scenario,

@@ -53,15 +53,19 @@ class Structure(Loop):
         if self.model is None:
             return
         if self.model.has_delayed_feedback:
-            raise problem("has a dead time inside a feedback", "give it without", key="model")
+            raise problem(
+                "has a dead time inside a feedback", "give it without", key="compensation.model"
+            )
         if any(pole.real > 0.0 for pole in self.model.poles()):
             raise problem(
                 "is unstable: run beside the plant, it would leave it",
                 "compensate the dead time of a stable or integrating plant",
-                key="model",
+                key="compensation.model",
             )
         if not self.model.is_proper:
-            raise problem("has more leads than lags", "give it a further lag", key="model")
+            raise problem(
+                "has more leads than lags", "give it a further lag", key="compensation.model"
+            )
 
     @property
     def acted_on(self) -> TransferFunction:

@@ -15,6 +15,7 @@ from numpy.typing import NDArray
 
 from workbench.errors import problem
 from workbench.model.feedback import Loop
+from workbench.model.structures import Structure
 from workbench.sim.controller import Algorithm
 from workbench.sim.process import process
 from workbench.sim.scans import BOUND, Clock, Held
@@ -55,7 +56,8 @@ def side_by_side(loops: Sequence[Loop], events: Events) -> Family:
     Raises
     ------
     InputError
-        An analogue loop, or loops of different scans; noise.
+        An analogue loop, or loops of different scans; noise; more than a step of each; a manual
+        reset, or a rate limit or filter of the setpoint; anything built round a loop.
     """
     scans = {(loop.scan, loop.computing_delay) for loop in loops}
     scan, delay = next(iter(scans), (None, 0.0))
@@ -64,6 +66,21 @@ def side_by_side(loops: Sequence[Loop], events: Events) -> Family:
             "only sampled loops of one scan, without noise, run side by side",
             "give all of them the same scan",
             key="controller.scan",
+        )
+    shaped = any(
+        loop.setpoint_rate is not None or loop.setpoint_filter or loop.bias for loop in loops
+    )
+    if shaped or not events.are_steps:
+        raise problem(
+            "only one step of setpoint and of load, as it is given, is run side by side",
+            "leave out what else happens, and what shapes the setpoint",
+            key="scenario",
+        )
+    if any(isinstance(loop, Structure) for loop in loops):
+        raise problem(
+            "compensation, feedforward and inner loops are not run side by side",
+            "take them out, or run the loops one by one",
+            key="scenario",
         )
     clock = Clock(scan, delay)
     count = clock.place(events.until)[0] + 1

@@ -171,12 +171,12 @@ class Leaps:
         """Go on in the present mode while it lasts, at most to `stop`; the scans it went."""
         whole, start = self.run, self.run.at
         mode, slope = self._mode()
-        reach = _BLOCK - 1
+        reach = 4 * _BLOCK - 1
         while whole.at < stop and not whole.diverged:
             wanted = min(stop - whole.at, self.longest)
             if whole.algorithm.is_limited:
                 wanted = min(wanted, reach)
-                reach = 16 * reach + 15
+                reach = 64 * reach + 63
             if self._stretch(mode, slope, wanted) < wanted:
                 break
         return whole.at - start

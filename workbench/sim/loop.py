@@ -421,7 +421,9 @@ def settle_horizon(loop: Loop) -> float:
     and rounded up to two digits.  A loop that does not settle (unstable, or an integrating plant
     without integral action) gets a few of its own time scales, so that one sees what it does.
     """
-    free = replace(loop, low=None, high=None, rate=None)
+    free = replace(
+        loop, low=None, high=None, rate=None, dead_zone=0.0, bias=0.0, setpoint_rate=None
+    )
     # A cascade is played at the scan of its inner loop.
     shortest = loop.inner.scan if isinstance(loop, Structure) and loop.inner else loop.scan
     longest = MOST_SCANS * shortest / 2.5 if shortest else math.inf

@@ -24,6 +24,7 @@ from workbench.study.keep import (
 )
 from workbench.study.loop import action_of, controller_of, loop_of, plant_of, units_of
 from workbench.study.prediction import (
+    InnerTrend,
     Prediction,
     Response,
     Trend,
@@ -40,6 +41,7 @@ __all__ = [
     "Conversion",
     "Evaluation",
     "FileCheck",
+    "InnerTrend",
     "LoopFigures",
     "PlantFigures",
     "Prediction",

@@ -25,6 +25,7 @@ from workbench.study.loop import (
     runs_away,
     units_of,
 )
+from workbench.study.structure import has_one_scan, structure_notes
 from workbench.units import RATE_UNITS, Amount, Figure, Note, rounded, text
 
 
@@ -102,9 +103,12 @@ def assess(case: Case) -> Assessment:
     action, chosen = action_of(case)
     notes = (*_plant_notes(plant), *([Note("info", chosen)] if chosen else []))
     loop = loop_of(case)
+    notes = (*notes, *structure_notes(case, loop))
     analogue = _loop_figures(case, loop, analogue_margins(replace(loop, scan=None)))
     sampled, missing = None, ""
-    if loop.scan is not None:
+    if loop.scan is not None and not has_one_scan(loop):
+        missing = "a cascade has two scans; its margins are those of analogue controllers"
+    elif loop.scan is not None:
         missing = no_time_domain(loop.plant)
         if not missing:
             sampled = _loop_figures(case, loop, sampled_margins(loop))

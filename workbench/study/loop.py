@@ -15,6 +15,7 @@ from workbench.model.pid import Controller
 from workbench.model.stability import plant_verdict
 from workbench.model.transfer import TransferFunction
 from workbench.sim.instruments import Instruments
+from workbench.study.structure import built_round
 
 
 def units_of(case: Case) -> dict[str, str]:
@@ -105,7 +106,7 @@ def loop_of(case: Case) -> Loop:
         # The sensor's lag is felt by everything that is measured: PV is what the sensor shows.
         sensor = TransferFunction.ratio((1.0,), [(case.measurement.lag.seconds, 1.0)])
         plant, load = plant * sensor, None if load is None else load * sensor
-    return Loop(
+    single = Loop(
         plant=plant,
         load=plant if load is None else load * (100.0 / pv.range.span),
         gains=controller.gains(),
@@ -126,14 +127,17 @@ def loop_of(case: Case) -> Loop:
         else pv.range.percent(controller.setpoint_rate.per_second),
         setpoint_filter=controller.setpoint_filter.seconds if controller.setpoint_filter else 0.0,
     )
+    return built_round(case, single)
 
 
 def instruments_of(case: Case) -> Instruments:
     """The valve and the sensor, in percent of span; the sensor's lag is in the loop itself."""
     pv, op, measured = case.pv, case.op, case.measurement
+    # In a cascade the valve is behind the inner controller.
+    moved = case.inner if case.inner.is_there else op
     return Instruments(
         valve=case.valve,
-        op_rest=op.range.percent(op.rest - op.low),
+        op_rest=moved.range.percent(moved.rest - moved.low),
         closes_on_rise=op.meaning == "signal" and op.valve_closes_on_rise,
         resolution=pv.range.percent(measured.resolution),
         low=pv.range.percent(pv.low - pv.rest) if measured.clips else -math.inf,

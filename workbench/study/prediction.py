@@ -19,11 +19,13 @@ from workbench.model.response import (
     impulse_response,
     step_response,
 )
+from workbench.model.structures import Structure
 from workbench.model.transfer import TransferFunction
 from workbench.records.record import Record
 from workbench.sim.loop import settle_horizon, simulate
 from workbench.sim.metrics import Measures, measure
 from workbench.sim.scenario import Events, Scenario
+from workbench.sim.structures import Inside
 from workbench.study.loop import instruments_of, load_scale, loop_of, no_time_domain
 from workbench.units import Figure, rounded, text
 
@@ -40,6 +42,22 @@ class Trend:
     pv: Floats
     """As measured, with its noise."""
     output: Floats
+
+
+@dataclass(frozen=True)
+class InnerTrend:
+    """What the inner loop of a cascade did at its own scans; each array has shape (n,)."""
+
+    time: Floats
+    """[s]"""
+    setpoint: Floats
+    """[OP unit]"""
+    pv: Floats
+    """[OP unit]"""
+    output: Floats
+    """[inner OP unit]"""
+    time_at_limit_s: float
+    """How long its output stood at a limit."""
 
 
 @dataclass(frozen=True)
@@ -61,6 +79,8 @@ class Prediction:
     """[PV unit s]"""
     diverged: bool
     """The loop ran away and the trend was cut off."""
+    inner: InnerTrend | None = None
+    """Where there is an inner loop."""
 
 
 def predict(case: Case, seed: int = 0, like: Prediction | None = None) -> Prediction:
@@ -103,6 +123,29 @@ def predict(case: Case, seed: int = 0, like: Prediction | None = None) -> Predic
         floor_peak_deviation=peak.times(to_pv),
         floor_load_iae=iae.times(to_pv),
         diverged=trace.diverged,
+        inner=None if trace.inner is None else _inner_trend(case, loop, trace.inner),
+    )
+
+
+def _inner_trend(case: Case, loop: Loop, inside: Inside) -> InnerTrend:
+    """The inner loop in the units of OP and of its own output."""
+    assert isinstance(loop, Structure)
+    assert loop.inner is not None
+    assert loop.inner.scan is not None
+    op, own, scan = case.op, case.inner, loop.inner.scan
+    low, high = loop.inner.low, loop.inner.high
+    at_limit = np.zeros(len(inside.output), bool)
+    if low is not None:
+        at_limit |= inside.output <= low
+    if high is not None:
+        at_limit |= inside.output >= high
+    time: Floats = np.arange(float(len(inside.output))) * scan
+    return InnerTrend(
+        time,
+        op.rest + inside.setpoint * (op.range.span / 100.0),
+        op.rest + inside.pv * (op.range.span / 100.0),
+        own.rest + inside.output * (own.range.span / 100.0),
+        float(at_limit.sum()) * scan,
     )
 
 
@@ -121,6 +164,8 @@ def _events(case: Case, loop: Loop, seed: int, like: Prediction | None) -> Event
         horizon = settle_horizon(loop)
         load_at = at + horizon if halved else load_at
         until = _last_move(scenario, at, load_at, setpoint_step, load_step) + horizon
+        if loop.setpoint_rate is not None and setpoint_step:
+            until += abs(pv.range.percent(setpoint_step)) / loop.setpoint_rate
         # Comparable as long as neither is squeezed into a corner of the other.
         if like is not None and until / 3.0 <= like.until_s <= until * 3.0:
             until = like.until_s
@@ -205,6 +250,9 @@ def _floor(loop: Loop, events: Events) -> tuple[Figure, Figure]:
     """
     if not events.load_step:
         none = Figure(None, "the scenario has no load step")
+        return none, none
+    if isinstance(loop, Structure):
+        none = Figure(None, "it is only known for a single loop without feedforward")
         return none, none
     if not events.are_steps:
         none = Figure(None, "it is only known for a load step, in automatic, on one plant")

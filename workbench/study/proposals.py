@@ -17,6 +17,7 @@ from workbench.model.reduction import double_integrator, half_rule, unstable_lag
 from workbench.model.robustness import analogue_margins, sampled_margins, ultimate
 from workbench.study.loop import action_of, loop_of, no_time_domain, plant_in_percent
 from workbench.study.prediction import predict
+from workbench.study.structure import has_one_scan
 from workbench.tune import rules
 from workbench.tune.oscillation import astrom_hagglund_relay
 from workbench.tune.tuning import Ultimate
@@ -171,7 +172,7 @@ def _judged(
     """A row with its margins; how far PV errs is added for all rows at once."""
     trial = replace(case, controller=settings)
     loop = loop_of(trial)
-    analogue = loop.scan is None or no_time_domain(loop.plant)
+    analogue = not has_one_scan(loop) or no_time_domain(loop.plant)
     margins = analogue_margins(replace(loop, scan=None)) if analogue else sampled_margins(loop)
     if not margins.stable:
         none = Figure(None, f"the loop is not stable: {margins.reason}")

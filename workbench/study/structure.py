@@ -1,0 +1,123 @@
+"""What a case builds round its loop, in percent of span, and what is to be said of it."""
+
+from __future__ import annotations
+
+from dataclasses import fields, replace
+
+from workbench.case.case import Case
+from workbench.errors import NotApplicable
+from workbench.model.feedback import Loop
+from workbench.model.feedforward import Feedforward, ideal_feedforward
+from workbench.model.robustness import analogue_margins
+from workbench.model.structures import NOTHING, Structure
+from workbench.model.transfer import TransferFunction
+from workbench.units import Note, text, time_text
+
+
+def built_round(case: Case, loop: Loop) -> Loop:
+    """The loop with its compensation, feedforward and inner loop; itself where there is none.
+
+    Raises `InputError` for a model that no controller can run.
+    """
+    if not (case.compensation.is_there or case.feedforward.is_there or case.inner.is_there):
+        return loop
+    span = case.op.range.span
+    model = None
+    if case.compensation.is_there:
+        model = case.compensation.transfer() * (span / case.pv.range.span)
+    feedforward = None
+    if case.feedforward.is_there:
+        found = case.feedforward.feedforward()
+        # An upset at the plant's input is in percent of OP like OP; else it keeps its own unit.
+        scale = 1.0 if case.plant.load_path() is None else 100.0 / span
+        feedforward = replace(found, gain=found.gain * scale)
+    parts = {field.name: getattr(loop, field.name) for field in fields(Loop)}
+    inner = None
+    if case.inner.is_there:
+        inner = _inner(case, loop)
+        if loop.load is loop.plant:
+            # At the plant's input is at the inner PV, which the inner loop measures.
+            inner = replace(inner, load=TransferFunction.constant(1.0))
+            parts["load"] = NOTHING
+    return Structure(
+        **parts, model=model, feedforward=feedforward, inner=inner, inner_mode=case.inner.mode
+    )
+
+
+def _inner(case: Case, outer: Loop) -> Loop:
+    """The inner loop; its PV is in percent of the OP span, its output of its own."""
+    table = case.inner
+    controller, span = table.controller(), table.range
+
+    def limit(value: float | None) -> float | None:
+        return None if value is None else span.percent(value - table.rest)
+
+    return Loop(
+        plant=table.transfer() * (span.span / case.op.range.span),
+        load=NOTHING,
+        gains=controller.gains(),
+        reverse=controller.action != "direct",
+        scan=controller.scan_s or outer.scan,
+        low=limit(table.min),
+        high=limit(table.max),
+        rate=None if table.rate is None else span.percent(table.rate.per_second),
+        windup=controller.windup,
+    )
+
+
+def has_one_scan(loop: Loop) -> bool:
+    """The loop is sampled, with one scan; else its margins are those of analogue controllers."""
+    return loop.scan is not None and not (isinstance(loop, Structure) and loop.inner is not None)
+
+
+# --- what is to be said --------------------------------------------------------------------------
+
+
+def structure_notes(case: Case, loop: Loop) -> list[Note]:
+    """What an engineer should know of compensation, feedforward and inner loop."""
+    if not isinstance(loop, Structure):
+        return []
+    notes = []
+    if loop.model is not None and loop.plant.integrators > 0:
+        words = "with dead-time compensation an integrating plant does not come back after a load"
+        notes.append(Note("caution", f"{words}: PV stays off its setpoint"))
+    if loop.inner is not None:
+        notes += _inner_notes(loop, loop.inner)
+    if loop.feedforward is not None:
+        notes += _feedforward_notes(case, loop, loop.feedforward)
+    return notes
+
+
+def _inner_notes(loop: Structure, inner: Loop) -> list[Note]:
+    if loop.inner_mode != "cascade":
+        words = f"the inner loop is in {loop.inner_mode}: the controller moves nothing"
+        return [Note("caution", words)]
+    margins = analogue_margins(replace(inner, scan=None))
+    if not margins.stable:
+        return [Note("caution", f"the inner loop is not stable by itself: {margins.reason}")]
+    peak = text(margins.max_sensitivity.value, digits=3)
+    words = f"the inner loop by itself has Ms {peak}"
+    if loop.scan is not None:
+        words += "; margins of the whole are those of analogue controllers, as it has two scans"
+    return [Note("info", words)]
+
+
+def _feedforward_notes(case: Case, loop: Structure, given: Feedforward) -> list[Note]:
+    """How the feedforward given compares with the ideal, and what of that cannot be realised."""
+    plant, load = loop.acted_on, replace(loop, feedforward=None).upset
+    try:
+        ideal = ideal_feedforward(plant, load)
+    except NotApplicable as refusal:
+        return [Note("caution", f"feedforward: {refusal}")]
+    best = ideal.feedforward
+    scale = 1.0 if case.plant.load_path() is None else case.op.range.span / 100.0
+    words = f"gain {text(best.gain * scale)}"
+    for name, value in (("lead", best.lead), ("lag", best.lag), ("dead time", best.dead_time)):
+        if value:
+            words += f", {name} {time_text(value)}"
+    said = "the ideal feedforward is" if ideal.exact else "the nearest to the ideal feedforward is"
+    notes = [Note("info", f"{said} {words}")]
+    notes += [Note("caution", f"feedforward cannot be ideal: {lost}") for lost in ideal.lost]
+    if given.gain * best.gain < 0.0:
+        notes.append(Note("caution", "the feedforward given drives PV further: turn its sign"))
+    return notes
