@@ -28,6 +28,7 @@ from tests.model.test_transfer import laws, limits, step_responses
 from tests.plain import sampled_pv
 from tests.sim.series import Path as Way
 from tests.sim.series import Rational, responses
+from tests.tune.searches import searched
 from workbench.case.files import parse_case
 from workbench.case.writing import format_case
 from workbench.errors import InputError
@@ -409,6 +410,9 @@ CAMPAIGNS: Final[dict[str, Campaign]] = {
     "analogue trends": Campaign(analogue_trends, 3, 60),
     "sampled trends": Campaign(sampled_trends, 10, 1000),
     "sampled margins": Campaign(sampled_brinks, 5, 500),
+    "best settings by search": Campaign(
+        _judged(searched, 41, 0.01, "cost above the best of a grid, as a share"), 2, 108
+    ),
     "fits of made records": Campaign(fitted_records, 10, 400),
     "damaged case files": Campaign(damaged_files, 100, 20_000),
     "case files kept": Campaign(kept_files, 20, 2000),
