@@ -36,6 +36,7 @@ from tests.sim.campaigns import (
 from tests.sim.cascades import cascades_at_limits
 from tests.sim.series import Path as Way
 from tests.sim.series import Rational, responses
+from tests.tune.searches import searched
 from workbench.case.files import parse_case
 from workbench.case.writing import format_case
 from workbench.errors import InputError
@@ -435,6 +436,9 @@ CAMPAIGNS: Final[dict[str, Campaign]] = {
         _judged(cascades_at_limits, 206, 0.0, "outer output goes on into the limit [%]"), 40, 2000
     ),
     "sampled margins": Campaign(sampled_brinks, 5, 500),
+    "best settings by search": Campaign(
+        _judged(searched, 41, 0.01, "cost above the best of a grid, as a share"), 2, 108
+    ),
     "fits of made records": Campaign(fitted_records, 10, 400),
     "damaged case files": Campaign(damaged_files, 100, 20_000),
     "case files kept": Campaign(kept_files, 20, 2000),
