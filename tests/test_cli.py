@@ -759,7 +759,9 @@ def test_propose_needs_no_controller(run: Run) -> None:
 def test_propose_says_no_where_no_rule_applies_or_the_limit_is_not_met(run: Run) -> None:
     done = run("propose", *P, "--method", "simc-pid", "--json")
     assert not answer(done, status=1)["proposals"][-1]["applies"]
-    done = run("propose", "oven.toml", "--max-sensitivity", "1.01", "--json")
+    # A search keeps any limit; a published rule does not know of it.
+    asked = ("--method", "simc-pi", "--max-sensitivity", "1.01")
+    done = run("propose", "oven.toml", *asked, "--json")
     assert not any(row["within_limit"] for row in answer(done, status=1)["proposals"])
     assert run("propose", "oven.toml", "--method", "present").status == 0
 

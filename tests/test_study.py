@@ -7,7 +7,7 @@ import random
 from dataclasses import replace
 from datetime import UTC, datetime
 from pathlib import Path
-from typing import Final
+from typing import Final, Literal
 
 import numpy as np
 import pytest
@@ -457,7 +457,8 @@ def test_a_level_is_averaged_in_its_own_units() -> None:
 def test_a_plant_without_a_small_model_has_its_own_rule(plant: str, methods: set[str]) -> None:
     rows = study.propose(a_case(plant=plant, controller_action="reverse"))
 
-    assert {row.method for row in rows[1:] if row.applies} == methods
+    applying = {row.method for row in rows[1:] if row.applies}
+    assert applying - {"best-pi", "best-pid"} == methods
     assert all(row.max_sensitivity.value for row in rows if row.method in methods)
 
 
@@ -614,3 +615,23 @@ def test_every_shape_of_a_plant_goes_through_one_door() -> None:
     assert study.loop_of(case).plant(0.1j) == pytest.approx(
         process.transfer()(0.1j) * 100 / 250, rel=1e-12
     )
+
+
+@pytest.mark.parametrize("goal", ["load", "setpoint"])
+def test_the_best_settings_keep_the_limit_and_no_rule_within_it_is_quicker(
+    goal: Literal["load", "setpoint"],
+) -> None:
+    """Exact: a rule's settings are among those that the search looks at."""
+    wish = study.Wish(goal=goal, max_sensitivity=1.6)
+
+    rows = {row.method: row for row in study.propose(a_case(), wish)}
+
+    def error(row: study.Proposal) -> float:
+        figure = row.load_iae if goal == "load" else row.setpoint_iae
+        return math.inf if figure.value is None else figure.value
+
+    for method in ("best-pi", "best-pid"):
+        assert rows[method].within_limit
+        peer = method.removeprefix("best")
+        others = [error(r) for m, r in rows.items() if m.endswith(peer) and r.within_limit]
+        assert error(rows[method]) <= 1.01 * min(others)

@@ -36,7 +36,7 @@ class Proposed(Message):
 class ProposalTable(Panel):
     """One set of settings a line; what the chosen one is, below."""
 
-    title = "Settings by published rules"
+    title = "Best settings and published rules"
     selects = True
     help = (
         "Settings in the form and units of this controller. Ms is the maximum sensitivity (below "

@@ -3,18 +3,22 @@
 from __future__ import annotations
 
 import math
+from collections.abc import Callable
 from dataclasses import dataclass, replace
 from functools import cache
 from typing import Final, Literal
 
 from workbench.case.case import Case
 from workbench.errors import (
+    CannotSolve,
+    ModelError,
     NotApplicable,
     problem,
 )
 from workbench.model.pid import Controller, settings_like
 from workbench.model.reduction import double_integrator, half_rule, unstable_lag
 from workbench.model.robustness import analogue_margins, sampled_margins, ultimate
+from workbench.study.best import SEARCH_SOURCE, SEARCHES, searched
 from workbench.study.loop import action_of, loop_of, no_time_domain, plant_in_percent
 from workbench.study.prediction import predict
 from workbench.study.structure import has_one_scan
@@ -79,8 +83,12 @@ class Proposal:
     published_form: str = ""
 
 
-def propose(case: Case, wish: Wish | None = None) -> tuple[Proposal, ...]:
-    """The present settings and every rule's, judged on this loop; usable and quickest first.
+def propose(
+    case: Case, wish: Wish | None = None, should_stop: Callable[[], bool] | None = None
+) -> tuple[Proposal, ...]:
+    """The present settings, the best by search and every rule's, usable and quickest first.
+
+    Each is judged on this loop.
 
     Parameters
     ----------
@@ -88,9 +96,11 @@ def propose(case: Case, wish: Wish | None = None) -> tuple[Proposal, ...]:
         With a plant; the controller's form and units are kept, ideal and seconds without one.
     wish
         What to aim at; a method that is not known raises `InputError`.
+    should_stop
+        True ends a search with the best so far.
     """
     wish = wish or Wish()
-    known = tuple(rules.RULES)
+    known = (*SEARCHES, *rules.RULES)
     if wish.method is not None and wish.method not in (*known, "present"):
         meant = nearest(wish.method, (*known, "present"))
         hint = f"did you mean {meant!r}?" if meant else f"use one of {', '.join(known)}"
@@ -98,7 +108,12 @@ def propose(case: Case, wish: Wish | None = None) -> tuple[Proposal, ...]:
     present = _present(case, wish)
     methods = known if wish.method is None else tuple(m for m in known if m == wish.method)
     plant = _rule_plant(case, wish)
-    rows = [_proposal(case, method, wish, plant) for method in methods]
+    rows = [
+        _search(case, method, wish, should_stop)
+        if method in SEARCHES
+        else _proposal(case, method, wish, plant)
+        for method in methods
+    ]
     present, *rows = _with_errors(case, [present, *rows])
     rows.sort(key=lambda row: _rank(row, wish))
     return (present, *rows)
@@ -119,6 +134,33 @@ def _present(case: Case, wish: Wish) -> Proposal:
     if case.controller is None:
         return _blank("present", title, source, "the case has no controller yet")
     return _judged(case, case.controller, "present", title, source, wish)
+
+
+def _search(
+    case: Case, method: str, wish: Wish, should_stop: Callable[[], bool] | None
+) -> Proposal:
+    title = SEARCHES[method].title
+    try:
+        settings = searched(
+            case,
+            method,
+            max_sensitivity=wish.max_sensitivity,
+            setpoint=wish.goal == "setpoint",
+            should_stop=should_stop,
+        )
+    except (CannotSolve, ModelError, NotApplicable) as refusal:
+        row = _blank(method, title, SEARCH_SOURCE, str(refusal))
+    else:
+        row = _judged(case, settings, method, title, SEARCH_SOURCE, wish)
+    step = "setpoint" if wish.goal == "setpoint" else "load"
+    return replace(
+        row,
+        objective=f"least IAE after a {step} step with Ms at most {plain(wish.max_sensitivity)}",
+        limits="any plant without a dead time inside an inner feedback",
+        published_form="series"
+        if case.controller and case.controller.form == "series"
+        else "ideal",
+    )
 
 
 def _proposal(case: Case, method: str, wish: Wish, plant: rules.Plant) -> Proposal:

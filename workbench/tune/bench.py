@@ -101,12 +101,9 @@ class Bench:
 
     @classmethod
     def of(cls, loops: Sequence[Loop]) -> Bench:
-        """From one loop for each plant; all have the same scan, filter and action.
+        """From one loop for each plant, whose gains do not count.
 
-        Parameters
-        ----------
-        loops
-            At least one; their gains do not count.
+        All have the same scan, filter and action.
 
         Raises
         ------
