@@ -21,6 +21,7 @@ from typing import Final
 
 import numpy as np
 
+import tests.conftest  # noqa: F401 - the settings of hypothesis, which pytest would have loaded
 from tests.model.test_formula import fuzzed
 from tests.model.test_robustness import brinks, sampled_verdicts
 from tests.model.test_stability import verdicts
@@ -330,6 +331,9 @@ def command_lines(size: int) -> Outcome:
             out, err = io.StringIO(), io.StringIO()
             with contextlib.redirect_stdout(out), contextlib.redirect_stderr(err):
                 status = main(line)
+            if status > 128:
+                # The command was asked to end, and so were we.
+                raise SystemExit(status)
             said = err.getvalue()
             refused = status == 2 and not out.getvalue() and said.count("\n") == 1
             answered = status in (0, 1) and bool(out.getvalue()) and not said
