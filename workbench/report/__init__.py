@@ -1,0 +1,57 @@
+"""Results in words and in JSON: the answers of `study`, for people and for scripts.
+
+Nothing is computed and nothing is printed here.  Text is plain, its own words are ASCII, every
+number wears its unit, and lines are wrapped to the width that is asked for.  JSON is a dictionary
+of plain values: a figure that does not exist is `None` with its reason beside it.
+"""
+
+from workbench.report.files import (
+    between_data,
+    between_text,
+    check_data,
+    check_text,
+    history_data,
+    history_text,
+)
+from workbench.report.fits import fit_data, fit_text
+from workbench.report.loops import (
+    assess_data,
+    assess_text,
+    is_stable,
+    predict_data,
+    predict_text,
+    respond_data,
+    respond_text,
+    response_csv,
+    trend_csv,
+)
+from workbench.report.settings import convert_data, convert_text, propose_data, propose_text
+from workbench.report.words import Json, Rows, settings_text, wrapped
+
+__all__ = [
+    "Json",
+    "Rows",
+    "assess_data",
+    "assess_text",
+    "between_data",
+    "between_text",
+    "check_data",
+    "check_text",
+    "convert_data",
+    "convert_text",
+    "fit_data",
+    "fit_text",
+    "history_data",
+    "history_text",
+    "is_stable",
+    "predict_data",
+    "predict_text",
+    "propose_data",
+    "propose_text",
+    "respond_data",
+    "respond_text",
+    "response_csv",
+    "settings_text",
+    "trend_csv",
+    "wrapped",
+]
