@@ -93,7 +93,7 @@ class MainPage(Page):
         Command("u,f6", "u", "undo", "undo", "undo the last change", "F6"),
         Command("y,f7", "y", "redo", "redo", "redo what was undone", "F7"),
         Command("r,f3", "r", "record", "record", "fit the plant to a test record", "F3"),
-        Command("o,f8", "o", "propose", "proposals", "settings by published rules, judged", "F8"),
+        Command("o,f8", "o", "propose", "proposals", "best settings and published rules", "F8"),
         Command("s,f2", "s", "save", "save", "save with a reason", "F2"),
         Command("z,f9", "z", "zoom", "zoom", "the focused panel alone, and back", "F9"),
         Command("q,ctrl+c", "q", "leave", "leave", "leave; asks about unsaved work", "ctrl+c"),

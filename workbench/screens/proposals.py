@@ -1,4 +1,4 @@
-"""The Proposals page: settings by published rules, each judged on this loop."""
+"""The Proposals page: best settings and published rules, each judged on this loop."""
 
 from __future__ import annotations
 
