@@ -413,15 +413,14 @@ def _replace_file(path: str, text: str) -> None:
     """Write `text` to `path` whole or not at all."""
     target = Path(os.path.realpath(path))
     part = target.with_name(f".{target.name[:200]}.{os.getpid()}.part")
-    try:
+    with contextlib.ExitStack() as unless_done:
+        unless_done.callback(part.unlink, missing_ok=True)
         with part.open("x", encoding="utf-8", newline="") as file:
             file.write(text)
             file.flush()
             os.fsync(file.fileno())
         part.replace(target)
-    except BaseException:
-        part.unlink(missing_ok=True)
-        raise
+        unless_done.pop_all()
 
 
 # --- output ---------------------------------------------------------------------------------------

@@ -427,16 +427,15 @@ def _temporary(folder: _Folder, raw: bytes, mode: int, like: os.stat_result | No
     name = f".workbench-{secrets.token_hex(4)}.saving"
     flags = os.O_WRONLY | os.O_CREAT | os.O_EXCL | os.O_CLOEXEC
     handle = os.open(name, flags, mode, dir_fd=folder.handle)
-    try:
+    with contextlib.ExitStack() as unless_done:
+        unless_done.callback(os.unlink, name, dir_fd=folder.handle)
         with open(handle, "wb") as file:
             if like is not None:
                 _made_like(handle, like)
             file.write(raw)
             file.flush()
             os.fsync(handle)
-    except BaseException:
-        os.unlink(name, dir_fd=folder.handle)
-        raise
+        unless_done.pop_all()
     return name
 
 
@@ -451,11 +450,10 @@ def _made_like(handle: int, like: os.stat_result) -> None:
 
 def _replace(folder: _Folder, target: str, raw: bytes) -> None:
     temporary, at = _temporary(folder, raw, 0o600, os.stat(target)), folder.handle
-    try:
+    with contextlib.ExitStack() as unless_done:
+        unless_done.callback(os.unlink, temporary, dir_fd=at)
         os.replace(temporary, os.path.basename(target), src_dir_fd=at, dst_dir_fd=at)
-    except BaseException:
-        os.unlink(temporary, dir_fd=folder.handle)
-        raise
+        unless_done.pop_all()
     os.fsync(folder.handle)
 
 
