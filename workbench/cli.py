@@ -655,6 +655,25 @@ def main(argv: Sequence[str] | None = None) -> int:
         # Standard error carries our one line and nothing else.
         warnings.simplefilter("ignore")
     words = sys.argv[1:] if argv is None else list(argv)
+    asked: list[int] = []
+    headless = argv is None and bool(words) and words[0] in COMMANDS  # the screen has its own way
+    if headless and signal.getsignal(signal.SIGINT) is signal.default_int_handler:
+        signal.signal(signal.SIGINT, lambda number, frame: _interrupt(asked, number, frame))
+    status = _status(words, asked)
+    if asked:
+        # An import that was cut short can make Python end by the signal instead of our status.
+        os._exit(Status.INTERRUPTED)
+    return status
+
+
+def _interrupt(asked: list[int], number: int, frame: FrameType | None) -> None:
+    """Note that ctrl+c was pressed: compiled code may turn the exception into another one."""
+    asked.append(number)
+    signal.default_int_handler(number, frame)
+
+
+def _status(words: Sequence[str], asked: Sequence[int]) -> int:
+    """Do the work and tell its faults; what goes wrong after ctrl+c is no fault."""
     try:
         return int(_run(words))
     except KeyboardInterrupt:
@@ -670,6 +689,8 @@ def main(argv: Sequence[str] | None = None) -> int:
         mend = "give a shorter time, a longer scan, or a smaller file"
         _complain(f"{words[0]}: needs more memory than there is; {mend}")
     except Exception as fault:  # noqa: BLE001
+        if asked:
+            return Status.INTERRUPTED
         _complain(_defect(fault))
     return Status.FAULT
 
