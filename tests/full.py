@@ -40,13 +40,13 @@ from tests.sim.series import Rational, responses
 from tests.tune.searches import searched
 from workbench.case.files import parse_case
 from workbench.case.writing import format_case
+from workbench.cli.options import Grammar
 from workbench.errors import InputError
 from workbench.model.feedback import Loop
 from workbench.model.pid import Gains
 from workbench.model.robustness import sampled_margins
 from workbench.model.stability import loop_verdict
 from workbench.model.transfer import TransferFunction
-from workbench.options import Grammar
 from workbench.records.identify import fit
 from workbench.records.record import Record
 from workbench.sim.loop import simulate
@@ -318,7 +318,7 @@ def kept_files(size: int) -> Outcome:
 def command_lines(size: int) -> Outcome:
     """Words put together at random after `workbench`: an answer, or one line and status 2."""
     from workbench.cli import main
-    from workbench.options import COMMANDS
+    from workbench.cli.table import COMMANDS
 
     draw = random.Random(111)
     files = [str(path) for path in sorted(CASES.iterdir())]

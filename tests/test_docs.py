@@ -34,9 +34,10 @@ import pytest
 
 from tests.screens.conftest import press, running, text_of, type_in
 from workbench.case.tables import SHAPE, TABLES, PlantTable, Revision
+from workbench.cli.options import Option
+from workbench.cli.table import COMMANDS, INLINE, SCREEN
 from workbench.model.blocks import Block, Blocks
 from workbench.model.plant import SHAPES
-from workbench.options import COMMANDS, INLINE, SCREEN, Option
 from workbench.screens.work import Work
 from workbench.tune.rules import RULES
 from workbench.units import MISSING, Amount, Quantity, plain, quantities

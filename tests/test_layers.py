@@ -24,7 +24,7 @@ LAYERS: Final = (
     ("sim",),
     ("case", "tune", "records"),
     ("study",),
-    ("report", "charts", "options"),
+    ("report", "charts"),
     ("cli", "screens"),
     ("__main__",),
 )

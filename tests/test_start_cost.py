@@ -14,7 +14,7 @@ from typing import Any, Final
 
 import pytest
 
-from workbench.options import COMMANDS
+from workbench.cli.table import COMMANDS
 
 ROOT: Final = Path(__file__).resolve().parents[1]
 LOOP: Final = ("--plant", "1.8 exp(-6 s)/(40 s + 1)", "--gain", "1.1", "--integral", "32 s")

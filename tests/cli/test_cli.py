@@ -16,7 +16,8 @@ from typing import Any
 import pytest
 
 from workbench import cli
-from workbench.options import COMMANDS
+from workbench.cli.answer import Answer
+from workbench.cli.table import COMMANDS
 
 PLANT = "1.8 exp(-6 s)/(40 s + 1)"
 LOOP = ("--plant", PLANT, "--gain", "1.1", "--integral", "32 s", "--scan", "1 s")
@@ -323,7 +324,7 @@ def test_every_fault_of_a_file_is_counted(run: Run) -> None:
 def test_a_defect_of_the_program_is_told_without_a_traceback(
     run: Run, monkeypatch: pytest.MonkeyPatch
 ) -> None:
-    def broken(given: object) -> cli.Answer:
+    def broken(given: object) -> Answer:
         raise ZeroDivisionError("division\nby zero")
 
     monkeypatch.setitem(cli.VERBS, "assess", broken)
@@ -335,7 +336,7 @@ def test_a_defect_of_the_program_is_told_without_a_traceback(
 
 
 def test_too_little_memory_is_told(run: Run, monkeypatch: pytest.MonkeyPatch) -> None:
-    def huge(given: object) -> cli.Answer:
+    def huge(given: object) -> Answer:
         raise MemoryError
 
     monkeypatch.setitem(cli.VERBS, "assess", huge)
@@ -908,7 +909,7 @@ def test_a_terminal_that_only_knows_ascii_gets_ascii(
 def test_long_work_shows_its_progress_on_a_terminal_only(
     run: Run, monkeypatch: pytest.MonkeyPatch
 ) -> None:
-    monkeypatch.setattr(cli, "PROGRESS_EVERY_S", 0.0)
+    monkeypatch.setattr(cli.output, "PROGRESS_EVERY_S", 0.0)
     assert run("check", "oven.toml").err == ""
     monkeypatch.setattr(sys, "stderr", _Terminal(sys.stderr))
     done = run("check", "oven.toml", "old.toml")
@@ -944,9 +945,9 @@ def test_a_signal_stops_the_work_and_leaves_nothing_half_written(
 def test_a_signal_that_is_to_be_ignored_is_ignored(
     run: Run, monkeypatch: pytest.MonkeyPatch
 ) -> None:
-    def hung_up(given: object) -> cli.Answer:
+    def hung_up(given: object) -> Answer:
         os.kill(os.getpid(), signal.SIGHUP)
-        return cli.Answer("done", {})
+        return Answer("done", {})
 
     monkeypatch.setitem(cli.VERBS, "assess", hung_up)
     before = signal.signal(signal.SIGHUP, signal.SIG_IGN)
@@ -959,7 +960,7 @@ def test_a_signal_that_is_to_be_ignored_is_ignored(
 # --- the program itself ---------------------------------------------------------------------------
 
 PROGRAM = [sys.executable, "-m", "workbench"]
-ROOT = Path(__file__).resolve().parents[1]
+ROOT = Path(__file__).resolve().parents[2]
 
 
 @pytest.fixture

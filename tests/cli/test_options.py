@@ -4,8 +4,9 @@ from __future__ import annotations
 
 import pytest
 
+from workbench.cli.options import Given
+from workbench.cli.table import COMMANDS, INLINE, SCREEN
 from workbench.errors import InputError
-from workbench.options import COMMANDS, INLINE, SCREEN, Given
 
 
 def read(command: str, *words: str) -> Given:

@@ -1,0 +1,162 @@
+"""The commands about one loop: what it is, what it will do, what to set."""
+
+from __future__ import annotations
+
+from dataclasses import replace
+from typing import Final
+
+from workbench import report
+from workbench.cli.answer import Answer, Status, check_target, loop_of, no_controller, replace_file
+from workbench.cli.options import Given
+from workbench.cli.output import progress, width
+from workbench.errors import problem
+from workbench.units import GAIN_RATE_UNITS, INTEGRAL_UNITS, TIME_UNITS, Note, one_of
+
+
+def assess(given: Given) -> Answer:
+    """Gain, final values, stability and margins."""
+    from workbench import study
+
+    case = loop_of(given)
+    found = study.assess(case)
+    found = replace(found, notes=study.cautions(case, found))
+    small = None
+    if "--small-models" in given:
+        with progress("reducing the plant"):
+            small = study.reductions(case)
+    return Answer(
+        report.assess_text(case, found, study.units_of(case), width(), small),
+        report.assess_data(case, found, study.units_of(case), small),
+        Status.DONE if report.is_stable(found) else Status.NO,
+    )
+
+
+def predict(given: Given) -> Answer:
+    """The closed loop, run through its scenario."""
+    from workbench import study
+
+    seed = (given.whole("--seed", 0, 2**31 - 1) or [0])[0]
+    trend_file = given.word("--trend")
+    if trend_file is not None:
+        check_target(trend_file)
+    case = loop_of(given)
+    if case.controller is None:
+        raise no_controller(given, "a prediction")
+    with progress("predicting"):
+        evaluation = study.evaluate(case, seed)
+        # Where there is no prediction, asking for it says why.
+        prediction = evaluation.prediction or study.predict(case, seed)
+    if trend_file is not None:
+        replace_file(trend_file, report.trend_csv(prediction.trend))
+    units = study.units_of(case)
+    return Answer(
+        report.predict_text(evaluation, prediction, units, trend_file, width()),
+        report.predict_data(evaluation, prediction, units),
+        Status.DONE if report.is_stable(evaluation.assessment) else Status.NO,
+    )
+
+
+def respond(given: Given) -> Answer:
+    """The plant alone, from rest."""
+    from workbench import study
+    from workbench.model.response import INPUTS, Signal
+    from workbench.records.record import read_record
+
+    trend_file, record_file = given.word("--trend"), given.word("--record")
+    if trend_file is not None:
+        check_target(trend_file)
+    if record_file is not None:
+        beside = next((name for name in _SIGNAL if name in given), "")
+        if beside:
+            raise problem("is given beside --record", "keep one of the two", key=beside)
+    else:
+        beside = next((name for name in ("--time", "--op") if name in given), "")
+        if beside:
+            raise problem("is given without --record", "name the record", key=beside)
+    kind = given.choice("--input", tuple(INPUTS)) or "step"
+    size, at = given.number("--size"), given.seconds("--at", or_zero=True) or 0.0
+    lasting, period = given.seconds("--width"), given.seconds("--period")
+    until = given.seconds("--until")
+    case = loop_of(given)
+    plant = study.plant_of(case)
+    with progress("responding"):
+        if record_file is not None:
+            record = read_record(record_file, time=given.word("--time"), op=given.word("--op"))
+            response, signal = study.respond_to_record(plant, record), None
+        else:
+            own = study.response_horizon(plant, Signal()) / 6.0
+            signal = Signal(
+                kind, 1.0 if size is None else size, at, lasting or own, period or 4.0 * own
+            )
+            response = study.respond(plant, signal, until or study.response_horizon(plant, signal))
+    if trend_file is not None:
+        replace_file(trend_file, report.response_csv(response))
+    units = study.units_of(case)
+    return Answer(
+        report.respond_text(case, response, signal, units, trend_file, width()),
+        report.respond_data(case, response, signal, units),
+    )
+
+
+_SIGNAL: Final = ("--input", "--size", "--at", "--width", "--period", "--until")
+"""Options of an input that a record stands in for."""
+
+
+def propose(given: Given) -> Answer:
+    """The present settings and candidates, each judged on this loop."""
+    from workbench import study
+
+    limit = given.number("--max-sensitivity", above=1.0)
+    swing = given.swing("--relay")
+    wish = study.Wish(
+        goal="setpoint" if given.choice("--for", ("load", "setpoint")) == "setpoint" else "load",
+        closed_loop_time=given.seconds("--closed-loop-time"),
+        max_sensitivity=study.Wish.max_sensitivity if limit is None else limit,
+        method=given.word("--method"),
+        largest_upset=given.number("--largest-upset", above=0.0),
+        allowed_deviation=given.number("--allowed-deviation", above=0.0),
+        relay=None if swing is None else study.RelayTest(*swing),
+    )
+    # What a controller is like, its gain left open, is enough to propose settings for it.
+    case = loop_of(given, gain="1")
+    with progress("judging the candidates"):
+        proposals = study.propose(case, wish)
+    if case.controller is not None and not given.file and not given.tells_gain:
+        case, proposals = replace(case, controller=None), proposals[1:]
+    # The present settings are an answer only where they were asked for.
+    candidates = [
+        row for row in proposals if (row.method == "present") is (wish.method == "present")
+    ]
+    done = any(row.within_limit if limit is not None else row.applies for row in candidates)
+    chosen = study.action_of(case)[1]
+    notes = [Note("info", chosen)] if chosen else []
+    units = study.units_of(case)
+    return Answer(
+        report.propose_text(case, proposals, notes, units, width()),
+        report.propose_data(case, proposals, notes, units),
+        Status.DONE if done else Status.NO,
+    )
+
+
+def convert(given: Given) -> Answer:
+    """The same controller in another form and other units."""
+    from workbench import study
+    from workbench.model.conversion import HELD_BY, Units
+
+    form = given.choice("--to", tuple(HELD_BY))
+    if form is None:
+        raise problem("is missing", f"name the form wanted: {one_of(list(HELD_BY))}", key="--to")
+    units = Units(
+        given.choice("--gain-as", ("gain", "band")),
+        given.choice("--integral-as", (*INTEGRAL_UNITS, *GAIN_RATE_UNITS)),
+        given.choice("--derivative-as", tuple(TIME_UNITS)),
+    )
+    case = loop_of(given, needs_plant=False)
+    if case.controller is None:
+        raise no_controller(given, "a conversion")
+    found = study.convert(case, form, units)
+    return Answer(
+        report.convert_text(case, found, width()),
+        report.convert_data(case, found, study.units_of(case)),
+        Status.NO if found.controller is None else Status.DONE,
+    )
