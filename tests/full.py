@@ -35,6 +35,7 @@ from tests.sim.campaigns import (
     sampled_by_mpmath,
 )
 from tests.sim.cascades import cascades_at_limits
+from tests.sim.floors import beaten, reached
 from tests.sim.series import Path as Way
 from tests.sim.series import Rational, responses
 from tests.tune.searches import searched
@@ -438,6 +439,12 @@ CAMPAIGNS: Final[dict[str, Campaign]] = {
     ),
     "inner loops at limits": Campaign(
         _judged(cascades_at_limits, 206, 0.0, "outer output goes on into the limit [%]"), 40, 2000
+    ),
+    "floors not beaten": Campaign(
+        _judged(beaten, 51, 1e-4, "below a floor, as a share of it"), 4, 2000
+    ),
+    "floors reached": Campaign(
+        _judged(reached, 0, 0.03, "best moves found above a floor, as a share"), 1, 20
     ),
     "sampled margins": Campaign(sampled_brinks, 5, 500),
     "best settings by search": Campaign(

@@ -1,10 +1,12 @@
 """Linear programmes between bounds, by an interior point, without scipy: a what-if cannot wait.
 
-    least c x   subject to   A x = b,   0 <= x <= above
+least c x   subject to   A x = b,   0 <= x <= above
 """
 
 from __future__ import annotations
 
+from dataclasses import dataclass, replace
+from functools import cached_property
 from typing import Final
 
 import numpy as np
@@ -46,64 +48,108 @@ def least(
     "Computational experience with a primal-dual interior point method for linear programming",
     Linear Algebra Appl. 152, 1991, 191-222; both from memory.
     """
-    bounded = np.isfinite(above)
-    top = np.where(bounded, above, 1.0)
-    x = np.where(bounded, 0.5 * top, 1.0)
-    s = np.where(bounded, top - x, 1.0)
-    y = np.zeros(len(b))
-    size = 1.0 + float(np.abs(c).max())
-    z, w = np.full(len(c), size), np.where(bounded, size, 0.0)
-    pairs = len(c) + int(bounded.sum())
-    for _ in range(_MOST_STEPS):
-        lacking = b - a @ x
-        room = np.where(bounded, top - x - s, 0.0)
-        slope = c - y @ a - z + w
-        gap = float(x @ z + (s * w)[bounded].sum())
-        cost = float(c @ x)
-        if (
-            gap < tolerance * max(abs(cost), 1e-6 * size)
-            and float(np.abs(slope).max()) < 1e-3 * tolerance * size
-            and float(np.abs(lacking).max()) < 1e-8 * (1.0 + float(np.abs(b).max()))
-        ):
-            return x, y
-        weight = 1.0 / (z / x + w / s)
-        normal = (a * weight) @ a.T
-        normal[np.diag_indices_from(normal)] *= 1.0 + 1e-13
-
-        def moved(
-            xz: Array,
-            sw: Array,
-            *,
-            lacking: Array = lacking,
-            room: Array = room,
-            slope: Array = slope,
-            weight: Array = weight,
-            normal: Array = normal,
-        ) -> tuple[Array, Array, Array, Array, Array]:
-            pull = slope - xz / x + np.where(bounded, (sw - w * room) / s, 0.0)
-            dy = np.linalg.solve(normal, lacking + a @ (weight * pull))
-            dx = weight * (dy @ a - pull)
-            ds = np.where(bounded, room - dx, 0.0)
-            return dx, ds, dy, (xz - z * dx) / x, np.where(bounded, (sw - w * ds) / s, 0.0)
-
-        try:
-            dx, ds, dy, dz, dw = moved(-x * z, -s * w)
-            far, free = _reach(x, dx, s, ds), _reach(z, dz, w, dw)
-            left = float((x + far * dx) @ (z + free * dz) + (s + far * ds) @ (w + free * dw))
-            aim = gap / pairs * (left / gap) ** 3
-            dx, ds, dy, dz, dw = moved(aim - x * z - dx * dz, aim - s * w - ds * dw)
-        except np.linalg.LinAlgError:
-            break
-        far, free = _reach(x, dx, s, ds), _reach(z, dz, w, dw)
-        if not np.isfinite(far * free):
-            break
-        x, s = x + _SHORT_OF_THE_WALL * far * dx, s + _SHORT_OF_THE_WALL * far * ds
-        y, z, w = (
-            y + _SHORT_OF_THE_WALL * free * dy,
-            z + _SHORT_OF_THE_WALL * free * dz,
-            w + _SHORT_OF_THE_WALL * free * dw,
-        )
+    point = _Point.inside(a, b, c, above)
+    # Without an answer the prices grow beyond every number.
+    with np.errstate(over="ignore", invalid="ignore", divide="ignore"):
+        for _ in range(_MOST_STEPS):
+            if point.is_optimal(tolerance):
+                return point.x, point.y
+            try:
+                point = point.onward()
+            except np.linalg.LinAlgError:
+                break
     raise CannotSolve("the linear programme has no answer within its bounds", change="the bounds")
+
+
+@dataclass(frozen=True)
+class _Point:
+    """A point inside the bounds, with its prices; where there is no upper bound s is 1 and w 0."""
+
+    a: Array
+    b: Array
+    c: Array
+    top: Array
+    bounded: NDArray[np.bool_]
+    x: Array
+    s: Array
+    """What is left to the upper bound."""
+    y: Array
+    z: Array
+    """Price of the lower bound."""
+    w: Array
+    """Price of the upper bound."""
+
+    @classmethod
+    def inside(cls, a: Array, b: Array, c: Array, above: Array) -> _Point:
+        bounded = np.isfinite(above)
+        top = np.where(bounded, above, 2.0)
+        size = 1.0 + float(np.abs(c).max())
+        prices = np.full(len(c), size), np.where(bounded, size, 0.0)
+        return cls(a, b, c, top, bounded, top / 2, top / 2, np.zeros(len(b)), *prices)
+
+    @cached_property
+    def lacking(self) -> Array:
+        return self.b - self.a @ self.x
+
+    @cached_property
+    def room(self) -> Array:
+        return np.where(self.bounded, self.top - self.x - self.s, 0.0)
+
+    @cached_property
+    def slope(self) -> Array:
+        return self.c - self.y @ self.a - self.z + self.w
+
+    @cached_property
+    def gap(self) -> float:
+        return float(self.x @ self.z + self.s @ self.w)
+
+    def is_optimal(self, tolerance: float) -> bool:
+        size = 1.0 + float(np.abs(self.c).max())
+        return (
+            self.gap < tolerance * max(abs(float(self.c @ self.x)), 1e-6 * size)
+            and float(np.abs(self.slope).max()) < 1e-3 * tolerance * size
+            and float(np.abs(self.lacking).max()) < 1e-8 * (1.0 + float(np.abs(self.b).max()))
+        )
+
+    @cached_property
+    def weight(self) -> Array:
+        return 1.0 / (self.z / self.x + self.w / self.s)
+
+    @cached_property
+    def normal(self) -> Array:
+        found = (self.a * self.weight) @ self.a.T
+        found[np.diag_indices_from(found)] *= 1.0 + 1e-13
+        return np.asarray(found, np.float64)
+
+    def moves(self, xz: Array, sw: Array) -> tuple[Array, ...]:
+        """Newton's step in x, s, y, z, w towards products x z and s w changed by `xz` and `sw`."""
+        x, s, z, w = self.x, self.s, self.z, self.w
+        onto = np.where(self.bounded, (sw - w * self.room) / s, 0.0)
+        pull = self.slope - xz / x + onto
+        dy = np.linalg.solve(self.normal, self.lacking + self.a @ (self.weight * pull))
+        dx = self.weight * (dy @ self.a - pull)
+        ds = np.where(self.bounded, self.room - dx, 0.0)
+        dz, dw = (xz - z * dx) / x, np.where(self.bounded, (sw - w * ds) / s, 0.0)
+        return dx, ds, dy, dz, dw
+
+    def onward(self) -> _Point:
+        """One step: a predictor aims at the optimum, a corrector stays away from the walls."""
+        x, s, z, w = self.x, self.s, self.z, self.w
+        dx, ds, _, dz, dw = self.moves(-x * z, -s * w)
+        far, free = _reach(x, dx, s, ds), _reach(z, dz, w, dw)
+        left = float((x + far * dx) @ (z + free * dz) + (s + far * ds) @ (w + free * dw))
+        aim = self.gap / (len(x) + int(self.bounded.sum())) * (left / self.gap) ** 3
+        dx, ds, dy, dz, dw = self.moves(aim - x * z - dx * dz, aim - s * w - ds * dw)
+        far = _SHORT_OF_THE_WALL * _reach(x, dx, s, ds)
+        free = _SHORT_OF_THE_WALL * _reach(z, dz, w, dw)
+        return replace(
+            self,
+            x=x + far * dx,
+            s=s + far * ds,
+            y=self.y + free * dy,
+            z=z + free * dz,
+            w=w + free * dw,
+        )
 
 
 def _reach(one: Array, move: Array, other: Array, move_of_other: Array) -> float:

@@ -1,10 +1,10 @@
 """The floor: what no controller whatever can undercut after a load step on this plant.
 
-The controller of the floor knows the upset, with its size and for ever, from the instant at which it
-shows in PV - or at which it is measured, where there is a feedforward.  With a scan interval it
-knows at the first scan at which PV is another one; its output changes after the computing delay and
-is held from scan to scan; without one it acts at once.  From there on it may do anything within the
-output limits, and before it leaves the output where it rests.  So PV is
+The controller of the floor knows the upset, with its size and for ever, from the instant at which
+it shows in PV - or at which it is measured, where there is a feedforward.  With a scan interval it
+knows at the first scan at which PV is another one; its output changes after the computing delay
+and is held from scan to scan; without one it acts at once.  From there on it may do
+anything within the output limits, and before it leaves the output where it rests.  So PV is
 
     y(t) = y_free(t)               until the first move and the plant's dead time have passed, T0
     y(t) = y_free(t) + (G u)(t)    from there on
@@ -19,8 +19,8 @@ programme, for which every number is a lower bound whatever the grid is like:
 
     IAE >= sum_i v_i f_i + sum_j min(low q_j, high q_j),   q = A'v,  |v_i| <= 1
 
-with f_i the area of y_free over a segment of time and A_ij what the output in the interval j adds to
-it; |area| is never more than the area of |y|.  A grid that ends early leaves a cost out, and one
+with f_i the area of y_free over a segment of time and A_ij what the output in the interval j adds
+to it; |area| is never more than the area of |y|.  A grid that ends early leaves a cost out, and one
 whose intervals are many scans long is judged with the output free at each part of them, so that
 either way the bound stays below the truth.
 
@@ -54,7 +54,7 @@ from workbench.units import Figure
 Array = NDArray[np.float64]
 
 _MOVES: Final = 36
-"""Intervals of the output in one grid."""
+"""Intervals of the output in one grid; twice as many, half as fine, where it is a long one."""
 _PARTS: Final = 4
 """Parts of an interval, over each of which the area of PV counts by itself."""
 _EARLY: Final = 12
@@ -63,7 +63,7 @@ _CLOSER: Final = 3
 """How much finer their parts are."""
 _GROWTH: Final = 4
 """How much longer the next grid is, where PV is not back by the end of one."""
-_ROOM: Final = 3.0
+_ROOM: Final = 2.5
 """How much longer the first grid is than PV takes to come back at full output."""
 _LOOKS: Final = 64
 """Instants at which PV is looked at to find that out, again and again closer."""
@@ -148,12 +148,15 @@ def _not_known(loop: Loop, events: Events, instruments: Instruments | None) -> s
         return "it is only known for a linear valve"
     if not loop.plant.numerator:
         return "nothing that the output does reaches PV"
-    low, high = _limits(loop, events)
+    return _unbounded(loop, *_limits(loop, events))
+
+
+def _unbounded(loop: Loop, low: float, high: float) -> str:
+    """Why the limits, or the want of them, leave no floor."""
     if low > 0.0 or high < 0.0:
         return "the setpoint cannot be held within the output limits"
-    if math.isinf(high - low):
-        zeros = loop.plant.zeros()
-        if any(zero.real > 0.0 and zero.imag for zero in zeros):
+    if math.isinf(high):
+        if any(zero.real > 0.0 and zero.imag for zero in loop.plant.zeros()):
             return "PV turns back twice: it is only known with output limits"
         if len(loop.plant.numerator) > 1:
             return "paths of unequal dead time: it is only known with output limits"
@@ -274,34 +277,40 @@ class _Rest:
             iae = max(iae, found)
             if left <= _LEFT:
                 # The peak is near the beginning, and narrow.
-                grid = replace(grid, moves=min(grid.moves, _EARLY), splits=_PARTS * _CLOSER)
-                return max(peak, self._least_peak(grid, self._rows(grid, False), peak)), iae
+                near = replace(grid, moves=min(grid.moves, _EARLY), splits=_PARTS * _CLOSER)
+                return max(peak, self._least_peak(near, self._rows(near, False), peak)), iae
             peak = max(peak, self._least_peak(grid, self._rows(grid, False), peak))
         return peak, iae
 
     def _grids(self) -> list[_Grid]:
         """Each longer than the one before, to the end of the window."""
-        scan, is_free = self.loop.scan, math.isinf(self.high)
+        scan = self.loop.scan
         if scan and scan > self.lasts:
             return []
-        step = scan or self.lasts / _MOVES
-        if not is_free:
-            wanted = min(_ROOM * self._returns(), self.lasts) / _MOVES
-            step = scan * max(1, math.ceil(wanted / scan)) if scan else wanted
-        zeros = self._zeros()
+        if math.isinf(self.high):
+            step = scan or self.lasts / _MOVES
+            moves = min(_MOVES, int(self.lasts / step + 1e-9))
+            if self._zeros():
+                moves = min(moves, max(2, int(_FAR / (max(self._zeros()) * step))))
+            return [_Grid(step, moves, True)]
         grids = []
+        reach = min(max(_ROOM * self._returns(), _MOVES * (scan or 0.0)), self.lasts)
         while True:
-            most = int(self.lasts / step + 1e-9)
-            moves = min(_MOVES, most)
-            if is_free and zeros:
-                moves = min(moves, max(2, int(_FAR / (max(zeros) * step))))
-            grids.append(_Grid(step, moves, step == scan))
-            if is_free or most <= _MOVES:
+            grids.append(self._reaching(reach))
+            if reach >= self.lasts:
                 return grids
-            longest = self.lasts / _MOVES
-            if scan:
-                longest = scan * math.ceil(longest / scan)
-            step = min(step * _GROWTH, longest)
+            reach = min(_GROWTH * reach, self.lasts)
+
+    def _reaching(self, reach: float) -> _Grid:
+        """The grid of a time [s]; few scans are looked at closely, as PV moves between them too."""
+        scan = self.loop.scan
+        if not scan:
+            return _Grid(reach / (2 * _MOVES), 2 * _MOVES, False, _PARTS // 2)
+        scans = max(1, math.floor(reach / scan + 1e-9))
+        if scans <= _MOVES:
+            return _Grid(scan, scans, True)
+        wide = math.ceil(scans / (2 * _MOVES))
+        return _Grid(scan * wide, scans // wide, wide == 1, _PARTS // 2)
 
     def _returns(self) -> float:
         """How long PV takes to come back with the output at its limit all the time [s]."""
@@ -400,7 +409,7 @@ class _Rest:
         return self._proved(grid, rows, weights) + max(0.0, 1.0 - total) * fixed
 
     def _scaled(self, rows: _Rows, grid: _Grid) -> tuple[Array, Array, float, float, float]:
-        """f and A of size 1, the limits in that scale, and the size of f."""
+        """The rows f and A of size 1, the limits in that scale, and the size of f."""
         a = rows.moved(grid)
         size, by = float(np.abs(rows.free).max()), float(np.abs(a).max())
         if not size or not by:
