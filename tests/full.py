@@ -23,7 +23,7 @@ import numpy as np
 
 import tests.conftest  # noqa: F401 - the settings of hypothesis, which pytest would have loaded
 from tests.model.test_formula import fuzzed
-from tests.model.test_robustness import brinks, sampled_verdicts
+from tests.model.test_robustness import brinks, sampled_circles, sampled_verdicts
 from tests.model.test_stability import verdicts
 from tests.model.test_transfer import laws, limits, step_responses
 from tests.plain import sampled_pv
@@ -416,6 +416,9 @@ CAMPAIGNS: Final[dict[str, Campaign]] = {
     "margins made": Campaign(_judged(brinks, 21, 0.0, "share wrong"), 10, 1000),
     "sampled verdicts": Campaign(
         _judged(sampled_verdicts, 31, 1e-6, "difference of a gain margin"), 10, 1000
+    ),
+    "sampled margins used up": Campaign(
+        _judged(sampled_circles, 32, 1e-6, "nearest eigenvalue from the unit circle"), 10, 500
     ),
     "formulas typed and broken": Campaign(
         _judged(fuzzed, 13, 1.0, "seconds of work for one"), 300, 100_000

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import math
+from typing import Any
 
 import numpy as np
 import pytest
@@ -25,7 +26,8 @@ def test_the_cost_is_that_of_another_solver(seed: int) -> None:
     c = rng.normal(size=m) @ a + rng.exponential(1.0, n)
     b = a @ inside
     x, prices = least(a, b, c, above, 1e-8)
-    other = linprog(c, A_eq=a, b_eq=b, bounds=list(zip(np.zeros(n), above, strict=True)))
+    solve: Any = linprog
+    other = solve(c, A_eq=a, b_eq=b, bounds=[(0.0, top) for top in above.tolist()])
     assert float(c @ x) == pytest.approx(other.fun, rel=1e-6, abs=1e-6)
     assert np.abs(a @ x - b).max() < 1e-6
     assert x.min() >= 0.0

@@ -10,7 +10,7 @@ from __future__ import annotations
 import math
 import random
 from dataclasses import dataclass, replace
-from typing import Final
+from typing import Any, Final
 
 import numpy as np
 from numpy.typing import NDArray
@@ -26,7 +26,9 @@ from workbench.sim.loop import simulate
 from workbench.sim.metrics import measure
 from workbench.sim.scenario import Events
 
+solve: Any = linprog
 Array = NDArray[np.float64]
+Whole = NDArray[np.signedinteger]
 
 
 @dataclass(frozen=True)
@@ -143,7 +145,7 @@ class Lattice:
         free = np.abs(self.task.size * self.task.upset.step(late / 2000, 2001))
         return float(free.max()), float(np.trapezoid(free, time))
 
-    def judged(self, free: Array, answer: Array, moves: Array, at: Array) -> tuple[float, float]:
+    def judged(self, free: Array, answer: Array, moves: Array, at: Whole) -> tuple[float, float]:
         """Peak and IAE of PV over all, for moves (m,) made at lattice instants `at` (m,)."""
         pv = free.copy()
         for move, begin in zip(moves, at, strict=True):
@@ -178,7 +180,7 @@ REACHED: Final = (
     (Task(TURNS, scan=4.0, low=-8.0, high=8.0), 4.0, 50),
     (Task(TURNS, low=-8.0, high=8.0), 0.2, 100),
     (Task(Way(0.05, (), 4.0, integrators=1), scan=1.0, low=-20.0, high=20.0), 1.0, 40),
-    (Task(Way(0.05, (7.0,), 4.0, integrators=1), low=-20.0, high=20.0), 0.2, 100),
+    (Task(Way(0.05, (7.0,), 4.0, integrators=1), low=-20.0, high=20.0), 0.2, 60),
     (Task(Way(-2.0, (-15.0,), 1.0), scan=0.5, low=-20.0, high=20.0, until=60.0), 0.5, 60),
     (Task(Way(1.0, (10.0,), 2.0), Way(2.0, (20.0,), 9.0), 1.0, low=-20.0, high=20.0), 1.0, 60),
     (Task(Way(1.5, (12.0, 6.0, 3.0), 4.0), scan=2.0, low=-30.0, high=30.0), 2.0, 50),
@@ -240,9 +242,10 @@ def _best(task: Task, pace: float, moves: int, *, is_peak: bool) -> float:
         cost = np.append(1e-4 / float(width.sum()) * cost[:-1], 1.0)
     one = csr_matrix(np.ones((rows, 1)))
     sides = bmat([[a, -eye(rows), None], [-a, -eye(rows), None], [None, eye(rows), -one]])
-    bounds = [(low, high)] * n + [(0.0, None)] * rows + [(fixed, None)]
+    bounds: list[tuple[float, float]] = [(low, high)] * n + [(0.0, math.inf)] * rows
+    bounds.append((fixed, math.inf))
     target = np.concatenate((-free[looked], free[looked], np.zeros(rows)))
-    answered = linprog(cost, A_ub=sides, b_ub=target, bounds=bounds, method="highs-ipm")
+    answered: Any = solve(cost, A_ub=sides, b_ub=target, bounds=bounds, method="highs-ipm")
     assert answered.x is not None, answered.message
     level = np.clip(answered.x[:n], low, high)
     closer = Lattice(task, lattice.spacing / _CLOSER)

@@ -121,16 +121,17 @@ class _Point:
         found[np.diag_indices_from(found)] *= 1.0 + 1e-13
         return np.asarray(found, np.float64)
 
-    def moves(self, xz: Array, sw: Array) -> tuple[Array, ...]:
+    def moves(self, xz: Array, sw: Array) -> tuple[Array, Array, Array, Array, Array]:
         """Newton's step in x, s, y, z, w towards products x z and s w changed by `xz` and `sw`."""
         x, s, z, w = self.x, self.s, self.z, self.w
         onto = np.where(self.bounded, (sw - w * self.room) / s, 0.0)
         pull = self.slope - xz / x + onto
-        dy = np.linalg.solve(self.normal, self.lacking + self.a @ (self.weight * pull))
-        dx = self.weight * (dy @ self.a - pull)
-        ds = np.where(self.bounded, self.room - dx, 0.0)
-        dz, dw = (xz - z * dx) / x, np.where(self.bounded, (sw - w * ds) / s, 0.0)
-        return dx, ds, dy, dz, dw
+        target = self.lacking + self.a @ (self.weight * pull)
+        dy: Array = np.asarray(np.linalg.solve(self.normal, target), np.float64)
+        dx: Array = self.weight * (dy @ self.a - pull)
+        ds: Array = np.where(self.bounded, self.room - dx, 0.0)
+        dw: Array = np.where(self.bounded, (sw - w * ds) / s, 0.0)
+        return dx, ds, dy, (xz - z * dx) / x, dw
 
     def onward(self) -> _Point:
         """One step: a predictor aims at the optimum, a corrector stays away from the walls."""

@@ -107,6 +107,7 @@ _MARGINS: Final = (
     ("max_complementary_sensitivity", "maximum complementary sensitivity", ""),
     ("gain_crossover_rad_s", "gain crossover", "rad/s"),
     ("phase_crossover_rad_s", "phase crossover", "rad/s"),
+    ("bandwidth_rad_s", "bandwidth, to -3 dB", "rad/s"),
 )
 """Field of `Margins` and key in JSON -> words, unit."""
 

@@ -191,6 +191,7 @@ FIGURES: Final = (
     Row("Final OP", _measure("final_op"), "OP"),
     Row("Peak floor", _floor("floor_peak_deviation"), "PV", above=_floor("peak_to_floor")),
     Row("IAE floor", _floor("floor_load_iae"), "PV s", above=_floor("load_iae_to_floor")),
+    Row("Bandwidth", _margin("bandwidth_rad_s"), "rad/s"),
     Row("Own gain", _own_gain, "OP per PV"),
 )
 """The figures shown, the most telling first."""
