@@ -86,6 +86,8 @@ def _plant_data(plant: PlantFigures) -> Json:
         if reason:
             data[f"{key}_reason"] = reason
     data["dead_time_s"] = float(plant.dead_time_s)
+    put(data, "least_max_sensitivity", plant.least_max_sensitivity)
+    put(data, "least_max_complementary_sensitivity", plant.least_max_complementary_sensitivity)
     return data
 
 
@@ -150,6 +152,7 @@ def assess_text(
         ("poles", plant.poles_reason or points(plant.poles)),
         ("zeros", plant.zeros_reason or points(plant.zeros)),
         ("OP is", found.valve),
+        *_forbidden(plant),
     ]
     lines = [*heading(case, width, found.action), "Plant", *two_columns(rows, width)]
     if small is not None:
@@ -166,6 +169,16 @@ def assess_text(
         lines += ["", "Loop, sampled", *two_columns([("none", found.sampled_reason)], width)]
     told = [note for note in found.notes if not note.text.startswith("NOT STABLE")]
     return "\n".join([*lines, *note_lines(told, width)])
+
+
+def _forbidden(plant: PlantFigures) -> Rows:
+    """What no controller can undercut, where the plant forbids anything."""
+    found = (
+        ("Ms", plant.least_max_sensitivity.value),
+        ("Mt", plant.least_max_complementary_sensitivity.value),
+    )
+    words = [f"{name} {text(value, digits=3)}" for name, value in found if value and value > 1.0]
+    return [("at least", " and ".join(words) + ", whatever the controller")] if words else []
 
 
 def _small_rows(small: Sequence[Reduced], width: int) -> list[str]:
