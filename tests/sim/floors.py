@@ -324,16 +324,27 @@ def _random_task(draw: random.Random) -> Task:
 
 
 def _closed(draw: random.Random, task: Task) -> tuple[float, float] | None:
-    """A PID loop of the program's own, stable or not."""
+    """A PID loop of the program's own, stable or not; none that ran away or is limited analogue."""
     plant = task.plant
     gain = draw.uniform(0.2, 3.0) / max(abs(plant.gain) * (1.0 + plant.dead_time), 0.05)
     gains = Gains(gain, gain / draw.uniform(3.0, 60.0), gain * draw.choice((0.0, 2.0)), 0.5)
-    loop = task.loop(gains)
-    if loop.scan is None:
-        loop = replace(loop, low=None, high=None)
-    measures = measure(simulate(loop, task.events), task.events)
-    had, area = measures.load_peak_deviation.value, measures.load_iae.value
-    return None if had is None or area is None else (had, area)
+    if task.scan is None and task.low is not None:
+        return None
+    trace = simulate(task.loop(gains), task.events)
+    if trace.diverged:
+        return None
+    if task.scan is None:
+        measures = measure(trace, task.events)
+        had, area = measures.load_peak_deviation.value, measures.load_iae.value
+        return None if had is None or area is None else (had, area)
+    # What the controller did, played anew: the rows of a trace pass by the tip of a peak.
+    lattice = Lattice(task, task.scan / 12)
+    at = np.arange(0, lattice.count, 12)
+    instants = task.first + at * lattice.spacing
+    rows = np.searchsorted(trace.time, instants + 1e-6 * task.scan, side="right") - 1
+    moved = np.diff(trace.output[rows], prepend=0.0)
+    answer = task.plant.step(lattice.spacing, lattice.count)
+    return lattice.judged(lattice.free(), answer, moved, at)
 
 
 def _open(draw: random.Random, task: Task) -> tuple[float, float]:
