@@ -44,7 +44,7 @@ def test_an_inner_feedback_with_dead_time_says_why_not() -> None:
 def test_no_stable_loop_undercuts_the_least_peaks() -> None:
     rng = np.random.default_rng(61)
     tried = 0
-    while tried < 60:
+    while tried < 25:
         slow, dead_time = float(rng.uniform(5.0, 30.0)), float(rng.uniform(0.2, 4.0))
         zero = float(rng.choice([0.0, rng.uniform(0.1, 2.0)]))
         plant = TransferFunction.ratio((-zero, 1.0), [(slow, -1.0)], dead_time)
