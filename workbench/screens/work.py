@@ -13,8 +13,8 @@ from pathlib import Path
 
 from workbench import study
 from workbench.case import case as cases
-from workbench.case.case import Case
-from workbench.case.files import CaseFile, read_case, save_case
+from workbench.case.case import Case, Revision
+from workbench.case.files import CaseFile, Merge, merge, read_case, save_case, write_new
 from workbench.errors import problem
 from workbench.screens import drafts
 from workbench.study import Evaluation
@@ -137,8 +137,14 @@ class Work:
 
     def take_up(self, draft: drafts.Draft) -> bool:
         """Bring the unsaved work of an earlier session back.  Raises `InputError`."""
+        taken = cases.edit_all(self.case, dict(draft.changes))
         self.draft = None
-        return self.change(cases.edit_all(self.case, dict(draft.changes)))
+        self.keeper.replaces(draft)
+        return self.change(taken)
+
+    def put_back(self, entry: Revision) -> bool:
+        """The settings of a history entry, in one change.  Raises `InputError`."""
+        return self.change(cases.with_settings(self.case, entry))
 
     def drop(self, draft: drafts.Draft) -> None:
         """Forget the unsaved work of an earlier session."""
@@ -158,6 +164,32 @@ class Work:
         self._changes = tuple(pair for pair in pairs if pair[1] != pair[2])
 
     # -- saving ------------------------------------------------------------------------------------
+
+    def merge(self) -> Merge:
+        """Take over what someone else saved meanwhile and keep the work over it.
+
+        Nothing is saved.  Raises `InputError` where the file can no longer be read.
+        """
+        found = merge(self.file, self.case)
+        self.file = found.file
+        if not self.change(found.case):
+            self._look()
+        return found
+
+    def save_beside(self, *, who: str, why: str, kind: str, now: datetime, reference: str) -> Path:
+        """Write the case with a history entry into a new file beside its own.
+
+        The work goes on in the new file.  Raises `InputError`.
+        """
+        recorded = study.record_change(
+            self.case, who=who, why=why, kind=kind, now=now, reference=reference
+        )
+        path = self.path.with_name(f"{self.path.stem}_{now:%Y%m%d_%H%M%S}.toml")
+        self.file = write_new(path, recorded)
+        self._set(self.file.case)
+        self.keeper.write()
+        self.keeper = drafts.Keeper(self.path)
+        return path
 
     def save(self, *, who: str, why: str, kind: str, now: datetime, reference: str = "") -> None:
         """Write the case with a history entry.  Raises `InputError`; the work is kept then."""
