@@ -367,8 +367,12 @@ def hunks(old: str, new: str) -> list[tuple[list[str], list[str]]]:
 
 
 @given(styles(), st.data())
-@settings(max_examples=100)
+@settings(max_examples=60)
 def test_changing_one_key_changes_only_its_line(text: str, data: st.DataObject) -> None:
+    one_key_changes_its_line(text, data)
+
+
+def one_key_changes_its_line(text: str, data: st.DataObject) -> None:
     case = parse_case(text)
     bound = ("plant.shape", "plant.formula", "plant.blocks", "plant.load", "controller.gain")
     free = [k for k in keys(case) if k not in bound and not k.endswith("proportional_band")]
@@ -955,15 +959,6 @@ def test_two_writers_lose_no_entry(file: CaseFile) -> None:
         kept = [entry.why for entry in history if entry.who == who]
         assert kept == [f"number {number}" for number in range(15)]
     assert alone(file)
-
-
-def test_a_killed_save_leaves_the_old_file_or_the_new(file: CaseFile) -> None:
-    told, _ = started(f"kill_saves({file.path!r}, 20, 7)").communicate(timeout=60)
-    old, new, neither, left = (int(word) for word in told.split())
-
-    assert (old + new, neither) == (20, 0)
-    # The save after the last kill swept up what the killed ones had left.
-    assert left == 1
 
 
 def test_a_save_may_die_at_any_step(file: CaseFile) -> None:
