@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import json
+import os
 import subprocess
 import sys
 from pathlib import Path
@@ -313,6 +314,8 @@ def test_a_file_that_changed_meanwhile_is_not_overwritten_and_the_work_is_kept(
             await press(pilot, "s")
             await type_in(pilot, "mine")
             await press(pilot, "enter")
+            page_of(pilot, ConflictPage)
+            await press(pilot, "escape")
             page_of(pilot, SavePage)
             shown = text_of(pilot)
             assert "not saved" in shown
@@ -482,7 +485,11 @@ def test_a_running_session_keeps_its_draft_to_itself(folder: Path) -> None:
         "work.keeper.write(); print('kept', flush=True); sys.stdin.read()"
     )
     other = subprocess.Popen(
-        [sys.executable, "-c", script], stdin=subprocess.PIPE, stdout=subprocess.PIPE, text=True
+        [sys.executable, "-c", script],
+        env={**os.environ, "PYTHONPATH": str(Path(__file__).parents[2])},
+        stdin=subprocess.PIPE,
+        stdout=subprocess.PIPE,
+        text=True,
     )
     assert other.stdout is not None
     assert other.stdout.readline() == "kept\n"

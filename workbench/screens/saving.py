@@ -3,15 +3,17 @@
 from __future__ import annotations
 
 import getpass
-from collections.abc import Callable, Iterable
+from collections.abc import Iterable
 from datetime import datetime
 
 from textual import on
+from textual.message import Message
 from textual.widget import Widget
+from textual.worker import Worker, WorkerState
 
 from workbench import units
 from workbench.case.case import Revision
-from workbench.case.files import Merge, changed_on_disk
+from workbench.case.files import CaseFile, Merge, changed_on_disk
 from workbench.errors import WorkbenchError
 from workbench.screens.cells import Line
 from workbench.screens.drafts import Draft
@@ -20,7 +22,7 @@ from workbench.screens.figures import cautions
 from workbench.screens.keys import Command, bindings
 from workbench.screens.page import MOVING, Page
 from workbench.screens.panel import Panel, remark, wrapped
-from workbench.screens.work import Work
+from workbench.screens.work import Work, Writer
 from workbench.study import HANDOVER
 
 KINDS = units.quantities(Revision)["kind"].choices
@@ -58,6 +60,14 @@ def changed_settings(changes: Iterable[tuple[str, str, str]]) -> list[Line]:
     ]
 
 
+class Written(Message):
+    """Posted when the work is on the disk, or why it is not."""
+
+    def __init__(self, file: CaseFile | None, fault: str = "") -> None:
+        super().__init__()
+        self.file, self.fault = file, fault
+
+
 class SavePage(Page):
     """Who saves, and why."""
 
@@ -80,6 +90,7 @@ class SavePage(Page):
     def __init__(self, work: Work, and_then_leave: bool = False) -> None:
         super().__init__()
         self.work, self.and_then_leave = work, and_then_leave
+        self._saving = False
         self.entry: dict[str, str] = {}
         """What was filled in, for the history."""
         self._why = Entry("  why: ", css_id="why")
@@ -106,8 +117,9 @@ class SavePage(Page):
 
     @on(Entry.Left)
     def left(self) -> None:
-        """Back without saving."""
-        self.action_back()
+        """Back without saving; what is being written is waited for."""
+        if not self._saving:
+            self.action_back()
 
     @on(Entry.Submitted)
     def submitted(self) -> None:
@@ -124,23 +136,46 @@ class SavePage(Page):
             "kind": kind,
             "reference": self._reference.value.strip(),
         }
-        self._save(self.work.save)
+        self._save(beside=False)
 
     def save_beside(self) -> None:
         """Into a new file, which leaves what someone else saved as it is."""
-        self._save(self.work.save_beside)
+        self._save(beside=True)
 
-    def _save(self, how: Callable[..., object]) -> None:
+    def _save(self, *, beside: bool) -> None:
+        """In a thread: a slow disk must not hold up the keys."""
+        if self._saving:
+            return
+        self._saving = True
         now = datetime.now().astimezone().replace(microsecond=0)
+        write = self.work.writer(self.entry, now, beside=beside)
+        self.tell("saving ...", "quiet")
+        self.run_worker(lambda: self._write(write), thread=True, exit_on_error=False)
+
+    def _write(self, write: Writer) -> None:
         try:
-            how(**self.entry, now=now)
+            self.post_message(Written(write()))
         except (WorkbenchError, OSError) as fault:
-            self._changes.fault = str(fault)
+            self.post_message(Written(None, str(fault)))
+
+    def on_written(self, message: Written) -> None:
+        """Back to the loop; or say why nothing was saved."""
+        self._saving = False
+        if message.file is None:
+            self._changes.fault = message.fault
             self._changes.redraw()
             self.tell("not saved", "worse")
             self._ask_about_others()
             return
+        self.work.is_saved_in(message.file)
         self.program.saved(self.work, self.and_then_leave)
+
+    def on_worker_state_changed(self, event: Worker.StateChanged) -> None:
+        """A fault of the program itself must not take the work with it."""
+        if event.state is WorkerState.ERROR:
+            self._saving = False
+            fault = event.worker.error
+            self.tell(f"not saved ({type(fault).__name__}: {fault})", "worse")
 
     def _ask_about_others(self) -> None:
         """Where someone else saved meanwhile, there are three ways on."""

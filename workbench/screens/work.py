@@ -7,6 +7,7 @@ from __future__ import annotations
 
 import hashlib
 import math
+from collections.abc import Callable, Mapping
 from dataclasses import replace
 from datetime import datetime
 from pathlib import Path
@@ -176,34 +177,46 @@ class Work:
             self._look()
         return found
 
-    def save_beside(self, *, who: str, why: str, kind: str, now: datetime, reference: str) -> Path:
-        """Write the case with a history entry into a new file beside its own.
+    def writer(self, entry: Mapping[str, str], now: datetime, *, beside: bool) -> Writer:
+        """What writes the present case with a history entry; it may run in any thread.
 
-        The work goes on in the new file.  Raises `InputError`.
+        Parameters
+        ----------
+        entry
+            `who`, `why`, `kind` and `reference`.
+        now
+            When the entry is made.
+        beside
+            Into a new file beside the case's own, which is left as it is.
         """
-        recorded = study.record_change(
-            self.case, who=who, why=why, kind=kind, now=now, reference=reference
-        )
-        path = self.path.with_name(f"{self.path.stem}_{now:%Y%m%d_%H%M%S}.toml")
-        self.file = write_new(path, recorded)
-        self._set(self.file.case)
-        self.keeper.write()
-        self.keeper = drafts.Keeper(self.path)
-        return path
+        file, case = self.file, self.case
+        name = f"{self.path.stem}_{now:%Y%m%d_%H%M%S}.toml"
 
-    def save(self, *, who: str, why: str, kind: str, now: datetime, reference: str = "") -> None:
-        """Write the case with a history entry.  Raises `InputError`; the work is kept then."""
-        recorded = study.record_change(
-            self.case, who=who, why=why, kind=kind, now=now, reference=reference
-        )
-        self.file = save_case(self.file, recorded)
-        self._set(self.file.case)
+        def write() -> CaseFile:
+            recorded = study.record_change(case, now=now, **entry)
+            if beside:
+                return write_new(self.path.with_name(name), recorded)
+            return save_case(file, recorded)
+
+        return write
+
+    def is_saved_in(self, file: CaseFile) -> None:
+        """The work is in a file now: its own, or a new one in which it goes on."""
+        elsewhere = file.path != self.file.path
+        self.file = file
+        self._set(file.case)
         if self.evaluation is not None:
             # Only the history is new; the figures are those of the same settings.
             same = self.pinned is self.evaluation
             self.evaluation = replace(self.evaluation, case=self.case)
             self.pinned = self.evaluation if same else self.pinned
-        self.keeper.write()
+        self.keeper.write_last()
+        if elsewhere:
+            self.keeper = drafts.Keeper(self.path)
+
+
+Writer = Callable[[], CaseFile]
+"""Writes the work.  Raises `InputError` or `OSError`; the work is kept then."""
 
 
 def nudged(quantity: Quantity, text: str, factor: float) -> str:
