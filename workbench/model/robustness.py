@@ -138,7 +138,7 @@ def _held_delay(loop: Loop, frequency: float, delay: float) -> float:
         frequency, delay = frequency + change, delay + more
         if delay < 0.0 or abs(delay - first) > sampled.scan:
             return first
-        if abs(more) <= 1e-12 * delay and abs(change) <= 1e-9 * frequency:
+        if abs(more) <= 1e-9 * delay and abs(change) <= 1e-7 * frequency:
             return delay
     return first
 

@@ -22,7 +22,8 @@ from workbench.model.structures import Structure
 from workbench.model.transfer import TransferFunction
 from workbench.records.record import Record
 from workbench.sim.floor import floor
-from workbench.sim.loop import settle_horizon, simulate
+from workbench.sim.instruments import Instruments
+from workbench.sim.loop import Trace, settle_horizon, simulate
 from workbench.sim.metrics import Measures, measure
 from workbench.sim.scenario import Events, Scenario
 from workbench.sim.structures import Inside
@@ -107,15 +108,14 @@ def _ratio(found: Figure, floor: Figure) -> Figure:
     return Figure.of(found.value / floor.value)
 
 
-def predict(case: Case, seed: int = 0, like: Prediction | None = None) -> Prediction:
-    """Run the closed loop through the case's scenario.
+def predicted_measures(case: Case) -> Measures:
+    """The measures of `predict` alone, for many settings side by side; raises as it does."""
+    loop, events, _, trace = _run(case, 0, None)
+    return _in_units(case, measure(trace, events, low=loop.low, high=loop.high))
 
-    Where the scenario leaves its end open it lasts long enough to settle, or as long as the
-    prediction `like` with which it is to be compared.
 
-    Raises `InputError` where plant or controller is missing, or the plant has a dead time inside an
-    inner feedback.
-    """
+def _run(case: Case, seed: int, like: Prediction | None) -> tuple[Loop, Events, Instruments, Trace]:
+    """The loop, what happens to it, what stands between it and the plant, and its course."""
     loop = loop_of(case)
     missing = no_time_domain(loop.plant)
     if missing:
@@ -127,6 +127,19 @@ def predict(case: Case, seed: int = 0, like: Prediction | None = None) -> Predic
     events = _events(case, loop, seed, like)
     instruments = instruments_of(case)
     trace = simulate(loop, events, instruments)
+    return loop, events, instruments, trace
+
+
+def predict(case: Case, seed: int = 0, like: Prediction | None = None) -> Prediction:
+    """Run the closed loop through the case's scenario.
+
+    Where the scenario leaves its end open it lasts long enough to settle, or as long as the
+    prediction `like` with which it is to be compared.
+
+    Raises `InputError` where plant or controller is missing, or the plant has a dead time inside an
+    inner feedback.
+    """
+    loop, events, instruments, trace = _run(case, seed, like)
     pv, op = case.pv, case.op
     trend = Trend(
         trace.time,
