@@ -96,12 +96,12 @@ def test_the_formulas_are_in_their_own_unit_of_time() -> None:
         (
             {"inner__plant": "1/(2 s + 1)", "inner__gain": "1", "inner__max": "40"},
             "inner.start",
-            "outside min to max",
+            "outside the limits",
         ),
         (
             {"inner__plant": "1/(2 s + 1)", "inner__gain": "1", "inner__min": "-5"},
             "inner.min",
-            "give one inside",
+            "give a value inside",
         ),
         (
             {"inner__plant": "1", "inner__gain": "1", "inner__min": "60", "inner__max": "55"},

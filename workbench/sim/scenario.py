@@ -4,11 +4,19 @@ from __future__ import annotations
 
 from collections.abc import Iterator
 from dataclasses import dataclass
+from typing import Final
 
 from workbench.errors import InputError, Problem
-from workbench.model.pid import Gains
+from workbench.model.pid import Controller, Gains
 from workbench.sim.signals import Ramp, Signal, Sine, Step
-from workbench.units import Amount, check_fields, quantity
+from workbench.units import Amount, check_fields, one_of, quantities, quantity
+
+NEW_SETTINGS: Final = {
+    "new_gain": "gain",
+    "new_integral": "integral",
+    "new_derivative": "derivative",
+}
+"""Keys of settings that change on the way, and what they are of the controller."""
 
 
 @dataclass(frozen=True)
@@ -81,6 +89,41 @@ class Scenario:
     dead_time_factor: float = quantity(
         "what its dead time is then multiplied by", "number", low=0, default=1.0
     )
+    settings_at: Amount | None = quantity(
+        "when the controller gets other settings, in automatic",
+        "duration",
+        low=0,
+        default=None,
+        example="600 s",
+    )
+    new_gain: float | None = quantity(
+        "its gain from then on; left out: as it is", "number", "%/%", low=0, default=None
+    )
+    new_integral: str = quantity(
+        "its integral setting from then on, or none; left out: as it is",
+        "text",
+        default="",
+        example="20 s",
+    )
+    new_derivative: str = quantity(
+        "its derivative setting from then on, or none; left out: as it is",
+        "text",
+        default="",
+        example="3 s",
+    )
+    inner_mode_at: Amount | None = quantity(
+        "when the inner loop of a cascade is put in another mode",
+        "duration",
+        low=0,
+        default=None,
+        example="300 s",
+    )
+    inner_mode: str = quantity(
+        "the mode that it then gets",
+        "choice",
+        default="cascade",
+        choices=("cascade", "automatic", "manual"),
+    )
     until: Amount | None = quantity(
         "end of the prediction; left out: long enough for both to settle",
         "duration",
@@ -116,6 +159,32 @@ class Scenario:
         ):
             mend = "give manual_at before it, or leave it out"
             yield Problem("does not come after manual", mend, "automatic_at")
+        yield from self._settings_faults()
+
+    def _settings_faults(self) -> Iterator[Problem]:
+        """What the new settings lack, or do not say by themselves."""
+        given = [key for key in NEW_SETTINGS if getattr(self, key) not in (None, "")]
+        if self.settings_at is not None and not given:
+            mend = f"give {one_of(list(NEW_SETTINGS))}"
+            yield Problem("has no other setting to go with it", mend, "settings_at")
+        for key in given:
+            if self.settings_at is None:
+                yield Problem("has no time to begin at", "give settings_at too", key)
+        for key in ("new_integral", "new_derivative"):
+            try:
+                self.new_amount(key)
+            except InputError as fault:
+                yield from fault.at(key=key).problems
+
+    def new_amount(self, key: str) -> Amount | None:
+        """The new integral or derivative setting that is given; `None` for none.
+
+        Raises `InputError` where it cannot be read.
+        """
+        words = getattr(self, key)
+        found = quantities(Controller)[NEW_SETTINGS[key]].read(words) if words else None
+        assert found is None or isinstance(found, Amount)
+        return found
 
     def recorded_load(self) -> tuple[tuple[float, float], ...]:
         """Seconds after `load_at` and shares of the load step.  Raises `ValueError`."""
@@ -168,6 +237,10 @@ class Events:
     """When the controller gets other settings [s]."""
     settings: Gains | None = None
     """Those settings."""
+    inner_mode_at: float | None = None
+    """When the inner loop of a cascade gets another mode [s]."""
+    inner_mode: str = "cascade"
+    """That mode."""
 
     @property
     def setpoint(self) -> Signal:

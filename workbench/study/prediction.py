@@ -10,8 +10,9 @@ import numpy as np
 from numpy.typing import NDArray
 
 from workbench.case.case import Case
-from workbench.errors import ModelError, Problem, problem
+from workbench.errors import InputError, ModelError, Problem, problem
 from workbench.model.feedback import Loop
+from workbench.model.pid import Gains
 from workbench.model.response import (
     Signal,
     final_value,
@@ -24,9 +25,15 @@ from workbench.model.transfer import TransferFunction
 from workbench.records.record import Record
 from workbench.sim.loop import settle_horizon, simulate
 from workbench.sim.metrics import Measures, measure
-from workbench.sim.scenario import Events, Scenario
+from workbench.sim.scenario import NEW_SETTINGS, Events, Scenario
 from workbench.sim.structures import Inside
-from workbench.study.loop import instruments_of, load_scale, loop_of, no_time_domain
+from workbench.study.loop import (
+    controller_of,
+    instruments_of,
+    load_scale,
+    loop_of,
+    no_time_domain,
+)
 from workbench.units import Figure, rounded, text
 
 Floats = NDArray[np.float64]
@@ -192,7 +199,36 @@ def _events(case: Case, loop: Loop, seed: int, like: Prediction | None) -> Event
         change_at=scenario.change_at.seconds if scenario.change_at else None,
         gain_factor=scenario.gain_factor,
         dead_time_factor=scenario.dead_time_factor,
+        settings_at=scenario.settings_at.seconds if scenario.settings_at else None,
+        settings=_new_settings(case),
+        inner_mode_at=scenario.inner_mode_at.seconds if scenario.inner_mode_at else None,
+        inner_mode=scenario.inner_mode,
     )
+
+
+def _new_settings(case: Case) -> Gains | None:
+    """The settings that the controller gets on the way; `None` where it keeps its own.
+
+    Raises `InputError` where its form does not take them, under the keys of the scenario.
+    """
+    scenario, controller = case.scenario, controller_of(case)
+    if scenario.settings_at is None:
+        return None
+    changed = controller
+    try:
+        if scenario.new_gain is not None:
+            changed = replace(changed, gain=scenario.new_gain, proportional_band=None)
+        if scenario.new_integral:
+            changed = replace(changed, integral=scenario.new_amount("new_integral"))
+        if scenario.new_derivative:
+            changed = replace(changed, derivative=scenario.new_amount("new_derivative"))
+        return changed.gains()
+    except InputError as fault:
+        keys = {name: key for key, name in NEW_SETTINGS.items()}
+        raise InputError(
+            replace(each, key=f"scenario.{keys.get(each.key, 'settings_at')}")
+            for each in fault.problems
+        ) from None
 
 
 _SWINGS: Final = 8
@@ -210,7 +246,13 @@ def _last_move(
     moves = [at + (scenario.setpoint_ramp.seconds if scenario.setpoint_ramp else 0.0)]
     moves = moves if setpoint else []
     moves += [load_at + lasting] if load else []
-    others = (scenario.manual_at, scenario.automatic_at, scenario.change_at)
+    others = (
+        scenario.manual_at,
+        scenario.automatic_at,
+        scenario.change_at,
+        scenario.settings_at,
+        scenario.inner_mode_at,
+    )
     return max([*moves, *(other.seconds for other in others if other)], default=0.0)
 
 
