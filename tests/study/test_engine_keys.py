@@ -2,12 +2,16 @@
 
 from __future__ import annotations
 
+import hashlib
+from datetime import datetime
+from pathlib import Path
+
 import numpy as np
 import pytest
 
 from workbench import study
 from workbench.case.case import Case, edit_all, new_case
-from workbench.case.files import parse_case
+from workbench.case.files import parse_case, read_case
 from workbench.case.writing import format_case
 from workbench.errors import InputError
 
@@ -127,6 +131,9 @@ def test_a_sensor_lag_counts_in_the_margins() -> None:
         ({"scenario__automatic_at": "9 s"}, "does not come after manual"),
         ({"scenario__settings_at": "9 s"}, "has no other setting to go with it"),
         ({"scenario__new_gain": "2"}, "has no time to begin at"),
+        ({"scenario__load_column": "feed"}, "has no load_file to go with"),
+        ({"scenario__load_file": "feed.csv", "scenario__load_shape": "record"}, "column's heading"),
+        ({"scenario__load_file": "feed.csv", "scenario__load_column": "feed"}, "is given for a"),
         ({"scenario__settings_at": "9 s", "scenario__new_integral": "20"}, "20"),
     ],
 )
@@ -149,6 +156,62 @@ def test_settings_that_the_form_does_not_take_are_refused_under_their_key() -> N
     with pytest.raises(InputError, match="form") as refused:
         study.predict(case)
     assert refused.value.problems[0].key == "scenario.new_integral"
+
+
+def _recorded(tmp_path: Path) -> Case:
+    rows = "time_s,feed,other\n0,20,1\n15,21.5,1\n30,21.5,2\n60,19,3\n90,20,9\n"
+    (tmp_path / "feed.csv").write_text(rows)
+    (tmp_path / "TIC-1.toml").write_text(
+        format_case(
+            a_case(
+                scenario__load_shape="record",
+                scenario__load_step="",
+                scenario__load_file="feed.csv",
+                scenario__load_column="feed",
+            )
+        )
+    )
+    return read_case(tmp_path / "TIC-1.toml").case
+
+
+def test_an_upset_from_a_file_is_its_changes_as_text(tmp_path: Path) -> None:
+    # exact: the rows less the first, in OP units as the load enters with OP
+    typed = a_case(
+        scenario__load_shape="record",
+        scenario__load_step="1",
+        scenario__load_record="0:0 15:1.5 60:-1 90:0",
+    )
+    found, wanted = study.predict(_recorded(tmp_path)).trend, study.predict(typed).trend
+    instants = np.arange(0.0, 400.0, 0.5)
+    assert np.abs(
+        np.interp(instants, found.time, found.pv) - np.interp(instants, wanted.time, wanted.pv)
+    ).max() == pytest.approx(0.0, abs=1e-9)
+
+
+def test_an_upset_file_is_known_by_its_bytes(tmp_path: Path) -> None:
+    now = datetime.fromisoformat("2026-12-01T10:00:00+01:00")
+    case = study.record_change(_recorded(tmp_path), who="mk", why="a test", now=now)
+    bytes_ = (tmp_path / "feed.csv").read_bytes()
+    assert case.scenario.load_sha256 == hashlib.sha256(bytes_).hexdigest()
+    path = tmp_path / "TIC-1.toml"
+    path.write_text(format_case(case))
+    assert study.check_case(path).ok
+    (tmp_path / "feed.csv").write_bytes(bytes_.replace(b"21.5", b"21.6"))
+    with pytest.raises(InputError, match="is not the one that was meant"):
+        study.predict(case)
+    assert [fault.key for fault in study.check_case(path).faults] == ["scenario.load_sha256"]
+    (tmp_path / "feed.csv").unlink()
+    with pytest.raises(InputError, match="'feed.csv' is not beside the case; put it there"):
+        study.predict(case)
+    assert [fault.key for fault in study.check_case(path).faults] == ["scenario.load_file"]
+
+
+def test_an_upset_file_without_its_column_says_what_it_has(tmp_path: Path) -> None:
+    case = edit_all(_recorded(tmp_path), {"scenario.load_column": "fed"})
+    with pytest.raises(InputError, match="feed") as refused:
+        study.predict(case)
+    assert refused.value.problems[0].key == "scenario.load_file"
+    assert "\n" not in str(refused.value)
 
 
 CASCADE = {

@@ -274,6 +274,8 @@ class Case:
     compensation: CompensationTable = CompensationTable()
     feedforward: FeedforwardTable = FeedforwardTable()
     inner: InnerTable = InnerTable()
+    folder: str = field(default="", compare=False)
+    """Where the case file lies, and with it the records that it names; not kept in the file."""
 
     def with_entry(self, entry: Revision) -> Case:
         """The case with one more entry at the end of its history."""

@@ -71,6 +71,17 @@ class Scenario:
         example="0:0.2 60:1 180:-0.4 300:0",
         longest=20_000,
     )
+    load_file: str = quantity(
+        "CSV record of the upset, beside the case file; its changes from the first row on act from"
+        " load_at on",
+        "text",
+        default="",
+        example="feed.csv",
+    )
+    load_column: str = quantity(
+        "heading of its column, in the unit of the load path's input", "text", default=""
+    )
+    load_sha256: str = quantity("SHA-256 of that file", "text", default="")
     manual_at: Amount | None = quantity(
         "when the controller is put in manual", "duration", low=0, default=None, example="300 s"
     )
@@ -149,8 +160,9 @@ class Scenario:
             yield Problem(f"is missing for a {self.load_shape}", "give it", "load_time")
         if self.load_shape == "record" or self.load_record:
             try:
-                if not self.recorded_load():
-                    yield Problem("is missing for a record", "give it", "load_record")
+                if not self.recorded_load() and not self.load_file:
+                    mend = "give it, or load_file and load_column"
+                    yield Problem("is missing for a record", mend, "load_record")
             except ValueError:
                 mend = "give rising seconds and values like 0:0.2 60:1 180:0"
                 yield Problem("cannot be read", mend, "load_record")
@@ -159,7 +171,22 @@ class Scenario:
         ):
             mend = "give manual_at before it, or leave it out"
             yield Problem("does not come after manual", mend, "automatic_at")
+        yield from self._file_faults()
         yield from self._settings_faults()
+
+    def _file_faults(self) -> Iterator[Problem]:
+        """What a recorded upset in a file lacks."""
+        if not self.load_file:
+            for key in ("load_column", "load_sha256"):
+                if getattr(self, key):
+                    yield Problem("has no load_file to go with", "give load_file too", key)
+            return
+        if not self.load_column:
+            yield Problem("is missing for a file", "give the column's heading", "load_column")
+        if self.load_shape != "record":
+            yield Problem(f"is given for a {self.load_shape}", "give record", "load_shape")
+        if self.load_record:
+            yield Problem("is given beside load_file", "keep one of them", "load_record")
 
     def _settings_faults(self) -> Iterator[Problem]:
         """What the new settings lack, or do not say by themselves."""

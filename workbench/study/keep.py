@@ -27,6 +27,7 @@ from workbench.records.record import read_record
 from workbench.study.assessment import assess
 from workbench.study.loop import controller_of, no_time_domain, plant_of
 from workbench.study.prediction import predict
+from workbench.study.upset import upset_faults, with_upset_named
 from workbench.units import Amount, rounded, text
 
 
@@ -129,6 +130,7 @@ def record_change(
     ]
     if faults:
         raise InputError(faults)
+    case = with_upset_named(case)
     figures = _figures_now(case)
     entry = Revision(
         at=now,
@@ -170,7 +172,8 @@ def check_case(path: str | Path) -> FileCheck:
         if not Path(path).is_file():
             raise
         return FileCheck(str(path), False, fault.problems)
-    faults = [*_record_faults(file.case, Path(path)), *_figure_faults(file.case)]
+    missing = [*_record_faults(file.case, Path(path)), *upset_faults(file.case)]
+    faults = [*missing, *([] if missing else _figure_faults(file.case))]
     placed = tuple(replace(fault, path=str(path)) for fault in faults)
     return FileCheck(str(path), not placed, placed)
 

@@ -34,6 +34,7 @@ from workbench.study.loop import (
     loop_of,
     no_time_domain,
 )
+from workbench.study.upset import recorded_upset
 from workbench.units import Figure, rounded, text
 
 Floats = NDArray[np.float64]
@@ -163,6 +164,9 @@ def _events(case: Case, loop: Loop, seed: int, like: Prediction | None) -> Event
     at = scenario.setpoint_at.seconds
     load_at = scenario.load_at.seconds if scenario.load_at else 0.0
     until = scenario.until.seconds if scenario.until else None
+    recorded = recorded_upset(case)
+    if scenario.load_file and load_step is None:
+        load_step = 1.0
     halved = setpoint_step is None and load_step is None
     if halved:
         setpoint_step, load_step = pv.range.units(5.0), case.op.range.units(5.0)
@@ -170,7 +174,8 @@ def _events(case: Case, loop: Loop, seed: int, like: Prediction | None) -> Event
     if until is None:
         horizon = settle_horizon(loop)
         load_at = at + horizon if halved else load_at
-        until = _last_move(scenario, at, load_at, setpoint_step, load_step) + horizon
+        lasting = recorded[-1][0] if recorded else 0.0
+        until = _last_move(scenario, at, load_at + lasting, setpoint_step, load_step) + horizon
         if loop.setpoint_rate is not None and setpoint_step:
             until += abs(pv.range.percent(setpoint_step)) / loop.setpoint_rate
         # Comparable as long as neither is squeezed into a corner of the other.
@@ -190,7 +195,7 @@ def _events(case: Case, loop: Loop, seed: int, like: Prediction | None) -> Event
         setpoint_ramp=scenario.setpoint_ramp.seconds if scenario.setpoint_ramp else 0.0,
         load_shape=scenario.load_shape,
         load_time=scenario.load_time.seconds if scenario.load_time else 0.0,
-        load_record=scenario.recorded_load(),
+        load_record=recorded,
         manual_at=scenario.manual_at.seconds if scenario.manual_at else None,
         manual_output=None
         if scenario.manual_output is None
@@ -241,8 +246,6 @@ def _last_move(
     """When the last thing happens that has to settle [s]."""
     time = scenario.load_time.seconds if scenario.load_time else 0.0
     lasting = {"step": 0.0, "sine": _SWINGS * time, "record": 0.0}.get(scenario.load_shape, time)
-    if scenario.load_shape == "record":
-        lasting = scenario.recorded_load()[-1][0]
     moves = [at + (scenario.setpoint_ramp.seconds if scenario.setpoint_ramp else 0.0)]
     moves = moves if setpoint else []
     moves += [load_at + lasting] if load else []
