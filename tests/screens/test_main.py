@@ -289,7 +289,40 @@ def test_every_panel_is_reached_by_its_key_and_alone_by_zoom(
     run(story())
 
 
-def test_everything_is_in_view_at_160x50(work: Work) -> None:
+def test_a_cascade_is_made_and_unmade_in_place(work: Work) -> None:
+    async def story() -> None:
+        async with running(work) as pilot:
+            page = page_of(pilot, MainPage)
+            await press(pilot, "9", "down", "down", "enter")
+            assert "inner plant:" in text_of(pilot)
+            await type_in(pilot, "0.9/(4 s + 1)")
+            await press(pilot, "enter")
+            assert work.case.inner.is_there
+            assert "inner mode" in text_of(pilot)
+            assert work.evaluation is not None
+            assert work.evaluation.prediction is not None
+            assert work.evaluation.prediction.inner is not None
+            page.panels["9"].cursor = 2
+            await press(pilot, "enter", "ctrl+u", "enter")
+            assert not work.case.inner.is_there
+            assert "inner mode" not in text_of(pilot)
+
+    run(story())
+
+
+def test_a_sticking_valve_is_set_in_place(work: Work) -> None:
+    async def story() -> None:
+        async with running(work) as pilot:
+            await press(pilot, "8", *["down"] * 6, "enter")
+            await type_in(pilot, "3")
+            await press(pilot, "enter")
+            assert work.case.valve.stick_slip == 3
+            assert "*3 %" in text_of(pilot)
+
+    run(story())
+
+
+def test_every_panel_is_in_view_or_named_at_160x50(work: Work) -> None:
     async def story() -> None:
         async with running(work, (160, 50)) as pilot:
             shown = text_of(pilot)

@@ -129,11 +129,9 @@ def test_a_sensor_lag_counts_in_the_margins() -> None:
         ({"scenario__load_shape": "sine"}, "missing for a sine"),
         ({"scenario__load_shape": "record", "scenario__load_record": "5:1 2:0"}, "cannot be read"),
         ({"scenario__automatic_at": "9 s"}, "does not come after manual"),
-        ({"scenario__settings_at": "9 s"}, "has no other setting to go with it"),
         ({"scenario__new_gain": "2"}, "has no time to begin at"),
-        ({"scenario__load_column": "feed"}, "has no load_file to go with"),
+        ({"scenario__load_sha256": "f00d"}, "has no load_file to go with"),
         ({"scenario__load_file": "feed.csv", "scenario__load_shape": "record"}, "column's heading"),
-        ({"scenario__load_file": "feed.csv", "scenario__load_column": "feed"}, "is given for a"),
         ({"scenario__settings_at": "9 s", "scenario__new_integral": "20"}, "20"),
     ],
 )

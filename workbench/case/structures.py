@@ -132,12 +132,12 @@ class InnerTable(Limited, _Extra):
         default="ideal",
         choices=("ideal", "series", "parallel"),
     )
-    gain: float | None = quantity(
+    gain: float = quantity(
         "gain of the inner controller, percent of its output per percent of the OP span",
         "number",
         "%/%",
         low=0,
-        default=None,
+        default=1.0,
     )
     integral: Amount | None = quantity(
         "its integral time; in the parallel form its integral gain",
@@ -221,11 +221,8 @@ class InnerTable(Limited, _Extra):
 
     def _faults(self) -> Iterator[Problem]:
         yield from _formula(self.plant, self.time_unit, "plant")
-        if self.gain is None:
-            yield Problem("is missing", "give the gain of the inner controller", "gain")
-        else:
-            try:
-                self.controller()
-            except InputError as fault:
-                yield from fault.problems
+        try:
+            self.controller()
+        except InputError as fault:
+            yield from fault.problems
         yield from self.limit_faults()

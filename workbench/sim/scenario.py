@@ -9,7 +9,7 @@ from typing import Final
 from workbench.errors import InputError, Problem
 from workbench.model.pid import Controller, Gains
 from workbench.sim.signals import Ramp, Signal, Sine, Step
-from workbench.units import Amount, check_fields, one_of, quantities, quantity
+from workbench.units import Amount, check_fields, quantities, quantity
 
 NEW_SETTINGS: Final = {
     "new_gain": "gain",
@@ -176,24 +176,16 @@ class Scenario:
 
     def _file_faults(self) -> Iterator[Problem]:
         """What a recorded upset in a file lacks."""
-        if not self.load_file:
-            for key in ("load_column", "load_sha256"):
-                if getattr(self, key):
-                    yield Problem("has no load_file to go with", "give load_file too", key)
-            return
-        if not self.load_column:
+        if not self.load_file and self.load_sha256:
+            yield Problem("has no load_file to go with", "give load_file too", "load_sha256")
+        if self.load_file and not self.load_column:
             yield Problem("is missing for a file", "give the column's heading", "load_column")
-        if self.load_shape != "record":
-            yield Problem(f"is given for a {self.load_shape}", "give record", "load_shape")
-        if self.load_record:
+        if self.load_file and self.load_record:
             yield Problem("is given beside load_file", "keep one of them", "load_record")
 
     def _settings_faults(self) -> Iterator[Problem]:
         """What the new settings lack, or do not say by themselves."""
         given = [key for key in NEW_SETTINGS if getattr(self, key) not in (None, "")]
-        if self.settings_at is not None and not given:
-            mend = f"give {one_of(list(NEW_SETTINGS))}"
-            yield Problem("has no other setting to go with it", mend, "settings_at")
         for key in given:
             if self.settings_at is None:
                 yield Problem("has no time to begin at", "give settings_at too", key)
