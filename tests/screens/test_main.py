@@ -304,7 +304,7 @@ def test_a_cascade_is_made_and_unmade_in_place(work: Work) -> None:
             assert work.evaluation.prediction.inner is not None
             page.panels["9"].cursor = 2
             await press(pilot, "enter", "ctrl+u", "enter")
-            assert not work.case.inner.is_there
+            assert not work.show("inner.plant")
             assert "inner mode" not in text_of(pilot)
 
     run(story())

@@ -25,6 +25,7 @@ from workbench.study.loop import (
     runs_away,
     units_of,
 )
+from workbench.study.operating import about_rest, operating_notes
 from workbench.study.structure import has_one_scan, structure_notes
 from workbench.units import RATE_UNITS, Amount, Figure, Note, rounded, text
 
@@ -102,7 +103,8 @@ def assess(case: Case) -> Assessment:
         return Assessment(figures, None, None, None, notes, valve=valve)
     action, chosen = action_of(case)
     notes = (*_plant_notes(plant), *([Note("info", chosen)] if chosen else []))
-    loop = loop_of(case)
+    whole = loop_of(case)
+    loop = about_rest(whole)
     notes = (*notes, *structure_notes(case, loop))
     analogue = _loop_figures(case, loop, analogue_margins(replace(loop, scan=None)))
     sampled, missing = None, ""
@@ -112,6 +114,7 @@ def assess(case: Case) -> Assessment:
         missing = no_time_domain(loop.plant)
         if not missing:
             sampled = _loop_figures(case, loop, sampled_margins(loop))
+    notes = (*notes, *operating_notes(case, whole, (sampled or analogue).margins))
     gain = case.controller.gain_value
     scale = case.op.range.span / case.pv.range.span
     return Assessment(figures, analogue, sampled, action, notes, missing, gain, gain * scale, valve)

@@ -20,6 +20,7 @@ from workbench.model.reduction import double_integrator, half_rule, unstable_lag
 from workbench.model.robustness import analogue_margins, sampled_margins, ultimate
 from workbench.study.best import SEARCH_SOURCE, SEARCHES, searched
 from workbench.study.loop import action_of, loop_of, no_time_domain, plant_in_percent
+from workbench.study.operating import about_rest
 from workbench.study.prediction import predict
 from workbench.study.structure import has_one_scan
 from workbench.tune import rules
@@ -213,7 +214,7 @@ def _judged(
 ) -> Proposal:
     """A row with its margins; how far PV errs is added for all rows at once."""
     trial = replace(case, controller=settings)
-    loop = loop_of(trial)
+    loop = about_rest(loop_of(trial))
     analogue = not has_one_scan(loop) or no_time_domain(loop.plant)
     margins = analogue_margins(replace(loop, scan=None)) if analogue else sampled_margins(loop)
     if not margins.stable:
