@@ -115,13 +115,28 @@ def test_a_quick_inner_loop_is_nearly_not_there() -> None:
     assert cascade.measures.load_iae.value < 0.2 * single.measures.load_iae.value
 
 
-def test_a_cascade_has_analogue_margins_and_says_so() -> None:
-    case = a_case(**INNER)
-    found = study.assess(case)
-    assert found.sampled is None
-    assert "as it has two scans" in said(case)
-    data = report.assess_data(case, found, study.units_of(case))
-    assert "two scans" in str(data["sampled_reason"])
+def test_a_cascade_has_margins_as_sampled_or_says_why_not() -> None:
+    found = study.assess(a_case(**INNER))
+    assert found.sampled is not None
+    assert found.sampled.margins.stable
+    # common practice: a scan costs phase
+    assert found.loop is not None
+    sampled, analogue = (
+        each.margins.phase_margin_deg.value for each in (found.sampled, found.loop)
+    )
+    assert sampled is not None
+    assert analogue is not None
+    assert sampled < analogue
+    for changes, words in (
+        ({"inner__scan": "0.3 s"}, "does not go into"),
+        ({"inner__mode": "manual"}, "is in manual"),
+        ({"inner__gain": "400"}, "not stable by itself"),
+    ):
+        case = a_case(**{**INNER, **changes})
+        found = study.assess(case)
+        assert found.sampled is None
+        data = report.assess_data(case, found, study.units_of(case))
+        assert words in str(data["sampled_reason"])
 
 
 def test_an_inner_loop_at_its_limit_holds_the_outer_output() -> None:

@@ -29,6 +29,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from workbench.errors import problem
+from workbench.model.cascade import scans_in
 from workbench.model.feedback import Loop
 from workbench.model.feedforward import Feedforward
 from workbench.model.pid import Gains
@@ -88,8 +89,8 @@ def _ratio(loop: Structure) -> int:
     assert loop.scan is not None
     if loop.inner.scan is None:
         raise problem("is needed", 'give the inner controller one, like "0.5 s"', key="inner.scan")
-    ratio = round(loop.scan / loop.inner.scan)
-    if not ratio or abs(loop.scan - ratio * loop.inner.scan) > _SAME * loop.scan:
+    ratio = scans_in(loop.scan, loop.inner.scan)
+    if ratio is None:
         raise problem(
             f"{loop.inner.scan:g} s does not go into the outer scan of {loop.scan:g} s",
             "give it a whole number of times",

@@ -26,7 +26,7 @@ from workbench.study.loop import (
     units_of,
 )
 from workbench.study.operating import about_rest, operating_notes
-from workbench.study.structure import has_one_scan, structure_notes
+from workbench.study.structure import no_sampled_margins, structure_notes
 from workbench.units import RATE_UNITS, Amount, Figure, Note, rounded, text
 
 
@@ -108,10 +108,8 @@ def assess(case: Case) -> Assessment:
     notes = (*notes, *structure_notes(case, loop))
     analogue = _loop_figures(case, loop, analogue_margins(replace(loop, scan=None)))
     sampled, missing = None, ""
-    if loop.scan is not None and not has_one_scan(loop):
-        missing = "a cascade has two scans; its margins are those of analogue controllers"
-    elif loop.scan is not None:
-        missing = no_time_domain(loop.plant)
+    if loop.scan is not None:
+        missing = no_time_domain(loop.plant) or no_sampled_margins(loop)
         if not missing:
             sampled = _loop_figures(case, loop, sampled_margins(loop))
     notes = (*notes, *operating_notes(case, whole, (sampled or analogue).margins))

@@ -22,7 +22,7 @@ from workbench.study.best import SEARCH_SOURCE, SEARCHES, searched
 from workbench.study.loop import action_of, loop_of, no_time_domain, plant_in_percent
 from workbench.study.operating import about_rest
 from workbench.study.prediction import predict
-from workbench.study.structure import has_one_scan
+from workbench.study.structure import no_sampled_margins
 from workbench.tune import rules
 from workbench.tune.oscillation import astrom_hagglund_relay
 from workbench.tune.tuning import Ultimate
@@ -215,7 +215,7 @@ def _judged(
     """A row with its margins; how far PV errs is added for all rows at once."""
     trial = replace(case, controller=settings)
     loop = about_rest(loop_of(trial))
-    analogue = not has_one_scan(loop) or no_time_domain(loop.plant)
+    analogue = loop.scan is None or no_time_domain(loop.plant) or no_sampled_margins(loop)
     margins = analogue_margins(replace(loop, scan=None)) if analogue else sampled_margins(loop)
     if not margins.stable:
         none = Figure(None, f"the loop is not stable: {margins.reason}")

@@ -5,10 +5,11 @@ from __future__ import annotations
 from dataclasses import fields, replace
 
 from workbench.case.case import Case
-from workbench.errors import NotApplicable
+from workbench.errors import ModelError, NotApplicable
+from workbench.model.cascade import scans_in
 from workbench.model.feedback import Loop
 from workbench.model.feedforward import Feedforward, ideal_feedforward
-from workbench.model.robustness import analogue_margins
+from workbench.model.robustness import analogue_margins, sampled_margins
 from workbench.model.structures import NOTHING, Structure
 from workbench.model.transfer import TransferFunction
 from workbench.units import Note, text, time_text
@@ -65,9 +66,31 @@ def _inner(case: Case, outer: Loop) -> Loop:
     )
 
 
-def has_one_scan(loop: Loop) -> bool:
-    """The loop is sampled, with one scan; else its margins are those of analogue controllers."""
-    return loop.scan is not None and not (isinstance(loop, Structure) and loop.inner is not None)
+def no_sampled_margins(loop: Loop) -> str:
+    """Why the loop, which has a scan, has no margins as sampled; nothing where it has."""
+    if not isinstance(loop, Structure) or loop.inner is None:
+        return ""
+    if loop.inner_mode != "cascade":
+        return f"the inner loop is in {loop.inner_mode}"
+    assert loop.scan is not None
+    assert loop.inner.scan is not None
+    if scans_in(loop.scan, loop.inner.scan) is None:
+        inner, outer = text(loop.inner.scan, "s"), text(loop.scan, "s")
+        return f"the inner scan of {inner} does not go into the outer one of {outer}"
+    if no_time_domain(loop.inner.plant):
+        return no_time_domain(loop.inner.plant)
+    if not sampled_margins(loop.inner).stable:
+        return "the inner loop is not stable by itself, as sampled"
+    return ""
+
+
+def no_time_domain(plant: TransferFunction) -> str:
+    """Why neither a prediction nor sampled figures can be computed; nothing where they can."""
+    try:
+        plant.realise()
+    except ModelError as fault:
+        return fault.problems[0].what
+    return ""
 
 
 # --- what is to be said --------------------------------------------------------------------------
@@ -92,14 +115,12 @@ def _inner_notes(loop: Structure, inner: Loop) -> list[Note]:
     if loop.inner_mode != "cascade":
         words = f"the inner loop is in {loop.inner_mode}: the controller moves nothing"
         return [Note("caution", words)]
-    margins = analogue_margins(replace(inner, scan=None))
+    analogue = inner.scan is None or no_time_domain(inner.plant)
+    margins = analogue_margins(replace(inner, scan=None)) if analogue else sampled_margins(inner)
     if not margins.stable:
         return [Note("caution", f"the inner loop is not stable by itself: {margins.reason}")]
     peak = text(margins.max_sensitivity.value, digits=3)
-    words = f"the inner loop by itself has Ms {peak}"
-    if loop.scan is not None:
-        words += "; margins of the whole are those of analogue controllers, as it has two scans"
-    return [Note("info", words)]
+    return [Note("info", f"the inner loop by itself has Ms {peak}")]
 
 
 def _feedforward_notes(case: Case, loop: Structure, given: Feedforward) -> list[Note]:
