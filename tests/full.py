@@ -35,6 +35,7 @@ from tests.sim.campaigns import (
     sampled_by_mpmath,
 )
 from tests.sim.cascades import cascades_at_limits
+from tests.sim.promises import bumpless, held_cascades, left_limits
 from tests.sim.series import Path as Way
 from tests.sim.series import Rational, responses
 from tests.tune.searches import searched
@@ -438,6 +439,15 @@ CAMPAIGNS: Final[dict[str, Campaign]] = {
     ),
     "inner loops at limits": Campaign(
         _judged(cascades_at_limits, 206, 0.0, "outer output goes on into the limit [%]"), 40, 2000
+    ),
+    "promises at limits": Campaign(
+        _judged(left_limits, 0, 0.0, "scans at a limit beyond those allowed"), 60, 2000
+    ),
+    "promises at changes": Campaign(
+        _judged(bumpless, 0, 0.0, "moved further than asked [%]"), 60, 2000
+    ),
+    "promises of cascades": Campaign(
+        _judged(held_cascades, 0, 0.0, "outer output goes on into the limit [%]"), 40, 2000
     ),
     "sampled margins": Campaign(sampled_brinks, 5, 500),
     "best settings by search": Campaign(
