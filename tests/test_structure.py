@@ -11,6 +11,7 @@ from numpy.typing import NDArray
 from workbench import report, study
 from workbench.case.case import Case, edit_all, new_case
 from workbench.errors import InputError
+from workbench.units import Amount
 
 Array = NDArray[np.float64]
 PLANT = "1.8 exp(-6 s)/(40 s + 1)"
@@ -189,10 +190,22 @@ def test_a_model_that_runs_away_is_refused_by_its_key() -> None:
     assert refused.value.problems[0].key == "compensation.model"
 
 
-def test_an_analogue_structure_is_judged_but_not_played() -> None:
+def test_an_analogue_structure_is_judged_and_predicted_while_it_is_linear() -> None:
     case = a_case(compensation__model=PLANT)
     assert case.controller is not None
     analogue = replace(case, controller=replace(case.controller, scan=None))
-    assert study.assess(analogue).loop is not None
-    with pytest.raises(InputError, match="scan by scan"):
-        study.predict(analogue)
+    found = study.evaluate(analogue)
+    assert found.assessment.loop is not None
+    assert found.prediction is not None
+    # other route: the same controller with a scan that hardly shows
+    quick = replace(case, controller=replace(case.controller, scan=Amount(0.1, "s")))
+    instants = np.arange(1.0, 300.0)
+    one, other = (
+        np.interp(instants, each.trend.time, each.trend.pv)
+        for each in (found.prediction, study.predict(quick))
+    )
+    assert np.abs(one - other).max() < 0.05
+    narrow = edit_all(analogue, {"op.max": "50.5"})
+    found = study.evaluate(narrow)
+    assert found.prediction is None
+    assert "its output meets a limit" in found.prediction_reason

@@ -258,11 +258,13 @@ def test_a_vessel_is_chosen_and_told_by_its_slope(work: Work) -> None:
 
 def test_what_cannot_be_predicted_says_why_on_the_screen(work: Work) -> None:
     work.edit("plant.blocks", "dryer: 1.5 exp(-4 s)/(30 s + 1); slave around dryer: 0.2")
+    work.edit("controller.scan", "")
+    work.edit("op.rate", "0.5 /s")
 
     async def story() -> None:
         async with running(work, (160, 50)) as pilot:
             shown = text_of(pilot)
-            assert "no prediction: a dead time inside an inner feedback" in shown
+            assert "no prediction: controller.scan is needed" in shown
             assert "stable (analogue loop)" in shown
 
     run(story())

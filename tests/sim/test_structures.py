@@ -350,7 +350,7 @@ def test_feedforward_keeps_to_the_limits_and_winds_nothing_up() -> None:
 @pytest.mark.parametrize(
     ("scan", "inner_scan", "key", "words"),
     [
-        (None, 0.5, "controller.scan", "scan by scan"),
+        (None, 0.5, "controller.scan", "the inner controller has one"),
         (1.0, None, "inner.scan", "is needed"),
         (1.0, 0.3, "inner.scan", "does not go into"),
         (1.0, 2.0, "inner.scan", "does not go into"),

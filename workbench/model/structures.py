@@ -21,7 +21,7 @@ Compensation: O.J.M. Smith, "Closer control of loops with dead time", Chem. Eng.
 from __future__ import annotations
 
 from collections import Counter
-from dataclasses import dataclass, fields
+from dataclasses import dataclass, fields, replace
 from typing import Final
 
 from workbench.errors import problem
@@ -110,6 +110,18 @@ class Structure(Loop):
         """PV [%] for the upset [its own unit], analogue loop."""
         inside = 1.0 + self._back() * self.correction()
         return _closed(self.upset * inside, self._back() * self._met())
+
+    def output_from_setpoint(self) -> TransferFunction:
+        """OP [%] for the setpoint [%], analogue loop."""
+        return _closed(self.sign * self.gains.from_setpoint(), self._back() * self._met())
+
+    def output_from_load(self) -> TransferFunction:
+        """OP [%] for the upset [its own unit], analogue loop."""
+        alone = replace(self, feedforward=None).upset
+        given = -self._back() * alone
+        if self.feedforward is not None:
+            given = given + self.feedforward.transfer()
+        return _closed(given, self._back() * self._met())
 
     def sampled(self) -> SampledLoop:
         """The open loop in z; the model is run at the scan, with the computing delay.

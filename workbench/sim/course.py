@@ -123,6 +123,14 @@ def _mark(time: float | None, clock: Clock) -> int | None:
     return None if time is None else clock.first_scan(time)
 
 
+def setpoints(loop: Loop, events: Events, clock: Clock, scans: int) -> Array:
+    """The setpoint as the algorithm takes it at each scan (scans,) [%]."""
+    taken = _setpoint(loop, events, clock, scans)
+    if not isinstance(taken, Step):
+        return taken
+    return taken.values(np.arange(float(scans)) * clock.scan + 1e-9 * clock.scan)
+
+
 def _setpoint(loop: Loop, events: Events, clock: Clock, scans: int) -> Array | Step:
     """The setpoint as the algorithm takes it at each scan [%]."""
     plain = loop.setpoint_rate is None and not loop.setpoint_filter

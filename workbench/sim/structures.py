@@ -52,15 +52,10 @@ _SAME: Final = 1e-9
 def as_played(loop: Structure, events: Events) -> Loop:
     """The loop from the output that moves the plant to PV, at the scan at which that is changed.
 
-    A cascade is played at the scan of its inner loop.  Raises `InputError` where a structure has no
-    scan, the two scans do not go together, or the scenario asks for what is not played with it.
+    A cascade is played at the scan of its inner loop.  Raises `InputError` where the
+    two scans do not go together, or the scenario asks for what is not played with it.
     """
-    if loop.scan is None:
-        raise problem(
-            "is needed: compensation, feedforward and inner loops are played scan by scan",
-            'give the controller a scan, like "1 s"',
-            key="controller.scan",
-        )
+    assert loop.scan is not None
     _refuse(loop, events)
     if loop.inner is None:
         return loop.around(loop.plant)

@@ -13,7 +13,7 @@ from workbench.errors import (
 from workbench.model.feedback import Loop
 from workbench.model.formula import format_formula
 from workbench.model.reduction import SmallModel, best_fit, half_rule, misfit
-from workbench.model.robustness import Margins, analogue_margins, sampled_margins
+from workbench.model.robustness import Margins, analogue_margins
 from workbench.model.stability import plant_verdict
 from workbench.model.transfer import TransferFunction
 from workbench.study.loop import (
@@ -26,7 +26,7 @@ from workbench.study.loop import (
     units_of,
 )
 from workbench.study.operating import about_rest, operating_notes
-from workbench.study.structure import no_sampled_margins, structure_notes
+from workbench.study.structure import margins_as_sampled, structure_notes
 from workbench.units import RATE_UNITS, Amount, Figure, Note, rounded, text
 
 
@@ -109,9 +109,8 @@ def assess(case: Case) -> Assessment:
     analogue = _loop_figures(case, loop, analogue_margins(replace(loop, scan=None)))
     sampled, missing = None, ""
     if loop.scan is not None:
-        missing = no_time_domain(loop.plant) or no_sampled_margins(loop)
-        if not missing:
-            sampled = _loop_figures(case, loop, sampled_margins(loop))
+        margins, missing = margins_as_sampled(loop)
+        sampled = None if margins is None else _loop_figures(case, loop, margins)
     notes = (*notes, *operating_notes(case, whole, (sampled or analogue).margins))
     gain = case.controller.gain_value
     scale = case.op.range.span / case.pv.range.span

@@ -25,8 +25,8 @@ from workbench.records.identify import Candidate, Fit
 from workbench.records.identify import fit as fit_plants
 from workbench.records.record import read_record
 from workbench.study.assessment import assess
-from workbench.study.loop import controller_of, no_time_domain, plant_of
-from workbench.study.prediction import predict
+from workbench.study.loop import controller_of
+from workbench.study.prediction import predicted
 from workbench.study.upset import upset_faults, with_upset_named
 from workbench.units import Amount, rounded, text
 
@@ -155,8 +155,9 @@ def _figures_now(case: Case) -> dict[str, float]:
         "max_sensitivity": judged.margins.max_sensitivity,
         "phase_margin_deg": judged.margins.phase_margin_deg,
     }
-    if not no_time_domain(plant_of(case)):
-        measures = predict(case).measures
+    prediction, _ = predicted(case)
+    if prediction is not None:
+        measures = prediction.measures
         found |= {"load_iae": measures.load_iae, "setpoint_iae": measures.setpoint_iae}
     return {name: figure.value for name, figure in found.items() if figure.value is not None}
 

@@ -20,12 +20,15 @@ from workbench.model.response import (
     impulse_response,
     step_response,
 )
+from workbench.model.stability import plant_verdict
 from workbench.model.structures import Structure
 from workbench.model.transfer import TransferFunction
 from workbench.records.record import Record
+from workbench.sim.delayed import impulse_answer, step_answer, upset_answer
 from workbench.sim.loop import settle_horizon, simulate
 from workbench.sim.metrics import Measures, measure
 from workbench.sim.scenario import NEW_SETTINGS, Events, Scenario
+from workbench.sim.signals import held
 from workbench.sim.structures import Inside
 from workbench.study.loop import (
     controller_of,
@@ -97,8 +100,7 @@ def predict(case: Case, seed: int = 0, like: Prediction | None = None) -> Predic
     Where the scenario leaves its end open it lasts long enough to settle, or as long as the
     prediction `like` with which it is to be compared.
 
-    Raises `InputError` where plant or controller is missing, or the plant has a dead time inside an
-    inner feedback.
+    Raises `InputError` where plant or controller is missing, or the loop cannot be followed.
     """
     loop = loop_of(case)
     missing = no_time_domain(loop.plant)
@@ -133,6 +135,25 @@ def predict(case: Case, seed: int = 0, like: Prediction | None = None) -> Predic
         diverged=trace.diverged,
         inner=None if trace.inner is None else _inner_trend(case, loop, trace.inner),
     )
+
+
+def predicted(
+    case: Case, seed: int = 0, like: Prediction | None = None
+) -> tuple[Prediction | None, str]:
+    """The prediction, or why this loop has none although it is one.
+
+    Raises `InputError` for what the scenario or a setting is to blame for.
+    """
+    missing = no_time_domain(loop_of(case).plant)
+    if missing:
+        return None, missing
+    try:
+        return predict(case, seed, like), ""
+    except InputError as fault:
+        first = fault.problems[0]
+        if first.key != "controller.scan":
+            raise
+        return None, f"{first.key} {first.what}"
 
 
 def _inner_trend(case: Case, loop: Loop, inside: Inside) -> InnerTrend:
@@ -307,7 +328,8 @@ def _floor(loop: Loop, events: Events) -> tuple[Figure, Figure]:
     if shown == 0.0:
         return Figure(0.0), Figure(0.0)
     time = np.linspace(0.0, first, 401)
-    free = np.abs(step_response(loop.load, time) * events.load_step)
+    answer = step_answer if loop.load.has_delayed_feedback else step_response
+    free = np.abs(answer(loop.load, time) * events.load_step)
     return Figure.of(float(free.max())), Figure.of(float(np.trapezoid(free, time)))
 
 
@@ -332,7 +354,7 @@ def respond(plant: TransferFunction, signal: Signal, until: float, rows: int = 1
     Parameters
     ----------
     plant
-        Without a dead time inside an inner feedback.
+        From OP to PV; a dead time inside an inner feedback is followed to 1e-6 of the step.
     signal
         What moves the input.
     until
@@ -350,12 +372,24 @@ def respond(plant: TransferFunction, signal: Signal, until: float, rows: int = 1
         raise ModelError(Problem(f"cannot be answered: {missing}", "draw it without that feedback"))
     transform = plant * signal.transform()
     time = np.linspace(0.0, until, rows)
+    inverse = impulse_answer if plant.has_delayed_feedback else impulse_response
     with np.errstate(over="ignore", invalid="ignore"):
-        pv = impulse_response(transform, time)
+        pv = inverse(transform, time)
     if not np.isfinite(pv).all():
         raise ModelError(Problem("grows beyond every number", "give an earlier end"))
-    final = final_value(transform)
+    final = _final(plant, signal) if plant.has_delayed_feedback else final_value(transform)
     return Response(time, signal.values(time), pv, final, _peak(transform, time, pv, final))
+
+
+def _final(plant: TransferFunction, signal: Signal) -> Figure:
+    """The limit of PV where the plant has infinitely many poles."""
+    verdict = plant_verdict(plant)
+    if not verdict.stable and not plant.integrators > 0:
+        return Figure(None, f"the plant is not stable: {verdict.reason}")
+    if signal.kind == "sine":
+        return Figure(None, "it swings for ever")
+    limit = (plant * signal.transform()).slope()
+    return limit if limit.value is not None else Figure(None, "it moves on for ever")
 
 
 def _peak(transform: TransferFunction, time: Floats, pv: Floats, final: Figure) -> Figure:
@@ -366,7 +400,8 @@ def _peak(transform: TransferFunction, time: Floats, pv: Floats, final: Figure) 
         return Figure(None, f"PV moves on without end, and is {text(float(pv[-1]))} at the last")
     near = np.linspace(time[max(at - 1, 0)], time[min(at + 1, len(time) - 1)], 401)
     jumps = [delay for delay in transform.delays if delay <= time[-1]]
-    closer = impulse_response(transform, np.unique([*near, *jumps]))
+    inverse = impulse_answer if transform.has_delayed_feedback else impulse_response
+    closer = inverse(transform, np.unique([*near, *jumps]))
     return Figure.of(float(max((float(pv[at]), *closer.tolist()), key=abs)))
 
 
@@ -376,7 +411,7 @@ def response_horizon(plant: TransferFunction, signal: Signal) -> float:
     A stable part settles within the sum of its lags and 5 times their root mean square sum; what
     grows is followed for 3 of its time constants, a sine for 5 periods.
     """
-    poles = () if plant.has_delayed_feedback else plant.poles()
+    poles = [pole for term in plant.denominator for pole in term.polynomial.roots]
     lags = [1.0 / abs(p.real) for p in poles if p.real < 0.0]
     swings = [2.0 * math.pi / p.imag for p in poles if p.imag > 0.0 and p.real == 0.0]
     growing = [1.0 / p.real for p in poles if p.real > 0.0]
@@ -384,7 +419,9 @@ def response_horizon(plant: TransferFunction, signal: Signal) -> float:
     own = max([settles, *(3.0 * t for t in growing), *(5.0 * t for t in swings)])
     if growing:
         own = min(own, 20.0 * min(growing))
+    # A dead time inside a feedback goes round a few times before all is calm.
     dead = 3.0 * max(plant.delays, default=0.0)
+    dead += 10.0 * sum(term.dead_time for term in plant.denominator)
     moves = {"pulse": 2.0 * signal.width, "doublet": 3.0 * signal.width, "sine": 5 * signal.period}
     total = signal.at + moves.get(signal.kind, 0.0) + own + dead
     return rounded(total - signal.at or 60.0, 2) + signal.at
@@ -393,13 +430,16 @@ def response_horizon(plant: TransferFunction, signal: Signal) -> float:
 def respond_to_record(plant: TransferFunction, record: Record) -> Response:
     """Response of a plant to the OP of a record, held between rows; deviations from its start.
 
-    Raises `ModelError` for a dead time inside an inner feedback.
+    Raises `ModelError` for a plant that cannot be followed in time.
     """
     missing = no_time_domain(plant)
     if missing:
         raise ModelError(Problem(f"cannot be answered: {missing}", "draw it without that feedback"))
     op = record.op - record.op[0]
-    pv = held_response(plant, record.time, op, record.time)
+    if plant.has_delayed_feedback:
+        pv = upset_answer(plant, held(record.time, op), record.time)
+    else:
+        pv = held_response(plant, record.time, op, record.time)
     none = Figure(None, "a recorded input has no last value to hold for ever")
     peak = float(pv[np.abs(pv).argmax()])
     return Response(record.time, op, pv, none, Figure.of(peak))

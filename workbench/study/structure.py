@@ -9,9 +9,10 @@ from workbench.errors import ModelError, NotApplicable
 from workbench.model.cascade import scans_in
 from workbench.model.feedback import Loop
 from workbench.model.feedforward import Feedforward, ideal_feedforward
-from workbench.model.robustness import analogue_margins, sampled_margins
+from workbench.model.robustness import Margins, analogue_margins, sampled_margins
 from workbench.model.structures import NOTHING, Structure
 from workbench.model.transfer import TransferFunction
+from workbench.sim.delayed import sampled_steps, without_state_space
 from workbench.units import Note, text, time_text
 
 
@@ -66,8 +67,21 @@ def _inner(case: Case, outer: Loop) -> Loop:
     )
 
 
-def no_sampled_margins(loop: Loop) -> str:
-    """Why the loop, which has a scan, has no margins as sampled; nothing where it has."""
+def margins_as_sampled(loop: Loop) -> tuple[Margins | None, str]:
+    """Margins of a loop that has a scan, as sampled, or why it has none."""
+    try:
+        missing = _not_in_z(loop)
+        if missing:
+            return None, missing
+        if not isinstance(loop, Structure) and loop.plant.has_delayed_feedback:
+            return sampled_margins(loop, sampled_steps(loop)), ""
+        return sampled_margins(loop), ""
+    except ModelError as fault:
+        return None, fault.problems[0].what
+
+
+def _not_in_z(loop: Loop) -> str:
+    """Why the open loop of a cascade is not had in z; nothing where it is."""
     if not isinstance(loop, Structure) or loop.inner is None:
         return ""
     if loop.inner_mode != "cascade":
@@ -77,20 +91,14 @@ def no_sampled_margins(loop: Loop) -> str:
     if scans_in(loop.scan, loop.inner.scan) is None:
         inner, outer = text(loop.inner.scan, "s"), text(loop.scan, "s")
         return f"the inner scan of {inner} does not go into the outer one of {outer}"
-    if no_time_domain(loop.inner.plant):
-        return no_time_domain(loop.inner.plant)
     if not sampled_margins(loop.inner).stable:
         return "the inner loop is not stable by itself, as sampled"
     return ""
 
 
 def no_time_domain(plant: TransferFunction) -> str:
-    """Why neither a prediction nor sampled figures can be computed; nothing where they can."""
-    try:
-        plant.realise()
-    except ModelError as fault:
-        return fault.problems[0].what
-    return ""
+    """Why there can be no prediction; nothing where there can."""
+    return without_state_space(plant)
 
 
 # --- what is to be said --------------------------------------------------------------------------
@@ -115,8 +123,8 @@ def _inner_notes(loop: Structure, inner: Loop) -> list[Note]:
     if loop.inner_mode != "cascade":
         words = f"the inner loop is in {loop.inner_mode}: the controller moves nothing"
         return [Note("caution", words)]
-    analogue = inner.scan is None or no_time_domain(inner.plant)
-    margins = analogue_margins(replace(inner, scan=None)) if analogue else sampled_margins(inner)
+    known = margins_as_sampled(inner)[0] if inner.scan is not None else None
+    margins = known or analogue_margins(replace(inner, scan=None))
     if not margins.stable:
         return [Note("caution", f"the inner loop is not stable by itself: {margins.reason}")]
     peak = text(margins.max_sensitivity.value, digits=3)
