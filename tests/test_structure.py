@@ -205,7 +205,7 @@ def test_an_analogue_structure_is_judged_and_predicted_while_it_is_linear() -> N
         for each in (found.prediction, study.predict(quick))
     )
     assert np.abs(one - other).max() < 0.05
-    narrow = edit_all(analogue, {"op.max": "50.5"})
+    narrow = edit_all(analogue, {"op.max": "25.5"})
     found = study.evaluate(narrow)
     assert found.prediction is None
     assert "its output meets a limit" in found.prediction_reason
