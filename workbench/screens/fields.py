@@ -79,6 +79,7 @@ SHORTER = {
     "measurement.lag": "sensor lag",
     "measurement.resolution": "sensor resolution",
     "measurement.clips": "sensor clips",
+    "compensation.model": "compensator model",
     "compensation.time_unit": "model time unit",
     "feedforward.dead_time": "its dead time",
     "inner.derivative_filter": "inner der. filter",
