@@ -14,10 +14,11 @@ class StructurePanel(FieldsPanel):
     title = "Structure"
     tables = ("compensation", "feedforward", "inner")
     help = (
-        "Each part is there as soon as its first setting is: 'compensator model' is a formula of the "
-        "plant for dead-time compensation, 'feedforward gain' what an upset of 1 adds to OP, and 'inner "
-        "plant' a formula from the inner output to the inner PV, which makes this a cascade. "
-        "Their other settings then stand below; an empty entry in the first takes the part out.",
+        "Each part is there as soon as its first setting is: 'compensator model' is a formula of "
+        "the plant for dead-time compensation, 'feedforward gain' what an upset of 1 adds to OP, "
+        "and 'inner plant' a formula from the inner output to the inner PV, which makes this a "
+        "cascade. Their other settings then stand below; an empty entry in the first takes the "
+        "part out.",
         "In a cascade OP is the setpoint of the inner loop, and the inner PV is in units of OP.",
     )
 
