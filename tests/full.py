@@ -43,6 +43,7 @@ from tests.sim.campaigns import (
 )
 from tests.sim.cascades import cascades_at_limits
 from tests.sim.floors import beaten, reached
+from tests.sim.promises import bumpless, held_cascades, left_limits
 from tests.sim.series import Path as Way
 from tests.sim.series import Rational, responses
 from tests.tune.searches import searched
@@ -455,6 +456,15 @@ CAMPAIGNS: Final[dict[str, Campaign]] = {
     ),
     "floors reached": Campaign(
         _judged(reached, 0, 0.03, "best moves found above a floor, as a share"), 1, 20
+    ),
+    "promises at limits": Campaign(
+        _judged(left_limits, 0, 0.0, "scans at a limit beyond those allowed"), 60, 2000
+    ),
+    "promises at changes": Campaign(
+        _judged(bumpless, 0, 0.0, "moved further than asked [%]"), 60, 2000
+    ),
+    "promises of cascades": Campaign(
+        _judged(held_cascades, 0, 0.0, "outer output goes on into the limit [%]"), 40, 2000
     ),
     "sampled margins": Campaign(sampled_brinks, 5, 500),
     "best settings by search": Campaign(

@@ -89,12 +89,15 @@ def analogue_margins(loop: Loop) -> Margins:
     return _margins(response, grid, open_loop, far=far)
 
 
-def sampled_margins(loop: Loop) -> Margins:
+def sampled_margins(loop: Loop, known: SampledLoop | None = None) -> Margins:
     """Margins of the loop as sampled: hold, scan and computing delay included.
+
+    `known` is its open loop in z where that is not had from a state space.
 
     Frequencies run up to half the scan rate.
     """
-    sampled = loop.sampled() if isinstance(loop, Structure) else SampledLoop.of(loop)
+    made = loop.sampled if isinstance(loop, Structure) else lambda: SampledLoop.of(loop)
+    sampled = known or made()
     verdict = sampled.verdict()
     if not verdict.stable:
         return _none(verdict)
