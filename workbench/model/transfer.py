@@ -24,6 +24,8 @@ from workbench.errors import ModelError, Problem
 from workbench.units import Figure
 
 Coefficients = tuple[float, ...]
+Powers = tuple[tuple[Coefficients, int], ...]
+"""Factors, each with its power."""
 Complex = NDArray[np.complex128]
 
 _ROUNDING: Final = 8 * np.finfo(float).eps
@@ -36,6 +38,10 @@ def _fault(what: str, mend: str) -> ModelError:
     return ModelError(Problem(what, mend))
 
 
+def _not_finite() -> ModelError:
+    return _fault("a coefficient is not finite", "bring the numbers closer together")
+
+
 # --- polynomials kept factored -------------------------------------------------------------------
 
 
@@ -44,7 +50,7 @@ class Factored:
     """A polynomial as gain times factors to whole powers; a factor has constant term 1, or is s."""
 
     gain: float
-    factors: tuple[tuple[Coefficients, int], ...] = ()
+    factors: Powers = ()
 
     @classmethod
     def of(cls, coefficients: Sequence[float], power: int = 1) -> Factored:
@@ -58,26 +64,28 @@ class Factored:
         while trimmed[-1] == 0.0:
             trimmed, at_origin = trimmed[:-1], at_origin + 1
         constant = trimmed[-1]
-        factors: Counter[Coefficients] = Counter()
-        if at_origin:
-            factors[(1.0, 0.0)] = at_origin * power
+        factors: Powers = (((1.0, 0.0), at_origin * power),) if at_origin else ()
         if len(trimmed) > 1:
-            factors[tuple(c / constant for c in trimmed)] = power
+            factor = tuple(c / constant for c in trimmed)
+            if not all(map(math.isfinite, factor)):
+                raise _not_finite()
+            factors = (*factors, (factor, power))
         return cls._checked(constant**power, factors)
 
     @classmethod
-    def _checked(cls, gain: float, factors: Counter[Coefficients]) -> Factored:
-        numbers = [gain, *(c for factor in factors for c in factor)]
-        if not all(map(math.isfinite, numbers)):
-            raise _fault("a coefficient is not finite", "bring the numbers closer together")
-        if gain == 0.0:
-            return cls(0.0)
-        return cls(gain, tuple((f, p) for f, p in factors.items() if p))
+    def _checked(cls, gain: float, factors: Powers) -> Factored:
+        if not math.isfinite(gain):
+            raise _not_finite()
+        return cls(gain, factors) if gain else cls(0.0)
 
     def __mul__(self, other: Factored) -> Factored:
-        counted = Counter(dict(self.factors))
-        counted.update(dict(other.factors))
-        return self._checked(self.gain * other.gain, counted)
+        gain = self.gain * other.gain
+        if not (self.factors and other.factors):
+            return self._checked(gain, self.factors or other.factors)
+        powers = dict(self.factors)
+        for factor, power in other.factors:
+            powers[factor] = powers.get(factor, 0) + power
+        return self._checked(gain, tuple(powers.items()))
 
     def __add__(self, other: Factored) -> Factored:
         if not self.gain or not other.gain:
@@ -94,7 +102,7 @@ class Factored:
 
     def scaled(self, factor: float) -> Factored:
         """The polynomial times a number."""
-        return self._checked(self.gain * factor, Counter(dict(self.factors)))
+        return self._checked(self.gain * factor, self.factors)
 
     @cached_property
     def degree(self) -> int:
@@ -126,7 +134,7 @@ class Factored:
         mine, theirs = Counter(dict(self.factors)), Counter(dict(other.factors))
         if theirs - mine:
             return None
-        return self._checked(self.gain / other.gain, mine - theirs)
+        return self._checked(self.gain / other.gain, tuple((mine - theirs).items()))
 
 
 def _expand(gain: float, factors: Iterable[tuple[Coefficients, int]]) -> NDArray[np.float64]:

@@ -3,13 +3,14 @@
 Free of its limits the loop is s' = S s over one scan, s being the plant's state, the parts of the
 controller and the outputs still on their way; held at a limit, or moving at its fastest, it is
 another such loop, as the output then takes its next value from the one before.  A stretch is worked
-out by powers of S: the first 64 of them by doubling, then every 64th state, then all of it as one
-product.  It counts up to the first scan at which the condition of its mode fails; that scan is
-stepped, and the mode it ends in is the next one tried.
+out by powers of S: what is read of the first 64 scans by doubling, then every 64th state, then all
+of it as one product.  It counts up to the first scan at which the condition of its mode fails; that
+scan is stepped, and the mode it ends in is the next one tried.
 
 What comes from far back - outputs on their way through a long dead time - is known beforehand for
 as many scans as it is far, and so it enters as a given input instead of making S large; so do noise
-and signals from outside that change at every scan.
+and signals from outside that change at every scan.  A stretch with given inputs goes block by
+block, one product for each.
 """
 
 from __future__ import annotations
@@ -30,11 +31,10 @@ from workbench.sim.signals import Step
 
 Array = NDArray[np.float64]
 
-_NEAR: Final = 60
+_NEAR: Final = 48
 """Scans of dead time that a state is kept for; more are given inputs."""
 _BLOCK: Final = 64
-"""Scans whose powers of S are kept; with given inputs, `_GIVEN_BLOCK`."""
-_GIVEN_BLOCK: Final = 38
+"""Scans whose powers of S are kept; a power of 2, halved until given outputs are known."""
 _LEAST: Final = 12
 """Fewer scans than this are stepped."""
 _FEW: Final = 2
@@ -50,6 +50,9 @@ class Mode(Enum):
     SLIDING = "the same, while the integral would drive it into a limit and is not advanced"
     HELD = "stands at a limit or moves at its fastest"
     FROZEN = "the same, and the integral is not advanced"
+
+
+_STANDING: Final = (Mode.HELD, Mode.FROZEN)
 
 
 def run(
@@ -74,7 +77,7 @@ def follow(whole: Run, end: int) -> None:
         whole.step(end, step)
         return
     leaps = Leaps(whole)
-    cuts = [*(cut for cut in whole.inputs.cuts if cut < end and _matters(whole, cut)), end]
+    cuts = [*(cut for cut in whole.inputs.cuts if cut < end), end]
     by_hand, place = _FEW, 0
     while whole.at < end and not whole.diverged:
         while cuts[place] <= whole.at:
@@ -93,18 +96,6 @@ def follow(whole: Run, end: int) -> None:
         by_hand = min(2 * by_hand, 4 * _BLOCK) if gone < _BLOCK else _FEW
         if whole.at < stop and not whole.diverged:
             whole.step(min(stop, whole.at + by_hand), step)
-
-
-def _matters(whole: Run, cut: int) -> bool:
-    """Something is other at this scan than at the one before, or the derivative sees it move."""
-    given, algorithm = whole.inputs, whole.algorithm
-    if not cut or (algorithm.kick and algorithm.derivative_weight):
-        return True
-    return bool(
-        given.setpoint[cut] != given.setpoint[cut - 1]
-        or given.direct[cut] != given.direct[cut - 1]
-        or (given.state[cut] != given.state[cut - 1]).any()
-    )
 
 
 @dataclass(frozen=True)
@@ -161,22 +152,24 @@ class Leaps:
             max([1, *(back for back in backs if back <= _NEAR)]),
             tuple(sorted(back for back in backs if back > _NEAR)),
         )
-        self.longest = min(self.at.far, default=whole.scans)
+        self.block = _BLOCK
+        while self.block > min(self.at.far, default=self.block):
+            self.block //= 2
         self.given = self.at.given(whole.inputs.varying)
         """Columns that are not kept but given to each scan."""
-        self.kept = [k for k in range(self.at.change) if k not in self.given]
+        self.kept = [k for k in range(self.at.change + 1) if k not in self.given]
         self._powers: dict[Mode, _Powers] = {}
 
     def leap(self, stop: int) -> int:
         """Go on in the present mode while it lasts, at most to `stop`; the scans it went."""
         whole, start = self.run, self.run.at
         mode, slope = self._mode()
-        reach = 4 * _BLOCK - 1
+        reach = 4 * _BLOCK
         while whole.at < stop and not whole.diverged:
-            wanted = min(stop - whole.at, self.longest)
+            wanted = stop - whole.at
             if whole.algorithm.is_limited:
                 wanted = min(wanted, reach)
-                reach = 64 * reach + 63
+                reach *= 64
             if self._stretch(mode, slope, wanted) < wanted:
                 break
         return whole.at - start
@@ -199,110 +192,113 @@ class Leaps:
 
     def _stretch(self, mode: Mode, slope: float, wanted: int) -> int:
         """Go on in a mode for at most `wanted` scans; how many it lasted."""
-        whole, at, start = self.run, self.at, self.run.at
+        whole, start, sign = self.run, self.run.at, self.run.algorithm.sign
         powers = self._of(mode)
-        state = self._state(slope)
+        acting = whole.acting[start + whole.back :]
+        known = None
+        if mode in _STANDING:
+            known = whole.memory.output + slope * np.arange(1.0, wanted + 1.0)
+            np.multiply(known, sign, out=acting[:wanted])
         if self.given:
-            rows, blocks = powers.driven(state, self.given_to(wanted), wanted)
+            blocks, read = powers.driven(
+                self._state(slope), self.given_to(wanted), acting if known is None else None
+            )
         else:
-            rows, blocks = powers.alone(state, wanted)
-        wanted = min(wanted, rows.count)
-        output = self._output(mode, slope, rows, wanted)
+            blocks, read = powers.alone(self._state(slope), wanted)
+        wanted = min(wanted, len(read))
+        output = sign * read[:wanted, 0] if known is None else known[:wanted]
         if whole.algorithm.is_limited:
-            wanted = self._lasting(mode, slope, output, rows)
-        pv = rows.row(at.n, wanted) + whole.inputs.direct[start : start + wanted]
+            wanted = self._lasting(mode, slope, output, read[:wanted])
+        pv = whole.pv[start : start + wanted]
+        np.add(read[:wanted, 1], whole.inputs.direct[start : start + wanted], out=pv)
         if not (pv.max(initial=0.0) <= BOUND and pv.min(initial=0.0) >= -BOUND):
             wanted = int(np.argmin(np.abs(pv) <= BOUND))
+            pv = pv[:wanted]
             whole.diverged = True
-        for i in range(at.n):
-            whole.states[i, start : start + wanted] = rows.row(i, wanted)
-        whole.pv[start : start + wanted] = pv[:wanted]
         if whole.inputs.noise is not None:
             noise = whole.inputs.noise[start : start + wanted]
-            whole.measured[start : start + wanted] = pv[:wanted] + noise
-        placed = start + whole.back
-        np.multiply(
-            output[:wanted], whole.algorithm.sign, out=whole.acting[placed : placed + wanted]
-        )
-        whole.at += wanted
+            np.add(pv, noise, out=whole.measured[start : start + wanted])
+        if known is None and not self.given:
+            acting[:wanted] = read[:wanted, 0]
         if wanted:
-            self._remember(powers.after(blocks, rows, wanted), mode)
+            whole.at += wanted
+            whole.pieces.append(lambda: powers.states(blocks, wanted))
+            self._remember(powers.after(blocks, wanted), mode, start)
         return wanted
 
-    def _output(self, mode: Mode, slope: float, rows: _Rows, count: int) -> Array:
-        """Before the action [%], (count,)."""
-        n = self.at.n
-        if mode is Mode.FREE:
-            return rows.row(n + 1, count)
-        if mode is Mode.SLIDING:
-            return np.asarray(rows.row(n + 1, count) - rows.row(n + 2, count), np.float64)
-        return self.run.memory.output + slope * np.arange(1.0, count + 1.0)
-
-    def _lasting(self, mode: Mode, slope: float, output: Array, rows: _Rows) -> int:
+    def _lasting(self, mode: Mode, slope: float, output: Array, read: Array) -> int:
         """For how many scans the condition of a mode holds."""
-        algorithm, first, n = self.run.algorithm, self.run.memory.output, self.at.n
-        wanted, gained = rows.row(n + 1, len(output)), rows.row(n + 2, len(output))
+        algorithm, first = self.run.algorithm, self.run.memory.output
         low, high = algorithm.bounds()
-        kept = (output >= low) & (output <= high)
-        if mode in (Mode.FREE, Mode.SLIDING):
-            before = np.concatenate([[first], output[:-1]])
+        wrong = (output < low) | (output > high)
+        if mode in _STANDING:
+            wanted, gained = read[:, 0], read[:, 2]
+            side = math.copysign(1.0, slope) if slope else 1.0 if first == high else -1.0
+            wrong |= side * (wanted - output) <= 0.0
+            if mode is Mode.FROZEN:
+                wrong |= (side * gained <= 0.0) | (side * (wanted - gained - output) < 0.0)
+            elif algorithm.conditional:
+                wrong |= side * gained > 0.0
+        else:
             lowest, highest = np.full(1, low), np.full(1, high)
             if math.isfinite(algorithm.move):
+                before = np.concatenate([[first], output[:-1]])
                 lowest = np.maximum(low, before - algorithm.move)
                 highest = np.minimum(high, before + algorithm.move)
-                kept &= (output >= lowest) & (output <= highest)
+                wrong |= (output < lowest) | (output > highest)
             if mode is Mode.SLIDING:
-                kept &= np.where(gained > 0.0, wanted > highest, wanted < lowest)
-        else:
-            side = math.copysign(1.0, slope) if slope else 1.0 if first == high else -1.0
-            kept &= side * (wanted - output) > 0.0
-            if mode is Mode.FROZEN:
-                kept &= (side * gained > 0.0) & (side * (wanted - gained - output) >= 0.0)
-            elif algorithm.conditional:
-                kept &= side * gained <= 0.0
-        return len(kept) if kept.all() else int(np.argmin(kept))
+                gained = read[:, 2]
+                wanted = output + gained
+                wrong |= np.where(gained > 0.0, wanted <= highest, wanted >= lowest)
+        at = int(wrong.argmax())
+        return at if wrong[at] else len(wrong)
 
     def _state(self, slope: float) -> Array:
         whole, at, m = self.run, self.at, self.run.memory
-        state = np.zeros(at.change)
+        given, k, algorithm = whole.inputs, whole.at, whole.algorithm
+        state = np.zeros(at.change + 1)
         state[: at.n] = whole.x
         state[at.n : at.newest] = m.filtered, m.integral, m.derivative
-        placed = whole.back + whole.at
+        placed = whole.back + k
         state[at.newest : at.slope] = whole.acting[placed - at.near : placed][::-1]
-        state[at.slope] = whole.algorithm.sign * slope
-        given, k = whole.inputs, whole.at
-        state[at.setpoint] = given.setpoint[k]
+        state[at.slope] = algorithm.sign * slope
+        state[at.setpoint] = setpoint = given.setpoint[k]
         state[at.setpoint + 1] = given.direct[k]
-        state[at.setpoint + 2 :] = given.state[k]
-        return state[self.kept] if len(self.kept) < at.change else state
+        state[at.setpoint + 2 : at.change] = given.state[k]
+        state[at.change] = setpoint - given.setpoint[k - 1] if k else setpoint
+        return state[self.kept] if self.given else state
 
-    def given_to(self, count: int) -> Array:
-        """What is given to each of the next scans, (count, inputs)."""
+    def given_to(self, count: int) -> list[Array]:
+        """What is given to the next scans, each (count,); outputs as they become known."""
         whole, at, k = self.run, self.at, self.run.at
-        columns, given = [], whole.inputs
+        found, given = [], whole.inputs
         if "setpoint" in given.varying:
             setpoint = given.setpoint[k : k + count]
             last = given.setpoint[k - 1] if k else 0.0
-            columns += [setpoint, np.diff(setpoint, prepend=last)]
+            found += [setpoint, np.diff(setpoint, prepend=last)]
         if {"load", "noise"} & given.varying:
             direct = given.direct[k : k + count]
-            columns.append(direct if given.noise is None else direct + given.noise[k : k + count])
+            found.append(direct if given.noise is None else direct + given.noise[k : k + count])
         if "load" in given.varying:
-            columns += [*given.state[k : k + count].T]
+            found += [*given.state[k : k + count].T]
         placed = whole.back + k
-        columns += [whole.acting[placed - far : placed - far + count] for far in at.far]
-        return np.column_stack(columns)
+        return [*found, *(whole.acting[placed - far : placed - far + count] for far in at.far)]
 
-    def _remember(self, core: Array, mode: Mode) -> None:
+    def _remember(self, core: Array, mode: Mode, start: int) -> None:
         """Leave the run as a step would have left it; `core` is the plant's state, yf, I and D."""
         whole, n, algorithm = self.run, self.at.n, self.run.algorithm
+        last = whole.at - 1
         whole.x = core[:n]
-        m, setpoint = whole.memory, float(whole.inputs.setpoint[whole.at - 1])
-        m.filtered, m.integral, m.derivative = map(float, core[n : n + 3])
+        if last > start and "load" not in whole.inputs.varying:
+            # The upset of the last scan may be one of its own.
+            pushed = whole.inputs.state
+            whole.x = whole.x + (pushed[last] - pushed[start])
+        m, setpoint = whole.memory, float(whole.inputs.setpoint[last])
+        m.filtered, m.integral, m.derivative = core[n : n + 3].tolist()
         m.seen = algorithm.derivative_weight * setpoint - m.filtered
         weighted = algorithm.setpoint_weight * setpoint - m.filtered
         m.proportional = algorithm.proportional * weighted
-        m.output = algorithm.sign * float(whole.acting[whole.back + whole.at - 1])
+        m.output = algorithm.sign * float(whole.acting[whole.back + last])
         m.frozen = mode in (Mode.SLIDING, Mode.FROZEN)
 
     # --- the loop over one scan ---
@@ -311,58 +307,65 @@ class Leaps:
         if mode not in self._powers:
             over_scan, seen = self._one_scan(mode)
             # Without given inputs everything is kept, as it stands.
-            kept: list[int] | slice = self.kept if self.given else slice(self.at.change)
+            kept: list[int] | slice = self.kept if self.given else slice(self.at.change + 1)
             rows = over_scan[kept]
             self._powers[mode] = _Powers(
                 rows[:, kept],
-                rows[:, self.given] if self.given else rows[:, :0],
+                rows[:, self.given],
                 seen[:, kept],
-                seen[:, self.given] if self.given else seen[:, :0],
-                _GIVEN_BLOCK if self.given else _BLOCK,
+                seen[:, self.given],
+                self.block,
                 self.at.n,
             )
         return self._powers[mode]
 
     def _one_scan(self, mode: Mode) -> tuple[Array, Array]:
-        """The next state, and what is read of a scan (PV, then v and what I gains), as rows."""
+        """The next state, and what is read of a scan, as rows.
+
+        Read are the output as it acts, or where it stands what the algorithm wants; PV; and but
+        when free what I gains.
+        """
         at, a, n = self.at, self.run.algorithm, self.at.n
-        unit = np.eye(at.size)
-        y = unit[at.setpoint + 1].copy()
+        following = np.zeros((at.change + 1, at.size))
+        y = np.zeros(at.size)
         y[:n] = self.run.read
+        y[at.setpoint + 1] = 1.0
         for back, weight in self.run.weights.items():
             y[self._place(back)] += weight
-        setpoint, filtered = unit[at.setpoint], unit[n]
-        f = a.smooth * y
-        f[n] += 1.0 - a.smooth
-        gained = a.advance * (setpoint - f)
-        derivative = a.kick * (filtered - f)
+        filtered, integral, derivative = following[n : n + 3]
+        filtered[:] = a.smooth * y
+        filtered[n] += 1.0 - a.smooth
+        derivative[:] = -a.kick * filtered
+        derivative[n] += a.kick
         derivative[n + 2] += a.keep
         derivative[at.change] += a.kick * a.derivative_weight
-        wanted = -a.proportional * f + derivative + gained
+        gained = -a.advance * filtered
+        gained[at.setpoint] += a.advance
+        wanted = derivative + gained - a.proportional * filtered
         wanted[at.setpoint] += a.proportional * a.setpoint_weight
         wanted[n + 1] += 1.0
+        integral[n + 1] = 1.0
+        if mode in (Mode.FREE, Mode.HELD):
+            integral += gained
         output = self._next_output(mode, wanted, gained)
-        following = unit[: at.change].copy()
-        following[: at.newest] = 0.0
+        if mode is Mode.HELD and a.release:
+            integral += a.release * (a.sign * output - wanted)
         over = self.run.held.over(self.run.held.clock.scan)
         following[:n, :n] = over.phi
-        following[:n, at.setpoint + 2 : at.change] = np.eye(n)
+        _diagonal(following, 0, at.setpoint + 2, n)
         for back, tap in over.taps.items():
             if back:
                 following[:n, self._place(back)] += tap
             else:
                 following[:n] += tap[:, np.newaxis] * output
-        following[n], following[n + 2] = f, derivative
-        following[n + 1, n + 1] = 1.0
-        if mode in (Mode.FREE, Mode.HELD):
-            following[n + 1] += gained
-        if mode is Mode.HELD and a.release:
-            following[n + 1] += a.release * (a.sign * output - wanted)
         following[at.newest] = output
-        following[at.newest + 1 : at.slope] = unit[at.newest : at.slope - 1]
+        _diagonal(following, at.newest + 1, at.newest, at.near - 1)
+        # Slope, setpoint and upset stay as they are; the setpoint has changed only once.
+        _diagonal(following, at.slope, at.slope, at.change - at.slope)
         # What the upset adds to PV at once, and the noise with it, is not read but added later.
         y[at.setpoint + 1] = 0.0
-        return following, np.vstack([y, wanted, gained])
+        read = wanted if mode in _STANDING else output
+        return following, np.array([read, y] if mode is Mode.FREE else [read, y, gained])
 
     def _next_output(self, mode: Mode, wanted: Array, gained: Array) -> Array:
         sign = self.run.algorithm.sign
@@ -381,131 +384,134 @@ class Leaps:
         return self.at.change + 1 + self.at.far.index(back)
 
 
-class _Rows:
-    """What was read at each scan of a stretch, block by block: (blocks, rows, scans of a block)."""
-
-    def __init__(self, found: Array, count: int) -> None:
-        self.found = found
-        self.count = min(count, found.shape[0] * found.shape[2])
-        """Scans."""
-
-    def row(self, k: int, count: int) -> Array:
-        """One row at the first `count` scans."""
-        return self.found[:, k].reshape(-1)[:count]
-
-    def at(self, scan: int) -> Array:
-        """All rows at one scan."""
-        block, rest = divmod(scan, self.found.shape[2])
-        return self.found[block, :, rest]
+def _diagonal(matrix: Array, row: int, column: int, count: int) -> None:
+    """Ones downwards to the right of a place, in a matrix that is contiguous."""
+    width = matrix.shape[1]
+    first = row * width + column
+    matrix.reshape(-1)[first : first + count * (width + 1) : width + 1] = 1.0
 
 
 class _Powers:
-    """s' = A s + B w and the rows C s + D w, many scans at once."""
+    """s' = A s + B w and the rows C s + D w, a block of scans at once."""
 
     def __init__(self, a: Array, b: Array, c: Array, d: Array, block: int, n: int) -> None:
-        self.a, self.b, self.block, self.n = np.ascontiguousarray(a), b, block, n
-        size = len(a)
-        # Read at each scan: the plant's state, the rows, and with given inputs yf, I and D.
-        unit = np.eye(size)
-        core = unit[n : n + 3] if b.shape[1] else unit[:0]
-        self.read = np.concatenate([unit[:n], c, core])
-        self.direct = np.zeros((len(self.read), b.shape[1]))
-        self.direct[n : n + len(c)] = d
-        ahead = np.empty((len(self.read), block, size))
-        ahead[:, 0] = self.read
-        self.steps = [self.a]
-        done = 1
-        while done < block:
-            more = min(done, block - done)
-            np.matmul(ahead[:, :more], self.steps[-1], out=ahead[:, done : done + more])
-            done += more
-            self.steps.append(self.steps[-1] @ self.steps[-1])
-        self.ahead = ahead
-        self.wide = ahead.reshape(-1, size).T
-        self.over = [self._over_block()]
+        self.b, self.block, self.n = b, block, n
+        self.steps = [np.ascontiguousarray(a)]
+        """A to the power of 1, 2, 4 ..."""
+        self.size, self.rows = len(a), len(c)
+        while 1 << len(self.steps) <= block:
+            self.steps.append(self.steps[-1].dot(self.steps[-1]))
+        self.over = self.steps.pop()
+        self.across = [self.over]
+        """A to the power of 1, 2, 4 ... blocks."""
+        self.reading = self._over_block(c, d)
 
-    def _over_block(self) -> Array:
-        """S to the power of a block."""
-        whole: Array | None = None
+    def _over_block(self, c: Array, d: Array) -> Array:
+        """A block's state and inputs -> the rows at each of its scans.
+
+        (scans of a block * rows, size + inputs * scans of a block)
+        """
+        rows, size, inputs, block = len(c), self.size, self.b.shape[1], self.block
+        ahead = np.empty((block * rows, size))
+        ahead[:rows] = c
         for k, power in enumerate(self.steps):
-            if self.block >> k & 1:
-                whole = power if whole is None else whole @ power
-        assert whole is not None
-        return whole
-
-    def alone(self, state: Array, wanted: int) -> tuple[_Rows, Array]:
-        """The rows (rows, scans) without given inputs, and the state at every block."""
-        count = wanted // self.block + 1
-        blocks = np.empty((count, len(state)))
-        blocks[0] = state
-        done = 1
-        for k in range(count.bit_length()):
-            if done >= count:
-                break
-            if k == len(self.over):
-                self.over.append(self.over[-1] @ self.over[-1])
-            if not np.vdot(self.over[k], self.over[k]) < _LARGEST:
-                break
-            more = min(done, count - done)
-            np.matmul(blocks[:more], self.over[k].T, out=blocks[done : done + more])
-            done += more
-        blocks = blocks[:done]
-        return self._rows(blocks @ self.wide, wanted), blocks
-
-    def _rows(self, found: Array, count: int) -> _Rows:
-        return _Rows(found.reshape(len(found), len(self.read), self.block), count)
-
-    def driven(self, state: Array, given: Array, wanted: int) -> tuple[_Rows, Array]:
-        """The same with given inputs (wanted, inputs); one more scan is read than asked for."""
-        inputs, count = given.shape[1], wanted // self.block + 1
-        padded = np.zeros((count, self.block * inputs))
-        padded.reshape(-1)[: given.size] = given.reshape(-1)
-        pushed = padded @ self._pushed
-        blocks = np.empty((count, len(state)))
-        blocks[0] = state
-        across = self.over[0].T
-        for k in range(count - 1):
-            blocks[k + 1] = blocks[k] @ across + pushed[k]
-        found = blocks @ self.wide
-        found += padded @ self._answers
-        return self._rows(found, wanted + 1), blocks
+            done = rows << k
+            np.dot(ahead[:done], power, out=ahead[done : 2 * done])
+        if not inputs:
+            return ahead
+        # What an input does to the rows of later scans, laid out once for each scan it acts at.
+        answers = np.zeros((rows, inputs, 2 * block - 1))
+        answers[:, :, block - 1] = d
+        later = ahead[: (block - 1) * rows].dot(self.b).reshape(block - 1, rows, inputs)
+        answers[:, :, block:] = later.transpose(1, 2, 0)
+        of_row, of_input, of_scan = answers.strides
+        spread = np.lib.stride_tricks.as_strided(
+            answers[:, :, block - 1 :],
+            (block, rows, inputs, block),
+            (of_scan, of_row, of_input, -of_scan),
+        )
+        return np.hstack([ahead, spread.reshape(block * rows, inputs * block)])
 
     @cached_property
     def _pushed(self) -> Array:
-        """The inputs of a block -> what they add to the state at its end."""
-        columns = np.empty((self.block, len(self.a), self.b.shape[1]))
-        columns[0] = self.b
-        done = 1
-        for power in self.steps:
-            if done >= self.block:
-                break
-            more = min(done, self.block - done)
-            np.matmul(power, columns[:more], out=columns[done : done + more])
-            done += more
-        return columns[::-1].transpose(0, 2, 1).reshape(-1, len(self.a))
+        """(scans of a block, inputs, size): what an input does to the state that many scans on."""
+        inputs = self.b.shape[1]
+        found = np.empty((self.block * inputs, self.size))
+        found[:inputs] = self.b.T
+        for k, power in enumerate(self.steps):
+            done = inputs << k
+            np.dot(found[:done], power.T, out=found[done : 2 * done])
+        return found.reshape(self.block, inputs, self.size)
 
     @cached_property
-    def _answers(self) -> Array:
-        """The inputs of a block -> what they add to the rows read in it."""
-        block, inputs = self.block, self.b.shape[1]
-        later = self.ahead @ self.b
-        answers = np.zeros((len(self.read), 2 * block, inputs))
-        answers[:, block] = self.direct
-        answers[:, block + 1 :] = later[:, :-1]
-        scan = np.arange(block)
-        lag = scan[:, np.newaxis] - scan + block
-        # (rows, read at, given at, inputs) -> (given at, inputs, rows, read at)
-        spread = answers[:, lag]
-        return spread.transpose(2, 3, 0, 1).reshape(block * inputs, -1)
+    def _whole(self) -> Array:
+        """A block's state and inputs -> the state at its end, and the rows at each of its scans."""
+        pushed = self._pushed[::-1].transpose(2, 1, 0).reshape(self.size, -1)
+        return np.vstack([np.hstack([self.over, pushed]), self.reading])
 
-    def after(self, blocks: Array, rows: _Rows, scans: int) -> Array:
-        """The plant's state, yf, I and D after a number of scans of a stretch."""
-        if self.b.shape[1]:
-            read = rows.at(scans)
-            return np.concatenate([read[: self.n], read[-3:]])
+    @cached_property
+    def _to_states(self) -> Array:
+        """As `reading`, for the plant's state at each scan."""
+        inputs = self.b.shape[1]
+        return self._over_block(np.eye(self.n, self.size), np.zeros((self.n, inputs)))
+
+    def alone(self, state: Array, wanted: int) -> tuple[Array, Array]:
+        """Without given inputs: what each block starts from, and the rows (scans, rows)."""
+        count = -(-wanted // self.block)
+        blocks = np.empty((count, len(state)))
+        blocks[0] = state
+        done = 1
+        for k in range((count - 1).bit_length()):
+            if k == len(self.across):
+                self.across.append(self.across[-1].dot(self.across[-1]))
+            if not np.vdot(self.across[k], self.across[k]) < _LARGEST:
+                blocks = blocks[:done]
+                break
+            more = min(done, count - done)
+            np.dot(blocks[:more], self.across[k].T, out=blocks[done : done + more])
+            done += more
+        return blocks, blocks.dot(self.reading.T).reshape(-1, self.rows)
+
+    def driven(self, state: Array, given: list[Array], acting: Array | None) -> tuple[Array, Array]:
+        """With inputs, each (scans,): what each block starts from and is given, and the rows.
+
+        The first of the rows becomes known as `acting`, of which inputs may be a later look.
+        """
+        wanted, block, size = len(given[0]), self.block, self.size
+        count = -(-wanted // block)
+        blocks = np.zeros((count, size + len(given) * block))
+        found = np.empty((count, size + self.rows * block))
+        blocks[0, :size] = state
+        for k in range(count):
+            start, now = k * block, blocks[k]
+            more = min(block, wanted - start)
+            for place, source in enumerate(given):
+                at = size + place * block
+                now[at : at + more] = source[start : start + more]
+            np.dot(self._whole, now, out=found[k])
+            if k + 1 < count:
+                blocks[k + 1, :size] = found[k, :size]
+            if acting is not None:
+                acting[start : start + more] = found[k, size :: self.rows][:more]
+        return blocks, found[:, size:].reshape(-1, self.rows)
+
+    def states(self, blocks: Array, scans: int) -> Array:
+        """The plant's state (scans, n)."""
+        return blocks.dot(self._to_states.T).reshape(len(blocks) * self.block, self.n)[:scans]
+
+    def after(self, blocks: Array, scans: int) -> Array:
+        """The state after a number of scans of a stretch."""
         whole, rest = divmod(scans, self.block)
-        state = blocks[whole] if whole < len(blocks) else self.over[0] @ blocks[-1]
-        for k, power in enumerate(self.steps):
-            if rest >> k & 1:
-                state = power @ state
-        return np.array(state[: self.n + 3], np.float64)
+        if whole == len(blocks):
+            whole, rest = whole - 1, self.block
+        state: Array = blocks[whole, : self.size]
+        given = blocks[whole, self.size :]
+        steps = self.steps if rest < self.block else [self.over]
+        for k, power in enumerate(steps):
+            if rest == self.block or rest >> k & 1:
+                state = power.dot(state)
+        if len(given):
+            # The latest comes first.
+            latest = given.reshape(-1, self.block)[:, :rest][:, ::-1].T
+            state = state + latest.reshape(-1).dot(self._pushed[:rest].reshape(-1, self.size))
+        return state

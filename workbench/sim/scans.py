@@ -11,6 +11,7 @@ from __future__ import annotations
 import math
 from collections.abc import Callable, Sequence
 from dataclasses import dataclass, field
+from functools import cached_property
 from operator import mul
 from typing import Final
 
@@ -60,8 +61,6 @@ class Clock:
 class Course:
     """What the loop went through, at its scans."""
 
-    states: Array
-    """(n_scans, n), the process at each scan."""
     outputs: Array
     """(n_scans,), what each scan computed [%]."""
     pv: Array
@@ -71,6 +70,13 @@ class Course:
     """(n_scans,), what came through the valve of it [%]; the output itself where it is healthy."""
     measured: Array
     """(n_scans,), PV as the controller received it [%]."""
+    pieces: tuple[Callable[[], Array], ...]
+    """What works out the states of one stretch after the other, (its scans, n)."""
+
+    @cached_property
+    def states(self) -> Array:
+        """(n_scans, n), the process at each scan; worked out where it is asked for."""
+        return np.concatenate([piece() for piece in self.pieces])
 
 
 # --- the plant between scans ---------------------------------------------------------------------
@@ -250,7 +256,8 @@ class Inputs:
     noise: Array | None
     """(scans,), what the sensor adds to that [%]."""
     cuts: tuple[int, ...]
-    """Scans, rising from 0 to the last, between which nothing changes that is not `varying`."""
+    """Scans, rising from 0 to the last, between which nothing changes that is not `varying`, but
+    for what the upset adds to the state in the scan before a cut."""
     varying: frozenset[str]
     """What may change at any scan: setpoint, load, noise."""
 
@@ -267,7 +274,7 @@ def inputs(
     marks, varying = {0, scans}, set[str]()
     if isinstance(setpoint, Step):
         seen = clock.first_scan(setpoint.time) if setpoint.size else scans
-        marks |= {seen, seen + 1}
+        marks.add(seen)
         taken = np.zeros(scans)
         taken[seen:] = setpoint.size
     else:
@@ -275,7 +282,8 @@ def inputs(
         varying.add("setpoint")
     load = tuple(part for part in load if not isinstance(part, Step) or part.size)
     state, direct = held.upset(load, scans, clock.scan)
-    if clock.lead or any(entry.d for entry in held.process.load):
+    is_direct = bool(clock.lead) or any(entry.d for entry in held.process.load)
+    if is_direct:
         ahead, direct = held.upset(load, scans, clock.lead)
         direct += ahead @ held.process.c
     if len(load) > _FEW_STEPS or not all(isinstance(part, Step) for part in load):
@@ -284,7 +292,7 @@ def inputs(
         for part in load:
             for entry in held.process.load:
                 whole, _ = clock.place(part.time + entry.dead_time)
-                marks |= {whole, whole + 1}
+                marks |= {whole, whole + 1} if is_direct else {whole + 1}
     if noise is not None:
         varying.add("noise")
     cuts = tuple(sorted(mark for mark in marks if 0 <= mark <= scans))
@@ -317,7 +325,8 @@ class Run:
         self.back = max([1, *taps, *self.weights])
         """How far back outputs still act [scans]."""
         self.x = np.zeros(n)
-        self.states = np.empty((n, self.scans))
+        self.pieces: list[Callable[[], Array]] = []
+        """What works out the states of each stretch so far."""
         self.pv = np.empty(self.scans)
         self.measured = self.pv if self._is_plain else np.empty(self.scans)
         self.acting = np.zeros(self.back + self.scans)
@@ -335,12 +344,12 @@ class Run:
         done = self.at
         acting = self.acting[self.back : self.back + done]
         return Course(
-            self.states[:, :done].T,
             self.outputs[:done],
             self.pv[:done],
             self.diverged,
             acting,
             self.measured[:done],
+            tuple(self.pieces),
         )
 
     def change(self, held: Held) -> None:
@@ -405,7 +414,7 @@ class Run:
             moved = [*x, *[acting[i + tap] for tap in taps]]
             x = [sum(map(mul, line, moved)) + push for line, push in zip(rows, pushed, strict=True)]
         done = start + len(pv)
-        self.states[:, start:done] = np.array(states).reshape(len(pv), len(self.x)).T
+        self.pieces.append(lambda: np.array(states).reshape(len(pv), len(x)))
         self.pv[start:done] = pv
         if not self._is_plain:
             self.measured[start:done] = measured
