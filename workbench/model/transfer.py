@@ -531,28 +531,32 @@ class TransferFunction:
         sections = _sections(self.denominator[0].polynomial)
         gain = self.denominator[0].polynomial.gain / math.prod(f[0] for f in sections if not f[-1])
         n = sum(len(f) - 1 for f in sections)
-        a, b = np.zeros((n, n)), np.zeros(n)
+        # Numbers in lists: for a handful of them arrays take far longer.
+        a, b = [[0.0] * n for _ in range(n)], [0.0] * n
         row = 0
         source: int | None = None
         for factor in sections:
-            # The state that feeds this section, or the input for the first one.
-            target = b if source is None else a[:, source]
+            first, last = row, row + len(factor) - 2
             if len(factor) == 2:
-                a[row, row] = -factor[1] / factor[0]
-                target[row] = 1.0 / factor[0]
-                source, row = row, row + 1
+                a[row][row] = -factor[1] / factor[0]
+                fed = 1.0 / factor[0]
             else:
                 t = math.sqrt(abs(factor[0]))
-                a[row, row + 1] = 1.0 / t
-                a[row + 1, row] = -factor[2] * t / factor[0]
-                a[row + 1, row + 1] = -factor[1] / factor[0]
-                target[row + 1] = t / factor[0]
-                source, row = row, row + 2
+                a[first][last] = 1.0 / t
+                a[last][first] = -factor[2] * t / factor[0]
+                a[last][last] = -factor[1] / factor[0]
+                fed = t / factor[0]
+            # The section is fed by the state before it, the first one by the input.
+            if source is None:
+                b[last] = fed
+            else:
+                a[last][source] = fed
+            source, row = first, last + 1
         outputs = tuple(
-            _read_out(t.dead_time, t.polynomial.coefficients / gain, sections, n)
+            _read_out(t.dead_time, (t.polynomial.coefficients / gain).tolist(), sections, n)
             for t in self.numerator
         )
-        return Realisation(a, b, outputs)
+        return Realisation(np.array(a).reshape(n, n), np.array(b), outputs)
 
 
 def _in_seconds(term: Delayed, seconds: float) -> Delayed:
@@ -565,10 +569,10 @@ def _in_seconds(term: Delayed, seconds: float) -> Delayed:
 
 
 def _read_out(
-    dead_time: float, numerator: NDArray[np.float64], sections: list[Coefficients], n: int
+    dead_time: float, numerator: list[float], sections: list[Coefficients], n: int
 ) -> Output:
     """The row C and feedthrough D of numerator / product of sections, by repeated division."""
-    c = np.zeros(n)
+    c = [0.0] * n
     row = n
     rest = numerator
     for factor in reversed(sections):
@@ -577,18 +581,16 @@ def _read_out(
         c[row] = remainder[-1]
         if len(factor) == 3:
             c[row + 1] = remainder[0] / math.sqrt(abs(factor[0]))
-    return Output(dead_time, c, float(rest[-1]))
+    return Output(dead_time, np.array(c), rest[-1])
 
 
-def _divided(
-    numerator: NDArray[np.float64], factor: Coefficients
-) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
-    """Quotient and remainder of all its powers; numpy's own drops what is below 1e-8."""
+def _divided(numerator: list[float], factor: Coefficients) -> tuple[list[float], list[float]]:
+    """Quotient and remainder of all its powers."""
     degree = len(factor) - 1
-    rest = np.concatenate([np.zeros(max(0, degree + 1 - len(numerator))), numerator])
+    rest = [0.0] * max(0, degree + 1 - len(numerator)) + numerator
     steps = len(rest) - degree
-    quotient = np.empty(steps)
     for i in range(steps):
-        quotient[i] = rest[i] / factor[0]
-        rest[i : i + degree + 1] -= quotient[i] * np.array(factor)
-    return quotient, rest[steps:]
+        rest[i] /= factor[0]
+        for k in range(1, degree + 1):
+            rest[i + k] -= rest[i] * factor[k]
+    return rest[:steps], rest[steps:]

@@ -17,7 +17,6 @@ from __future__ import annotations
 
 import math
 from collections.abc import Sequence
-from dataclasses import dataclass
 from enum import Enum
 from functools import cached_property
 from typing import Final
@@ -98,46 +97,34 @@ def follow(whole: Run, end: int) -> None:
             whole.step(min(stop, whole.at + by_hand), step)
 
 
-@dataclass(frozen=True)
 class _Layout:
     """Where things stand among the columns of the loop over one scan."""
 
-    n: int
-    """States of the plant; filtered PV, I and D follow them."""
-    near: int
-    """Outputs kept, the newest first."""
-    far: tuple[int, ...]
-    """Scans back of the outputs that are given."""
-
-    @property
-    def newest(self) -> int:
-        return self.n + 3
-
-    @property
-    def slope(self) -> int:
+    def __init__(self, n: int, near: int, far: tuple[int, ...], varying: frozenset[str]) -> None:
+        self.n = n
+        """States of the plant; filtered PV, I and D follow them."""
+        self.near = near
+        """Outputs kept, the newest first."""
+        self.far = far
+        """Scans back of the outputs that are given."""
+        self.newest = n + 3
+        self.slope = self.newest + near
         """By how much a held output moves in a scan."""
-        return self.newest + self.near
-
-    @property
-    def setpoint(self) -> int:
+        self.setpoint = self.slope + 1
         """The setpoint; what the upset adds to PV and to the state follows it."""
-        return self.slope + 1
-
-    @property
-    def change(self) -> int:
+        self.change = self.setpoint + 2 + n
         """Of the setpoint since the scan before."""
-        return self.setpoint + 2 + self.n
-
-    @property
-    def size(self) -> int:
-        return self.change + 1 + len(self.far)
-
-    def given(self, varying: frozenset[str]) -> list[int]:
+        self.width = self.change + 1
+        self.size = self.width + len(far)
+        given = [self.setpoint, self.change] if "setpoint" in varying else []
+        given += [self.setpoint + 1] if {"load", "noise"} & varying else []
+        given += range(self.setpoint + 2, self.change) if "load" in varying else []
+        self.given = [*given, *range(self.width, self.size)]
         """Columns that are given to each scan, in the order of `Leaps.given_to`."""
-        found = [self.setpoint, self.change] if "setpoint" in varying else []
-        found += [self.setpoint + 1] if {"load", "noise"} & varying else []
-        found += range(self.setpoint + 2, self.change) if "load" in varying else []
-        return [*found, *range(self.change + 1, self.size)]
+        # Without given inputs everything is kept, as it stands.
+        self.kept: list[int] | slice = slice(self.width)
+        if self.given:
+            self.kept = [k for k in range(self.width) if k not in self.given]
 
 
 class Leaps:
@@ -145,19 +132,14 @@ class Leaps:
 
     def __init__(self, whole: Run) -> None:
         self.run = whole
-        taps = whole.held.over(whole.held.clock.scan).taps
-        backs = {*taps, *whole.weights}
-        self.at = _Layout(
-            len(whole.x),
-            max([1, *(back for back in backs if back <= _NEAR)]),
-            tuple(sorted(back for back in backs if back > _NEAR)),
-        )
+        self.over = whole.held.over(whole.held.clock.scan)
+        backs = {*self.over.taps, *whole.weights}
+        near = max([1, *(back for back in backs if back <= _NEAR)])
+        far = tuple(sorted(back for back in backs if back > _NEAR))
+        self.at = _Layout(len(whole.x), near, far, whole.inputs.varying)
         self.block = _BLOCK
-        while self.block > min(self.at.far, default=self.block):
+        while self.block > min(far, default=self.block):
             self.block //= 2
-        self.given = self.at.given(whole.inputs.varying)
-        """Columns that are not kept but given to each scan."""
-        self.kept = [k for k in range(self.at.change + 1) if k not in self.given]
         self._powers: dict[Mode, _Powers] = {}
 
     def leap(self, stop: int) -> int:
@@ -199,26 +181,29 @@ class Leaps:
         if mode in _STANDING:
             known = whole.memory.output + slope * np.arange(1.0, wanted + 1.0)
             np.multiply(known, sign, out=acting[:wanted])
-        if self.given:
+        if self.at.given:
             blocks, read = powers.driven(
-                self._state(slope), self.given_to(wanted), acting if known is None else None
+                self._state(slope),
+                self.given_to(wanted),
+                acting if known is None else None,
+                min(self.at.far, default=wanted) // self.block or 1,
             )
         else:
             blocks, read = powers.alone(self._state(slope), wanted)
         wanted = min(wanted, len(read))
-        output = sign * read[:wanted, 0] if known is None else known[:wanted]
         if whole.algorithm.is_limited:
+            output = sign * read[:wanted, 0] if known is None else known[:wanted]
             wanted = self._lasting(mode, slope, output, read[:wanted])
         pv = whole.pv[start : start + wanted]
-        np.add(read[:wanted, 1], whole.inputs.direct[start : start + wanted], out=pv)
-        if not (pv.max(initial=0.0) <= BOUND and pv.min(initial=0.0) >= -BOUND):
+        np.add(read[:wanted, 1], self._direct(wanted), out=pv)
+        if wanted and not (pv.max() <= BOUND and pv.min() >= -BOUND):
             wanted = int(np.argmin(np.abs(pv) <= BOUND))
             pv = pv[:wanted]
             whole.diverged = True
         if whole.inputs.noise is not None:
             noise = whole.inputs.noise[start : start + wanted]
             np.add(pv, noise, out=whole.measured[start : start + wanted])
-        if known is None and not self.given:
+        if known is None and not self.at.given:
             acting[:wanted] = read[:wanted, 0]
         if wanted:
             whole.at += wanted
@@ -253,20 +238,28 @@ class Leaps:
         at = int(wrong.argmax())
         return at if wrong[at] else len(wrong)
 
+    def _direct(self, count: int) -> Array | float:
+        """What the upset adds to PV in the next scans [%]."""
+        upset, k = self.run.inputs.upset, self.run.at
+        if "load" in self.run.inputs.varying:
+            return upset.over(k, k + count)[1]
+        return float(upset.direct[upset.place(k)])
+
     def _state(self, slope: float) -> Array:
         whole, at, m = self.run, self.at, self.run.memory
         given, k, algorithm = whole.inputs, whole.at, whole.algorithm
-        state = np.zeros(at.change + 1)
+        state = np.zeros(at.width)
         state[: at.n] = whole.x
         state[at.n : at.newest] = m.filtered, m.integral, m.derivative
         placed = whole.back + k
         state[at.newest : at.slope] = whole.acting[placed - at.near : placed][::-1]
         state[at.slope] = algorithm.sign * slope
         state[at.setpoint] = setpoint = given.setpoint[k]
-        state[at.setpoint + 1] = given.direct[k]
-        state[at.setpoint + 2 : at.change] = given.state[k]
+        place = given.upset.place(k)
+        state[at.setpoint + 1] = given.upset.direct[place]
+        state[at.setpoint + 2 : at.change] = given.upset.state[place]
         state[at.change] = setpoint - given.setpoint[k - 1] if k else setpoint
-        return state[self.kept] if self.given else state
+        return state[at.kept]
 
     def given_to(self, count: int) -> list[Array]:
         """What is given to the next scans, each (count,); outputs as they become known."""
@@ -277,22 +270,21 @@ class Leaps:
             last = given.setpoint[k - 1] if k else 0.0
             found += [setpoint, np.diff(setpoint, prepend=last)]
         if {"load", "noise"} & given.varying:
-            direct = given.direct[k : k + count]
+            pushes, direct = given.upset.over(k, k + count)
             found.append(direct if given.noise is None else direct + given.noise[k : k + count])
-        if "load" in given.varying:
-            found += [*given.state[k : k + count].T]
+            found += [*pushes.T] if "load" in given.varying else []
         placed = whole.back + k
         return [*found, *(whole.acting[placed - far : placed - far + count] for far in at.far)]
 
     def _remember(self, core: Array, mode: Mode, start: int) -> None:
         """Leave the run as a step would have left it; `core` is the plant's state, yf, I and D."""
         whole, n, algorithm = self.run, self.at.n, self.run.algorithm
-        last = whole.at - 1
+        last, upset = whole.at - 1, whole.inputs.upset
         whole.x = core[:n]
-        if last > start and "load" not in whole.inputs.varying:
-            # The upset of the last scan may be one of its own.
-            pushed = whole.inputs.state
-            whole.x = whole.x + (pushed[last] - pushed[start])
+        first, latest = upset.place(start), upset.place(last)
+        if latest > first and "load" not in whole.inputs.varying:
+            # The last scan may meet an upset of its own.
+            whole.x = whole.x + (upset.state[latest] - upset.state[first])
         m, setpoint = whole.memory, float(whole.inputs.setpoint[last])
         m.filtered, m.integral, m.derivative = core[n : n + 3].tolist()
         m.seen = algorithm.derivative_weight * setpoint - m.filtered
@@ -305,17 +297,12 @@ class Leaps:
 
     def _of(self, mode: Mode) -> _Powers:
         if mode not in self._powers:
-            over_scan, seen = self._one_scan(mode)
-            # Without given inputs everything is kept, as it stands.
-            kept: list[int] | slice = self.kept if self.given else slice(self.at.change + 1)
+            over_scan, read = self._one_scan(mode)
+            kept, given = self.at.kept, self.at.given
             rows = over_scan[kept]
             self._powers[mode] = _Powers(
-                rows[:, kept],
-                rows[:, self.given],
-                seen[:, kept],
-                seen[:, self.given],
-                self.block,
-                self.at.n,
+                *(rows[:, kept], rows[:, given], read[:, kept], read[:, given]),
+                *(self.block, self.at.n),
             )
         return self._powers[mode]
 
@@ -326,7 +313,7 @@ class Leaps:
         when free what I gains.
         """
         at, a, n = self.at, self.run.algorithm, self.at.n
-        following = np.zeros((at.change + 1, at.size))
+        following = np.zeros((at.width, at.size))
         y = np.zeros(at.size)
         y[:n] = self.run.read
         y[at.setpoint + 1] = 1.0
@@ -350,10 +337,9 @@ class Leaps:
         output = self._next_output(mode, wanted, gained)
         if mode is Mode.HELD and a.release:
             integral += a.release * (a.sign * output - wanted)
-        over = self.run.held.over(self.run.held.clock.scan)
-        following[:n, :n] = over.phi
+        following[:n, :n] = self.over.phi
         _diagonal(following, 0, at.setpoint + 2, n)
-        for back, tap in over.taps.items():
+        for back, tap in self.over.taps.items():
             if back:
                 following[:n, self._place(back)] += tap
             else:
@@ -381,7 +367,7 @@ class Leaps:
         """The column of an output of scans back, 1 or more."""
         if back <= self.at.near:
             return self.at.newest + back - 1
-        return self.at.change + 1 + self.at.far.index(back)
+        return self.at.width + self.at.far.index(back)
 
 
 def _diagonal(matrix: Array, row: int, column: int, count: int) -> None:
@@ -389,6 +375,14 @@ def _diagonal(matrix: Array, row: int, column: int, count: int) -> None:
     width = matrix.shape[1]
     first = row * width + column
     matrix.reshape(-1)[first : first + count * (width + 1) : width + 1] = 1.0
+
+
+def _fill(blocks: Array, values: Array) -> None:
+    """Put values (scans,) into blocks (blocks, scans of a block), the last not always full."""
+    whole, rest = divmod(len(values), blocks.shape[1])
+    blocks[:whole] = values[: len(values) - rest].reshape(whole, blocks.shape[1])
+    if rest:
+        blocks[whole, :rest] = values[len(values) - rest :]
 
 
 class _Powers:
@@ -472,44 +466,49 @@ class _Powers:
             done += more
         return blocks, blocks.dot(self.reading.T).reshape(-1, self.rows)
 
-    def driven(self, state: Array, given: list[Array], acting: Array | None) -> tuple[Array, Array]:
+    def driven(
+        self, state: Array, given: list[Array], acting: Array | None, known: int
+    ) -> tuple[Array, Array]:
         """With inputs, each (scans,): what each block starts from and is given, and the rows.
 
-        The first of the rows becomes known as `acting`, of which inputs may be a later look.
+        The first of the rows becomes known as `acting`; inputs may be a later look at it, known for
+        a number of blocks beforehand.
         """
         wanted, block, size = len(given[0]), self.block, self.size
         count = -(-wanted // block)
         blocks = np.zeros((count, size + len(given) * block))
         found = np.empty((count, size + self.rows * block))
         blocks[0, :size] = state
-        for k in range(count):
-            start, now = k * block, blocks[k]
-            more = min(block, wanted - start)
+        following = [*blocks[1:, :size], np.empty(size)]
+        for first in range(0, count, known):
+            start, end = first * block, min((first + known) * block, wanted)
+            part = slice(first, first + known)
             for place, source in enumerate(given):
                 at = size + place * block
-                now[at : at + more] = source[start : start + more]
-            np.dot(self._whole, now, out=found[k])
-            if k + 1 < count:
-                blocks[k + 1, :size] = found[k, :size]
+                _fill(blocks[part, at : at + block], source[start:end])
+            for now, rows, then in zip(blocks[part], found[part], following[part], strict=True):
+                np.dot(self._whole, now, out=rows)
+                then[:] = rows[:size]
             if acting is not None:
-                acting[start : start + more] = found[k, size :: self.rows][:more]
+                acting[start:end] = found[part, size :: self.rows].reshape(-1)[: end - start]
         return blocks, found[:, size:].reshape(-1, self.rows)
 
     def states(self, blocks: Array, scans: int) -> Array:
         """The plant's state (scans, n)."""
-        return blocks.dot(self._to_states.T).reshape(len(blocks) * self.block, self.n)[:scans]
+        found: Array = blocks.dot(self._to_states.T)
+        return found.reshape(len(blocks) * self.block, self.n)[:scans]
 
     def after(self, blocks: Array, scans: int) -> Array:
         """The state after a number of scans of a stretch."""
         whole, rest = divmod(scans, self.block)
         if whole == len(blocks):
             whole, rest = whole - 1, self.block
-        state: Array = blocks[whole, : self.size]
+        state = blocks[whole, : self.size]
         given = blocks[whole, self.size :]
         steps = self.steps if rest < self.block else [self.over]
         for k, power in enumerate(steps):
             if rest == self.block or rest >> k & 1:
-                state = power.dot(state)
+                state = power @ state
         if len(given):
             # The latest comes first.
             latest = given.reshape(-1, self.block)[:, :rest][:, ::-1].T

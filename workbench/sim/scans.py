@@ -9,8 +9,9 @@ stretch at once.  Both give the same numbers.
 from __future__ import annotations
 
 import math
+from bisect import bisect_left, bisect_right
 from collections.abc import Callable, Sequence
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 from functools import cached_property
 from operator import mul
 from typing import Final
@@ -145,10 +146,14 @@ class Held:
         taps: dict[int, Array] = {}
         weights: dict[int, float] = {}
         for entry, whole, rest in self.entries:
-            after, new = self.hold(entry, max(0.0, time - rest))
-            old = self.hold(entry, min(time, rest))[1]
-            for back, tap in ((whole, new), (whole + 1, after @ old)):
-                taps[back] = taps[back] + tap if back in taps else tap
+            early = min(time, rest)
+            old = self.hold(entry, early)[1] if early else None
+            if time > rest:
+                after, new = self.hold(entry, time - rest)
+                old = None if old is None else after @ old
+                taps[whole] = taps[whole] + new if whole in taps else new
+            if old is not None:
+                taps[whole + 1] = taps[whole + 1] + old if whole + 1 in taps else old
             # PV is sampled just before what arrives at that same instant.
             late = time < rest or time == rest == 0.0
             back = whole + 1 if late else whole
@@ -176,28 +181,38 @@ class Held:
 
     # --- what comes from outside ---
 
-    def upset(self, load: Signal, scans: int, time: float) -> tuple[Array, Array]:
-        """What an upset adds to the state (scans, n) and to PV (scans,) up to `time` after a scan.
-
-        Each scan by itself: what it adds to the state from that scan on.
-        """
-        state, pv = np.zeros((scans, len(self.process.c))), np.zeros(scans)
-        for part in load:
-            for entry in self.process.load:
-                self._add(part, entry, time, state, pv)
-        return state, pv
+    def upset(self, load: Signal, scans: int, time: float) -> Upset:
+        """What an upset adds to the state and to PV up to `time` after each scan."""
+        ways = [
+            (part, entry, *self.clock.place(part.time + entry.dead_time))
+            for part in load
+            for entry in self.process.load
+        ]
+        ways = [way for way in ways if way[2] < scans]
+        starts: Sequence[int] = range(scans)
+        if all(isinstance(part, Step) for part in load):
+            marks = {0, *(way[2] for way in ways), *(way[2] + 1 for way in ways)}
+            starts = sorted(marks - {scans})
+        found = Upset(starts, np.zeros((len(starts), len(self.process.c))), np.zeros(len(starts)))
+        for part, entry, whole, rest in ways:
+            self._add(part, entry, time, rest, found, found.place(whole))
+        return found
 
     def _add(
-        self, part: Step | Ramp | Sine, entry: Entry, time: float, state: Array, pv: Array
+        self,
+        part: Step | Ramp | Sine,
+        entry: Entry,
+        time: float,
+        rest: float,
+        upset: Upset,
+        place: int,
     ) -> None:
-        whole, rest = self.clock.place(part.time + entry.dead_time)
-        if whole >= len(pv):
-            return
-        following = whole + 1
+        """What is added from `rest` after the start of a place on."""
+        state, pv, following = upset.state, upset.direct, place + 1
         if isinstance(part, Step):
             if time >= rest:
-                state[whole] += self.hold(entry, time - rest)[1] * part.size
-                pv[whole] += entry.d * part.size
+                state[place] += self.hold(entry, time - rest)[1] * part.size
+                pv[place] += entry.d * part.size
             state[following:] += self.hold(entry, time)[1] * part.size
             if entry.d:
                 pv[following:] += entry.d * part.size
@@ -206,9 +221,9 @@ class Held:
         rates, start, shown = _generator(part)
         if time >= rest:
             moved = _driven(self.process.a, entry.b, rates, shown, time - rest)
-            state[whole] += moved @ start
-            pv[whole] += entry.d * float(part.values(np.array([part.time + time - rest]))[0])
-        since: Array = np.arange(float(following), len(pv)) - whole
+            state[place] += moved @ start
+            pv[place] += entry.d * float(part.values(np.array([part.time + time - rest]))[0])
+        since: Array = np.arange(float(following), len(pv)) - place
         since *= self.clock.scan
         since -= rest
         moving = np.column_stack(
@@ -216,6 +231,40 @@ class Held:
         )
         state[following:] += moving[:, :-1] @ _driven(self.process.a, entry.b, rates, shown, time).T
         pv[following:] += entry.d * moving[:, -1]
+
+
+@dataclass(frozen=True)
+class Upset:
+    """What comes from an upset at each scan by itself, the same from one of `starts` to the next."""
+
+    starts: Sequence[int]
+    """Scans, rising from 0."""
+    state: Array
+    """(starts, n), what it adds to the state from that scan on."""
+    direct: Array
+    """(starts,), what it adds to PV [%]."""
+
+    def place(self, scan: int) -> int:
+        """Which of the starts a scan belongs to."""
+        return bisect_right(self.starts, scan) - 1
+
+    def over(self, start: int, end: int) -> tuple[Array, Array]:
+        """For each scan from `start` to before `end`: (scans, n) and (scans,)."""
+        first, last = self.place(start), self.place(end - 1) + 1
+        lengths = np.diff([start, *self.starts[first + 1 : last], end])
+        return (
+            self.state[first:last].repeat(lengths, axis=0),
+            self.direct[first:last].repeat(lengths),
+        )
+
+    def until(self, scan: int, later: Upset) -> Upset:
+        """This one before a scan, another from there on."""
+        kept, place = bisect_left(self.starts, scan), later.place(scan)
+        return Upset(
+            [*self.starts[:kept], scan, *later.starts[place + 1 :]],
+            np.concatenate([self.state[:kept], later.state[place:]]),
+            np.concatenate([self.direct[:kept], later.direct[place:]]),
+        )
 
 
 def _generator(part: Ramp | Sine) -> tuple[Array, Array, Array]:
@@ -249,10 +298,8 @@ class Inputs:
 
     setpoint: Array
     """(scans,) [%]"""
-    state: Array
-    """(scans, n), what the upset adds to the state in the scan."""
-    direct: Array
-    """(scans,), what the upset adds to PV as it is read [%]."""
+    upset: Upset
+    """What it adds to the state in the scan, and to PV as it is read."""
     noise: Array | None
     """(scans,), what the sensor adds to that [%]."""
     cuts: tuple[int, ...]
@@ -281,11 +328,11 @@ def inputs(
         taken = setpoint
         varying.add("setpoint")
     load = tuple(part for part in load if not isinstance(part, Step) or part.size)
-    state, direct = held.upset(load, scans, clock.scan)
+    upset = held.upset(load, scans, clock.scan)
     is_direct = bool(clock.lead) or any(entry.d for entry in held.process.load)
     if is_direct:
-        ahead, direct = held.upset(load, scans, clock.lead)
-        direct += ahead @ held.process.c
+        ahead = held.upset(load, scans, clock.lead)
+        upset = replace(upset, direct=ahead.direct + ahead.state @ held.process.c)
     if len(load) > _FEW_STEPS or not all(isinstance(part, Step) for part in load):
         varying.add("load")
     else:
@@ -296,7 +343,7 @@ def inputs(
     if noise is not None:
         varying.add("noise")
     cuts = tuple(sorted(mark for mark in marks if 0 <= mark <= scans))
-    return Inputs(taken, state, direct, noise, cuts, frozenset(varying))
+    return Inputs(taken, upset, noise, cuts, frozenset(varying))
 
 
 # --- the run -------------------------------------------------------------------------------------
@@ -385,13 +432,13 @@ class Run:
         backs = [(back - far, weight) for far, weight in self.weights.items()]
         taps = [back - far for far in over.taps]
         rows = np.column_stack([over.phi, *over.taps.values()]).tolist()
-        upset = given.state[start:end].tolist()
+        pushes, directs = given.upset.over(start, end)
         noise = [0.0] * (end - start) if given.noise is None else given.noise[start:end].tolist()
         outside = zip(
             given.setpoint[start:end].tolist(),
-            given.direct[start:end].tolist(),
+            directs.tolist(),
             noise,
-            upset,
+            pushes.tolist(),
             strict=True,
         )
         through, received = self.through, self.received
