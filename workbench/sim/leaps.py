@@ -38,6 +38,8 @@ _LEAST: Final = 12
 """Fewer scans than this are stepped."""
 _FEW: Final = 2
 """Half the scans that are stepped where a mode ends."""
+_REACH: Final = 16 * _BLOCK
+"""Scans of the first stretch in a mode that may end; the next are longer and longer."""
 _LARGEST: Final = 1e200
 """Powers of an unstable loop whose squares sum up to this are not taken further."""
 
@@ -132,8 +134,7 @@ class Leaps:
 
     def __init__(self, whole: Run) -> None:
         self.run = whole
-        self.over = whole.held.over(whole.held.clock.scan)
-        backs = {*self.over.taps, *whole.weights}
+        backs = {*whole.over.taps, *whole.weights}
         near = max([1, *(back for back in backs if back <= _NEAR)])
         far = tuple(sorted(back for back in backs if back > _NEAR))
         self.at = _Layout(len(whole.x), near, far, whole.inputs.varying)
@@ -146,12 +147,12 @@ class Leaps:
         """Go on in the present mode while it lasts, at most to `stop`; the scans it went."""
         whole, start = self.run, self.run.at
         mode, slope = self._mode()
-        reach = 4 * _BLOCK
+        reach = _REACH
         while whole.at < stop and not whole.diverged:
             wanted = stop - whole.at
             if whole.algorithm.is_limited:
                 wanted = min(wanted, reach)
-                reach *= 64
+                reach *= 16
             if self._stretch(mode, slope, wanted) < wanted:
                 break
         return whole.at - start
@@ -215,22 +216,24 @@ class Leaps:
         """For how many scans the condition of a mode holds."""
         algorithm, first = self.run.algorithm, self.run.memory.output
         low, high = algorithm.bounds()
-        wrong = (output < low) | (output > high)
         if mode in _STANDING:
             wanted, gained = read[:, 0], read[:, 2]
             side = math.copysign(1.0, slope) if slope else 1.0 if first == high else -1.0
-            wrong |= side * (wanted - output) <= 0.0
+            wrong = side * (wanted - output) <= 0.0
             if mode is Mode.FROZEN:
                 wrong |= (side * gained <= 0.0) | (side * (wanted - gained - output) < 0.0)
             elif algorithm.conditional:
                 wrong |= side * gained > 0.0
+            if slope:
+                wrong |= (output < low) | (output > high)
         else:
-            lowest, highest = np.full(1, low), np.full(1, high)
+            lowest: Array | float = low
+            highest: Array | float = high
             if math.isfinite(algorithm.move):
                 before = np.concatenate([[first], output[:-1]])
                 lowest = np.maximum(low, before - algorithm.move)
                 highest = np.minimum(high, before + algorithm.move)
-                wrong |= (output < lowest) | (output > highest)
+            wrong = (output < lowest) | (output > highest)
             if mode is Mode.SLIDING:
                 gained = read[:, 2]
                 wanted = output + gained
@@ -306,52 +309,66 @@ class Leaps:
             )
         return self._powers[mode]
 
-    def _one_scan(self, mode: Mode) -> tuple[Array, Array]:
-        """The next state, and what is read of a scan, as rows.
+    @cached_property
+    def _algorithm_over_a_scan(self) -> tuple[Array, Array, Array, Array]:
+        """The next state but for its outputs and what the integral gains, and rows of a scan.
 
-        Read are the output as it acts, or where it stands what the algorithm wants; PV; and but
-        when free what I gains.
+        The rows are PV, what the algorithm wants and what the integral would gain.
         """
         at, a, n = self.at, self.run.algorithm, self.at.n
-        following = np.zeros((at.width, at.size))
-        y = np.zeros(at.size)
+        following, y = np.zeros((at.width, at.size)), np.zeros(at.size)
         y[:n] = self.run.read
         y[at.setpoint + 1] = 1.0
         for back, weight in self.run.weights.items():
             y[self._place(back)] += weight
-        filtered, integral, derivative = following[n : n + 3]
-        filtered[:] = a.smooth * y
+        filtered, integral, derivative = following[n], following[n + 1], following[n + 2]
+        np.multiply(y, a.smooth, out=filtered)
         filtered[n] += 1.0 - a.smooth
-        derivative[:] = -a.kick * filtered
+        np.multiply(filtered, -a.kick, out=derivative)
         derivative[n] += a.kick
         derivative[n + 2] += a.keep
         derivative[at.change] += a.kick * a.derivative_weight
-        gained = -a.advance * filtered
+        gained = filtered * -a.advance
         gained[at.setpoint] += a.advance
-        wanted = derivative + gained - a.proportional * filtered
+        wanted = filtered * -a.proportional
+        wanted += derivative
+        wanted += gained
         wanted[at.setpoint] += a.proportional * a.setpoint_weight
         wanted[n + 1] += 1.0
         integral[n + 1] = 1.0
-        if mode in (Mode.FREE, Mode.HELD):
-            integral += gained
-        output = self._next_output(mode, wanted, gained)
-        if mode is Mode.HELD and a.release:
-            integral += a.release * (a.sign * output - wanted)
-        following[:n, :n] = self.over.phi
+        following[:n, :n] = self.run.over.phi
         _diagonal(following, 0, at.setpoint + 2, n)
-        for back, tap in self.over.taps.items():
+        for back, tap in self.run.over.taps.items():
             if back:
                 following[:n, self._place(back)] += tap
-            else:
-                following[:n] += tap[:, np.newaxis] * output
-        following[at.newest] = output
         _diagonal(following, at.newest + 1, at.newest, at.near - 1)
         # Slope, setpoint and upset stay as they are; the setpoint has changed only once.
         _diagonal(following, at.slope, at.slope, at.change - at.slope)
         # What the upset adds to PV at once, and the noise with it, is not read but added later.
         y[at.setpoint + 1] = 0.0
-        read = wanted if mode in _STANDING else output
-        return following, np.array([read, y] if mode is Mode.FREE else [read, y, gained])
+        return following, y, wanted, gained
+
+    def _one_scan(self, mode: Mode) -> tuple[Array, Array]:
+        """The next state, and what is read of a scan, as rows.
+
+        Read are the output as it acts, or where it stands what the algorithm wants; PV; and but
+        when free what the integral would gain.
+        """
+        at, a = self.at, self.run.algorithm
+        following, y, wanted, gained = self._algorithm_over_a_scan
+        following = following.copy()
+        integral = following[at.n + 1]
+        if mode in (Mode.FREE, Mode.HELD):
+            integral += gained
+        output = self._next_output(mode, wanted, gained)
+        if mode is Mode.HELD and a.release:
+            integral += a.release * (a.sign * output - wanted)
+        following[at.newest] = output
+        if 0 in self.run.over.taps:
+            following[: at.n] += self.run.over.taps[0][:, np.newaxis] * output
+        if mode is Mode.FREE:
+            return following, np.array([output, y])
+        return following, np.array([wanted if mode in _STANDING else output, y, gained])
 
     def _next_output(self, mode: Mode, wanted: Array, gained: Array) -> Array:
         sign = self.run.algorithm.sign

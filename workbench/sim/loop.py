@@ -136,7 +136,7 @@ def _sampled_trace(found: Passage, events: Events) -> Trace:
     # Rows at the same places in every scan, and single ones where something happens in between.
     offsets = _offsets(held, events.until)
     number = np.arange(scans)
-    time: Array = number * clock.scan
+    time: Array = np.asarray(number * clock.scan, np.float64)
     values = course.pv
     if len(offsets) > 1 or clock.lead:
         time = np.add.outer(time, offsets).ravel()

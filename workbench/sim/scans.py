@@ -13,6 +13,7 @@ from bisect import bisect_left, bisect_right
 from collections.abc import Callable, Sequence
 from dataclasses import dataclass, field, replace
 from functools import cached_property
+from itertools import pairwise
 from operator import mul
 from typing import Final
 
@@ -112,10 +113,8 @@ class Held:
             for entry in (*process.output, *process.load)
         }
         n = len(process.c)
-        self._inputs = np.array([np.frombuffer(b) for b in columns]).reshape(len(columns), n).T
-        self._known: dict[float, tuple[Array, Array]] = {
-            0.0: (np.eye(n), np.zeros((n, len(columns))))
-        }
+        self._inputs = np.frombuffer(b"".join(columns)).reshape(len(columns), n).T
+        self._known: dict[float, tuple[Array, Array]] = {}
         self._learn([rest for _, _, rest in self.entries])
 
     def _learn(self, rests: Sequence[float]) -> None:
@@ -160,7 +159,7 @@ class Held:
             weights[back] = weights.get(back, 0.0) + entry.d
         if time not in self._known:
             self._known[time] = holds(self.process.a, self._inputs, (time,))[0]
-        taps = {back: tap for back, tap in taps.items() if tap.any()}
+        taps = {back: tap for back, tap in taps.items() if any(tap.tolist())}
         weights = {back: weight for back, weight in weights.items() if weight}
         part = Part(self._known[time][0], taps, weights)
         self._parts[time] = part
@@ -235,7 +234,7 @@ class Held:
 
 @dataclass(frozen=True)
 class Upset:
-    """What comes from an upset at each scan by itself, the same from one of `starts` to the next."""
+    """What comes from an upset at each scan by itself, the same between `starts`."""
 
     starts: Sequence[int]
     """Scans, rising from 0."""
@@ -251,14 +250,15 @@ class Upset:
     def over(self, start: int, end: int) -> tuple[Array, Array]:
         """For each scan from `start` to before `end`: (scans, n) and (scans,)."""
         first, last = self.place(start), self.place(end - 1) + 1
-        lengths = np.diff([start, *self.starts[first + 1 : last], end])
+        marks = [start, *self.starts[first + 1 : last], end]
+        lengths = [later - before for before, later in pairwise(marks)]
         return (
             self.state[first:last].repeat(lengths, axis=0),
             self.direct[first:last].repeat(lengths),
         )
 
     def until(self, scan: int, later: Upset) -> Upset:
-        """This one before a scan, another from there on."""
+        """The same before a scan, another from there on."""
         kept, place = bisect_left(self.starts, scan), later.place(scan)
         return Upset(
             [*self.starts[:kept], scan, *later.starts[place + 1 :]],
@@ -368,8 +368,8 @@ class Run:
     def __post_init__(self) -> None:
         n = len(self.held.process.c)
         self.read, self.weights = self.held.reading()
-        taps = self.held.over(self.held.clock.scan).taps
-        self.back = max([1, *taps, *self.weights])
+        self.over = self.held.over(self.held.clock.scan)
+        self.back = max([1, *self.over.taps, *self.weights])
         """How far back outputs still act [scans]."""
         self.x = np.zeros(n)
         self.pieces: list[Callable[[], Array]] = []
@@ -402,9 +402,9 @@ class Run:
     def change(self, held: Held) -> None:
         """Go on with a plant of the same states whose gain or dead times are others."""
         past = self.acting[self.back : self.back + self.at]
-        self.held = held
+        self.held, self.over = held, held.over(held.clock.scan)
         self.read, self.weights = held.reading()
-        before, self.back = self.back, max([1, *held.over(held.clock.scan).taps, *self.weights])
+        before, self.back = self.back, max([1, *self.over.taps, *self.weights])
         earlier = self.acting[:before]
         longer = np.zeros(self.back + self.scans)
         kept = min(before, self.back)
@@ -420,18 +420,13 @@ class Run:
 
         Plain numbers and lists: for a handful of states they are far faster than arrays.
         """
-        over, start, back, given = (
-            self.held.over(self.held.clock.scan),
-            self.at,
-            self.back,
-            self.inputs,
-        )
+        start, back, given = self.at, self.back, self.inputs
         x, row = self.x.tolist(), self.read.tolist()
         acting: list[float] = self.acting[start : start + back].tolist()
         outputs, states, pv, measured = [], [], [], []
         backs = [(back - far, weight) for far, weight in self.weights.items()]
-        taps = [back - far for far in over.taps]
-        rows = np.column_stack([over.phi, *over.taps.values()]).tolist()
+        taps = [back - far for far in self.over.taps]
+        rows = np.column_stack([self.over.phi, *self.over.taps.values()]).tolist()
         pushes, directs = given.upset.over(start, end)
         noise = [0.0] * (end - start) if given.noise is None else given.noise[start:end].tolist()
         outside = zip(
