@@ -36,9 +36,9 @@ _BLOCK: Final = 64
 """Scans whose powers of S are kept; a power of 2, halved until given outputs are known."""
 _LEAST: Final = 12
 """Fewer scans than this are stepped."""
-_FEW: Final = 2
+_FEW: Final = 1
 """Half the scans that are stepped where a mode ends."""
-_REACH: Final = 16 * _BLOCK
+_REACH: Final = 32 * _BLOCK
 """Scans of the first stretch in a mode that may end; the next are longer and longer."""
 _LARGEST: Final = 1e200
 """Powers of an unstable loop whose squares sum up to this are not taken further."""

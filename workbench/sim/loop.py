@@ -135,9 +135,9 @@ def _sampled_trace(found: Passage, events: Events) -> Trace:
     scans = len(course.pv)
     # Rows at the same places in every scan, and single ones where something happens in between.
     offsets = _offsets(held, events.until)
-    number = np.arange(scans)
-    time: Array = np.asarray(number * clock.scan, np.float64)
-    values = course.pv
+    time: Array = np.arange(float(scans))
+    time *= clock.scan
+    number, values = np.arange(scans), course.pv
     if len(offsets) > 1 or clock.lead:
         time = np.add.outer(time, offsets).ravel()
         values = np.column_stack([_pv(found, load, offset) for offset in offsets]).ravel()

@@ -10,10 +10,10 @@ from __future__ import annotations
 
 import math
 from bisect import bisect_left, bisect_right
-from collections.abc import Callable, Sequence
+from collections.abc import Callable, Iterator, Sequence
 from dataclasses import dataclass, field, replace
 from functools import cached_property
-from itertools import pairwise
+from itertools import pairwise, repeat
 from operator import mul
 from typing import Final
 
@@ -234,7 +234,10 @@ class Held:
 
 @dataclass(frozen=True)
 class Upset:
-    """What comes from an upset at each scan by itself, the same between `starts`."""
+    """What comes from an upset at each scan by itself, the same from one of `starts` to the next.
+
+    A signal that is not made of steps has a start at every scan.
+    """
 
     starts: Sequence[int]
     """Scans, rising from 0."""
@@ -246,6 +249,15 @@ class Upset:
     def place(self, scan: int) -> int:
         """Which of the starts a scan belongs to."""
         return bisect_right(self.starts, scan) - 1
+
+    def scans(self, start: int, end: int) -> Iterator[tuple[list[float], float]]:
+        """As `over`, scan by scan."""
+        first, last = self.place(start), self.place(end - 1) + 1
+        marks = [start, *self.starts[first + 1 : last], end]
+        for place, (before, later) in enumerate(pairwise(marks), first):
+            yield from repeat(
+                (self.state[place].tolist(), float(self.direct[place])), later - before
+            )
 
     def over(self, start: int, end: int) -> tuple[Array, Array]:
         """For each scan from `start` to before `end`: (scans, n) and (scans,)."""
@@ -367,10 +379,7 @@ class Run:
 
     def __post_init__(self) -> None:
         n = len(self.held.process.c)
-        self.read, self.weights = self.held.reading()
-        self.over = self.held.over(self.held.clock.scan)
-        self.back = max([1, *self.over.taps, *self.weights])
-        """How far back outputs still act [scans]."""
+        self._take(self.held)
         self.x = np.zeros(n)
         self.pieces: list[Callable[[], Array]] = []
         """What works out the states of each stretch so far."""
@@ -381,6 +390,15 @@ class Run:
         self.outputs = self.acting[self.back :]
         if self.through is not None:
             self.outputs = np.zeros(self.scans)
+
+    def _take(self, held: Held) -> None:
+        self.held, self.over = held, held.over(held.clock.scan)
+        self.read, self.weights = held.reading()
+        self.back = max([1, *self.over.taps, *self.weights])
+        """How far back outputs still act [scans]."""
+        columns = [*self.over.phi.T.tolist(), *(tap.tolist() for tap in self.over.taps.values())]
+        self._rows = [list(row) for row in zip(*columns, strict=True)]
+        """The next state from the state and the outputs of `over.taps`."""
 
     @property
     def _is_plain(self) -> bool:
@@ -402,9 +420,8 @@ class Run:
     def change(self, held: Held) -> None:
         """Go on with a plant of the same states whose gain or dead times are others."""
         past = self.acting[self.back : self.back + self.at]
-        self.held, self.over = held, held.over(held.clock.scan)
-        self.read, self.weights = held.reading()
-        before, self.back = self.back, max([1, *self.over.taps, *self.weights])
+        before = self.back
+        self._take(held)
         earlier = self.acting[:before]
         longer = np.zeros(self.back + self.scans)
         kept = min(before, self.back)
@@ -426,18 +443,15 @@ class Run:
         outputs, states, pv, measured = [], [], [], []
         backs = [(back - far, weight) for far, weight in self.weights.items()]
         taps = [back - far for far in self.over.taps]
-        rows = np.column_stack([self.over.phi, *self.over.taps.values()]).tolist()
-        pushes, directs = given.upset.over(start, end)
-        noise = [0.0] * (end - start) if given.noise is None else given.noise[start:end].tolist()
+        rows = self._rows
         outside = zip(
+            given.upset.scans(start, end),
             given.setpoint[start:end].tolist(),
-            directs.tolist(),
-            noise,
-            pushes.tolist(),
-            strict=True,
+            repeat(0.0) if given.noise is None else given.noise[start:end].tolist(),
+            strict=False,
         )
         through, received = self.through, self.received
-        for i, (setpoint, direct, disturbance, pushed) in enumerate(outside):
+        for i, ((pushed, direct), setpoint, disturbance) in enumerate(outside):
             y = direct + sum(map(mul, row, x))
             for place, weight in backs:
                 y += weight * acting[i + place]
