@@ -36,7 +36,7 @@ _BLOCK: Final = 64
 """Scans whose powers of S are kept; a power of 2, halved until given outputs are known."""
 _LEAST: Final = 12
 """Fewer scans than this are stepped."""
-_FEW: Final = 1
+_FEW: Final = 4
 """Half the scans that are stepped where a mode ends."""
 _REACH: Final = 32 * _BLOCK
 """Scans of the first stretch in a mode that may end; the next are longer and longer."""
@@ -92,11 +92,19 @@ def follow(whole: Run, end: int) -> None:
         if stop - whole.at < 2 * _LEAST:
             whole.step(stop, step)
             continue
+        if whole.algorithm.is_limited and _jumps(whole):
+            whole.step(whole.at + _FEW, step)
         gone = leaps.leap(stop)
         # Where the modes change quickly, more and more is stepped before the next try.
         by_hand = min(2 * by_hand, 4 * _BLOCK) if gone < _BLOCK else _FEW
         if whole.at < stop and not whole.diverged:
             whole.step(min(stop, whole.at + by_hand), step)
+
+
+def _jumps(whole: Run) -> bool:
+    """The setpoint is another than at the scan before, which often takes the output to a limit."""
+    setpoint, k = whole.inputs.setpoint, whole.at
+    return bool(setpoint[k] != (setpoint[k - 1] if k else 0.0))
 
 
 class _Layout:
@@ -193,11 +201,12 @@ class Leaps:
             blocks, read = powers.alone(self._state(slope), wanted)
         wanted = min(wanted, len(read))
         if whole.algorithm.is_limited:
-            output = sign * read[:wanted, 0] if known is None else known[:wanted]
-            wanted = self._lasting(mode, slope, output, read[:wanted])
+            output = known if known is not None else read[:, 0] if sign > 0.0 else -read[:, 0]
+            wanted = self._lasting(mode, slope, output[:wanted], read[:wanted])
         pv = whole.pv[start : start + wanted]
         np.add(read[:wanted, 1], self._direct(wanted), out=pv)
-        if wanted and not (pv.max() <= BOUND and pv.min() >= -BOUND):
+        # Only where the sum of all squares is large is there one to look for.
+        if not np.dot(pv, pv) <= BOUND * BOUND and not (np.abs(pv) <= BOUND).all():
             wanted = int(np.argmin(np.abs(pv) <= BOUND))
             pv = pv[:wanted]
             whole.diverged = True
@@ -474,10 +483,11 @@ class _Powers:
         done = 1
         for k in range((count - 1).bit_length()):
             if k == len(self.across):
-                self.across.append(self.across[-1].dot(self.across[-1]))
-            if not np.vdot(self.across[k], self.across[k]) < _LARGEST:
-                blocks = blocks[:done]
-                break
+                last = self.across[-1]
+                if not np.vdot(last, last) < _LARGEST:
+                    blocks = blocks[:done]
+                    break
+                self.across.append(last.dot(last))
             more = min(done, count - done)
             np.dot(blocks[:more], self.across[k].T, out=blocks[done : done + more])
             done += more
@@ -520,12 +530,12 @@ class _Powers:
         whole, rest = divmod(scans, self.block)
         if whole == len(blocks):
             whole, rest = whole - 1, self.block
-        state = blocks[whole, : self.size]
+        state: Array = blocks[whole, : self.size]
         given = blocks[whole, self.size :]
         steps = self.steps if rest < self.block else [self.over]
         for k, power in enumerate(steps):
             if rest == self.block or rest >> k & 1:
-                state = power @ state
+                state = power.dot(state)
         if len(given):
             # The latest comes first.
             latest = given.reshape(-1, self.block)[:, :rest][:, ::-1].T
