@@ -95,7 +95,7 @@ class Factored:
         a = _expand(self.gain, (mine - common).items())
         b = _expand(other.gain, (theirs - common).items())
         size = max(len(a), len(b))
-        a, b = (np.pad(x, (size - len(x), 0)) for x in (a, b))
+        a, b = (np.concatenate([np.zeros(size - len(x)), x]) for x in (a, b))
         total = a + b
         total[np.abs(total) <= _ROUNDING * (np.abs(a) + np.abs(b))] = 0.0
         return Factored.of(total.tolist()) * Factored(1.0, tuple(common.items()))
@@ -486,6 +486,7 @@ class TransferFunction:
         """The answer to a step stays finite."""
         return self.relative_degree >= 0
 
+    @cached_property
     def _at_origin(self) -> tuple[int, float]:
         """(p, c) with G(s) -> c s^p as s -> 0."""
         above, top = _lowest_power(self.numerator)
@@ -495,13 +496,13 @@ class TransferFunction:
     @property
     def integrators(self) -> int:
         """How many free integrators the function has; below 0: it differentiates."""
-        return -self._at_origin()[0] if self.numerator else 0
+        return -self._at_origin[0] if self.numerator else 0
 
     def gain(self) -> Figure:
         """The limit of G(s) at s = 0, where it exists."""
         if not self.numerator:
             return Figure(0.0)
-        power, value = self._at_origin()
+        power, value = self._at_origin
         if power > 0:
             return Figure(0.0)
         if power < 0:
@@ -512,7 +513,7 @@ class TransferFunction:
         """The limit of s G(s) at s = 0 [per s]: how fast the output moves for a lasting input."""
         if not self.numerator:
             return Figure(0.0)
-        power, value = self._at_origin()
+        power, value = self._at_origin
         if power > -1:
             return Figure(0.0)
         if power < -1:

@@ -396,9 +396,9 @@ class Run:
         self.read, self.weights = held.reading()
         self.back = max([1, *self.over.taps, *self.weights])
         """How far back outputs still act [scans]."""
-        columns = [*self.over.phi.T.tolist(), *(tap.tolist() for tap in self.over.taps.values())]
-        self._rows = [list(row) for row in zip(*columns, strict=True)]
-        """The next state from the state and the outputs of `over.taps`."""
+        columns = [*self.over.phi.T, *self.over.taps.values(), *np.eye(len(self.over.phi))]
+        self._rows = np.array(columns).T.tolist()
+        """The next state from the state, the outputs of `over.taps` and what the upset adds."""
 
     @property
     def _is_plain(self) -> bool:
@@ -467,8 +467,8 @@ class Run:
             output = by(setpoint, seen)
             outputs.append(output)
             acting.append(output if through is None else through(output))
-            moved = [*x, *[acting[i + tap] for tap in taps]]
-            x = [sum(map(mul, line, moved)) + push for line, push in zip(rows, pushed, strict=True)]
+            moved = x + [acting[i + tap] for tap in taps] + pushed
+            x = [sum(map(mul, line, moved)) for line in rows]
         done = start + len(pv)
         self.pieces.append(lambda: np.array(states).reshape(len(pv), len(x)))
         self.pv[start:done] = pv
