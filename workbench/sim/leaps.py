@@ -30,10 +30,11 @@ from workbench.sim.signals import Step
 
 Array = NDArray[np.float64]
 
-_NEAR: Final = 48
-"""Scans of dead time that a state is kept for; more are given inputs."""
 _BLOCK: Final = 64
-"""Scans whose powers of S are kept; a power of 2, halved until given outputs are known."""
+"""Scans whose powers of S are kept; a power of 2."""
+_NEAR: Final = _BLOCK
+"""Scans of dead time that a state is kept for; outputs from further back are given inputs, and all
+those of a block are known beforehand."""
 _LEAST: Final = 12
 """Fewer scans than this are stepped."""
 _FEW: Final = 4
@@ -146,9 +147,6 @@ class Leaps:
         near = max([1, *(back for back in backs if back <= _NEAR)])
         far = tuple(sorted(back for back in backs if back > _NEAR))
         self.at = _Layout(len(whole.x), near, far, whole.inputs.varying)
-        self.block = _BLOCK
-        while self.block > min(far, default=self.block):
-            self.block //= 2
         self._powers: dict[Mode, _Powers] = {}
 
     def leap(self, stop: int) -> int:
@@ -195,7 +193,7 @@ class Leaps:
                 self._state(slope),
                 self.given_to(wanted),
                 acting if known is None else None,
-                min(self.at.far, default=wanted) // self.block or 1,
+                min(self.at.far, default=wanted) // _BLOCK or 1,
             )
         else:
             blocks, read = powers.alone(self._state(slope), wanted)
@@ -314,7 +312,7 @@ class Leaps:
             rows = over_scan[kept]
             self._powers[mode] = _Powers(
                 *(rows[:, kept], rows[:, given], read[:, kept], read[:, given]),
-                *(self.block, self.at.n),
+                self.at.n,
             )
         return self._powers[mode]
 
@@ -414,12 +412,12 @@ def _fill(blocks: Array, values: Array) -> None:
 class _Powers:
     """s' = A s + B w and the rows C s + D w, a block of scans at once."""
 
-    def __init__(self, a: Array, b: Array, c: Array, d: Array, block: int, n: int) -> None:
-        self.b, self.block, self.n = b, block, n
+    def __init__(self, a: Array, b: Array, c: Array, d: Array, n: int) -> None:
+        self.b, self.n = b, n
         self.steps = [np.ascontiguousarray(a)]
         """A to the power of 1, 2, 4 ..."""
         self.size, self.rows = len(a), len(c)
-        while 1 << len(self.steps) <= block:
+        while 1 << len(self.steps) <= _BLOCK:
             self.steps.append(self.steps[-1].dot(self.steps[-1]))
         self.over = self.steps.pop()
         self.across = [self.over]
@@ -431,7 +429,7 @@ class _Powers:
 
         (scans of a block * rows, size + inputs * scans of a block)
         """
-        rows, size, inputs, block = len(c), self.size, self.b.shape[1], self.block
+        rows, size, inputs, block = len(c), self.size, self.b.shape[1], _BLOCK
         ahead = np.empty((block * rows, size))
         ahead[:rows] = c
         for k, power in enumerate(self.steps):
@@ -456,12 +454,12 @@ class _Powers:
     def _pushed(self) -> Array:
         """(scans of a block, inputs, size): what an input does to the state that many scans on."""
         inputs = self.b.shape[1]
-        found = np.empty((self.block * inputs, self.size))
+        found = np.empty((_BLOCK * inputs, self.size))
         found[:inputs] = self.b.T
         for k, power in enumerate(self.steps):
             done = inputs << k
             np.dot(found[:done], power.T, out=found[done : 2 * done])
-        return found.reshape(self.block, inputs, self.size)
+        return found.reshape(_BLOCK, inputs, self.size)
 
     @cached_property
     def _whole(self) -> Array:
@@ -477,7 +475,7 @@ class _Powers:
 
     def alone(self, state: Array, wanted: int) -> tuple[Array, Array]:
         """Without given inputs: what each block starts from, and the rows (scans, rows)."""
-        count = -(-wanted // self.block)
+        count = -(-wanted // _BLOCK)
         blocks = np.empty((count, len(state)))
         blocks[0] = state
         done = 1
@@ -501,7 +499,7 @@ class _Powers:
         The first of the rows becomes known as `acting`; inputs may be a later look at it, known for
         a number of blocks beforehand.
         """
-        wanted, block, size = len(given[0]), self.block, self.size
+        wanted, block, size = len(given[0]), _BLOCK, self.size
         count = -(-wanted // block)
         blocks = np.zeros((count, size + len(given) * block))
         found = np.empty((count, size + self.rows * block))
@@ -523,21 +521,21 @@ class _Powers:
     def states(self, blocks: Array, scans: int) -> Array:
         """The plant's state (scans, n)."""
         found: Array = blocks.dot(self._to_states.T)
-        return found.reshape(len(blocks) * self.block, self.n)[:scans]
+        return found.reshape(len(blocks) * _BLOCK, self.n)[:scans]
 
     def after(self, blocks: Array, scans: int) -> Array:
         """The state after a number of scans of a stretch."""
-        whole, rest = divmod(scans, self.block)
+        whole, rest = divmod(scans, _BLOCK)
         if whole == len(blocks):
-            whole, rest = whole - 1, self.block
+            whole, rest = whole - 1, _BLOCK
         state: Array = blocks[whole, : self.size]
         given = blocks[whole, self.size :]
-        steps = self.steps if rest < self.block else [self.over]
+        steps = self.steps if rest < _BLOCK else [self.over]
         for k, power in enumerate(steps):
-            if rest == self.block or rest >> k & 1:
+            if rest == _BLOCK or rest >> k & 1:
                 state = power.dot(state)
         if len(given):
             # The latest comes first.
-            latest = given.reshape(-1, self.block)[:, :rest][:, ::-1].T
+            latest = given.reshape(-1, _BLOCK)[:, :rest][:, ::-1].T
             state = state + latest.reshape(-1).dot(self._pushed[:rest].reshape(-1, self.size))
         return state
