@@ -225,12 +225,12 @@ ROWS: Final[
 """What, how often, the time of one, and the yardstick with its time."""
 
 # What bounds a run: the linear one is aimed at 8 times the speed of plain Python, the other two at
-# 3 times.  Run after run in one process, the best of 300 beside the best of as many plain runs, they
-# came to 3.9, 2.2 and 1.9 times.  The 315 us of the linear run are some 250 calls of numpy and the
-# Python between them: about 30 us the model, 45 its answers over a scan and what comes from outside,
-# 50 the loop over one scan and its powers, 80 two stretches, 20 the trace, the rest in between; the
-# matrix products are about 35 of them.  After other work, with cold caches, all that takes up to
-# twice as long, and the few lines of the plain loop hardly more.
+# 3 times.  Run after run in one process, the best of 300 beside the best of as many plain runs,
+# they came to 3.9, 2.2 and 1.9 times.  The 315 us of the linear run are spread over some 600 calls:
+# about 30 us the model, 45 its answers over a scan and what comes from outside, 50 the loop over
+# one scan and its powers, 80 two stretches, 20 the trace, the rest in between; the matrix products
+# are about 35 of them.  After other work, with cold caches, all that takes up to twice as long, and
+# the few lines of the plain loop hardly more.
 
 # --- the table -----------------------------------------------------------------------------------
 
