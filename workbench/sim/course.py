@@ -165,8 +165,7 @@ def _spliced(before: Inputs, later: Inputs, scan: int) -> Inputs:
     """The inputs of one plant up to a scan, of another from there on."""
     return replace(
         before,
-        state=np.concatenate([before.state[:scan], later.state[scan:]]),
-        direct=np.concatenate([before.direct[:scan], later.direct[scan:]]),
+        upset=before.upset.until(scan, later.upset),
         cuts=tuple(sorted({*before.cuts, *later.cuts, scan})),
         varying=before.varying | later.varying,
     )

@@ -149,9 +149,9 @@ def _sampled_trace(found: Passage, events: Events) -> Trace:
     scans = len(course.pv)
     # Rows at the same places in every scan, and single ones where something happens in between.
     offsets = _offsets(held, events.until)
-    number = np.arange(scans)
-    time: Array = number * np.float64(clock.scan)
-    values = course.pv
+    time: Array = np.arange(float(scans))
+    time *= clock.scan
+    number, values = np.arange(scans), course.pv
     if len(offsets) > 1 or clock.lead:
         time = np.add.outer(time, offsets).ravel()
         values = np.column_stack([_pv(found, load, offset) for offset in offsets]).ravel()
@@ -244,7 +244,7 @@ def _pv(found: Passage, load: Signal, offset: float) -> Array:
         pv = course.states @ row
         for back, weight in weights.items():
             pv[back:] += weight * course.acting[: max(0, scans - back)]
-        state, direct = held.upset(load, scans, offset)
+        state, direct = held.upset(load, scans, offset).over(0, scans)
         parts.append((pv + state @ held.process.c + direct)[start:end])
     return np.concatenate(parts)
 
@@ -258,8 +258,8 @@ def _pv_once(found: Passage, load: Signal, scan: int, offset: float) -> float:
     for back, weight in weights.items():
         if scan >= back:
             pv += weight * float(course.acting[scan - back])
-    state, direct = held.upset(load, scan + 1, offset)
-    return pv + float(state[-1] @ held.process.c) + float(direct[-1])
+    upset = held.upset(load, scan + 1, offset)
+    return pv + float(upset.state[-1] @ held.process.c) + float(upset.direct[-1])
 
 
 def _in_force(held: Held, course: Course, time: Array, number: NDArray[np.signedinteger]) -> Array:

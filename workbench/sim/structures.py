@@ -112,7 +112,7 @@ class Beside:
         self._row, self._weights = held.reading()
         self._part = held.over(clock.scan)
         given = inputs(held, scans, np.zeros(scans), upset)
-        self._state, self._direct = given.state, given.direct
+        self._state, self._direct = given.upset.over(0, scans)
         self._x = np.zeros(len(self._row))
         length = max([1, *self._part.taps, *self._weights]) + 1
         self._past = deque([0.0] * length, length)
