@@ -22,6 +22,7 @@ from typing import Final
 import numpy as np
 
 import tests.conftest  # noqa: F401 - the settings of hypothesis, which pytest would have loaded
+from tests.model.spreads import spreads_judged
 from tests.model.test_formula import fuzzed
 from tests.model.test_robustness import brinks, sampled_verdicts
 from tests.model.test_stability import verdicts
@@ -415,6 +416,9 @@ CAMPAIGNS: Final[dict[str, Campaign]] = {
     "margins made": Campaign(_judged(brinks, 21, 0.0, "share wrong"), 10, 1000),
     "sampled verdicts": Campaign(
         _judged(sampled_verdicts, 31, 1e-6, "difference of a gain margin"), 10, 1000
+    ),
+    "many plants in one loop": Campaign(
+        _judged(spreads_judged, 51, 1e-3, "error of an Ms, as a share"), 5, 500
     ),
     "formulas typed and broken": Campaign(
         _judged(fuzzed, 13, 1.0, "seconds of work for one"), 300, 100_000
