@@ -9,8 +9,9 @@ from dataclasses import replace
 from workbench.model.feedback import Loop
 from workbench.model.pid import Gains
 from workbench.model.robustness import Margins, analogue_margins, sampled_margins
-from workbench.model.spread import Judged, Variation, judge
+from workbench.model.spread import Judged, judge
 from workbench.model.transfer import TransferFunction
+from workbench.model.variation import Variation
 
 RATIOS = (0.4, 1.0, 2.2)
 BAND = 1e-6

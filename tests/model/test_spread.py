@@ -12,9 +12,10 @@ from tests.model.spreads import exact
 from workbench.errors import NotApplicable
 from workbench.model.feedback import Loop
 from workbench.model.pid import Gains
-from workbench.model.spread import Variation, judge
+from workbench.model.spread import judge
 from workbench.model.structures import Structure
 from workbench.model.transfer import TransferFunction
+from workbench.model.variation import Variation
 
 DRYER = TransferFunction.ratio((1.8,), [(40.0, 1.0), (8.0, 1.0)], 8.3)
 PID = Gains(1.1, 1.1 / 32.0, 4.0, 0.4)

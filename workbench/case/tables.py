@@ -13,6 +13,7 @@ from dataclasses import dataclass, field, replace
 from datetime import datetime
 from typing import Any, ClassVar, Final
 
+from workbench.case.family import FamilyTable
 from workbench.case.structures import CompensationTable, FeedforwardTable, InnerTable
 from workbench.errors import InputError, Problem
 from workbench.model.blocks import Blocks, format_blocks
@@ -330,6 +331,7 @@ class Case:
     compensation: CompensationTable = CompensationTable()
     feedforward: FeedforwardTable = FeedforwardTable()
     inner: InnerTable = InnerTable()
+    family: FamilyTable = FamilyTable()
 
     def with_entry(self, entry: Revision) -> Case:
         """The case with one more entry at the end of its history."""
@@ -367,7 +369,9 @@ def table_values(case: Case) -> dict[str, Values]:
     }
     if case.controller is not None:
         tables["controller"] = values_of(case.controller)
-    for name in ("compensation", "feedforward", "inner", "valve", "measurement", "scenario"):
+    for name in TABLES:
+        if name in tables or name == "controller":
+            continue
         tables[name] = values_of(getattr(case, name))
     return tables
 
@@ -463,6 +467,7 @@ TABLES: Final[dict[str, type]] = {
     "pv": PvTable,
     "op": OpTable,
     "plant": PlantTable,
+    "family": FamilyTable,
     "controller": Controller,
     "compensation": CompensationTable,
     "feedforward": FeedforwardTable,

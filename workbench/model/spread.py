@@ -27,7 +27,7 @@ from workbench.model.robustness import crossings
 from workbench.model.sampled import controller_in_z, whole_scans
 from workbench.model.stability import loop_verdict
 from workbench.model.structures import Structure
-from workbench.model.transfer import Complex, Delayed, Terms, TransferFunction
+from workbench.model.transfer import Complex, TransferFunction
 
 Floats = NDArray[np.float64]
 Places = NDArray[np.intp]
@@ -64,40 +64,6 @@ _HILL: Final = 1.5
 """Valleys of |1 + L|^2 up to this much above the lowest seen are walked down to their bottom."""
 _BLOCK: Final = 30_000
 """Values worked on together, so that they stay near the processor."""
-
-
-@dataclass(frozen=True)
-class Variation:
-    """By how much a plant differs from the nominal one: ratios, 1 is no difference.
-
-    >>> lag = TransferFunction.ratio((2.0,), [(10.0, 1.0)], dead_time=3.0)
-    >>> other = Variation(gain=1.5, dead_time=2.0, lag=0.5).of(lag)
-    >>> other.gain().value, other.dead_time, other.poles()
-    (3.0, 6.0, ((-0.2+0j),))
-    """
-
-    gain: float = 1.0
-    """Of the steady gain, or of the slope of an integrating plant."""
-    dead_time: float = 1.0
-    """Of every dead time."""
-    lag: float = 1.0
-    """Of every time constant, lead and natural period; gain or slope stay what they are."""
-
-    def of(self, plant: TransferFunction) -> TransferFunction:
-        """The plant that differs so:  gain lag^n G(lag s), n integrators, its own dead times."""
-        if self.lag == 1.0:
-            stretched = plant
-        else:
-            stretched = plant.with_time_unit(self.lag) * self.lag**plant.integrators
-        scaled = stretched * self.gain
-        ratio = self.dead_time / self.lag
-        return TransferFunction(
-            _delayed(scaled.numerator, ratio), _delayed(scaled.denominator, ratio)
-        )
-
-
-def _delayed(terms: Terms, ratio: float) -> Terms:
-    return tuple(Delayed(t.dead_time * ratio, t.polynomial) for t in terms)
 
 
 @dataclass(frozen=True)

@@ -5,6 +5,7 @@ number wears its unit, and lines are wrapped to the width that is asked for.  JS
 of plain values: a figure that does not exist is `None` with its reason beside it.
 """
 
+from workbench.report.families import distance_lines, map_of
 from workbench.report.files import (
     between_data,
     between_text,
@@ -25,7 +26,13 @@ from workbench.report.loops import (
     response_csv,
     trend_csv,
 )
-from workbench.report.settings import convert_data, convert_text, propose_data, propose_text
+from workbench.report.settings import (
+    convert_data,
+    convert_text,
+    family_words,
+    propose_data,
+    propose_text,
+)
 from workbench.report.words import Json, Rows, settings_text, wrapped
 
 __all__ = [
@@ -39,11 +46,14 @@ __all__ = [
     "check_text",
     "convert_data",
     "convert_text",
+    "distance_lines",
+    "family_words",
     "fit_data",
     "fit_text",
     "history_data",
     "history_text",
     "is_stable",
+    "map_of",
     "predict_data",
     "predict_text",
     "propose_data",

@@ -84,6 +84,8 @@ def label_of(key: str) -> str:
         return SHORTER[key]
     table, _, name = key.partition(".")
     words = name.replace("_", " ")
+    if table == "family":
+        return f"family {words}"
     return f"{table.upper()} {words}" if table in ("pv", "op") else words
 
 

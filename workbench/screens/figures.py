@@ -27,6 +27,8 @@ class Row:
     """`PV`, `OP` and `time` are put into the loop's own words."""
     better: Better = ""
     """Which way is better; empty where neither is."""
+    name: str = ""
+    """Of the same figure over a family of plants; empty where there is none."""
 
 
 WORSE_BY: Final = 0.01
@@ -60,6 +62,7 @@ class FiguresPanel(Panel):
                 continue
             earlier = row.read(was) if was is not None and was is not now else None
             lines.append(self._line(row, figure, earlier))
+        lines += self._family(now, width)
         for note in now.cautions:
             if note.severity == "info":
                 lines += wrapped(note.text, width, "quiet", " ")
@@ -78,6 +81,25 @@ class FiguresPanel(Panel):
             return [((f" stable ({which})", "good"),)]
         return wrapped(f"UNSTABLE ({which}): {loop.margins.reason}", width, "worse", " ")
 
+    def _family(self, now: Evaluation, width: int) -> list[Line]:
+        """The same figures over the family of plants: 95 % of them are not worse than that."""
+        family = now.family
+        if family is None or family.reason:
+            return []
+        share = units.text(family.stable_percent, "%", digits=3)
+        tone = "good" if family.stable_percent == 100.0 else "worse"
+        said = f"family of {family.plants} plants: stable with {share} of them"
+        lines = wrapped(said, width, tone, " ")
+        lines.append(((f"{'':16}{'nominal':<10}{'95 %':<10}worst", "label"),))
+        for row in FIGURES:
+            among = family.figures.get(row.name)
+            if among is None:
+                continue
+            each = (among.nominal, among.at_95, among.worst)
+            cells = "".join(_among(figure).ljust(10) for figure in each).rstrip()
+            lines.append(((f" {row.label}".ljust(16), "label"), (cells, "plain")))
+        return [*lines, *wrapped(f"worst: {family.worst_plant}", width, "quiet", " ")]
+
     def _line(self, row: Row, figure: Figure, earlier: Figure | None) -> Line:
         label: Span = (f" {row.label}".ljust(16), "label")
         if figure.value is None:
@@ -92,6 +114,12 @@ class FiguresPanel(Panel):
         own = {"PV": self.work.case.pv.unit, "OP": self.work.case.op.unit}
         unit = " ".join(own.get(part, part) for part in row.unit.split())
         return units.text(value, unit)
+
+
+def _among(figure: Figure) -> str:
+    if figure.value is None:
+        return "unstable" if "not stable" in figure.reason else "none"
+    return units.text(figure.value, digits=3)
 
 
 def compared(row: Row, now: Figure, earlier: Figure | None) -> tuple[str, str]:
@@ -165,16 +193,22 @@ def _own_gain(evaluation: Evaluation) -> Figure | None:
 
 
 FIGURES: Final = (
-    Row("Sensitivity Ms", _margin("max_sensitivity"), "", "lower"),
-    Row("Gain margin", _margin("gain_margin"), "", "higher"),
-    Row("Phase margin", _margin("phase_margin_deg"), "deg", "higher"),
+    Row("Sensitivity Ms", _margin("max_sensitivity"), "", "lower", "max_sensitivity"),
+    Row("Gain margin", _margin("gain_margin"), "", "higher", "gain_margin"),
+    Row("Phase margin", _margin("phase_margin_deg"), "deg", "higher", "phase_margin_deg"),
     Row("Delay margin", _margin("delay_margin_s"), "time", "higher"),
-    Row("Load IAE", _measure("load_iae"), "PV s", "lower"),
-    Row("Load peak", _measure("load_peak_deviation"), "PV", "lower"),
-    Row("SP overshoot", _measure("setpoint_overshoot_percent"), "%", "lower"),
+    Row("Load IAE", _measure("load_iae"), "PV s", "lower", "load_iae"),
+    Row("Load peak", _measure("load_peak_deviation"), "PV", "lower", "load_peak_deviation"),
+    Row(
+        "SP overshoot",
+        _measure("setpoint_overshoot_percent"),
+        "%",
+        "lower",
+        "setpoint_overshoot_percent",
+    ),
     Row("SP settling", _measure("setpoint_settling_time_s"), "time", "lower"),
     Row("Load settling", _measure("load_settling_time_s"), "time", "lower"),
-    Row("SP IAE", _measure("setpoint_iae"), "PV s", "lower"),
+    Row("SP IAE", _measure("setpoint_iae"), "PV s", "lower", "setpoint_iae"),
     Row("SP rise", _measure("setpoint_rise_time_s"), "time", "lower"),
     Row("OP travel", _measure("output_travel"), "OP", "lower"),
     Row("OP reversals", _measure("output_reversals"), "", "lower"),

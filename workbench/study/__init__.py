@@ -13,7 +13,22 @@ from workbench.study.assessment import (
     reductions,
 )
 from workbench.study.conversion import Conversion, convert
-from workbench.study.evaluation import HANDOVER, Evaluation, cautions, evaluate
+from workbench.study.evaluation import (
+    HANDOVER,
+    Evaluation,
+    cautions,
+    evaluate,
+    family_cautions,
+)
+from workbench.study.family import (
+    Among,
+    FamilyFigures,
+    Member,
+    drawn_plants,
+    family_figures,
+    members,
+    with_family,
+)
 from workbench.study.keep import (
     FileCheck,
     accept,
@@ -34,21 +49,30 @@ from workbench.study.prediction import (
     response_horizon,
 )
 from workbench.study.proposals import Proposal, RelayTest, Wish, propose, take
+from workbench.study.tolerance import LIMIT as TOLERANCE_LIMIT
+from workbench.study.tolerance import Axis, Distance, Tolerance, tolerance
 
 __all__ = [
     "HANDOVER",
+    "TOLERANCE_LIMIT",
+    "Among",
     "Assessment",
+    "Axis",
     "Conversion",
+    "Distance",
     "Evaluation",
+    "FamilyFigures",
     "FileCheck",
     "InnerTrend",
     "LoopFigures",
+    "Member",
     "PlantFigures",
     "Prediction",
     "Proposal",
     "Reduced",
     "RelayTest",
     "Response",
+    "Tolerance",
     "Trend",
     "Wish",
     "accept",
@@ -59,9 +83,13 @@ __all__ = [
     "chosen_candidate",
     "controller_of",
     "convert",
+    "drawn_plants",
     "evaluate",
+    "family_cautions",
+    "family_figures",
     "fit_record",
     "loop_of",
+    "members",
     "plant_of",
     "predict",
     "propose",
@@ -71,5 +99,7 @@ __all__ = [
     "respond_to_record",
     "response_horizon",
     "take",
+    "tolerance",
     "units_of",
+    "with_family",
 ]

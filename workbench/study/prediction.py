@@ -79,6 +79,8 @@ class Prediction:
     """[PV unit s]"""
     diverged: bool
     """The loop ran away and the trend was cut off."""
+    events: Events
+    """What was run, in percent of span: for running other plants through the same."""
     inner: InnerTrend | None = None
     """Where there is an inner loop."""
 
@@ -123,6 +125,7 @@ def predict(case: Case, seed: int = 0, like: Prediction | None = None) -> Predic
         floor_peak_deviation=peak.times(to_pv),
         floor_load_iae=iae.times(to_pv),
         diverged=trace.diverged,
+        events=events,
         inner=None if trace.inner is None else _inner_trend(case, loop, trace.inner),
     )
 

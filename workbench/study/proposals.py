@@ -19,6 +19,7 @@ from workbench.model.pid import Controller, settings_like
 from workbench.model.reduction import double_integrator, half_rule, unstable_lag
 from workbench.model.robustness import analogue_margins, sampled_margins, ultimate
 from workbench.study.best import SEARCH_SOURCE, SEARCHES, searched
+from workbench.study.family import FamilyFigures, family_figures
 from workbench.study.loop import action_of, loop_of, no_time_domain, plant_in_percent
 from workbench.study.prediction import predict
 from workbench.study.structure import has_one_scan
@@ -81,6 +82,8 @@ class Proposal:
     limits: str = ""
     """The plants that a rule was published for."""
     published_form: str = ""
+    family: FamilyFigures | None = None
+    """Margins over the family of plants, where the case states one."""
 
 
 def propose(
@@ -238,6 +241,7 @@ def _judged(
         _LATER,
         _LATER,
         within,
+        family=family_figures(trial),
     )
 
 
