@@ -13,12 +13,15 @@ import threading
 from collections.abc import Sequence
 from dataclasses import dataclass
 from functools import lru_cache
-from typing import Any, Final
+from typing import TYPE_CHECKING, Any, Final
 
 import numpy as np
 from numpy.typing import NDArray
 
-from workbench.units import TIME_UNITS
+from workbench.units import TIME_UNITS, text
+
+if TYPE_CHECKING:
+    from workbench.study import Tolerance
 
 Floats = NDArray[np.float64]
 
@@ -155,6 +158,25 @@ def map_cells(width: int, height: int) -> tuple[int, int]:
     return columns - 1 + columns % 2, rows - 1 + rows % 2
 
 
+def map_size(columns: int, rows: int) -> tuple[int, int]:
+    """Width and height of the picture of so many cells."""
+    return columns + _RATIO_GUTTER + 1, rows + 3
+
+
+def tolerance_field(found: Tolerance) -> Field:
+    """The map of plant errors as it is drawn."""
+    above = found.max_sensitivity > found.limit
+    return Field(
+        above.astype(np.uint8) + (~found.stable).astype(np.uint8),
+        found.gain_ratios,
+        found.other_ratios,
+        found.here,
+        "plant gain x",
+        f"{found.axis} x",
+        (f"Ms up to {text(found.limit, digits=3)}", "above", "unstable"),
+    )
+
+
 def draw_map(field: Field, width: int, height: int, *, ascii_only: bool = False) -> Picture:
     """Draw a map with its axes and its legend.
 
@@ -193,7 +215,8 @@ def draw_map(field: Field, width: int, height: int, *, ascii_only: bool = False)
     for at, label in _ratio_ticks(field.x, 6):
         sheet.text(1 + bottom, gutter + 1 + at, sheet.lines.base_tick, "frame")
         start = gutter + 1 + at - (len(label) - 1) // 2
-        sheet.text(2 + bottom, start, label)
+        if start + len(label) < gutter + 1 + columns - len(field.x_label):
+            sheet.text(2 + bottom, start, label)
     sheet.text(2 + bottom, max(0, gutter + 1 + columns - len(field.x_label)), field.x_label)
     return sheet.picture()
 

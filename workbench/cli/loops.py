@@ -32,8 +32,10 @@ def assess(given: Given) -> Answer:
     if "--small-models" in given:
         with progress("reducing the plant"):
             small = study.reductions(case)
-    survived = None
+    survived, drawn = None, None
     if axis is not None:
+        from workbench import charts
+
         with progress("looking at other plants"):
             survived = study.tolerance(
                 case,
@@ -42,9 +44,11 @@ def assess(given: Given) -> Answer:
                 columns=MAP_COLUMNS,
                 rows=MAP_ROWS,
             )
+        field, size = charts.tolerance_field(survived), charts.map_size(MAP_COLUMNS, MAP_ROWS)
+        drawn = survived, charts.draw_map(field, *size, ascii_only=True).rows
     units = study.units_of(case)
     return Answer(
-        report.assess_text(case, found, units, width(), small, family, survived),
+        report.assess_text(case, found, units, width(), small, family, drawn),
         report.assess_data(case, found, units, small, family, survived),
         Status.DONE if report.is_stable(found) else Status.NO,
     )

@@ -5,7 +5,7 @@ number wears its unit, and lines are wrapped to the width that is asked for.  JS
 of plain values: a figure that does not exist is `None` with its reason beside it.
 """
 
-from workbench.report.families import distance_lines, map_of
+from workbench.report.families import distance_lines
 from workbench.report.files import (
     between_data,
     between_text,
@@ -53,7 +53,6 @@ __all__ = [
     "history_data",
     "history_text",
     "is_stable",
-    "map_of",
     "predict_data",
     "predict_text",
     "propose_data",

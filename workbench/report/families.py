@@ -3,10 +3,9 @@
 from __future__ import annotations
 
 import math
-from collections.abc import Mapping
+from collections.abc import Mapping, Sequence
 from typing import TYPE_CHECKING, Final
 
-from workbench import charts
 from workbench.report.words import Json, grid, put, wrapped
 from workbench.units import Figure, text
 
@@ -72,22 +71,6 @@ def _cell(figure: Figure) -> str:
 # --- tolerance -----------------------------------------------------------------------------------
 
 
-def map_of(found: Tolerance) -> charts.Field:
-    """The map as it is drawn."""
-    above = found.max_sensitivity > found.limit
-    kinds = above.astype("uint8") + (~found.stable).astype("uint8")
-    limit = text(found.limit, digits=3)
-    return charts.Field(
-        kinds,
-        found.gain_ratios,
-        found.other_ratios,
-        found.here,
-        "plant gain x",
-        f"{found.axis} x",
-        (f"Ms up to {limit}", "above", "unstable"),
-    )
-
-
 def distance_lines(found: Tolerance) -> list[str]:
     """How far the plant may change, one line for each way."""
     limit = text(found.limit, digits=3)
@@ -102,14 +85,12 @@ def _ratio(figure: Figure) -> str:
     return figure.reason if figure.value is None else f"x {text(figure.value, digits=4)}"
 
 
-def tolerance_lines(found: Tolerance, width: int) -> list[str]:
-    """The map and its distances for people."""
-    across, down = found.gain_ratios.shape[0] + 6, found.other_ratios.shape[0] + 3
-    picture = charts.draw_map(map_of(found), across, down, ascii_only=True)
+def tolerance_lines(found: Tolerance, picture: Sequence[str], width: int) -> list[str]:
+    """The map, as `charts` has drawn it, and its distances for people."""
     loop = "sampled" if found.sampled else "analogue"
-    lines = ["", f"Tolerance of the {loop} loop: plant gain across, {found.axis} upwards", ""]
-    lines += [row.rstrip() for row in picture.rows]
-    return [*lines, "", *(wrapped(line, width) for line in distance_lines(found))]
+    title = f"Tolerance of the {loop} loop: plant gain across, {found.axis} upwards"
+    told = [wrapped(line, width) for line in distance_lines(found)]
+    return ["", wrapped(title, width), "", *(row.rstrip() for row in picture), "", *told]
 
 
 def tolerance_data(found: Tolerance) -> Json:

@@ -145,9 +145,9 @@ def assess_text(
     width: int,
     small: Sequence[Reduced] | None = None,
     family: FamilyFigures | None = None,
-    tolerance: Tolerance | None = None,
+    tolerance: tuple[Tolerance, Sequence[str]] | None = None,
 ) -> str:
-    """The assessment for people, with what else was asked for."""
+    """The assessment for people, with what else was asked for; a tolerance map with its picture."""
     pv, op = units["pv"], units["op"]
     plant = found.plant
     rows: Rows = [("formula", plant.formula)]
@@ -180,7 +180,7 @@ def assess_text(
         lines += ["", "Loop, sampled", *two_columns([("none", found.sampled_reason)], width)]
     lines += family_lines(family, units, width)
     if tolerance is not None:
-        lines += tolerance_lines(tolerance, width)
+        lines += tolerance_lines(*tolerance, width)
     told = [note for note in found.notes if not note.text.startswith("NOT STABLE:")]
     return "\n".join([*lines, *note_lines(told, width)])
 

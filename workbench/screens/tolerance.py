@@ -62,7 +62,7 @@ class MapPanel(Panel):
         told = self._told()
         head = self.typeset([self.heading(width), ()], width, 2)
         foot = self.typeset(told, width, len(told))
-        field = report.map_of(self.found)
+        field = charts.tolerance_field(self.found)
         rows = max(1, height - 2 - len(told))
         picture = charts.draw_map(field, width, rows, ascii_only=self.ascii_only)
         parts = (head, as_cells(picture), foot)

@@ -45,7 +45,7 @@ class Distance:
     """How far the plant may change in one way."""
 
     way: str
-    """`gain grows`, `gain falls`, `dead time grows`, `gain and dead time grow`, ..."""
+    """`gain grows`, `gain falls`, `dead time grows`, `both grow alike`, ..."""
     until_limit: Figure
     """Ratio at which Ms reaches its limit; below 1 where the plant's value falls."""
     until_unstable: Figure
@@ -172,7 +172,7 @@ class _Trial:
         """Gain up and down, the other up and down, both together where they pull together."""
         # A longer dead time and a shorter lag both work with a larger gain.
         with_gain = 1 if self.axis == "dead time" else -1
-        both = f"gain grows, {self.axis} {'grows' if with_gain > 0 else 'falls'} alike"
+        both = "both grow alike" if with_gain > 0 else "gain grows, lag falls alike"
         ways = (
             ("gain grows", 1, 0),
             ("gain falls", -1, 0),
@@ -208,12 +208,12 @@ class _Trial:
                 return Figure.of(ratio)
             if not beyond(peaks[:1])[0]:
                 furthest = f"1/{_FURTHEST:.0f}" if falls else f"{_FURTHEST:.0f}"
-                return Figure(None, f"never, to x {furthest}")
+                return Figure(None, f"never to {furthest}")
             back = reached(lambda ms: ~beyond(ms))
             return Figure(None, f"{already}, back at x {back:.3g}" if back else already)
 
         return Distance(
             way,
-            told(lambda ms: np.asarray(ms > limit, np.bool_), "above now"),
+            told(lambda ms: np.asarray(ms > limit, np.bool_), "over now"),
             told(np.isinf, "unstable now"),
         )
