@@ -33,9 +33,13 @@ from workbench.report.settings import (
     propose_data,
     propose_text,
 )
+from workbench.report.sheet import WIDTH as SHEET_WIDTH
+from workbench.report.sheet import sheet_text
+from workbench.report.survey import survey_data, survey_text
 from workbench.report.words import Json, Rows, settings_text, wrapped
 
 __all__ = [
+    "SHEET_WIDTH",
     "Json",
     "Rows",
     "assess_data",
@@ -61,6 +65,9 @@ __all__ = [
     "respond_text",
     "response_csv",
     "settings_text",
+    "sheet_text",
+    "survey_data",
+    "survey_text",
     "trend_csv",
     "wrapped",
 ]

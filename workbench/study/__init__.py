@@ -49,6 +49,8 @@ from workbench.study.prediction import (
     response_horizon,
 )
 from workbench.study.proposals import Proposal, RelayTest, Wish, propose, take
+from workbench.study.sheet import Retune, Stage, retune
+from workbench.study.survey import Surveyed, survey
 from workbench.study.tolerance import LIMIT as TOLERANCE_LIMIT
 from workbench.study.tolerance import Axis, Distance, Tolerance, tolerance
 
@@ -72,6 +74,9 @@ __all__ = [
     "Reduced",
     "RelayTest",
     "Response",
+    "Retune",
+    "Stage",
+    "Surveyed",
     "Tolerance",
     "Trend",
     "Wish",
@@ -98,6 +103,8 @@ __all__ = [
     "respond",
     "respond_to_record",
     "response_horizon",
+    "retune",
+    "survey",
     "take",
     "tolerance",
     "units_of",

@@ -33,7 +33,7 @@ from workbench.sim.metrics import absolute_area
 from workbench.sim.scenario import Events
 from workbench.study.loop import instruments_of, loop_of, no_time_domain, plant_of
 from workbench.study.structure import has_one_scan
-from workbench.units import Amount, Figure, rounded
+from workbench.units import Amount, Figure, harmless, rounded
 
 Floats = NDArray[np.float64]
 
@@ -87,11 +87,12 @@ def members(case: Case) -> tuple[Member, ...]:
     scale = case.pv.range.span / case.op.range.span
     centres = [Member("nominal", nominal)]
     centres += [
-        Member(name, variation.of(nominal)) for name, variation in table.operating_points().items()
+        Member(harmless(name, 60), variation.of(nominal))
+        for name, variation in table.operating_points().items()
     ]
     for name, shape in table.further_plants().items():
         plant = shape.transfer()
-        centres.append(Member(name, plant * scale if shape.in_percent else plant))
+        centres.append(Member(harmless(name, 60), plant * scale if shape.in_percent else plant))
     found = list(centres)
     spans = [("gain", table.gain), ("dead_time", table.dead_time), ("lag", table.lag)]
     given = [(name, percent / 100.0) for name, percent in spans if percent]
