@@ -55,7 +55,7 @@ class FiguresPanel(Panel):
         now, was = self.work.evaluation, self.work.pinned
         if now is None:
             return wrapped(self.work.fault or "computing", width, "quiet", " ")
-        lines = self._verdict(now, width)
+        lines = [*self._verdict(now, width), *self._over_family(now, width)]
         for row in FIGURES:
             figure = row.read(now)
             if figure is None:
@@ -81,16 +81,24 @@ class FiguresPanel(Panel):
             return [((f" stable ({which})", "good"),)]
         return wrapped(f"UNSTABLE ({which}): {loop.margins.reason}", width, "worse", " ")
 
+    def _over_family(self, now: Evaluation, width: int) -> list[Line]:
+        """In one line whether the family is stable too."""
+        family = now.family
+        if family is None or family.reason:
+            return []
+        share = units.text(family.stable_percent, "%", digits=3)
+        said = f"family of {family.plants}: {share} stable"
+        worst = family.figures["max_sensitivity"].worst
+        if worst.value is not None:
+            said += f", worst Ms {units.text(worst.value, digits=3)}"
+        return wrapped(said, width, "good" if family.stable_percent == 100.0 else "worse", " ")
+
     def _family(self, now: Evaluation, width: int) -> list[Line]:
         """The same figures over the family of plants: 95 % of them are not worse than that."""
         family = now.family
         if family is None or family.reason:
             return []
-        share = units.text(family.stable_percent, "%", digits=3)
-        tone = "good" if family.stable_percent == 100.0 else "worse"
-        said = f"family of {family.plants} plants: stable with {share} of them"
-        lines = wrapped(said, width, tone, " ")
-        lines.append(((f"{'':16}{'nominal':<10}{'95 %':<10}worst", "label"),))
+        lines: list[Line] = [((f" {'family':<15}{'nominal':<10}{'95 %':<10}worst", "label"),)]
         for row in FIGURES:
             among = family.figures.get(row.name)
             if among is None:
