@@ -60,10 +60,10 @@ class MapPanel(Panel):
             lines = [self.heading(width), (), *wrapped(self.words, width, "plain", " ")]
             return self.typeset(lines, width, height)
         told = self._told()
-        head = self.typeset([self.heading(width), ()], width, 2)
+        head = self.typeset([self.heading(width)], width, 1)
         foot = self.typeset(told, width, len(told))
         field = charts.tolerance_field(self.found)
-        rows = max(1, height - 2 - len(told))
+        rows = max(1, height - 1 - len(told))
         picture = charts.draw_map(field, width, rows, ascii_only=self.ascii_only)
         parts = (head, as_cells(picture), foot)
         return Screenful(
@@ -74,12 +74,12 @@ class MapPanel(Panel):
     def _told(self) -> list[Line]:
         assert self.found is not None
         first, *others = report.distance_lines(self.found)
-        return [(), ((f" {first}", "label"),), *(((f" {line}", "plain"),) for line in others)]
+        return [((f" {first}", "label"),), *(((f" {line}", "plain"),) for line in others)]
 
     def cells(self) -> tuple[int, int]:
         """Columns and rows of the map for which there is room."""
-        below = 2 + 1 + 1 + 5
-        columns, rows = charts.map_cells(self.size.width, self.size.height - below)
+        # The title above; the head of the distances and one line for each way below.
+        columns, rows = charts.map_cells(self.size.width, self.size.height - (1 + 1 + 5))
         return min(columns, _WIDEST), rows
 
 
