@@ -11,7 +11,7 @@ from workbench.model.plant import Shape, read_function
 from workbench.model.variation import Variation
 from workbench.units import TIME_UNITS, check_fields, harmless, one_of, plain, quantity
 
-_MOST: Final = 500
+_MOST: Final = 200
 """Points or plants of one list."""
 Item = TypeVar("Item")
 _RATIOS: Final = tuple(field.name for field in fields(Variation))
