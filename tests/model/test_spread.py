@@ -99,6 +99,20 @@ def test_a_resonance_between_two_frequencies_is_seen() -> None:
     assert judge(loop, [ring]).max_sensitivity[0, 0] == pytest.approx(peak, rel=1e-3)
 
 
+def test_a_gain_that_grazes_one_has_its_phase_margin() -> None:
+    # A resonance that takes |L| just above 1 for a stretch narrower than the frequencies' spacing.
+    ring = TransferFunction.ratio((1.0,), [(1.0, 0.56, 1.0)], 0.5)
+    w = np.linspace(0.5, 1.5, 200_001)
+    response = ring((1j * w).astype(np.complex128))
+    gain = 1.0002 / float(np.abs(response).max())
+    # other route: the phase where |L| is 1, on frequencies 5e-6 apart
+    over = np.flatnonzero(np.diff(np.abs(gain * response) >= 1.0))
+    assert len(over) == 2
+    phase = np.degrees(np.abs(np.angle(-response[over]))).min()
+    found = judge(Loop(ring, ring, Gains(gain)), [ring], margins=True).phase_margin_deg[0, 0]
+    assert found == pytest.approx(phase, abs=0.01)
+
+
 def test_gain_and_slope_stay_where_the_lags_change() -> None:
     # exact: gain of K/(T s + 1) is K, slope of k/(s (T s + 1)) is k, whatever T
     level = TransferFunction.ratio((0.02,), [(1.0, 0.0), (30.0, 1.0)], 4.0)

@@ -48,6 +48,10 @@ _NOTHING: Final = 0.001
 """Gain below which an open loop is not followed further."""
 _SHARP: Final = 0.5
 """Step of an open loop, as a share of its size, that is halved before crossovers are looked for."""
+_NEAR: Final = 0.1
+"""How near to 1 a gain turns back that may have crossed 1 unseen."""
+_GRAZING: Final = 33
+"""Points at which that is looked at."""
 _MOST: Final = 6000
 """Most frequencies of a set."""
 _LARGE: Final = 20.0
@@ -619,7 +623,8 @@ class _Block:
         found = np.full(len(self.gains), math.inf)
         left, right = self.values[:, 1:-2] - 1.0, self.values[:, 2:-1] - 1.0
         loops, at = np.nonzero(_crossed(left, right) != 0.0)
-        w = self._roots_between(loops, at, lambda value: value.imag)
+        where = _Interval(loops, self.w[at], self.w[at + 1])
+        w = self._roots_between(where, lambda value: value.imag)
         sizes = np.abs(self.around_zero(loops, w[:, np.newaxis])[:, 0] - 1.0)
         _least_above(found, loops, 1.0 / np.maximum(sizes, 1e-300))
         every = np.arange(len(found))
@@ -634,20 +639,31 @@ class _Block:
 
     def _phase_margins(self) -> Floats:
         found = np.full(len(self.gains), math.inf)
-        above = np.abs(self.values[:, 1:-1] - 1.0) >= 1.0
+        size = np.abs(self.values[:, 1:-1] - 1.0)
+        above = size >= 1.0
         loops, at = np.nonzero(above[:, 1:] != above[:, :-1])
-        w = self._roots_between(loops, at, lambda value: np.log(np.maximum(np.abs(value), 1e-300)))
-        value = self.around_zero(loops, w[:, np.newaxis])[:, 0] - 1.0
-        np.minimum.at(found, loops, np.degrees(np.abs(np.angle(-value))))
+        where = [_Interval(loops, self.w[at], self.w[at + 1])]
+        # A gain that just grazes 1 crosses it twice between two frequencies.
+        middle, rise = size[:, 1:-1], np.diff(size, axis=1)
+        loops, at = np.nonzero((rise[:, 1:] * rise[:, :-1] <= 0.0) & (np.abs(middle - 1.0) < _NEAR))
+        near = _Interval(loops, self.w[at], self.w[at + 2])
+        w = near.points(_GRAZING)
+        above = np.abs(self.around_zero(near.loops, w) - 1.0) >= 1.0
+        row, part = np.nonzero(above[:, 1:] != above[:, :-1])
+        where.append(_Interval(near.loops[row], w[row, part], w[row, part + 1]))
+        every = _together(where)
+        at_one = self._roots_between(every, lambda value: np.log(np.maximum(np.abs(value), 1e-300)))
+        value = self.around_zero(every.loops, at_one[:, np.newaxis])[:, 0] - 1.0
+        np.minimum.at(found, every.loops, np.degrees(np.abs(np.angle(-value))))
         return found
 
-    def _roots_between(self, loops: Places, at: Places, of: Callable[[Complex], Floats]) -> Floats:
-        """Where a function of L is 0 between two frequencies of the set, one for each loop."""
+    def _roots_between(self, where: _Interval, of: Callable[[Complex], Floats]) -> Floats:
+        """Where a function of L is 0 in each interval."""
 
         def function(w: Floats) -> Floats:
-            return of(self.around_zero(loops, w[:, np.newaxis])[:, 0] - 1.0)
+            return of(self.around_zero(where.loops, w[:, np.newaxis])[:, 0] - 1.0)
 
-        return crossings(function, self.w[at], self.w[at + 1])
+        return crossings(function, where.low, where.high)
 
 
 def _together(parts: Sequence[_Interval]) -> _Interval:
