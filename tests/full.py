@@ -29,6 +29,7 @@ from tests.case.campaigns import (
     laid_out_files,
     surveyed_cases,
 )
+from tests.model.spreads import spreads_judged
 from tests.model.test_formula import fuzzed
 from tests.model.test_robustness import brinks, sampled_circles, sampled_verdicts
 from tests.model.test_stability import verdicts
@@ -424,6 +425,9 @@ CAMPAIGNS: Final[dict[str, Campaign]] = {
     "margins made": Campaign(_judged(brinks, 21, 0.0, "share wrong"), 10, 1000),
     "sampled verdicts": Campaign(
         _judged(sampled_verdicts, 31, 1e-6, "difference of a gain margin"), 10, 1000
+    ),
+    "many plants in one loop": Campaign(
+        _judged(spreads_judged, 51, 1e-3, "error of an Ms, as a share"), 5, 500
     ),
     "sampled margins used up": Campaign(
         _judged(sampled_circles, 32, 1e-6, "nearest eigenvalue from the unit circle"), 10, 500

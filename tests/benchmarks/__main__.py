@@ -28,11 +28,14 @@ import numpy as np
 
 from tests.benchmarks.recursion import Numbers, in_c, plain, plain_limited
 from workbench import study
-from workbench.case.case import edit
+from workbench.case.case import edit, edit_all
 from workbench.case.files import read_case
 from workbench.model.feedback import Loop
 from workbench.model.pid import Gains
+from workbench.model.robustness import analogue_margins
+from workbench.model.spread import judge
 from workbench.model.transfer import TransferFunction
+from workbench.model.variation import Variation
 from workbench.sim.family import side_by_side
 from workbench.sim.loop import simulate
 from workbench.sim.scenario import Events
@@ -153,6 +156,47 @@ def _what_if(gains: Sequence[str]) -> float:
     ) / len(gains)
 
 
+def _of_plants(count: int) -> list[TransferFunction]:
+    """Plants that differ by up to 40 % in gain, dead time and lags."""
+    draw, nominal = random.Random(2), _loop(LINEAR).plant
+    sizes = [[draw.uniform(0.6, 1.4) for _ in range(3)] for _ in range(count)]
+    return [Variation(*ratios).of(nominal) for ratios in sizes]
+
+
+def _judged(scan: float | None) -> Callable[[], float]:
+    """Ms and stability of 500 plants in one loop."""
+    loop, plants = replace(_loop(LINEAR), scan=scan), _of_plants(500)
+    return lambda: _seconds(lambda: judge(loop, plants))
+
+
+def _one_by_one() -> float:
+    """Ten of them by the exact route for one loop, times fifty."""
+    loop = replace(_loop(LINEAR), scan=None)
+    few = _of_plants(10)
+    return 50.0 * _seconds(lambda: [analogue_margins(replace(loop, plant=p)) for p in few])
+
+
+def _mapped() -> float:
+    """A map of 60 x 25 plants, without its distances."""
+    loop = _loop(LINEAR)
+    late = [Variation(dead_time=float(ratio)).of(loop.plant) for ratio in np.geomspace(0.25, 4, 60)]
+    gains = np.geomspace(0.25, 4.0, 25).tolist()
+    return _seconds(lambda: judge(loop, late, gains))
+
+
+def _tolerance() -> float:
+    """The same as the page and `assess --tolerance` have it, with the distances."""
+    case = read_case(CASE).case
+    return _seconds(lambda: study.tolerance(case, columns=61, rows=25))
+
+
+def _family_what_if() -> float:
+    """Everything a screen shows, over a family of 100 plants too."""
+    tolerances = {"family.gain": "30", "family.dead_time": "20", "family.lag": "20"}
+    case = edit_all(read_case(CASE).case, {**tolerances, "family.drawn": "91"})
+    return _seconds(lambda: study.evaluate(case))
+
+
 def _nudge_on_screen() -> float:
     """One nudge of the gain, from the key to the redrawn trend, without a terminal."""
     from workbench.screens.app import WorkbenchApp
@@ -220,6 +264,16 @@ ROWS: Final[
         ),
     ),
     ("what-if: every figure and the trend", 25, lambda: _what_if(("1.05",)), None),
+    ("what-if over a family of 100 plants", 15, _family_what_if, None),
+    (
+        "500 plants: stable, Ms; analogue",
+        15,
+        _judged(None),
+        ("the exact route, one by one", _one_by_one),
+    ),
+    ("500 plants: stable, Ms; sampled", 15, _judged(1.0), None),
+    ("60 x 25 plants: stable, Ms; sampled", 15, _mapped, None),
+    ("61 x 25 tolerance map with distances", 15, _tolerance, None),
     ("what-if on the screen, key to redrawn", 7, _nudge_on_screen, None),
 )
 """What, how often, the time of one, and the yardstick with its time."""

@@ -11,6 +11,7 @@ from dataclasses import replace
 from datetime import datetime
 from typing import Any, Final
 
+from workbench.case.family import FamilyTable
 from workbench.case.structures import CompensationTable, FeedforwardTable, InnerTable
 from workbench.case.tables import (
     AT_MEND,
@@ -404,6 +405,7 @@ TOLD_WITH: Final[dict[tuple[type, str], tuple[str, ...]]] = {
     (OpTable, "start"): ("low", "high", "min", "max"),
     (PlantTable, "load"): ("time_unit",),
     (Formula, "formula"): ("time_unit",),
+    (FamilyTable, "plants"): ("time_unit",),
     (Controller, "gain"): ("form", "proportional_band"),
     (Controller, "proportional_band"): ("gain",),
     (Controller, "integral"): ("form",),

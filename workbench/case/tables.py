@@ -13,6 +13,7 @@ from dataclasses import dataclass, field, replace
 from datetime import date, datetime
 from typing import Any, ClassVar, Final
 
+from workbench.case.family import FamilyTable
 from workbench.case.ranges import Limited, Ranged, outside
 from workbench.case.structures import CompensationTable, FeedforwardTable, InnerTable
 from workbench.case.tags import KINDS, kind_of
@@ -309,6 +310,7 @@ class Case:
     compensation: CompensationTable = CompensationTable()
     feedforward: FeedforwardTable = FeedforwardTable()
     inner: InnerTable = InnerTable()
+    family: FamilyTable = FamilyTable()
     folder: str = field(default="", compare=False)
     """Where the case file lies, and with it the records that it names; not kept in the file."""
 
@@ -348,7 +350,9 @@ def table_values(case: Case) -> dict[str, Values]:
     }
     if case.controller is not None:
         tables["controller"] = values_of(case.controller)
-    for name in ("compensation", "feedforward", "inner", "valve", "measurement", "scenario"):
+    for name in TABLES:
+        if name in tables or name == "controller":
+            continue
         tables[name] = values_of(getattr(case, name))
     return tables
 
@@ -444,6 +448,7 @@ TABLES: Final[dict[str, type]] = {
     "pv": PvTable,
     "op": OpTable,
     "plant": PlantTable,
+    "family": FamilyTable,
     "controller": Controller,
     "compensation": CompensationTable,
     "feedforward": FeedforwardTable,

@@ -30,7 +30,7 @@ _THETA_13 = 5.371920351148152
 
 
 def expm(matrix: NDArray[np.float64]) -> NDArray[np.float64]:
-    """Exponential of a square matrix (n, n), by scaling and squaring of the Padé approximant.
+    """Exponential of square matrices (..., n, n), by scaling and squaring of the Padé approximant.
 
     Raises `CannotSolve` where the result is not finite.
 
@@ -40,13 +40,13 @@ def expm(matrix: NDArray[np.float64]) -> NDArray[np.float64]:
     SIAM J. Matrix Anal. Appl. 26(4), 2005, 1179-1193, algorithm 2.3; coefficients from memory,
     checked against mpmath in the tests.
     """
-    norm = float(np.abs(matrix).sum(axis=0).max()) if matrix.size else 0.0
+    norm = float(np.abs(matrix).sum(axis=-2).max()) if matrix.size else 0.0
     if not math.isfinite(norm):
         raise CannotSolve("the plant's time scales are too far apart", change="enter them again")
     squarings = max(0, math.ceil(math.log2(norm / _THETA_13))) if norm > _THETA_13 else 0
     a = matrix / 2.0**squarings
     b = _PADE_13
-    identity = np.eye(len(a))
+    identity = np.eye(a.shape[-1])
     a2 = a @ a
     a4 = a2 @ a2
     a6 = a4 @ a2
@@ -65,33 +65,44 @@ def expm(matrix: NDArray[np.float64]) -> NDArray[np.float64]:
         + b[0] * identity
     )
     result = np.asarray(np.linalg.solve(even - odd, even + odd), np.float64)
-    alone, rates = _alone(matrix), np.diag(matrix)
+    alone, rates = _alone(matrix), np.diagonal(matrix, axis1=-2, axis2=-1)
     for k in range(squarings - 1, -1, -1):
         result = result @ result
         # Each squaring doubles the relative error of what decays slowly: 20 of them leave 1e-10.
         # Where the entry stands alone on the diagonal it is known exactly (A.H. Al-Mohy and
         # N.J. Higham, SIAM J. Matrix Anal. Appl. 31(3), 2009, 970-989, from memory).
-        result[alone, alone] = np.exp(rates[alone] / 2.0**k)
+        result[..., alone, alone] = np.exp(rates[..., alone] / 2.0**k)
     return result
 
 
 def _alone(matrix: NDArray[np.float64]) -> NDArray[np.intp]:
-    """Indices of the 1 x 1 diagonal blocks of a block lower triangular matrix."""
-    n = len(matrix)
-    last = np.where(matrix != 0.0, np.arange(n), 0).max(axis=1, initial=0)
+    """Indices of the 1 x 1 diagonal blocks that block lower triangular matrices all have."""
+    n = matrix.shape[-1]
+    used = (matrix != 0.0).any(axis=tuple(range(matrix.ndim - 2)))
+    last = np.where(used, np.arange(n), 0).max(axis=1, initial=0)
     ends = np.maximum.accumulate(last) <= np.arange(n)
     return np.flatnonzero(ends & np.concatenate(([True], ends[:-1])))
 
 
 def hold(
-    a: NDArray[np.float64], b: NDArray[np.float64], interval: float
+    a: NDArray[np.float64], b: NDArray[np.float64], interval: float | NDArray[np.float64]
 ) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
     """Exact answer of x' = A x + B u to an input held for `interval` [s].
 
-    Returns phi (n, n) and gamma (n,) with x(t + interval) = phi x(t) + gamma u.
+    Returns phi (n, n) and gamma (n,) with x(t + interval) = phi x(t) + gamma u; all of them may
+    have leading axes, for many plants at once.
     """
-    phi, gamma = holds(a, b[:, np.newaxis], (interval,))[0]
-    return phi, gamma[:, 0]
+    if b.ndim == 1:
+        phi, gamma = holds(a, b[:, np.newaxis], (float(interval),))[0]
+        return phi, gamma[:, 0]
+    n = b.shape[-1]
+    length = np.asarray(interval, np.float64)[..., np.newaxis]
+    # The input stands first, which keeps a lower triangular A lower triangular.
+    stacked = np.zeros((*b.shape[:-1], n + 1, n + 1))
+    stacked[..., 1:, 1:] = a * length[..., np.newaxis]
+    stacked[..., 1:, 0] = b * length
+    exponential = expm(stacked)
+    return exponential[..., 1:, 1:], exponential[..., 1:, 0]
 
 
 def holds(

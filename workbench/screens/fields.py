@@ -96,7 +96,7 @@ def label_of(key: str) -> str:
         return SHORTER[key]
     table, _, name = key.partition(".")
     words = name.replace("_", " ")
-    if table in ("feedforward", "inner"):
+    if table in ("feedforward", "inner", "family"):
         return f"{table} {words}"
     return f"{table.upper()} {words}" if table in ("pv", "op") else words
 

@@ -95,13 +95,13 @@ class MainPage(Page):
         Command("minus", "-", "", f"nudge({1 / SMALL})", "2 % down, or the choice before"),
         Command("greater_than_sign,full_stop", ">", "", f"nudge({LARGE})", "20 % up", "."),
         Command("less_than_sign,comma", "<", "", f"nudge({1 / LARGE})", "20 % down", ","),
-        Command("", "+-", "2%", "", ""),
-        Command("", "<>", "20%", "", ""),
+        Command("", "+-<>", "step", "", ""),
         Command("p,f5", "p", "pin", "pin", "pin the present prediction for comparison", "F5"),
         Command("u,f6", "u", "undo", "undo", "undo the last change", "F6"),
         Command("y,f7", "y", "redo", "redo", "redo what was undone", "F7"),
-        Command("r,f3", "r", "record", "record", "fit the plant to a test record", "F3"),
+        Command("r,f3", "r", "fit", "record", "fit the plant to a test record", "F3"),
         Command("o,f8", "o", "propose", "proposals", "best settings and published rules", "F8"),
+        Command("t,f10", "t", "map", "tolerance", "how much plant error the loop survives", "F10"),
         Command("s,f2", "s", "save", "save", "save with a reason", "F2"),
         Command("z,f9", "z", "zoom", "zoom", "the focused panel alone, and back", "F9"),
         Command("q,ctrl+c", "q", "leave", "leave", "leave; asks about unsaved work", "ctrl+c"),
@@ -412,6 +412,13 @@ class MainPage(Page):
     def action_proposals(self) -> None:
         """Open the Proposals page."""
         self.program.show_proposals(self.work)
+
+    def action_tolerance(self) -> None:
+        """Open the Tolerance page."""
+        if self.work.case.controller is None:
+            self.tell("the map needs a controller: give its gain in 2 Controller")
+            return
+        self.program.show_tolerance(self.work)
 
     def action_save(self) -> None:
         """Open the Save page."""

@@ -13,7 +13,22 @@ from workbench.study.assessment import (
     reductions,
 )
 from workbench.study.conversion import Conversion, convert
-from workbench.study.evaluation import HANDOVER, Evaluation, cautions, evaluate
+from workbench.study.evaluation import (
+    HANDOVER,
+    Evaluation,
+    cautions,
+    evaluate,
+    family_cautions,
+)
+from workbench.study.family import (
+    Among,
+    FamilyFigures,
+    Member,
+    drawn_plants,
+    family_figures,
+    members,
+    with_family,
+)
 from workbench.study.keep import (
     FileCheck,
     accept,
@@ -36,15 +51,23 @@ from workbench.study.prediction import (
 from workbench.study.proposals import Proposal, RelayTest, Wish, propose, take
 from workbench.study.sheet import Retune, Stage, retune
 from workbench.study.survey import Surveyed, survey
+from workbench.study.tolerance import LIMIT as TOLERANCE_LIMIT
+from workbench.study.tolerance import Axis, Distance, Tolerance, tolerance
 
 __all__ = [
     "HANDOVER",
+    "TOLERANCE_LIMIT",
+    "Among",
     "Assessment",
+    "Axis",
     "Conversion",
+    "Distance",
     "Evaluation",
+    "FamilyFigures",
     "FileCheck",
     "InnerTrend",
     "LoopFigures",
+    "Member",
     "PlantFigures",
     "Prediction",
     "Proposal",
@@ -54,6 +77,7 @@ __all__ = [
     "Retune",
     "Stage",
     "Surveyed",
+    "Tolerance",
     "Trend",
     "Wish",
     "accept",
@@ -64,9 +88,13 @@ __all__ = [
     "chosen_candidate",
     "controller_of",
     "convert",
+    "drawn_plants",
     "evaluate",
+    "family_cautions",
+    "family_figures",
     "fit_record",
     "loop_of",
+    "members",
     "plant_of",
     "predict",
     "propose",
@@ -78,5 +106,7 @@ __all__ = [
     "retune",
     "survey",
     "take",
+    "tolerance",
     "units_of",
+    "with_family",
 ]

@@ -97,11 +97,14 @@ def action_of(case: Case) -> tuple[str, str]:
     return action, f"{action} action, because the plant's {word} is {sign}"
 
 
-def loop_of(case: Case) -> Loop:
-    """The loop in percent of span.  Raises `InputError` where plant or controller is missing."""
+def loop_of(case: Case, other: TransferFunction | None = None) -> Loop:
+    """The loop in percent of span, with another plant [PV unit per OP unit] where one is given.
+
+    Raises `InputError` where plant or controller is missing.
+    """
     controller = controller_of(case)
     pv, op = case.pv, case.op
-    plant = plant_in_percent(case)
+    plant = (plant_of(case) if other is None else other) * (op.range.span / pv.range.span)
     load = case.plant.load_path()
     if case.measurement.lag and case.measurement.lag.seconds:
         # The sensor's lag is felt by everything that is measured: PV is what the sensor shows.

@@ -99,6 +99,8 @@ class Prediction:
     """From the load step to when the first move of any controller shows in PV."""
     diverged: bool
     """The loop ran away and the trend was cut off."""
+    events: Events
+    """What was run, in percent of span: for running other plants through the same."""
     inner: InnerTrend | None = None
     """Where there is an inner loop."""
 
@@ -170,6 +172,7 @@ def predict(case: Case, seed: int = 0, like: Prediction | None = None) -> Predic
         floor_fixed_iae=least.fixed_iae.times(to_pv),
         floor_acts_after_s=least.acts_after,
         diverged=trace.diverged,
+        events=events,
         inner=None if trace.inner is None else _inner_trend(case, loop, trace.inner),
     )
 

@@ -20,6 +20,7 @@ from workbench.model.pid import Controller, settings_like
 from workbench.model.reduction import double_integrator, half_rule, unstable_lag
 from workbench.model.robustness import analogue_margins, ultimate
 from workbench.study.best import SEARCH_SOURCE, SEARCHES, searched
+from workbench.study.family import FamilyFigures, family_figures
 from workbench.study.loop import action_of, loop_of, plant_in_percent
 from workbench.study.operating import about_rest
 from workbench.study.prediction import predicted_measures
@@ -83,6 +84,8 @@ class Proposal:
     limits: str = ""
     """The plants that a rule was published for."""
     published_form: str = ""
+    family: FamilyFigures | None = None
+    """Margins over the family of plants, where the case states one."""
 
 
 def propose(
@@ -257,6 +260,7 @@ def _judged(
         _LATER,
         _LATER,
         within,
+        family=family_figures(trial),
     )
 
 

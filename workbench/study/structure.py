@@ -67,6 +67,12 @@ def _inner(case: Case, outer: Loop) -> Loop:
     )
 
 
+def has_one_scan(loop: Loop) -> bool:
+    """The loop has one scan, and a plant that many can be judged of side by side as sampled."""
+    nested = isinstance(loop, Structure) and loop.inner is not None
+    return loop.scan is not None and not nested and not loop.plant.has_delayed_feedback
+
+
 def margins_as_sampled(loop: Loop) -> tuple[Margins | None, str]:
     """Margins of a loop that has a scan, as sampled, or why it has none."""
     try:
