@@ -16,6 +16,7 @@ from __future__ import annotations
 import math
 from collections.abc import Callable, Sequence
 from dataclasses import dataclass, replace
+from functools import partial
 from typing import Final
 
 import numpy as np
@@ -51,6 +52,8 @@ _MOST_TRIES: Final = 6
 _MOST_ROUNDS: Final = 40
 _MOST_PLANTS: Final = 6
 """Times that worse plants of a family are added."""
+_MUCH_WORSE: Final = 1.01
+"""More than drawing a limit in by a little can cost."""
 _SPARE: Final = 0.9999
 """Share of a limit that is aimed at once the exact figure was over it."""
 
@@ -104,25 +107,87 @@ def best(
     ModelError
         A plant with a dead time inside an inner feedback.
     """
+    return _Family(loops, law, derivative, should_stop or (lambda: False)).best(aim)
+
+
+def trade_off(
+    loops: Sequence[Loop],
+    law: Law,
+    aim: Aim,
+    limits: Sequence[float],
+    *,
+    derivative: bool,
+    should_stop: Stop | None = None,
+) -> tuple[tuple[float, Best], ...]:
+    """The best settings at each of several limits on Ms, each search begun where the last ended.
+
+    Parameters
+    ----------
+    loops, law, aim, derivative, should_stop
+        As for `best`; the limit on Ms in `aim` does not count.
+    limits
+        On Ms, above 1.
+
+    Returns
+    -------
+    tuple
+        (limit, best settings), the smallest limit first; limits that no settings keep, or within
+        which nothing limits the gain, are left out.
+
+    Raises
+    ------
+    ModelError
+        A plant with a dead time inside an inner feedback.
+    """
     stop = should_stop or (lambda: False)
-    whole = Bench.of(loops)
-    chosen = [0]
-    search = _Search(whole.only(chosen), law, aim, derivative, stop)
-    found = search.run()
-    for _ in range(_MOST_PLANTS if len(loops) > 1 else 0):
-        worse = _worst(whole, found, aim)
-        if stop() or all(plant in chosen for plant in worse):
+    family = _Family(loops, law, derivative, stop)
+    curve: list[tuple[float, Best]] = []
+    for limit in sorted(limits, reverse=True):
+        if stop():
             break
-        chosen = sorted({*chosen, *worse})
-        search = _Search(whole.only(chosen), law, aim, derivative, stop)
-        found = search.from_here(found)
-    found = _held_to_limits(search, [loops[i] for i in chosen], found)
-    if derivative and math.isfinite(aim.limits.noise_gain):
-        # A derivative filtered by a share of its time multiplies noise however short it is.
-        without = _or_none(lambda: best(loops, law, aim, derivative=False, should_stop=should_stop))
-        if without is not None and without.cost < found.cost:
-            return without
-    return found
+        within = replace(aim, limits=replace(aim.limits, max_sensitivity=limit))
+        found = _or_none(partial(family.best, within))
+        if found is not None:
+            curve.append((limit, found))
+        elif curve:
+            # Smaller limits leave even less.
+            break
+    return tuple(reversed(curve))
+
+
+class _Family:
+    """A family of plants, those of them that have mattered so far, and the last best settings."""
+
+    def __init__(self, loops: Sequence[Loop], law: Law, derivative: bool, stop: Stop) -> None:
+        self.loops, self.law, self.derivative, self.stop = loops, law, derivative, stop
+        self.whole = Bench.of(loops)
+        self.chosen = [0]
+        self.last: Best | None = None
+        self.without: _Family | None = None
+        """The same without a derivative."""
+
+    def best(self, aim: Aim) -> Best:
+        """The best settings, looked for near the last ones where there are any."""
+        search = self._search(aim)
+        found = search.run() if self.last is None else search.from_here(self.last)
+        for _ in range(_MOST_PLANTS if len(self.loops) > 1 else 0):
+            worse = _worst(self.whole, found, aim)
+            if self.stop() or all(plant in self.chosen for plant in worse):
+                break
+            self.chosen = sorted({*self.chosen, *worse})
+            search = self._search(aim)
+            found = search.from_here(found)
+        found = self.last = _held_to_limits(search, [self.loops[i] for i in self.chosen], found)
+        if self.derivative and math.isfinite(aim.limits.noise_gain):
+            # A derivative filtered by a share of its time multiplies noise however short it is.
+            self.without = self.without or _Family(self.loops, self.law, False, self.stop)
+            without = _or_none(partial(self.without.best, aim))
+            if without is not None and without.cost < found.cost:
+                return without
+        return found
+
+    def _search(self, aim: Aim) -> _Search:
+        return _Search(self.whole.only(self.chosen), self.law, aim, self.derivative, self.stop)
 
 
 def _or_none(search: Callable[[], Best]) -> Best | None:
@@ -219,13 +284,18 @@ class _Search:
         ]
 
     def near(self, found: Best) -> Best:
-        """The best of the times found, and a little lower in gain, within these limits."""
+        """The best of the times found, and a little lower in gain, within these limits.
+
+        Where these times have no such gain any more, the best near them: the window of gains that
+        held the best may have closed, and what is left lie far below it.
+        """
         ratio = math.log(found.derivative_time / found.integral_time) if self.derivative else None
         place = _Spot(math.log(found.integral_time), ratio)
         spots = self.look([place], (0.0, 0.01, 0.03, 0.1, 0.3), math.inf)
-        if not spots:
-            raise CannotSolve("no settings keep the limits on this plant", change="allow more")
-        return self.as_best(min(spots, key=lambda spot: spot.cost))
+        best = min(spots, key=lambda spot: spot.cost, default=None)
+        if best is None or best.cost > _MUCH_WORSE * found.cost:
+            return self.from_here(found)
+        return self.as_best(best)
 
     def _coarse(self) -> tuple[list[_Spot], tuple[float, float, float]]:
         """Seeds, best first, and the steps with which to go on."""
