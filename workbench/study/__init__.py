@@ -33,10 +33,13 @@ from workbench.study.prediction import (
     respond_to_record,
     response_horizon,
 )
-from workbench.study.proposals import Proposal, RelayTest, Wish, propose, take
+from workbench.study.proposals import LIMITS, Proposal, propose, take
+from workbench.study.trade_off import TradeOff, TradeOffPoint, trade_off
+from workbench.study.wish import RelayTest, Wish, edit_wish, show_wish
 
 __all__ = [
     "HANDOVER",
+    "LIMITS",
     "Assessment",
     "Conversion",
     "Evaluation",
@@ -49,6 +52,8 @@ __all__ = [
     "Reduced",
     "RelayTest",
     "Response",
+    "TradeOff",
+    "TradeOffPoint",
     "Trend",
     "Wish",
     "accept",
@@ -59,6 +64,7 @@ __all__ = [
     "chosen_candidate",
     "controller_of",
     "convert",
+    "edit_wish",
     "evaluate",
     "fit_record",
     "loop_of",
@@ -70,6 +76,8 @@ __all__ = [
     "respond",
     "respond_to_record",
     "response_horizon",
+    "show_wish",
     "take",
+    "trade_off",
     "units_of",
 ]

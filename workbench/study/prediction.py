@@ -149,32 +149,42 @@ def _inner_trend(case: Case, loop: Loop, inside: Inside) -> InnerTrend:
     )
 
 
+def steps_of(case: Case) -> tuple[float, float]:
+    """Setpoint step [% of PV span] and load step [input of the loop's load path] of the scenario.
+
+    5 % of the spans where it has neither.
+    """
+    scenario, scale = case.scenario, load_scale(case)
+    if scenario.setpoint_step is None and scenario.load_step is None:
+        return 5.0, case.op.range.units(5.0) * scale
+    setpoint_step = case.pv.range.percent(scenario.setpoint_step or 0.0)
+    return setpoint_step, (scenario.load_step or 0.0) * scale
+
+
 def _events(case: Case, loop: Loop, seed: int, like: Prediction | None) -> Events:
     """The scenario made definite, every default filled in."""
     scenario, pv = case.scenario, case.pv
-    setpoint_step, load_step = scenario.setpoint_step, scenario.load_step
+    setpoint_step, load_step = steps_of(case)
     at = scenario.setpoint_at.seconds
     load_at = scenario.load_at.seconds if scenario.load_at else 0.0
     until = scenario.until.seconds if scenario.until else None
-    halved = setpoint_step is None and load_step is None
-    if halved:
-        setpoint_step, load_step = pv.range.units(5.0), case.op.range.units(5.0)
-        halved = scenario.load_at is None
+    nothing_said = scenario.setpoint_step is None and scenario.load_step is None
+    halved = nothing_said and scenario.load_at is None
     if until is None:
         horizon = settle_horizon(loop)
         load_at = at + horizon if halved else load_at
         until = _last_move(scenario, at, load_at, setpoint_step, load_step) + horizon
         if loop.setpoint_rate is not None and setpoint_step:
-            until += abs(pv.range.percent(setpoint_step)) / loop.setpoint_rate
+            until += abs(setpoint_step) / loop.setpoint_rate
         # Comparable as long as neither is squeezed into a corner of the other.
         if like is not None and until / 3.0 <= like.until_s <= until * 3.0:
             until = like.until_s
     if halved:
         load_at = at + (until - at) / 2.0
     return Events(
-        setpoint_step=pv.range.percent(setpoint_step or 0.0),
+        setpoint_step=setpoint_step,
         setpoint_at=at,
-        load_step=(load_step or 0.0) * load_scale(case),
+        load_step=load_step,
         load_at=load_at,
         until=until,
         # Noise is what a scan samples: an analogue controller has no scans to give it to.
@@ -200,7 +210,7 @@ _SWINGS: Final = 8
 
 
 def _last_move(
-    scenario: Scenario, at: float, load_at: float, setpoint: float | None, load: float | None
+    scenario: Scenario, at: float, load_at: float, setpoint: float, load: float
 ) -> float:
     """When the last thing happens that has to settle [s]."""
     time = scenario.load_time.seconds if scenario.load_time else 0.0

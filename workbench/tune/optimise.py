@@ -28,6 +28,9 @@ from workbench.model.pid import Gains
 from workbench.model.robustness import analogue_margins, sampled_margins
 from workbench.model.sampled import SampledLoop, controller_in_z
 from workbench.model.sweep import Limits, frequencies, scale_of
+from workbench.sim.loop import settle_horizon, simulate
+from workbench.sim.metrics import measure
+from workbench.sim.scenario import Events
 from workbench.tune.bench import Aim, Bench, at_infinity
 
 Floats = NDArray[np.float64]
@@ -149,8 +152,8 @@ def trade_off(
         found = _or_none(partial(family.best, within))
         if found is not None:
             curve.append((limit, found))
-        elif curve:
-            # Smaller limits leave even less.
+        else:
+            # Smaller limits leave even less, and what has no limit here hardly has one there.
             break
     return tuple(reversed(curve))
 
@@ -353,42 +356,55 @@ def _apart(spot: _Spot, seed: _Spot, steps: tuple[float, float, float]) -> bool:
 
 def _held_to_limits(search: _Search, loops: Sequence[Loop], found: Best) -> Best:
     """The settings found, drawn in until the exact figures keep the limits."""
-    limits = wanted = search.aim.limits
+    aim = search.aim
     for _ in range(_MOST_TRIES):
-        over_ms, over_mt, over_noise = _exceeded(loops, found.gains, wanted)
-        if max(over_ms, over_mt, over_noise) <= 1.0:
+        over = _exceeded(loops, found.gains, search.aim)
+        if max(over.values()) <= 1.0:
             return found
         limits = Limits(
-            _drawn_in(limits.max_sensitivity, over_ms),
-            _drawn_in(limits.max_complementary_sensitivity, over_mt),
-            limits.noise_gain * min(_SPARE / over_noise, 1.0) if over_noise else math.inf,
+            _drawn_in(aim.limits.max_sensitivity, over["ms"], 1.0001),
+            _drawn_in(aim.limits.max_complementary_sensitivity, over["mt"], 1.0001),
+            _drawn_in(aim.limits.noise_gain, over["noise"]),
         )
-        tighter = _Search(
-            search.bench,
-            search.law,
-            replace(search.aim, limits=limits),
-            search.derivative,
-            search.stop,
-        )
+        travel = _drawn_in(aim.load_travel, over["travel"])
+        aim = replace(aim, limits=limits, load_travel=travel)
+        tighter = _Search(search.bench, search.law, aim, search.derivative, search.stop)
         found = tighter.near(found)
     return found
 
 
-def _drawn_in(limit: float, over: float) -> float:
-    return max(1.0001, _SPARE * limit / over) if over > 1.0 else limit
+def _drawn_in(limit: float, over: float, least: float = 0.0) -> float:
+    return max(least, _SPARE * limit / over) if over > 1.0 else limit
 
 
-def _exceeded(loops: Sequence[Loop], gains: Gains, limits: Limits) -> tuple[float, float, float]:
-    """The largest exact Ms, Mt and noise gain as shares of their limits."""
-    worst = [0.0, 0.0, 0.0]
+def _exceeded(loops: Sequence[Loop], gains: Gains, aim: Aim) -> dict[str, float]:
+    """The largest exact figures as shares of their limits, 0 where there is no limit."""
+    limits = aim.limits
+    worst = {"ms": 0.0, "mt": 0.0, "noise": 0.0, "travel": 0.0}
     for loop in (replace(loop, gains=gains) for loop in loops):
         margins = analogue_margins(loop) if loop.scan is None else sampled_margins(loop)
         ms, mt = margins.max_sensitivity.value, margins.max_complementary_sensitivity.value
-        worst[0] = max(worst[0], (ms or 2.0 * limits.max_sensitivity) / limits.max_sensitivity)
-        worst[1] = max(worst[1], (mt or 1.0) / limits.max_complementary_sensitivity)
+        shares = {
+            "ms": (ms or 2.0 * limits.max_sensitivity) / limits.max_sensitivity,
+            "mt": (mt or 1.0) / limits.max_complementary_sensitivity,
+        }
         if math.isfinite(limits.noise_gain):
-            worst[2] = max(worst[2], noise_gain(loop) / limits.noise_gain)
-    return worst[0], worst[1], worst[2]
+            shares["noise"] = noise_gain(loop) / limits.noise_gain
+        if math.isfinite(aim.load_travel):
+            shares["travel"] = load_travel(loop, aim.load_step) / aim.load_travel
+        worst |= {name: max(worst[name], share) for name, share in shares.items()}
+    return worst
+
+
+def load_travel(loop: Loop, load_step: float) -> float:
+    """All moves of OP after a load step from rest, added up, by the engine [% of OP span].
+
+    Without the output's own limits, which the search does not know of.
+    """
+    free = replace(loop, low=None, high=None, rate=None)
+    events = Events(0.0, 0.0, load_step, 0.0, settle_horizon(free))
+    travel = measure(simulate(free, events), events).output_travel.value
+    return math.inf if travel is None else travel
 
 
 def noise_gain(loop: Loop) -> float:
