@@ -161,7 +161,7 @@ def test_the_search_is_over_the_whole_that_the_controller_acts_on() -> None:
             "inner.action": "reverse",
             "inner.scan": "0.5 s",
             "controller.scan": "1 s",
-            "plant.formula": "1.6 exp(-8 s)/(45 s + 1)",
+            "plant.load": "1.6 exp(-8 s)/(45 s + 1)",
         }
     )
 

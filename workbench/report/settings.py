@@ -89,9 +89,9 @@ _JUDGED: Final = (
     "max_sensitivity",
     "max_complementary_sensitivity",
     "phase_margin_deg",
+    "noise_gain",
     "setpoint_iae",
     "load_iae",
-    "noise_gain",
     "load_travel",
 )
 """Figures of a proposal."""
@@ -151,26 +151,33 @@ def _proposal_table(
     judged = [
         [text(getattr(proposal, key).value, digits=3) for key in _JUDGED] for proposal in proposals
     ]
-    settings_head = [["", "gain", "integral", "derivative"], ["method", "%/%", "", ""]]
     area = f"{units['pv']} s"
-    judged_head = [
-        ["max.", "max.", "phase", "setpoint", "load", "noise", "load"],
-        ["sens.", "compl.", "margin", "IAE", "IAE", "gain", "travel"],
-        ["", "sens.", "deg", area, area, "%/%", units["op"]],
-    ]
-    wide = grid(
-        [
-            ["", "", "", "", *judged_head[0]],
-            [*settings_head[0], *judged_head[1]],
-            [*settings_head[1], *judged_head[2]],
-        ],
+    named = [("", "", "method")]
+    set_to = [("", "gain", "%/%"), ("", "integral", ""), ("", "derivative", "")]
+    loop = [("max.", "sens.", ""), ("max.", "compl.", "sens."), ("phase", "margin", "deg")]
+    loop += [("noise", "gain", "%/%")]
+    answers = [("setpoint", "IAE", area), ("load", "IAE", area), ("load", "travel", units["op"])]
+    head, rows = (
+        [*named, *set_to, *loop, *answers],
         [[*left, *right] for left, right in zip(settings, judged, strict=True)],
     )
-    if max(len(line) for line in wide) <= width:
-        return wide
-    below = [[one[0], *right] for one, right in zip(settings, judged, strict=True)]
-    heads = [["", *judged_head[0]], ["", *judged_head[1]], ["method", *judged_head[2]]]
-    return [*grid(settings_head, settings), "", *grid(heads, below)]
+    # Side by side, or in parts below each other, each with the names again.
+    for parts in ((range(1, 11),), (range(1, 4), range(4, 11)), _PARTS):
+        tables = [
+            grid(
+                [list(line) for line in zip(*(head[i] for i in (0, *part)), strict=True)],
+                [[row[i] for i in (0, *part)] for row in rows],
+            )
+            for part in parts
+        ]
+        if max(len(line) for table in tables for line in table) <= width:
+            break
+    lines = [line for table in tables for line in ("", *table)]
+    return lines[1:]
+
+
+_PARTS: Final = (range(1, 4), range(4, 8), range(8, 11))
+"""Columns of settings, of margins and of answers."""
 
 
 def _trade_off_table(curves: TradeOff, units: Mapping[str, str]) -> list[str]:
