@@ -263,6 +263,9 @@ def predicted(
 ) -> list[Proposal]:
     """The rows with what the scenario does to those that are stable, held to the limits."""
     missing = no_time_domain(plant_in_percent(case))
+    # What noise adds to an integral grows with the scenario's length, whatever the settings are;
+    # what noise does to the output is told by the noise gain.
+    quiet = replace(case, pv=replace(case.pv, noise=0.0))
     filled = []
     for row in rows:
         if row.controller is None or row.load_iae is not _LATER:
@@ -272,25 +275,17 @@ def predicted(
             none = Figure(None, f"not predicted: {missing or 'stopped'}")
             told = replace(row, setpoint_iae=none, load_iae=none, load_travel=none)
         else:
-            trial = replace(case, controller=row.controller)
-            found = predict(trial)
+            found = predict(replace(quiet, controller=row.controller))
             told = replace(
                 row,
                 setpoint_iae=found.measures.setpoint_iae,
                 load_iae=found.measures.load_iae,
-                load_travel=_load_travel(_quiet(trial, found)),
+                load_travel=_load_travel(found),
             )
         over = _over_limits(case, told, wish)
         reason = "; ".join([*filter(None, [told.reason]), *over])
         filled.append(replace(told, within_limit=not over, reason=reason))
     return filled
-
-
-def _quiet(case: Case, found: Prediction) -> Prediction:
-    """The prediction without noise: what noise moves is told by the noise gain."""
-    if not case.pv.noise:
-        return found
-    return predict(replace(case, pv=replace(case.pv, noise=0.0)), like=found)
 
 
 def _load_travel(found: Prediction) -> Figure:
