@@ -154,13 +154,10 @@ def _proposal_table(
     area = f"{units['pv']} s"
     named = [("", "", "method")]
     set_to = [("", "gain", "%/%"), ("", "integral", ""), ("", "derivative", "")]
-    loop = [("max.", "sens.", ""), ("max.", "compl.", "sens."), ("phase", "margin", "deg")]
-    loop += [("noise", "gain", "%/%")]
+    loop = [("", "Ms", ""), ("", "Mt", ""), ("", "PM", "deg"), ("noise", "gain", "%/%")]
     answers = [("setpoint", "IAE", area), ("load", "IAE", area), ("load", "travel", units["op"])]
-    head, rows = (
-        [*named, *set_to, *loop, *answers],
-        [[*left, *right] for left, right in zip(settings, judged, strict=True)],
-    )
+    head = [*named, *set_to, *loop, *answers]
+    rows = [[*left, *right] for left, right in zip(settings, judged, strict=True)]
     # Side by side, or in parts below each other, each with the names again.
     for parts in ((range(1, 11),), (range(1, 4), range(4, 11)), _PARTS):
         tables = [
@@ -187,10 +184,10 @@ def _trade_off_table(curves: TradeOff, units: Mapping[str, str]) -> list[str]:
         method: {point.limit: point.best for point in curve}
         for method, curve in curves.curves.items()
     }
-    lines = ["", "Trade-off between speed and caution: the best at each limit on the sensitivity"]
+    lines = ["", "Trade-off between speed and caution: the best at each limit on Ms"]
     if limits:
-        head = [["max.", *(word for method in found for word in (method, method))]]
-        head += [["sens.", *(word for _ in found for word in ("gain", "load IAE"))]]
+        head = [["", *(word for method in found for word in (method, method))]]
+        head += [["Ms", *(word for _ in found for word in ("gain", "load IAE"))]]
         head += [["", *(word for _ in found for word in ("%/%", f"{units['pv']} s"))]]
         rows = []
         for limit in limits:

@@ -34,6 +34,8 @@ from workbench.study.prediction import (
     response_horizon,
 )
 from workbench.study.proposals import LIMITS, Proposal, propose, take
+from workbench.study.sheet import Retune, Stage, retune
+from workbench.study.survey import Surveyed, survey
 from workbench.study.trade_off import TradeOff, TradeOffPoint, trade_off
 from workbench.study.wish import RelayTest, Wish, edit_wish, show_wish
 
@@ -52,6 +54,9 @@ __all__ = [
     "Reduced",
     "RelayTest",
     "Response",
+    "Retune",
+    "Stage",
+    "Surveyed",
     "TradeOff",
     "TradeOffPoint",
     "Trend",
@@ -76,7 +81,9 @@ __all__ = [
     "respond",
     "respond_to_record",
     "response_horizon",
+    "retune",
     "show_wish",
+    "survey",
     "take",
     "trade_off",
     "units_of",

@@ -110,7 +110,7 @@ class _Task:
     @classmethod
     def of(cls, case: Case, wish: Wish) -> _Task:
         like = case.controller or Controller(gain=1.0)
-        loop = _alone(loop_of(replace(case, controller=like)))
+        loops = _loops(replace(case, controller=like))
         setpoint_step, load_step = steps_of(case)
         # A step that the scenario leaves out counts with 5 % where the wish wants it.
         setpoint_step, load_step = setpoint_step or 5.0, load_step or 5.0
@@ -123,7 +123,7 @@ class _Task:
         if wish.max_load_travel is not None:
             travel = case.op.range.percent(wish.max_load_travel)
         aim = Aim(limits, travel, wish.share, load_step, setpoint_step)
-        return cls((loop,), like, searched_form(case), aim)
+        return cls(loops, like, searched_form(case), aim)
 
     def law(self, gain: float, integral_time: float | None, derivative_time: float) -> Gains:
         """Canonical gains for the settings of the form."""
@@ -139,6 +139,11 @@ class _Task:
 def searched_form(case: Case) -> str:
     """The form in which the search looks: the series form has no complex zeros."""
     return "series" if case.controller and case.controller.form == "series" else "ideal"
+
+
+def _loops(case: Case) -> tuple[Loop, ...]:
+    """A loop for each plant that the settings are for: the nominal one."""
+    return (_alone(loop_of(case)),)
 
 
 def _alone(loop: Loop) -> Loop:
