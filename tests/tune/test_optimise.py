@@ -278,6 +278,15 @@ def test_the_trade_off_is_the_best_at_each_limit(derivative: bool) -> None:
         assert ms_of(a_loop(gains=found.gains)) == pytest.approx(limit, rel=1e-3)
 
 
+def test_a_derivative_that_only_costs_noise_does_not_shrink_without_end() -> None:
+    aim = Aim(Limits(1.7, noise_gain=2.8), setpoint_share=0.3)
+
+    curve = trade_off([a_loop()], ideal, aim, (1.2, 1.5, 1.8, 2.2), derivative=True)
+
+    for _, found in curve:
+        assert found.derivative_time == 0.0 or found.derivative_time > 1e-3 * found.integral_time
+
+
 def test_limits_that_nobody_can_keep_are_not_on_the_trade_off() -> None:
     unstable = TransferFunction.ratio((2.0,), [(20.0, -1.0)], 2.0)
 

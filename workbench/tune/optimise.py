@@ -43,6 +43,8 @@ _INTEGRAL_TIMES: Final = {False: 45, True: 24}
 """Of the coarse look, by whether there is a derivative."""
 _RATIOS: Final = np.geomspace(0.02, 1.6, 14)
 """Derivative time over integral time, in the coarse look."""
+_LEAST_RATIO: Final = math.log(0.002)
+"""Logarithm of the smallest such share: below it a derivative does nothing but multiply noise."""
 _LOWER: Final = (0.0, 0.12, 0.35, 0.7)
 """How far below the highest gain that keeps the limits, as a logarithm, in the coarse look."""
 _SEEDS: Final = 3
@@ -271,6 +273,9 @@ class _Search:
 
     def look(self, places: Sequence[_Spot], lower: Sequence[float], enough: float) -> list[_Spot]:
         """Every place with the gain lowered by every amount, for what it costs."""
+        places = [p for p in places if p.ratio is None or p.ratio >= _LEAST_RATIO]
+        if not places:
+            return []
         rays = self.bench.rays([self.law(1.0, *place.times) for place in places])
         low, high, far = self.bench.windows(rays, self.aim.limits)
         ray = np.repeat(np.arange(len(places)), len(lower))
