@@ -128,10 +128,12 @@ def trade_off(
 
     Parameters
     ----------
-    loops, law, aim, derivative, should_stop
+    loops, law, aim
         As for `best`; the limit on Ms in `aim` does not count.
     limits
         On Ms, above 1.
+    derivative, should_stop
+        As for `best`.
 
     Returns
     -------
