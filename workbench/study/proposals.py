@@ -9,8 +9,6 @@ from dataclasses import dataclass, replace
 from functools import cache
 from typing import Final, Literal
 
-import numpy as np
-
 from workbench.case.case import Case
 from workbench.errors import (
     CannotSolve,
@@ -25,7 +23,7 @@ from workbench.model.robustness import analogue_margins, sampled_margins, ultima
 from workbench.model.structures import Structure
 from workbench.study.best import SEARCH_SOURCE, SEARCHES, searched, searched_form
 from workbench.study.loop import action_of, loop_of, no_time_domain, plant_in_percent
-from workbench.study.prediction import Prediction, predict
+from workbench.study.prediction import predicted_measures
 from workbench.study.structure import has_one_scan
 from workbench.study.wish import Wish
 from workbench.tune import rules
@@ -293,28 +291,17 @@ def predicted(
             none = Figure(None, f"not predicted: {missing or 'stopped'}")
             told = replace(row, setpoint_iae=none, load_iae=none, load_travel=none)
         else:
-            found = predict(replace(quiet, controller=row.controller))
+            found, travel = predicted_measures(replace(quiet, controller=row.controller))
             told = replace(
                 row,
-                setpoint_iae=found.measures.setpoint_iae,
-                load_iae=found.measures.load_iae,
-                load_travel=_load_travel(found),
+                setpoint_iae=found.setpoint_iae,
+                load_iae=found.load_iae,
+                load_travel=travel,
             )
         over = _over_limits(case, told, wish)
         reason = "; ".join([*filter(None, [told.reason]), *over])
         filled.append(replace(told, within_limit=not over, reason=reason))
     return filled
-
-
-def _load_travel(found: Prediction) -> Figure:
-    """All moves of OP from the load step on."""
-    if not found.load_step:
-        return Figure(None, "there is no load step")
-    if found.diverged:
-        return Figure(None, "the loop is unstable")
-    trend = found.trend
-    before = max(int(np.searchsorted(trend.time, found.load_at_s)) - 1, 0)
-    return Figure.of(float(np.abs(np.diff(trend.output[before:])).sum()))
 
 
 @dataclass(frozen=True)
