@@ -90,18 +90,21 @@ def draw(
     height: int,
     *,
     x_limits: tuple[float, float] | None = None,
+    x_name: str = "",
     ascii_only: bool = False,
 ) -> Picture:
-    """Draw panes above each other over one time axis.
+    """Draw panes above each other over one axis, of time unless it is named.
 
     Parameters
     ----------
     panes
-        From top to bottom; the x of every curve is a time [s].
+        From top to bottom; the x of every curve is a time [s], or what `x_name` says.
     width, height
         Size of the picture in characters.
     x_limits
-        Ends of the time axis [s]; left out, those of the curves.
+        Ends of the x axis; left out, those of the curves.
+    x_name
+        What the x axis is; left out, a time.
     ascii_only
         Use no character above 0x7e.
 
@@ -114,7 +117,7 @@ def draw(
     if width < SMALLEST[0] or height < SMALLEST[1] or not panes:
         sheet.text(0, 0, "too small to draw" if panes else "nothing to draw")
         return sheet.picture()
-    x_axis = _time_axis(panes, x_limits)
+    x_axis = _x_axis(panes, x_limits, x_name)
     heights = _heights(panes, height - 2)
     axes = [_y_axis(pane, rows - 1) for pane, rows in zip(panes, heights, strict=True)]
     gutter = min(9, max(axis.label_width for axis in axes))
@@ -264,7 +267,7 @@ class Axis:
     ticks: tuple[float, ...] = ()
     labels: tuple[str, ...] = ()
     unit: str = ""
-    """Unit of the labels of a time axis."""
+    """Unit of the labels of a time axis, or what an x axis is."""
 
     @property
     def label_width(self) -> int:
@@ -278,7 +281,7 @@ class Axis:
 
     def with_ticks(self, most: int) -> Axis:
         """The axis with round ticks; a time axis in the unit that reads best."""
-        scale = TIME_UNITS[self.unit]
+        scale = TIME_UNITS.get(self.unit, 1.0)
         values, labels = round_ticks(self.low / scale, self.high / scale, most)
         ticks = tuple(value * scale for value in values)
         return Axis(self.low, self.high, ticks, labels, self.unit)
@@ -331,14 +334,14 @@ def _span(arrays: Sequence[Floats]) -> tuple[float, float] | None:
     return float(min(v.min() for v in kept)), float(max(v.max() for v in kept))
 
 
-def _time_axis(panes: Sequence[Pane], limits: tuple[float, float] | None) -> Axis:
+def _x_axis(panes: Sequence[Pane], limits: tuple[float, float] | None, name: str) -> Axis:
     span = limits or _span([curve.x for pane in panes for curve in pane.curves]) or (0.0, 1.0)
     low, high = (min(max(end, -1e12), 1e12) for end in span)
     if high - low < 1e-9 * max(1.0, abs(low), abs(high)):
         high = low + max(1.0, abs(low) * 1e-6)
     length = high - low
     unit = "s" if length < 600 else "min" if length < 4 * 3600 else "h"
-    return Axis(low, high, unit=unit)
+    return Axis(low, high, unit=name or unit)
 
 
 def _y_axis(pane: Pane, rows: int) -> Axis:
@@ -551,6 +554,11 @@ INKS: Final = {
     "output": Ink("braille", "*"),
     "record": Ink("·", ".", joined=False),
     "fit": Ink("braille", "*"),
+    "best-pi": Ink("braille", "*"),
+    "best-pid": Ink("+", "+"),
+    "rule": Ink("o", "o", joined=False),
+    "present": Ink("P", "P", joined=False),
+    "chosen-point": Ink("X", "X", joined=False),
 }
 """Kinds of curve; no two that meet in a pane look alike without colour."""
 

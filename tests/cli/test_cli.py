@@ -279,6 +279,8 @@ BAD = [
     ("propose oven.toml --for both", "--for: ", "load or setpoint"),
     ("propose oven.toml --closed-loop-time 30", "--closed-loop-time: ", "has no unit"),
     ("propose oven.toml --relay 5:1", "--relay: ", "5:1.2:36 s"),
+    ("propose oven.toml --max-noise-gain 0", "--max-noise-gain: ", "above 0"),
+    ("propose oven.toml --for load --setpoint-share 3", "--setpoint-share: ", "keep one"),
     ("propose oven.toml --largest-upset 0", "--largest-upset: ", "above 0"),
     ("propose oven.toml --allowed-deviation -1", "--allowed-deviation: ", "above 0"),
     ("propose oven.toml --max-sensitivity 0.5", "--max-sensitivity: ", "above 1"),
@@ -789,6 +791,26 @@ def test_propose_takes_a_relay_test_and_the_needs_of_a_level(run: Run) -> None:
     # exact: 20/10
     assert row["gain"] == pytest.approx(2.0, rel=1e-12)
     assert run("propose", *level).status == 1
+
+
+def test_propose_keeps_limits_and_shows_what_caution_costs(run: Run) -> None:
+    words = ("--method", "best-pi", "--max-noise-gain", "4", "--setpoint-share", "30")
+    data = answer(run("propose", *P, *words, "--trade-off", "--json"))
+    row = data["proposals"][-1]
+    assert row["within_limit"]
+    assert row["noise_gain"] <= 4.0 * 1.001
+    assert "30 % setpoint IAE and 70 % load IAE" in row["objective"]
+    assert data["units"]["noise_gain"] == "%/%"
+    pi, pid = data["trade_off"]
+    assert (pi["method"], pid["method"]) == ("best-pi", "best-pid")
+    limits = [point["max_sensitivity_limit"] for point in pi["points"]]
+    assert limits == sorted(limits)
+    assert len(limits) >= 10
+    for point in pi["points"]:
+        assert point["max_sensitivity"] <= 1.001 * point["max_sensitivity_limit"]
+        assert point["noise_gain"] <= 4.0 * 1.001
+    said = run("propose", *P, *words, "--trade-off").out
+    assert "Trade-off between speed and caution" in said
 
 
 def test_propose_needs_no_controller(run: Run) -> None:

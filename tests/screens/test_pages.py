@@ -6,6 +6,8 @@ import json
 import os
 import subprocess
 import sys
+import time
+from collections.abc import Callable
 from dataclasses import replace
 from pathlib import Path
 
@@ -22,7 +24,7 @@ from tests.screens.conftest import (
     type_in,
 )
 from workbench import study
-from workbench.case.case import show
+from workbench.case.case import Case, show
 from workbench.case.files import read_case
 from workbench.errors import problem
 from workbench.records.identify import Fit
@@ -328,6 +330,69 @@ def test_the_list_of_rules_scrolls_with_what_is_told_of_each(work: Work) -> None
                 assert proposal.source.split()[-1] in " ".join(lines[14:])
             await press(pilot, "end")
             assert "does not apply" in text_of(pilot)
+
+    run(story())
+
+
+def test_what_is_wished_for_is_edited_and_everything_is_worked_out_anew(work: Work) -> None:
+    async def story() -> None:
+        async with running(work) as pilot:
+            await press(pilot, "o")
+            page = page_of(pilot, ProposalsPage)
+            before = page.table.rows
+            await press(pilot, "w", "down", "enter", *"0.9", "enter")
+            assert "0.9 is outside what is accepted; give a number above 1" in text_of(pilot)
+            await press(pilot, "ctrl+u", *"1.4", "enter")
+            shown = text_of(pilot)
+            assert "Ms at most              1.4" in shown
+            assert "largest upset" in shown
+            assert work.wish.max_sensitivity == 1.4
+            best = {row.method: row for row in page.table.rows}["best-pi"]
+            assert best.max_sensitivity.value == pytest.approx(1.4, rel=2e-3)
+            was = {row.method: row for row in before}["best-pi"]
+            assert best.load_iae.value != was.load_iae.value
+            # Esc leads to the list, then to the loop; the wish is kept.
+            await press(pilot, "escape", "escape", "o")
+            assert page_of(pilot, ProposalsPage).work.wish.max_sensitivity == 1.4
+
+    run(story())
+
+
+def test_the_trade_off_is_drawn_over_the_list(work: Work) -> None:
+    async def story() -> None:
+        async with running(work) as pilot:
+            await press(pilot, "o", "t")
+            shown = text_of(pilot)
+            for words in ("best PI", "best PID", "rules", "present", "Ms", "load IAE degC s"):
+                assert words in shown
+            lines = shown.split("\n")
+            assert max(len(line) for line in lines) <= 80
+            assert sum("X" in line for line in lines[1:11]) >= 1
+            assert "noise gain" in shown
+            await press(pilot, "t")
+            assert "best PI " not in text_of(pilot)
+
+    run(story())
+
+
+def test_leaving_the_page_ends_its_search(work: Work, monkeypatch: pytest.MonkeyPatch) -> None:
+    stopped: list[bool] = []
+
+    def propose(case: Case, wish: study.Wish, should_stop: Callable[[], bool]) -> tuple[()]:
+        while not should_stop():
+            time.sleep(0.01)
+        stopped.append(True)
+        return ()
+
+    async def story() -> None:
+        async with running(work) as pilot:
+            monkeypatch.setattr(study, "propose", propose)
+            await pilot.press("o")
+            await pilot.pause()
+            await pilot.press("escape")
+            while not stopped:
+                await pilot.pause(0.01)
+            page_of(pilot, MainPage)
 
     run(story())
 

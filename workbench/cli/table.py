@@ -234,12 +234,41 @@ FIT: Final[tuple[Option, ...]] = (
 WISHES: Final[tuple[Option, ...]] = (
     Option("--for", "load|setpoint", "what the settings are for", "load"),
     Option(
+        "--setpoint-share",
+        "PERCENT",
+        "for both: share of the setpoint IAE in what is made least, the load IAE having the rest",
+    ),
+    Option(
         "--closed-loop-time",
         "TIME",
         "wanted time constant of the answer to a setpoint step",
         "from the method",
     ),
     Option("--max-sensitivity", "MS", "limit on the peak of the sensitivity", "1.7"),
+    Option(
+        "--max-complementary-sensitivity",
+        "MT",
+        "limit on the peak of the complementary sensitivity",
+        "none",
+    ),
+    Option(
+        "--max-noise-gain",
+        "G",
+        "limit on how much OP swings for a swing of the measurement by 1 %, percent OP per percent"
+        " PV",
+        "none",
+    ),
+    Option(
+        "--max-load-travel",
+        "CHANGE",
+        "limit on how far OP moves after the load step, all its moves added up, OP units",
+        "none",
+    ),
+    Option(
+        "--trade-off",
+        "",
+        "the best settings at limits on the sensitivity from low to high too",
+    ),
     Option("--method", "NAME", "this method only", "every method that applies"),
     Option(
         "--largest-upset",

@@ -104,16 +104,16 @@ class Structure(Loop):
     def from_setpoint(self) -> TransferFunction:
         """PV [%] for the setpoint [%], analogue loop."""
         forward = self.sign * self.gains.from_setpoint() * self.acted_on
-        return _closed(forward, self._back() * self._met())
+        return _closed(forward, self._back() * self.met())
 
     def from_load(self) -> TransferFunction:
         """PV [%] for the upset [its own unit], analogue loop."""
         inside = 1.0 + self._back() * self.correction()
-        return _closed(self.upset * inside, self._back() * self._met())
+        return _closed(self.upset * inside, self._back() * self.met())
 
     def output_from_setpoint(self) -> TransferFunction:
         """OP [%] for the setpoint [%], analogue loop."""
-        return _closed(self.sign * self.gains.from_setpoint(), self._back() * self._met())
+        return _closed(self.sign * self.gains.from_setpoint(), self._back() * self.met())
 
     def output_from_load(self) -> TransferFunction:
         """OP [%] for the upset [its own unit], analogue loop."""
@@ -121,7 +121,7 @@ class Structure(Loop):
         given = -self._back() * alone
         if self.feedforward is not None:
             given = given + self.feedforward.transfer()
-        return _closed(given, self._back() * self._met())
+        return _closed(given, self._back() * self.met())
 
     def sampled(self) -> SampledLoop:
         """The open loop in z; the model is run at the scan, with the computing delay.
@@ -139,7 +139,7 @@ class Structure(Loop):
             alone.gamma,
             alone.readings,
             SampledLoop.of(self.around(self.correction())),
-            SampledLoop.of(self.around(self._met())),
+            SampledLoop.of(self.around(self.met())),
         )
 
     def around(self, plant: TransferFunction) -> Loop:
@@ -151,7 +151,7 @@ class Structure(Loop):
         """Q, from PV to OP."""
         return self.sign * self.gains.from_pv() * self.filter()
 
-    def _met(self) -> TransferFunction:
+    def met(self) -> TransferFunction:
         """G + M0 - M, the plant as the controller meets it."""
         return self.acted_on + self.correction()
 

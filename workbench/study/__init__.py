@@ -48,14 +48,17 @@ from workbench.study.prediction import (
     respond_to_record,
     response_horizon,
 )
-from workbench.study.proposals import Proposal, RelayTest, Wish, propose, take
+from workbench.study.proposals import LIMITS, Proposal, propose, take
 from workbench.study.sheet import Retune, Stage, retune
 from workbench.study.survey import Surveyed, survey
 from workbench.study.tolerance import LIMIT as TOLERANCE_LIMIT
 from workbench.study.tolerance import Axis, Distance, Tolerance, tolerance
+from workbench.study.trade_off import TradeOff, TradeOffPoint, trade_off
+from workbench.study.wish import RelayTest, Wish, edit_wish, show_wish
 
 __all__ = [
     "HANDOVER",
+    "LIMITS",
     "TOLERANCE_LIMIT",
     "Among",
     "Assessment",
@@ -78,6 +81,8 @@ __all__ = [
     "Stage",
     "Surveyed",
     "Tolerance",
+    "TradeOff",
+    "TradeOffPoint",
     "Trend",
     "Wish",
     "accept",
@@ -89,6 +94,7 @@ __all__ = [
     "controller_of",
     "convert",
     "drawn_plants",
+    "edit_wish",
     "evaluate",
     "family_cautions",
     "family_figures",
@@ -104,9 +110,11 @@ __all__ = [
     "respond_to_record",
     "response_horizon",
     "retune",
+    "show_wish",
     "survey",
     "take",
     "tolerance",
+    "trade_off",
     "units_of",
     "with_family",
 ]

@@ -123,6 +123,16 @@ def _ratio(found: Figure, floor: Figure) -> Figure:
     return Figure.of(found.value / floor.value)
 
 
+def _load_travel(trace: Trace, events: Events) -> Figure:
+    """All moves of OP from the load step on, added up [%]."""
+    if not events.load_step:
+        return Figure(None, "there is no load step")
+    if trace.diverged:
+        return Figure(None, "the loop is unstable")
+    before = max(int(np.searchsorted(trace.time, events.load_at)) - 1, 0)
+    return Figure.of(float(np.abs(np.diff(trace.output[before:])).sum()))
+
+
 def _run(case: Case, seed: int, like: Prediction | None) -> tuple[Loop, Events, Instruments, Trace]:
     """The loop, what happens to it, what stands between it and the plant, and its course."""
     loop = loop_of(case)
@@ -187,12 +197,16 @@ def predicted(
     return _or_why(case, lambda: predict(case, seed, like))
 
 
-def predicted_measures(case: Case) -> tuple[Measures | None, str]:
-    """The measures of `predicted` alone, for many settings side by side."""
+def predicted_measures(case: Case) -> tuple[tuple[Measures, Figure] | None, str]:
+    """The measures of `predicted` alone, for many settings side by side.
 
-    def measured() -> Measures:
+    With them all moves of OP from the load step on, added up [OP unit].
+    """
+
+    def measured() -> tuple[Measures, Figure]:
         loop, events, _, trace = _run(case, 0, None)
-        return _in_units(case, measure(trace, events, low=loop.low, high=loop.high))
+        measures = _in_units(case, measure(trace, events, low=loop.low, high=loop.high))
+        return measures, _load_travel(trace, events).times(case.op.range.span / 100.0)
 
     return _or_why(case, measured)
 
@@ -232,36 +246,51 @@ def _inner_trend(case: Case, loop: Loop, inside: Inside) -> InnerTrend:
     )
 
 
+def steps_of(case: Case) -> tuple[float, float]:
+    """Setpoint step [% of PV span] and load step [input of the loop's load path] of the scenario.
+
+    5 % of the spans where it has neither, and no recorded upset, which is taken as it was.
+    """
+    scenario, scale = case.scenario, load_scale(case)
+    if _says_nothing(case):
+        return 5.0, case.op.range.units(5.0) * scale
+    setpoint_step = case.pv.range.percent(scenario.setpoint_step or 0.0)
+    load_step = scenario.load_step
+    if load_step is None:
+        load_step = 1.0 if scenario.load_file else 0.0
+    return setpoint_step, load_step * scale
+
+
+def _says_nothing(case: Case) -> bool:
+    scenario = case.scenario
+    return scenario.setpoint_step is None and scenario.load_step is None and not scenario.load_file
+
+
 def _events(case: Case, loop: Loop, seed: int, like: Prediction | None) -> Events:
     """The scenario made definite, every default filled in."""
     scenario, pv = case.scenario, case.pv
-    setpoint_step, load_step = scenario.setpoint_step, scenario.load_step
+    setpoint_step, load_step = steps_of(case)
     at = scenario.setpoint_at.seconds
     load_at = scenario.load_at.seconds if scenario.load_at else 0.0
     until = scenario.until.seconds if scenario.until else None
     recorded = recorded_upset(case)
-    if scenario.load_file and load_step is None:
-        load_step = 1.0
-    halved = setpoint_step is None and load_step is None
-    if halved:
-        setpoint_step, load_step = pv.range.units(5.0), case.op.range.units(5.0)
-        halved = scenario.load_at is None
+    halved = _says_nothing(case) and scenario.load_at is None
     if until is None:
         horizon = settle_horizon(loop)
         load_at = at + horizon if halved else load_at
         lasting = recorded[-1][0] if recorded else 0.0
         until = _last_move(scenario, at, load_at + lasting, setpoint_step, load_step) + horizon
         if loop.setpoint_rate is not None and setpoint_step:
-            until += abs(pv.range.percent(setpoint_step)) / loop.setpoint_rate
+            until += abs(setpoint_step) / loop.setpoint_rate
         # Comparable as long as neither is squeezed into a corner of the other.
         if like is not None and until / 3.0 <= like.until_s <= until * 3.0:
             until = like.until_s
     if halved:
         load_at = at + (until - at) / 2.0
     return Events(
-        setpoint_step=pv.range.percent(setpoint_step or 0.0),
+        setpoint_step=setpoint_step,
         setpoint_at=at,
-        load_step=(load_step or 0.0) * load_scale(case),
+        load_step=load_step,
         load_at=load_at,
         until=until,
         # Noise is what a scan samples: an analogue controller has no scans to give it to.
@@ -316,7 +345,7 @@ _SWINGS: Final = 8
 
 
 def _last_move(
-    scenario: Scenario, at: float, load_at: float, setpoint: float | None, load: float | None
+    scenario: Scenario, at: float, load_at: float, setpoint: float, load: float
 ) -> float:
     """When the last thing happens that has to settle [s]."""
     time = scenario.load_time.seconds if scenario.load_time else 0.0
