@@ -7,9 +7,11 @@ the record's notes.  What the record says about the plant is answered next door,
 from __future__ import annotations
 
 import hashlib
+import itertools
 import math
 import os
-from dataclasses import dataclass, field
+from collections.abc import Sequence
+from dataclasses import dataclass, field, replace
 from pathlib import Path
 
 import numpy as np
@@ -45,11 +47,22 @@ class Record:
     """What was left out, turned round or looks odd."""
     sha256: str = ""
     """Of the file's bytes, so that a model can name the very record it came from."""
+    breaks: tuple[int, ...] = ()
+    """Rows, rising and above 0, at which a new part begins: a window was left out before it, or
+    another record begins.  What PV and OP did in between is not known, so the plant's state, the
+    level and the drift begin anew; time still rises over it."""
 
     @property
     def interval(self) -> float:
         """The usual time between two rows [s]: the median."""
-        return float(np.median(np.diff(self.time)))
+        steps = np.diff(self.time)
+        return float(np.median(np.delete(steps, [row - 1 for row in self.breaks])))
+
+    @property
+    def parts(self) -> tuple[slice, ...]:
+        """The rows of each part, in order; the whole record where nothing was cut."""
+        edges = (0, *self.breaks, len(self.time))
+        return tuple(slice(a, b) for a, b in itertools.pairwise(edges))
 
     @property
     def duration(self) -> float:
@@ -101,6 +114,40 @@ def read_record(
     raw = read_bytes(Path(path), name)
     wanted = {"time": time, "pv": pv, "op": op, "sp": sp, "mode": mode}
     return _assemble(read_cells(raw, name, wanted), start, end, hashlib.sha256(raw).hexdigest())
+
+
+def join(records: Sequence[Record]) -> Record:
+    """Several records of one plant as one record, a break before each but the first.
+
+    Each record begins a usual interval after the one before it; roles that not all of them have
+    (SP, mode) are left aside.  The name and the SHA-256 are those of the first.
+    """
+    if len(records) == 1:
+        return records[0]
+    starts = [0.0]
+    for record in records[:-1]:
+        starts.append(starts[-1] + record.duration + record.interval)
+    rows = np.cumsum([0, *(len(record.time) for record in records)]).tolist()
+    sps = [record.sp for record in records if record.sp is not None]
+    modes = [record.mode for record in records if record.mode is not None]
+    return replace(
+        records[0],
+        time=np.concatenate([r.time + at for r, at in zip(records, starts, strict=True)]),
+        pv=np.concatenate([r.pv for r in records]),
+        op=np.concatenate([r.op for r in records]),
+        sp=np.concatenate(sps) if len(sps) == len(records) else None,
+        mode=tuple(itertools.chain(*modes)) if len(modes) == len(records) else None,
+        notes=tuple(
+            replace(note, text=f"{record.path}: {note.text}")
+            for record in records
+            for note in record.notes
+        ),
+        breaks=tuple(
+            row + first
+            for record, first in zip(records, rows, strict=False)
+            for row in ((0, *record.breaks) if first else record.breaks)
+        ),
+    )
 
 
 # --- the record ----------------------------------------------------------------------------------
