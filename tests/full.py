@@ -27,6 +27,7 @@ from tests.model.test_robustness import brinks, sampled_verdicts
 from tests.model.test_stability import verdicts
 from tests.model.test_transfer import laws, limits, step_responses
 from tests.plain import sampled_pv
+from tests.records.damage import damaged_records
 from tests.sim.campaigns import (
     analogue_by_mpmath,
     changed_loops,
@@ -446,6 +447,9 @@ CAMPAIGNS: Final[dict[str, Campaign]] = {
     "fits of made records": Campaign(fitted_records, 10, 400),
     "damaged case files": Campaign(damaged_files, 100, 20_000),
     "case files kept": Campaign(kept_files, 20, 2000),
+    "damaged records": Campaign(
+        _judged(damaged_records, 109, 2.0, "seconds of work for one"), 60, 10_000
+    ),
     "command lines at random": Campaign(command_lines, 40, 3000),
 }
 """Name -> campaign, and its sizes."""
