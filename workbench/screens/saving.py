@@ -62,7 +62,9 @@ class SavePage(Page):
 
     about = (
         "Saving writes the changed settings into the case file and adds an entry to its history. "
-        "The reason is required. The file is not touched when someone else saved meanwhile.",
+        "The reason is required; a safety-related loop is marked installed only with the "
+        "reference of a written approval. The file is not touched when someone else saved "
+        "meanwhile.",
     )
     commands = (
         Command("", "Enter", "save", "", "save"),
@@ -80,6 +82,7 @@ class SavePage(Page):
         self._why = Entry("  why: ", css_id="why")
         self._who = Entry("  who: ", _user(), css_id="who")
         self._kind = Entry("  kind:", "installed", KINDS, css_id="kind")
+        self._reference = Entry("  ref: ", css_id="reference")
         self._changes = Changes(work, css_id="changes")
 
     def head(self) -> Line:
@@ -87,8 +90,11 @@ class SavePage(Page):
         return ((" Save ", "title"), (f" {self.work.path}", "quiet"))
 
     def body(self) -> Iterable[Widget]:
-        """Three lines to fill in, and what is saved."""
-        yield from (self._why, self._who, self._kind, self._changes)
+        """The lines to fill in, and what is saved."""
+        yield from (self._why, self._who, self._kind)
+        if self.work.case.loop.safety_related:
+            yield self._reference
+        yield self._changes
 
     def on_mount(self) -> None:
         """The reason is asked for first."""
@@ -109,9 +115,10 @@ class SavePage(Page):
                 self.tell(f"say {entry.id}: the history keeps it", "worse")
                 entry.focus()
                 return
+        reference = self._reference.value.strip()
         now = datetime.now().astimezone().replace(microsecond=0)
         try:
-            self.work.save(who=who, why=why, kind=kind, now=now)
+            self.work.save(who=who, why=why, kind=kind, now=now, reference=reference)
         except (WorkbenchError, OSError) as fault:
             self._changes.fault = str(fault)
             self._changes.redraw()

@@ -159,9 +159,11 @@ class Work:
 
     # -- saving ------------------------------------------------------------------------------------
 
-    def save(self, *, who: str, why: str, kind: str, now: datetime) -> None:
+    def save(self, *, who: str, why: str, kind: str, now: datetime, reference: str = "") -> None:
         """Write the case with a history entry.  Raises `InputError`; the work is kept then."""
-        recorded = study.record_change(self.case, who=who, why=why, kind=kind, now=now)
+        recorded = study.record_change(
+            self.case, who=who, why=why, kind=kind, now=now, reference=reference
+        )
         self.file = save_case(self.file, recorded)
         self._set(self.file.case)
         if self.evaluation is not None:

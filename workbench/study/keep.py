@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import hashlib
 import os
+import re
 from collections.abc import Callable
 from dataclasses import dataclass, fields, replace
 from datetime import datetime
@@ -87,8 +88,15 @@ def accept(case: Case, fit: Fit, shape: str | None = None, folder: Path | None =
         process=_shape_as_typed(candidate.plant),
         from_=record.name if folder is None else os.path.relpath(record, folder),
         from_sha256=fit.record.sha256,
+        dated=_day(fit.record.start_stamp),
     )
     return replace(case, plant=plant)
+
+
+def _day(stamp: str | None) -> str:
+    """The day of a stamp; nothing where the record has no calendar."""
+    found = re.match(r"\d{4}-\d\d-\d\d", stamp or "")
+    return found[0] if found else ""
 
 
 def _shape_as_typed(process: Shape) -> Shape:
@@ -113,11 +121,18 @@ _SAME_FIGURE: Final = 0.005
 
 
 def record_change(
-    case: Case, *, who: str, why: str, now: datetime, kind: str = "installed"
+    case: Case,
+    *,
+    who: str,
+    why: str,
+    now: datetime,
+    kind: str = "installed",
+    reference: str = "",
 ) -> Case:
     """The case with a history entry for its present settings, and the figures predicted for them.
 
-    Raises `InputError` where the loop has no controller, or who or why is blank.
+    Raises `InputError` where the loop has no controller, who or why is blank, or the settings of a
+    safety-related loop are installed without a written reference.
     """
     faults = [
         Problem("is blank", mend, key)
@@ -127,6 +142,10 @@ def record_change(
         )
         if not value.strip()
     ]
+    if kind == "installed" and case.loop.safety_related and not reference.strip():
+        what = "is blank, and the loop is safety-related"
+        mend = "name the written approval, or save the settings as proposed"
+        faults.append(Problem(what, mend, "reference"))
     if faults:
         raise InputError(faults)
     figures = _figures_now(case)
@@ -136,6 +155,7 @@ def record_change(
         kind=kind,
         why=why.strip(),
         controller=controller_of(case),
+        reference=reference.strip(),
         program=__version__,
         **{name: rounded(value, 6) for name, value in figures.items()},
     )
@@ -170,9 +190,13 @@ def check_case(path: str | Path) -> FileCheck:
         if not Path(path).is_file():
             raise
         return FileCheck(str(path), False, fault.problems)
-    faults = [*_record_faults(file.case, Path(path)), *_figure_faults(file.case)]
-    placed = tuple(replace(fault, path=str(path)) for fault in faults)
+    placed = tuple(replace(fault, path=str(path)) for fault in faults_of(file.case, Path(path)))
     return FileCheck(str(path), not placed, placed)
+
+
+def faults_of(case: Case, path: Path) -> list[Problem]:
+    """What of a sound case in the file at `path` no longer holds: its record, its figures."""
+    return [*_record_faults(case, path), *_figure_faults(case)]
 
 
 def _record_faults(case: Case, path: Path) -> list[Problem]:
