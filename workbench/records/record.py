@@ -12,7 +12,7 @@ import os
 import re
 from collections.abc import Callable, Sequence
 from dataclasses import dataclass, field, replace
-from typing import Final, Literal
+from typing import Final, Literal, TypedDict
 
 import numpy as np
 from numpy.typing import NDArray
@@ -78,6 +78,24 @@ class Record:
     def duration(self) -> float:
         """From the first row to the last [s]."""
         return float(self.time[-1])
+
+
+class Reading(TypedDict, total=False):
+    """How a record is read: the options of `read_record`, to be passed on."""
+
+    time: str | None
+    pv: str | None
+    op: str | None
+    sp: str | None
+    mode: str | None
+    quality: str | None
+    dates: str | None
+    decimal: str | None
+    start: str | float | None
+    end: str | float | None
+    leave_out: Sequence[tuple[str | float, str | float]]
+    whole_lines: bool
+    progress: Progress | None
 
 
 def read_record(  # noqa: PLR0913 - one argument for each option of the command

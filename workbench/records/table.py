@@ -199,8 +199,8 @@ class Identity:
     sha256: str
     """Of the bytes read."""
     encoding: str
-    unfinished: bool = False
-    """Whether a last line without an end was left aside."""
+    lines: int
+    """Line ends among them."""
 
 
 def _opened(path: Path, name: str) -> BinaryIO:
@@ -225,12 +225,13 @@ def _unreadable(fault: Exception, name: str) -> RecordError:
 def _identify(file: BinaryIO, name: str, whole_lines: bool) -> Identity:
     """How many bytes are to be read, and what they are."""
     size, digest, whole = 0, hashlib.sha256(), (0, hashlib.sha256())
-    zeros = False
+    zeros, lines = False, 0
     first = b""
     try:
         while block := file.read(2**20):
             first = first or block
             zeros = zeros or b"\0" in block
+            lines += block.count(b"\n")
             end = _last_end(block, first[:2])
             if end:
                 head = digest.copy()
@@ -247,8 +248,25 @@ def _identify(file: BinaryIO, name: str, whole_lines: bool) -> Identity:
     if zeros and encoding != "utf-16":
         raise refused(name, None, "is not a text file", "export the record as CSV text")
     if whole_lines:
-        return Identity(whole[0], whole[1].hexdigest(), encoding, whole[0] < size)
-    return Identity(size, digest.hexdigest(), encoding)
+        return Identity(whole[0], whole[1].hexdigest(), encoding, lines)
+    return Identity(size, digest.hexdigest(), encoding, lines)
+
+
+def identify(path: str | os.PathLike[str], *, whole_lines: bool = False) -> Identity:
+    """What would be read of a file as it stands now.  Raises `RecordError`."""
+    name = harmless(str(path))
+    with _opened(Path(path), name) as file:
+        return _identify(file, name, whole_lines)
+
+
+def begins_alike(path: str | os.PathLike[str], seen: Identity) -> bool:
+    """Whether a file still begins with the bytes that were read before.  Raises `RecordError`."""
+    name = harmless(str(path))
+    with _opened(Path(path), name) as file:
+        try:
+            return hashlib.sha256(file.read(seen.size)).hexdigest() == seen.sha256
+        except OSError as fault:
+            raise _unreadable(fault, name) from None
 
 
 def _last_end(block: bytes, mark: bytes) -> int:

@@ -4,6 +4,7 @@ Everything that goes in or comes out is in the loop's own engineering units; per
 between this room and the rooms below it.
 """
 
+from workbench.records.coach import CERTAINTY, Advice, advise
 from workbench.study.assessment import (
     Assessment,
     LoopFigures,
@@ -14,12 +15,12 @@ from workbench.study.assessment import (
 )
 from workbench.study.conversion import Conversion, convert
 from workbench.study.evaluation import HANDOVER, Evaluation, cautions, evaluate
+from workbench.study.fitting import FITTED, Live, LiveTest, fit_record
 from workbench.study.keep import (
     FileCheck,
     accept,
     check_case,
     chosen_candidate,
-    fit_record,
     record_change,
 )
 from workbench.study.loop import action_of, controller_of, loop_of, plant_of, units_of
@@ -38,12 +39,17 @@ from workbench.study.sheet import Retune, Stage, retune
 from workbench.study.survey import Surveyed, survey
 
 __all__ = [
+    "CERTAINTY",
+    "FITTED",
     "HANDOVER",
+    "Advice",
     "Assessment",
     "Conversion",
     "Evaluation",
     "FileCheck",
     "InnerTrend",
+    "Live",
+    "LiveTest",
     "LoopFigures",
     "PlantFigures",
     "Prediction",
@@ -58,6 +64,7 @@ __all__ = [
     "Wish",
     "accept",
     "action_of",
+    "advise",
     "assess",
     "cautions",
     "check_case",

@@ -1,0 +1,94 @@
+"""From records to fitted plants: finished ones, several at once, one still being made."""
+
+from __future__ import annotations
+
+from collections.abc import Callable, Sequence
+from dataclasses import dataclass, replace
+from pathlib import Path
+from typing import Final, Unpack
+
+from workbench.records.coach import CERTAINTY, Advice, advise
+from workbench.records.following import Following
+from workbench.records.identify import Fit
+from workbench.records.identify import fit as fit_plants
+from workbench.records.record import Reading, join, read_record
+from workbench.units import Range
+
+Stop = Callable[[], bool] | None
+
+FITTED: Final = ("first-order", "integrating")
+"""Shapes that are fitted where none is named."""
+
+
+def fit_record(
+    path: str | Path | Sequence[str | Path],
+    *,
+    shapes: tuple[str, ...] = FITTED,
+    noise_model: str = "auto",
+    drift: bool = True,
+    should_stop: Stop = None,
+    **reading: Unpack[Reading],
+) -> Fit:
+    """Fit plant models to a test record, or to several records of one plant at once.
+
+    Raises `RecordError` or `CannotSolve`.
+    """
+    paths = (path,) if isinstance(path, str | Path) else tuple(path)
+    record = join([read_record(one, **reading) for one in paths])
+    return fit_plants(
+        record, shapes=shapes, noise_model=noise_model, drift=drift, should_stop=should_stop
+    )
+
+
+@dataclass(frozen=True)
+class Live:
+    """Where a test stands that is still being made."""
+
+    fit: Fit | None
+    """`None` while the record has too few rows."""
+    advice: Advice | None
+    said: str = ""
+    """That the file was replaced, or what is missing yet."""
+
+
+class LiveTest:
+    """A bump test that is followed while it is made."""
+
+    def __init__(
+        self,
+        path: str | Path,
+        *,
+        shapes: tuple[str, ...] = FITTED,
+        noise_model: str = "auto",
+        drift: bool = True,
+        certainty: float = CERTAINTY,
+        ranges: tuple[Range, Range] | None = None,
+        **reading: Unpack[Reading],
+    ) -> None:
+        """`certainty` is the wanted standard error [%], `ranges` those of PV and OP."""
+        self._following = Following(path, **reading)
+        self._shapes, self._noise_model, self._drift = shapes, noise_model, drift
+        self._certainty, self._ranges = certainty, ranges or (None, None)
+        self.last = Live(None, None)
+
+    def refresh(self, *, finished: bool = False, should_stop: Stop = None) -> Live | None:
+        """Where the test stands now; `None` where nothing is new.
+
+        With `finished`, a last line without an end counts.  Raises `RecordError` or `CannotSolve`.
+        """
+        look = self._following.look(finished=finished)
+        if not look.grew:
+            return None
+        self.last = Live(None, None, look.said)
+        if look.record is not None:
+            fit = fit_plants(
+                look.record,
+                shapes=self._shapes,
+                noise_model=self._noise_model,
+                drift=self._drift,
+                should_stop=should_stop,
+            )
+            pv, op = self._ranges
+            advice = advise(fit, certainty=self._certainty, pv_range=pv, op_range=op)
+            self.last = replace(self.last, fit=fit, advice=advice)
+        return self.last
