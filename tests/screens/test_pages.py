@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import json
+from collections.abc import Sequence
 from pathlib import Path
 
 import pytest
@@ -20,7 +21,6 @@ from tests.screens.conftest import (
 from workbench import study
 from workbench.case.files import read_case
 from workbench.errors import problem
-from workbench.records.identify import Fit
 from workbench.screens import drafts
 from workbench.screens.help import HelpPage
 from workbench.screens.main import MainPage
@@ -153,15 +153,15 @@ def test_a_record_that_cannot_be_read_is_explained(work: Work) -> None:
 def test_a_stopped_fit_is_not_shown_when_it_comes_in_late(
     work: Work, monkeypatch: pytest.MonkeyPatch
 ) -> None:
-    real, kept = study.fit_record, []
+    real, kept = study.fit_sources, []
 
-    def remembered(path: Path, **options: object) -> Fit:
-        kept.append(real(path))
-        return kept[-1]
+    def remembered(sources: Sequence[study.Source], **options: object) -> object:
+        kept.append(real(sources)[0])
+        return kept[-1], ()
 
     async def story() -> None:
         async with running(work) as pilot:
-            monkeypatch.setattr(study, "fit_record", remembered)
+            monkeypatch.setattr(study, "fit_sources", remembered)
             await press(pilot, "r", "enter")
             page = page_of(pilot, RecordPage)
             page.action_list()
@@ -515,8 +515,9 @@ def test_no_command_hangs_on_a_key_that_may_never_arrive(kind: type[Page]) -> No
 
 def test_the_key_line_fits_80_columns_on_every_page() -> None:
     for kind in pages():
-        shown = [f"{command.shown} {command.words}" for command in kind.commands if command.words]
-        assert len(" ".join(shown)) <= 80, kind
+        for commands in kind.key_lines or (kind.commands,):
+            shown = [f"{command.shown} {command.words}" for command in commands if command.words]
+            assert len(" ".join(shown)) <= 80, kind
 
 
 def test_help_explains_the_focused_panel_and_lists_every_key(work: Work) -> None:

@@ -53,6 +53,9 @@ class Record:
     """Role (time, pv, op, sp, mode) -> heading of the column it was read from."""
     start_stamp: str | None = None
     """ISO 8601 stamp of the first row; `None` where the file gives seconds."""
+    start_s: float = 0.0
+    """The first row as `start` of `read_record` counts seconds, so that a window seen in this
+    record can be asked for."""
     notes: tuple[Note, ...] = ()
     """What was left out, turned round or looks odd."""
     sha256: str = ""
@@ -179,6 +182,12 @@ class Window:
     leave_out: tuple[tuple[str | float, str | float], ...] = ()
 
 
+def begin(records: Sequence[Record]) -> list[float]:
+    """Where each of several records begins in the joined one [s]."""
+    lengths = [record.duration + record.interval for record in records[:-1]]
+    return [0.0, *itertools.accumulate(lengths)]
+
+
 def join(records: Sequence[Record]) -> Record:
     """Several records of one plant as one record, a break before each but the first.
 
@@ -187,9 +196,7 @@ def join(records: Sequence[Record]) -> Record:
     """
     if len(records) == 1:
         return records[0]
-    starts = [0.0]
-    for record in records[:-1]:
-        starts.append(starts[-1] + record.duration + record.interval)
+    starts = begin(records)
     rows = np.cumsum([0, *(len(record.time) for record in records)]).tolist()
     sps = [record.sp for record in records if record.sp is not None]
     modes = [record.mode for record in records if record.mode is not None]
@@ -342,6 +349,7 @@ class _Assembly:
         sp, mode = self._setpoint(pv, window), self._mode(pv, window)
         kept = self._kept(pv, window)
         chosen = np.flatnonzero(kept)
+        first = float(self.clock.seconds[pv.rows[chosen[0]]])
         table = self.table
         return Record(
             path=table.path,
@@ -351,7 +359,8 @@ class _Assembly:
             sp=None if sp is None else sp[kept],
             mode=None if mode is None else tuple(itertools.compress(mode, kept)),
             columns={role: harmless(table.heading(role)) for role in table.layout.columns},
-            start_stamp=self.clock.stamp(float(self.clock.seconds[pv.rows[kept][0]])),
+            start_stamp=self.clock.stamp(first),
+            start_s=first - self.clock.moment("0", "--from"),
             notes=tuple(self.notes),
             sha256=sha256,
             breaks=tuple((np.flatnonzero(np.diff(chosen) > 1) + 1).tolist()),

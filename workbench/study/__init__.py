@@ -4,6 +4,7 @@ Everything that goes in or comes out is in the loop's own engineering units; per
 between this room and the rooms below it.
 """
 
+from workbench.records.bumps import Bump, bumps
 from workbench.records.coach import CERTAINTY, Advice, advise
 from workbench.study.assessment import (
     Assessment,
@@ -15,7 +16,15 @@ from workbench.study.assessment import (
 )
 from workbench.study.conversion import Conversion, convert
 from workbench.study.evaluation import HANDOVER, Evaluation, cautions, evaluate
-from workbench.study.fitting import FITTED, Live, LiveTest, fit_record
+from workbench.study.fitting import (
+    FITTED,
+    Live,
+    LiveTest,
+    Source,
+    fit_record,
+    fit_sources,
+    narrowed,
+)
 from workbench.study.keep import (
     FileCheck,
     accept,
@@ -44,6 +53,7 @@ __all__ = [
     "HANDOVER",
     "Advice",
     "Assessment",
+    "Bump",
     "Conversion",
     "Evaluation",
     "FileCheck",
@@ -58,6 +68,7 @@ __all__ = [
     "RelayTest",
     "Response",
     "Retune",
+    "Source",
     "Stage",
     "Surveyed",
     "Trend",
@@ -66,6 +77,7 @@ __all__ = [
     "action_of",
     "advise",
     "assess",
+    "bumps",
     "cautions",
     "check_case",
     "chosen_candidate",
@@ -73,7 +85,9 @@ __all__ = [
     "convert",
     "evaluate",
     "fit_record",
+    "fit_sources",
     "loop_of",
+    "narrowed",
     "plant_of",
     "predict",
     "propose",

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Callable, Sequence
-from dataclasses import dataclass, replace
+from dataclasses import dataclass, field, replace
 from pathlib import Path
 from typing import Final, Unpack
 
@@ -11,7 +11,7 @@ from workbench.records.coach import CERTAINTY, Advice, advise
 from workbench.records.following import Following
 from workbench.records.identify import Fit
 from workbench.records.identify import fit as fit_plants
-from workbench.records.record import Reading, join, read_record
+from workbench.records.record import Reading, Record, begin, join, read_record
 from workbench.units import Range
 
 Stop = Callable[[], bool] | None
@@ -34,10 +34,68 @@ def fit_record(
     Raises `RecordError` or `CannotSolve`.
     """
     paths = (path,) if isinstance(path, str | Path) else tuple(path)
-    record = join([read_record(one, **reading) for one in paths])
+    records = [read_record(one, **reading) for one in paths]
     return fit_plants(
-        record, shapes=shapes, noise_model=noise_model, drift=drift, should_stop=should_stop
+        join(records), shapes=shapes, noise_model=noise_model, drift=drift, should_stop=should_stop
     )
+
+
+@dataclass(frozen=True)
+class Source:
+    """A record file, and how it is read."""
+
+    path: Path
+    reading: Reading = field(default_factory=Reading)
+
+
+def fit_sources(
+    sources: Sequence[Source], *, should_stop: Stop = None
+) -> tuple[Fit, tuple[Record, ...]]:
+    """One fit over several records, each read in its own way, and these records.
+
+    Raises `RecordQuestion`, `RecordError` or `CannotSolve`.
+    """
+    records = tuple(read_record(source.path, **source.reading) for source in sources)
+    return fit_plants(join(records), shapes=FITTED, should_stop=should_stop), records
+
+
+def narrowed(
+    sources: Sequence[Source],
+    records: Sequence[Record],
+    window: tuple[float, float],
+    *,
+    leave_out: bool,
+) -> tuple[Source, ...]:
+    """The records with a window of their joined time [s] as the one used, or as one left out.
+
+    A record of which nothing would be left is dropped; none are left where all would be.
+    """
+    kept = []
+    for source, record, at in zip(sources, records, begin(records), strict=True):
+        low, high = max(window[0] - at, 0.0), min(window[1] - at, record.duration)
+        covered = low <= 0.0 and high >= record.duration
+        if low >= high:
+            if leave_out:
+                kept.append(source)
+            continue
+        if covered:
+            if not leave_out:
+                kept.append(source)
+            continue
+        first, last = record.start_s + low, record.start_s + high
+        reading: Reading = {**source.reading}
+        if leave_out:
+            reading["leave_out"] = (*source.reading.get("leave_out", ()), (first, last))
+        else:
+            reading["start"], reading["end"] = first, last
+            # A window that was left out beyond these ends has no row any more.
+            reading["leave_out"] = [
+                gap
+                for gap in source.reading.get("leave_out", ())
+                if float(gap[0]) <= last and float(gap[1]) >= first
+            ]
+        kept.append(Source(source.path, reading))
+    return tuple(kept)
 
 
 @dataclass(frozen=True)
