@@ -116,7 +116,7 @@ def _said_early(record: Record) -> str:
 
 def _said(fit: Fit, worst: float, wanted: float, hold: Figure, spoilt: list[str]) -> str:
     if spoilt:
-        return "Repeat the test: " + spoilt[0][0].lower() + spoilt[0][1:]
+        return f"Repeat the test. {spoilt[0]}"
     sure = f"standard errors up to {text(worst, '%', 2)}, asked for {text(wanted, '%', 2)}"
     if fit.chosen is None:
         return f"Hold on: {fit.reason}"
@@ -268,7 +268,8 @@ def _limits(record: Record, pv_range: Range | None, op_range: Range | None) -> l
             found.append(f"{name} is at the end of its range from {time_text(where, 3)} on.")
     extreme = (record.pv == record.pv.max()) | (record.pv == record.pv.min())
     standing = _longest_run(extreme & np.append(False, np.diff(record.pv) == 0))
-    moving = float(np.mean(np.diff(record.pv) != 0))
+    elsewhere = np.diff(record.pv)[~extreme[1:]]
+    moving = float(np.mean(elsewhere != 0)) if len(elsewhere) else 0.0
     if standing >= _STANDSTILL and moving > 0.5 and not any(w.startswith("PV") for w in found):
         found.append(
             f"PV stands still at an extreme value for {standing} rows: it is at a limit, or frozen."

@@ -407,7 +407,7 @@ def _heading(
 ) -> tuple[int, Layout]:
     """The first row in which every needed column is found, and where the columns stand."""
     faults: list[tuple[int, int, RecordError]] = []
-    # How full each row without the needed headings is, fullest lowest, with what it lacks.
+    # How full each row of words is, fullest lowest, with what it lacks; a row of values is empty.
     for at, row in enumerate(rows[:_PREAMBLE]):
         cells = [cell.strip() for cell in row]
         if len(cells) > MOST_COLUMNS:
@@ -422,7 +422,8 @@ def _heading(
         try:
             return at, _layout(cells, wanted, name, lines[at])
         except RecordError as fault:
-            faults.append((-sum(map(bool, cells)), at, fault))
+            values = any(_PLAIN_NUMBER.fullmatch(cell) for cell in cells)
+            faults.append((0 if values and at else -sum(map(bool, cells)), at, fault))
     if not any(share for share, _, _ in faults):
         raise refused(name, None, "is empty", "give a heading row and rows of values below it")
     # The first row is the heading row, unless words about the export stand above a fuller one.

@@ -492,9 +492,9 @@ class RecordPage(Page):
     def _ask(self, question: RecordQuestion) -> None:
         """Both readings, and the key of each."""
         self._question = question
-        first, second = (reading for _, reading in question.readings)
-        what = question.problems[0]
-        self.tell(f"{what.where}: {what.what}. Press 1 for {first}, 2 for {second}", "caution")
+        fault = question.problems[0]
+        keys = "press 1 for the first, 2 for the second"
+        self.tell(f"{fault.where}: {fault.what}: {keys}", "caution")
 
     def on_worker_state_changed(self, event: Worker.StateChanged) -> None:
         """A fault of the program itself must not take the work with it."""
