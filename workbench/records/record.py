@@ -569,8 +569,15 @@ def _gaps(seconds: Floats, op: Floats, shown: Callable[[float], str]) -> list[No
     steps = np.diff(seconds)
     usual = float(np.median(steps))
     gaps = steps > 2.5 * usual
+    notes = []
+    single = (steps > 1.5 * usual) & ~gaps
+    missing = int(np.count_nonzero(single))
+    if 0 < missing < 0.05 * len(steps):
+        where = shown(float(seconds[int(np.argmax(single))]))
+        what = "1 row is" if missing == 1 else f"{missing} rows are"
+        notes.append(Note("info", f"{what} missing singly (first after {where})."))
     if not gaps.any():
-        return []
+        return notes
     longest = int(np.argmax(steps))
     count = int(np.count_nonzero(gaps))
     words = (
@@ -581,7 +588,7 @@ def _gaps(seconds: Floats, op: Floats, shown: Callable[[float], str]) -> list[No
     hour = gaps & (np.abs(steps - 3600.0) <= 1.5 * usual)
     if hour.any() and usual < 1200.0:
         words += " One is an hour long, as where clocks are put forward: if so, export in UTC."
-    notes = [Note("caution" if steps[longest] > 20 * usual else "info", words)]
+    notes.append(Note("caution" if steps[longest] > 20 * usual else "info", words))
     unseen = gaps & (np.diff(op) != 0)
     if unseen.any() and np.count_nonzero(np.diff(op)) < len(op) // 4:
         at = int(np.argmax(unseen))

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Mapping
+from dataclasses import asdict
 from typing import TYPE_CHECKING, Final
 
 from workbench.units import Amount, harmless, text, time_text
@@ -15,6 +16,8 @@ from workbench.report.words import Json, Rows, note_lines, put, two_columns, wra
 
 def fit_data(fit: Fit, advice: Advice | None = None) -> Json:
     """The fit as `fit --json` prints it, with what to do next where a certainty is asked for."""
+    from workbench.study import bumps
+
     record = fit.record
     return {
         "record": harmless(record.path),
@@ -25,6 +28,7 @@ def fit_data(fit: Fit, advice: Advice | None = None) -> Json:
         "chosen": fit.chosen,
         **({} if fit.chosen else {"chosen_reason": fit.reason}),
         "warnings": [note.text for note in (*record.notes, *fit.warnings)],
+        "bumps": [asdict(bump) for bump in bumps(record)],
         **({} if advice is None else {"advice": _advice_data(advice)}),
         "units": {"pv": "PV unit of the record", "op": "OP unit of the record"},
     }
@@ -129,13 +133,28 @@ _ERRORS: Final = {
 """Key of `standard_errors` -> words, unit, in the units of the record."""
 
 
+_MOST_BUMPS: Final = 10
+"""Bumps that the text tells of; the others are in the JSON."""
+
+
 def fit_text(fit: Fit, width: int, advice: Advice | None = None) -> str:
     """The fit for people, with what to do next where a certainty is asked for."""
+    from workbench.study import bumps
+
     record = fit.record
     columns = ", ".join(f"{role} from {name!r}" for role, name in record.columns.items())
     lines = [
         wrapped(f"{record.path}: {len(record.time)} rows; {columns}", width, hang="  "),
         wrapped("PV and OP are in the units of the record.", width),
+    ]
+    lines += [
+        wrapped(
+            f"At {time_text(b.at_s)} OP {text(b.op_before)} to {text(b.op_after)}, held for "
+            f"{time_text(b.hold_s, 3)}: PV {text(b.pv_before)} to {text(b.pv_after)}.",
+            width,
+            hang="  ",
+        )
+        for b in bumps(record)[:_MOST_BUMPS]
     ]
     for candidate in fit.candidates:
         mark = " (chosen)" if candidate.shape == fit.chosen else ""
