@@ -18,7 +18,7 @@ from typing import TYPE_CHECKING, Any, Final
 import numpy as np
 from numpy.typing import NDArray
 
-from workbench.units import TIME_UNITS
+from workbench.units import TIME_UNITS, harmless
 
 if TYPE_CHECKING:
     from workbench.case.case import Case
@@ -280,7 +280,10 @@ class _Sheet:
         return Picture(self.characters, self.styles)
 
     def text(self, row: int, column: int, words: str, style: str = "label") -> None:
-        words = words[: max(0, self.width - column)]
+        # A unit comes from a file, and a file may say anything.
+        words = harmless(words)[: max(0, self.width - column)]
+        if self.ascii_only:
+            words = words.encode("ascii", "replace").decode("ascii")
         if not (0 <= row < self.height) or not words:
             return
         end = column + len(words)

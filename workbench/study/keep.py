@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import contextlib
 import hashlib
 import os
 import re
@@ -22,10 +23,11 @@ from workbench.errors import (
 from workbench.model.pid import Controller
 from workbench.model.plant import Formula, Shape
 from workbench.records.identify import Candidate, Fit
+from workbench.records.table import LARGEST_FILE
 from workbench.study.assessment import assess
 from workbench.study.loop import controller_of, no_time_domain, plant_of
 from workbench.study.prediction import predict
-from workbench.units import Amount, rounded, text
+from workbench.units import Amount, harmless, rounded, text
 
 
 @dataclass(frozen=True)
@@ -180,15 +182,16 @@ def _record_faults(case: Case, path: Path) -> list[Problem]:
         return []
     record = path.parent / case.plant.from_
     if not record.is_file():
+        moved = _named_otherwise(path.parent, case.plant.from_sha256)
+        mend = "put it back, or accept a fit of another record"
         return [
             Problem(
                 f"the record {case.plant.from_!r} is not beside the case",
-                "put it back, or accept a fit of another record",
+                f"its bytes are in {moved!r}: set plant.from to that" if moved else mend,
                 "plant.from",
             )
         ]
-    digest = hashlib.sha256(record.read_bytes()).hexdigest()
-    if case.plant.from_sha256 and digest != case.plant.from_sha256:
+    if case.plant.from_sha256 and _sha256(record) != case.plant.from_sha256:
         return [
             Problem(
                 f"the record {case.plant.from_!r} is not the one the plant was fitted to",
@@ -197,6 +200,24 @@ def _record_faults(case: Case, path: Path) -> list[Problem]:
             )
         ]
     return []
+
+
+def _sha256(path: Path) -> str:
+    with path.open("rb") as file:
+        return hashlib.file_digest(file, "sha256").hexdigest()
+
+
+def _named_otherwise(folder: Path, sha256: str) -> str:
+    """The record of a folder that has these bytes under another name, or nothing."""
+    for path in sorted(folder.glob("*.csv"))[:_MOST_SEARCHED] if sha256 else ():
+        with contextlib.suppress(OSError):
+            if path.is_file() and path.stat().st_size <= LARGEST_FILE and _sha256(path) == sha256:
+                return harmless(path.name)
+    return ""
+
+
+_MOST_SEARCHED: Final = 200
+"""Records of a folder that are looked through for one that was renamed."""
 
 
 def _figure_faults(case: Case) -> list[Problem]:
