@@ -56,8 +56,12 @@ DATES: Final = ("day-first", "month-first", "serial", "seconds")
 
 _SERIAL_ORIGIN: Final = datetime(1899, 12, 30)
 """Day 0 of spreadsheets."""
-_LAST_DAY: Final = 2_950_000
-"""A day number beyond any calendar: the year 9976."""
+_YEARS: Final = (1900, 2200)
+"""First and last year of a stamp: room enough on both sides for hours to be added."""
+_NO_DATE: Final = float(datetime(1970, 1, 1).toordinal())
+"""The day on which times without a date are put; it is never shown."""
+_LAST_DAY: Final = 110_000
+"""A day number too large to be a date: the year 2201."""
 _DAY: Final = 86_400.0
 
 
@@ -372,7 +376,7 @@ class _Stamps:
 
     def _ordinal(self, word: str) -> float:
         if not word:
-            return 1.0
+            return _NO_DATE
         day = _date(word, self.day_first)
         if day is None:
             self._refuse(self.first_row[self.days[word]])
@@ -412,9 +416,12 @@ def _date(word: str, day_first: bool | None) -> datetime | None:
         day, month = (first, second) if day_first or first == second else (second, first)
         if day_first is None and first != second:
             return None
+    # Two digits of a year are one of this century.
+    year = year + 2000 if year < 100 else year
+    if not _YEARS[0] <= year <= _YEARS[1]:
+        return None
     try:
-        # Two digits of a year are one of this century.
-        return datetime(year + 2000 if year < 100 else year, month, day)
+        return datetime(year, month, day)
     except ValueError:
         return None
 
