@@ -16,7 +16,7 @@ if TYPE_CHECKING:
 
 
 class _Asked(TypedDict):
-    shapes: tuple[str, ...]
+    shapes: tuple[str, ...] | None
     noise_model: str
     drift: bool
 
@@ -34,11 +34,13 @@ def fit(given: Given) -> Answer:
         if name in given:
             raise problem("is for a record that is followed", "add --follow", key=name)
     wanted = given.number("--certainty", above=0.0)
-    with progress("reading and fitting") as tell:
-        reading = _reading(given)
+    reading, asked = _reading(given), _asked(given)
+    with progress("reading, percent", 100) as tell:
         if len(given.operands) == 1:
             reading["progress"] = lambda share: tell(int(100 * share))
-        fit = study.fit_record(given.operands, **_asked(given), **reading)
+        record = study.read_records(given.operands, **reading)
+    with progress("fitting"):
+        fit = study.fit_plants(record, **asked)
     advice = None if wanted is None else study.advise(fit, certainty=wanted)
     met = fit.chosen is not None and (advice is None or advice.reached)
     return Answer(
@@ -83,11 +85,9 @@ def _follow(given: Given) -> Answer:
 
 def _asked(given: Given) -> _Asked:
     """What is fitted."""
-    from workbench import study
-
     shape = given.word("--shape")
     return {
-        "shapes": study.FITTED if shape is None else (shape,),
+        "shapes": None if shape is None else (shape,),
         "noise_model": given.choice("--noise-model", NOISE_MODELS) or "auto",
         "drift": "--no-drift" not in given,
     }

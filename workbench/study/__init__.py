@@ -17,13 +17,14 @@ from workbench.study.assessment import (
 from workbench.study.conversion import Conversion, convert
 from workbench.study.evaluation import HANDOVER, Evaluation, cautions, evaluate
 from workbench.study.fitting import (
-    FITTED,
     Live,
     LiveTest,
     Source,
+    fit_plants,
     fit_record,
     fit_sources,
     narrowed,
+    read_records,
 )
 from workbench.study.keep import (
     FileCheck,
@@ -49,7 +50,6 @@ from workbench.study.survey import Surveyed, survey
 
 __all__ = [
     "CERTAINTY",
-    "FITTED",
     "HANDOVER",
     "Advice",
     "Assessment",
@@ -84,6 +84,7 @@ __all__ = [
     "controller_of",
     "convert",
     "evaluate",
+    "fit_plants",
     "fit_record",
     "fit_sources",
     "loop_of",
@@ -91,6 +92,7 @@ __all__ = [
     "plant_of",
     "predict",
     "propose",
+    "read_records",
     "record_change",
     "reductions",
     "respond",

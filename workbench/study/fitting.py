@@ -9,8 +9,7 @@ from typing import Final, Unpack
 
 from workbench.records.coach import CERTAINTY, Advice, advise
 from workbench.records.following import Following
-from workbench.records.identify import Fit
-from workbench.records.identify import fit as fit_plants
+from workbench.records.identify import Fit, fit
 from workbench.records.record import Reading, Record, begin, join, read_record
 from workbench.units import Range
 
@@ -20,23 +19,45 @@ FITTED: Final = ("first-order", "integrating")
 """Shapes that are fitted where none is named."""
 
 
-def fit_record(
-    path: str | Path | Sequence[str | Path],
+def read_records(paths: Sequence[str | Path], **reading: Unpack[Reading]) -> Record:
+    """One record, or several of one plant joined, each read in the same way.
+
+    Raises `RecordQuestion` or `RecordError`.
+    """
+    return join([read_record(path, **reading) for path in paths])
+
+
+def fit_plants(
+    record: Record,
     *,
-    shapes: tuple[str, ...] = FITTED,
+    shapes: tuple[str, ...] | None = None,
+    noise_model: str = "auto",
+    drift: bool = True,
+    should_stop: Stop = None,
+) -> Fit:
+    """Plants fitted to a record, the usual shapes where none is named.  Raises `CannotSolve`."""
+    return fit(
+        record,
+        shapes=shapes or FITTED,
+        noise_model=noise_model,
+        drift=drift,
+        should_stop=should_stop,
+    )
+
+
+def fit_record(
+    path: str | Path,
+    *,
+    shapes: tuple[str, ...] | None = None,
     noise_model: str = "auto",
     drift: bool = True,
     should_stop: Stop = None,
     **reading: Unpack[Reading],
 ) -> Fit:
-    """Fit plant models to a test record, or to several records of one plant at once.
-
-    Raises `RecordError` or `CannotSolve`.
-    """
-    paths = (path,) if isinstance(path, str | Path) else tuple(path)
-    records = [read_record(one, **reading) for one in paths]
+    """Fit plant models to a test record.  Raises `RecordError` or `CannotSolve`."""
+    record = read_record(path, **reading)
     return fit_plants(
-        join(records), shapes=shapes, noise_model=noise_model, drift=drift, should_stop=should_stop
+        record, shapes=shapes, noise_model=noise_model, drift=drift, should_stop=should_stop
     )
 
 
@@ -56,7 +77,7 @@ def fit_sources(
     Raises `RecordQuestion`, `RecordError` or `CannotSolve`.
     """
     records = tuple(read_record(source.path, **source.reading) for source in sources)
-    return fit_plants(join(records), shapes=FITTED, should_stop=should_stop), records
+    return fit_plants(join(records), should_stop=should_stop), records
 
 
 def narrowed(
@@ -116,7 +137,7 @@ class LiveTest:
         self,
         path: str | Path,
         *,
-        shapes: tuple[str, ...] = FITTED,
+        shapes: tuple[str, ...] | None = None,
         noise_model: str = "auto",
         drift: bool = True,
         certainty: float = CERTAINTY,
@@ -139,7 +160,7 @@ class LiveTest:
             return None
         self.last = Live(None, None, look.said)
         if look.record is not None:
-            fit = fit_plants(
+            found = fit_plants(
                 look.record,
                 shapes=self._shapes,
                 noise_model=self._noise_model,
@@ -147,6 +168,6 @@ class LiveTest:
                 should_stop=should_stop,
             )
             pv, op = self._ranges
-            advice = advise(fit, certainty=self._certainty, pv_range=pv, op_range=op)
-            self.last = replace(self.last, fit=fit, advice=advice)
+            advice = advise(found, certainty=self._certainty, pv_range=pv, op_range=op)
+            self.last = replace(self.last, fit=found, advice=advice)
         return self.last
