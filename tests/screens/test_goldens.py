@@ -17,6 +17,7 @@ SMALL: Steps = (
     ("what-if-80x24", ("down", "greater_than_sign")),
     ("edit-80x24", ("enter",)),
     ("scenario-80x24", ("escape", "6")),
+    ("structure-80x24", ("9",)),
     ("leave-80x24", ("q",)),
     ("help-80x24", ("escape", "2", "question_mark")),
     ("records-80x24", ("escape", "r")),

@@ -90,13 +90,8 @@ def hold(
 
     Returns phi (n, n) and gamma (n,) with x(t + interval) = phi x(t) + gamma u.
     """
-    n = len(b)
-    # The input stands first, which keeps a lower triangular A lower triangular.
-    stacked = np.zeros((n + 1, n + 1))
-    stacked[1:, 1:] = a * interval
-    stacked[1:, 0] = b * interval
-    exponential = expm(stacked)
-    return exponential[1:, 1:], exponential[1:, 0]
+    phi, gamma = holds(a, b[:, np.newaxis], (interval,))[0]
+    return phi, gamma[:, 0]
 
 
 def holds(
@@ -120,20 +115,24 @@ def holds(
 
     Notes
     -----
-    Over short intervals, the largest row sum of |A| t at most 1/2, the power series of
-    (exp(A t) - 1)/(A t) to the 15th power is exact to double precision and needs a handful of
-    products (its powers grouped by fours, as M.S. Paterson and L.J. Stockmeyer, SIAM J. Comput.
-    2(1), 1973, 60-66, from memory).
+    One or two lags have a closed form.  Over short intervals, the largest row sum of |A| t at most
+    1/2, the power series of (exp(A t) - 1)/(A t) to the 15th power is exact to double precision and
+    needs a handful of products (its powers grouped by fours, as M.S. Paterson and L.J. Stockmeyer,
+    SIAM J. Comput. 2(1), 1973, 60-66, from memory).
     """
-    n, longest = len(a), max(intervals, default=0.0)
-    if not n or max(sum(map(abs, row)) for row in a.tolist()) * longest > 0.5:
+    rows, longest = a.tolist(), max(intervals, default=0.0)
+    is_lags = len(rows) == 1 or (len(rows) == 2 and not rows[0][1])
+    if is_lags and max(row[i] for i, row in enumerate(rows)) * longest < _LARGEST_EXPONENT:
+        lists = [_lags(rows, b.tolist(), interval) for interval in intervals]
+        return [(np.array(phi), np.array(gamma)) for phi, gamma in lists]
+    if not rows or max(sum(map(abs, row)) for row in rows) * longest > 0.5:
         return [_held_alone(a, b, interval) for interval in intervals]
     square = a @ a
-    powers = np.empty((4, n, n))
-    powers[0], powers[1], powers[2], powers[3] = np.eye(n), a, square, square @ a
+    powers = np.empty((4, len(rows), len(rows)))
+    powers[0], powers[1], powers[2], powers[3] = np.eye(len(rows)), a, square, square @ a
     fourth = square @ square
     weights = np.array(intervals)[:, np.newaxis] ** _EXPONENTS / _FACTORIALS
-    groups = (weights.reshape(-1, 4) @ powers.reshape(4, n * n)).reshape(-1, 4, n, n)
+    groups = (weights.reshape(-1, 4) @ powers.reshape(4, -1)).reshape(-1, 4, *a.shape)
     integral = groups[:, 3]
     for k in (2, 1, 0):
         integral = groups[:, k] + fourth @ integral
@@ -145,13 +144,63 @@ def holds(
 _EXPONENTS = np.arange(1.0, 17.0)
 _FACTORIALS = np.cumprod(_EXPONENTS)
 
+_LARGEST_EXPONENT = 700.0
+"""exp of more than this is not a number."""
+
+Rows = list[list[float]]
+
+
+def _lags(a: Rows, b: Rows, t: float) -> tuple[Rows, Rows]:
+    """`holds` over one interval for one state, or for two of which the first feeds the second.
+
+    With p, r on the diagonal, q below, and divided differences [...] of exp over p t, r t and 0:
+    exp(A t) has q t [p, r] below the diagonal, and its integral t [0, p], t [0, r] on it and
+    q t^2 [0, p, r] below.
+    """
+    p = a[0][0] * t
+    own, first = math.exp(p), t * _between(0.0, p)
+    if len(a) == 1:
+        return [[own]], [[first * value for value in b[0]]]
+    coupling, r = a[1][0] * t, a[1][1] * t
+    second, both = t * _between(0.0, r), t * coupling * _bend(p, r)
+    fed = [both * one + second * other for one, other in zip(*b, strict=True)]
+    phi = [[own, 0.0], [coupling * _between(p, r), math.exp(r)]]
+    return phi, [[first * value for value in b[0]], fed]
+
+
+def _between(x: float, y: float) -> float:
+    """The divided difference of exp at x and y."""
+    apart = -abs(x - y)
+    return math.exp(max(x, y)) * (math.expm1(apart) / apart if apart else 1.0)
+
+
+def _bend(x: float, y: float) -> float:
+    """The divided difference of exp at 0, x and y."""
+    near, far = (x, y) if abs(x) < abs(y) else (y, x)
+    if abs(far) > 1.0:
+        return (_between(x, y) - _between(0.0, near)) / far
+    # What would cancel there is the sum of h_k(x, y)/(k + 2)! over the complete symmetric
+    # polynomials h_k.
+    total, power, symmetric, weight, k = 0.5, 1.0, 1.0, 0.5, 2
+    while abs(symmetric) * weight > 1e-18 or abs(power) * weight > 1e-18:
+        k += 1
+        power *= far
+        symmetric = near * symmetric + power
+        weight /= k
+        total += symmetric * weight
+    return total
+
 
 def _held_alone(
     a: NDArray[np.float64], b: NDArray[np.float64], interval: float
 ) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
     """One interval; each input by itself, so that the size of one does not cost another digits."""
-    phi = hold(a, np.zeros(len(a)), interval)[0]
-    gamma = np.empty(b.shape)
+    n = len(a)
+    # The input stands first, which keeps a lower triangular A lower triangular.
+    stacked = np.zeros((n + 1, n + 1))
+    stacked[1:, 1:] = a * interval
+    phi, gamma = expm(stacked)[1:, 1:], np.empty(b.shape)
     for k in range(b.shape[1]):
-        gamma[:, k] = hold(a, b[:, k], interval)[1]
+        stacked[1:, 0] = b[:, k] * interval
+        gamma[:, k] = expm(stacked)[1:, 0]
     return phi, gamma

@@ -10,10 +10,8 @@ class LoopPanel(FieldsPanel):
 
     number = "7"
     title = "Loop"
-    tables = ("loop", "pv", "op", "valve", "measurement")
+    tables = ("loop", "pv", "op")
     help = (
         "The loop's tag and service, and the range, the operating point and the limits of PV and "
         "OP in engineering units.",
-        "What the valve makes of OP, and how PV is measured; a healthy valve and a plain sensor "
-        "where nothing is set.",
     )

@@ -11,8 +11,8 @@ from workbench.errors import (
     InputError,
 )
 from workbench.study.assessment import Assessment, assess
-from workbench.study.loop import action_of, controller_of, no_time_domain, plant_of
-from workbench.study.prediction import Prediction, predict
+from workbench.study.loop import action_of, controller_of
+from workbench.study.prediction import Prediction, predicted
 from workbench.units import Note, text
 
 HANDOVER: Final = (
@@ -46,9 +46,10 @@ def evaluate(case: Case, seed: int = 0, like: Evaluation | None = None) -> Evalu
     assessment = assess(case)
     prediction, missing = None, ""
     if case.controller is not None:
-        missing = no_time_domain(plant_of(case))
-        prediction = None if missing else predict(case, seed, like.prediction if like else None)
+        prediction, missing = predicted(case, seed, like.prediction if like else None)
     notes = cautions(case, assessment, prediction)
+    if missing:
+        notes = (*notes, Note("caution", f"not predicted: {missing}"))
     return Evaluation(case, assessment, prediction, notes, missing)
 
 
@@ -60,10 +61,8 @@ def cautions(
     judged = assessment.judged
     if judged is None:
         return tuple(notes)
-    missing = no_time_domain(plant_of(case))
-    if missing:
-        judged_as = "judged as analogue and " if assessment.sampled_reason else ""
-        notes.append(Note("caution", f"{judged_as}not predicted: {missing}"))
+    if assessment.sampled_reason:
+        notes.append(Note("caution", f"judged as analogue: {assessment.sampled_reason}"))
     margins = judged.margins
     if not margins.stable:
         notes.insert(0, Note("caution", f"NOT STABLE: {margins.reason}"))
