@@ -35,6 +35,7 @@ from tests.model.test_robustness import brinks, sampled_circles, sampled_verdict
 from tests.model.test_stability import verdicts
 from tests.model.test_transfer import laws, limits, step_responses
 from tests.plain import sampled_pv
+from tests.records.damage import damaged_records
 from tests.sim.campaigns import (
     analogue_by_mpmath,
     changed_loops,
@@ -477,6 +478,9 @@ CAMPAIGNS: Final[dict[str, Campaign]] = {
     "fits of made records": Campaign(fitted_records, 10, 400),
     "damaged case files": Campaign(damaged_files, 100, 20_000),
     "case files kept": Campaign(kept_files, 20, 2000),
+    "damaged records": Campaign(
+        _judged(damaged_records, 109, 2.0, "seconds of work for one"), 60, 10_000
+    ),
     "one key, one line": Campaign(_judged(edited_lines, 301, 0.0, "broken"), 10, 5000),
     "layout against tomllib": Campaign(_judged(laid_out_files, 302, 0.0, "broken"), 10, 5000),
     "saves killed": Campaign(_judged(killed_saves, 303, 0.0, "neither old nor new"), 10, 2000),

@@ -4,6 +4,8 @@ Everything that goes in or comes out is in the loop's own engineering units; per
 between this room and the rooms below it.
 """
 
+from workbench.records.bumps import Bump, bumps
+from workbench.records.coach import CERTAINTY, Advice, advise
 from workbench.study.assessment import (
     Assessment,
     LoopFigures,
@@ -29,12 +31,21 @@ from workbench.study.family import (
     members,
     with_family,
 )
+from workbench.study.fitting import (
+    Live,
+    LiveTest,
+    Source,
+    fit_plants,
+    fit_record,
+    fit_sources,
+    narrowed,
+    read_records,
+)
 from workbench.study.keep import (
     FileCheck,
     accept,
     check_case,
     chosen_candidate,
-    fit_record,
     record_change,
 )
 from workbench.study.loop import action_of, controller_of, loop_of, plant_of, units_of
@@ -57,18 +68,23 @@ from workbench.study.trade_off import TradeOff, TradeOffPoint, trade_off
 from workbench.study.wish import RelayTest, Wish, edit_wish, show_wish
 
 __all__ = [
+    "CERTAINTY",
     "HANDOVER",
     "LIMITS",
     "TOLERANCE_LIMIT",
+    "Advice",
     "Among",
     "Assessment",
     "Axis",
+    "Bump",
     "Conversion",
     "Distance",
     "Evaluation",
     "FamilyFigures",
     "FileCheck",
     "InnerTrend",
+    "Live",
+    "LiveTest",
     "LoopFigures",
     "Member",
     "PlantFigures",
@@ -78,6 +94,7 @@ __all__ = [
     "RelayTest",
     "Response",
     "Retune",
+    "Source",
     "Stage",
     "Surveyed",
     "Tolerance",
@@ -87,7 +104,9 @@ __all__ = [
     "Wish",
     "accept",
     "action_of",
+    "advise",
     "assess",
+    "bumps",
     "cautions",
     "check_case",
     "chosen_candidate",
@@ -98,12 +117,16 @@ __all__ = [
     "evaluate",
     "family_cautions",
     "family_figures",
+    "fit_plants",
     "fit_record",
+    "fit_sources",
     "loop_of",
     "members",
+    "narrowed",
     "plant_of",
     "predict",
     "propose",
+    "read_records",
     "record_change",
     "reductions",
     "respond",
