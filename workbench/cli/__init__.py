@@ -232,6 +232,7 @@ VERBS: Final[dict[str, Callable[[Given], Answer]]] = {
     "predict": loops.predict,
     "respond": loops.respond,
     "fit": records.fit,
+    "plan": records.plan,
     "propose": loops.propose,
     "convert": loops.convert,
     "check": files.check,

@@ -147,6 +147,13 @@ PLANT_ALONE: Final = tuple(
 )
 """The inline options that tell of a plant without its loop."""
 
+INLINE_PLANT: Final = tuple(
+    option
+    for option in INLINE
+    if option in PLANT_ALONE or option.name in ("--op-limits", "--start")
+)
+"""The inline options that tell of a plant and of where it stands."""
+
 JSON: Final = Option("--json", "", "one JSON object in place of the text")
 SET: Final = Option(
     "--set",
@@ -221,6 +228,18 @@ FIT: Final[tuple[Option, ...]] = (
     Option("--shape", "SHAPE", "fit this shape only", "first-order and integrating"),
     Option("--noise-model", "auto|white|correlated", "how the noise is described", "auto"),
     Option("--no-drift", "", "PV has no drift of its own in the record"),
+)
+PLAN: Final[tuple[Option, ...]] = (
+    Option("--noise", "SD", "standard deviation of PV at rest, PV units", "needed", ("pv.noise",)),
+    Option("--max-pv-change", "X", "how far PV may leave its start, PV units", "needed"),
+    Option("--interval", "TIME", "between rows of the log", "a fortieth of the slowest time"),
+    Option(
+        "--certainty",
+        "PERCENT",
+        "standard error wanted of gain and time constants, and of the dead time in percent of dead"
+        " time and slowest time constant together",
+        "as good as the PV change allows",
+    ),
 )
 WISHES: Final[tuple[Option, ...]] = (
     Option("--for", "load|setpoint", "what the settings are for", "load"),
@@ -310,6 +329,13 @@ COMMANDS: Final[dict[str, Grammar]] = {
             (*FIT, JSON),
             "workbench fit cases/TIC-307_bump.csv",
             least=1,
+        ),
+        Grammar(
+            "plan",
+            "Sizes a bump test: how large, how long, and what it will tell.",
+            "[CASE]",
+            (*PLAN, SET, *INLINE_PLANT, JSON),
+            "workbench plan cases/TIC-307.toml --max-pv-change 4 --certainty 3",
         ),
         Grammar(
             "propose",

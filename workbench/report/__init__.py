@@ -25,6 +25,7 @@ from workbench.report.loops import (
     response_csv,
     trend_csv,
 )
+from workbench.report.plans import plan_data, plan_text
 from workbench.report.settings import convert_data, convert_text, propose_data, propose_text
 from workbench.report.words import Json, Rows, settings_text, wrapped
 
@@ -44,6 +45,8 @@ __all__ = [
     "history_data",
     "history_text",
     "is_stable",
+    "plan_data",
+    "plan_text",
     "predict_data",
     "predict_text",
     "propose_data",

@@ -34,6 +34,7 @@ from workbench.study.prediction import (
     response_horizon,
 )
 from workbench.study.proposals import Proposal, RelayTest, Wish, propose, take
+from workbench.study.records import plan_test
 
 __all__ = [
     "HANDOVER",
@@ -62,6 +63,7 @@ __all__ = [
     "evaluate",
     "fit_record",
     "loop_of",
+    "plan_test",
     "plant_of",
     "predict",
     "propose",
