@@ -233,6 +233,7 @@ VERBS: Final[dict[str, Callable[[Given], Answer]]] = {
     "respond": loops.respond,
     "fit": records.fit,
     "plan": records.plan,
+    "diagnose": records.diagnose,
     "propose": loops.propose,
     "convert": loops.convert,
     "check": files.check,

@@ -2,13 +2,17 @@
 
 from __future__ import annotations
 
-from typing import Final
+from typing import TYPE_CHECKING, Final
 
 from workbench import report
-from workbench.cli.answer import Answer, Status, loop_of
+from workbench.cli.answer import INLINE_TAG, Answer, Status, loop_of
 from workbench.cli.options import Given
 from workbench.cli.output import progress, width
 from workbench.errors import problem
+
+if TYPE_CHECKING:
+    from workbench.case.case import Case
+    from workbench.study import Columns
 
 
 def fit(given: Given) -> Answer:
@@ -54,6 +58,53 @@ def plan(given: Given) -> Answer:
         report.plan_data(found, units),
         Status.DONE if found.enough else Status.NO,
     )
+
+
+def diagnose(given: Given) -> Answer:
+    """Why does this loop swing."""
+    from workbench import study
+
+    dead_time = given.seconds("--dead-time", or_zero=True)
+    integral_time = given.seconds("--integral-time")
+    case = _case_beside(given)
+    with progress("diagnosing"):
+        found = study.diagnose(
+            _columns(given),
+            case,
+            dead_time=dead_time,
+            integral_time=integral_time,
+            integrating="--integrating" in given,
+            knows_range="--case" in given or "--pv-range" in given,
+        )
+    return Answer(
+        report.diagnose_text(found, width()),
+        report.diagnose_data(found),
+        Status.NO if found.likely_cause == "undecided" else Status.DONE,
+    )
+
+
+def _columns(given: Given) -> Columns:
+    """The record of the command and how it is to be read."""
+    from workbench.study import Columns
+
+    names = ("time", "pv", "op", "sp", "mode")
+    return Columns(
+        given.file,
+        **{name: given.word(f"--{name}") for name in names},
+        start=given.word("--from"),
+        end=given.word("--to"),
+    )
+
+
+def _case_beside(given: Given) -> Case:
+    """The case that a record is looked at with, and the ranges given in its place."""
+    from workbench.case.case import edit_all, new_case
+    from workbench.case.files import read_case
+
+    path = given.word("--case")
+    case = read_case(path).case if path else new_case(INLINE_TAG)
+    changes = given.changes()
+    return edit_all(case, changes) if changes else case
 
 
 FITTED: Final = ("first-order", "integrating")

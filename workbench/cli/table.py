@@ -229,6 +229,30 @@ FIT: Final[tuple[Option, ...]] = (
     Option("--noise-model", "auto|white|correlated", "how the noise is described", "auto"),
     Option("--no-drift", "", "PV has no drift of its own in the record"),
 )
+RECORD: Final[tuple[Option, ...]] = (
+    Option("--time", "COLUMN", "column of time", "time_s or timestamp"),
+    Option("--pv", "COLUMN", "column of the process variable", "pv"),
+    Option("--op", "COLUMN", "column of the controller output", "op"),
+    Option("--sp", "COLUMN", "column of the setpoint", "sp"),
+    Option("--mode", "COLUMN", "column of the controller's mode", "mode"),
+    Option("--from", "STAMP", "first row to use", "the first of the record"),
+    Option("--to", "STAMP", "last row to use", "the last of the record"),
+)
+"""What is read of a record taken in normal running."""
+BESIDE: Final[tuple[Option, ...]] = (
+    Option("--case", "CASE", "the case of this loop: its ranges, limits, plant and settings"),
+    *(
+        replace(option, inline=False)
+        for option in _LOOP
+        if option.name in ("--pv-range", "--op-range", "--op-limits")
+    ),
+)
+"""What is known of the loop beside its record."""
+DIAGNOSIS: Final[tuple[Option, ...]] = (
+    Option("--dead-time", "TIME", "of the plant", "that of the case"),
+    Option("--integral-time", "TIME", "of the controller", "that of the case"),
+    Option("--integrating", "", "the plant is integrating, like most levels"),
+)
 PLAN: Final[tuple[Option, ...]] = (
     Option("--noise", "SD", "standard deviation of PV at rest, PV units", "needed", ("pv.noise",)),
     Option("--max-pv-change", "X", "how far PV may leave its start, PV units", "needed"),
@@ -336,6 +360,14 @@ COMMANDS: Final[dict[str, Grammar]] = {
             "[CASE]",
             (*PLAN, SET, *INLINE_PLANT, JSON),
             "workbench plan cases/TIC-307.toml --max-pv-change 4 --certainty 3",
+        ),
+        Grammar(
+            "diagnose",
+            "Why does this loop swing: tuning, valve, an upset from outside, the sensor.",
+            "RECORD.csv",
+            (*RECORD, *DIAGNOSIS, *BESIDE, JSON),
+            "workbench diagnose cases/FIC-204_swing.csv --case cases/FIC-204.toml",
+            least=1,
         ),
         Grammar(
             "propose",

@@ -5,6 +5,7 @@ number wears its unit, and lines are wrapped to the width that is asked for.  JS
 of plain values: a figure that does not exist is `None` with its reason beside it.
 """
 
+from workbench.report.diagnoses import diagnose_data, diagnose_text
 from workbench.report.files import (
     between_data,
     between_text,
@@ -40,6 +41,8 @@ __all__ = [
     "check_text",
     "convert_data",
     "convert_text",
+    "diagnose_data",
+    "diagnose_text",
     "fit_data",
     "fit_text",
     "history_data",

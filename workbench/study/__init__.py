@@ -34,11 +34,12 @@ from workbench.study.prediction import (
     response_horizon,
 )
 from workbench.study.proposals import Proposal, RelayTest, Wish, propose, take
-from workbench.study.records import plan_test
+from workbench.study.records import Columns, diagnose, plan_test
 
 __all__ = [
     "HANDOVER",
     "Assessment",
+    "Columns",
     "Conversion",
     "Evaluation",
     "FileCheck",
@@ -60,6 +61,7 @@ __all__ = [
     "chosen_candidate",
     "controller_of",
     "convert",
+    "diagnose",
     "evaluate",
     "fit_record",
     "loop_of",

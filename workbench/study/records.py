@@ -6,11 +6,46 @@ predicted.
 
 from __future__ import annotations
 
+import math
+from dataclasses import dataclass
+from pathlib import Path
+
 from workbench.case.case import Case
-from workbench.errors import problem
+from workbench.errors import WorkbenchError, problem
+from workbench.records.diagnose import Diagnosis, Known
+from workbench.records.diagnose import diagnose as diagnose_record
+from workbench.records.record import Record, read_record
 from workbench.records.testplan import Plan
 from workbench.records.testplan import plan_test as plan_for
+from workbench.study.assessment import assess
 from workbench.study.loop import plant_of
+
+
+@dataclass(frozen=True)
+class Columns:
+    """Which record, which of its columns and which part of it."""
+
+    path: str | Path
+    time: str | None = None
+    pv: str | None = None
+    op: str | None = None
+    sp: str | None = None
+    mode: str | None = None
+    start: str | None = None
+    end: str | None = None
+
+    def read(self) -> Record:
+        """The record.  Raises `RecordError`."""
+        return read_record(
+            self.path,
+            time=self.time,
+            pv=self.pv,
+            op=self.op,
+            sp=self.sp,
+            mode=self.mode,
+            start=self.start,
+            end=self.end,
+        )
 
 
 def plan_test(
@@ -46,3 +81,69 @@ def plan_test(
         interval=interval,
         certainty=certainty,
     )
+
+
+def diagnose(
+    source: Columns,
+    case: Case,
+    *,
+    dead_time: float | None = None,
+    integral_time: float | None = None,
+    integrating: bool = False,
+    knows_range: bool = True,
+) -> Diagnosis:
+    """Why the loop of a record swings, with what the case knows of the loop.
+
+    Times in s stand in for those of the case; `knows_range` says that the case's PV range is the
+    loop's own and not a default.  Raises `RecordError`.
+    """
+    record = source.read()
+    known = _known(case, dead_time, integral_time, integrating, knows_range)
+    return diagnose_record(record, known)
+
+
+def _known(
+    case: Case,
+    dead_time: float | None,
+    integral_time: float | None,
+    integrating: bool,
+    knows_range: bool,
+) -> Known:
+    pv, op, own, peak = case.pv, case.op, None, None
+    if case.plant.process is not None:
+        plant = plant_of(case)
+        if dead_time is None and not plant.has_delayed_feedback:
+            dead_time = plant.dead_time
+        integrating = integrating or plant.integrators > 0
+        own, peak = _own_swing(case)
+    if integral_time is None and case.controller is not None:
+        gains = case.controller.gains()
+        if gains.integral and gains.proportional:
+            integral_time = gains.proportional / gains.integral
+    return Known(
+        dead_time_s=dead_time,
+        integral_time_s=integral_time,
+        pv_span=pv.range.span if knows_range else None,
+        op_low=op.low,
+        op_high=op.high,
+        op_min=op.min,
+        op_max=op.max,
+        integrating=integrating,
+        own_period_s=own,
+        max_sensitivity=peak,
+    )
+
+
+def _own_swing(case: Case) -> tuple[float | None, float | None]:
+    """Period at which the loop's phase is -180 deg [s], and its maximum sensitivity."""
+    if case.controller is None:
+        return None, None
+    try:
+        judged = assess(case).judged
+    except WorkbenchError:
+        return None, None
+    if judged is None:
+        return None, None
+    crossover = judged.margins.phase_crossover_rad_s.value
+    period = 2.0 * math.pi / crossover if crossover else None
+    return period, judged.margins.max_sensitivity.value
