@@ -75,9 +75,10 @@ def made(seed: int, size: int) -> Iterator[Swinging]:
         # Ultimate gain of a lag with dead time, roughly; a fifth of it is a calm loop.
         ultimate = (1.57 * lag / dead + 0.57) / gain
         integral = lag * draw.uniform(0.7, 1.5)
-        share = draw.uniform(0.72, 0.8) if cause == "tuning" else draw.uniform(0.15, 0.35)
+        share = draw.uniform(0.6, 0.72) if cause == "tuning" else draw.uniform(0.15, 0.35)
         loop = pi_loop(gain, lag, dead, share * ultimate, integral)
-        valve, events = Valve(), {"noise": 0.05, "seed": draw.randrange(10**6)}
+        valve = Valve()
+        events: dict[str, Any] = {"noise": 0.05, "seed": draw.randrange(10**6)}
         if cause == "valve":
             stick = draw.uniform(2.0, 6.0)
             valve = Valve(stick_slip=stick, slip_jump=stick * draw.uniform(0.3, 1.0))
