@@ -234,6 +234,7 @@ VERBS: Final[dict[str, Callable[[Given], Answer]]] = {
     "fit": records.fit,
     "plan": records.plan,
     "diagnose": records.diagnose,
+    "recognise": records.recognise,
     "propose": loops.propose,
     "convert": loops.convert,
     "check": files.check,

@@ -83,6 +83,22 @@ def diagnose(given: Given) -> Answer:
     )
 
 
+def recognise(given: Given) -> Answer:
+    """Is the controller what its sheet says."""
+    from workbench import study
+
+    scan = given.seconds("--scan")
+    case = _case_beside(given)
+    with progress("replaying"):
+        check = study.recognise(_columns(given), case, scan=scan)
+    no = not check.found.candidates or check.as_in_case is False
+    return Answer(
+        report.recognise_text(check, width()),
+        report.recognise_data(check),
+        Status.NO if no else Status.DONE,
+    )
+
+
 def _columns(given: Given) -> Columns:
     """The record of the command and how it is to be read."""
     from workbench.study import Columns
@@ -102,6 +118,10 @@ def _case_beside(given: Given) -> Case:
     from workbench.case.files import read_case
 
     path = given.word("--case")
+    if len(given.operands) > 1:
+        if path:
+            raise problem("is given beside a CASE", "name the case once", key="--case")
+        path = given.operands[1]
     case = read_case(path).case if path else new_case(INLINE_TAG)
     changes = given.changes()
     return edit_all(case, changes) if changes else case

@@ -248,6 +248,9 @@ BESIDE: Final[tuple[Option, ...]] = (
     ),
 )
 """What is known of the loop beside its record."""
+REPLAY_SCAN: Final = Option(
+    "--scan", "TIME", "execution interval of the controller", "that of the case, or as OP changes"
+)
 DIAGNOSIS: Final[tuple[Option, ...]] = (
     Option("--dead-time", "TIME", "of the plant", "that of the case"),
     Option("--integral-time", "TIME", "of the controller", "that of the case"),
@@ -368,6 +371,15 @@ COMMANDS: Final[dict[str, Grammar]] = {
             (*RECORD, *DIAGNOSIS, *BESIDE, JSON),
             "workbench diagnose cases/FIC-204_swing.csv --case cases/FIC-204.toml",
             least=1,
+        ),
+        Grammar(
+            "recognise",
+            "Which controller made this record: is it the one that its sheet says.",
+            "RECORD.csv [CASE]",
+            (*RECORD, REPLAY_SCAN, *BESIDE, JSON),
+            "workbench recognise cases/FIC-204_run.csv cases/FIC-204.toml",
+            least=1,
+            most=2,
         ),
         Grammar(
             "propose",

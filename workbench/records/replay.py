@@ -33,7 +33,7 @@ _MOST_RUNS: Final = 8
 """Runs of rows that are replayed, the longest ones."""
 _SHIFTS: Final = (0, 1, -1, 2)
 """Rows by which OP may be logged after the PV that it answers."""
-_FILTERS: Final = tuple(np.concatenate([[0.0], np.geomspace(0.05, 50.0, 15)]))
+_FILTERS: Final[tuple[float, ...]] = (0.0, *np.geomspace(0.05, 50.0, 15).tolist())
 """Filter times of the derivative that are tried, in scans."""
 _MEMORY: Final = 0.95
 """Share that the lively part keeps of itself from row to row."""

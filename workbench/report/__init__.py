@@ -27,6 +27,7 @@ from workbench.report.loops import (
     trend_csv,
 )
 from workbench.report.plans import plan_data, plan_text
+from workbench.report.recognition import recognise_data, recognise_text
 from workbench.report.settings import convert_data, convert_text, propose_data, propose_text
 from workbench.report.words import Json, Rows, settings_text, wrapped
 
@@ -54,6 +55,8 @@ __all__ = [
     "predict_text",
     "propose_data",
     "propose_text",
+    "recognise_data",
+    "recognise_text",
     "respond_data",
     "respond_text",
     "response_csv",

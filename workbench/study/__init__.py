@@ -34,7 +34,7 @@ from workbench.study.prediction import (
     response_horizon,
 )
 from workbench.study.proposals import Proposal, RelayTest, Wish, propose, take
-from workbench.study.records import Columns, diagnose, plan_test
+from workbench.study.records import Columns, SheetCheck, diagnose, plan_test, recognise
 
 __all__ = [
     "HANDOVER",
@@ -51,6 +51,7 @@ __all__ = [
     "Reduced",
     "RelayTest",
     "Response",
+    "SheetCheck",
     "Trend",
     "Wish",
     "accept",
@@ -69,6 +70,7 @@ __all__ = [
     "plant_of",
     "predict",
     "propose",
+    "recognise",
     "record_change",
     "reductions",
     "respond",

@@ -11,14 +11,24 @@ from dataclasses import dataclass
 from pathlib import Path
 
 from workbench.case.case import Case
-from workbench.errors import WorkbenchError, problem
+from workbench.errors import NotApplicable, WorkbenchError, problem
+from workbench.model.pid import Controller, settings_like
 from workbench.records.diagnose import Diagnosis, Known
 from workbench.records.diagnose import diagnose as diagnose_record
 from workbench.records.record import Record, read_record
+from workbench.records.replay import (
+    Difference,
+    Ranges,
+    Recognised,
+    Recognition,
+    differences,
+    readings,
+)
+from workbench.records.replay import recognise as recognise_in
 from workbench.records.testplan import Plan
 from workbench.records.testplan import plan_test as plan_for
 from workbench.study.assessment import assess
-from workbench.study.loop import plant_of
+from workbench.study.loop import action_of, plant_of
 
 
 @dataclass(frozen=True)
@@ -147,3 +157,60 @@ def _own_swing(case: Case) -> tuple[float | None, float | None]:
     crossover = judged.margins.phase_crossover_rad_s.value
     period = 2.0 * math.pi / crossover if crossover else None
     return period, judged.margins.max_sensitivity.value
+
+
+@dataclass(frozen=True)
+class SheetCheck:
+    """Which controller a record shows, and whether it is the one on the sheet."""
+
+    found: Recognition
+    as_in_case: bool | None
+    """`None` where nothing was recognised, or there is no sheet."""
+    differences: tuple[Difference, ...] = ()
+    as_if: str = ""
+    """How the sheet's own numbers would have to be read to be what ran."""
+    fits: Controller | None = None
+    """What ran, in the form and the units of the sheet, where that form can hold it."""
+
+
+def recognise(source: Columns, case: Case, *, scan: float | None = None) -> SheetCheck:
+    """Which controller ran in a record, and whether it is the case's.
+
+    Raises `RecordError`.
+    """
+    record, pv, op = source.read(), case.pv, case.op
+    sheet = case.controller
+    found = recognise_in(
+        record,
+        Ranges(pv.range, op.range, op.min, op.max),
+        scan=scan or (sheet.scan_s if sheet else None),
+    )
+    if sheet is None or not found.candidates:
+        return SheetCheck(found, None)
+    best, action = found.candidates[0], action_of(case)[0]
+    off = differences(best, sheet, action)
+    as_if = "" if not off else _read_otherwise(best, sheet, action)
+    return SheetCheck(found, not off, off, as_if, _as_on_sheet(found, sheet) if off else None)
+
+
+def _read_otherwise(best: Recognised, sheet: Controller, action: str) -> str:
+    """The reading of the sheet's numbers that makes them what ran."""
+    if best.action == action:
+        for words, other in readings(sheet):
+            if not differences(best, other, action):
+                return words
+    return ""
+
+
+def _as_on_sheet(found: Recognition, sheet: Controller) -> Controller | None:
+    """The best candidate in the form and the units of the sheet."""
+    form = "series" if sheet.form == "series" else "ideal"
+    held = next((one for one in found.candidates if one.form == form), None)
+    if held is None or not held.settings.gain_value:
+        return None
+    try:
+        return settings_like(
+            sheet, held.settings.gain_value, held.integral_s, held.derivative_s, form
+        )
+    except NotApplicable:
+        return None
