@@ -235,6 +235,7 @@ VERBS: Final[dict[str, Callable[[Given], Answer]]] = {
     "plan": records.plan,
     "diagnose": records.diagnose,
     "recognise": records.recognise,
+    "observe": records.observe,
     "propose": loops.propose,
     "convert": loops.convert,
     "check": files.check,

@@ -2,6 +2,10 @@
 
 from __future__ import annotations
 
+import getpass
+import os
+from dataclasses import replace
+from datetime import datetime
 from typing import TYPE_CHECKING, Final
 
 from workbench import report
@@ -9,6 +13,7 @@ from workbench.cli.answer import INLINE_TAG, Answer, Status, loop_of
 from workbench.cli.options import Given
 from workbench.cli.output import progress, width
 from workbench.errors import problem
+from workbench.units import harmless
 
 if TYPE_CHECKING:
     from workbench.case.case import Case
@@ -99,13 +104,54 @@ def recognise(given: Given) -> Answer:
     )
 
 
-def _columns(given: Given) -> Columns:
+def observe(given: Given) -> Answer:
+    """Did the plant do what was predicted."""
+    from workbench import study
+    from workbench.case.case import edit_all
+    from workbench.case.files import read_case, save_case
+
+    path, record = given.operands
+    file = read_case(path)
+    # The scenario of the case is what was predicted for, not what happened in the record.
+    case = replace(file.case, scenario=type(file.case.scenario)())
+    changes = given.settings() | given.changes()
+    case = edit_all(case, changes) if changes else case
+    with progress("playing"):
+        found = study.observe(_columns(given, record), case)
+    saved = ""
+    if "--save" in given:
+        kept = study.with_observation(
+            file.case,
+            found,
+            record=os.path.basename(record),
+            who=given.word("--who") or _user(),
+            now=datetime.now().astimezone().replace(microsecond=0),
+        )
+        save_case(file, kept)
+        saved = f"\n\nAn observed entry is added to {harmless(path)}."
+    units = study.units_of(case)
+    return Answer(
+        report.observe_text(found, units, width()) + saved,
+        report.observe_data(found, units) | {"saved": bool(saved)},
+        Status.DONE if found.verdict == "as predicted" else Status.NO,
+    )
+
+
+def _user() -> str:
+    """Who is logged in, as far as the system knows."""
+    try:
+        return getpass.getuser()
+    except (KeyError, OSError, ImportError):
+        return ""
+
+
+def _columns(given: Given, path: str = "") -> Columns:
     """The record of the command and how it is to be read."""
     from workbench.study import Columns
 
     names = ("time", "pv", "op", "sp", "mode")
     return Columns(
-        given.file,
+        path or given.file,
         **{name: given.word(f"--{name}") for name in names},
         start=given.word("--from"),
         end=given.word("--to"),

@@ -256,6 +256,20 @@ DIAGNOSIS: Final[tuple[Option, ...]] = (
     Option("--integral-time", "TIME", "of the controller", "that of the case"),
     Option("--integrating", "", "the plant is integrating, like most levels"),
 )
+OBSERVATION: Final[tuple[Option, ...]] = (
+    Option(
+        "--load-step",
+        "X",
+        "a known upset in the record, OP units or those of the load formula's input",
+        "none",
+        ("scenario.load_step",),
+    ),
+    Option(
+        "--load-at", "TIME", "when it came, from the first row used", "0 s", ("scenario.load_at",)
+    ),
+    Option("--save", "", "adds an observed entry to the history of the CASE"),
+    Option("--who", "NAME", "who makes that entry", "whoever is logged in"),
+)
 PLAN: Final[tuple[Option, ...]] = (
     Option("--noise", "SD", "standard deviation of PV at rest, PV units", "needed", ("pv.noise",)),
     Option("--max-pv-change", "X", "how far PV may leave its start, PV units", "needed"),
@@ -379,6 +393,15 @@ COMMANDS: Final[dict[str, Grammar]] = {
             (*RECORD, REPLAY_SCAN, *BESIDE, JSON),
             "workbench recognise cases/FIC-204_run.csv cases/FIC-204.toml",
             least=1,
+            most=2,
+        ),
+        Grammar(
+            "observe",
+            "Did the plant do what was predicted: a record with the case's settings, against it.",
+            "CASE RECORD.csv",
+            (*RECORD, *OBSERVATION, SET, JSON),
+            "workbench observe cases/FIC-204.toml cases/FIC-204_run.csv",
+            least=2,
             most=2,
         ),
         Grammar(

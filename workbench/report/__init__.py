@@ -26,6 +26,7 @@ from workbench.report.loops import (
     response_csv,
     trend_csv,
 )
+from workbench.report.observations import observe_data, observe_text
 from workbench.report.plans import plan_data, plan_text
 from workbench.report.recognition import recognise_data, recognise_text
 from workbench.report.settings import convert_data, convert_text, propose_data, propose_text
@@ -49,6 +50,8 @@ __all__ = [
     "history_data",
     "history_text",
     "is_stable",
+    "observe_data",
+    "observe_text",
     "plan_data",
     "plan_text",
     "predict_data",

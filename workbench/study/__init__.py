@@ -23,6 +23,7 @@ from workbench.study.keep import (
     record_change,
 )
 from workbench.study.loop import action_of, controller_of, loop_of, plant_of, units_of
+from workbench.study.observation import Observation, RunFigures, observe, with_observation
 from workbench.study.prediction import (
     InnerTrend,
     Prediction,
@@ -45,12 +46,14 @@ __all__ = [
     "FileCheck",
     "InnerTrend",
     "LoopFigures",
+    "Observation",
     "PlantFigures",
     "Prediction",
     "Proposal",
     "Reduced",
     "RelayTest",
     "Response",
+    "RunFigures",
     "SheetCheck",
     "Trend",
     "Wish",
@@ -66,6 +69,7 @@ __all__ = [
     "evaluate",
     "fit_record",
     "loop_of",
+    "observe",
     "plan_test",
     "plant_of",
     "predict",
@@ -78,4 +82,5 @@ __all__ = [
     "response_horizon",
     "take",
     "units_of",
+    "with_observation",
 ]

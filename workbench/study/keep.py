@@ -137,7 +137,7 @@ def record_change(
         why=why.strip(),
         controller=controller_of(case),
         program=__version__,
-        **{name: rounded(value, 6) for name, value in figures.items()},
+        **{name: rounded(value, 6) for name, value in figures.items()},  # type: ignore[arg-type]
     )
     return case.with_entry(entry)
 
