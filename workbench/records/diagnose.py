@@ -372,8 +372,10 @@ class _Parts:
             words = f"the loop's own period is about {time_text(known.own_period_s, 3)}"
             if not low <= period <= high:
                 self._say("tuning", False, words)
+                if self.verdict != "no stick-slip":
+                    return None
                 self._say("upset", True, f"{words}, so this one comes from elsewhere")
-                return None if self.verdict == "undecided" else "upset"
+                return "upset"
             self._say("tuning", True, words)
             if known.max_sensitivity is not None and known.max_sensitivity < _LIVELY:
                 damped = f"with Ms {text(known.max_sensitivity, digits=3)} it should die out"

@@ -118,7 +118,11 @@ class _Fit:
 
 
 def recognise(
-    record: Record, ranges: Ranges | None = None, *, scan: float | None = None
+    record: Record,
+    ranges: Ranges | None = None,
+    *,
+    pv_filter: float = 0.0,
+    scan: float | None = None,
 ) -> Recognition:
     """Controllers that make the logged OP from the logged SP and PV.
 
@@ -128,6 +132,9 @@ def recognise(
         With SP, better with the mode; rows in automatic are used, all where no mode was logged.
     ranges
         Ranges of PV and OP, 0 to 100 each where left out; gains are in percent per percent.
+    pv_filter
+        Time constant of the filter before the controller [s]; PV may be logged before or behind it,
+        and is taken as it fits better.
     scan
         Execution interval of the controller [s]; where left out, how often OP changes.
 
@@ -151,6 +158,10 @@ def recognise(
     if reason:
         return Recognition((), data.scan, count, reason)
     best = _simplest(data)
+    if pv_filter:
+        behind = _simplest(_filtered(data, pv_filter))
+        if behind is not None and (best is None or behind.misfit < 0.5 * best.misfit):
+            best = behind
     if best is None:
         return Recognition((), data.scan, count, "SP and PV do not move enough to tell the gains")
     if best.agreement < _GOOD:
@@ -200,6 +211,12 @@ def _replayed(record: Record, ranges: Ranges, scan: float | None) -> _Data:
         pieces[2].append(100.0 * (record.op[rows] - ranges.op.low) / ranges.op.span)
     moves = record.sp is not None and any(float(np.ptp(piece)) > 0.0 for piece in pieces[0])
     return _Data(every * _nominal(record), *pieces, moves=moves)
+
+
+def _filtered(data: _Data, time: float) -> _Data:
+    """PV behind a first-order filter with its exact pole, each run from its own first value."""
+    share = -math.expm1(-data.scan / time)
+    return replace(data, pv=[y[0] + _lagged(share * (y - y[0]), 1.0 - share) for y in data.pv])
 
 
 def _nominal(record: Record) -> float:

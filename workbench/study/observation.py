@@ -20,6 +20,7 @@ from workbench import __version__
 from workbench.case.case import Case, Revision
 from workbench.errors import WorkbenchError, problem
 from workbench.model.feedback import Loop
+from workbench.records.diagnose import diagnose
 from workbench.records.record import Record
 from workbench.records.stretch import Stretch, is_automatic, longest_stretch
 from workbench.records.swing import swings
@@ -28,7 +29,7 @@ from workbench.sim.loop import simulate
 from workbench.sim.scenario import Events
 from workbench.sim.valve import Valve
 from workbench.study.loop import instruments_of, load_scale, loop_of
-from workbench.study.records import Columns
+from workbench.study.records import Columns, known_of
 from workbench.units import Amount, Figure, rounded, text, time_text
 
 Floats = NDArray[np.float64]
@@ -111,11 +112,27 @@ def observe(source: Columns, case: Case) -> Observation:
         words = f"{100.0 * share:.0f} % of what PV and OP did is left over, noise apart"
         return play.answer("as predicted", base, (), (words,))
     found = tuple(sorted(play.explained(base), key=lambda one: one.bic))
-    return play.answer("different", base, found, tuple(_reasons(found, share)))
+    sticks = _sticking(record, case)
+    return play.answer("different", base, found, tuple(_reasons(found, share, sticks)))
 
 
-def _reasons(found: tuple[Explanation, ...], share: float) -> Iterator[str]:
+def _sticking(record: Record, case: Case) -> str:
+    """What the shapes of a swing tell of the valve: played again it would not keep in step."""
+    seen = diagnose(record, known_of(case))
+    if seen.valve_verdict != "stick-slip":
+        return ""
+    period = time_text(seen.swings[0].period_s, 3)
+    amount = seen.stick_slip_percent.value
+    return (
+        f"PV swings every {period} in the shapes of a valve that sticks by {text(amount, '%', 2)}"
+    )
+
+
+def _reasons(found: tuple[Explanation, ...], share: float, sticks: str) -> Iterator[str]:
     yield f"{100.0 * share:.0f} % of what PV and OP did is left over, noise apart"
+    if sticks:
+        yield f"best explained by the valve: {sticks}"
+        return
     if not found or found[0].bic > -_EVIDENCE:
         yield "neither gain, dead time, valve nor one upset explains it: look for something else"
         return

@@ -13,6 +13,7 @@ from pathlib import Path
 from workbench.case.case import Case
 from workbench.errors import NotApplicable, WorkbenchError, problem
 from workbench.model.pid import Controller, settings_like
+from workbench.model.robustness import ultimate
 from workbench.records.diagnose import Diagnosis, Known
 from workbench.records.diagnose import diagnose as diagnose_record
 from workbench.records.record import Record, read_record
@@ -108,17 +109,25 @@ def diagnose(
     loop's own and not a default.  Raises `RecordError`.
     """
     record = source.read()
-    known = _known(case, dead_time, integral_time, integrating, knows_range)
+    known = known_of(
+        case,
+        dead_time=dead_time,
+        integral_time=integral_time,
+        integrating=integrating,
+        knows_range=knows_range,
+    )
     return diagnose_record(record, known)
 
 
-def _known(
+def known_of(
     case: Case,
-    dead_time: float | None,
-    integral_time: float | None,
-    integrating: bool,
-    knows_range: bool,
+    *,
+    dead_time: float | None = None,
+    integral_time: float | None = None,
+    integrating: bool = False,
+    knows_range: bool = True,
 ) -> Known:
+    """What a case tells of a loop beside its record; times in s stand in for its own."""
     pv, op, own, peak = case.pv, case.op, None, None
     if case.plant.process is not None:
         plant = plant_of(case)
@@ -145,14 +154,18 @@ def _known(
 
 
 def _own_swing(case: Case) -> tuple[float | None, float | None]:
-    """Period at which the loop's phase is -180 deg [s], and its maximum sensitivity."""
+    """Period at which the loop's phase is -180 deg [s], and its maximum sensitivity.
+
+    Of a loop that is not stable it is the ultimate period of its plant.
+    """
     if case.controller is None:
         return None, None
     try:
         judged = assess(case).judged
+        if judged is None or not judged.margins.stable:
+            plant = plant_of(case)
+            return ultimate(plant if action_of(case)[0] == "reverse" else -plant)[1], None
     except WorkbenchError:
-        return None, None
-    if judged is None:
         return None, None
     crossover = judged.margins.phase_crossover_rad_s.value
     period = 2.0 * math.pi / crossover if crossover else None
@@ -183,6 +196,7 @@ def recognise(source: Columns, case: Case, *, scan: float | None = None) -> Shee
     found = recognise_in(
         record,
         Ranges(pv.range, op.range, op.min, op.max),
+        pv_filter=pv.filter.seconds if pv.filter else 0.0,
         scan=scan or (sheet.scan_s if sheet else None),
     )
     if sheet is None or not found.candidates:
