@@ -9,6 +9,7 @@ from __future__ import annotations
 
 import random
 from collections.abc import Callable, Iterable
+from dataclasses import dataclass
 from statistics import NormalDist
 
 from tests.plain import HeldLag
@@ -49,25 +50,38 @@ def sticking(stick: float, jump: float) -> Callable[[float], float]:
     return move
 
 
+@dataclass(frozen=True)
+class Truth:
+    """The plant and what runs on it."""
+
+    gain: float = GAIN
+    """Of the controller."""
+    integral_time: float = INTEGRAL_TIME
+    dead_time: float = 0.9
+    upset: tuple[float, float] = (0.0, 0.0)
+    """When, and how much of OP at the plant's input."""
+
+
 def rows(
     count: int,
     setpoints: Iterable[tuple[float, float]],
     valve: Callable[[float], float],
     seed: int,
+    truth: Truth,
 ) -> list[tuple[float, float, float, float]]:
     """(time [s], SP, PV, OP); `setpoints` are (time [s], SP)."""
     draw, normal = random.Random(seed), NormalDist()
-    plant, moved = HeldLag(0.42, 3.2, 0.9, SCAN), []
+    plant, moved = HeldLag(0.42, 3.2, truth.dead_time, SCAN), []
     integral, found = 0.0, []
     for k in range(count):
         time = k * SCAN
         setpoint = [value for at, value in setpoints if time >= at][-1]
         pv = 21.5 + plant.value + 0.15 * normal.inv_cdf(draw.random())
         error = 100.0 * (setpoint - pv) / PV_SPAN
-        integral += GAIN * SCAN / INTEGRAL_TIME * error
-        op = (GAIN * error + integral) * OP_SPAN / 100.0
+        integral += truth.gain * SCAN / truth.integral_time * error
+        op = (truth.gain * error + integral) * OP_SPAN / 100.0
         found.append((time, setpoint, pv, 50.0 + op))
-        moved.append(valve(op))
+        moved.append(valve(op) + (truth.upset[1] if time >= truth.upset[0] else 0.0))
         plant.run(moved, k)
     return found
 
@@ -77,12 +91,12 @@ def _text(table: list[tuple[float, float, float, float]]) -> str:
     return "\n".join(["time_s,sp,pv,op,mode", *lines]) + "\n"
 
 
-def run_record() -> str:
+def run_record(truth: Truth | None = None) -> str:
     """Setpoint moves with the settings of the case."""
     moves = ((0.0, 21.5), (60.0, 24.5), (150.0, 19.5), (240.0, 21.5))
-    return _text(rows(661, moves, healthy, 205))
+    return _text(rows(661, moves, healthy, 205, truth or Truth()))
 
 
 def swing_record() -> str:
     """The same loop a year on, its valve sticking."""
-    return _text(rows(1801, ((0.0, 21.5), (30.0, 22.5)), sticking(6.0, 3.0), 206))
+    return _text(rows(1801, ((0.0, 21.5), (30.0, 22.5)), sticking(6.0, 3.0), 206, Truth()))

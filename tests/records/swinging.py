@@ -93,8 +93,14 @@ def made(seed: int, size: int) -> Iterator[Swinging]:
         yield Swinging(cause, record, Known(dead_time_s=dead, integral_time_s=integral), told)
 
 
-def verdicts(seed: int, size: int) -> Iterator[tuple[str, str, str, bool]]:
-    """(cause, verdict on the valve, cause named, whether it swings) of each."""
+def swinging_verdicts(seed: int, size: int) -> Iterator[tuple[float, str]]:
+    """1 for each healthy valve that is called sticking, and each sticking one called healthy."""
     for one in made(seed, size):
-        found = diagnose(one.record, one.known)
-        yield one.cause, found.valve_verdict, found.likely_cause, found.present
+        verdict = diagnose(one.record, one.known).valve_verdict
+        wrong = "no stick-slip" if one.cause == "valve" else "stick-slip"
+        yield float(verdict == wrong), f"{one.told}: {verdict}"
+
+
+def blamed(size: int, seed: int) -> tuple[float, list[str]]:
+    """Share of the valves that are judged wrong; undecided is not wrong."""
+    return sum(wrong for wrong, _ in swinging_verdicts(seed, size)) / size, []

@@ -273,7 +273,7 @@ OBSERVATION: Final[tuple[Option, ...]] = (
 PLAN: Final[tuple[Option, ...]] = (
     Option("--noise", "SD", "standard deviation of PV at rest, PV units", "needed", ("pv.noise",)),
     Option("--max-pv-change", "X", "how far PV may leave its start, PV units", "needed"),
-    Option("--interval", "TIME", "between rows of the log", "a fortieth of the slowest time"),
+    Option("--interval", "TIME", "between rows of the log", "a twentieth of the slowest time"),
     Option(
         "--certainty",
         "PERCENT",

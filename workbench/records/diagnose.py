@@ -90,7 +90,7 @@ class Diagnosis:
     """Lost motion [% of OP range]."""
     minimum_variance_index: Figure
     """1 is minimum variance."""
-    time_at_limit_percent: float
+    time_at_limit_percent: Figure
     time_in_auto_percent: Figure
     modes: dict[str, float]
     """Mode -> share of the time [%]."""
@@ -305,11 +305,12 @@ class _Parts:
     def cause(self) -> Cause:
         """The likely cause; fills in the evidence."""
         sensor = self._about_sensor()
-        if self.at_limit > 10.0:
-            words = f"OP stood at a limit for {text(self.at_limit, '%', 2)} of the time"
-            self._say("tuning", False, f"{words}, where no setting moves it")
         if not self.swings:
             return self._steady(sensor)
+        limited = self.at_limit.value or 0.0
+        if limited > 10.0:
+            words = f"OP stood at a limit for {text(limited, '%', 2)} of the time"
+            self._say("tuning", False, f"{words}, where no setting moves it")
         first = self.swings[0]
         seen = f"PV swings every {time_text(first.period_s, 3)}, regularity " + text(
             first.regularity, digits=2
@@ -329,9 +330,8 @@ class _Parts:
             return "valve"
         if own == "upset":
             return "upset"
-        if own == "tuning" and not (self.shape and self.shape.verdict == "stick-slip"):
-            return "tuning"
-        return "undecided"
+        # The valve must be ruled out first: a period alone fits too many loops.
+        return "tuning" if own == "tuning" and self.verdict == "no stick-slip" else "undecided"
 
     def _steady(self, sensor: bool) -> Cause:
         if sensor:
@@ -433,14 +433,18 @@ def _spikes(pv: Array) -> int:
     return int(np.count_nonzero(alike & (np.minimum(np.abs(up), np.abs(down)) > 10.0 * usual)))
 
 
-def _at_limit(record: Record, known: Known) -> float:
+def _at_limit(record: Record, known: Known) -> Figure:
     """Share of the time that OP stood at a limit [%]."""
     low = known.op_low if known.op_min is None else known.op_min
     high = known.op_high if known.op_max is None else known.op_max
-    near = 1e-4 * (known.op_high - known.op_low)
+    span = known.op_high - known.op_low
+    if float(record.op.min()) < low - 0.02 * span or float(record.op.max()) > high + 0.02 * span:
+        reason = f"OP goes beyond {text(low)} to {text(high)}: give its range, or a case"
+        return Figure(None, reason)
+    near = 1e-4 * span
     there = (record.op <= low + near) | (record.op >= high - near)
     lasting = np.append(np.diff(record.time), 0.0)
-    return 100.0 * float(lasting[there].sum()) / record.duration
+    return Figure.of(100.0 * float(lasting[there].sum()) / record.duration)
 
 
 def _notes(record: Record, known: Known, stretch: Stretch | None) -> list[Note]:

@@ -463,7 +463,7 @@ def _lagged(series: Array, keep: float) -> Array:
 def _candidates(best: _Fit, data: _Data) -> list[Recognised]:
     """The gains in every form that can hold them, the plainest setpoint weight first."""
     gains = best.gains
-    held: list[tuple[float, Recognised]] = []
+    held: list[tuple[bool, Recognised]] = []
     for form in FORMS:
         try:
             settings, weight = _in_form(form, gains, data.moves)
@@ -472,7 +472,8 @@ def _candidates(best: _Fit, data: _Data) -> list[Recognised]:
         plainness = 0.0 if not data.moves else min(abs(weight - 1.0), abs(weight))
         if data.moves and not -0.02 <= weight <= 1.02:
             continue
-        held.append((round(plainness, 2), _recognised(form, settings, best, data)))
+        # A weight of 0 or 1 is what people set; of others none is likelier than the next.
+        held.append((plainness > 0.03, _recognised(form, settings, best, data)))
     held.sort(key=lambda pair: pair[0])
     forms = [one.form for _, one in held]
     return [

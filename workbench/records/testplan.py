@@ -25,7 +25,7 @@ Array = NDArray[np.float64]
 
 HOLD: Final = 5.0
 """Time constants that a level is held after the dead time; common practice is 4 to 5."""
-_INTERVALS: Final = 40.0
+_INTERVALS: Final = 20.0
 """Rows in a time constant where no logging interval is given."""
 _MOST_ROUNDS: Final = 10
 _CLEAR: Final = 5.0
@@ -109,7 +109,7 @@ def plan_test(
     lost_motion
         Deadband and stick of the valve together [OP unit]; the bump is twice that at least.
     interval
-        Between rows of the log [s]; a fortieth of the slowest time where none is given.
+        Between rows of the log [s]; a twentieth of the slowest time where none is given.
     certainty
         Wanted standard error [%] of gain and time constants, and of the dead time in percent of
         dead time and slowest time constant together.  Without it the bump is as large as allowed.
@@ -146,7 +146,9 @@ def plan_test(
         least = max(_CLEAR * noise / swing, 2.0 * lost_motion)
         bump = min(largest, max(largest * worst / certainty, least))
         while worst > certainty and rounds < _MOST_ROUNDS:
-            rounds += 1
+            # Each round tells about as much as the one before, less what level and drift take.
+            wanted = math.ceil(rounds * 0.97 * (worst / certainty) ** 2)
+            rounds = min(max(rounds + 1, wanted), _MOST_ROUNDS)
             worst = _worst(model, errors_of(model, _rounds(largest, rounds, hold), step, row_noise))
     bump = _rounded_within(bump, largest, up=certainty is not None)
     levels = _rounds(bump, rounds, hold)

@@ -51,7 +51,7 @@ def diagnose_data(found: Diagnosis) -> Json:
     if found.upsets is None:
         data["upsets_reason"] = _NO_UPSETS
     put(data, "minimum_variance_index", found.minimum_variance_index)
-    data["time_at_limit_percent"] = found.time_at_limit_percent
+    put(data, "time_at_limit_percent", found.time_at_limit_percent)
     put(data, "time_in_auto_percent", found.time_in_auto_percent)
     data["modes_percent"] = {harmless(mode, 40): share for mode, share in found.modes.items()}
     data["likely_cause"] = found.likely_cause
@@ -128,7 +128,7 @@ def _loop_rows(found: Diagnosis) -> Rows:
         index += " (1 is the least variance that feedback can leave)"
     rows: Rows = [
         ("minimum variance index", index),
-        ("time at a limit", text(found.time_at_limit_percent, "%", 3)),
+        ("time at a limit", figure_words(found.time_at_limit_percent, "%")),
         ("time in automatic", figure_words(found.time_in_auto_percent, "%")),
     ]
     if len(found.modes) > 1:
