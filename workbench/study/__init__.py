@@ -36,6 +36,8 @@ from workbench.study.prediction import (
 )
 from workbench.study.proposals import Proposal, RelayTest, Wish, propose, take
 from workbench.study.records import Columns, SheetCheck, diagnose, plan_test, recognise
+from workbench.study.sheet import Retune, Stage, retune
+from workbench.study.survey import Surveyed, survey
 
 __all__ = [
     "HANDOVER",
@@ -53,8 +55,11 @@ __all__ = [
     "Reduced",
     "RelayTest",
     "Response",
+    "Retune",
     "RunFigures",
     "SheetCheck",
+    "Stage",
+    "Surveyed",
     "Trend",
     "Wish",
     "accept",
@@ -80,6 +85,8 @@ __all__ = [
     "respond",
     "respond_to_record",
     "response_horizon",
+    "retune",
+    "survey",
     "take",
     "units_of",
     "with_observation",
