@@ -169,7 +169,7 @@ def _case_beside(given: Given) -> Case:
             raise problem("is given beside a CASE", "name the case once", key="--case")
         path = given.operands[1]
     case = read_case(path).case if path else new_case(INLINE_TAG)
-    changes = given.changes()
+    changes = given.settings() | given.changes()
     return edit_all(case, changes) if changes else case
 
 
