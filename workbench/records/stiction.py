@@ -21,6 +21,8 @@ Verdict = Literal["stick-slip", "no stick-slip", "undecided"]
 
 _HARMONICS: Final = 8
 """What of a swing tells its shape; above it is noise."""
+_MOST_ROWS: Final = 20_000
+"""Rows that the search for lost motion looks at."""
 
 
 @dataclass(frozen=True)
@@ -287,12 +289,18 @@ def deadband(pv: Array, op: Array) -> Figure:
     Figure
         Width [OP unit]; none, with the reason, where no width explains PV better than 0 does.
 
+    Notes
+    -----
+    The first 20 000 rows are looked at.  An upset that PV shows before OP answers it can pass for
+    lost motion: worth telling where the shapes do not speak against it.
+
     Source
     ------
     M. Jelali, "Estimation of valve stiction in control loops using separable least-squares and
     global search algorithms", J. Process Control 18, 2008, 632-642: the separation (from memory);
     first order and a grid in place of its search.
     """
+    pv, op = pv[:_MOST_ROWS], op[:_MOST_ROWS]
     moved = float(np.ptp(op))
     if len(pv) < 50 or not moved > 0.0 or not float(np.ptp(pv)) > 0.0:
         return Figure(None, "the record is too short, or OP or PV stands still")

@@ -36,6 +36,7 @@ Floats = NDArray[np.float64]
 Verdict = Literal["as predicted", "different", "cannot tell"]
 
 FEWEST_ROWS: Final = 40
+_MOST_SCANS: Final = 50_000
 _CLEAR: Final = 4.0
 """Noise deviations by which SP must move, or PV for an upset, for a record to tell anything."""
 _CLOSE: Final = 0.12
@@ -100,6 +101,10 @@ def observe(source: Columns, case: Case) -> Observation:
     stretch, reason = _stretch(record, case)
     if stretch is None:
         return _cannot_tell(reason)
+    scans = len(stretch.pv) * stretch.interval / (loop.scan or stretch.interval)
+    if scans > _MOST_SCANS:
+        words = f"{scans:.0f} scans are more than the {_MOST_SCANS} that are played"
+        return _cannot_tell(f"{words}: cut the record down with --from and --to")
     play = _Play(case, loop, stretch)
     base = play.run()
     if base is None:
