@@ -321,11 +321,13 @@ class _Shifted:
         low, high = grid[max(at - 1, 0)], grid[min(at + 1, len(grid) - 1)]
         for _ in range(24):
             inner = [low + 0.382 * (high - low), low + 0.618 * (high - low)]
-            first, second = (self.solve(integral, place, time) for time in inner)
-            if first is None or second is None:
+            tried = [self.solve(integral, place, time) for time in inner]
+            # Where there is no fit, the parts work against each other: not that way.
+            first, second = (math.inf if one is None else one.misfit for one in tried)
+            if first == second == math.inf:
                 break
-            low, high = (low, inner[1]) if first.misfit < second.misfit else (inner[0], high)
-            fit = min(fit, first, second, key=_misfit)
+            low, high = (low, inner[1]) if first < second else (inner[0], high)
+            fit = min((fit, *(one for one in tried if one is not None)), key=_misfit)
         return fit
 
     def _derivative(self, filter_time: float) -> tuple[Column, Column]:
@@ -470,7 +472,8 @@ def _candidates(best: _Fit, data: _Data) -> list[Recognised]:
         except NotApplicable:
             continue
         plainness = 0.0 if not data.moves else min(abs(weight - 1.0), abs(weight))
-        if data.moves and not -0.02 <= weight <= 1.02:
+        # A form that would need a weight beyond 0 to 1 is not it; one form always stays.
+        if form == "series" and data.moves and not -0.02 <= weight <= 1.02:
             continue
         # A weight of 0 or 1 is what people set; of others none is likelier than the next.
         held.append((plainness > 0.03, _recognised(form, settings, best, data)))
