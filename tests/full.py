@@ -36,6 +36,8 @@ from tests.model.test_stability import verdicts
 from tests.model.test_transfer import laws, limits, step_responses
 from tests.plain import sampled_pv
 from tests.records.damage import damaged_records
+from tests.records.replaying import recognised
+from tests.records.swinging import blamed
 from tests.sim.campaigns import (
     analogue_by_mpmath,
     changed_loops,
@@ -476,6 +478,8 @@ CAMPAIGNS: Final[dict[str, Campaign]] = {
         _judged(searched, 41, 0.01, "cost above the best of a grid, as a share"), 2, 108
     ),
     "fits of made records": Campaign(fitted_records, 10, 400),
+    "controllers recognised": Campaign(_judged(recognised, 301, 0.0, "share wrong"), 3, 200),
+    "why loops swing": Campaign(_judged(blamed, 302, 0.05, "share of valves judged wrong"), 3, 300),
     "damaged case files": Campaign(damaged_files, 100, 20_000),
     "case files kept": Campaign(kept_files, 20, 2000),
     "damaged records": Campaign(

@@ -16,6 +16,8 @@ from datetime import datetime, timedelta
 from pathlib import Path
 from statistics import NormalDist
 
+from tests import make_runs
+
 FOLDER = Path(__file__).parent.parent / "cases"
 
 INVENTED = (
@@ -342,6 +344,8 @@ def files() -> dict[str, bytes]:
         "TIC-307_bump.csv": dryer_record(),
         "LIC-112_bump.csv": tank_record(),
         "FIC-204_bump.csv": wash_record(),
+        "FIC-204_run.csv": make_runs.run_record(),
+        "FIC-204_swing.csv": make_runs.swing_record(),
     }
     sha256 = {name: hashlib.sha256(text.encode()).hexdigest() for name, text in records.items()}
     tank = TANK_CASE.format(slope=-0.0007, dead_time=7, sha256=sha256["LIC-112_bump.csv"])

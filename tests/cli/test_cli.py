@@ -163,7 +163,8 @@ def test_versions_are_printed(run: Run) -> None:
         (
             [],
             "screen",
-            "assess, predict, respond, fit, propose, convert, check, history, survey, sheet or new",
+            "assess, predict, respond, fit, plan, diagnose, recognise, observe, propose, convert,"
+            " check, history, survey, sheet or new",
         ),
         (["."], "screen", "needs a terminal"),
         (["--asci"], "--asci", "did you mean --ascii?"),

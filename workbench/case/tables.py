@@ -245,6 +245,16 @@ class Revision(_Table):
     phase_margin_deg: float | None = quantity(
         "phase margin predicted then", "number", "deg", default=None
     )
+    measured_iae: float | None = quantity(
+        "integral of the error in the record that was observed",
+        "number",
+        "PV s",
+        low=0,
+        default=None,
+    )
+    measured_period: Amount | None = quantity(
+        "period with which PV swung in that record", "duration", above=0, default=None
+    )
     reference: str = quantity(
         "written approval that the entry rests on, like the number of a management-of-change form",
         "text",

@@ -2,17 +2,24 @@
 
 from __future__ import annotations
 
+import getpass
+import os
 import time
+from dataclasses import replace
+from datetime import datetime
 from typing import TYPE_CHECKING, Final, TypedDict
 
 from workbench import report
-from workbench.cli.answer import Answer, Status
+from workbench.cli.answer import INLINE_TAG, Answer, Status, loop_of
 from workbench.cli.options import Given
 from workbench.cli.output import narrate, progress, width
 from workbench.errors import problem
+from workbench.units import harmless
 
 if TYPE_CHECKING:
+    from workbench.case.case import Case
     from workbench.records.record import Reading
+    from workbench.study import Columns
 
 
 class _Asked(TypedDict):
@@ -107,3 +114,131 @@ def _reading(given: Given) -> Reading:
         "end": given.word("--to"),
         "leave_out": tuple(zip(windows[::2], windows[1::2], strict=True)),
     }
+
+
+def plan(given: Given) -> Answer:
+    """A bump test that is worth its disturbance."""
+    from workbench import study
+
+    allowed = given.number("--max-pv-change", above=0.0)
+    if allowed is None:
+        mend = "say how far PV may leave its start, in PV units"
+        raise problem("is missing", mend, key="--max-pv-change")
+    interval, certainty = given.seconds("--interval"), given.number("--certainty", above=0.0)
+    case = loop_of(given)
+    with progress("planning"):
+        found = study.plan_test(case, max_pv_change=allowed, interval=interval, certainty=certainty)
+    units = study.units_of(case)
+    return Answer(
+        report.plan_text(found, units, width()),
+        report.plan_data(found, units),
+        Status.DONE if found.enough else Status.NO,
+    )
+
+
+def diagnose(given: Given) -> Answer:
+    """Why does this loop swing."""
+    from workbench import study
+
+    dead_time = given.seconds("--dead-time", or_zero=True)
+    integral_time = given.seconds("--integral-time")
+    case = _case_beside(given)
+    with progress("diagnosing"):
+        found = study.diagnose(
+            _columns(given),
+            case,
+            dead_time=dead_time,
+            integral_time=integral_time,
+            integrating="--integrating" in given,
+            knows_range="--case" in given or "--pv-range" in given,
+        )
+    return Answer(
+        report.diagnose_text(found, width()),
+        report.diagnose_data(found),
+        Status.NO if found.likely_cause == "undecided" else Status.DONE,
+    )
+
+
+def recognise(given: Given) -> Answer:
+    """Is the controller what its sheet says."""
+    from workbench import study
+
+    scan = given.seconds("--scan")
+    case = _case_beside(given)
+    with progress("replaying"):
+        check = study.recognise(_columns(given), case, scan=scan)
+    no = not check.found.candidates or check.as_in_case is False
+    return Answer(
+        report.recognise_text(check, width()),
+        report.recognise_data(check),
+        Status.NO if no else Status.DONE,
+    )
+
+
+def observe(given: Given) -> Answer:
+    """Did the plant do what was predicted."""
+    from workbench import study
+    from workbench.case.case import edit_all
+    from workbench.case.files import read_case, save_case
+
+    path, record = given.operands
+    file = read_case(path)
+    # The scenario of the case is what was predicted for, not what happened in the record.
+    case = replace(file.case, scenario=type(file.case.scenario)())
+    changes = given.settings() | given.changes()
+    case = edit_all(case, changes) if changes else case
+    with progress("playing"):
+        found = study.observe(_columns(given, record), case)
+    saved = ""
+    if "--save" in given:
+        kept = study.with_observation(
+            file.case,
+            found,
+            record=os.path.basename(record),
+            who=given.word("--who") or _user(),
+            now=datetime.now().astimezone().replace(microsecond=0),
+        )
+        save_case(file, kept)
+        saved = f"\n\nAn observed entry is added to {harmless(path)}."
+    units = study.units_of(case)
+    return Answer(
+        report.observe_text(found, units, width()) + saved,
+        report.observe_data(found, units) | {"saved": bool(saved)},
+        Status.DONE if found.verdict == "as predicted" else Status.NO,
+    )
+
+
+def _user() -> str:
+    """Who is logged in, as far as the system knows."""
+    try:
+        return getpass.getuser()
+    except (KeyError, OSError, ImportError):
+        return ""
+
+
+def _columns(given: Given, path: str = "") -> Columns:
+    """The record of the command and how it is to be read."""
+    from workbench.study import Columns
+
+    names = ("time", "pv", "op", "sp", "mode")
+    return Columns(
+        path or given.file,
+        **{name: given.word(f"--{name}") for name in names},
+        start=given.word("--from"),
+        end=given.word("--to"),
+    )
+
+
+def _case_beside(given: Given) -> Case:
+    """The case that a record is looked at with, and the ranges given in its place."""
+    from workbench.case.case import edit_all, new_case
+    from workbench.case.files import read_case
+
+    path = given.word("--case")
+    if len(given.operands) > 1:
+        if path:
+            raise problem("is given beside a CASE", "name the case once", key="--case")
+        path = given.operands[1]
+    case = read_case(path).case if path else new_case(INLINE_TAG)
+    changes = given.settings() | given.changes()
+    return edit_all(case, changes) if changes else case

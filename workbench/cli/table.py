@@ -147,6 +147,13 @@ PLANT_ALONE: Final = tuple(
 )
 """The inline options that tell of a plant without its loop."""
 
+INLINE_PLANT: Final = tuple(
+    option
+    for option in INLINE
+    if option in PLANT_ALONE or option.name in ("--op-limits", "--start")
+)
+"""The inline options that tell of a plant and of where it stands."""
+
 JSON: Final = Option("--json", "", "one JSON object in place of the text")
 SET: Final = Option(
     "--set",
@@ -266,6 +273,59 @@ FIT: Final[tuple[Option, ...]] = (
     Option("--noise-model", "auto|white|correlated", "how the noise is described", "auto"),
     Option("--no-drift", "", "PV has no drift of its own in the record"),
     *FOLLOWING,
+)
+RECORD: Final[tuple[Option, ...]] = (
+    Option("--time", "COLUMN", "column of time", "time_s or timestamp"),
+    Option("--pv", "COLUMN", "column of the process variable", "pv"),
+    Option("--op", "COLUMN", "column of the controller output", "op"),
+    Option("--sp", "COLUMN", "column of the setpoint", "sp"),
+    Option("--mode", "COLUMN", "column of the controller's mode", "mode"),
+    Option("--from", "STAMP", "first row to use", "the first of the record"),
+    Option("--to", "STAMP", "last row to use", "the last of the record"),
+)
+"""What is read of a record taken in normal running."""
+BESIDE: Final[tuple[Option, ...]] = (
+    Option("--case", "CASE", "the case of this loop: its ranges, limits, plant and settings"),
+    *(
+        replace(option, inline=False)
+        for option in _LOOP
+        if option.name in ("--pv-range", "--op-range", "--op-limits")
+    ),
+)
+"""What is known of the loop beside its record."""
+REPLAY_SCAN: Final = Option(
+    "--scan", "TIME", "execution interval of the controller", "that of the case, or as OP changes"
+)
+DIAGNOSIS: Final[tuple[Option, ...]] = (
+    Option("--dead-time", "TIME", "of the plant", "that of the case"),
+    Option("--integral-time", "TIME", "of the controller", "that of the case"),
+    Option("--integrating", "", "the plant is integrating, like most levels"),
+)
+OBSERVATION: Final[tuple[Option, ...]] = (
+    Option(
+        "--load-step",
+        "X",
+        "a known upset in the record, OP units or those of the load formula's input",
+        "none",
+        ("scenario.load_step",),
+    ),
+    Option(
+        "--load-at", "TIME", "when it came, from the first row used", "0 s", ("scenario.load_at",)
+    ),
+    Option("--save", "", "adds an observed entry to the history of the CASE"),
+    Option("--who", "NAME", "who makes that entry", "whoever is logged in"),
+)
+PLAN: Final[tuple[Option, ...]] = (
+    Option("--noise", "SD", "standard deviation of PV at rest, PV units", "needed", ("pv.noise",)),
+    Option("--max-pv-change", "X", "how far PV may leave its start, PV units", "needed"),
+    Option("--interval", "TIME", "between rows of the log", "a twentieth of the slowest time"),
+    Option(
+        "--certainty",
+        "PERCENT",
+        "standard error wanted of gain and time constants, and of the dead time in percent of dead"
+        " time and slowest time constant together",
+        "as good as the PV change allows",
+    ),
 )
 WISHES: Final[tuple[Option, ...]] = (
     Option("--for", "load|setpoint", "what the settings are for", "load"),
@@ -388,6 +448,39 @@ COMMANDS: Final[dict[str, Grammar]] = {
             "workbench fit cases/TIC-307_bump.csv",
             least=1,
             most=100,
+        ),
+        Grammar(
+            "plan",
+            "Sizes a bump test: how large, how long, and what it will tell.",
+            "[CASE]",
+            (*PLAN, SET, *INLINE_PLANT, JSON),
+            "workbench plan cases/TIC-307.toml --max-pv-change 4 --certainty 3",
+        ),
+        Grammar(
+            "diagnose",
+            "Why does this loop swing: tuning, valve, an upset from outside, the sensor.",
+            "RECORD.csv",
+            (*RECORD, *DIAGNOSIS, *BESIDE, SET, JSON),
+            "workbench diagnose cases/FIC-204_swing.csv --case cases/FIC-204.toml",
+            least=1,
+        ),
+        Grammar(
+            "recognise",
+            "Which controller made this record: is it the one that its sheet says.",
+            "RECORD.csv [CASE]",
+            (*RECORD, REPLAY_SCAN, *BESIDE, SET, JSON),
+            "workbench recognise cases/FIC-204_run.csv cases/FIC-204.toml",
+            least=1,
+            most=2,
+        ),
+        Grammar(
+            "observe",
+            "Did the plant do what was predicted: a record with the case's settings, against it.",
+            "CASE RECORD.csv",
+            (*RECORD, *OBSERVATION, SET, JSON),
+            "workbench observe cases/FIC-204.toml cases/FIC-204_run.csv",
+            least=2,
+            most=2,
         ),
         Grammar(
             "propose",

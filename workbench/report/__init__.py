@@ -5,6 +5,7 @@ number wears its unit, and lines are wrapped to the width that is asked for.  JS
 of plain values: a figure that does not exist is `None` with its reason beside it.
 """
 
+from workbench.report.diagnoses import diagnose_data, diagnose_text
 from workbench.report.families import distance_lines
 from workbench.report.files import (
     between_data,
@@ -26,6 +27,9 @@ from workbench.report.loops import (
     response_csv,
     trend_csv,
 )
+from workbench.report.observations import observe_data, observe_text
+from workbench.report.plans import plan_data, plan_text
+from workbench.report.recognition import recognise_data, recognise_text
 from workbench.report.settings import (
     convert_data,
     convert_text,
@@ -50,6 +54,8 @@ __all__ = [
     "check_text",
     "convert_data",
     "convert_text",
+    "diagnose_data",
+    "diagnose_text",
     "distance_lines",
     "family_words",
     "fit_data",
@@ -58,10 +64,16 @@ __all__ = [
     "history_text",
     "is_stable",
     "live_text",
+    "observe_data",
+    "observe_text",
+    "plan_data",
+    "plan_text",
     "predict_data",
     "predict_text",
     "propose_data",
     "propose_text",
+    "recognise_data",
+    "recognise_text",
     "respond_data",
     "respond_text",
     "response_csv",

@@ -99,6 +99,10 @@ def _entry_data(entry: Revision, number: int) -> Json:
         value = getattr(entry, key)
         if value is not None:
             data[key] = float(value)
+    if entry.measured_iae is not None:
+        data["measured_iae"] = float(entry.measured_iae)
+    if entry.measured_period is not None:
+        data["measured_period_s"] = float(entry.measured_period.seconds)
     data["program"] = entry.program
     return data
 
@@ -130,6 +134,13 @@ def history_text(case: Case, units: Mapping[str, str], width: int) -> str:
         ]
         if predicted:
             lines.append(wrapped(f"predicted: {', '.join(predicted)}", width, "    "))
+        measured = []
+        if entry.measured_iae is not None:
+            measured.append(f"IAE {text(entry.measured_iae, '{pv} s'.format(**units))}")
+        if entry.measured_period is not None:
+            measured.append(f"period {entry.measured_period}")
+        if measured:
+            lines.append(wrapped(f"measured: {', '.join(measured)}", width, "    "))
         if entry.reference:
             lines.append(wrapped(f"reference: {entry.reference}", width, "    "))
         if entry.why:

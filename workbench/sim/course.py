@@ -134,7 +134,7 @@ def setpoints(loop: Loop, events: Events, clock: Clock, scans: int) -> Array:
 def _setpoint(loop: Loop, events: Events, clock: Clock, scans: int) -> Array | Step:
     """The setpoint as the algorithm takes it at each scan [%]."""
     plain = loop.setpoint_rate is None and not loop.setpoint_filter
-    if plain and not events.setpoint_ramp:
+    if plain and not (events.setpoint_ramp or events.setpoint_record):
         return Step(events.setpoint_step, events.setpoint_at)
     time: Array = np.arange(float(scans)) * clock.scan
     # A step at the instant of a scan is seen by it, whatever rounding says.

@@ -236,6 +236,9 @@ class Events:
     seed: int = 0
     setpoint_ramp: float = 0.0
     """Time in which the setpoint moves [s]."""
+    setpoint_record: tuple[tuple[float, float], ...] = ()
+    """A setpoint that was recorded, in place of the step: instants [s], and what it is from there
+    on [% of PV span]."""
     load_shape: str = "step"
     """step, ramp, pulse, sine or record."""
     load_time: float = 0.0
@@ -264,6 +267,12 @@ class Events:
     @property
     def setpoint(self) -> Signal:
         """The setpoint over time [%]."""
+        if self.setpoint_record:
+            before = [0.0, *(value for _, value in self.setpoint_record)]
+            return tuple(
+                Step(value - last, time)
+                for (time, value), last in zip(self.setpoint_record, before, strict=False)
+            )
         if not self.setpoint_ramp:
             return (Step(self.setpoint_step, self.setpoint_at),)
         slope, end = self.setpoint_step / self.setpoint_ramp, self.setpoint_at + self.setpoint_ramp
@@ -292,6 +301,7 @@ class Events:
         """Nothing happens but one step of each, so that the analogue loop stays one and linear."""
         return (
             not self.setpoint_ramp
+            and not self.setpoint_record
             and self.load_shape == "step"
             and self.manual_at is self.change_at is self.settings_at is None
         )

@@ -49,6 +49,7 @@ from workbench.study.keep import (
     record_change,
 )
 from workbench.study.loop import action_of, controller_of, loop_of, plant_of, units_of
+from workbench.study.observation import Observation, RunFigures, observe, with_observation
 from workbench.study.prediction import (
     InnerTrend,
     Prediction,
@@ -60,6 +61,7 @@ from workbench.study.prediction import (
     response_horizon,
 )
 from workbench.study.proposals import LIMITS, Proposal, propose, take
+from workbench.study.records import Columns, SheetCheck, diagnose, plan_test, recognise
 from workbench.study.sheet import Retune, Stage, retune
 from workbench.study.survey import Surveyed, survey
 from workbench.study.tolerance import LIMIT as TOLERANCE_LIMIT
@@ -77,6 +79,7 @@ __all__ = [
     "Assessment",
     "Axis",
     "Bump",
+    "Columns",
     "Conversion",
     "Distance",
     "Evaluation",
@@ -87,6 +90,7 @@ __all__ = [
     "LiveTest",
     "LoopFigures",
     "Member",
+    "Observation",
     "PlantFigures",
     "Prediction",
     "Proposal",
@@ -94,6 +98,8 @@ __all__ = [
     "RelayTest",
     "Response",
     "Retune",
+    "RunFigures",
+    "SheetCheck",
     "Source",
     "Stage",
     "Surveyed",
@@ -112,6 +118,7 @@ __all__ = [
     "chosen_candidate",
     "controller_of",
     "convert",
+    "diagnose",
     "drawn_plants",
     "edit_wish",
     "evaluate",
@@ -123,10 +130,13 @@ __all__ = [
     "loop_of",
     "members",
     "narrowed",
+    "observe",
+    "plan_test",
     "plant_of",
     "predict",
     "propose",
     "read_records",
+    "recognise",
     "record_change",
     "reductions",
     "respond",
@@ -140,4 +150,5 @@ __all__ = [
     "trade_off",
     "units_of",
     "with_family",
+    "with_observation",
 ]

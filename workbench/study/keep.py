@@ -136,7 +136,7 @@ def record_change(
         controller=controller_of(case),
         reference=reference.strip(),
         program=__version__,
-        **{name: rounded(value, 6) for name, value in figures.items()},
+        **{name: rounded(value, 6) for name, value in figures.items()},  # type: ignore[arg-type]
     )
     return case.with_entry(entry)
 
