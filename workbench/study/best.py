@@ -12,6 +12,7 @@ from workbench.model.feedback import Loop
 from workbench.model.pid import Controller, Gains, settings_like
 from workbench.model.structures import Structure
 from workbench.model.sweep import Limits
+from workbench.study.family import members
 from workbench.study.loop import loop_of
 from workbench.study.prediction import steps_of
 from workbench.study.structure import has_one_scan
@@ -142,8 +143,8 @@ def searched_form(case: Case) -> str:
 
 
 def _loops(case: Case) -> tuple[Loop, ...]:
-    """A loop for each plant that the settings are for: the nominal one."""
-    return (_alone(loop_of(case)),)
+    """A loop for each plant that the settings are for, the nominal one first."""
+    return tuple(_alone(loop_of(case, member.plant)) for member in members(case))
 
 
 def _alone(loop: Loop) -> Loop:

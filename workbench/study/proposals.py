@@ -352,7 +352,22 @@ def _over_limits(case: Case, row: Proposal, wish: Wish) -> list[str]:
         elif figure.value > most * _ROUNDING:
             found = text(figure.value, limit.unit(case), digits=3)
             over.append(f"{limit.name} {found} is above the limit of {plain(most)}")
-    return over
+    return [*over, *_over_in_family(row, wish)]
+
+
+def _over_in_family(row: Proposal, wish: Wish) -> list[str]:
+    """Plants of the case's family that a row does not keep stable, or within the limit on Ms."""
+    family = row.family
+    if family is None or family.reason:
+        return []
+    if family.stable_percent < 100.0:
+        share = text(100.0 - family.stable_percent, "%", digits=3)
+        return [f"not stable for {share} of the family"]
+    worst = family.figures["max_sensitivity"].worst.value
+    if worst is None or worst <= wish.max_sensitivity * _ROUNDING:
+        return []
+    limit = plain(wish.max_sensitivity)
+    return [f"the worst Ms of the family, {text(worst, digits=3)}, is above the limit of {limit}"]
 
 
 def take(case: Case, proposal: Proposal) -> Case:
