@@ -18,11 +18,11 @@ from typing import TYPE_CHECKING, Any, Final
 import numpy as np
 from numpy.typing import NDArray
 
-from workbench.units import TIME_UNITS, harmless
+from workbench.units import TIME_UNITS, harmless, text
 
 if TYPE_CHECKING:
     from workbench.case.case import Case
-    from workbench.study import Trend
+    from workbench.study import Tolerance, Trend
 
 Floats = NDArray[np.float64]
 
@@ -131,6 +131,109 @@ def draw(
     return sheet.picture()
 
 
+@dataclass(frozen=True)
+class Field:
+    """A map: for each pair of ratios one of a few kinds of cell."""
+
+    kinds: NDArray[np.uint8]
+    """Index into GROUNDS for each cell, (rows, columns); the first row is drawn at the bottom."""
+    x: Floats
+    """Ratio of each column, (columns,), rising."""
+    y: Floats
+    """Ratio of each row, (rows,), rising."""
+    here: tuple[int, int]
+    """Row and column of the present point."""
+    x_label: str
+    y_label: str
+    names: tuple[str, ...]
+    """What each kind of cell means, for the legend."""
+
+
+_RATIO_GUTTER: Final = 5
+"""Columns of the labels of a map's rows."""
+
+
+def map_cells(width: int, height: int) -> tuple[int, int]:
+    """Columns and rows of the map that just fills a picture; odd, so that 1 has a cell."""
+    columns, rows = max(5, width - _RATIO_GUTTER - 1), max(5, height - 3)
+    return columns - 1 + columns % 2, rows - 1 + rows % 2
+
+
+def map_size(columns: int, rows: int) -> tuple[int, int]:
+    """Width and height of the picture of so many cells."""
+    return columns + _RATIO_GUTTER + 1, rows + 3
+
+
+def tolerance_field(found: Tolerance) -> Field:
+    """The map of plant errors as it is drawn."""
+    above = found.max_sensitivity > found.limit
+    return Field(
+        above.astype(np.uint8) + (~found.stable).astype(np.uint8),
+        found.gain_ratios,
+        found.other_ratios,
+        found.here,
+        "plant gain x",
+        f"{found.axis} x",
+        (f"Ms up to {text(found.limit, digits=3)}", "above", "unstable"),
+    )
+
+
+def draw_map(field: Field, width: int, height: int, *, ascii_only: bool = False) -> Picture:
+    """Draw a map with its axes and its legend.
+
+    Parameters
+    ----------
+    field
+        With as many cells as `map_cells` says, or fewer; what has no room is left out.
+    width, height
+        Size of the picture in characters.
+    ascii_only
+        Use no character above 0x7e.
+    """
+    sheet = _Sheet(width, height, ascii_only)
+    rows, columns = field.kinds.shape
+    gutter, bottom = _RATIO_GUTTER, rows
+    # Above the field one line: what the rows are, and what the characters mean.
+    sheet.text(0, 0, field.y_label)
+    column = max(gutter + 1, len(field.y_label) + 2)
+    for ground, name in zip((*GROUNDS, HERE), (*field.names, "now"), strict=True):
+        sheet.text(0, column, ground.ascii if ascii_only else ground.unicode, ground.style)
+        sheet.text(0, column + 2, name)
+        column += len(name) + 4
+    for row in range(rows):
+        sheet.text(1 + row, gutter, sheet.lines.side, "frame")
+        for kind, ground in enumerate(GROUNDS):
+            character = ground.ascii if ascii_only else ground.unicode
+            for at in np.flatnonzero(field.kinds[rows - 1 - row] == kind).tolist():
+                sheet.text(1 + row, gutter + 1 + at, character, ground.style)
+    here_row, here_column = field.here
+    mark = HERE.ascii if ascii_only else HERE.unicode
+    sheet.text(rows - here_row, gutter + 1 + here_column, mark, HERE.style)
+    for at, label in _ratio_ticks(field.y, 2):
+        sheet.text(rows - at, gutter - len(label), label)
+        sheet.text(rows - at, gutter, sheet.lines.side_tick, "frame")
+    sheet.text(1 + bottom, gutter, sheet.lines.corner + sheet.lines.base * columns, "frame")
+    for at, label in _ratio_ticks(field.x, 6):
+        sheet.text(1 + bottom, gutter + 1 + at, sheet.lines.base_tick, "frame")
+        start = gutter + 1 + at - (len(label) - 1) // 2
+        if start + len(label) < gutter + 1 + columns - len(field.x_label):
+            sheet.text(2 + bottom, start, label)
+    sheet.text(2 + bottom, max(0, gutter + 1 + columns - len(field.x_label)), field.x_label)
+    return sheet.picture()
+
+
+def _ratio_ticks(ratios: Floats, apart: int) -> list[tuple[int, str]]:
+    """Round ratios with their cells, 1 first, each at least so many cells from the others."""
+    found: list[tuple[int, str]] = []
+    for ratio in (1.0, 2.0, 0.5, 5.0, 0.2, 1.5, 0.7, 3.0, 0.3, 10.0, 0.1, 4.0, 0.25, 1.2, 0.8):
+        if not ratios[0] * 0.99 <= ratio <= ratios[-1] * 1.01:
+            continue
+        at = int(np.abs(np.log(ratios / ratio)).argmin())
+        if all(abs(at - other) >= apart for other, _ in found):
+            found.append((at, f"{ratio:g}"))
+    return found
+
+
 def trend_panes(
     case: Case, present: Trend | None, earlier: Trend | None = None
 ) -> tuple[Pane, ...]:
@@ -197,7 +300,10 @@ def round_ticks(low: float, high: float, most: int) -> tuple[tuple[float, ...], 
     values = tuple(float(f"{k * step:.12g}") + 0.0 for k in range(first, last + 1))
     largest = max((abs(value) for value in values), default=0.0)
     if largest >= 1e6 or (largest < 1e-3 and largest > 0):
-        return values, tuple(f"{value:.3g}" for value in values)
+        # As many digits as tell one step from the next: 9.94e+05, 9.95e+05 ... 1.001e+06.
+        places = math.floor(math.log10(largest)) - math.floor(math.log10(step) + 1e-9)
+        digits = max(3, places + 1)
+        return values, tuple(f"{value:.{digits}g}" for value in values)
     decimals = max(0, -math.floor(math.log10(step) + 1e-9))
     return values, tuple(f"{value:.{decimals}f}" for value in values)
 
@@ -448,5 +554,24 @@ INKS: Final = {
 }
 """Kinds of curve; no two that meet in a pane look alike without colour."""
 
-STYLES: Final = ("frame", "label", *INKS)
+
+@dataclass(frozen=True)
+class Ground:
+    """How a kind of cell of a map is drawn."""
+
+    unicode: str
+    ascii: str
+    style: str
+
+
+GROUNDS: Final = (
+    Ground("·", ".", "good"),
+    Ground("+", "+", "caution"),
+    Ground("▒", "#", "worse"),
+)
+"""Kinds of cell, from fair to foul; they differ without colour."""
+HERE: Final = Ground("O", "O", "chosen")
+"""The present point of a map."""
+
+STYLES: Final = ("frame", "label", *INKS, *(ground.style for ground in (*GROUNDS, HERE)))
 """What a picture's style numbers mean."""

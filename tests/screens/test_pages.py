@@ -6,6 +6,7 @@ import json
 import os
 import subprocess
 import sys
+from dataclasses import replace
 from pathlib import Path
 
 import pytest
@@ -33,6 +34,7 @@ from workbench.screens.proposals import ProposalsPage
 from workbench.screens.record import RecordFitted, RecordPage
 from workbench.screens.saving import ConflictPage, DraftPage, LeavePage, SavePage
 from workbench.screens.start import StartPage
+from workbench.screens.tolerance import TolerancePage
 from workbench.screens.work import Work
 
 # --- the whole path ------------------------------------------------------------------------------
@@ -201,6 +203,85 @@ def test_a_page_may_be_closed_before_it_is_put_together(work: Work) -> None:
                 pilot.app.pop_screen()
             await settle(pilot)
             page_of(pilot, MainPage)
+
+    run(story())
+
+
+# --- tolerance -----------------------------------------------------------------------------------
+
+
+def test_the_tolerance_page_shows_the_map_of_the_present_settings(work: Work) -> None:
+    async def story() -> None:
+        async with running(work) as pilot:
+            await press(pilot, "t")
+            page = page_of(pilot, TolerancePage)
+            first = page.map.found
+            assert first is not None
+            assert (first.axis, first.limit) == ("dead time", study.TOLERANCE_LIMIT)
+            # other route: the same question asked of study
+            columns, rows = page.map.cells()
+            same = study.tolerance(work.case, columns=columns, rows=rows)
+            assert (first.max_sensitivity == same.max_sensitivity).all()
+            shown = text_of(pilot)
+            for words in ("plant gain x", "dead time x", "unstable", "gain grows", "both grow"):
+                assert words in shown
+            assert max(len(line) for line in shown.split("\n")) <= 80
+
+            await press(pilot, "a", "m")
+            second = page.map.found
+            assert second is not None
+            assert (second.axis, second.limit) == ("lag", 2.5)
+            assert "lag x" in text_of(pilot)
+
+            await press(pilot, "question_mark")
+            assert "the next limit on Ms" in text_of(pilot)
+            await press(pilot, "escape", "escape")
+            page_of(pilot, MainPage)
+
+    run(story())
+
+
+def test_a_larger_screen_has_a_finer_map(work: Work) -> None:
+    async def story() -> None:
+        async with running(work) as pilot:
+            await press(pilot, "t")
+            page = page_of(pilot, TolerancePage)
+            small = page.map.found
+            await pilot.resize_terminal(160, 50)
+            await settle(pilot)
+            large = page.map.found
+            assert small is not None
+            assert large is not None
+            assert large.stable.size > 3 * small.stable.size
+
+    run(story())
+
+
+def test_without_a_controller_there_is_no_map(work: Work) -> None:
+    work.change(replace(work.case, controller=None))
+
+    async def story() -> None:
+        async with running(work) as pilot:
+            await press(pilot, "t")
+            page_of(pilot, MainPage)
+            assert "the map needs a controller" in text_of(pilot)
+
+    run(story())
+
+
+def test_a_family_stands_among_the_figures(work: Work) -> None:
+    work.edit("family.gain", "30")
+    work.edit("family.drawn", "10")
+
+    async def story() -> None:
+        async with running(work) as pilot:
+            await press(pilot, "4")
+            # exact: 1 nominal, 2 corners, 10 drawn
+            assert "family of 13: 100 % stable, worst Ms" in text_of(pilot)
+            await press(pilot, "z", "end")
+            assert "nominal   95 %      worst" in text_of(pilot)
+            await press(pilot, "z", "o")
+            assert "of the family, worst Ms" in text_of(pilot)
 
     run(story())
 

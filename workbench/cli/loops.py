@@ -17,18 +17,46 @@ def assess(given: Given) -> Answer:
     """Gain, final values, stability and margins."""
     from workbench import study
 
+    axis = given.choice("--tolerance", ("dead-time", "lag"))
+    limit = given.number("--max-sensitivity", above=1.0)
+    if limit is not None and axis is None:
+        raise problem("is given without --tolerance", "add it", key="--max-sensitivity")
     case = loop_of(given)
+    if axis is not None and case.controller is None:
+        raise no_controller(given, "a tolerance map")
     found = study.assess(case)
-    found = replace(found, notes=study.cautions(case, found))
+    family = study.family_figures(case)
+    notes = (*study.family_cautions(family), *study.cautions(case, found))
+    found = replace(found, notes=notes)
     small = None
     if "--small-models" in given:
         with progress("reducing the plant"):
             small = study.reductions(case)
+    survived, drawn = None, None
+    if axis is not None:
+        from workbench import charts
+
+        with progress("looking at other plants"):
+            survived = study.tolerance(
+                case,
+                axis="lag" if axis == "lag" else "dead time",
+                limit=limit or study.TOLERANCE_LIMIT,
+                columns=MAP_COLUMNS,
+                rows=MAP_ROWS,
+            )
+        field, size = charts.tolerance_field(survived), charts.map_size(MAP_COLUMNS, MAP_ROWS)
+        drawn = survived, charts.draw_map(field, *size, ascii_only=True).rows
+    units = study.units_of(case)
     return Answer(
-        report.assess_text(case, found, study.units_of(case), width(), small),
-        report.assess_data(case, found, study.units_of(case), small),
+        report.assess_text(case, found, units, width(), small, family, drawn),
+        report.assess_data(case, found, units, small, family, survived),
         Status.DONE if report.is_stable(found) else Status.NO,
     )
+
+
+MAP_COLUMNS: Final = 61
+MAP_ROWS: Final = 25
+"""Cells of the map that `assess` prints."""
 
 
 def predict(given: Given) -> Answer:

@@ -198,6 +198,15 @@ RUN: Final[tuple[Option, ...]] = (
 SMALL_MODELS: Final = Option(
     "--small-models", "", "the plant as one and two lags with dead time, and how far off each is"
 )
+TOLERANCE: Final[tuple[Option, ...]] = (
+    Option(
+        "--tolerance",
+        "dead-time|lag",
+        "a map of how much error of the plant's gain and dead time, or gain and lags, the loop"
+        " survives, and the distances from where it is now",
+    ),
+    Option("--max-sensitivity", "MS", "limit on Ms in that map", "2"),
+)
 MOVES: Final[tuple[Option, ...]] = (
     Option(
         "--input", "step|ramp|pulse|doublet|sine|impulse", "what moves the plant's input", "step"
@@ -348,7 +357,7 @@ COMMANDS: Final[dict[str, Grammar]] = {
             "assess",
             "Gain, final values, stability and margins of a loop; a plant alone is enough.",
             "[CASE]",
-            (SMALL_MODELS, SET, *INLINE, JSON),
+            (SMALL_MODELS, *TOLERANCE, SET, *INLINE, JSON),
             'workbench assess --plant "1.8 exp(-6 s)/(40 s + 1)" --gain 1.1 --integral "32 s"',
         ),
         Grammar(

@@ -21,10 +21,11 @@ Compensation: O.J.M. Smith, "Closer control of loops with dead time", Chem. Eng.
 from __future__ import annotations
 
 from collections import Counter
-from dataclasses import dataclass, fields
+from dataclasses import dataclass, fields, replace
 from typing import Final
 
 from workbench.errors import problem
+from workbench.model.cascade import SampledCascade
 from workbench.model.feedback import Loop
 from workbench.model.feedforward import Feedforward
 from workbench.model.sampled import SampledLoop
@@ -110,11 +111,26 @@ class Structure(Loop):
         inside = 1.0 + self._back() * self.correction()
         return _closed(self.upset * inside, self._back() * self._met())
 
-    def sampled(self) -> SampledStructure:
+    def output_from_setpoint(self) -> TransferFunction:
+        """OP [%] for the setpoint [%], analogue loop."""
+        return _closed(self.sign * self.gains.from_setpoint(), self._back() * self._met())
+
+    def output_from_load(self) -> TransferFunction:
+        """OP [%] for the upset [its own unit], analogue loop."""
+        alone = replace(self, feedforward=None).upset
+        given = -self._back() * alone
+        if self.feedforward is not None:
+            given = given + self.feedforward.transfer()
+        return _closed(given, self._back() * self._met())
+
+    def sampled(self) -> SampledLoop:
         """The open loop in z; the model is run at the scan, with the computing delay.
 
-        Raises `ModelError` for an inner loop with a dead time: two scans have no single z.
+        Of a cascade in the outer z.  Raises `ModelError` for a plant without a state space.
         """
+        if self.inner is not None:
+            correction = None if self.model is None else self.correction()
+            return SampledCascade.around(self.around(self.plant), self.inner, correction)
         alone = SampledLoop.of(self.around(self.acted_on))
         return SampledStructure(
             alone.loop,
@@ -189,11 +205,13 @@ def _on_one_denominator(
     one: TransferFunction, other: TransferFunction
 ) -> tuple[TransferFunction, TransferFunction]:
     """Both functions over the least denominator that holds the denominators of both."""
+    if one.denominator == other.denominator:
+        return one, other
     if one.has_delayed_feedback or other.has_delayed_feedback:
-        return (
-            one * TransferFunction(other.denominator, other.denominator),
-            other * TransferFunction(one.denominator, one.denominator),
-        )
+        wider = one * TransferFunction(other.denominator, other.denominator)
+        same = other * TransferFunction(one.denominator, one.denominator)
+        # Term by term the same, so that a pole at 0 that both get later is not written twice.
+        return wider, TransferFunction(same.numerator, wider.denominator)
     mine, theirs = one.denominator[0].polynomial, other.denominator[0].polynomial
     union = Counter(dict(mine.factors)) | Counter(dict(theirs.factors))
     whole = Factored(1.0, tuple(union.items()))

@@ -263,7 +263,8 @@ class Cells:
             self.notes.append(Note("info", f"Line {line} is read as a row of units."))
             return
         values = {role: self._number(cells[role], line, role) for role in self.values}
-        if math.isnan(values["pv"]) or math.isnan(values["op"]) or _no_value(cells["time"]):
+        missing = any(math.isnan(values[role]) for role in ("pv", "op") if role in values)
+        if missing or _no_value(cells["time"]):
             self.left_out.append(line)
             return
         self.lines.append(line)
@@ -321,4 +322,5 @@ def _is_units_row(cells: dict[str, str]) -> bool:
     def is_word(cell: str) -> bool:
         return cell in ("", "-") or (cell[0] not in "0123456789+-.," and not _no_value(cell))
 
-    return all(is_word(cells[role]) for role in _NEEDED) and any(cells[r] for r in _NEEDED)
+    needed = [cells[role] for role in _NEEDED if role in cells]
+    return all(map(is_word, needed)) and any(needed)

@@ -103,6 +103,17 @@ def read_record(
     return _assemble(read_cells(raw, name, wanted), start, end, hashlib.sha256(raw).hexdigest())
 
 
+def read_signal(path: str | os.PathLike[str], column: str) -> Record:
+    """One column of a CSV file as a record of which PV and OP both are that column.
+
+    Raises `RecordError` as `read_record` does.
+    """
+    name = harmless(str(path))
+    raw = read_bytes(Path(path), name)
+    cells = read_cells(raw, name, {"time": None, "pv": column})
+    return _assemble(cells, None, None, hashlib.sha256(raw).hexdigest())
+
+
 # --- the record ----------------------------------------------------------------------------------
 
 
@@ -131,7 +142,7 @@ def _assemble(
     seconds = clock.seconds[rows]
     if len(rows) < 2:
         raise refused(cells.path, None, "has only one usable row", "give a longer record")
-    op = np.array(cells.values["op"])[rows]
+    op = np.array(cells.values.get("op", cells.values["pv"]))[rows]
     notes += _gaps(seconds, op, clock)
     sp = _setpoint(cells, rows, notes)
     return Record(

@@ -6,6 +6,7 @@ of plain values: a figure that does not exist is `None` with its reason beside i
 """
 
 from workbench.report.diagnoses import diagnose_data, diagnose_text
+from workbench.report.families import distance_lines
 from workbench.report.files import (
     between_data,
     between_text,
@@ -29,7 +30,13 @@ from workbench.report.loops import (
 from workbench.report.observations import observe_data, observe_text
 from workbench.report.plans import plan_data, plan_text
 from workbench.report.recognition import recognise_data, recognise_text
-from workbench.report.settings import convert_data, convert_text, propose_data, propose_text
+from workbench.report.settings import (
+    convert_data,
+    convert_text,
+    family_words,
+    propose_data,
+    propose_text,
+)
 from workbench.report.sheet import WIDTH as SHEET_WIDTH
 from workbench.report.sheet import sheet_text
 from workbench.report.survey import survey_data, survey_text
@@ -49,6 +56,8 @@ __all__ = [
     "convert_text",
     "diagnose_data",
     "diagnose_text",
+    "distance_lines",
+    "family_words",
     "fit_data",
     "fit_text",
     "history_data",

@@ -62,10 +62,30 @@ def _proposal_data(proposal: Proposal) -> Json:
     put(data, "derivative_s", derivative_seconds(controller))
     for key in ("max_sensitivity", "phase_margin_deg", "setpoint_iae", "load_iae"):
         put(data, key, getattr(proposal, key))
+    put(data, "family_max_sensitivity_worst", over_family(proposal)[0])
+    put(data, "family_stable_percent", over_family(proposal)[1])
     data["within_limit"] = bool(proposal.within_limit)
     data["applies"] = bool(proposal.applies)
     data["reason"] = proposal.reason
     return data
+
+
+def over_family(proposal: Proposal) -> tuple[Figure, Figure]:
+    """The worst Ms over the family of plants, and the share of it that is stable [%]."""
+    family = proposal.family
+    if family is None or family.reason:
+        reason = family.reason if family else proposal.reason or "the case states no family"
+        return Figure(None, reason), Figure(None, reason)
+    return family.figures["max_sensitivity"].worst, Figure(family.stable_percent)
+
+
+def family_words(proposal: Proposal) -> str:
+    """The same in words; nothing where there is no family."""
+    worst, share = over_family(proposal)
+    if share.value is None:
+        return ""
+    said = f"stable with {text(share.value, '%', digits=3)} of the family"
+    return said if worst.value is None else f"{said}, worst Ms {text(worst.value, digits=3)}"
 
 
 def propose_text(
@@ -88,6 +108,9 @@ def propose_text(
     remarks = [(p.method, p.reason) for p in fitting if p.reason]
     if remarks:
         lines += ["", "Remarks", *two_columns(remarks, width)]
+    over = [(p.method, family_words(p)) for p in fitting if family_words(p)]
+    if over:
+        lines += ["", "Over the family of plants", *two_columns(over, width)]
     rules = [proposal for proposal in fitting if proposal.method != "present"]
     lines += _grouped("Aims", [(f"{p.objective}; for {p.limits}", p.method) for p in rules], width)
     lines += _grouped("Sources", [(p.source, p.method) for p in rules], width)

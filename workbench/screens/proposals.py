@@ -9,7 +9,7 @@ from textual.message import Message
 from textual.widget import Widget
 from textual.worker import Worker, WorkerState
 
-from workbench import study, units
+from workbench import report, study, units
 from workbench.case.case import Case
 from workbench.errors import WorkbenchError
 from workbench.model.pid import Controller
@@ -115,6 +115,8 @@ class ProposalTable(Panel):
         lines: list[Line] = [(("─" * width, "frame"),)]
         if chosen.reason:
             lines += remark(chosen.reason, width, "caution")[:2]
+        if over := report.family_words(chosen):
+            lines += wrapped(f"{over}.", width)
         aim = f" aims at {chosen.objective}; for {chosen.limits}." if chosen.objective else ""
         lines += wrapped(f"{chosen.title}{':' if aim else ','}{aim} {chosen.source}", width)
         # A fixed height, so that the list does not jump as the cursor moves.

@@ -13,7 +13,22 @@ from workbench.study.assessment import (
     reductions,
 )
 from workbench.study.conversion import Conversion, convert
-from workbench.study.evaluation import HANDOVER, Evaluation, cautions, evaluate
+from workbench.study.evaluation import (
+    HANDOVER,
+    Evaluation,
+    cautions,
+    evaluate,
+    family_cautions,
+)
+from workbench.study.family import (
+    Among,
+    FamilyFigures,
+    Member,
+    drawn_plants,
+    family_figures,
+    members,
+    with_family,
+)
 from workbench.study.keep import (
     FileCheck,
     accept,
@@ -38,16 +53,24 @@ from workbench.study.proposals import Proposal, RelayTest, Wish, propose, take
 from workbench.study.records import Columns, SheetCheck, diagnose, plan_test, recognise
 from workbench.study.sheet import Retune, Stage, retune
 from workbench.study.survey import Surveyed, survey
+from workbench.study.tolerance import LIMIT as TOLERANCE_LIMIT
+from workbench.study.tolerance import Axis, Distance, Tolerance, tolerance
 
 __all__ = [
     "HANDOVER",
+    "TOLERANCE_LIMIT",
+    "Among",
     "Assessment",
+    "Axis",
     "Columns",
     "Conversion",
+    "Distance",
     "Evaluation",
+    "FamilyFigures",
     "FileCheck",
     "InnerTrend",
     "LoopFigures",
+    "Member",
     "Observation",
     "PlantFigures",
     "Prediction",
@@ -60,6 +83,7 @@ __all__ = [
     "SheetCheck",
     "Stage",
     "Surveyed",
+    "Tolerance",
     "Trend",
     "Wish",
     "accept",
@@ -71,9 +95,13 @@ __all__ = [
     "controller_of",
     "convert",
     "diagnose",
+    "drawn_plants",
     "evaluate",
+    "family_cautions",
+    "family_figures",
     "fit_record",
     "loop_of",
+    "members",
     "observe",
     "plan_test",
     "plant_of",
@@ -88,6 +116,8 @@ __all__ = [
     "retune",
     "survey",
     "take",
+    "tolerance",
     "units_of",
+    "with_family",
     "with_observation",
 ]

@@ -12,8 +12,9 @@ from workbench.errors import (
 )
 from workbench.model.feedback import Loop
 from workbench.model.formula import format_formula
+from workbench.model.limits import least_peaks
 from workbench.model.reduction import SmallModel, best_fit, half_rule, misfit
-from workbench.model.robustness import Margins, analogue_margins, sampled_margins
+from workbench.model.robustness import Margins, analogue_margins
 from workbench.model.stability import plant_verdict
 from workbench.model.transfer import TransferFunction
 from workbench.study.loop import (
@@ -25,7 +26,8 @@ from workbench.study.loop import (
     runs_away,
     units_of,
 )
-from workbench.study.structure import has_one_scan, structure_notes
+from workbench.study.operating import about_rest, operating_notes
+from workbench.study.structure import margins_as_sampled, structure_notes
 from workbench.units import RATE_UNITS, Amount, Figure, Note, rounded, text
 
 
@@ -48,6 +50,10 @@ class PlantFigures:
     """[1/s]"""
     dead_time_s: float
     """The smallest from OP to PV."""
+    least_max_sensitivity: Figure
+    """No controller has an Ms below this."""
+    least_max_complementary_sensitivity: Figure
+    """No controller has an Mt below this."""
     poles_reason: str = ""
     """Why the poles cannot be listed."""
     zeros_reason: str = ""
@@ -102,16 +108,15 @@ def assess(case: Case) -> Assessment:
         return Assessment(figures, None, None, None, notes, valve=valve)
     action, chosen = action_of(case)
     notes = (*_plant_notes(plant), *([Note("info", chosen)] if chosen else []))
-    loop = loop_of(case)
+    whole = loop_of(case)
+    loop = about_rest(whole)
     notes = (*notes, *structure_notes(case, loop))
     analogue = _loop_figures(case, loop, analogue_margins(replace(loop, scan=None)))
     sampled, missing = None, ""
-    if loop.scan is not None and not has_one_scan(loop):
-        missing = "a cascade has two scans; its margins are those of analogue controllers"
-    elif loop.scan is not None:
-        missing = no_time_domain(loop.plant)
-        if not missing:
-            sampled = _loop_figures(case, loop, sampled_margins(loop))
+    if loop.scan is not None:
+        margins, missing = margins_as_sampled(loop)
+        sampled = None if margins is None else _loop_figures(case, loop, margins)
+    notes = (*notes, *operating_notes(case, whole, (sampled or analogue).margins))
     gain = case.controller.gain_value
     scale = case.op.range.span / case.pv.range.span
     return Assessment(figures, analogue, sampled, action, notes, missing, gain, gain * scale, valve)
@@ -131,6 +136,8 @@ def _plant_figures(case: Case, plant: TransferFunction) -> PlantFigures:
     if gain.value is None and slope.value is not None:
         gain = Figure(None, f"integrating: PV moves {_slope_words(case, slope.value)}")
     delayed = plant.has_delayed_feedback
+    delay = case.controller.computing_delay_s if case.controller else 0.0
+    least = least_peaks(plant, delay)
     return PlantFigures(
         formula=format_formula(plant),
         gain=gain,
@@ -141,6 +148,8 @@ def _plant_figures(case: Case, plant: TransferFunction) -> PlantFigures:
         poles=() if delayed else plant.poles(),
         zeros=plant.zeros(),
         dead_time_s=plant.dead_time,
+        least_max_sensitivity=least.sensitivity,
+        least_max_complementary_sensitivity=least.complementary_sensitivity,
         poles_reason="infinitely many: a dead time inside an inner feedback" if delayed else "",
         zeros_reason="paths of unequal dead time: infinitely many"
         if len(plant.numerator) > 1

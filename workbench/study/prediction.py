@@ -3,33 +3,47 @@
 from __future__ import annotations
 
 import math
+from collections.abc import Callable
 from dataclasses import dataclass, replace
-from typing import Final, Literal
+from typing import Final, Literal, TypeVar
 
 import numpy as np
 from numpy.typing import NDArray
 
 from workbench.case.case import Case
-from workbench.errors import ModelError, Problem, problem
+from workbench.errors import InputError, ModelError, Problem, problem
 from workbench.model.feedback import Loop
+from workbench.model.pid import Gains
 from workbench.model.response import (
     Signal,
     final_value,
     held_response,
     impulse_response,
-    step_response,
 )
+from workbench.model.stability import plant_verdict
 from workbench.model.structures import Structure
 from workbench.model.transfer import TransferFunction
 from workbench.records.record import Record
-from workbench.sim.loop import settle_horizon, simulate
+from workbench.sim.delayed import impulse_answer, upset_answer
+from workbench.sim.floor import floor
+from workbench.sim.instruments import Instruments
+from workbench.sim.loop import Trace, settle_horizon, simulate
 from workbench.sim.metrics import Measures, measure
-from workbench.sim.scenario import Events, Scenario
+from workbench.sim.scenario import NEW_SETTINGS, Events, Scenario
+from workbench.sim.signals import held
 from workbench.sim.structures import Inside
-from workbench.study.loop import instruments_of, load_scale, loop_of, no_time_domain
+from workbench.study.loop import (
+    controller_of,
+    instruments_of,
+    load_scale,
+    loop_of,
+    no_time_domain,
+)
+from workbench.study.upset import recorded_upset
 from workbench.units import Figure, rounded, text
 
 Floats = NDArray[np.float64]
+Answer = TypeVar("Answer")
 
 
 @dataclass(frozen=True)
@@ -77,21 +91,40 @@ class Prediction:
     """No controller can do better after this load step [PV unit]."""
     floor_load_iae: Figure
     """[PV unit s]"""
+    floor_fixed_peak: Figure
+    """The part of the peak's floor that is over before any controller can act [PV unit]."""
+    floor_fixed_iae: Figure
+    """The same of the IAE [PV unit s]."""
+    floor_acts_after_s: Figure
+    """From the load step to when the first move of any controller shows in PV."""
     diverged: bool
     """The loop ran away and the trend was cut off."""
+    events: Events
+    """What was run, in percent of span: for running other plants through the same."""
     inner: InnerTrend | None = None
     """Where there is an inner loop."""
 
+    @property
+    def peak_to_floor(self) -> Figure:
+        """The peak deviation as a multiple of its floor."""
+        return _ratio(self.measures.load_peak_deviation, self.floor_peak_deviation)
 
-def predict(case: Case, seed: int = 0, like: Prediction | None = None) -> Prediction:
-    """Run the closed loop through the case's scenario.
+    @property
+    def load_iae_to_floor(self) -> Figure:
+        """The IAE after the load step as a multiple of its floor."""
+        return _ratio(self.measures.load_iae, self.floor_load_iae)
 
-    Where the scenario leaves its end open it lasts long enough to settle, or as long as the
-    prediction `like` with which it is to be compared.
 
-    Raises `InputError` where plant or controller is missing, or the plant has a dead time inside an
-    inner feedback.
-    """
+def _ratio(found: Figure, floor: Figure) -> Figure:
+    if floor.value is None or found.value is None:
+        return Figure(None, floor.reason or found.reason)
+    if not floor.value:
+        return Figure(None, "the floor is 0")
+    return Figure.of(found.value / floor.value)
+
+
+def _run(case: Case, seed: int, like: Prediction | None) -> tuple[Loop, Events, Instruments, Trace]:
+    """The loop, what happens to it, what stands between it and the plant, and its course."""
     loop = loop_of(case)
     missing = no_time_domain(loop.plant)
     if missing:
@@ -101,7 +134,20 @@ def predict(case: Case, seed: int = 0, like: Prediction | None = None) -> Predic
             key="plant",
         )
     events = _events(case, loop, seed, like)
-    trace = simulate(loop, events, instruments_of(case))
+    instruments = instruments_of(case)
+    trace = simulate(loop, events, instruments)
+    return loop, events, instruments, trace
+
+
+def predict(case: Case, seed: int = 0, like: Prediction | None = None) -> Prediction:
+    """Run the closed loop through the case's scenario.
+
+    Where the scenario leaves its end open it lasts long enough to settle, or as long as the
+    prediction `like` with which it is to be compared.
+
+    Raises `InputError` where plant or controller is missing, or the loop cannot be followed.
+    """
+    loop, events, instruments, trace = _run(case, seed, like)
     pv, op = case.pv, case.op
     trend = Trend(
         trace.time,
@@ -110,7 +156,7 @@ def predict(case: Case, seed: int = 0, like: Prediction | None = None) -> Predic
         op.rest + trace.output * (op.range.span / 100.0),
     )
     measures = _in_units(case, measure(trace, events, low=loop.low, high=loop.high))
-    peak, iae = _floor(loop, events)
+    least = floor(loop, events, instruments)
     to_pv = pv.range.span / 100.0
     return Prediction(
         setpoint_step=pv.range.units(events.setpoint_step),
@@ -120,11 +166,48 @@ def predict(case: Case, seed: int = 0, like: Prediction | None = None) -> Predic
         until_s=events.until,
         trend=trend,
         measures=measures,
-        floor_peak_deviation=peak.times(to_pv),
-        floor_load_iae=iae.times(to_pv),
+        floor_peak_deviation=least.peak_deviation.times(to_pv),
+        floor_load_iae=least.load_iae.times(to_pv),
+        floor_fixed_peak=least.fixed_peak.times(to_pv),
+        floor_fixed_iae=least.fixed_iae.times(to_pv),
+        floor_acts_after_s=least.acts_after,
         diverged=trace.diverged,
+        events=events,
         inner=None if trace.inner is None else _inner_trend(case, loop, trace.inner),
     )
+
+
+def predicted(
+    case: Case, seed: int = 0, like: Prediction | None = None
+) -> tuple[Prediction | None, str]:
+    """The prediction, or why this loop has none although it is one.
+
+    Raises `InputError` for what the scenario or a setting is to blame for.
+    """
+    return _or_why(case, lambda: predict(case, seed, like))
+
+
+def predicted_measures(case: Case) -> tuple[Measures | None, str]:
+    """The measures of `predicted` alone, for many settings side by side."""
+
+    def measured() -> Measures:
+        loop, events, _, trace = _run(case, 0, None)
+        return _in_units(case, measure(trace, events, low=loop.low, high=loop.high))
+
+    return _or_why(case, measured)
+
+
+def _or_why(case: Case, answer: Callable[[], Answer]) -> tuple[Answer | None, str]:
+    missing = no_time_domain(loop_of(case).plant)
+    if missing:
+        return None, missing
+    try:
+        return answer(), ""
+    except InputError as fault:
+        first = fault.problems[0]
+        if first.key != "controller.scan":
+            raise
+        return None, f"{first.key} {first.what}"
 
 
 def _inner_trend(case: Case, loop: Loop, inside: Inside) -> InnerTrend:
@@ -156,6 +239,9 @@ def _events(case: Case, loop: Loop, seed: int, like: Prediction | None) -> Event
     at = scenario.setpoint_at.seconds
     load_at = scenario.load_at.seconds if scenario.load_at else 0.0
     until = scenario.until.seconds if scenario.until else None
+    recorded = recorded_upset(case)
+    if scenario.load_file and load_step is None:
+        load_step = 1.0
     halved = setpoint_step is None and load_step is None
     if halved:
         setpoint_step, load_step = pv.range.units(5.0), case.op.range.units(5.0)
@@ -163,7 +249,8 @@ def _events(case: Case, loop: Loop, seed: int, like: Prediction | None) -> Event
     if until is None:
         horizon = settle_horizon(loop)
         load_at = at + horizon if halved else load_at
-        until = _last_move(scenario, at, load_at, setpoint_step, load_step) + horizon
+        lasting = recorded[-1][0] if recorded else 0.0
+        until = _last_move(scenario, at, load_at + lasting, setpoint_step, load_step) + horizon
         if loop.setpoint_rate is not None and setpoint_step:
             until += abs(pv.range.percent(setpoint_step)) / loop.setpoint_rate
         # Comparable as long as neither is squeezed into a corner of the other.
@@ -183,7 +270,7 @@ def _events(case: Case, loop: Loop, seed: int, like: Prediction | None) -> Event
         setpoint_ramp=scenario.setpoint_ramp.seconds if scenario.setpoint_ramp else 0.0,
         load_shape=scenario.load_shape,
         load_time=scenario.load_time.seconds if scenario.load_time else 0.0,
-        load_record=scenario.recorded_load(),
+        load_record=recorded,
         manual_at=scenario.manual_at.seconds if scenario.manual_at else None,
         manual_output=None
         if scenario.manual_output is None
@@ -192,7 +279,36 @@ def _events(case: Case, loop: Loop, seed: int, like: Prediction | None) -> Event
         change_at=scenario.change_at.seconds if scenario.change_at else None,
         gain_factor=scenario.gain_factor,
         dead_time_factor=scenario.dead_time_factor,
+        settings_at=scenario.settings_at.seconds if scenario.settings_at else None,
+        settings=_new_settings(case),
+        inner_mode_at=scenario.inner_mode_at.seconds if scenario.inner_mode_at else None,
+        inner_mode=scenario.inner_mode,
     )
+
+
+def _new_settings(case: Case) -> Gains | None:
+    """The settings that the controller gets on the way; `None` where it keeps its own.
+
+    Raises `InputError` where its form does not take them, under the keys of the scenario.
+    """
+    scenario, controller = case.scenario, controller_of(case)
+    if scenario.settings_at is None:
+        return None
+    changed = controller
+    try:
+        if scenario.new_gain is not None:
+            changed = replace(changed, gain=scenario.new_gain, proportional_band=None)
+        if scenario.new_integral:
+            changed = replace(changed, integral=scenario.new_amount("new_integral"))
+        if scenario.new_derivative:
+            changed = replace(changed, derivative=scenario.new_amount("new_derivative"))
+        return changed.gains()
+    except InputError as fault:
+        keys = {name: key for key, name in NEW_SETTINGS.items()}
+        raise InputError(
+            replace(each, key=f"scenario.{keys.get(each.key, 'settings_at')}")
+            for each in fault.problems
+        ) from None
 
 
 _SWINGS: Final = 8
@@ -205,12 +321,16 @@ def _last_move(
     """When the last thing happens that has to settle [s]."""
     time = scenario.load_time.seconds if scenario.load_time else 0.0
     lasting = {"step": 0.0, "sine": _SWINGS * time, "record": 0.0}.get(scenario.load_shape, time)
-    if scenario.load_shape == "record":
-        lasting = scenario.recorded_load()[-1][0]
     moves = [at + (scenario.setpoint_ramp.seconds if scenario.setpoint_ramp else 0.0)]
     moves = moves if setpoint else []
     moves += [load_at + lasting] if load else []
-    others = (scenario.manual_at, scenario.automatic_at, scenario.change_at)
+    others = (
+        scenario.manual_at,
+        scenario.automatic_at,
+        scenario.change_at,
+        scenario.settings_at,
+        scenario.inner_mode_at,
+    )
     return max([*moves, *(other.seconds for other in others if other)], default=0.0)
 
 
@@ -242,30 +362,6 @@ def _in_units(case: Case, measures: Measures) -> Measures:
     return replace(measures, **scaled)
 
 
-def _floor(loop: Loop, events: Events) -> tuple[Figure, Figure]:
-    """Smallest peak deviation and IAE that any controller can leave after the load step [% of PV].
-
-    Before the load shows in PV nothing is known of it, and what the controller then does shows only
-    after the plant's dead time: until then PV moves as if nobody controlled it.
-    """
-    if not events.load_step:
-        none = Figure(None, "the scenario has no load step")
-        return none, none
-    if isinstance(loop, Structure):
-        none = Figure(None, "it is only known for a single loop without feedforward")
-        return none, none
-    if not events.are_steps:
-        none = Figure(None, "it is only known for a load step, in automatic, on one plant")
-        return none, none
-    first = loop.load.dead_time + loop.plant.dead_time + loop.computing_delay
-    shown = loop.plant.dead_time + loop.computing_delay
-    if shown == 0.0:
-        return Figure(0.0), Figure(0.0)
-    time = np.linspace(0.0, first, 401)
-    free = np.abs(step_response(loop.load, time) * events.load_step)
-    return Figure.of(float(free.max())), Figure.of(float(np.trapezoid(free, time)))
-
-
 @dataclass(frozen=True)
 class Response:
     """Open-loop response of a plant from rest."""
@@ -287,7 +383,7 @@ def respond(plant: TransferFunction, signal: Signal, until: float, rows: int = 1
     Parameters
     ----------
     plant
-        Without a dead time inside an inner feedback.
+        From OP to PV; a dead time inside an inner feedback is followed to 1e-6 of the step.
     signal
         What moves the input.
     until
@@ -305,12 +401,24 @@ def respond(plant: TransferFunction, signal: Signal, until: float, rows: int = 1
         raise ModelError(Problem(f"cannot be answered: {missing}", "draw it without that feedback"))
     transform = plant * signal.transform()
     time = np.linspace(0.0, until, rows)
+    inverse = impulse_answer if plant.has_delayed_feedback else impulse_response
     with np.errstate(over="ignore", invalid="ignore"):
-        pv = impulse_response(transform, time)
+        pv = inverse(transform, time)
     if not np.isfinite(pv).all():
         raise ModelError(Problem("grows beyond every number", "give an earlier end"))
-    final = final_value(transform)
+    final = _final(plant, signal) if plant.has_delayed_feedback else final_value(transform)
     return Response(time, signal.values(time), pv, final, _peak(transform, time, pv, final))
+
+
+def _final(plant: TransferFunction, signal: Signal) -> Figure:
+    """The limit of PV where the plant has infinitely many poles."""
+    verdict = plant_verdict(plant)
+    if not verdict.stable and not plant.integrators > 0:
+        return Figure(None, f"the plant is not stable: {verdict.reason}")
+    if signal.kind == "sine":
+        return Figure(None, "it swings for ever")
+    limit = (plant * signal.transform()).slope()
+    return limit if limit.value is not None else Figure(None, "it moves on for ever")
 
 
 def _peak(transform: TransferFunction, time: Floats, pv: Floats, final: Figure) -> Figure:
@@ -321,7 +429,8 @@ def _peak(transform: TransferFunction, time: Floats, pv: Floats, final: Figure) 
         return Figure(None, f"PV moves on without end, and is {text(float(pv[-1]))} at the last")
     near = np.linspace(time[max(at - 1, 0)], time[min(at + 1, len(time) - 1)], 401)
     jumps = [delay for delay in transform.delays if delay <= time[-1]]
-    closer = impulse_response(transform, np.unique([*near, *jumps]))
+    inverse = impulse_answer if transform.has_delayed_feedback else impulse_response
+    closer = inverse(transform, np.unique([*near, *jumps]))
     return Figure.of(float(max((float(pv[at]), *closer.tolist()), key=abs)))
 
 
@@ -331,7 +440,7 @@ def response_horizon(plant: TransferFunction, signal: Signal) -> float:
     A stable part settles within the sum of its lags and 5 times their root mean square sum; what
     grows is followed for 3 of its time constants, a sine for 5 periods.
     """
-    poles = () if plant.has_delayed_feedback else plant.poles()
+    poles = [pole for term in plant.denominator for pole in term.polynomial.roots]
     lags = [1.0 / abs(p.real) for p in poles if p.real < 0.0]
     swings = [2.0 * math.pi / p.imag for p in poles if p.imag > 0.0 and p.real == 0.0]
     growing = [1.0 / p.real for p in poles if p.real > 0.0]
@@ -339,7 +448,9 @@ def response_horizon(plant: TransferFunction, signal: Signal) -> float:
     own = max([settles, *(3.0 * t for t in growing), *(5.0 * t for t in swings)])
     if growing:
         own = min(own, 20.0 * min(growing))
+    # A dead time inside a feedback goes round a few times before all is calm.
     dead = 3.0 * max(plant.delays, default=0.0)
+    dead += 10.0 * sum(term.dead_time for term in plant.denominator)
     moves = {"pulse": 2.0 * signal.width, "doublet": 3.0 * signal.width, "sine": 5 * signal.period}
     total = signal.at + moves.get(signal.kind, 0.0) + own + dead
     return rounded(total - signal.at or 60.0, 2) + signal.at
@@ -348,13 +459,16 @@ def response_horizon(plant: TransferFunction, signal: Signal) -> float:
 def respond_to_record(plant: TransferFunction, record: Record) -> Response:
     """Response of a plant to the OP of a record, held between rows; deviations from its start.
 
-    Raises `ModelError` for a dead time inside an inner feedback.
+    Raises `ModelError` for a plant that cannot be followed in time.
     """
     missing = no_time_domain(plant)
     if missing:
         raise ModelError(Problem(f"cannot be answered: {missing}", "draw it without that feedback"))
     op = record.op - record.op[0]
-    pv = held_response(plant, record.time, op, record.time)
+    if plant.has_delayed_feedback:
+        pv = upset_answer(plant, held(record.time, op), record.time)
+    else:
+        pv = held_response(plant, record.time, op, record.time)
     none = Figure(None, "a recorded input has no last value to hold for ever")
     peak = float(pv[np.abs(pv).argmax()])
     return Response(record.time, op, pv, none, Figure.of(peak))

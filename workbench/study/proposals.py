@@ -18,11 +18,13 @@ from workbench.errors import (
 )
 from workbench.model.pid import Controller, settings_like
 from workbench.model.reduction import double_integrator, half_rule, unstable_lag
-from workbench.model.robustness import analogue_margins, sampled_margins, ultimate
+from workbench.model.robustness import analogue_margins, ultimate
 from workbench.study.best import SEARCH_SOURCE, SEARCHES, searched
-from workbench.study.loop import action_of, loop_of, no_time_domain, plant_in_percent
-from workbench.study.prediction import predict
-from workbench.study.structure import has_one_scan
+from workbench.study.family import FamilyFigures, family_figures
+from workbench.study.loop import action_of, loop_of, plant_in_percent
+from workbench.study.operating import about_rest
+from workbench.study.prediction import predicted_measures
+from workbench.study.structure import margins_as_sampled
 from workbench.tune import rules
 from workbench.tune.oscillation import astrom_hagglund_relay
 from workbench.tune.tuning import Ultimate
@@ -82,6 +84,8 @@ class Proposal:
     limits: str = ""
     """The plants that a rule was published for."""
     published_form: str = ""
+    family: FamilyFigures | None = None
+    """Margins over the family of plants, where the case states one."""
 
 
 def propose(
@@ -231,9 +235,9 @@ def _judged(
 ) -> Proposal:
     """A row with its margins; how far PV errs is added for all rows at once."""
     trial = replace(case, controller=settings)
-    loop = loop_of(trial)
-    analogue = not has_one_scan(loop) or no_time_domain(loop.plant)
-    margins = analogue_margins(replace(loop, scan=None)) if analogue else sampled_margins(loop)
+    loop = about_rest(loop_of(trial))
+    sampled = margins_as_sampled(loop)[0] if loop.scan is not None else None
+    margins = sampled or analogue_margins(replace(loop, scan=None))
     if not margins.stable:
         none = Figure(None, f"the loop is not stable: {margins.reason}")
         reason = f"not stable on this loop: {margins.reason}"
@@ -256,6 +260,7 @@ def _judged(
         _LATER,
         _LATER,
         within,
+        family=family_figures(trial),
     )
 
 
@@ -265,19 +270,16 @@ _LATER: Final = Figure(None, "not predicted yet")
 
 def _with_errors(case: Case, rows: list[Proposal]) -> list[Proposal]:
     """The rows with the integral errors that the scenario predicts for those that are stable."""
-    missing = no_time_domain(plant_in_percent(case))
     stable = [
         number
         for number, row in enumerate(rows)
         if row.controller is not None and row.load_iae is _LATER
     ]
-    if missing:
+    measured = []
+    for number in stable:
+        found, missing = predicted_measures(replace(case, controller=rows[number].controller))
         none = Figure(None, f"not predicted: {missing}")
-        measured = [(none, none)] * len(stable)
-    else:
-        trials = [replace(case, controller=rows[number].controller) for number in stable]
-        found = [predict(trial).measures for trial in trials]
-        measured = [(measures.setpoint_iae, measures.load_iae) for measures in found]
+        measured.append((none, none) if found is None else (found.setpoint_iae, found.load_iae))
     filled = list(rows)
     for number, (setpoint_iae, load_iae) in zip(stable, measured, strict=True):
         filled[number] = replace(rows[number], setpoint_iae=setpoint_iae, load_iae=load_iae)
