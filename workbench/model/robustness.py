@@ -113,9 +113,52 @@ def sampled_margins(loop: Loop, known: SampledLoop | None = None) -> Margins:
     last = float(response(np.array([top]))[0].real)
 
     def survived(frequency: float, delay: float) -> float:
-        return _held_delay(loop, frequency, delay)
+        found = _held_delay(loop, frequency, delay)
+        return _soonest(loop, found) if _is_coarse(loop) else found
 
-    return _margins(response, grid, open_loop, far=last, far_at=top, survived=survived)
+    # A loop that is not had from a state space takes its further dead time as a delay of L.
+    exact = survived if known is None else None
+    return _margins(response, grid, open_loop, far=last, far_at=top, survived=exact)
+
+
+def _is_coarse(loop: Loop) -> bool:
+    """The scan is not short against the plant's slowest lag: a part of a scan changes much."""
+    assert loop.scan is not None
+    lags = [1.0 / -pole.real for pole in loop.plant.poles() if pole.real < 0.0]
+    return loop.scan > 0.5 * max(lags, default=0.0)
+
+
+def _soonest(loop: Loop, delay: float) -> float:
+    """The least dead time up to `delay` [s] with which the loop is not stable any more.
+
+    What the root at the crossover does is known up to `delay`; before it another root may leave,
+    because with each part of a scan the held plant is another one.
+    """
+
+    def stable(further: float) -> bool:
+        later = replace(loop, plant=loop.plant * TransferFunction.ratio((1.0,), dead_time=further))
+        sampled = later.sampled() if isinstance(later, Structure) else SampledLoop.of(later)
+        return sampled.verdict().stable
+
+    assert loop.scan is not None
+    count = max(_LOOKS, math.ceil(_LOOKS * min(delay / loop.scan, _MOST_SCANS)))
+    before = 0.0
+    for further in np.linspace(0.0, delay, count, endpoint=False)[1:].tolist():
+        if stable(further):
+            before = further
+            continue
+        after = further
+        for _ in range(_HALVINGS):
+            middle = 0.5 * (before + after)
+            before, after = (middle, after) if stable(middle) else (before, middle)
+        return after
+    return delay
+
+
+_LOOKS: Final = 12
+"""Dead times for each scan at which the loop is looked at."""
+_MOST_SCANS: Final = 5
+_HALVINGS: Final = 34
 
 
 def _held_delay(loop: Loop, frequency: float, delay: float) -> float:

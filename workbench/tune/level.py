@@ -88,7 +88,8 @@ def skogestad_averaging_level(
     if share > _MOST_DELAY:
         raise NotApplicable(
             f"the dead time is {text(share, digits=3)} of 1/(K k')",
-            limit=f"wants at most {text(_MOST_DELAY)}, a limit of this program",
+            limit=f"wants at most {text(_MOST_DELAY)}",
+            source="a limit of this program",
         )
     return Tuning(gain, None if kind == "p" else 4.0 / (gain * abs(model.gain)))
 
