@@ -14,13 +14,17 @@ from tests.records.making import (
     bump,
     lag,
     lagged_ramp,
+    lead,
     ramp,
+    runaway,
     stamps,
+    swing,
     two_lags,
 )
 from workbench.errors import CannotSolve, InputError
 from workbench.model.plant import SHAPES
-from workbench.records.identify import Candidate, Fit, fit
+from workbench.records.candidate import Candidate
+from workbench.records.identify import Fit, fit
 from workbench.records.record import Record, read_record
 from workbench.records.response import FITTED
 
@@ -34,6 +38,15 @@ MADE: dict[str, tuple[Answer, dict[str, tuple[float, ...]]]] = {
         two_lags(-0.6, 150.0, 40.0),
         {"gain": (-0.6,), "time_constants_s": (150.0, 40.0)},
     ),
+    "oscillating": (
+        swing(1.3, 300.0, 0.4),
+        {"gain": (1.3,), "natural_period_s": (300.0,), "damping": (0.4,)},
+    ),
+    "lead": (
+        lead(0.8, -60.0, 150.0, 40.0),
+        {"gain": (0.8,), "numerator_time_s": (-60.0,), "time_constants_s": (150.0, 40.0)},
+    ),
+    "unstable": (runaway(0.5, 400.0), {"gain": (0.5,), "time_constants_s": (400.0,)}),
     "integrating": (ramp(-0.002), {"slope_per_s": (-0.002,)}),
     "integrating-lag": (
         lagged_ramp(0.003, 60.0),

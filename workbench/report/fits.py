@@ -8,7 +8,8 @@ from typing import TYPE_CHECKING, Final
 from workbench.units import Amount, harmless, text
 
 if TYPE_CHECKING:
-    from workbench.records.identify import Candidate, Fit
+    from workbench.records.candidate import Candidate
+from workbench.records.identify import Fit
 from workbench.report.words import Json, Rows, note_lines, two_columns, wrapped
 
 

@@ -25,7 +25,8 @@ from workbench.screens.trend import as_cells
 from workbench.screens.work import Work
 
 if TYPE_CHECKING:
-    from workbench.records.identify import Candidate, Fit
+    from workbench.records.candidate import Candidate
+from workbench.records.identify import Fit
 
 MOST: Final = 2000
 """Records listed."""

@@ -21,7 +21,8 @@ from workbench.errors import (
 )
 from workbench.model.pid import Controller
 from workbench.model.plant import Formula, Shape
-from workbench.records.identify import Candidate, Fit
+from workbench.records.candidate import Candidate
+from workbench.records.identify import Fit
 from workbench.records.identify import fit as fit_plants
 from workbench.records.record import read_record
 from workbench.study.assessment import assess
