@@ -2,8 +2,6 @@
 
 from __future__ import annotations
 
-from typing import Final
-
 from workbench import report
 from workbench.cli.answer import Answer, Status
 from workbench.cli.options import Given
@@ -26,14 +24,10 @@ def fit(given: Given) -> Answer:
             end=given.word("--to"),
             noise_model=noise or "auto",
             drift="--no-drift" not in given,
-            shapes=FITTED if shape is None else (shape,),
+            shapes=None if shape is None else (shape,),
         )
     return Answer(
         report.fit_text(fit, width()),
         report.fit_data(fit),
         Status.NO if fit.chosen is None else Status.DONE,
     )
-
-
-FITTED: Final = ("first-order", "integrating")
-"""Shapes that are fitted where none is named."""

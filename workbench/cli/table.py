@@ -218,7 +218,7 @@ FIT: Final[tuple[Option, ...]] = (
     Option("--op", "COLUMN", "column of the controller output", "op"),
     Option("--from", "STAMP", "first row to use", "the first of the record"),
     Option("--to", "STAMP", "last row to use", "the last of the record"),
-    Option("--shape", "SHAPE", "fit this shape only", "first-order and integrating"),
+    Option("--shape", "SHAPE", "fit this shape only", "every shape that can be fitted"),
     Option("--noise-model", "auto|white|correlated", "how the noise is described", "auto"),
     Option("--no-drift", "", "PV has no drift of its own in the record"),
 )

@@ -154,7 +154,8 @@ class StepModel:
     gain: float
     time_constant_s: float
     dead_time_s: float
-    caution: str = ""
+    remark: str = ""
+    """What to distrust; empty where nothing."""
 
 
 def shamsuzzoha_skogestad(step: SetpointStep) -> StepModel:
@@ -288,8 +289,9 @@ def _peaks(gain: float, size: float, time: Array, pv: Array) -> SetpointStep | N
     shown = pv * math.copysign(1.0, size)
     if len(shown) < 8:
         return None
-    # Noise makes small peaks of its own: a turn counts from 5 % of the whole swing on.
-    least = 0.05 * float(np.ptp(shown))
+    # Noise makes small peaks of its own; third differences leave little else, 20 times its power.
+    noise = float(np.std(np.diff(shown, 3))) / math.sqrt(20.0)
+    least = max(4.0 * noise, 1e-3 * float(np.ptp(shown)))
     turns: list[int] = []
     wanted, extreme = 1.0, 0
     for i in range(len(shown)):

@@ -113,7 +113,7 @@ def readings(record: Record) -> tuple[Reading, ...]:
     if change == 0.0 or abs(change) < 5.0 * noise:
         return ()
     half = len(tail) // 2
-    settling = abs(float(tail[half:].mean() - tail[:half].mean())) > 0.05 * abs(change) + 3 * noise
+    settling = abs(float(tail[half:].mean() - tail[:half].mean())) > 0.02 * abs(change) + 3 * noise
     found = []
     for name, low, high, method in READINGS:
         times = [_crossing(time, pv / change, share) for share in (low, high)]

@@ -194,7 +194,8 @@ def _candidate(search: Search, name: str) -> Candidate | None:
     about_mean = float(np.linalg.norm(search.rows.pv - search.rows.pv.mean()))
     left = float(np.linalg.norm(search.rows.pv - best.fitted))
     freedom = max(search.count - best.parameters + 1, 1)
-    dead_time = best.point.dead_time
+    # Next to nothing is nothing; a case file takes no such time.
+    dead_time = best.point.dead_time if best.point.dead_time > 1e-6 * search.interval else 0.0
     return Candidate(
         shape=name,
         plant=shape.make(

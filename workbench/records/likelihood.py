@@ -456,6 +456,10 @@ class Search:
                 or self.bic(best) > self.bic(correlated)
             ):
                 best = correlated
+            memory = best.point.noise_time
+            if self.noise_model == "auto" and memory is not None and memory < 0.25 * self.interval:
+                # From row to row next to nothing is remembered.
+                best = self.descend(shape, replace(best.point, noise_time=None))
         values = best.point.values
         if not shape.two_lags or values[0] >= values[1]:
             return best

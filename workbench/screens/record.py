@@ -26,7 +26,7 @@ from workbench.screens.work import Work
 
 if TYPE_CHECKING:
     from workbench.records.candidate import Candidate
-from workbench.records.identify import Fit
+    from workbench.records.identify import Fit
 
 MOST: Final = 2000
 """Records listed."""

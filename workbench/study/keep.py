@@ -25,6 +25,7 @@ from workbench.records.candidate import Candidate
 from workbench.records.identify import Fit
 from workbench.records.identify import fit as fit_plants
 from workbench.records.record import read_record
+from workbench.records.response import FITTED
 from workbench.study.assessment import assess
 from workbench.study.loop import controller_of, no_time_domain, plant_of
 from workbench.study.prediction import predict
@@ -50,15 +51,22 @@ def fit_record(  # noqa: PLR0913 - one argument for each option of the command
     mode: str | None = None,
     start: str | None = None,
     end: str | None = None,
-    shapes: tuple[str, ...] = ("first-order", "integrating"),
+    shapes: tuple[str, ...] | None = None,
     noise_model: str = "auto",
     drift: bool = True,
     should_stop: Callable[[], bool] | None = None,
 ) -> Fit:
-    """Fit plant models to a test record.  Raises `RecordError` or `CannotSolve`."""
+    """Fit plant models to a test record, of every shape where none is named.
+
+    Raises `RecordError` or `CannotSolve`.
+    """
     record = read_record(path, time=time, pv=pv, op=op, sp=sp, mode=mode, start=start, end=end)
     return fit_plants(
-        record, shapes=shapes, noise_model=noise_model, drift=drift, should_stop=should_stop
+        record,
+        shapes=shapes or tuple(FITTED),
+        noise_model=noise_model,
+        drift=drift,
+        should_stop=should_stop,
     )
 
 
