@@ -56,7 +56,9 @@ def played(
             delay.append(level)
             state = keep * state + (1 - keep) * k * delay.pop(0)
         upset = 0.9 * upset + disturbance * dice.normal()
-    return Record("loop", np.arange(rows) * step, pv + 50.0, op + 40.0, sp=target + 50.0)
+    return Record(
+        "loop", np.arange(rows, dtype=np.float64) * step, pv + 50.0, op + 40.0, sp=target + 50.0
+    )
 
 
 def square(rows: int, half: int, size: float) -> Array:

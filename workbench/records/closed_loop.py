@@ -291,7 +291,7 @@ def _peaks(gain: float, size: float, time: Array, pv: Array) -> SetpointStep | N
         return None
     # Noise makes small peaks of its own; third differences leave little else, 20 times its power.
     noise = float(np.std(np.diff(shown, 3))) / math.sqrt(20.0)
-    least = max(4.0 * noise, 1e-3 * float(np.ptp(shown)))
+    least = max(4.0 * noise, 1e-4 * float(np.ptp(shown)))
     turns: list[int] = []
     wanted, extreme = 1.0, 0
     for i in range(len(shown)):
