@@ -27,6 +27,7 @@ from tests.model.test_robustness import brinks, sampled_verdicts
 from tests.model.test_stability import verdicts
 from tests.model.test_transfer import laws, limits, step_responses
 from tests.plain import sampled_pv
+from tests.records.campaigns import certain, choices
 from tests.sim.campaigns import (
     analogue_by_mpmath,
     changed_loops,
@@ -444,6 +445,12 @@ CAMPAIGNS: Final[dict[str, Campaign]] = {
         _judged(searched, 41, 0.01, "cost above the best of a grid, as a share"), 2, 108
     ),
     "fits of made records": Campaign(fitted_records, 10, 400),
+    "intervals of every shape": Campaign(
+        _judged(certain, 0, 3.1, "sd that a share held is off 95 %"), 16, 4000
+    ),
+    "the right shape chosen": Campaign(
+        _judged(choices, 0, 0.1, "share in which another was chosen"), 4, 400
+    ),
     "damaged case files": Campaign(damaged_files, 100, 20_000),
     "case files kept": Campaign(kept_files, 20, 2000),
     "command lines at random": Campaign(command_lines, 40, 3000),

@@ -203,6 +203,19 @@ def certain(size: int, seed: int) -> tuple[float, list[str]]:
     return worst, failures
 
 
+def choices(size: int, seed: int) -> tuple[float, list[str]]:
+    """Worst share of draws in which another shape was chosen, where it leaves 3 noise sd or more."""
+    shares = []
+    for made in MADE:
+        if not made.simpler:
+            continue
+        for memory in (0.0, MEMORY):
+            found = tally(made, memory, max(size // 4, 1), seed=seed)
+            assert found.plain_misfit > 3.0
+            shares.append(1.0 - found.chosen)
+    return max(shares), []
+
+
 def main(size: int, *, choose: bool) -> None:
     """Print the table."""
     print("case          noise       draws  told  right shape  misfit  error/bound | held %")

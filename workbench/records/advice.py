@@ -109,7 +109,7 @@ def _about_upset(best: Candidate) -> list[str]:
         return []
     at, moved = upset
     words = (
-        f"Something other than OP seems to have moved PV by {text(moved, digits=2)} from about "
+        f"Something other than OP seems to have moved PV by roughly {text(moved, digits=1)} from about "
         f"{time_text(at, 3)} on: leave that window out, or repeat the test."
     )
     return [words]
