@@ -94,7 +94,7 @@ MADE: Final = (
         "first-order",
         two_lags,
         {"gain": (-0.6,), "time_constants_s": (100.0, 50.0), "dead_time_s": (25.7,)},
-        0.1,
+        0.055,
         8.0,
         200,
     ),
@@ -204,7 +204,7 @@ def certain(size: int, seed: int) -> tuple[float, list[str]]:
 
 
 def choices(size: int, seed: int) -> tuple[float, list[str]]:
-    """Worst share of draws in which another shape was chosen, where it leaves 3 noise sd or more."""
+    """Worst share of draws in which another shape was chosen, which leaves 3 noise sd or more."""
     shares = []
     for made in MADE:
         if not made.simpler:

@@ -109,8 +109,8 @@ def _about_upset(best: Candidate) -> list[str]:
         return []
     at, moved = upset
     words = (
-        f"Something other than OP seems to have moved PV by roughly {text(moved, digits=1)} from about "
-        f"{time_text(at, 3)} on: leave that window out, or repeat the test."
+        f"Something other than OP seems to have moved PV by roughly {text(moved, digits=1)} "
+        f"from about {time_text(at, 3)} on: leave that window out, or repeat the test."
     )
     return [words]
 
