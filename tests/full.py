@@ -22,6 +22,13 @@ from typing import Final
 import numpy as np
 
 import tests.conftest  # noqa: F401 - the settings of hypothesis, which pytest would have loaded
+from tests.case.campaigns import (
+    edited_lines,
+    killed_drafts,
+    killed_saves,
+    laid_out_files,
+    surveyed_cases,
+)
 from tests.model.test_formula import fuzzed
 from tests.model.test_robustness import brinks, sampled_verdicts
 from tests.model.test_stability import verdicts
@@ -453,6 +460,13 @@ CAMPAIGNS: Final[dict[str, Campaign]] = {
     ),
     "damaged case files": Campaign(damaged_files, 100, 20_000),
     "case files kept": Campaign(kept_files, 20, 2000),
+    "one key, one line": Campaign(_judged(edited_lines, 301, 0.0, "broken"), 10, 5000),
+    "layout against tomllib": Campaign(_judged(laid_out_files, 302, 0.0, "broken"), 10, 5000),
+    "saves killed": Campaign(_judged(killed_saves, 303, 0.0, "neither old nor new"), 10, 2000),
+    "drafts killed": Campaign(_judged(killed_drafts, 304, 0.0, "lost"), 10, 2000),
+    "cases surveyed": Campaign(
+        _judged(surveyed_cases, 305, 40.0, "seconds for 1,000 cases"), 10, 1000
+    ),
     "command lines at random": Campaign(command_lines, 40, 3000),
 }
 """Name -> campaign, and its sizes."""

@@ -28,6 +28,8 @@ HEADLESS: Final = {
     "convert": ("--to", "series", *LOOP),
     "check": (str(ROOT / "cases" / "TIC-307.toml"),),
     "history": (str(ROOT / "cases" / "TIC-307.toml"),),
+    "survey": (str(ROOT / "cases"),),
+    "sheet": (*LOOP, "--scan", "1 s"),
     "new": ("XIC-1", *LOOP),
 }
 """Command -> words after which it does its whole work."""

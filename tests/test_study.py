@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import hashlib
 import math
 import random
 from dataclasses import replace
@@ -510,6 +511,27 @@ def test_a_plant_changed_without_a_reason_is_found(tmp_path: Path) -> None:
     save_case(file, edit_all(file.case, {"plant.gain": "2.5"}))
 
     assert not study.check_case(path).ok
+
+
+def test_a_record_is_found_by_its_bytes_under_another_name(tmp_path: Path) -> None:
+    (tmp_path / "bump one.csv").write_bytes(b"time_s,pv,op\n")
+    digest = hashlib.sha256(b"time_s,pv,op\n").hexdigest()
+    keys = {"plant.from": "bump.csv", "plant.from_sha256": digest}
+    path = tmp_path / "TIC-901.toml"
+    write_new(path, edit_all(a_case(), keys))
+
+    (renamed,) = study.check_case(path).faults
+    assert (renamed.key, renamed.what) == (
+        "plant.from",
+        "the record 'bump.csv' is not beside the case",
+    )
+    assert renamed.mend == "its bytes are in 'bump one.csv': set plant.from to that"
+    (tmp_path / "bump one.csv").write_bytes(b"another\n")
+    (lost,) = study.check_case(path).faults
+    assert lost.mend == "put it back, or accept a fit of another record"
+    (tmp_path / "bump one.csv").rename(tmp_path / "bump.csv")
+    (other,) = study.check_case(path).faults
+    assert other.key == "plant.from_sha256"
 
 
 def test_a_change_without_a_name_or_a_reason_is_refused() -> None:

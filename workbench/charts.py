@@ -13,12 +13,16 @@ import threading
 from collections.abc import Sequence
 from dataclasses import dataclass
 from functools import lru_cache
-from typing import Any, Final
+from typing import TYPE_CHECKING, Any, Final
 
 import numpy as np
 from numpy.typing import NDArray
 
-from workbench.units import TIME_UNITS
+from workbench.units import TIME_UNITS, harmless
+
+if TYPE_CHECKING:
+    from workbench.case.case import Case
+    from workbench.study import Trend
 
 Floats = NDArray[np.float64]
 
@@ -125,6 +129,24 @@ def draw(
         top += rows
     sheet.x_axis(top, gutter, x_axis)
     return sheet.picture()
+
+
+def trend_panes(
+    case: Case, present: Trend | None, earlier: Trend | None = None
+) -> tuple[Pane, ...]:
+    """PV and SP above, OP below, in the loop's own units; an earlier trend under the present."""
+    pv, op = [], []
+    if earlier is not None:
+        pv.append(Curve(earlier.time, earlier.pv, "pinned", "pinned"))
+        op.append(Curve(earlier.time, earlier.output, "pinned", "pinned"))
+    if present is not None:
+        pv.append(Curve(present.time, present.setpoint, "setpoint", "SP"))
+        pv.append(Curve(present.time, present.pv, "pv", "PV"))
+        op.append(Curve(present.time, present.output, "output", "OP"))
+    return (
+        Pane(f"PV {case.pv.unit}", tuple(pv), (case.pv.low, case.pv.high), 2.0),
+        Pane(f"OP {case.op.unit}", tuple(op), (case.op.low, case.op.high), 1.0),
+    )
 
 
 # --- axes ----------------------------------------------------------------------------------------
@@ -258,7 +280,10 @@ class _Sheet:
         return Picture(self.characters, self.styles)
 
     def text(self, row: int, column: int, words: str, style: str = "label") -> None:
-        words = words[: max(0, self.width - column)]
+        # A unit comes from a file, and a file may say anything.
+        words = harmless(words)[: max(0, self.width - column)]
+        if self.ascii_only:
+            words = words.encode("ascii", "replace").decode("ascii")
         if not (0 <= row < self.height) or not words:
             return
         end = column + len(words)

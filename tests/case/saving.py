@@ -14,17 +14,21 @@ from typing import Any, Final
 
 from tests.case.making import an_entry
 from workbench.case import files
-from workbench.case.case import edit
+from workbench.case.case import Case, edit
 from workbench.errors import InputError
 
 REPOSITORY: Final = Path(__file__).resolve().parents[2]
 
 
-def started(call: str) -> subprocess.Popen[str]:
+def started(call: str, **environment: str) -> subprocess.Popen[str]:
     """A Python of its own that runs a function of this module."""
     code = f"from tests.case.saving import *; {call}"
     return subprocess.Popen(
-        [sys.executable, "-c", code], cwd=REPOSITORY, stdout=subprocess.PIPE, text=True
+        [sys.executable, "-c", code],
+        cwd=REPOSITORY,
+        env={**os.environ, **environment},
+        stdout=subprocess.PIPE,
+        text=True,
     )
 
 
@@ -55,8 +59,11 @@ def save_over(path: str) -> None:
         print(fault)
 
 
-def kill_saves(path: str, times: int, seed: int) -> None:
-    """Kills a process in the middle of its saves; prints how often the file was old or new."""
+def kill_saves(path: str, times: int, seed: int, at_once: int = 1) -> None:
+    """Kills processes in the middle of their saves; prints how often the file was old or new.
+
+    Where several are at it, each reads again whatever the other has saved meanwhile.
+    """
     chance = random.Random(seed)
     target = Path(path)
     file = files.read_case(path)
@@ -66,20 +73,63 @@ def kill_saves(path: str, times: int, seed: int) -> None:
     texts[other.raw] = "new"
     found = []
     for _ in range(times):
-        child = os.fork()
-        if child == 0:
-            held = files.read_case(path)
-            while True:
-                held = files.save_case(held, first if held.case == second else second)
+        children = [_saving(path, first, second) for _ in range(at_once)]
         time.sleep(chance.uniform(0.002, 0.04))
-        os.kill(child, signal.SIGKILL)
-        os.waitpid(child, 0)
+        for child in children:
+            os.kill(child, signal.SIGKILL)
+        for child in children:
+            os.waitpid(child, 0)
         found.append(texts.get(target.read_bytes(), "neither"))
     held = files.read_case(path)
     files.save_case(held, first if held.case == second else second)
     print(
         *(found.count(word) for word in ("old", "new", "neither")), len(os.listdir(target.parent))
     )
+
+
+def _saving(path: str, first: Case, second: Case) -> int:
+    """A process that saves one case and the other by turns until it is killed."""
+    child = os.fork()
+    if child:
+        return child
+    held = files.read_case(path)
+    while True:
+        try:
+            held = files.save_case(held, first if held.case == second else second)
+        except InputError:
+            held = files.read_case(path)
+
+
+def kill_drafts(path: str, times: int, seed: int) -> None:
+    """Kills a session in the middle of its work; prints how often a draft it had told was lost.
+
+    A session tells each change once its draft is written, as the screen does by showing it.
+    """
+    from workbench.screens import drafts
+
+    chance = random.Random(seed)
+    lost = 0
+    for _ in range(times):
+        told, tells = os.pipe()
+        child = os.fork()
+        if child == 0:
+            keeper = drafts.Keeper(Path(path))
+            for number in range(1_000_000):
+                keeper.hold("now", "base", {"controller.gain": str(number)})
+                keeper.write()
+                os.write(tells, number.to_bytes(4, "big"))
+        os.close(tells)
+        time.sleep(chance.uniform(0.005, 0.03))
+        os.kill(child, signal.SIGKILL)
+        os.waitpid(child, 0)
+        with open(told, "rb") as pipe:
+            heard = pipe.read()
+        kept = drafts.find(Path(path))
+        number = -1 if kept is None else int(kept.changes["controller.gain"])
+        lost += len(heard) >= 4 and number < int.from_bytes(heard[-4:], "big")
+        if kept is not None:
+            kept.path.unlink()
+    print(lost)
 
 
 STEPS: Final = ("fchmod", "fsync", "replace")

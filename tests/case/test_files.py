@@ -36,6 +36,7 @@ from workbench.case.files import (
     CaseFile,
     changed_on_disk,
     file_name,
+    merge,
     parse_case,
     read_case,
     save_case,
@@ -366,8 +367,12 @@ def hunks(old: str, new: str) -> list[tuple[list[str], list[str]]]:
 
 
 @given(styles(), st.data())
-@settings(max_examples=100)
+@settings(max_examples=60)
 def test_changing_one_key_changes_only_its_line(text: str, data: st.DataObject) -> None:
+    one_key_changes_its_line(text, data)
+
+
+def one_key_changes_its_line(text: str, data: st.DataObject) -> None:
     case = parse_case(text)
     bound = ("plant.shape", "plant.formula", "plant.blocks", "plant.load", "controller.gain")
     free = [k for k in keys(case) if k not in bound and not k.endswith("proportional_band")]
@@ -717,6 +722,52 @@ def test_any_other_change_is_not_overwritten_either(
         save_case(file, file.case)
 
 
+def test_two_peoples_changes_are_merged_by_key(file: CaseFile) -> None:
+    theirs = edit_all(file.case, {"controller.gain": "2", "loop.area": "Drying"})
+    saved = save_case(file, theirs.with_entry(an_entry(who="ab")))
+    mine = edit_all(file.case, {"controller.gain": "1.3", "pv.noise": "0.2", "loop.area": "Drying"})
+
+    found = merge(file, mine)
+
+    assert found.file.raw == saved.raw
+    assert found.both == ("controller.gain",), "what both changed alike is no conflict"
+    assert [show(found.case, key) for key in ("controller.gain", "pv.noise", "loop.area")] == [
+        "1.3",
+        "0.2",
+        "Drying",
+    ]
+    assert found.case.history == saved.case.history
+    assert ("controller.gain", "1.1", "2") in found.theirs
+    assert save_case(found.file, found.case).case == found.case
+
+
+def test_a_controller_taken_out_here_stays_out(file: CaseFile) -> None:
+    save_case(file, edit(file.case, "loop.area", "Drying"))
+    found = merge(file, replace(file.case, controller=None))
+
+    assert found.case.controller is None
+    assert found.case.loop.area == "Drying"
+
+
+@pytest.mark.skipif(os.geteuid() != 0, reason="only the superuser can give a file away")
+def test_owner_and_group_are_kept_or_their_loss_is_told(
+    file: CaseFile, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    os.chown(file.path, 1234, 2345)
+    kept = save_case(read_case(file.path), changed(file))
+    assert (os.stat(file.path).st_uid, os.stat(file.path).st_gid) == (1234, 2345)
+    assert kept.notes == ()
+
+    def refused(*_: object) -> None:
+        raise PermissionError(1, "Operation not permitted")
+
+    monkeypatch.setattr(os, "fchown", refused)
+    told = save_case(kept, edit(kept.case, "controller.gain", "1.4")).notes
+    assert [note.text for note in told] == [
+        "the file's owner and group could not be kept: it is yours now"
+    ]
+
+
 def test_a_file_or_folder_that_is_gone_is_told(tmp_path: Path) -> None:
     folder = tmp_path / "folder"
     folder.mkdir()
@@ -908,15 +959,6 @@ def test_two_writers_lose_no_entry(file: CaseFile) -> None:
         kept = [entry.why for entry in history if entry.who == who]
         assert kept == [f"number {number}" for number in range(15)]
     assert alone(file)
-
-
-def test_a_killed_save_leaves_the_old_file_or_the_new(file: CaseFile) -> None:
-    told, _ = started(f"kill_saves({file.path!r}, 20, 7)").communicate(timeout=60)
-    old, new, neither, left = (int(word) for word in told.split())
-
-    assert (old + new, neither) == (20, 0)
-    # The save after the last kill swept up what the killed ones had left.
-    assert left == 1
 
 
 def test_a_save_may_die_at_any_step(file: CaseFile) -> None:

@@ -160,7 +160,11 @@ def test_versions_are_printed(run: Run) -> None:
         (["nothere.toml"], "nothere.toml", "there is no such file or folder"),
         (["no/such"], "no/such", "there is no such file or folder"),
         (["oven.toml", "--ascii"], "screen", "needs a terminal"),
-        ([], "screen", "assess, predict, respond, fit, propose, convert, check, history or new"),
+        (
+            [],
+            "screen",
+            "assess, predict, respond, fit, propose, convert, check, history, survey, sheet or new",
+        ),
         (["."], "screen", "needs a terminal"),
         (["--asci"], "--asci", "did you mean --ascii?"),
         (["--gain", "1"], "--gain", "is not an option"),
@@ -852,8 +856,9 @@ def test_history_between_tells_what_changed(run: Run) -> None:
     data = answer(run("history", "old.toml", "--between", "1", "2", "--json"))
     assert [entry["number"] for entry in data["entries"]] == [1, 2]
     assert data["changes"] == [
-        {"key": "gain", "before": "0.8", "after": "1.1"},
-        {"key": "integral", "before": "40 s", "after": "32 s"},
+        # exact: 0.3 / 0.8 and -8 / 40
+        {"key": "gain", "before": "0.8", "after": "1.1", "change_percent": pytest.approx(37.5)},
+        {"key": "integral", "before": "40 s", "after": "32 s", "change_percent": -20.0},
     ]
     assert "0.8 -> 1.1" in run("history", "old.toml", "--between", "1", "2").out
 

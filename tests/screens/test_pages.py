@@ -3,6 +3,9 @@
 from __future__ import annotations
 
 import json
+import os
+import subprocess
+import sys
 from pathlib import Path
 
 import pytest
@@ -18,6 +21,7 @@ from tests.screens.conftest import (
     type_in,
 )
 from workbench import study
+from workbench.case.case import show
 from workbench.case.files import read_case
 from workbench.errors import problem
 from workbench.records.identify import Fit
@@ -27,7 +31,7 @@ from workbench.screens.main import MainPage
 from workbench.screens.page import Page
 from workbench.screens.proposals import ProposalsPage
 from workbench.screens.record import RecordFitted, RecordPage
-from workbench.screens.saving import DraftPage, LeavePage, SavePage
+from workbench.screens.saving import ConflictPage, DraftPage, LeavePage, SavePage
 from workbench.screens.start import StartPage
 from workbench.screens.work import Work
 
@@ -310,6 +314,8 @@ def test_a_file_that_changed_meanwhile_is_not_overwritten_and_the_work_is_kept(
             await press(pilot, "s")
             await type_in(pilot, "mine")
             await press(pilot, "enter")
+            page_of(pilot, ConflictPage)
+            await press(pilot, "escape")
             page_of(pilot, SavePage)
             shown = text_of(pilot)
             assert "not saved" in shown
@@ -469,6 +475,120 @@ def test_a_draft_that_cannot_be_written_is_told(
             assert work.show("controller.gain") == "1.122"
 
     run(story())
+
+
+def test_a_running_session_keeps_its_draft_to_itself(folder: Path) -> None:
+    """Another process with unsaved work on the same case, while it lives and after."""
+    script = (
+        "import sys; from pathlib import Path; from workbench.screens.work import Work;"
+        "work = Work.open(Path('tic-307.toml')); work.edit('controller.gain', '1.7');"
+        "work.keeper.write(); print('kept', flush=True); sys.stdin.read()"
+    )
+    other = subprocess.Popen(
+        [sys.executable, "-c", script],
+        env={**os.environ, "PYTHONPATH": str(Path(__file__).parents[2])},
+        stdin=subprocess.PIPE,
+        stdout=subprocess.PIPE,
+        text=True,
+    )
+    assert other.stdout is not None
+    assert other.stdout.readline() == "kept\n"
+    here = Work.open(Path("tic-307.toml"))
+    assert here.draft is None
+    here.edit("controller.gain", "1.3")
+    here.keeper.write()
+
+    other.kill()
+    other.communicate()
+    drafts.place(Path("tic-307.toml")).unlink()
+    later = Work.open(Path("tic-307.toml"))
+    assert later.draft is not None
+    assert later.draft.changes == {"controller.gain": "1.7"}
+    left = later.draft.path
+    later.take_up(later.draft)
+    assert left.exists(), "the old draft goes only once the new one is on the disk"
+    later.keeper.write()
+    assert not left.exists()
+    assert drafts.place(Path("tic-307.toml")).exists()
+
+
+# --- two people ----------------------------------------------------------------------------------
+
+
+def _saved_by_another() -> None:
+    path = Path("tic-307.toml")
+    path.write_text(path.read_text().replace('area = "Drying"', 'area = "Dry end"'))
+
+
+def test_what_another_saved_is_taken_in_before_saving(work: Work) -> None:
+    async def story() -> None:
+        async with running(work) as pilot:
+            await press(pilot, "down", "plus", "s", *"faster")
+            _saved_by_another()
+            await press(pilot, "enter")
+            page_of(pilot, ConflictPage)
+            assert "loop.area                       Drying -> Dry end" in text_of(pilot)
+            assert "controller.gain                 1.1 -> 1.122" in text_of(pilot)
+            await press(pilot, "m")
+            page_of(pilot, SavePage)
+            assert "their changes are taken in; Enter saves" in text_of(pilot)
+            assert read_case("tic-307.toml").case.history[1:] == ()
+            await press(pilot, "enter")
+            page_of(pilot, MainPage)
+
+    run(story())
+    case = read_case("tic-307.toml").case
+    assert (case.loop.area, show(case, "controller.gain")) == ("Dry end", "1.122")
+    assert [entry.why for entry in case.history[1:]] == ["faster"]
+
+
+def test_what_another_saved_can_be_left_alone(work: Work, folder: Path) -> None:
+    async def story() -> None:
+        async with running(work) as pilot:
+            await press(pilot, "down", "plus", "s", *"faster")
+            _saved_by_another()
+            await press(pilot, "enter", "b")
+            page_of(pilot, MainPage)
+
+    run(story())
+    (beside,) = folder.glob("tic-307_*.toml")
+    assert show(read_case(beside).case, "controller.gain") == "1.122"
+    theirs = read_case("tic-307.toml").case
+    assert (theirs.loop.area, show(theirs, "controller.gain")) == ("Dry end", "1.1")
+    assert not list(drafts.folder().glob("*"))
+
+
+# --- the way back --------------------------------------------------------------------------------
+
+
+def test_earlier_settings_come_back_in_one_step(work: Work) -> None:
+    async def story() -> None:
+        async with running(work) as pilot:
+            await press(pilot, "down", "plus", "plus", "5")
+            assert "Enter puts back: gain 1.144 -> 1.1." in text_of(pilot)
+            await press(pilot, "enter")
+            assert "the settings of entry 1 are back" in text_of(pilot)
+            assert work.show("controller.gain") == "1.1"
+            await press(pilot, "enter")
+            assert "are the present ones" in text_of(pilot)
+            await press(pilot, "u")
+            assert work.show("controller.gain") == "1.144"
+
+    run(story())
+
+
+def test_a_safety_related_loop_asks_for_its_reference(work: Work) -> None:
+    work.edit("loop.safety_related", "true")
+
+    async def story() -> None:
+        async with running(work) as pilot:
+            await press(pilot, "s", *"trip moved", "enter")
+            assert "reference: is blank, and the loop is safety-related" in text_of(pilot)
+            await press(pilot, "tab", "tab", "tab", *"MOC 26-114", "enter")
+            page_of(pilot, MainPage)
+
+    run(story())
+    assert read_case("tic-307.toml").case.history[-1].reference == "MOC 26-114"
 
 
 # --- help ----------------------------------------------------------------------------------------

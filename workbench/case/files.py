@@ -23,7 +23,7 @@ from dataclasses import dataclass, replace
 from functools import cached_property
 from typing import Any, Final
 
-from workbench.case.case import Case, differences
+from workbench.case.case import Case, differences, edit_all
 from workbench.case.layout import Layout, read_layout
 from workbench.case.reading import MOST_FAULTS, read_tables
 from workbench.case.writing import BYTE_ORDER_MARK, FORMAT, changed_text, format_case
@@ -272,7 +272,9 @@ def save_case(file: CaseFile, case: Case) -> CaseFile:
             if now != file.raw:
                 raise _changed_meanwhile(file, now)
             if raw != file.raw:
+                before = os.stat(target)
                 _replace(folder, target, raw)
+                notes = (*notes, *_owner_notes(target, before))
     except (OSError, ValueError) as fault:
         raise _unsaved(fault, file.path) from None
     except InputError as fault:
@@ -309,6 +311,39 @@ def changed_on_disk(file: CaseFile) -> list[tuple[str, str, str]] | None:
     """
     now = read_case(file.path)
     return None if now.raw == file.raw else differences(file.case, now.case)
+
+
+@dataclass(frozen=True)
+class Merge:
+    """What one person has and what another saved meanwhile, put together key by key."""
+
+    file: CaseFile
+    """The file as the other person left it."""
+    case: Case
+    """Theirs, with one's own changes over it."""
+    theirs: tuple[tuple[str, str, str], ...]
+    """What they changed: key, value then, value now."""
+    both: tuple[str, ...]
+    """Keys that both changed, to different values; one's own are kept."""
+
+
+def merge(file: CaseFile, case: Case) -> Merge:
+    """One's own changes to a case, put over what someone else saved in its file.
+
+    Raises `InputError` where the file can no longer be read, or the two do not go together.
+    """
+    now = read_case(file.path)
+    own = [change for change in differences(file.case, case) if change[0] != "history"]
+    theirs = differences(file.case, now.case)
+    found = {key: value for key, _, value in theirs}
+    both = tuple(key for key, _, value in own if key in found and found[key] != value)
+    # A controller taken out is one change; everything else is a key with its text.
+    removed = any(key == "controller" for key, _, _ in own)
+    keys = {key: value for key, _, value in own if key != "controller"}
+    merged = edit_all(now.case, keys) if keys else now.case
+    if removed:
+        merged = replace(merged, controller=None)
+    return Merge(now, merged, tuple(theirs), both)
 
 
 def _proved(text: str, case: Case) -> bytes:
@@ -440,12 +475,29 @@ def _temporary(folder: _Folder, raw: bytes, mode: int, like: os.stat_result | No
 
 
 def _made_like(handle: int, like: os.stat_result) -> None:
-    """Gives a new file the owner, where that is allowed, and the mode of the old one."""
+    """Gives a new file the owner and group, where that is allowed, and the mode of the old one."""
     own = os.fstat(handle)
     if (own.st_uid, own.st_gid) != (like.st_uid, like.st_gid):
-        with contextlib.suppress(OSError):
+        try:
             os.fchown(handle, like.st_uid, like.st_gid)
+        except OSError:
+            # Whoever may not give a file away may still leave it to a group of their own.
+            with contextlib.suppress(OSError):
+                os.fchown(handle, -1, like.st_gid)
     os.fchmod(handle, stat.S_IMODE(like.st_mode))
+
+
+def _owner_notes(target: str, before: os.stat_result) -> tuple[Note, ...]:
+    """What a save could not keep."""
+    now = os.stat(target)
+    lost = [
+        word
+        for word, name in (("owner", "st_uid"), ("group", "st_gid"))
+        if getattr(now, name) != getattr(before, name)
+    ]
+    if not lost:
+        return ()
+    return (Note("caution", f"the file's {' and '.join(lost)} could not be kept: it is yours now"),)
 
 
 def _replace(folder: _Folder, target: str, raw: bytes) -> None:

@@ -8,12 +8,14 @@ from __future__ import annotations
 
 import dataclasses
 import math
+import re
 from collections.abc import Iterable, Iterator
 from dataclasses import dataclass, field, replace
-from datetime import datetime
+from datetime import date, datetime
 from typing import Any, ClassVar, Final
 
 from workbench.case.structures import CompensationTable, FeedforwardTable, InnerTable
+from workbench.case.tags import KINDS, kind_of
 from workbench.errors import InputError, Problem
 from workbench.model.blocks import Blocks, format_blocks
 from workbench.model.formula import parse_formula
@@ -65,8 +67,19 @@ class LoopTable(_Table):
     tag: str = quantity("loop tag", "text", example="TIC-307", longest=60)
     service: str = quantity("what the loop controls", "text", default="")
     area: str = quantity("area of the site", "text", default="")
+    kind: str | None = quantity(
+        "kind of loop; left out: what the tag's ISA-5.1 letters tell",
+        "choice",
+        default=None,
+        choices=KINDS,
+    )
     safety_related: bool = quantity("whether safety depends on the loop", "flag", default=False)
     notes: str = quantity("notes", "text", default="", longest=2000)
+
+    @property
+    def kind_told(self) -> str:
+        """The kind of loop, stated or told by the tag; nothing where neither tells."""
+        return self.kind or kind_of(self.tag)
 
     def _faults(self) -> Iterator[Problem]:
         if not self.tag.strip():
@@ -187,6 +200,12 @@ class PlantTable(_Table):
     )
     from_: str = quantity("record that the model came from", "text", default="")
     from_sha256: str = quantity("SHA-256 of that record", "text", default="")
+    dated: str = quantity(
+        "day the plant was as the model says, like the day of its record",
+        "text",
+        default="",
+        example="2026-11-30",
+    )
 
     def __post_init__(self) -> None:
         # One unit serves both formulas, and none is kept where there is no formula to read.
@@ -219,6 +238,10 @@ class PlantTable(_Table):
         except InputError as fault:
             # Each number is accepted alone, but together they leave what can be computed.
             yield from fault.at(key="shape").problems
+        if self.dated and not _is_day(self.dated):
+            yield Problem(
+                f"{harmless(self.dated, 40)!r} is not a day", "write it like 2026-11-30", "dated"
+            )
         try:
             self.load_path()
         except InputError as fault:
@@ -260,6 +283,11 @@ class Revision(_Table):
     phase_margin_deg: float | None = quantity(
         "phase margin predicted then", "number", "deg", default=None
     )
+    reference: str = quantity(
+        "written approval that the entry rests on, like the number of a management-of-change form",
+        "text",
+        default="",
+    )
     program: str = quantity("version of the program that made the entry", "text", default="")
 
     INSTALLATION: ClassVar[tuple[str, ...]] = (
@@ -292,6 +320,13 @@ class Revision(_Table):
             yield Problem(f"{self.at.isoformat()} has no offset from UTC", AT_MEND, "at")
         elif offset.total_seconds() % 60:
             yield Problem("has an offset that is not in whole minutes", AT_MEND, "at")
+
+
+def _is_day(words: str) -> bool:
+    try:
+        return bool(re.fullmatch(r"\d{4}-\d\d-\d\d", words)) and bool(date.fromisoformat(words))
+    except ValueError:
+        return False
 
 
 AT_MEND: Final = "write it like 2026-11-30T14:05:00+01:00, without quotes"

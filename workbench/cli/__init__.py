@@ -236,6 +236,8 @@ VERBS: Final[dict[str, Callable[[Given], Answer]]] = {
     "convert": loops.convert,
     "check": files.check,
     "history": files.history,
+    "survey": files.survey,
+    "sheet": files.sheet,
     "new": files.new,
 }
 """Command -> the function that does it."""

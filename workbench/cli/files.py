@@ -4,10 +4,11 @@ from __future__ import annotations
 
 import os
 from collections.abc import Iterable
+from datetime import datetime
 from pathlib import Path
 
 from workbench import report
-from workbench.cli.answer import Answer, Status
+from workbench.cli.answer import Answer, Status, loop_of, no_controller
 from workbench.cli.options import Given
 from workbench.cli.output import progress, width
 from workbench.errors import InputError, Problem, problem
@@ -51,6 +52,45 @@ def history(given: Given) -> Answer:
             report.between_data(case, first, second, units),
         )
     return Answer(report.history_text(case, units, width()), report.history_data(case, units))
+
+
+def survey(given: Given) -> Answer:
+    """Every case of a folder, the worst first."""
+    from workbench import study
+
+    files = case_files(given.operands)
+    today = datetime.now().astimezone().date()
+    with progress("surveying", len(files)) as tell:
+        rows = study.survey(files, today, tell=tell)
+    return Answer(report.survey_text(rows, width()), report.survey_data(rows))
+
+
+def sheet(given: Given) -> Answer:
+    """The page to take to the control room."""
+    from workbench import charts, study
+    from workbench.case.tags import tag_words
+
+    case = loop_of(given)
+    if case.controller is None:
+        raise no_controller(given, "a retune sheet")
+    with progress("predicting"):
+        retune = study.retune(case)
+    before, after = (
+        None if e is None or e.prediction is None else e.prediction.trend
+        for e in (retune.before, retune.after)
+    )
+    picture = charts.draw(
+        charts.trend_panes(case, after, before), report.SHEET_WIDTH, 14, ascii_only=True
+    )
+    words = report.sheet_text(
+        retune,
+        study.units_of(case),
+        () if after is None else picture.rows,
+        file=given.file or "TAG.toml",
+        tag_words=tag_words(case.loop.tag),
+        markdown="--markdown" in given,
+    )
+    return Answer(words, {"sheet": words, "units": study.units_of(case)})
 
 
 def new(given: Given) -> Answer:

@@ -8,7 +8,7 @@ import shutil
 import sys
 import threading
 import time
-from collections.abc import Iterator
+from collections.abc import Callable, Iterator
 from typing import Final, TextIO
 
 from workbench.errors import problem
@@ -65,11 +65,20 @@ def silence(stream: TextIO) -> None:
 
 
 @contextlib.contextmanager
-def progress(doing: str) -> Iterator[None]:
-    """Seconds gone by, on standard error, when that is a terminal and the work is long."""
+def progress(doing: str, total: int = 0) -> Iterator[Callable[[int], None]]:
+    """Seconds gone by, on standard error, when that is a terminal and the work is long.
+
+    What it yields is told how much of `total` is done.
+    """
+    reached = 0
+
+    def tell(done: int) -> None:
+        nonlocal reached
+        reached = done
+
     err = sys.stderr
     if err is None or not err.isatty():
-        yield
+        yield tell
         return
     done = threading.Event()
     shown = ""
@@ -78,14 +87,15 @@ def progress(doing: str) -> Iterator[None]:
         nonlocal shown
         started = time.monotonic()
         while not done.wait(PROGRESS_EVERY_S):
-            shown = f"{doing}, {time.monotonic() - started:.0f} s (ctrl+c stops it)"
+            of = f" {reached} of {total}" if total else ""
+            shown = f"{doing}{of}, {time.monotonic() - started:.0f} s (ctrl+c stops it)"
             err.write(f"\r{shown}")
             err.flush()
 
     clock = threading.Thread(target=show, daemon=True)
     clock.start()
     try:
-        yield
+        yield tell
     finally:
         done.set()
         clock.join()

@@ -263,6 +263,8 @@ BETWEEN: Final = Option(
 )
 
 
+MARKDOWN: Final = Option("--markdown", "", "as Markdown, in place of 80 columns of plain text")
+
 SCREEN: Final = Grammar(
     "",
     "Settings for PID loops that can be defended: from a bump-test record to a fitted plant, to"
@@ -341,6 +343,22 @@ COMMANDS: Final[dict[str, Grammar]] = {
             (BETWEEN, JSON),
             "workbench history cases/TIC-307.toml --between 1 2",
             least=1,
+        ),
+        Grammar(
+            "survey",
+            "Every case of a folder, the worst first: unstable, fragile, unsound, stale, fine.",
+            "FOLDER...",
+            (JSON,),
+            "workbench survey cases",
+            least=1,
+            most=100_000,
+        ),
+        Grammar(
+            "sheet",
+            "One page for the control room: settings to enter, what to expect, how to go back.",
+            "[CASE]",
+            (MARKDOWN, SET, *INLINE, JSON),
+            "workbench sheet cases/TIC-307.toml",
         ),
         Grammar(
             "new",

@@ -26,9 +26,13 @@ from workbench.report.loops import (
     trend_csv,
 )
 from workbench.report.settings import convert_data, convert_text, propose_data, propose_text
+from workbench.report.sheet import WIDTH as SHEET_WIDTH
+from workbench.report.sheet import sheet_text
+from workbench.report.survey import survey_data, survey_text
 from workbench.report.words import Json, Rows, settings_text, wrapped
 
 __all__ = [
+    "SHEET_WIDTH",
     "Json",
     "Rows",
     "assess_data",
@@ -52,6 +56,9 @@ __all__ = [
     "respond_text",
     "response_csv",
     "settings_text",
+    "sheet_text",
+    "survey_data",
+    "survey_text",
     "trend_csv",
     "wrapped",
 ]

@@ -2,7 +2,9 @@
 
 from __future__ import annotations
 
+import math
 from collections.abc import Mapping, Sequence
+from dataclasses import dataclass
 from typing import TYPE_CHECKING, Final
 
 from workbench.units import harmless, quantities, text
@@ -89,6 +91,7 @@ def _entry_data(entry: Revision, number: int) -> Json:
         "who": entry.who,
         "kind": entry.kind,
         "why": entry.why,
+        **({"reference": entry.reference} if entry.reference else {}),
     }
     if entry.controller is not None:
         data |= settings_data(entry.controller)
@@ -127,6 +130,8 @@ def history_text(case: Case, units: Mapping[str, str], width: int) -> str:
         ]
         if predicted:
             lines.append(wrapped(f"predicted: {', '.join(predicted)}", width, "    "))
+        if entry.reference:
+            lines.append(wrapped(f"reference: {entry.reference}", width, "    "))
         if entry.why:
             lines.append(wrapped(f"why: {entry.why}", width, "    "))
     return "\n".join(lines)
@@ -137,8 +142,19 @@ def _entry_line(entry: Revision, number: int) -> str:
     return f"{number}  {when}  {entry.kind} by {entry.who}"
 
 
-def _between(case: Case, first: int, second: int) -> list[tuple[str, str, str]]:
-    """Key, before and after, of everything that two entries say differently."""
+@dataclass(frozen=True)
+class _Change:
+    """What two entries say differently."""
+
+    key: str
+    before: str
+    after: str
+    percent: float | None
+    """By how much it grew, where both are numbers in the same unit [%]."""
+
+
+def _between(case: Case, first: int, second: int) -> list[_Change]:
+    """Everything that two entries say differently, in the controller's units."""
     one, other = case.history[first - 1], case.history[second - 1]
     before, after = (
         {} if e.controller is None else settings_data(e.controller) for e in (one, other)
@@ -147,10 +163,40 @@ def _between(case: Case, first: int, second: int) -> list[tuple[str, str, str]]:
         said |= {key: getattr(entry, key) for key, _, _ in _PREDICTED if getattr(entry, key)}
     keys = [*before, *(key for key in after if key not in before)]
     return [
-        (key, _said(before.get(key)), _said(after.get(key)))
+        _Change(
+            key,
+            _said(before.get(key)),
+            _said(after.get(key)),
+            _grown(before.get(key), after.get(key)),
+        )
         for key in keys
         if before.get(key) != after.get(key)
     ]
+
+
+def _grown(before: object, after: object) -> float | None:
+    """By how much a number grew [%]; of two amounts, where they have the same unit."""
+    (one, unit), (other, same) = _number(before), _number(after)
+    if one is None or other is None or not one or unit != same:
+        return None
+    return 100.0 * (other - one) / abs(one)
+
+
+def _number(value: object) -> tuple[float | None, str]:
+    """The number that a value of an entry begins with, and its unit."""
+    if isinstance(value, bool):
+        return None, ""
+    if isinstance(value, int | float):
+        return float(value), ""
+    words = str(value).split(" ", 1)
+    try:
+        number = float(words[0])
+    except ValueError:
+        return None, ""
+    return (number, words[1] if len(words) > 1 else "") if math.isfinite(number) else (None, "")
+
+
+_NO_PERCENT: Final = "not two numbers in the same unit"
 
 
 def _said(value: object) -> str:
@@ -166,8 +212,14 @@ def between_data(case: Case, first: int, second: int, units: Mapping[str, str]) 
         "tag": case.loop.tag,
         "entries": [_entry_data(case.history[n - 1], n) for n in (first, second)],
         "changes": [
-            {"key": key, "before": before, "after": after}
-            for key, before, after in _between(case, first, second)
+            {
+                "key": change.key,
+                "before": change.before,
+                "after": change.after,
+                "change_percent": change.percent,
+                **({} if change.percent is not None else {"change_percent_reason": _NO_PERCENT}),
+            }
+            for change in _between(case, first, second)
         ],
         "units": dict(units),
     }
@@ -177,7 +229,11 @@ def between_text(case: Case, first: int, second: int, width: int) -> str:
     """What changed between two entries, for people."""
     lines = [wrapped(_entry_line(case.history[n - 1], n), width) for n in (first, second)]
     rows = [
-        (key, f"{before or 'not there'} -> {after or 'not there'}")
-        for key, before, after in _between(case, first, second)
+        (
+            change.key,
+            f"{change.before or 'not there'} -> {change.after or 'not there'}"
+            + ("" if change.percent is None else f"  ({change.percent:+.3g} %)"),
+        )
+        for change in _between(case, first, second)
     ]
     return "\n".join([*lines, "", *(two_columns(rows, width) or ["No difference."])])

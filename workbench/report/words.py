@@ -49,7 +49,7 @@ def two_columns(rows: Rows, width: int, indent: str = "  ") -> list[str]:
 
 def grid(head: Sequence[Sequence[str]], rows: Sequence[Sequence[str]]) -> list[str]:
     """Columns as wide as their words, the first to the left and the rest to the right."""
-    every = [*head, *rows]
+    every = [[harmless(word) for word in row] for row in (*head, *rows)]
     widths = [max(len(row[i]) for row in every) for i in range(len(every[0]))]
     return [
         "  ".join(

@@ -2,12 +2,14 @@
 
 A draft is the list of settings that differ from the case file, in the file's own words.  It is
 written at each accepted change, offered when the case is opened again, and removed once the work
-is saved.  Writing uses plain data only, because a signal handler may have to do it.
+is saved.  Each session on a case writes a draft of its own, and that of a session which is still
+running is left to it.  Writing uses plain data only, because a signal handler may have to do it.
 """
 
 from __future__ import annotations
 
 import contextlib
+import glob
 import hashlib
 import json
 import os
@@ -45,23 +47,60 @@ def folder() -> Path:
 
 
 def place(case_path: Path) -> Path:
-    """Where the draft of this case is kept."""
+    """Where this session keeps the draft of this case."""
+    return folder() / f"{_stem(case_path)}-{os.getpid()}.json"
+
+
+def _stem(case_path: Path) -> str:
+    """What the drafts of one case share."""
     whole = os.path.abspath(case_path)
     name = hashlib.sha256(whole.encode("utf-8", "surrogateescape")).hexdigest()[:12]
-    return folder() / f"{case_path.stem[:40]}-{name}.json"
+    return f"{case_path.stem[:40]}-{name}"
 
 
 def find(case_path: Path) -> Draft | None:
-    """The draft of this case, or nothing where there is none that can be read."""
-    path = place(case_path)
+    """The newest draft that an ended session left of this case, or nothing."""
+    found: list[tuple[float, Draft]] = []
+    for path in folder().glob(f"{glob.escape(_stem(case_path))}-*.json"):
+        try:
+            if path.stat().st_size > LARGEST:
+                continue
+            kept = json.loads(path.read_text(encoding="utf-8"))
+            changes = {str(key): str(text) for key, text in kept["changes"].items()}
+            draft = Draft(path, harmless(str(kept["at"]), 40), str(kept["base"]), changes)
+            if not _is_at_work(path, kept):
+                found.append((path.stat().st_mtime, draft))
+        except (OSError, ValueError, KeyError, AttributeError, TypeError, RecursionError):
+            continue
+    return max(found, key=lambda each: each[0])[1] if found else None
+
+
+def _is_at_work(path: Path, kept: Mapping[str, object]) -> bool:
+    """Whether another session on this machine is still writing the draft."""
+    number = int(path.stem.rpartition("-")[2])
+    if number == os.getpid() or kept.get("host") != os.uname().nodename:
+        return False
+    # A number is given out again; the same number and the same start are the same process.
+    return kept.get("started") == _started(number) != ""
+
+
+def _started(number: int) -> str:
+    """When a process began, in the system's own count; nothing where there is none of the number.
+
+    Where the system does not tell, a process that is there is taken for the same one.
+    """
     try:
-        if path.stat().st_size > LARGEST:
-            return None
-        kept = json.loads(path.read_text(encoding="utf-8"))
-        changes = {str(key): str(text) for key, text in kept["changes"].items()}
-        return Draft(path, harmless(str(kept["at"]), 40), str(kept["base"]), changes)
-    except (OSError, ValueError, KeyError, AttributeError, TypeError, RecursionError):
-        return None
+        os.kill(number, 0)
+    except PermissionError:
+        pass
+    except OSError:
+        return ""
+    try:
+        # The second field is a name in brackets, which may hold anything.
+        status = Path(f"/proc/{number}/stat").read_text(encoding="utf-8", errors="replace")
+        return status.rpartition(")")[2].split()[19]
+    except (OSError, IndexError):
+        return "not told"
 
 
 class Keeper:
@@ -72,14 +111,21 @@ class Keeper:
         self.case_path = case_path
         self._wanted: str | None = None
         self._written: str | None = None
+        self._replaced: Path | None = None
+        self._session = {"host": os.uname().nodename, "started": _started(os.getpid())}
         # Reentrant: a signal handler runs in the thread that may be writing.
         self._lock = threading.RLock()
 
     def hold(self, at: str, base: str, changes: Mapping[str, str]) -> None:
         """Take note of the unsaved work; `write` puts it on disk."""
-        kept = {"case": os.path.abspath(self.case_path), "at": at, "base": base}
+        kept = {"case": os.path.abspath(self.case_path), "at": at, "base": base, **self._session}
         text = json.dumps({**kept, "changes": dict(changes)}, indent=1) + "\n"
         self._wanted = text if changes else None
+
+    def replaces(self, draft: Draft) -> None:
+        """The work of an earlier session goes on here: its draft goes once ours is on disk."""
+        if draft.path != self.path:
+            self._replaced = draft.path
 
     def write(self) -> None:
         """Bring the disk up to date.  Raises `OSError` where that cannot be done."""
@@ -98,6 +144,9 @@ class Keeper:
                 new.write_text(wanted, encoding="utf-8")
                 new.replace(self.path)
             self._written = wanted
+            if self._replaced is not None:
+                self._replaced.unlink(missing_ok=True)
+                self._replaced = None
 
     def write_last(self) -> None:
         """As the program is being ended from outside: nobody is left to be told of a fault."""

@@ -13,7 +13,7 @@ from textual.widget import Widget
 from textual.worker import Worker, WorkerState
 
 from workbench import study
-from workbench.case.case import Case
+from workbench.case.case import Case, Revision
 from workbench.errors import InputError, WorkbenchError
 from workbench.screens.cells import Divider, Line
 from workbench.screens.controller import ControllerPanel
@@ -21,7 +21,7 @@ from workbench.screens.editor import Editor
 from workbench.screens.entry import Entry
 from workbench.screens.fields import FieldsPanel, label_of
 from workbench.screens.figures import FiguresPanel
-from workbench.screens.history import HistoryPanel
+from workbench.screens.history import HistoryPanel, changed_by
 from workbench.screens.keys import Command, bindings
 from workbench.screens.page import HELP, MOVING, Page
 from workbench.screens.panel import Panel
@@ -329,8 +329,27 @@ class MainPage(Page):
         panel = self.focused_list()
         if isinstance(panel, FieldsPanel):
             self.editor.open(panel)
+        elif isinstance(panel, HistoryPanel):
+            self._put_back(panel.chosen())
         else:
             self.tell("choose a setting first: 1 Plant, 2 Controller, 6 Scenario, 7 Loop")
+
+    def _put_back(self, entry: Revision | None) -> None:
+        """The way back to earlier settings, in one change."""
+        if entry is None:
+            self.tell("the history is empty")
+            return
+        try:
+            changed = self.work.put_back(entry)
+        except InputError as fault:
+            self.tell(str(fault), "worse")
+            return
+        number = self.work.case.history.index(entry) + 1
+        if changed:
+            self.tell(f"the settings of entry {number} are back; s saves, u undoes", "caution")
+            self.post_message(CaseChanged())
+        else:
+            self.tell(f"the settings of entry {number} are the present ones")
 
     def action_nudge(self, factor: float) -> None:
         """Change the chosen setting by a share."""
@@ -420,6 +439,9 @@ class MainPage(Page):
             self._greeting = None
         elif isinstance(panel, FieldsPanel):
             self.tell(self._about(panel.key), "quiet")
+        elif isinstance(panel, HistoryPanel) and (entry := panel.chosen()) is not None:
+            would = changed_by(entry, self.work.case)
+            self.tell(f"Enter puts back: {would or 'nothing would change'}.", "quiet")
         elif panel is not None:
             self.tell("", "quiet")
 

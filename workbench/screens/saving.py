@@ -7,10 +7,13 @@ from collections.abc import Iterable
 from datetime import datetime
 
 from textual import on
+from textual.message import Message
 from textual.widget import Widget
+from textual.worker import Worker, WorkerState
 
 from workbench import units
 from workbench.case.case import Revision
+from workbench.case.files import CaseFile, Merge, changed_on_disk
 from workbench.errors import WorkbenchError
 from workbench.screens.cells import Line
 from workbench.screens.drafts import Draft
@@ -19,7 +22,7 @@ from workbench.screens.figures import cautions
 from workbench.screens.keys import Command, bindings
 from workbench.screens.page import MOVING, Page
 from workbench.screens.panel import Panel, remark, wrapped
-from workbench.screens.work import Work
+from workbench.screens.work import Work, Writer
 from workbench.study import HANDOVER
 
 KINDS = units.quantities(Revision)["kind"].choices
@@ -57,12 +60,22 @@ def changed_settings(changes: Iterable[tuple[str, str, str]]) -> list[Line]:
     ]
 
 
+class Written(Message):
+    """Posted when the work is on the disk, or why it is not."""
+
+    def __init__(self, file: CaseFile | None, fault: str = "") -> None:
+        super().__init__()
+        self.file, self.fault = file, fault
+
+
 class SavePage(Page):
     """Who saves, and why."""
 
     about = (
         "Saving writes the changed settings into the case file and adds an entry to its history. "
-        "The reason is required. The file is not touched when someone else saved meanwhile.",
+        "The reason is required; a safety-related loop is marked installed only with the "
+        "reference of a written approval. The file is not touched when someone else saved "
+        "meanwhile.",
     )
     commands = (
         Command("", "Enter", "save", "", "save"),
@@ -77,9 +90,13 @@ class SavePage(Page):
     def __init__(self, work: Work, and_then_leave: bool = False) -> None:
         super().__init__()
         self.work, self.and_then_leave = work, and_then_leave
+        self._saving = False
+        self.entry: dict[str, str] = {}
+        """What was filled in, for the history."""
         self._why = Entry("  why: ", css_id="why")
         self._who = Entry("  who: ", _user(), css_id="who")
         self._kind = Entry("  kind:", "installed", KINDS, css_id="kind")
+        self._reference = Entry("  ref: ", css_id="reference")
         self._changes = Changes(work, css_id="changes")
 
     def head(self) -> Line:
@@ -87,8 +104,11 @@ class SavePage(Page):
         return ((" Save ", "title"), (f" {self.work.path}", "quiet"))
 
     def body(self) -> Iterable[Widget]:
-        """Three lines to fill in, and what is saved."""
-        yield from (self._why, self._who, self._kind, self._changes)
+        """The lines to fill in, and what is saved."""
+        yield from (self._why, self._who, self._kind)
+        if self.work.case.loop.safety_related:
+            yield self._reference
+        yield self._changes
 
     def on_mount(self) -> None:
         """The reason is asked for first."""
@@ -97,8 +117,9 @@ class SavePage(Page):
 
     @on(Entry.Left)
     def left(self) -> None:
-        """Back without saving."""
-        self.action_back()
+        """Back without saving; what is being written is waited for."""
+        if not self._saving:
+            self.action_back()
 
     @on(Entry.Submitted)
     def submitted(self) -> None:
@@ -109,15 +130,68 @@ class SavePage(Page):
                 self.tell(f"say {entry.id}: the history keeps it", "worse")
                 entry.focus()
                 return
+        self.entry = {
+            "who": who,
+            "why": why,
+            "kind": kind,
+            "reference": self._reference.value.strip(),
+        }
+        self._save(beside=False)
+
+    def save_beside(self) -> None:
+        """Into a new file, which leaves what someone else saved as it is."""
+        self._save(beside=True)
+
+    def _save(self, *, beside: bool) -> None:
+        """In a thread: a slow disk must not hold up the keys."""
+        if self._saving:
+            return
+        self._saving = True
         now = datetime.now().astimezone().replace(microsecond=0)
+        write = self.work.writer(self.entry, now, beside=beside)
+        self.tell("saving ...", "quiet")
+        self.run_worker(lambda: self._write(write), thread=True, exit_on_error=False)
+
+    def _write(self, write: Writer) -> None:
         try:
-            self.work.save(who=who, why=why, kind=kind, now=now)
+            self.post_message(Written(write()))
         except (WorkbenchError, OSError) as fault:
-            self._changes.fault = str(fault)
+            self.post_message(Written(None, str(fault)))
+
+    def on_written(self, message: Written) -> None:
+        """Back to the loop; or say why nothing was saved."""
+        self._saving = False
+        if message.file is None:
+            self._changes.fault = message.fault
             self._changes.redraw()
             self.tell("not saved", "worse")
+            self._ask_about_others()
             return
+        self.work.is_saved_in(message.file)
         self.program.saved(self.work, self.and_then_leave)
+
+    def on_worker_state_changed(self, event: Worker.StateChanged) -> None:
+        """A fault of the program itself must not take the work with it."""
+        if event.state is WorkerState.ERROR:
+            self._saving = False
+            fault = event.worker.error
+            self.tell(f"not saved ({type(fault).__name__}: {fault})", "worse")
+
+    def _ask_about_others(self) -> None:
+        """Where someone else saved meanwhile, there are three ways on."""
+        try:
+            theirs = changed_on_disk(self.work.file)
+        except WorkbenchError:
+            return
+        if theirs is not None:
+            self.program.push_screen(ConflictPage(self.work, self, theirs))
+
+    def merged(self, found: Merge) -> None:
+        """Show what is saved now that theirs is in it."""
+        both = f"; you both changed {', '.join(found.both)}: yours is kept" if found.both else ""
+        self._changes.fault = ""
+        self._changes.redraw()
+        self.tell(f"their changes are taken in{both}; Enter saves", "caution")
 
 
 def _user() -> str:
@@ -168,6 +242,57 @@ class Question(Panel):
     def body(self, width: int) -> list[Line]:
         """The text."""
         return self.words
+
+
+class ConflictPage(AskPage):
+    """Someone else saved the file while it was open here."""
+
+    about = (
+        "The file is not what was read: someone else saved it, or edited it by hand. Nothing of "
+        "yours is lost, and nothing of theirs is overwritten.",
+    )
+    commands = (
+        Command("m", "m", "take theirs in", "merge", "take their changes in, yours over them"),
+        Command("b", "b", "save beside", "beside", "save yours into a new file beside it"),
+        Command("escape,q", "Esc", "back", "back", "back without saving", "q"),
+        Command("question_mark,f1", "?", "help", "help", "this help", "F1"),
+        *MOVING,
+    )
+    BINDINGS = bindings(commands)
+
+    def __init__(self, work: Work, page: SavePage, theirs: Iterable[tuple[str, str, str]]) -> None:
+        super().__init__(work)
+        self.page, self.theirs = page, tuple(theirs)
+
+    def question(self) -> list[Line]:
+        """What they changed, what is changed here, and the ways on."""
+        return [
+            (("  Someone else changed the file since it was read:", "plain"),),
+            *changed_settings(self.theirs),
+            *([] if self.theirs else [(("  comments or layout only", "quiet"),)]),
+            (),
+            (("  Not saved here:", "plain"),),
+            *changed_settings(self.work.told),
+            (),
+            (("  m takes their changes in and keeps yours over them; then Enter saves.", "plain"),),
+            (("  b saves yours into a new file beside it.", "plain"),),
+            (("  Esc goes back without saving.", "plain"),),
+        ]
+
+    def action_merge(self) -> None:
+        """Theirs, with one's own changes over it."""
+        try:
+            found = self.work.merge()
+        except WorkbenchError as fault:
+            self.tell(str(fault), "worse")
+            return
+        self.program.pop_screen()
+        self.page.merged(found)
+
+    def action_beside(self) -> None:
+        """Into a new file."""
+        self.program.pop_screen()
+        self.page.save_beside()
 
 
 class LeavePage(AskPage):

@@ -6,7 +6,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from workbench import charts
-from workbench.charts import Curve, Pane, Picture
+from workbench.charts import Pane, Picture
 from workbench.screens.cells import TONE_NUMBERS, Screenful
 from workbench.screens.panel import Panel, wrapped
 from workbench.study import Evaluation, Trend
@@ -50,21 +50,9 @@ class TrendPanel(Panel):
         return as_cells(picture)
 
     def _panes(self, evaluation: Evaluation) -> tuple[Pane, ...]:
-        case, present = self.work.case, _trend(evaluation)
         pinned = self.work.pinned
         earlier = None if pinned is None or pinned is evaluation else _trend(pinned)
-        pv, op = [], []
-        if earlier is not None:
-            pv.append(Curve(earlier.time, earlier.pv, "pinned", "pinned"))
-            op.append(Curve(earlier.time, earlier.output, "pinned", "pinned"))
-        if present is not None:
-            pv.append(Curve(present.time, present.setpoint, "setpoint", "SP"))
-            pv.append(Curve(present.time, present.pv, "pv", "PV"))
-            op.append(Curve(present.time, present.output, "output", "OP"))
-        return (
-            Pane(f"PV {case.pv.unit}", tuple(pv), (case.pv.low, case.pv.high), 2.0),
-            Pane(f"OP {case.op.unit}", tuple(op), (case.op.low, case.op.high), 1.0),
-        )
+        return charts.trend_panes(self.work.case, _trend(evaluation), earlier)
 
 
 def _trend(evaluation: Evaluation) -> Trend | None:

@@ -7,14 +7,15 @@ from __future__ import annotations
 
 import hashlib
 import math
+from collections.abc import Callable, Mapping
 from dataclasses import replace
 from datetime import datetime
 from pathlib import Path
 
 from workbench import study
 from workbench.case import case as cases
-from workbench.case.case import Case
-from workbench.case.files import CaseFile, read_case, save_case
+from workbench.case.case import Case, Revision
+from workbench.case.files import CaseFile, Merge, merge, read_case, save_case, write_new
 from workbench.errors import problem
 from workbench.screens import drafts
 from workbench.study import Evaluation
@@ -137,8 +138,14 @@ class Work:
 
     def take_up(self, draft: drafts.Draft) -> bool:
         """Bring the unsaved work of an earlier session back.  Raises `InputError`."""
+        taken = cases.edit_all(self.case, dict(draft.changes))
         self.draft = None
-        return self.change(cases.edit_all(self.case, dict(draft.changes)))
+        self.keeper.replaces(draft)
+        return self.change(taken)
+
+    def put_back(self, entry: Revision) -> bool:
+        """The settings of a history entry, in one change.  Raises `InputError`."""
+        return self.change(cases.with_settings(self.case, entry))
 
     def drop(self, draft: drafts.Draft) -> None:
         """Forget the unsaved work of an earlier session."""
@@ -159,17 +166,57 @@ class Work:
 
     # -- saving ------------------------------------------------------------------------------------
 
-    def save(self, *, who: str, why: str, kind: str, now: datetime) -> None:
-        """Write the case with a history entry.  Raises `InputError`; the work is kept then."""
-        recorded = study.record_change(self.case, who=who, why=why, kind=kind, now=now)
-        self.file = save_case(self.file, recorded)
-        self._set(self.file.case)
+    def merge(self) -> Merge:
+        """Take over what someone else saved meanwhile and keep the work over it.
+
+        Nothing is saved.  Raises `InputError` where the file can no longer be read.
+        """
+        found = merge(self.file, self.case)
+        self.file = found.file
+        if not self.change(found.case):
+            self._look()
+        return found
+
+    def writer(self, entry: Mapping[str, str], now: datetime, *, beside: bool) -> Writer:
+        """What writes the present case with a history entry; it may run in any thread.
+
+        Parameters
+        ----------
+        entry
+            `who`, `why`, `kind` and `reference`.
+        now
+            When the entry is made.
+        beside
+            Into a new file beside the case's own, which is left as it is.
+        """
+        file, case = self.file, self.case
+        name = f"{self.path.stem}_{now:%Y%m%d_%H%M%S}.toml"
+
+        def write() -> CaseFile:
+            recorded = study.record_change(case, now=now, **entry)
+            if beside:
+                return write_new(self.path.with_name(name), recorded)
+            return save_case(file, recorded)
+
+        return write
+
+    def is_saved_in(self, file: CaseFile) -> None:
+        """The work is in a file now: its own, or a new one in which it goes on."""
+        elsewhere = file.path != self.file.path
+        self.file = file
+        self._set(file.case)
         if self.evaluation is not None:
             # Only the history is new; the figures are those of the same settings.
             same = self.pinned is self.evaluation
             self.evaluation = replace(self.evaluation, case=self.case)
             self.pinned = self.evaluation if same else self.pinned
-        self.keeper.write()
+        self.keeper.write_last()
+        if elsewhere:
+            self.keeper = drafts.Keeper(self.path)
+
+
+Writer = Callable[[], CaseFile]
+"""Writes the work.  Raises `InputError` or `OSError`; the work is kept then."""
 
 
 def nudged(quantity: Quantity, text: str, factor: float) -> str:

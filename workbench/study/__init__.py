@@ -34,6 +34,8 @@ from workbench.study.prediction import (
     response_horizon,
 )
 from workbench.study.proposals import Proposal, RelayTest, Wish, propose, take
+from workbench.study.sheet import Retune, Stage, retune
+from workbench.study.survey import Surveyed, survey
 
 __all__ = [
     "HANDOVER",
@@ -49,6 +51,9 @@ __all__ = [
     "Reduced",
     "RelayTest",
     "Response",
+    "Retune",
+    "Stage",
+    "Surveyed",
     "Trend",
     "Wish",
     "accept",
@@ -70,6 +75,8 @@ __all__ = [
     "respond",
     "respond_to_record",
     "response_horizon",
+    "retune",
+    "survey",
     "take",
     "units_of",
 ]

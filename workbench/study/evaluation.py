@@ -6,6 +6,7 @@ from dataclasses import dataclass, replace
 from typing import Final
 
 from workbench.case.case import Case
+from workbench.case.tags import USUAL_SCANS_S
 from workbench.errors import (
     InputError,
 )
@@ -112,6 +113,17 @@ def _scan_notes(case: Case, assessment: Assessment) -> list[Note]:
                 "caution",
                 f"derivative filter time {text(gains.filter_time, 's')} is far below the scan "
                 f"{controller.scan}: the scan sets the filtering",
+            )
+        )
+    kind = case.loop.kind_told
+    usual = USUAL_SCANS_S.get(kind)
+    if usual is not None and scan > 1.001 * usual[1]:
+        between = f"{text(usual[0])} to {text(usual[1], 's')}"
+        notes.append(
+            Note(
+                "info",
+                f"a scan of {controller.scan} is long for a {kind} loop: {between} is usual"
+                " (common practice)",
             )
         )
     analogue, sampled = assessment.loop, assessment.sampled

@@ -2,8 +2,10 @@
 
 from __future__ import annotations
 
+import contextlib
 import hashlib
 import os
+import re
 from collections.abc import Callable
 from dataclasses import dataclass, fields, replace
 from datetime import datetime
@@ -22,6 +24,7 @@ from workbench.errors import (
 from workbench.model.pid import Controller
 from workbench.model.plant import Formula, Shape
 from workbench.records.candidate import Candidate
+from workbench.records.cells import LARGEST_FILE
 from workbench.records.identify import Fit
 from workbench.records.identify import fit as fit_plants
 from workbench.records.record import read_record
@@ -29,7 +32,7 @@ from workbench.records.response import FITTED
 from workbench.study.assessment import assess
 from workbench.study.loop import controller_of, no_time_domain, plant_of
 from workbench.study.prediction import predict
-from workbench.units import Amount, rounded, text
+from workbench.units import Amount, harmless, rounded, text
 
 
 @dataclass(frozen=True)
@@ -96,8 +99,15 @@ def accept(case: Case, fit: Fit, shape: str | None = None, folder: Path | None =
         process=_shape_as_typed(candidate.plant),
         from_=record.name if folder is None else os.path.relpath(record, folder),
         from_sha256=fit.record.sha256,
+        dated=_day(fit.record.start_stamp),
     )
     return replace(case, plant=plant)
+
+
+def _day(stamp: str | None) -> str:
+    """The day of a stamp; nothing where the record has no calendar."""
+    found = re.match(r"\d{4}-\d\d-\d\d", stamp or "")
+    return found[0] if found else ""
 
 
 def _shape_as_typed(process: Shape) -> Shape:
@@ -122,11 +132,18 @@ _SAME_FIGURE: Final = 0.005
 
 
 def record_change(
-    case: Case, *, who: str, why: str, now: datetime, kind: str = "installed"
+    case: Case,
+    *,
+    who: str,
+    why: str,
+    now: datetime,
+    kind: str = "installed",
+    reference: str = "",
 ) -> Case:
     """The case with a history entry for its present settings, and the figures predicted for them.
 
-    Raises `InputError` where the loop has no controller, or who or why is blank.
+    Raises `InputError` where the loop has no controller, who or why is blank, or the settings of a
+    safety-related loop are installed without a written reference.
     """
     faults = [
         Problem("is blank", mend, key)
@@ -136,6 +153,10 @@ def record_change(
         )
         if not value.strip()
     ]
+    if kind == "installed" and case.loop.safety_related and not reference.strip():
+        what = "is blank, and the loop is safety-related"
+        mend = "name the written approval, or save the settings as proposed"
+        faults.append(Problem(what, mend, "reference"))
     if faults:
         raise InputError(faults)
     figures = _figures_now(case)
@@ -145,6 +166,7 @@ def record_change(
         kind=kind,
         why=why.strip(),
         controller=controller_of(case),
+        reference=reference.strip(),
         program=__version__,
         **{name: rounded(value, 6) for name, value in figures.items()},
     )
@@ -179,9 +201,13 @@ def check_case(path: str | Path) -> FileCheck:
         if not Path(path).is_file():
             raise
         return FileCheck(str(path), False, fault.problems)
-    faults = [*_record_faults(file.case, Path(path)), *_figure_faults(file.case)]
-    placed = tuple(replace(fault, path=str(path)) for fault in faults)
+    placed = tuple(replace(fault, path=str(path)) for fault in faults_of(file.case, Path(path)))
     return FileCheck(str(path), not placed, placed)
+
+
+def faults_of(case: Case, path: Path) -> list[Problem]:
+    """What of a sound case in the file at `path` no longer holds: its record, its figures."""
+    return [*_record_faults(case, path), *_figure_faults(case)]
 
 
 def _record_faults(case: Case, path: Path) -> list[Problem]:
@@ -190,15 +216,16 @@ def _record_faults(case: Case, path: Path) -> list[Problem]:
         return []
     record = path.parent / case.plant.from_
     if not record.is_file():
+        moved = _named_otherwise(path.parent, case.plant.from_sha256)
+        mend = "put it back, or accept a fit of another record"
         return [
             Problem(
                 f"the record {case.plant.from_!r} is not beside the case",
-                "put it back, or accept a fit of another record",
+                f"its bytes are in {moved!r}: set plant.from to that" if moved else mend,
                 "plant.from",
             )
         ]
-    digest = hashlib.sha256(record.read_bytes()).hexdigest()
-    if case.plant.from_sha256 and digest != case.plant.from_sha256:
+    if case.plant.from_sha256 and _sha256(record) != case.plant.from_sha256:
         return [
             Problem(
                 f"the record {case.plant.from_!r} is not the one the plant was fitted to",
@@ -207,6 +234,24 @@ def _record_faults(case: Case, path: Path) -> list[Problem]:
             )
         ]
     return []
+
+
+def _sha256(path: Path) -> str:
+    with path.open("rb") as file:
+        return hashlib.file_digest(file, "sha256").hexdigest()
+
+
+def _named_otherwise(folder: Path, sha256: str) -> str:
+    """The record of a folder that has these bytes under another name, or nothing."""
+    for path in sorted(folder.glob("*.csv"))[:_MOST_SEARCHED] if sha256 else ():
+        with contextlib.suppress(OSError):
+            if path.is_file() and path.stat().st_size <= LARGEST_FILE and _sha256(path) == sha256:
+                return harmless(path.name)
+    return ""
+
+
+_MOST_SEARCHED: Final = 200
+"""Records of a folder that are looked through for one that was renamed."""
 
 
 def _figure_faults(case: Case) -> list[Problem]:

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import contextlib
 import math
 from collections.abc import Callable
 from dataclasses import dataclass, replace
@@ -163,14 +164,31 @@ def _search(
     )
 
 
+def rule_settings(case: Case, wish: Wish) -> list[Controller]:
+    """The settings of every rule that applies, in the loop's own form; not judged."""
+    plant, found = _rule_plant(case, wish), []
+    for rule in rules.RULES.values():
+        with contextlib.suppress(NotApplicable):
+            found.append(_by_rule(case, rule, plant))
+    return found
+
+
+def _by_rule(case: Case, rule: rules.Rule, plant: rules.Plant) -> Controller:
+    """Raises `NotApplicable`."""
+    tuning = rule.settings(plant)
+    return settings_like(
+        case.controller or Controller(gain=1.0),
+        tuning.gain,
+        tuning.integral_time,
+        tuning.derivative_time,
+        tuning.form,
+    )
+
+
 def _proposal(case: Case, method: str, wish: Wish, plant: rules.Plant) -> Proposal:
     rule = rules.RULES[method]
-    like = case.controller or Controller(gain=1.0)
     try:
-        tuning = rule.settings(plant)
-        settings = settings_like(
-            like, tuning.gain, tuning.integral_time, tuning.derivative_time, tuning.form
-        )
+        settings = _by_rule(case, rule, plant)
     except NotApplicable as refusal:
         row = _blank(method, rule.title, rule.source, str(refusal))
     else:
