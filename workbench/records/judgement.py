@@ -300,7 +300,8 @@ def holdout(search: Search, shape: FittedShape, here: Solution) -> float | None:
     """Agreement [%] over the last bump, predicted by a fit to the rows before it.
 
     The last part of a record of several parts; else what follows the last move, or the last third
-    where OP moves at many rows.  The level is free over the rows predicted.
+    where OP moves at many rows.  The level is free over the rows predicted; agreement is in terms
+    of how PV moved in the whole record, for the last level may be one at which it rests.
     """
     kept = _before_last(search)
     if kept is None:
@@ -321,9 +322,8 @@ def holdout(search: Search, shape: FittedShape, here: Solution) -> float | None:
     if len(rows.parts) < len(search.rows.parts):
         coefficients[shape.terms :] = 0.0
     left = search.rows.pv[unseen] - coefficients @ terms[:, unseen]
-    about = search.rows.pv[unseen] - search.rows.pv[unseen].mean()
-    power = float(np.linalg.norm(about))
-    return 100.0 * (1.0 - float(np.linalg.norm(left - left.mean())) / power) if power else None
+    spread = float(np.std(search.rows.pv))
+    return 100.0 * (1.0 - float(np.std(left)) / spread)
 
 
 def _before_last(search: Search) -> NDArray[np.intp] | None:

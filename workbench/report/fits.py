@@ -241,12 +241,14 @@ def _chosen_rows(candidate: Candidate) -> Rows:
     ):
         verdict = kept if test.p_value > _DOUBT else broken
         rows.append(("left over", f"{verdict} ({name}, p = {text(test.p_value, digits=2)})"))
-    for label, found in (("gain up", judged.gain_up), ("gain down", judged.gain_down)):
+    level, unit = _ERRORS[candidate.certainty.names[0]]
+    for way, found in (("up", judged.gain_up), ("down", judged.gain_down)):
         if found is not None:
-            rows.append((label, f"{text(found[0])}, standard error {text(found[1], digits=2)}"))
+            shown = f"{text(found[0], unit)}, standard error {text(found[1], digits=2)}"
+            rows.append((f"{level} {way}", shown))
     for move in judged.moves:
         shown = f"{text(move.gain)}, standard error {text(move.standard_error, digits=2)}"
-        rows.append((f"OP {text(move.op_from)} to {text(move.op_to)}", f"gain {shown}"))
+        rows.append((f"OP {text(move.op_from)} to {text(move.op_to)}", f"{level} {shown}"))
     known = candidate.certainty
     for i, name in enumerate(known.names):
         for k in range(i):
