@@ -447,19 +447,8 @@ class Search:
         rough = thin.refine(shape, starts)
         white = [self.descend(shape, solution.point) for solution in rough]
         best = min(white, key=self.bic)
-        exact = best.square < 1e-16 * float(np.var(self.rows.pv)) * self.count
-        if self.noise_model != "white" and not (exact and self.noise_model == "auto"):
-            correlated = self._correlated(shape, thin, white)
-            if (
-                self.noise_model == "correlated"
-                or best.deviance - correlated.deviance > _CORRELATED_GAIN
-                or self.bic(best) > self.bic(correlated)
-            ):
-                best = correlated
-            memory = best.point.noise_time
-            if self.noise_model == "auto" and memory is not None and memory < 0.25 * self.interval:
-                # From row to row next to nothing is remembered.
-                best = self.descend(shape, replace(best.point, noise_time=None))
+        if self.noise_model != "white":
+            best = self._correlated(shape, thin, white) or best
         values = best.point.values
         if not shape.two_lags or values[0] >= values[1]:
             return best
@@ -476,20 +465,26 @@ class Search:
             return self
         return Search(rows, self.interval, self.noise_model, self.drift, self.should_stop)
 
-    def _correlated(self, shape: FittedShape, thin: Search, white: list[Solution]) -> Solution:
-        """The best with noise that remembers, from the white ones and from a grid of its own."""
+    def _correlated(
+        self, shape: FittedShape, thin: Search, white: list[Solution]
+    ) -> Solution | None:
+        """The best with noise that remembers, from the white ones and from a grid of its own.
+
+        `None` where the choice is free and white noise does as well.
+        """
         first = min(white, key=self.bic)
+        free = self.noise_model == "auto"
+        exact = first.square < 1e-16 * float(np.var(self.rows.pv)) * self.count
         left = self.rows.pv - first.fitted
         memory, deviance = self.memory(self.jacobian(shape, first), left, restricted=False)
+        gained = first.deviance - deviance > _CORRELATED_GAIN and memory > 0.25 * self.interval
+        if free and (exact or not gained):
+            return None
         starts = [replace(s.point, noise_time=memory) for s in white]
         # Where the noise is nearly white its grid is the same.
-        if first.deviance - deviance > _CORRELATED_GAIN:
-            starts += thin.coarse(shape, memory)
-        rough = thin.refine(shape, starts)
-        likeliest = min(thin.bic(s) for s in rough)
-        found = [
-            self._remembering(shape, s.point) for s in rough if thin.bic(s) < likeliest + _NEAR
-        ]
+        rough = thin.refine(shape, starts + (thin.coarse(shape, memory) if gained else []))
+        least = min(thin.bic(s) for s in rough)
+        found = [self._remembering(shape, s.point) for s in rough if thin.bic(s) < least + _NEAR]
         return min(found, key=self.bic)
 
     def _remembering(self, shape: FittedShape, start: Point) -> Solution:
