@@ -35,6 +35,7 @@ from tests.model.test_stability import verdicts
 from tests.model.test_transfer import laws, limits, step_responses
 from tests.plain import sampled_pv
 from tests.records.campaigns import certain, choices
+from tests.records.damage import damaged_records
 from tests.sim.campaigns import (
     analogue_by_mpmath,
     changed_loops,
@@ -460,6 +461,9 @@ CAMPAIGNS: Final[dict[str, Campaign]] = {
     ),
     "damaged case files": Campaign(damaged_files, 100, 20_000),
     "case files kept": Campaign(kept_files, 20, 2000),
+    "damaged records": Campaign(
+        _judged(damaged_records, 109, 2.0, "seconds of work for one"), 60, 10_000
+    ),
     "one key, one line": Campaign(_judged(edited_lines, 301, 0.0, "broken"), 10, 5000),
     "layout against tomllib": Campaign(_judged(laid_out_files, 302, 0.0, "broken"), 10, 5000),
     "saves killed": Campaign(_judged(killed_saves, 303, 0.0, "neither old nor new"), 10, 2000),

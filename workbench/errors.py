@@ -5,6 +5,7 @@ WorkbenchError                 anything we can tell the engineer in one line
 │   ├── ModelError             a plant or controller outside what the mathematics takes
 │   ├── CaseFileError          a case file: every problem with its key and line
 │   └── RecordError            a plant record: where in the file, what, how to mend it
+│       └── RecordQuestion     it can be read in two ways: which option tells them apart
 ├── NotApplicable              a rule or method outside its stated limits
 └── CannotSolve                the computation gave no answer; carries the best it found
 
@@ -88,6 +89,23 @@ class CaseFileError(InputError):
 
 class RecordError(InputError):
     """A plant record that cannot be used: where, what, and how to mend it."""
+
+
+class RecordQuestion(RecordError):
+    """A plant record that can be read in two ways: the engineer must say which."""
+
+    def __init__(
+        self,
+        problems: Problem | Iterable[Problem],
+        *,
+        option: str = "",
+        readings: tuple[tuple[str, str], ...] = (),
+    ) -> None:
+        self.option = option
+        """The option that answers it, such as `--dates`."""
+        self.readings = readings
+        """Each answer, and what the file says if it is the right one."""
+        super().__init__(problems)
 
 
 class NotApplicable(WorkbenchError):

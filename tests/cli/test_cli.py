@@ -196,6 +196,7 @@ def _bad_files() -> None:
     Path("heads.csv").write_text("time_s,pv,op\n")
     Path("words.csv").write_text("time_s,pv,op\n0,1,1\n1,abc,1\n2,1,1\n")
     Path("columns.csv").write_text("a,b,c\n0,1,1\n1,2,1\n")
+    Path("days.csv").write_text("time,pv,op\n03/04/2026 10:00:00,1,2\n03/04/2026 10:00:01,1,2\n")
     Path("flat.csv").write_text("time_s,pv,op\n" + "".join(f"{i},{i % 3},5\n" for i in range(30)))
 
 
@@ -232,7 +233,15 @@ BAD = [
     ("fit flat.csv --from x", "--from: ", "seconds"),
     ("fit flat.csv --shape second", "--shape: ", "did you mean 'second-order'?"),
     ("fit flat.csv --noise-model pink", "--noise-model: ", "auto, white or correlated"),
-    ("fit flat.csv --follow", "--follow: ", "is not an option of `workbench fit`"),
+    ("fit flat.csv flat.csv --follow", "--follow: ", "leave the other records out"),
+    ("fit flat.csv --every 2", "--every: ", "add --follow"),
+    ("fit flat.csv --certainty 0", "--certainty: ", "a number above 0"),
+    ("fit flat.csv --leave-out 5", "--leave-out: ", "--leave-out FROM TO"),
+    ("fit flat.csv --leave-out 5 3", "--leave-out: ", "the earlier moment first"),
+    ("fit flat.csv --leave-out 900 950", "--leave-out: ", "the rows used run from"),
+    ("fit flat.csv --dates backwards", "--dates: ", "use day-first"),
+    ("fit flat.csv --decimal dot", "--decimal: ", "use point or comma"),
+    ("fit days.csv", "days.csv:2: ", "say --dates day-first or --dates month-first"),
     # Options of a loop.
     ("assess", "assess: ", "name a case file, or give a plant"),
     (("assess", "--scan", "1 s"), "--plant: ", "is missing"),
@@ -699,6 +708,44 @@ def test_fit_finds_columns_and_times_as_named(run: Run) -> None:
     assert (done.status, done.err) == (0, "")
     assert "181 rows" in done.out
     assert "first-order (chosen)" in done.out
+
+
+def test_fit_takes_several_records_and_leaves_windows_out(run: Run) -> None:
+    Path("one.csv").write_text(_record())
+    Path("two.csv").write_text(_record())
+    words = ("fit", "one.csv", "two.csv", "--leave-out", "0", "9", "--leave-out", "200", "209")
+    data = json.loads(run(*words, "--shape", "first-order", "--json").out)
+    # Exact: each record has 240 rows, and 10 of them are left out in each window.
+    assert data["rows"] == 2 * (240 - 20)
+    assert len([w for w in data["warnings"] if "10 rows left out as asked" in w]) == 4
+    # Exact: the bump that both records were made with, in each.
+    assert [bump["op_after"] for bump in data["bumps"]] == [45.0, 45.0]
+    assert [bump["op_before"] for bump in data["bumps"]] == [40.0, 40.0]
+
+
+def test_a_certainty_asked_for_is_answered(run: Run) -> None:
+    Path("bump.csv").write_text(_record())
+    done = answer(run("fit", "bump.csv", "--certainty", "5", "--json"))
+    assert done["advice"]["reached"] is True
+    assert done["advice"]["certainty_percent"] < 5.0
+    never = answer(run("fit", "bump.csv", "--certainty", "0.0001", "--json"), status=1)
+    assert never["advice"]["reached"] is False
+    assert never["advice"]["wanted_percent"] == 0.0001
+
+
+def test_a_followed_record_is_answered_once_nothing_more_comes(run: Run) -> None:
+    Path("bump.csv").write_text(_record())
+    words = ("fit", "bump.csv", "--shape", "first-order", "--json")
+    done = run(*words, "--follow", "--every", "0.1 s", "--idle", "0.2 s")
+    assert done.status == 0
+    assert "240 rows" in done.err
+    followed, offline = json.loads(done.out), answer(run(*words))
+    assert followed["candidates"] == offline["candidates"]
+    assert followed["sha256"] == offline["sha256"]
+    Path("bump.csv").write_text("time_s,pv,op\n")
+    done = run(*words, "--follow", "--every", "0.1 s", "--idle", "0.2 s")
+    assert done.status == 2
+    assert "has headings and no rows" in done.err
 
 
 def test_a_record_that_cannot_tell_is_answered_with_status_1(run: Run) -> None:

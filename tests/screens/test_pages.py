@@ -2,13 +2,16 @@
 
 from __future__ import annotations
 
+import asyncio
 import json
 import os
 import subprocess
 import sys
+from collections.abc import Callable, Sequence
 from pathlib import Path
 
 import pytest
+from textual.pilot import Pilot
 
 from tests.screens.conftest import (
     CASE,
@@ -24,7 +27,6 @@ from workbench import study
 from workbench.case.case import show
 from workbench.case.files import read_case
 from workbench.errors import problem
-from workbench.records.identify import Fit
 from workbench.screens import drafts
 from workbench.screens.help import HelpPage
 from workbench.screens.main import MainPage
@@ -154,18 +156,118 @@ def test_a_record_that_cannot_be_read_is_explained(work: Work) -> None:
     run(story())
 
 
-def test_a_stopped_fit_is_not_shown_when_it_comes_in_late(
-    work: Work, monkeypatch: pytest.MonkeyPatch
-) -> None:
-    real, kept = study.fit_record, []
+def test_what_is_shown_can_be_used_alone_or_left_out(work: Work) -> None:
+    async def story() -> None:
+        async with running(work) as pilot:
+            await press(pilot, "r", "enter")
+            page = page_of(pilot, RecordPage)
+            assert page.candidates.fit is not None
+            rows = len(page.candidates.fit.record.time)
+            whole = page.picture.view
+            await press(pilot, "x")
+            assert "zoom in first" in text_of(pilot)
+            await press(pilot, "plus", "plus", "greater_than_sign", "greater_than_sign")
+            view = page.picture.view
+            # exact: a quarter of the whole, about its middle, later by two quarters of itself
+            assert view.high - view.low == pytest.approx(whole.end / 4)
+            assert view.low == pytest.approx(whole.end * (0.375 + 0.125))
+            await press(pilot, "x")
+            left = page.candidates.fit.record
+            assert len(left.time) == pytest.approx(rows * 0.75, abs=2)
+            assert len(left.parts) == 2
+            assert "a part of it" in text_of(pilot)
+            await press(pilot, "r")
+            assert len(page.candidates.fit.record.time) == rows
+            await press(pilot, "plus", "u")
+            assert len(page.candidates.fit.record.time) == pytest.approx(rows * 0.5, abs=2)
+            await press(pilot, "0", "l")
+            assert page.records.display
 
-    def remembered(path: Path, **options: object) -> Fit:
-        kept.append(real(path))
-        return kept[-1]
+    run(story())
+
+
+def test_several_marked_records_are_fitted_at_once(work: Work) -> None:
+    Path("second.csv").write_text(Path("TIC-307_bump.csv").read_text())
 
     async def story() -> None:
         async with running(work) as pilot:
-            monkeypatch.setattr(study, "fit_record", remembered)
+            await press(pilot, "r", "space", "down", "space", "enter")
+            page = page_of(pilot, RecordPage)
+            assert page.candidates.fit is not None
+            assert len(page.candidates.fit.record.parts) == 2
+            assert "2 records" in text_of(pilot)
+
+    run(story())
+
+
+def test_a_date_that_can_be_read_in_two_ways_is_asked_for(work: Work) -> None:
+    rows = Path("TIC-307_bump.csv").read_text().splitlines()
+    lines = ["time,pv,op"]
+    for i, row in enumerate(rows[1:]):
+        pv, op = row.split(",")[1:3]
+        lines.append(f"03/04/2026 {10 + i // 3600}:{i // 60 % 60:02d}:{i % 60:02d},{pv},{op}")
+    Path("TIC-307_bump.csv").write_text("\n".join(lines))
+
+    async def story() -> None:
+        async with running(work) as pilot:
+            await press(pilot, "r", "enter")
+            shown = text_of(pilot)
+            assert "day 3 of month 4 or day 4 of" in shown
+            assert "press 1 for the first, 2 for the second" in " ".join(shown.split())
+            await press(pilot, "2")
+            page = page_of(pilot, RecordPage)
+            assert page.candidates.fit is not None
+            assert page.candidates.fit.record.start_stamp == "2026-03-04 10:00:00"
+
+    run(story())
+
+
+def test_a_test_is_followed_while_its_file_grows(
+    work: Work, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    monkeypatch.setattr("workbench.screens.record.LOOK_EVERY_S", 0.05)
+    path = Path("TIC-307_bump.csv")
+    lines = path.read_text().splitlines(keepends=True)
+    path.write_text("".join(lines[:150]) + lines[150][:5])
+
+    async def story() -> None:
+        async with running(work) as pilot:
+            await pilot.press("r")
+            await pilot.pause()
+            await pilot.press("f")
+            page = page_of(pilot, RecordPage)
+            await until(pilot, lambda: "149 rows:" in text_of(pilot))
+            path.write_text("".join(lines))
+            await until(pilot, lambda: f"{len(lines) - 1} rows:" in text_of(pilot))
+            assert page.candidates.fit is not None
+            await press(pilot, "escape")
+            assert "stopped" in text_of(pilot)
+
+    run(story())
+
+
+async def until(pilot: Pilot[None], shown: Callable[[], bool]) -> None:
+    """Wait for what a thread will show."""
+    for _ in range(400):
+        if shown():
+            return
+        await asyncio.sleep(0.05)
+        await pilot.pause()
+    raise AssertionError(text_of(pilot))
+
+
+def test_a_stopped_fit_is_not_shown_when_it_comes_in_late(
+    work: Work, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    real, kept = study.fit_sources, []
+
+    def remembered(sources: Sequence[study.Source], **options: object) -> object:
+        kept.append(real(sources)[0])
+        return kept[-1], ()
+
+    async def story() -> None:
+        async with running(work) as pilot:
+            monkeypatch.setattr(study, "fit_sources", remembered)
             await press(pilot, "r", "enter")
             page = page_of(pilot, RecordPage)
             page.action_list()
@@ -635,8 +737,9 @@ def test_no_command_hangs_on_a_key_that_may_never_arrive(kind: type[Page]) -> No
 
 def test_the_key_line_fits_80_columns_on_every_page() -> None:
     for kind in pages():
-        shown = [f"{command.shown} {command.words}" for command in kind.commands if command.words]
-        assert len(" ".join(shown)) <= 80, kind
+        for commands in kind.key_lines or (kind.commands,):
+            shown = [f"{command.shown} {command.words}" for command in commands if command.words]
+            assert len(" ".join(shown)) <= 80, kind
 
 
 def test_help_explains_the_focused_panel_and_lists_every_key(work: Work) -> None:

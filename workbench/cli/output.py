@@ -46,11 +46,16 @@ def say(text: str) -> None:
 
 def complain(line: str) -> None:
     """One line on standard error, harmless to a terminal whatever a file or an option held."""
+    narrate(f"workbench: {harmless(line, 2000)}")
+
+
+def narrate(text: str) -> None:
+    """Text on standard error, about work that goes on."""
     err = sys.stderr
     if err is None:
         return
     try:
-        err.write(f"workbench: {harmless(line, 2000)}\n")
+        err.write(f"{text}\n")
         err.flush()
     except OSError:
         silence(err)

@@ -212,15 +212,51 @@ MOVES: Final[tuple[Option, ...]] = (
     Option("--trend", "FILE.csv", "writes the response: time_s,op,pv"),
 )
 """What `respond` does to a plant."""
-FIT: Final[tuple[Option, ...]] = (
-    Option("--time", "COLUMN", "column of time", "time_s or timestamp"),
-    Option("--pv", "COLUMN", "column of the process variable", "pv"),
-    Option("--op", "COLUMN", "column of the controller output", "op"),
+READING: Final[tuple[Option, ...]] = (
+    Option("--time", "COLUMN", "column of time; DATE+TIME for two", "time_s or timestamp"),
+    Option("--pv", "COLUMN", "column, or tag, of the process variable", "pv"),
+    Option("--op", "COLUMN", "column, or tag, of the controller output", "op"),
+    Option("--quality", "COLUMN", "column of quality, or none", "quality or status"),
+    Option(
+        "--dates",
+        "day-first|month-first|serial|seconds",
+        "how times are read that can be read in two ways; serial: day numbers of a spreadsheet",
+    ),
+    Option("--decimal", "point|comma", "the decimal sign, where 1,234 leaves it open"),
     Option("--from", "STAMP", "first row to use", "the first of the record"),
     Option("--to", "STAMP", "last row to use", "the last of the record"),
+    Option(
+        "--leave-out",
+        "FROM TO",
+        "rows between two stamps that are not used; may be repeated",
+        count=2,
+        repeats=True,
+    ),
+)
+"""How a record is read."""
+FOLLOWING: Final[tuple[Option, ...]] = (
+    Option(
+        "--follow",
+        "",
+        "reads a record that is still being written, fits it again as it grows, and says on"
+        " standard error what to do next",
+    ),
+    Option(
+        "--certainty",
+        "PERCENT",
+        "wanted largest standard error, of the dead time in percent of dead time and slowest time"
+        " constant together",
+        "10 with --follow",
+    ),
+    Option("--every", "TIME", "with --follow, how often to look", "2 s"),
+    Option("--idle", "TIME", "with --follow, ends when nothing came for so long", "60 s"),
+)
+FIT: Final[tuple[Option, ...]] = (
+    *READING,
     Option("--shape", "SHAPE", "fit this shape only", "every shape that can be fitted"),
     Option("--noise-model", "auto|white|correlated", "how the noise is described", "auto"),
     Option("--no-drift", "", "PV has no drift of its own in the record"),
+    *FOLLOWING,
 )
 WISHES: Final[tuple[Option, ...]] = (
     Option("--for", "load|setpoint", "what the settings are for", "load"),
@@ -307,11 +343,13 @@ COMMANDS: Final[dict[str, Grammar]] = {
         ),
         Grammar(
             "fit",
-            "Fits plant models to a test record, with standard errors and warnings.",
-            "RECORD.csv",
+            "Fits plant models to a test record, or to several of one plant at once, with standard"
+            " errors and warnings.",
+            "RECORD.csv...",
             (*FIT, JSON),
             "workbench fit cases/TIC-307_bump.csv",
             least=1,
+            most=100,
         ),
         Grammar(
             "propose",

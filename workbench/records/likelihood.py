@@ -35,7 +35,7 @@ from workbench.errors import CannotSolve
 from workbench.records.record import Record
 from workbench.records.response import FITTED, Array, FittedShape, Lags, Moves
 
-_SEARCH_ROWS: Final = 1200
+_SEARCH_ROWS: Final = 800
 """Rows that the first descents look at; OP is followed exactly all the same."""
 _GRID_ROWS: Final = 300
 """Rows that the grid before them looks at."""

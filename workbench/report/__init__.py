@@ -13,7 +13,7 @@ from workbench.report.files import (
     history_data,
     history_text,
 )
-from workbench.report.fits import fit_data, fit_text
+from workbench.report.fits import fit_data, fit_text, live_text
 from workbench.report.loops import (
     assess_data,
     assess_text,
@@ -48,6 +48,7 @@ __all__ = [
     "history_data",
     "history_text",
     "is_stable",
+    "live_text",
     "predict_data",
     "predict_text",
     "propose_data",

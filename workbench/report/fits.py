@@ -6,18 +6,21 @@ from collections.abc import Mapping
 from dataclasses import asdict
 from typing import TYPE_CHECKING, Any, Final
 
-from workbench.units import Amount, harmless, text
+from workbench.units import Amount, harmless, text, time_text
 
 if TYPE_CHECKING:
     from workbench.records.candidate import Candidate
     from workbench.records.closed_loop import StepModel
     from workbench.records.identify import Fit
     from workbench.records.judgement import Judgement
-from workbench.report.words import Json, Rows, note_lines, two_columns, wrapped
+    from workbench.study import Advice, Live
+from workbench.report.words import Json, Rows, note_lines, put, two_columns, wrapped
 
 
-def fit_data(fit: Fit) -> Json:
-    """The fit as `fit --json` prints it."""
+def fit_data(fit: Fit, advice: Advice | None = None) -> Json:
+    """The fit as `fit --json` prints it, with what to do next where a certainty is asked for."""
+    from workbench.study import bumps
+
     record = fit.record
     return {
         "record": harmless(record.path),
@@ -30,8 +33,37 @@ def fit_data(fit: Fit) -> Json:
         "warnings": [note.text for note in (*record.notes, *fit.warnings)],
         "cross_checks": _cross_check_data(fit),
         **_loop_data(fit),
+        "bumps": [asdict(bump) for bump in bumps(record)],
+        **({} if advice is None else {"advice": _advice_data(advice)}),
         "units": {"pv": "PV unit of the record", "op": "OP unit of the record"},
     }
+
+
+def _advice_data(advice: Advice) -> Json:
+    data: Json = {
+        "say": advice.say,
+        "reached": advice.reached,
+        "wanted_percent": float(advice.wanted_percent),
+        "spoilt": list(advice.spoilt),
+    }
+    put(data, "certainty_percent", advice.certainty_percent)
+    put(data, "hold_s", advice.hold_s)
+    return data
+
+
+def live_text(live: Live, width: int) -> str:
+    """Where a test stands that is followed: rows, the advice, what is known."""
+    lines = [wrapped(live.said, width, hang="  ")] if live.said else []
+    if live.fit is not None and live.advice is not None:
+        record = live.fit.record
+        where = f"{len(record.time)} rows, {time_text(record.duration, 3)}"
+        shape = live.fit.chosen or (live.fit.candidates and live.fit.candidates[0].shape) or ""
+        lines.append(wrapped(f"{where}: {live.advice.say}", width, hang="  "))
+        if live.advice.known:
+            known = f"  {shape}: {'; '.join(live.advice.known)}"
+            lines.append(wrapped(known, width, hang="    "))
+        lines += [wrapped(f"  ! {words}", width, hang="    ") for words in live.advice.spoilt]
+    return "\n".join(lines)
 
 
 def _candidate_data(candidate: Candidate) -> Json:
@@ -187,13 +219,28 @@ _ERRORS: Final = {
 """Key of `standard_errors` -> words, unit, in the units of the record."""
 
 
-def fit_text(fit: Fit, width: int) -> str:
-    """The fit for people."""
+_MOST_BUMPS: Final = 10
+"""Bumps that the text tells of; the others are in the JSON."""
+
+
+def fit_text(fit: Fit, width: int, advice: Advice | None = None) -> str:
+    """The fit for people, with what to do next where a certainty is asked for."""
+    from workbench.study import bumps
+
     record = fit.record
     columns = ", ".join(f"{role} from {name!r}" for role, name in record.columns.items())
     lines = [
         wrapped(f"{record.path}: {len(record.time)} rows; {columns}", width, hang="  "),
         wrapped("PV and OP are in the units of the record.", width),
+    ]
+    lines += [
+        wrapped(
+            f"At {time_text(b.at_s)} OP {text(b.op_before)} to {text(b.op_after)}, held for "
+            f"{time_text(b.hold_s, 3)}: PV {text(b.pv_before)} to {text(b.pv_after)}.",
+            width,
+            hang="  ",
+        )
+        for b in bumps(record)[:_MOST_BUMPS]
     ]
     for candidate in fit.candidates:
         mark = " (chosen)" if candidate.shape == fit.chosen else ""
@@ -204,6 +251,8 @@ def fit_text(fit: Fit, width: int) -> str:
     if fit.chosen is None:
         lines += ["", wrapped(f"No model is chosen. {fit.reason}", width)]
     lines += _cross_check_lines(fit, width)
+    if advice is not None:
+        lines += ["", wrapped(advice.say, width)]
     told = [note for note in (*record.notes, *fit.warnings) if note.text != fit.reason]
     return "\n".join([*lines, *note_lines(told, width)])
 

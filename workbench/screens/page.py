@@ -54,6 +54,8 @@ class Page(Screen[None]):
     AUTO_FOCUS: ClassVar[str | None] = ""
 
     commands: ClassVar[tuple[Command, ...]] = ()
+    key_lines: ClassVar[tuple[tuple[Command, ...], ...]] = ()
+    """What the key line shows by turns, where it is not `commands`."""
     about: ClassVar[tuple[str, ...]] = ()
     """What the help page says of this page."""
 

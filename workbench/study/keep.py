@@ -6,7 +6,6 @@ import contextlib
 import hashlib
 import os
 import re
-from collections.abc import Callable
 from dataclasses import dataclass, fields, replace
 from datetime import datetime
 from pathlib import Path
@@ -24,11 +23,8 @@ from workbench.errors import (
 from workbench.model.pid import Controller
 from workbench.model.plant import Formula, Shape
 from workbench.records.candidate import Candidate
-from workbench.records.cells import LARGEST_FILE
 from workbench.records.identify import Fit
-from workbench.records.identify import fit as fit_plants
-from workbench.records.record import read_record
-from workbench.records.response import FITTED
+from workbench.records.table import LARGEST_FILE
 from workbench.study.assessment import assess
 from workbench.study.loop import controller_of, no_time_domain, plant_of
 from workbench.study.prediction import predict
@@ -42,35 +38,6 @@ class FileCheck:
     path: str
     ok: bool
     faults: tuple[Problem, ...]
-
-
-def fit_record(  # noqa: PLR0913 - one argument for each option of the command
-    path: str | Path,
-    *,
-    time: str | None = None,
-    pv: str | None = None,
-    op: str | None = None,
-    sp: str | None = None,
-    mode: str | None = None,
-    start: str | None = None,
-    end: str | None = None,
-    shapes: tuple[str, ...] | None = None,
-    noise_model: str = "auto",
-    drift: bool = True,
-    should_stop: Callable[[], bool] | None = None,
-) -> Fit:
-    """Fit plant models to a test record, of every shape where none is named.
-
-    Raises `RecordError` or `CannotSolve`.
-    """
-    record = read_record(path, time=time, pv=pv, op=op, sp=sp, mode=mode, start=start, end=end)
-    return fit_plants(
-        record,
-        shapes=shapes or tuple(FITTED),
-        noise_model=noise_model,
-        drift=drift,
-        should_stop=should_stop,
-    )
 
 
 def chosen_candidate(fit: Fit, shape: str | None = None) -> Candidate:
