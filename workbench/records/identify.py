@@ -41,8 +41,8 @@ _EVIDENCE: Final = 10.0
 """A model must beat "OP does nothing" by this much in BIC: very strong evidence, by the usual
 scale (R.E. Kass and A.E. Raftery, "Bayes factors", J. Am. Stat. Assoc. 90, 1995; from memory)."""
 _UNDECIDED: Final = 6.0
-"""Difference in BIC below which the bump that was left out decides: below strong evidence on the
-same scale."""
+"""Difference in BIC below which a simpler shape may win by the bump that was left out: below strong
+evidence on the same scale."""
 
 
 @dataclass(frozen=True)
@@ -117,8 +117,8 @@ def fit(
     -----
     Whether PV was still settling when the record starts is decided by BIC.  Intervals hold for a
     plant that is linear, and for OP that moved at its stamps: OP logged a row late or early shifts
-    the dead time by exactly that row.  Shapes are chosen by BIC; of those within 6 of the best, the
-    one that predicts the bump it did not see clearly better.
+    the dead time by exactly that row.  Shapes are chosen by BIC; a simpler one within 6 of the best
+    is preferred where it predicts the bump it did not see clearly better.
 
     Source
     ------
@@ -257,7 +257,10 @@ def _drift(search: Search, terms: int, integrates: bool, best: Solution) -> floa
 
 
 def _choice(found: list[Candidate]) -> Candidate | None:
-    """The best by BIC, or one near it that predicts the bump left out clearly better."""
+    """The best by BIC, or a simpler one near it that predicts the bump left out clearly better.
+
+    Only a simpler one: one bump less makes rich shapes predict well or badly by chance.
+    """
     if not found:
         return None
     best = found[0]
@@ -265,6 +268,8 @@ def _choice(found: list[Candidate]) -> Candidate | None:
     seen = best.judgement.holdout_percent
     for candidate in near[1:]:
         other = candidate.judgement.holdout_percent
+        if len(candidate.certainty.names) >= len(best.certainty.names):
+            continue
         if seen is not None and other is not None and 100.0 - other < 0.9 * (100.0 - seen):
             best, seen = candidate, other
     return best
