@@ -30,7 +30,7 @@ from tests.case.campaigns import (
     surveyed_cases,
 )
 from tests.model.test_formula import fuzzed
-from tests.model.test_robustness import brinks, sampled_verdicts
+from tests.model.test_robustness import brinks, sampled_circles, sampled_verdicts
 from tests.model.test_stability import verdicts
 from tests.model.test_transfer import laws, limits, step_responses
 from tests.plain import sampled_pv
@@ -44,6 +44,7 @@ from tests.sim.campaigns import (
     sampled_by_mpmath,
 )
 from tests.sim.cascades import cascades_at_limits
+from tests.sim.floors import beaten, reached
 from tests.sim.series import Path as Way
 from tests.sim.series import Rational, responses
 from tests.tune.searches import searched
@@ -425,6 +426,9 @@ CAMPAIGNS: Final[dict[str, Campaign]] = {
     "sampled verdicts": Campaign(
         _judged(sampled_verdicts, 31, 1e-6, "difference of a gain margin"), 10, 1000
     ),
+    "sampled margins used up": Campaign(
+        _judged(sampled_circles, 32, 1e-6, "nearest eigenvalue from the unit circle"), 10, 500
+    ),
     "formulas typed and broken": Campaign(
         _judged(fuzzed, 13, 1.0, "seconds of work for one"), 300, 100_000
     ),
@@ -447,6 +451,12 @@ CAMPAIGNS: Final[dict[str, Campaign]] = {
     ),
     "inner loops at limits": Campaign(
         _judged(cascades_at_limits, 206, 0.0, "outer output goes on into the limit [%]"), 40, 2000
+    ),
+    "floors not beaten": Campaign(
+        _judged(beaten, 51, 1e-4, "below a floor, as a share of it"), 4, 2000
+    ),
+    "floors reached": Campaign(
+        _judged(reached, 0, 0.03, "best moves found above a floor, as a share"), 1, 20
     ),
     "sampled margins": Campaign(sampled_brinks, 5, 500),
     "best settings by search": Campaign(

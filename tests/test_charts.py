@@ -129,6 +129,13 @@ def test_ticks_are_few_round_inside_and_told_apart(low: float, span: float, most
         assert len(set(labels)) == len(labels)
 
 
+def test_large_ticks_close_together_keep_the_digits_that_tell_them_apart() -> None:
+    # exact: steps of 1000 about a million want four digits
+    _, labels = round_ticks(994_000.0, 1_001_000.0, 7)
+    assert labels[:2] == ("9.94e+05", "9.95e+05")
+    assert labels[-2:] == ("1e+06", "1.001e+06")
+
+
 def test_ticks_are_one_two_or_five_times_a_power_of_ten() -> None:
     for high in (0.37, 1.0, 7.3, 99.0, 123.4, 5e4):
         values, _ = round_ticks(0.0, high, 6)

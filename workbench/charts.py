@@ -197,7 +197,10 @@ def round_ticks(low: float, high: float, most: int) -> tuple[tuple[float, ...], 
     values = tuple(float(f"{k * step:.12g}") + 0.0 for k in range(first, last + 1))
     largest = max((abs(value) for value in values), default=0.0)
     if largest >= 1e6 or (largest < 1e-3 and largest > 0):
-        return values, tuple(f"{value:.3g}" for value in values)
+        # As many digits as tell one step from the next: 9.94e+05, 9.95e+05 ... 1.001e+06.
+        places = math.floor(math.log10(largest)) - math.floor(math.log10(step) + 1e-9)
+        digits = max(3, places + 1)
+        return values, tuple(f"{value:.{digits}g}" for value in values)
     decimals = max(0, -math.floor(math.log10(step) + 1e-9))
     return values, tuple(f"{value:.{decimals}f}" for value in values)
 

@@ -226,6 +226,47 @@ def test_the_peak_at_either_end_of_the_axis_counts() -> None:
     assert margins.max_sensitivity.value == pytest.approx(1.0, rel=1e-9)
 
 
+# --- the bandwidth -------------------------------------------------------------------------------
+
+
+def test_the_bandwidth_of_an_integrator_under_gain_is_the_gain() -> None:
+    # exact: T = k/(s + k) is at -3 dB at k rad/s
+    margins = analogue_margins(_loop(TransferFunction.ratio((0.2,), [(1.0, 0.0)]), Gains(1.5)))
+    assert margins.bandwidth_rad_s.value == pytest.approx(0.3, rel=1e-9)
+
+
+def test_the_bandwidth_of_a_second_order_loop() -> None:
+    # exact: T = w^2/(s^2 + 2 z w s + w^2) is at -3 dB at w sqrt(a + sqrt(1 + a^2)), a = 1 - 2 z^2
+    w, z = 0.4, 0.3
+    plant = TransferFunction.ratio((w * w,), [(1.0, 0.0), (1.0, 2.0 * z * w)])
+    inner = 1.0 - 2.0 * z * z
+    exact = w * math.sqrt(inner + math.sqrt(1.0 + inner * inner))
+    margins = analogue_margins(_loop(plant, Gains(1.0)))
+    assert margins.bandwidth_rad_s.value == pytest.approx(exact, rel=1e-9)
+
+
+def test_the_bandwidth_of_a_dead_time_by_itself() -> None:
+    # exact: |L| = k/w with phase -90 deg - L w: |T|^2 = 1/2 where (w/k)^2 - 2 (w/k) sin(L w) = 1
+    gain, dead_time = 0.1, 4.0
+    plant = TransferFunction.ratio((gain,), [(1.0, 0.0)], dead_time)
+    found = _value(analogue_margins(_loop(plant, Gains(1.0))).bandwidth_rad_s)
+    exact = mpmath.findroot(
+        lambda w: (w / gain) ** 2 - 2 * (w / gain) * mpmath.sin(dead_time * w) - 1, 0.15
+    )
+    assert found == pytest.approx(float(exact), rel=1e-9)
+
+
+def test_a_loop_that_does_not_follow_has_no_bandwidth() -> None:
+    # exact: T(0) = 1/(1 + 1)
+    margins = analogue_margins(_loop(TransferFunction.ratio((1.0,), [(4.0, 1.0)]), Gains(1.0)))
+    assert margins.bandwidth_rad_s.value is None
+    assert "slow setpoint" in margins.bandwidth_rad_s.reason
+    # exact: T = 9 at every frequency but for the lag far above
+    direct = analogue_margins(_loop(TransferFunction.constant(9.0), Gains(1.0)))
+    assert direct.bandwidth_rad_s.value is None
+    assert "every frequency" in direct.bandwidth_rad_s.reason
+
+
 # --- margins found are margins made --------------------------------------------------------------
 
 
@@ -321,7 +362,7 @@ def test_an_unstable_loop_has_no_margins() -> None:
     assert not margins.stable
     assert margins.reason == "2 roots in the right half plane: the swing grows"
     figures = [getattr(margins, f.name) for f in fields(margins)[2:]]
-    assert len(figures) == 8
+    assert len(figures) == 9
     assert all(f.value is None and "not stable" in f.reason for f in figures)
 
 
@@ -500,6 +541,53 @@ def _gain_margin_difference(paths: list[Path], settings: Scanned, margins: Margi
     return abs(found - low) / low
 
 
+def _circle_differences(paths: list[Path], settings: Scanned, margins: Margins) -> list[float]:
+    """How far from the unit circle the outermost eigenvalue is with each margin used up."""
+    brinks = [
+        (paths, _times(settings, figure.value))
+        for figure in (margins.gain_margin, margins.gain_margin_lower)
+        if figure.value is not None
+    ]
+    late = margins.delay_margin_s.value
+    # Beyond some scans the dead time makes a matrix of thousands of rows.
+    if late is not None and late < 80.0 * settings.scan:
+        brinks.append(([_later_path(path, late) for path in paths], settings))
+    return [
+        float(np.abs(np.abs(sampled_route(*brink).eigenvalues()) - 1.0).min()) for brink in brinks
+    ]
+
+
+def _times(settings: Scanned, gain: float) -> Scanned:
+    return replace(
+        settings,
+        proportional=gain * settings.proportional,
+        integral=gain * settings.integral,
+        derivative=gain * settings.derivative,
+    )
+
+
+def _later_path(path: Path, late: float) -> Path:
+    return replace(path, dead_time=path.dead_time + late)
+
+
+def sampled_circles(size: int, seed: int) -> tuple[float, list[str]]:
+    """Sampled gain, lower gain and delay margins used up, against the eigenvalues of the closed
+    loop: (worst distance of the nearest one from the unit circle, failures)."""
+    rng = np.random.default_rng(seed)
+    worst, failures, judged = 0.0, [], 0
+    while judged < size:
+        paths, settings = _random_sampled(rng)
+        margins = sampled_margins(_sampled(paths, settings))
+        if not margins.stable:
+            continue
+        judged += 1
+        off = max(_circle_differences(paths, settings, margins), default=0.0)
+        worst = max(worst, off)
+        if off > 1e-6:
+            failures.append(f"{off} from the unit circle: {paths} {settings}")
+    return worst, failures
+
+
 def test_sampled_verdicts_and_gain_margins_agree_with_eigenvalues() -> None:
     worst, failures = sampled_verdicts(30, seed=31)
     assert failures == []
@@ -556,7 +644,14 @@ def test_sampled_figures_agree_with_the_difference_equations(name: str) -> None:
     )
     late = np.where(lag > 0, lag, lag + 2 * math.pi) / crossing
     assert _value(margins.delay_margin_s) == pytest.approx(float(late.min()), rel=WANTED)
+    followed = np.abs(values / (1 + values))
+    assert _value(margins.max_complementary_sensitivity) == pytest.approx(
+        float(followed.max()), rel=WANTED
+    )
+    below = np.flatnonzero(followed < math.sqrt(0.5))
+    assert _value(margins.bandwidth_rad_s) == pytest.approx(float(grid[below[0]]), rel=2e-3)
     assert _gain_margin_difference(paths, settings, margins) < 1e-6
+    assert max(_circle_differences(paths, settings, margins)) < 1e-6
 
 
 def test_a_short_scan_gives_the_analogue_figures() -> None:

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import cmath
 import math
+from collections.abc import Callable
 from dataclasses import replace
 
 import numpy as np
@@ -279,6 +280,100 @@ def test_a_cascade_at_its_gain_margin_swings(loop: Structure) -> None:
             derivative=more * g.derivative,
         )
         assert analogue_margins(replace(loop, gains=scaled)).stable is stable
+
+
+# --- margins of the whole, from the blocks in plain complex numbers -------------------------------
+
+
+def scanned(open_loop: Callable[[complex], complex]) -> tuple[float, float, float, float]:
+    """Ms, Mt, gain margin, phase margin [deg] of a block diagram, by a fine scan of frequency."""
+    w = np.geomspace(1e-4, 30.0, 40_001)
+    values = np.array([open_loop(1j * float(frequency)) for frequency in w])
+    crossing = (values.imag[:-1] * values.imag[1:] < 0.0) & (values.real[1:] < 0.0)
+    share = values.imag[:-1] / np.where(crossing, values.imag[:-1] - values.imag[1:], 1.0)
+    real = values.real[:-1] + share * np.diff(values.real)
+    limits = -1.0 / real[crossing]
+    at_one = np.flatnonzero(np.diff(np.sign(np.abs(values) - 1.0)))
+    angle = np.abs(np.degrees(np.angle(-values[at_one])))
+    return (
+        float((1.0 / np.abs(1.0 + values)).max()),
+        float(np.abs(values / (1.0 + values)).max()),
+        float(limits[limits > 1.0].min(initial=math.inf)),
+        float(angle.min(initial=math.inf)),
+    )
+
+
+def agrees(loop: Loop, open_loop: Callable[[complex], complex]) -> None:
+    margins = analogue_margins(loop)
+    assert margins.stable, margins.reason
+    peak, followed, gain, phase = scanned(open_loop)
+    assert margins.max_sensitivity.value == pytest.approx(peak, rel=1e-4)
+    assert margins.max_complementary_sensitivity.value == pytest.approx(followed, rel=1e-4)
+    assert margins.gain_margin.value == pytest.approx(gain, rel=1e-3)
+    assert margins.phase_margin_deg.value == pytest.approx(phase, rel=1e-2)
+
+
+def first(gain: float, time: float, dead_time: float, s: complex) -> complex:
+    """A lag with dead time, written out."""
+    return gain * cmath.exp(-dead_time * s) / (time * s + 1.0)
+
+
+def pid(gains: Gains, s: complex) -> complex:
+    """The controller from the error, written out."""
+    derivative = gains.derivative * s / (1.0 + gains.filter_time * s)
+    return gains.proportional + gains.integral / s + derivative
+
+
+@pytest.mark.parametrize(
+    ("gain", "dead_time", "pv_filter"), [(1.0, 6.0, 0.0), (1.3, 7.5, 2.0), (0.8, 4.0, 0.0)]
+)
+def test_margins_of_a_compensated_loop_with_a_wrong_model(
+    gain: float, dead_time: float, pv_filter: float
+) -> None:
+    # other route: Q G/(1 + Q (M0 - M)) in plain complex numbers; the model is 1.8, 40 s, 6 s
+    gains = Gains(1.5, 0.05, 2.0, 0.4)
+    plant = lag(1.8 * gain, 40.0, dead_time)
+    loop = Structure(plant, plant, gains, pv_filter=pv_filter, model=lag(1.8, 40.0, 6.0))
+
+    def open_loop(s: complex) -> complex:
+        q = pid(gains, s) / (pv_filter * s + 1.0)
+        ahead = first(1.8, 40.0, 0.0, s) - first(1.8, 40.0, 6.0, s)
+        return q * first(1.8 * gain, 40.0, dead_time, s) / (1.0 + q * ahead)
+
+    agrees(loop, open_loop)
+
+
+@pytest.mark.parametrize("dead_time", [0.0, 1.5])
+def test_margins_of_a_cascade(dead_time: float) -> None:
+    # other route: C G T with T = C2 G2/(1 + C2 G2) in plain complex numbers, b = 0.6 inside
+    within, outer = Gains(1.2, 0.4, setpoint_weight=0.6), Gains(1.4, 0.05, 3.0, 0.5)
+    inner = Loop(lag(1.5, 4.0, dead_time), NOTHING, within)
+    slow = lag(1.2, 30.0, 5.0)
+
+    def open_loop(s: complex) -> complex:
+        fast = first(1.5, 4.0, dead_time, s)
+        asked = (0.6 * within.proportional + within.integral / s) * fast
+        through = asked / (1.0 + pid(within, s) * fast)
+        return pid(outer, s) * first(1.2, 30.0, 5.0, s) * through
+
+    agrees(Structure(slow, slow, outer, inner=inner), open_loop)
+
+
+def test_margins_of_a_compensated_cascade_with_feedforward() -> None:
+    # other route: all of it in plain complex numbers; feedforward is outside the loop
+    within, outer = Gains(2.0, 0.8), Gains(1.5, 0.06)
+    inner = Loop(lag(1.0, 3.0, 0.5), NOTHING, within)
+    slow, model = lag(1.2, 30.0, 5.0), lag(1.3, 32.0, 5.5)
+    forward = ideal_feedforward(slow, lag(-0.7, 12.0, 6.0)).feedforward
+    loop = Structure(slow, slow, outer, inner=inner, model=model, feedforward=forward)
+
+    def open_loop(s: complex) -> complex:
+        inside = pid(within, s) * first(1.0, 3.0, 0.5, s)
+        met = first(1.2, 30.0, 5.0, s) * inside / (1.0 + inside)
+        ahead = first(1.3, 32.0, 0.0, s) - first(1.3, 32.0, 5.5, s)
+        return pid(outer, s) * met / (1.0 + pid(outer, s) * ahead)
+
+    agrees(loop, open_loop)
 
 
 # --- feedforward ---------------------------------------------------------------------------------

@@ -4,14 +4,16 @@ Margins are the smallest over all crossovers; peaks are the supremum over all fr
 included.  A loop that is not stable has no margins.
 
 Source of the definitions: S. Skogestad and I. Postlethwaite, "Multivariable Feedback Control",
-2nd ed., Wiley, 2005, section 2.4 (from memory).
+2nd ed., Wiley, 2005, section 2.4 (from memory); the bandwidth is that of T, as in G.F. Franklin,
+J.D. Powell and A. Emami-Naeini, "Feedback Control of Dynamic Systems" (from memory): the lowest
+frequency at which |T| falls below 1/sqrt(2).
 """
 
 from __future__ import annotations
 
 import math
 from collections.abc import Callable
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from typing import Final
 
 import numpy as np
@@ -33,6 +35,8 @@ _FINEST: Final = 60_000
 """Most frequencies looked at in one sweep."""
 _MATTERS: Final = 0.3
 """Gain down to which the phase of the dead time is followed turn by turn."""
+_MOST_TRIES: Final = 20
+"""Tries at the dead time that brings a sampled loop to its limit."""
 
 
 @dataclass(frozen=True)
@@ -55,6 +59,8 @@ class Margins:
     """Mt, the largest |L/(1 + L)|."""
     gain_crossover_rad_s: Figure
     phase_crossover_rad_s: Figure
+    bandwidth_rad_s: Figure
+    """Where |T|, T = L/(1 + L), first falls below 1/sqrt(2), -3 dB [rad/s]."""
 
 
 def analogue_margins(loop: Loop) -> Margins:
@@ -102,7 +108,39 @@ def sampled_margins(loop: Loop) -> Margins:
     corners = _corners(open_loop)
     grid = _grid(response, corners[corners < top], delay, top)
     last = float(response(np.array([top]))[0].real)
-    return _margins(response, grid, open_loop, far=last, far_at=top)
+
+    def survived(frequency: float, delay: float) -> float:
+        return _held_delay(loop, frequency, delay)
+
+    return _margins(response, grid, open_loop, far=last, far_at=top, survived=survived)
+
+
+def _held_delay(loop: Loop, frequency: float, delay: float) -> float:
+    """The dead time [s] that makes L = -1, from where a delay of L alone would.
+
+    A dead time of a part of a scan changes the held plant otherwise than exp(-d s) would.  So L is
+    worked out anew with it, until frequency and dead time no longer change: Newton's steps for
+    log(-L) = 0 with the slope of the delay alone.
+    """
+    first, step, limit = delay, 1e-6 * frequency, math.pi / (loop.scan or 1.0)
+    for _ in range(_MOST_TRIES):
+        later = replace(loop, plant=loop.plant * TransferFunction.ratio((1.0,), dead_time=delay))
+        sampled = later.sampled() if isinstance(later, Structure) else SampledLoop.of(later)
+        at = np.array([frequency, frequency + step])
+        values = np.log(-sampled.open_loop(np.exp(1j * at * sampled.scan)))
+        slope = complex(values[1] - values[0]) / step
+        short = complex(values[0])
+        # Re: short + slope change = 0; Im: the same less frequency times the change of the delay.
+        change = -short.real / slope.real if slope.real else math.inf
+        more = (short.imag + slope.imag * change) / frequency
+        if not math.isfinite(change + more) or not 0.0 < frequency + change <= limit:
+            return first
+        frequency, delay = frequency + change, delay + more
+        if delay < 0.0 or abs(delay - first) > sampled.scan:
+            return first
+        if abs(more) <= 1e-9 * delay and abs(change) <= 1e-7 * frequency:
+            return delay
+    return first
 
 
 def ultimate(plant: TransferFunction) -> tuple[float, float]:
@@ -148,7 +186,7 @@ def ultimate(plant: TransferFunction) -> tuple[float, float]:
 
 def _none(verdict: Verdict) -> Margins:
     missing = Figure(None, f"{_NOT_STABLE}: {verdict.reason}")
-    return Margins(False, verdict.reason, *([missing] * 8))
+    return Margins(False, verdict.reason, *([missing] * 9))
 
 
 # --- the frequencies to look at ------------------------------------------------------------------
@@ -266,11 +304,15 @@ def _margins(
     *,
     far: float,
     far_at: float | None = None,
+    survived: Callable[[float, float], float] | None = None,
 ) -> Margins:
-    """All figures of a stable loop; `far` is the response at the last frequency, `far_at`."""
+    """All figures of a stable loop; `far` is the response at the last frequency, `far_at`.
+
+    `survived` makes of a frequency and a delay of L there the dead time of the plant that does it.
+    """
     values = response(grid)
     gain_low, gain_high, at_phase = _gain_margins(response, grid, values, open_loop, far, far_at)
-    phase, delay, at_gain = _phase_margins(response, grid, values)
+    phase, delay, at_gain = _phase_margins(response, grid, values, survived)
     if far_at is None and abs(far) >= 1.0:
         # The least dead time makes a loop of neutral type whose gain at high frequency is too much.
         delay = Figure.of(0.0)
@@ -290,7 +332,30 @@ def _margins(
         Figure.of(max(complementary, *(t for _, t in ends))),
         at_gain,
         at_phase,
+        _bandwidth(response, grid, values, ends[0][1]),
     )
+
+
+def _bandwidth(response: Response, grid: Floats, values: Complex, at_zero: float) -> Figure:
+    """Frequency [rad/s] at which |T| first falls below -3 dB; `at_zero` is |T| at frequency 0."""
+
+    def above(response: Complex) -> Floats:
+        size = np.abs(1.0 - 1.0 / (1.0 + response))
+        return np.log(np.maximum(size, 1e-300) * math.sqrt(2.0))
+
+    if at_zero < math.sqrt(0.5):
+        return Figure(None, "PV does not follow a slow setpoint to -3 dB")
+    height = above(values)
+    fallen = np.flatnonzero(height < 0.0)
+    if not len(fallen):
+        return Figure(None, "the loop follows to -3 dB at every frequency")
+    first = int(fallen[0])
+    if not first:
+        return Figure(None, "it is below every frequency looked at")
+    found = _crossings(
+        lambda w: above(response(w)), grid[first - 1 : first], grid[first : first + 1]
+    )
+    return Figure.of(float(found[0]))
 
 
 def _ends(open_loop: TransferFunction, far: float, *, delayed: bool) -> list[tuple[float, float]]:
@@ -348,7 +413,10 @@ def _phase_crossovers(
 
 
 def _phase_margins(
-    response: Response, grid: Floats, values: Complex
+    response: Response,
+    grid: Floats,
+    values: Complex,
+    survived: Callable[[float, float], float] | None,
 ) -> tuple[Figure, Figure, Figure]:
     """Phase margin [deg], delay margin [s] and the crossover of the phase margin [rad/s]."""
 
@@ -364,9 +432,12 @@ def _phase_margins(
     lag = np.angle(-response(at))
     phase = np.degrees(np.abs(lag))
     delay = np.where(lag > 0.0, lag, lag + 2.0 * math.pi) / at
-    narrowest = int(phase.argmin())
+    narrowest, soonest = int(phase.argmin()), int(delay.argmin())
+    least = float(delay[soonest])
+    if survived is not None:
+        least = survived(float(at[soonest]), least)
     return (
         Figure.of(float(phase[narrowest])),
-        Figure.of(float(delay.min())),
+        Figure.of(least),
         Figure.of(float(at[narrowest])),
     )

@@ -189,11 +189,13 @@ def _on_one_denominator(
     one: TransferFunction, other: TransferFunction
 ) -> tuple[TransferFunction, TransferFunction]:
     """Both functions over the least denominator that holds the denominators of both."""
+    if one.denominator == other.denominator:
+        return one, other
     if one.has_delayed_feedback or other.has_delayed_feedback:
-        return (
-            one * TransferFunction(other.denominator, other.denominator),
-            other * TransferFunction(one.denominator, one.denominator),
-        )
+        wider = one * TransferFunction(other.denominator, other.denominator)
+        same = other * TransferFunction(one.denominator, one.denominator)
+        # Term by term the same, so that a pole at 0 that both get later is not written twice.
+        return wider, TransferFunction(same.numerator, wider.denominator)
     mine, theirs = one.denominator[0].polynomial, other.denominator[0].polynomial
     union = Counter(dict(mine.factors)) | Counter(dict(theirs.factors))
     whole = Factored(1.0, tuple(union.items()))

@@ -86,6 +86,8 @@ def _plant_data(plant: PlantFigures) -> Json:
         if reason:
             data[f"{key}_reason"] = reason
     data["dead_time_s"] = float(plant.dead_time_s)
+    put(data, "least_max_sensitivity", plant.least_max_sensitivity)
+    put(data, "least_max_complementary_sensitivity", plant.least_max_complementary_sensitivity)
     return data
 
 
@@ -107,6 +109,7 @@ _MARGINS: Final = (
     ("max_complementary_sensitivity", "maximum complementary sensitivity", ""),
     ("gain_crossover_rad_s", "gain crossover", "rad/s"),
     ("phase_crossover_rad_s", "phase crossover", "rad/s"),
+    ("bandwidth_rad_s", "bandwidth, to -3 dB", "rad/s"),
 )
 """Field of `Margins` and key in JSON -> words, unit."""
 
@@ -149,6 +152,7 @@ def assess_text(
         ("poles", plant.poles_reason or points(plant.poles)),
         ("zeros", plant.zeros_reason or points(plant.zeros)),
         ("OP is", found.valve),
+        *_forbidden(plant),
     ]
     lines = [*heading(case, width, found.action), "Plant", *two_columns(rows, width)]
     if small is not None:
@@ -165,6 +169,16 @@ def assess_text(
         lines += ["", "Loop, sampled", *two_columns([("none", found.sampled_reason)], width)]
     told = [note for note in found.notes if not note.text.startswith("NOT STABLE")]
     return "\n".join([*lines, *note_lines(told, width)])
+
+
+def _forbidden(plant: PlantFigures) -> Rows:
+    """What no controller can undercut, where the plant forbids anything."""
+    found = (
+        ("Ms", plant.least_max_sensitivity.value),
+        ("Mt", plant.least_max_complementary_sensitivity.value),
+    )
+    words = [f"{name} {text(value, digits=3)}" for name, value in found if value and value > 1.0]
+    return [("at least", " and ".join(words) + ", whatever the controller")] if words else []
 
 
 def _small_rows(small: Sequence[Reduced], width: int) -> list[str]:
@@ -281,6 +295,11 @@ def predict_data(evaluation: Evaluation, prediction: Prediction, units: Mapping[
     floor: Json = {}
     put(floor, "peak_deviation", prediction.floor_peak_deviation)
     put(floor, "load_iae", prediction.floor_load_iae)
+    put(floor, "peak_ratio", prediction.peak_to_floor)
+    put(floor, "load_iae_ratio", prediction.load_iae_to_floor)
+    put(floor, "fixed_peak", prediction.floor_fixed_peak)
+    put(floor, "fixed_iae", prediction.floor_fixed_iae)
+    put(floor, "acts_after_s", prediction.floor_acts_after_s)
     data["floor"] = floor
     data["scenario"] = {
         "setpoint_step": float(prediction.setpoint_step),
@@ -342,16 +361,67 @@ def predict_text(
             ("time at a limit", time_text(inner.time_at_limit_s)),
         ]
         lines += ["", "Inner loop", *two_columns(rows, width)]
-    rows = [
-        ("peak deviation", figure_words(prediction.floor_peak_deviation, units["pv"])),
-        ("integral absolute error", figure_words(prediction.floor_load_iae, f"{units['pv']} s")),
-    ]
-    floor = "The least that any controller leaves after this load step"
-    lines += ["", wrapped(floor, width), *two_columns(rows, width)]
+    lines += ["", *floor_lines(prediction, units, width)]
     if trend_file is not None:
         lines += ["", wrapped(f"The trend is in {trend_file}.", width)]
     told = [note for note in evaluation.cautions if not note.text.startswith("NOT STABLE")]
     return "\n".join([*lines, *note_lines(told, width), *handover_lines(width)])
+
+
+_NEAR: Final = 1.15
+"""A multiple of the floor up to which other settings are not worth the trouble."""
+_MUCH: Final = 0.3
+"""Share of the floor from which on its cause is named."""
+
+
+def floor_lines(prediction: Prediction, units: Mapping[str, str], width: int) -> list[str]:
+    """What no controller can undercut, and what these settings leave as a multiple of it."""
+    rows: Rows = [
+        (label, figure_words(least, unit) + times_words(ratio))
+        for label, least, unit, ratio in (
+            (
+                "peak deviation",
+                prediction.floor_peak_deviation,
+                units["pv"],
+                prediction.peak_to_floor,
+            ),
+            (
+                "integral absolute error",
+                prediction.floor_load_iae,
+                f"{units['pv']} s",
+                prediction.load_iae_to_floor,
+            ),
+        )
+    ]
+    title = "The least that any controller leaves after this load step"
+    lines = [wrapped(title, width), *two_columns(rows, width)]
+    words = floor_words(prediction)
+    return [*lines, wrapped(words, width)] if words else lines
+
+
+def times_words(ratio: Figure) -> str:
+    """What the present settings leave as a multiple of the floor; nothing where it is not known."""
+    return "" if ratio.value is None else f"; now {text(ratio.value, digits=3)} times that"
+
+
+def floor_words(prediction: Prediction) -> str:
+    """Whether tuning can still help, and what else would; nothing where the floor is not known."""
+    peak, iae = prediction.peak_to_floor.value, prediction.load_iae_to_floor.value
+    fixed, least = prediction.floor_fixed_iae.value, prediction.floor_load_iae.value
+    if peak is None or iae is None or fixed is None or not least:
+        return ""
+    after = time_words(prediction.floor_acts_after_s)
+    cause = f"the first move of any controller shows after {after}: dead time, scan and sensor"
+    if 1.0 - fixed / least >= _MUCH:
+        share = text(100.0 * (1.0 - fixed / least), digits=2)
+        cause += f"; {share} % of the least error comes after that, of output limits and lags"
+    if peak <= _NEAR and iae <= _NEAR:
+        return (
+            f"Stop tuning: no settings gain anything worth having. What sets the floor is {cause}."
+        )
+    if peak <= _NEAR:
+        return f"No settings lower the peak: {cause}. The error after it can still be cut."
+    return f"Other settings may still help. What sets the floor: {cause}."
 
 
 def _measure_rows(prediction: Prediction, group: str, units: Mapping[str, str]) -> Rows:

@@ -27,6 +27,8 @@ class Row:
     """`PV`, `OP` and `time` are put into the loop's own words."""
     better: Better = ""
     """Which way is better; empty where neither is."""
+    above: Callable[[Evaluation], Figure | None] | None = None
+    """Of a floor: the present figure as a multiple of it."""
 
 
 WORSE_BY: Final = 0.01
@@ -44,7 +46,9 @@ class FiguresPanel(Panel):
         "another one; 'worse' says so where it got worse by more than 1 %.",
         "Sensitivity Ms: the largest factor by which the loop magnifies an upset; below 1.6 is "
         "calm, above 2 is nervous. IAE: integral of the absolute error.",
-        "Floor: no controller can do better after this load step. Own gain: the controller's gain "
+        "Floor: what any controller leaves at least after this load step, and how many times that "
+        "the present settings leave: near 1, stop tuning and mend dead time, sensor, scan or "
+        "valve. Own gain: the controller's gain "
         "in units instead of percent of span. Lines with '!' are cautions.",
     )
 
@@ -59,7 +63,7 @@ class FiguresPanel(Panel):
             if figure is None:
                 continue
             earlier = row.read(was) if was is not None and was is not now else None
-            lines.append(self._line(row, figure, earlier))
+            lines.append(self._line(row, figure, earlier, row.above(now) if row.above else None))
         for note in now.cautions:
             if note.severity == "info":
                 lines += wrapped(note.text, width, "quiet", " ")
@@ -78,12 +82,16 @@ class FiguresPanel(Panel):
             return [((f" stable ({which})", "good"),)]
         return wrapped(f"UNSTABLE ({which}): {loop.margins.reason}", width, "worse", " ")
 
-    def _line(self, row: Row, figure: Figure, earlier: Figure | None) -> Line:
+    def _line(
+        self, row: Row, figure: Figure, earlier: Figure | None, above: Figure | None = None
+    ) -> Line:
         label: Span = (f" {row.label}".ljust(16), "label")
         if figure.value is None:
             return (label, (figure.reason or "none", "quiet"))
         value: Span = (self._text(row, figure.value).ljust(12), "plain")
         remark, tone = compared(row, figure, earlier)
+        if above is not None and above.value is not None:
+            remark = f"now {units.text(above.value, digits=3)} times {remark}".rstrip()
         return (label, value, (" " + remark, tone))
 
     def _text(self, row: Row, value: float) -> str:
@@ -181,8 +189,9 @@ FIGURES: Final = (
     Row("OP at a limit", _measure("output_time_at_limit_s"), "time", "lower"),
     Row("Final PV", _measure("final_pv"), "PV"),
     Row("Final OP", _measure("final_op"), "OP"),
-    Row("Peak floor", _floor("floor_peak_deviation"), "PV"),
-    Row("IAE floor", _floor("floor_load_iae"), "PV s"),
+    Row("Peak floor", _floor("floor_peak_deviation"), "PV", above=_floor("peak_to_floor")),
+    Row("IAE floor", _floor("floor_load_iae"), "PV s", above=_floor("load_iae_to_floor")),
+    Row("Bandwidth", _margin("bandwidth_rad_s"), "rad/s"),
     Row("Own gain", _own_gain, "OP per PV"),
 )
 """The figures shown, the most telling first."""

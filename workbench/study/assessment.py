@@ -12,6 +12,7 @@ from workbench.errors import (
 )
 from workbench.model.feedback import Loop
 from workbench.model.formula import format_formula
+from workbench.model.limits import least_peaks
 from workbench.model.reduction import SmallModel, best_fit, half_rule, misfit
 from workbench.model.robustness import Margins, analogue_margins, sampled_margins
 from workbench.model.stability import plant_verdict
@@ -48,6 +49,10 @@ class PlantFigures:
     """[1/s]"""
     dead_time_s: float
     """The smallest from OP to PV."""
+    least_max_sensitivity: Figure
+    """No controller has an Ms below this."""
+    least_max_complementary_sensitivity: Figure
+    """No controller has an Mt below this."""
     poles_reason: str = ""
     """Why the poles cannot be listed."""
     zeros_reason: str = ""
@@ -131,6 +136,8 @@ def _plant_figures(case: Case, plant: TransferFunction) -> PlantFigures:
     if gain.value is None and slope.value is not None:
         gain = Figure(None, f"integrating: PV moves {_slope_words(case, slope.value)}")
     delayed = plant.has_delayed_feedback
+    delay = case.controller.computing_delay_s if case.controller else 0.0
+    least = least_peaks(plant, delay)
     return PlantFigures(
         formula=format_formula(plant),
         gain=gain,
@@ -141,6 +148,8 @@ def _plant_figures(case: Case, plant: TransferFunction) -> PlantFigures:
         poles=() if delayed else plant.poles(),
         zeros=plant.zeros(),
         dead_time_s=plant.dead_time,
+        least_max_sensitivity=least.sensitivity,
+        least_max_complementary_sensitivity=least.complementary_sensitivity,
         poles_reason="infinitely many: a dead time inside an inner feedback" if delayed else "",
         zeros_reason="paths of unequal dead time: infinitely many"
         if len(plant.numerator) > 1

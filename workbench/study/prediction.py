@@ -17,12 +17,13 @@ from workbench.model.response import (
     final_value,
     held_response,
     impulse_response,
-    step_response,
 )
 from workbench.model.structures import Structure
 from workbench.model.transfer import TransferFunction
 from workbench.records.record import Record
-from workbench.sim.loop import settle_horizon, simulate
+from workbench.sim.floor import floor
+from workbench.sim.instruments import Instruments
+from workbench.sim.loop import Trace, settle_horizon, simulate
 from workbench.sim.metrics import Measures, measure
 from workbench.sim.scenario import Events, Scenario
 from workbench.sim.structures import Inside
@@ -77,10 +78,56 @@ class Prediction:
     """No controller can do better after this load step [PV unit]."""
     floor_load_iae: Figure
     """[PV unit s]"""
+    floor_fixed_peak: Figure
+    """The part of the peak's floor that is over before any controller can act [PV unit]."""
+    floor_fixed_iae: Figure
+    """The same of the IAE [PV unit s]."""
+    floor_acts_after_s: Figure
+    """From the load step to when the first move of any controller shows in PV."""
     diverged: bool
     """The loop ran away and the trend was cut off."""
     inner: InnerTrend | None = None
     """Where there is an inner loop."""
+
+    @property
+    def peak_to_floor(self) -> Figure:
+        """The peak deviation as a multiple of its floor."""
+        return _ratio(self.measures.load_peak_deviation, self.floor_peak_deviation)
+
+    @property
+    def load_iae_to_floor(self) -> Figure:
+        """The IAE after the load step as a multiple of its floor."""
+        return _ratio(self.measures.load_iae, self.floor_load_iae)
+
+
+def _ratio(found: Figure, floor: Figure) -> Figure:
+    if floor.value is None or found.value is None:
+        return Figure(None, floor.reason or found.reason)
+    if not floor.value:
+        return Figure(None, "the floor is 0")
+    return Figure.of(found.value / floor.value)
+
+
+def predicted_measures(case: Case) -> Measures:
+    """The measures of `predict` alone, for many settings side by side; raises as it does."""
+    loop, events, _, trace = _run(case, 0, None)
+    return _in_units(case, measure(trace, events, low=loop.low, high=loop.high))
+
+
+def _run(case: Case, seed: int, like: Prediction | None) -> tuple[Loop, Events, Instruments, Trace]:
+    """The loop, what happens to it, what stands between it and the plant, and its course."""
+    loop = loop_of(case)
+    missing = no_time_domain(loop.plant)
+    if missing:
+        raise problem(
+            f"cannot be predicted: {missing}",
+            "`workbench assess` judges this loop; for a trend draw the plant without that feedback",
+            key="plant",
+        )
+    events = _events(case, loop, seed, like)
+    instruments = instruments_of(case)
+    trace = simulate(loop, events, instruments)
+    return loop, events, instruments, trace
 
 
 def predict(case: Case, seed: int = 0, like: Prediction | None = None) -> Prediction:
@@ -92,16 +139,7 @@ def predict(case: Case, seed: int = 0, like: Prediction | None = None) -> Predic
     Raises `InputError` where plant or controller is missing, or the plant has a dead time inside an
     inner feedback.
     """
-    loop = loop_of(case)
-    missing = no_time_domain(loop.plant)
-    if missing:
-        raise problem(
-            f"cannot be predicted: {missing}",
-            "`workbench assess` judges this loop; for a trend draw the plant without that feedback",
-            key="plant",
-        )
-    events = _events(case, loop, seed, like)
-    trace = simulate(loop, events, instruments_of(case))
+    loop, events, instruments, trace = _run(case, seed, like)
     pv, op = case.pv, case.op
     trend = Trend(
         trace.time,
@@ -110,7 +148,7 @@ def predict(case: Case, seed: int = 0, like: Prediction | None = None) -> Predic
         op.rest + trace.output * (op.range.span / 100.0),
     )
     measures = _in_units(case, measure(trace, events, low=loop.low, high=loop.high))
-    peak, iae = _floor(loop, events)
+    least = floor(loop, events, instruments)
     to_pv = pv.range.span / 100.0
     return Prediction(
         setpoint_step=pv.range.units(events.setpoint_step),
@@ -120,8 +158,11 @@ def predict(case: Case, seed: int = 0, like: Prediction | None = None) -> Predic
         until_s=events.until,
         trend=trend,
         measures=measures,
-        floor_peak_deviation=peak.times(to_pv),
-        floor_load_iae=iae.times(to_pv),
+        floor_peak_deviation=least.peak_deviation.times(to_pv),
+        floor_load_iae=least.load_iae.times(to_pv),
+        floor_fixed_peak=least.fixed_peak.times(to_pv),
+        floor_fixed_iae=least.fixed_iae.times(to_pv),
+        floor_acts_after_s=least.acts_after,
         diverged=trace.diverged,
         inner=None if trace.inner is None else _inner_trend(case, loop, trace.inner),
     )
@@ -240,30 +281,6 @@ def _in_units(case: Case, measures: Measures) -> Measures:
         if scaled[name].value is not None:
             scaled[name] = Figure(scaled[name].value + rest)
     return replace(measures, **scaled)
-
-
-def _floor(loop: Loop, events: Events) -> tuple[Figure, Figure]:
-    """Smallest peak deviation and IAE that any controller can leave after the load step [% of PV].
-
-    Before the load shows in PV nothing is known of it, and what the controller then does shows only
-    after the plant's dead time: until then PV moves as if nobody controlled it.
-    """
-    if not events.load_step:
-        none = Figure(None, "the scenario has no load step")
-        return none, none
-    if isinstance(loop, Structure):
-        none = Figure(None, "it is only known for a single loop without feedforward")
-        return none, none
-    if not events.are_steps:
-        none = Figure(None, "it is only known for a load step, in automatic, on one plant")
-        return none, none
-    first = loop.load.dead_time + loop.plant.dead_time + loop.computing_delay
-    shown = loop.plant.dead_time + loop.computing_delay
-    if shown == 0.0:
-        return Figure(0.0), Figure(0.0)
-    time = np.linspace(0.0, first, 401)
-    free = np.abs(step_response(loop.load, time) * events.load_step)
-    return Figure.of(float(free.max())), Figure.of(float(np.trapezoid(free, time)))
 
 
 @dataclass(frozen=True)

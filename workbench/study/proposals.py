@@ -21,7 +21,7 @@ from workbench.model.reduction import double_integrator, half_rule, unstable_lag
 from workbench.model.robustness import analogue_margins, sampled_margins, ultimate
 from workbench.study.best import SEARCH_SOURCE, SEARCHES, searched
 from workbench.study.loop import action_of, loop_of, no_time_domain, plant_in_percent
-from workbench.study.prediction import predict
+from workbench.study.prediction import predicted_measures
 from workbench.study.structure import has_one_scan
 from workbench.tune import rules
 from workbench.tune.oscillation import astrom_hagglund_relay
@@ -276,7 +276,7 @@ def _with_errors(case: Case, rows: list[Proposal]) -> list[Proposal]:
         measured = [(none, none)] * len(stable)
     else:
         trials = [replace(case, controller=rows[number].controller) for number in stable]
-        found = [predict(trial).measures for trial in trials]
+        found = [predicted_measures(trial) for trial in trials]
         measured = [(measures.setpoint_iae, measures.load_iae) for measures in found]
     filled = list(rows)
     for number, (setpoint_iae, load_iae) in zip(stable, measured, strict=True):
