@@ -14,6 +14,9 @@ from workbench.records.record import Reading, Record, begin, join, read_record
 from workbench.records.response import FITTED
 from workbench.units import Range
 
+_GROWN: Final = 1.25
+"""Growth of a followed record after which every shape is fitted again."""
+
 Stop = Callable[[], bool] | None
 
 
@@ -146,26 +149,40 @@ class LiveTest:
         self._following = Following(path, **reading)
         self._shapes, self._noise_model, self._drift = shapes, noise_model, drift
         self._certainty, self._ranges = certainty, ranges or (None, None)
+        self._judged_rows = 0
+        """Rows when every shape was fitted last."""
+        self._all_shapes = True
+        """Whether the last fit was of every shape."""
         self.last = Live(None, None)
 
     def refresh(self, *, finished: bool = False, should_stop: Stop = None) -> Live | None:
         """Where the test stands now; `None` where nothing is new.
 
-        With `finished`, a last line without an end counts.  Raises `RecordError` or `CannotSolve`.
+        Every shape is fitted at first, whenever the record has grown by a quarter, and once it is
+        `finished`, when a last line without an end counts too; in between the best two of them,
+        so that the advice comes at once.  Raises `RecordError` or `CannotSolve`.
         """
         look = self._following.look(finished=finished)
-        if not look.grew:
+        if not look.grew and not (finished and not self._all_shapes):
             return None
-        self.last = Live(None, None, look.said)
-        if look.record is not None:
-            found = fit_plants(
-                look.record,
-                shapes=self._shapes,
-                noise_model=self._noise_model,
-                drift=self._drift,
-                should_stop=should_stop,
-            )
-            pv, op = self._ranges
-            advice = advise(found, certainty=self._certainty, pv_range=pv, op_range=op)
-            self.last = replace(self.last, fit=found, advice=advice)
+        self.last, before = Live(None, None, look.said), self.last.fit
+        if look.record is None:
+            return self.last
+        rows = len(look.record.time)
+        self._all_shapes = finished or before is None or rows >= _GROWN * self._judged_rows
+        shapes = self._shapes
+        if self._all_shapes or before is None or len(before.candidates) < 2:
+            self._judged_rows = rows
+        else:
+            shapes = tuple(candidate.shape for candidate in before.candidates[:2])
+        found = fit_plants(
+            look.record,
+            shapes=shapes,
+            noise_model=self._noise_model,
+            drift=self._drift,
+            should_stop=should_stop,
+        )
+        pv, op = self._ranges
+        advice = advise(found, certainty=self._certainty, pv_range=pv, op_range=op)
+        self.last = replace(self.last, fit=found, advice=advice)
         return self.last
