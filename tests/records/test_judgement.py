@@ -2,12 +2,14 @@
 
 from __future__ import annotations
 
+import json
 from dataclasses import replace
 
 import numpy as np
 import pytest
 
-from tests.records.making import Array, bump, lag, stamps, two_lags
+from tests.records.making import Array, bump, lag, stamps, swing, two_lags
+from workbench import report
 from workbench.records.candidate import Candidate
 from workbench.records.identify import Fit, fit
 from workbench.records.record import Record
@@ -216,3 +218,30 @@ def test_the_profile_of_the_dead_time_rises_on_both_sides() -> None:
     assert rise.min() == 0.0
     # Exact: at the ends of the interval the rise is the square of Student's t, 3.9 here.
     assert np.interp([low, high], at, rise) == pytest.approx([3.9, 3.9], rel=0.1)
+
+
+# --- as it is told -------------------------------------------------------------------------------
+
+
+def test_every_shape_is_told_with_its_own_parameters_in_finite_numbers() -> None:
+    made = bump(stamps(250, 6.0), swing(1.3, 300.0, 0.4), 25.7, noise=0.1)
+    result = fit(made, shapes=("oscillating", "lead"))
+    data = json.loads(json.dumps(report.fit_data(result), allow_nan=False))
+    assert data["chosen"] == "oscillating"
+    told = next(c for c in data["candidates"] if c["shape"] == "oscillating")
+    # Exact: the plant that made the record.
+    assert told["natural_period_s"] == pytest.approx(300.0, rel=0.02)
+    assert told["damping"] == pytest.approx(0.4, rel=0.1)
+    assert told["time_constants_s"] == []
+    assert told["numerator_time_s"] is None
+    assert "has none" in told["numerator_time_s_reason"]
+    assert set(told["interval_95"]) == {"gain", "natural_period_s", "damping", "dead_time_s"}
+    assert told["correlation"]["of"] == ["gain", "natural_period_s", "damping", "dead_time_s"]
+    assert np.diag(told["correlation"]["matrix"]) == pytest.approx([1.0] * 4)
+    assert 0.0 <= told["residual_whiteness"]["p_value"] <= 1.0
+    assert len(told["moves"]) == 3
+    assert data["relay"] is None
+    assert data["feedback"]["setpoint_moves"] == 0
+    shown = report.fit_text(result, 80)
+    for words in ("natural period", "damping", "last bump", "Ljung-Box", "gain up"):
+        assert words in shown

@@ -5,7 +5,7 @@ from __future__ import annotations
 from collections.abc import Callable, Sequence
 from dataclasses import dataclass, field, replace
 from pathlib import Path
-from typing import Unpack
+from typing import Final, Unpack
 
 from workbench.records.coach import CERTAINTY, Advice, advise
 from workbench.records.following import Following
