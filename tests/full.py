@@ -29,6 +29,7 @@ from tests.case.campaigns import (
     laid_out_files,
     surveyed_cases,
 )
+from tests.model.spreads import spreads_judged
 from tests.model.test_formula import fuzzed
 from tests.model.test_robustness import brinks, sampled_circles, sampled_verdicts
 from tests.model.test_stability import verdicts
@@ -45,6 +46,7 @@ from tests.sim.campaigns import (
 )
 from tests.sim.cascades import cascades_at_limits
 from tests.sim.floors import beaten, reached
+from tests.sim.promises import bumpless, held_cascades, left_limits
 from tests.sim.series import Path as Way
 from tests.sim.series import Rational, responses
 from tests.tune.searches import searched
@@ -426,6 +428,9 @@ CAMPAIGNS: Final[dict[str, Campaign]] = {
     "sampled verdicts": Campaign(
         _judged(sampled_verdicts, 31, 1e-6, "difference of a gain margin"), 10, 1000
     ),
+    "many plants in one loop": Campaign(
+        _judged(spreads_judged, 51, 1e-3, "error of an Ms, as a share"), 5, 500
+    ),
     "sampled margins used up": Campaign(
         _judged(sampled_circles, 32, 1e-6, "nearest eigenvalue from the unit circle"), 10, 500
     ),
@@ -457,6 +462,15 @@ CAMPAIGNS: Final[dict[str, Campaign]] = {
     ),
     "floors reached": Campaign(
         _judged(reached, 0, 0.03, "best moves found above a floor, as a share"), 1, 20
+    ),
+    "promises at limits": Campaign(
+        _judged(left_limits, 0, 0.0, "scans at a limit beyond those allowed"), 60, 2000
+    ),
+    "promises at changes": Campaign(
+        _judged(bumpless, 0, 0.0, "moved further than asked [%]"), 60, 2000
+    ),
+    "promises of cascades": Campaign(
+        _judged(held_cascades, 0, 0.0, "outer output goes on into the limit [%]"), 40, 2000
     ),
     "sampled margins": Campaign(sampled_brinks, 5, 500),
     "best settings by search": Campaign(

@@ -11,6 +11,7 @@ from numpy.typing import NDArray
 from workbench import report, study
 from workbench.case.case import Case, edit_all, new_case
 from workbench.errors import InputError
+from workbench.units import Amount
 
 Array = NDArray[np.float64]
 PLANT = "1.8 exp(-6 s)/(40 s + 1)"
@@ -115,13 +116,28 @@ def test_a_quick_inner_loop_is_nearly_not_there() -> None:
     assert cascade.measures.load_iae.value < 0.2 * single.measures.load_iae.value
 
 
-def test_a_cascade_has_analogue_margins_and_says_so() -> None:
-    case = a_case(**INNER)
-    found = study.assess(case)
-    assert found.sampled is None
-    assert "as it has two scans" in said(case)
-    data = report.assess_data(case, found, study.units_of(case))
-    assert "two scans" in str(data["sampled_reason"])
+def test_a_cascade_has_margins_as_sampled_or_says_why_not() -> None:
+    found = study.assess(a_case(**INNER))
+    assert found.sampled is not None
+    assert found.sampled.margins.stable
+    # common practice: a scan costs phase
+    assert found.loop is not None
+    sampled, analogue = (
+        each.margins.phase_margin_deg.value for each in (found.sampled, found.loop)
+    )
+    assert sampled is not None
+    assert analogue is not None
+    assert sampled < analogue
+    for changes, words in (
+        ({"inner__scan": "0.3 s"}, "does not go into"),
+        ({"inner__mode": "manual"}, "is in manual"),
+        ({"inner__gain": "400"}, "not stable by itself"),
+    ):
+        case = a_case(**{**INNER, **changes})
+        found = study.assess(case)
+        assert found.sampled is None
+        data = report.assess_data(case, found, study.units_of(case))
+        assert words in str(data["sampled_reason"])
 
 
 def test_an_inner_loop_at_its_limit_holds_the_outer_output() -> None:
@@ -174,10 +190,22 @@ def test_a_model_that_runs_away_is_refused_by_its_key() -> None:
     assert refused.value.problems[0].key == "compensation.model"
 
 
-def test_an_analogue_structure_is_judged_but_not_played() -> None:
+def test_an_analogue_structure_is_judged_and_predicted_while_it_is_linear() -> None:
     case = a_case(compensation__model=PLANT)
     assert case.controller is not None
     analogue = replace(case, controller=replace(case.controller, scan=None))
-    assert study.assess(analogue).loop is not None
-    with pytest.raises(InputError, match="scan by scan"):
-        study.predict(analogue)
+    found = study.evaluate(analogue)
+    assert found.assessment.loop is not None
+    assert found.prediction is not None
+    # other route: the same controller with a scan that hardly shows
+    quick = replace(case, controller=replace(case.controller, scan=Amount(0.1, "s")))
+    instants = np.arange(1.0, 300.0)
+    one, other = (
+        np.interp(instants, each.trend.time, each.trend.pv)
+        for each in (found.prediction, study.predict(quick))
+    )
+    assert np.abs(one - other).max() < 0.05
+    narrow = edit_all(analogue, {"op.max": "25.5"})
+    found = study.evaluate(narrow)
+    assert found.prediction is None
+    assert "its output meets a limit" in found.prediction_reason

@@ -16,7 +16,7 @@ import pytest
 from workbench import study
 from workbench.case.case import Case, edit_all, new_case, show
 from workbench.case.files import read_case, save_case, write_new
-from workbench.errors import InputError, ModelError
+from workbench.errors import InputError
 from workbench.model.formula import parse_formula
 from workbench.model.plant import FirstOrder, Integrating
 from workbench.model.response import Signal
@@ -199,21 +199,31 @@ def test_small_models_are_told_with_how_far_off_they_are() -> None:
 # --- a dead time inside an inner feedback ---------------------------------------------------------
 
 
-def test_what_cannot_be_computed_says_so_and_the_rest_is_told() -> None:
+def test_a_delayed_inner_feedback_is_judged_and_predicted() -> None:
     evaluation = study.evaluate(a_case(plant=INNER, controller_scan="1 s"))
     found = evaluation.assessment
 
-    assert found.sampled is None
-    assert found.sampled_reason == "a dead time inside an inner feedback"
-    assert evaluation.prediction is None
-    assert evaluation.prediction_reason == found.sampled_reason
+    assert found.sampled is not None
+    assert found.sampled.margins.stable
     assert found.plant.poles_reason.startswith("infinitely many")
     # exact: 1.8/(1 + 0.3 x 1.8)
     assert found.plant.gain.value == pytest.approx(1.8 / 1.54, rel=1e-12)
     assert found.loop is not None
     assert found.loop.margins.stable
     assert found.loop.final_pv_after_load_step.value == 0.0
-    assert "judged as analogue and not predicted" in texts(evaluation.case)
+    assert evaluation.prediction is not None
+    # exact: integral action leaves no error
+    assert evaluation.prediction.measures.final_pv.value == pytest.approx(137.5, abs=0.05)
+
+
+def test_what_cannot_be_predicted_says_so_and_the_rest_is_told() -> None:
+    evaluation = study.evaluate(a_case(plant=INNER, op_max="50.5"))
+
+    assert evaluation.prediction is None
+    assert "its output meets a limit" in evaluation.prediction_reason
+    assert evaluation.assessment.loop is not None
+    assert evaluation.assessment.loop.margins.stable
+    assert "not predicted: controller.scan is needed" in texts(evaluation.case)
 
 
 def test_margins_with_a_delayed_inner_feedback_are_exact() -> None:
@@ -231,22 +241,23 @@ def test_margins_with_a_delayed_inner_feedback_are_exact() -> None:
     assert not loop_figures(a_case(plant=INNER, controller_gain=f"{gain * 1.001}")).margins.stable
 
 
-def test_a_prediction_and_a_response_of_it_are_refused_in_one_line() -> None:
-    case = a_case(plant=INNER)
-    with pytest.raises(InputError, match="cannot be predicted: a dead time inside an inner"):
-        study.predict(case)
-    with pytest.raises(ModelError, match="cannot be answered: a dead time inside an inner"):
-        study.respond(study.plant_of(case), Signal(), 60.0)
+def test_a_delayed_inner_feedback_answers_a_step() -> None:
+    plant = study.plant_of(a_case(plant=INNER))
+    found = study.respond(plant, Signal(), study.response_horizon(plant, Signal()))
+    # exact: 1.8/(1 + 0.3 x 1.8), nothing before the dead time of 6 s
+    assert found.final_value.value == pytest.approx(1.8 / 1.54, rel=1e-12)
+    assert found.pv[-1] == pytest.approx(1.8 / 1.54, rel=1e-3)
+    assert np.abs(found.pv[found.time < 6.0]).max() == 0.0
 
 
-def test_settings_are_proposed_and_recorded_without_a_prediction() -> None:
+def test_settings_are_proposed_and_recorded_with_a_delayed_inner_feedback() -> None:
     case = a_case(plant=INNER, controller_scan="1 s")
     rows = [row for row in study.propose(case) if row.applies]
     entry = study.record_change(case, who="mk", why="first", now=NOW).history[-1]
 
     assert any(row.method.startswith("ziegler-nichols-ultimate") for row in rows)
-    assert all(row.load_iae.value is None and row.max_sensitivity.value for row in rows)
-    assert (entry.load_iae, entry.setpoint_iae) == (None, None)
+    assert all(row.load_iae.value or "not stable" in row.load_iae.reason for row in rows)
+    assert entry.load_iae is not None
     assert entry.max_sensitivity is not None
 
 
@@ -644,7 +655,7 @@ def test_the_best_settings_keep_the_limit_and_no_rule_within_it_is_quicker(
     goal: Literal["load", "setpoint"],
 ) -> None:
     """Exact: a rule's settings are among those that the search looks at."""
-    wish = study.Wish(goal=goal, max_sensitivity=1.6)
+    wish = study.Wish(setpoint_share=100.0 if goal == "setpoint" else 0.0, max_sensitivity=1.6)
 
     rows = {row.method: row for row in study.propose(a_case(), wish)}
 

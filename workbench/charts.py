@@ -18,11 +18,11 @@ from typing import TYPE_CHECKING, Any, Final
 import numpy as np
 from numpy.typing import NDArray
 
-from workbench.units import TIME_UNITS, harmless
+from workbench.units import TIME_UNITS, harmless, text
 
 if TYPE_CHECKING:
     from workbench.case.case import Case
-    from workbench.study import Trend
+    from workbench.study import Tolerance, Trend
 
 Floats = NDArray[np.float64]
 
@@ -90,18 +90,21 @@ def draw(
     height: int,
     *,
     x_limits: tuple[float, float] | None = None,
+    x_name: str = "",
     ascii_only: bool = False,
 ) -> Picture:
-    """Draw panes above each other over one time axis.
+    """Draw panes above each other over one axis, of time unless it is named.
 
     Parameters
     ----------
     panes
-        From top to bottom; the x of every curve is a time [s].
+        From top to bottom; the x of every curve is a time [s], or what `x_name` says.
     width, height
         Size of the picture in characters.
     x_limits
-        Ends of the time axis [s]; left out, those of the curves.
+        Ends of the x axis; left out, those of the curves.
+    x_name
+        What the x axis is; left out, a time.
     ascii_only
         Use no character above 0x7e.
 
@@ -114,7 +117,7 @@ def draw(
     if width < SMALLEST[0] or height < SMALLEST[1] or not panes:
         sheet.text(0, 0, "too small to draw" if panes else "nothing to draw")
         return sheet.picture()
-    x_axis = _time_axis(panes, x_limits)
+    x_axis = _x_axis(panes, x_limits, x_name)
     heights = _heights(panes, height - 2)
     axes = [_y_axis(pane, rows - 1) for pane, rows in zip(panes, heights, strict=True)]
     gutter = min(9, max(axis.label_width for axis in axes))
@@ -129,6 +132,109 @@ def draw(
         top += rows
     sheet.x_axis(top, gutter, x_axis)
     return sheet.picture()
+
+
+@dataclass(frozen=True)
+class Field:
+    """A map: for each pair of ratios one of a few kinds of cell."""
+
+    kinds: NDArray[np.uint8]
+    """Index into GROUNDS for each cell, (rows, columns); the first row is drawn at the bottom."""
+    x: Floats
+    """Ratio of each column, (columns,), rising."""
+    y: Floats
+    """Ratio of each row, (rows,), rising."""
+    here: tuple[int, int]
+    """Row and column of the present point."""
+    x_label: str
+    y_label: str
+    names: tuple[str, ...]
+    """What each kind of cell means, for the legend."""
+
+
+_RATIO_GUTTER: Final = 5
+"""Columns of the labels of a map's rows."""
+
+
+def map_cells(width: int, height: int) -> tuple[int, int]:
+    """Columns and rows of the map that just fills a picture; odd, so that 1 has a cell."""
+    columns, rows = max(5, width - _RATIO_GUTTER - 1), max(5, height - 3)
+    return columns - 1 + columns % 2, rows - 1 + rows % 2
+
+
+def map_size(columns: int, rows: int) -> tuple[int, int]:
+    """Width and height of the picture of so many cells."""
+    return columns + _RATIO_GUTTER + 1, rows + 3
+
+
+def tolerance_field(found: Tolerance) -> Field:
+    """The map of plant errors as it is drawn."""
+    above = found.max_sensitivity > found.limit
+    return Field(
+        above.astype(np.uint8) + (~found.stable).astype(np.uint8),
+        found.gain_ratios,
+        found.other_ratios,
+        found.here,
+        "plant gain x",
+        f"{found.axis} x",
+        (f"Ms up to {text(found.limit, digits=3)}", "above", "unstable"),
+    )
+
+
+def draw_map(field: Field, width: int, height: int, *, ascii_only: bool = False) -> Picture:
+    """Draw a map with its axes and its legend.
+
+    Parameters
+    ----------
+    field
+        With as many cells as `map_cells` says, or fewer; what has no room is left out.
+    width, height
+        Size of the picture in characters.
+    ascii_only
+        Use no character above 0x7e.
+    """
+    sheet = _Sheet(width, height, ascii_only)
+    rows, columns = field.kinds.shape
+    gutter, bottom = _RATIO_GUTTER, rows
+    # Above the field one line: what the rows are, and what the characters mean.
+    sheet.text(0, 0, field.y_label)
+    column = max(gutter + 1, len(field.y_label) + 2)
+    for ground, name in zip((*GROUNDS, HERE), (*field.names, "now"), strict=True):
+        sheet.text(0, column, ground.ascii if ascii_only else ground.unicode, ground.style)
+        sheet.text(0, column + 2, name)
+        column += len(name) + 4
+    for row in range(rows):
+        sheet.text(1 + row, gutter, sheet.lines.side, "frame")
+        for kind, ground in enumerate(GROUNDS):
+            character = ground.ascii if ascii_only else ground.unicode
+            for at in np.flatnonzero(field.kinds[rows - 1 - row] == kind).tolist():
+                sheet.text(1 + row, gutter + 1 + at, character, ground.style)
+    here_row, here_column = field.here
+    mark = HERE.ascii if ascii_only else HERE.unicode
+    sheet.text(rows - here_row, gutter + 1 + here_column, mark, HERE.style)
+    for at, label in _ratio_ticks(field.y, 2):
+        sheet.text(rows - at, gutter - len(label), label)
+        sheet.text(rows - at, gutter, sheet.lines.side_tick, "frame")
+    sheet.text(1 + bottom, gutter, sheet.lines.corner + sheet.lines.base * columns, "frame")
+    for at, label in _ratio_ticks(field.x, 6):
+        sheet.text(1 + bottom, gutter + 1 + at, sheet.lines.base_tick, "frame")
+        start = gutter + 1 + at - (len(label) - 1) // 2
+        if start + len(label) < gutter + 1 + columns - len(field.x_label):
+            sheet.text(2 + bottom, start, label)
+    sheet.text(2 + bottom, max(0, gutter + 1 + columns - len(field.x_label)), field.x_label)
+    return sheet.picture()
+
+
+def _ratio_ticks(ratios: Floats, apart: int) -> list[tuple[int, str]]:
+    """Round ratios with their cells, 1 first, each at least so many cells from the others."""
+    found: list[tuple[int, str]] = []
+    for ratio in (1.0, 2.0, 0.5, 5.0, 0.2, 1.5, 0.7, 3.0, 0.3, 10.0, 0.1, 4.0, 0.25, 1.2, 0.8):
+        if not ratios[0] * 0.99 <= ratio <= ratios[-1] * 1.01:
+            continue
+        at = int(np.abs(np.log(ratios / ratio)).argmin())
+        if all(abs(at - other) >= apart for other, _ in found):
+            found.append((at, f"{ratio:g}"))
+    return found
 
 
 def trend_panes(
@@ -161,7 +267,7 @@ class Axis:
     ticks: tuple[float, ...] = ()
     labels: tuple[str, ...] = ()
     unit: str = ""
-    """Unit of the labels of a time axis."""
+    """Unit of the labels of a time axis, or what an x axis is."""
 
     @property
     def label_width(self) -> int:
@@ -175,7 +281,7 @@ class Axis:
 
     def with_ticks(self, most: int) -> Axis:
         """The axis with round ticks; a time axis in the unit that reads best."""
-        scale = TIME_UNITS[self.unit]
+        scale = TIME_UNITS.get(self.unit, 1.0)
         values, labels = round_ticks(self.low / scale, self.high / scale, most)
         ticks = tuple(value * scale for value in values)
         return Axis(self.low, self.high, ticks, labels, self.unit)
@@ -228,14 +334,14 @@ def _span(arrays: Sequence[Floats]) -> tuple[float, float] | None:
     return float(min(v.min() for v in kept)), float(max(v.max() for v in kept))
 
 
-def _time_axis(panes: Sequence[Pane], limits: tuple[float, float] | None) -> Axis:
+def _x_axis(panes: Sequence[Pane], limits: tuple[float, float] | None, name: str) -> Axis:
     span = limits or _span([curve.x for pane in panes for curve in pane.curves]) or (0.0, 1.0)
     low, high = (min(max(end, -1e12), 1e12) for end in span)
     if high - low < 1e-9 * max(1.0, abs(low), abs(high)):
         high = low + max(1.0, abs(low) * 1e-6)
     length = high - low
     unit = "s" if length < 600 else "min" if length < 4 * 3600 else "h"
-    return Axis(low, high, unit=unit)
+    return Axis(low, high, unit=name or unit)
 
 
 def _y_axis(pane: Pane, rows: int) -> Axis:
@@ -448,8 +554,32 @@ INKS: Final = {
     "output": Ink("braille", "*"),
     "record": Ink("·", ".", joined=False),
     "fit": Ink("braille", "*"),
+    "best-pi": Ink("braille", "*"),
+    "best-pid": Ink("+", "+"),
+    "rule": Ink("o", "o", joined=False),
+    "present": Ink("P", "P", joined=False),
+    "chosen-point": Ink("X", "X", joined=False),
 }
 """Kinds of curve; no two that meet in a pane look alike without colour."""
 
-STYLES: Final = ("frame", "label", *INKS)
+
+@dataclass(frozen=True)
+class Ground:
+    """How a kind of cell of a map is drawn."""
+
+    unicode: str
+    ascii: str
+    style: str
+
+
+GROUNDS: Final = (
+    Ground("·", ".", "good"),
+    Ground("+", "+", "caution"),
+    Ground("▒", "#", "worse"),
+)
+"""Kinds of cell, from fair to foul; they differ without colour."""
+HERE: Final = Ground("O", "O", "chosen")
+"""The present point of a map."""
+
+STYLES: Final = ("frame", "label", *INKS, *(ground.style for ground in (*GROUNDS, HERE)))
 """What a picture's style numbers mean."""

@@ -35,6 +35,8 @@ class Numbers:
     upset_at: int
     setpoint: float = 1.0
     upset: float = 1.0
+    upset_lasts: int | None = None
+    """None: to the end."""
     low: float = -math.inf
     high: float = math.inf
     weights: tuple[float, float] = (1.0, 0.0)
@@ -43,7 +45,9 @@ class Numbers:
     def outside(self) -> tuple[list[float], list[float]]:
         """Setpoint and upset at every scan."""
         later = self.scans - self.upset_at
-        return [self.setpoint] * self.scans, [0.0] * self.upset_at + [self.upset] * later
+        lasts = later if self.upset_lasts is None else self.upset_lasts
+        upset = [0.0] * self.upset_at + [self.upset] * lasts + [0.0] * (later - lasts)
+        return [self.setpoint] * self.scans, upset
 
     def modes(self) -> tuple[int, tuple[float, float, float], tuple[float, float, float]]:
         """Whole scans of dead time, and for each lag what it keeps and what it takes of the output

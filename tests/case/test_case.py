@@ -128,7 +128,7 @@ def test_an_edit_changes_its_own_key_only(case: Case, data: st.DataObject) -> No
     assert {changed for changed, _, _ in differences(case, edited)} <= {key, *others}
 
 
-GAINS = "plant.gain, controller.gain, feedforward.gain or inner.gain"
+GAINS = "plant.gain, family.gain, controller.gain, feedforward.gain or inner.gain"
 
 
 @pytest.mark.parametrize(
@@ -142,7 +142,7 @@ GAINS = "plant.gain, controller.gain, feedforward.gain or inner.gain"
         ("gain", "1", f"gain: is not a known key; did you mean {GAINS}?"),
         ("pv.colour", "1", "pv.colour: is not a known key; use unit, low, high, start, filter"),
         ("pv.gain", "1", f"is not a known key; did you mean {GAINS}?"),
-        ("x", "1", "x: is not a known key; the tables are loop, pv, op, plant, controller"),
+        ("x", "1", "x: is not a known key; the tables are loop, pv, op, plant, family, controller"),
         ("format", "2", "format: cannot be set; the program writes it"),
         ("history", "2", "history: cannot be set; entries are only added, by a save with a reason"),
         (

@@ -86,7 +86,7 @@ def test_the_formulas_are_in_their_own_unit_of_time() -> None:
         ({"feedforward__lag": "3 s"}, "feedforward.lag", "give gain too"),
         ({"feedforward__gain": "1", "feedforward__lead": "3 s"}, "feedforward.lead", "give a lag"),
         ({"inner__mode": "manual"}, "inner.mode", "give plant too"),
-        ({"inner__plant": "1/(2 s + 1)"}, "inner.gain", "is missing"),
+        ({"inner__plant": "1/(2 s + 1)", "inner__gain": "0"}, "inner.gain", "positive gain"),
         ({"inner__plant": "1/(2 s", "inner__gain": "1"}, "inner.plant", "bracket"),
         (
             {"inner__plant": "1/(2 s + 1)", "inner__gain": "1", "inner__integral": "2 1/s"},
@@ -96,12 +96,12 @@ def test_the_formulas_are_in_their_own_unit_of_time() -> None:
         (
             {"inner__plant": "1/(2 s + 1)", "inner__gain": "1", "inner__max": "40"},
             "inner.start",
-            "outside min to max",
+            "outside the limits",
         ),
         (
             {"inner__plant": "1/(2 s + 1)", "inner__gain": "1", "inner__min": "-5"},
             "inner.min",
-            "give one inside",
+            "give a value inside",
         ),
         (
             {"inner__plant": "1", "inner__gain": "1", "inner__min": "60", "inner__max": "55"},

@@ -288,6 +288,8 @@ BAD = [
     ("propose oven.toml --for both", "--for: ", "load or setpoint"),
     ("propose oven.toml --closed-loop-time 30", "--closed-loop-time: ", "has no unit"),
     ("propose oven.toml --relay 5:1", "--relay: ", "5:1.2:36 s"),
+    ("propose oven.toml --max-noise-gain 0", "--max-noise-gain: ", "above 0"),
+    ("propose oven.toml --for load --setpoint-share 3", "--setpoint-share: ", "keep one"),
     ("propose oven.toml --largest-upset 0", "--largest-upset: ", "above 0"),
     ("propose oven.toml --allowed-deviation -1", "--allowed-deviation: ", "above 0"),
     ("propose oven.toml --max-sensitivity 0.5", "--max-sensitivity: ", "above 1"),
@@ -539,18 +541,58 @@ def test_a_plant_or_a_response_that_cannot_be_is_one_line(
     assert what in line
 
 
-def test_a_delayed_inner_feedback_is_judged_as_far_as_it_can_be(run: Run) -> None:
+def test_a_delayed_inner_feedback_is_judged_and_predicted(run: Run) -> None:
     line = "valve: 1/(2 s + 1); process: exp(-6 s)/(40 s + 1); slave around valve to process: 0.3"
     words = ("--plant", line, "--gain", "1", "--integral", "40 s", "--scan", "1 s")
     data = answer(run("assess", *words, "--json"))
-    assert data["sampled"] is None
-    assert data["sampled_reason"] == "a dead time inside an inner feedback"
+    assert data["sampled"]["stable"]
     assert data["plant"]["poles"] is None
     assert data["loop"]["stable"]
     assert "Loop, sampled" in run("assess", *words).out
-    line = run.refused("predict", *words)
-    assert line.startswith("--plant: cannot be predicted: a dead time inside an inner")
+    assert run("predict", *words).status == 0
     assert run("propose", *words, "--json").status == 0
+
+
+def test_assess_maps_what_plant_error_the_loop_survives(run: Run) -> None:
+    words = ("--plant", "1.8 exp(-6 s)/(40 s + 1)", "--gain", "1.1", "--integral", "32 s")
+    data = answer(run("assess", *words, "--tolerance", "dead-time", "--json"))
+    found, margins = data["tolerance"], data["loop"]
+    # exact: the gain margin, and 1 + delay margin/dead time
+    grows = found["gain_grows"]["until_unstable"]
+    assert grows == pytest.approx(margins["gain_margin"], rel=1e-4)
+    late = found["dead_time_grows"]["until_unstable"]
+    assert late == pytest.approx(1.0 + margins["delay_margin_s"] / 6.0, rel=1e-4)
+    rows, columns = len(found["dead_time_ratios"]), len(found["gain_ratios"])
+    assert [len(row) for row in found["max_sensitivity"]] == [columns] * rows
+    for stable, peaks in zip(found["stable"], found["max_sensitivity"], strict=True):
+        assert [peak is not None for peak in peaks] == stable
+    assert found["max_sensitivity_limit"] == 2.0
+    assert data["family"] is None
+    text = run("assess", *words, "--tolerance", "lag", "--max-sensitivity", "1.6").out
+    assert "plant gain across, lag upwards" in text
+    assert "Ms 1.6 at" in text
+    assert "add it" in run.refused("assess", *words, "--max-sensitivity", "1.6")
+    assert "--gain" in run.refused("assess", *words[:2], "--tolerance", "lag")
+    instant = run.refused(
+        "assess", "--plant", "2/(9 s+1)", "--gain", "2", "--tolerance", "dead-time"
+    )
+    assert "--tolerance: the plant has no dead time" in instant
+
+
+def test_every_figure_is_given_over_the_family(run: Run) -> None:
+    words = ("--set", "family.gain=30", "--set", "family.drawn=7")
+    case = str(Path(__file__).parents[2] / "cases" / "TIC-307.toml")
+    margins = answer(run("assess", case, *words, "--json"))["family"]
+    # exact: 1 nominal, 2 corners, 7 drawn
+    assert (margins["plants"], margins["stable_percent"]) == (10, 100.0)
+    nominal, worst = margins["gain_margin"], margins["gain_margin_worst"]
+    assert worst == pytest.approx(nominal / 1.3, rel=1e-6)
+    predicted = answer(run("predict", case, *words, "--json"))["family"]
+    assert predicted["load_iae_95"] <= predicted["load_iae_worst"]
+    assert predicted["max_sensitivity_worst"] == margins["max_sensitivity_worst"]
+    proposed = answer(run("propose", case, *words, "--method", "simc-pi", "--json"))
+    assert proposed["proposals"][0]["family_stable_percent"] == 100.0
+    assert "Over the family of plants" in run("propose", case, *words, "--method", "simc-pi").out
 
 
 def test_assess_tells_gains_both_ways_valve_distance_and_small_models(run: Run) -> None:
@@ -796,6 +838,26 @@ def test_propose_takes_a_relay_test_and_the_needs_of_a_level(run: Run) -> None:
     # exact: 20/10
     assert row["gain"] == pytest.approx(2.0, rel=1e-12)
     assert run("propose", *level).status == 1
+
+
+def test_propose_keeps_limits_and_shows_what_caution_costs(run: Run) -> None:
+    words = ("--method", "best-pi", "--max-noise-gain", "4", "--setpoint-share", "30")
+    data = answer(run("propose", *P, *words, "--trade-off", "--json"))
+    row = data["proposals"][-1]
+    assert row["within_limit"]
+    assert row["noise_gain"] <= 4.0 * 1.001
+    assert "30 % setpoint IAE and 70 % load IAE" in row["objective"]
+    assert data["units"]["noise_gain"] == "%/%"
+    pi, pid = data["trade_off"]
+    assert (pi["method"], pid["method"]) == ("best-pi", "best-pid")
+    limits = [point["max_sensitivity_limit"] for point in pi["points"]]
+    assert limits == sorted(limits)
+    assert len(limits) >= 10
+    for point in pi["points"]:
+        assert point["max_sensitivity"] <= 1.001 * point["max_sensitivity_limit"]
+        assert point["noise_gain"] <= 4.0 * 1.001
+    said = run("propose", *P, *words, "--trade-off").out
+    assert "Trade-off between speed and caution" in said
 
 
 def test_propose_needs_no_controller(run: Run) -> None:

@@ -161,38 +161,6 @@ def test_a_time_must_have_its_unit_and_be_above_zero(word: str) -> None:
         read("propose", "--closed-loop-time", word).seconds("--closed-loop-time")
 
 
-@pytest.mark.parametrize(
-    "word",
-    [
-        "5",
-        "5:1",
-        "5:1:2:3:4",
-        "0:1:9 s",
-        "5:0:9 s",
-        "5:x:9 s",
-        "5:1:9 s:1",
-        "5:1:9 s:-1",
-        "inf:1:9 s",
-    ],
-)
-def test_a_relay_test_must_be_a_swing(word: str) -> None:
-    with pytest.raises(
-        InputError, match='--relay: .* is no relay test; write it like "5:1.2:36 s"'
-    ):
-        read("propose", "--relay", word).swing("--relay")
-
-
-def test_the_period_of_a_relay_test_is_a_time() -> None:
-    with pytest.raises(InputError, match="--relay: "):
-        read("propose", "--relay", "5:1.2:36").swing("--relay")
-
-
-def test_a_relay_test_is_read_in_the_order_of_its_option() -> None:
-    assert read("propose").swing("--relay") is None
-    assert read("propose", "--relay", "5:1.2:0.6 min").swing("--relay") == (5.0, 1.2, 36.0, 0.0)
-    assert read("propose", "--relay", "5:1.2:36 s:0.3").swing("--relay") == (5.0, 1.2, 36.0, 0.3)
-
-
 def test_a_time_is_read_in_its_unit() -> None:
     # Exact: 1.5 min is 90 s.
     assert read("propose", "--closed-loop-time", "1.5 min").seconds("--closed-loop-time") == 90.0

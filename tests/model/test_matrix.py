@@ -107,6 +107,22 @@ def test_hold_of_a_lag_and_of_an_integrator() -> None:
     assert (phi[0, 0], gamma[0]) == (1.0, pytest.approx(6.0, rel=1e-15))
 
 
+@pytest.mark.parametrize("interval", [0.0, 1e-3, 1.0])
+@pytest.mark.parametrize("first", [-20.0, -2.0, -0.1, 0.0, 0.05])
+@pytest.mark.parametrize("second", [-21.0, -0.1 - 1e-9, -0.1, -1e-4, 0.0, 0.3])
+def test_hold_of_two_lags_agrees_with_forty_digits(
+    first: float, second: float, interval: float
+) -> None:
+    # other route: columns of the exponential of [A B; 0 0] in mpmath
+    a, b = np.array([[first, 0.0], [0.7, second]]), np.array([0.4, 0.9])
+    stacked = np.zeros((3, 3))
+    stacked[:2, :2], stacked[:2, 2] = a * interval, b * interval
+    exact = _exact(stacked)
+    phi, gamma = hold(a, b, interval)
+    assert phi == pytest.approx(exact[:2, :2], rel=2e-14, abs=1e-300)
+    assert gamma == pytest.approx(exact[:2, 2], rel=2e-14, abs=1e-300)
+
+
 def test_hold_of_no_state_at_all() -> None:
     phi, gamma = hold(np.zeros((0, 0)), np.zeros(0), 1.0)
     assert phi.shape == (0, 0)

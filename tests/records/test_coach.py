@@ -85,7 +85,7 @@ def test_a_sound_test_is_not_called_spoilt() -> None:
 def test_an_upset_spoils_the_test() -> None:
     record = at(300)
     pv = record.pv + np.where((record.time > 200) & (record.time < 240), 3.0, 0.0)
-    found = advice(replace(record, pv=pv))
+    found = advise(fit(replace(record, pv=pv)))
     assert not found.reached
     assert any("something other than OP moved it" in words for words in found.spoilt)
     assert found.say.startswith("Repeat the test. PV is")

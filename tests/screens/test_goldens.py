@@ -17,15 +17,21 @@ SMALL: Steps = (
     ("what-if-80x24", ("down", "greater_than_sign")),
     ("edit-80x24", ("enter",)),
     ("scenario-80x24", ("escape", "6")),
+    ("structure-80x24", ("9",)),
     ("leave-80x24", ("q",)),
     ("help-80x24", ("escape", "2", "question_mark")),
     ("records-80x24", ("escape", "r")),
+    ("tolerance-80x24", ("escape", "t")),
 )
 PLAIN: Steps = (
     ("what-if-80x24-ascii", ("down", "greater_than_sign")),
     ("history-80x24-ascii", ("5", "z")),
+    ("tolerance-80x24-ascii", ("z", "t", "m")),
 )
-LARGE: Steps = (("loop-160x50", ("down", "greater_than_sign")),)
+LARGE: Steps = (
+    ("loop-160x50", ("down", "greater_than_sign")),
+    ("tolerance-160x50", ("t", "a")),
+)
 
 
 @pytest.mark.parametrize(

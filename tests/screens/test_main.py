@@ -258,11 +258,13 @@ def test_a_vessel_is_chosen_and_told_by_its_slope(work: Work) -> None:
 
 def test_what_cannot_be_predicted_says_why_on_the_screen(work: Work) -> None:
     work.edit("plant.blocks", "dryer: 1.5 exp(-4 s)/(30 s + 1); slave around dryer: 0.2")
+    work.edit("controller.scan", "")
+    work.edit("op.rate", "0.5 /s")
 
     async def story() -> None:
         async with running(work, (160, 50)) as pilot:
             shown = text_of(pilot)
-            assert "no prediction: a dead time inside an inner feedback" in shown
+            assert "no prediction: controller.scan is needed" in shown
             assert "stable (analogue loop)" in shown
 
     run(story())
@@ -289,7 +291,40 @@ def test_every_panel_is_reached_by_its_key_and_alone_by_zoom(
     run(story())
 
 
-def test_everything_is_in_view_at_160x50(work: Work) -> None:
+def test_a_cascade_is_made_and_unmade_in_place(work: Work) -> None:
+    async def story() -> None:
+        async with running(work) as pilot:
+            page = page_of(pilot, MainPage)
+            await press(pilot, "9", "down", "down", "enter")
+            assert "inner plant:" in text_of(pilot)
+            await type_in(pilot, "0.9/(4 s + 1)")
+            await press(pilot, "enter")
+            assert work.case.inner.is_there
+            assert "inner mode" in text_of(pilot)
+            assert work.evaluation is not None
+            assert work.evaluation.prediction is not None
+            assert work.evaluation.prediction.inner is not None
+            page.panels["9"].cursor = 2
+            await press(pilot, "enter", "ctrl+u", "enter")
+            assert not work.show("inner.plant")
+            assert "inner mode" not in text_of(pilot)
+
+    run(story())
+
+
+def test_a_sticking_valve_is_set_in_place(work: Work) -> None:
+    async def story() -> None:
+        async with running(work) as pilot:
+            await press(pilot, "8", *["down"] * 6, "enter")
+            await type_in(pilot, "3")
+            await press(pilot, "enter")
+            assert work.case.valve.stick_slip == 3
+            assert "*3 %" in text_of(pilot)
+
+    run(story())
+
+
+def test_every_panel_is_in_view_or_named_at_160x50(work: Work) -> None:
     async def story() -> None:
         async with running(work, (160, 50)) as pilot:
             shown = text_of(pilot)

@@ -7,7 +7,9 @@ import json
 import os
 import subprocess
 import sys
+import time
 from collections.abc import Callable, Sequence
+from dataclasses import replace
 from pathlib import Path
 
 import pytest
@@ -24,7 +26,7 @@ from tests.screens.conftest import (
     type_in,
 )
 from workbench import study
-from workbench.case.case import show
+from workbench.case.case import Case, show
 from workbench.case.files import read_case
 from workbench.errors import problem
 from workbench.screens import drafts
@@ -35,6 +37,7 @@ from workbench.screens.proposals import ProposalsPage
 from workbench.screens.record import RecordFitted, RecordPage
 from workbench.screens.saving import ConflictPage, DraftPage, LeavePage, SavePage
 from workbench.screens.start import StartPage
+from workbench.screens.tolerance import TolerancePage
 from workbench.screens.work import Work
 
 # --- the whole path ------------------------------------------------------------------------------
@@ -307,6 +310,85 @@ def test_a_page_may_be_closed_before_it_is_put_together(work: Work) -> None:
     run(story())
 
 
+# --- tolerance -----------------------------------------------------------------------------------
+
+
+def test_the_tolerance_page_shows_the_map_of_the_present_settings(work: Work) -> None:
+    async def story() -> None:
+        async with running(work) as pilot:
+            await press(pilot, "t")
+            page = page_of(pilot, TolerancePage)
+            first = page.map.found
+            assert first is not None
+            assert (first.axis, first.limit) == ("dead time", study.TOLERANCE_LIMIT)
+            # other route: the same question asked of study
+            columns, rows = page.map.cells()
+            same = study.tolerance(work.case, columns=columns, rows=rows)
+            assert (first.max_sensitivity == same.max_sensitivity).all()
+            shown = text_of(pilot)
+            for words in ("plant gain x", "dead time x", "unstable", "gain grows", "both grow"):
+                assert words in shown
+            assert max(len(line) for line in shown.split("\n")) <= 80
+
+            await press(pilot, "a", "m")
+            second = page.map.found
+            assert second is not None
+            assert (second.axis, second.limit) == ("lag", 2.5)
+            assert "lag x" in text_of(pilot)
+
+            await press(pilot, "question_mark")
+            assert "the next limit on Ms" in text_of(pilot)
+            await press(pilot, "escape", "escape")
+            page_of(pilot, MainPage)
+
+    run(story())
+
+
+def test_a_larger_screen_has_a_finer_map(work: Work) -> None:
+    async def story() -> None:
+        async with running(work) as pilot:
+            await press(pilot, "t")
+            page = page_of(pilot, TolerancePage)
+            small = page.map.found
+            await pilot.resize_terminal(160, 50)
+            await settle(pilot)
+            large = page.map.found
+            assert small is not None
+            assert large is not None
+            assert large.stable.size > 3 * small.stable.size
+
+    run(story())
+
+
+def test_without_a_controller_there_is_no_map(work: Work) -> None:
+    work.change(replace(work.case, controller=None))
+
+    async def story() -> None:
+        async with running(work) as pilot:
+            await press(pilot, "t")
+            page_of(pilot, MainPage)
+            assert "the map needs a controller" in text_of(pilot)
+
+    run(story())
+
+
+def test_a_family_stands_among_the_figures(work: Work) -> None:
+    work.edit("family.gain", "30")
+    work.edit("family.drawn", "10")
+
+    async def story() -> None:
+        async with running(work) as pilot:
+            await press(pilot, "4")
+            # exact: 1 nominal, 2 corners, 10 drawn
+            assert "family of 13: 100 % stable, worst Ms" in text_of(pilot)
+            await press(pilot, "z", "end")
+            assert "nominal   95 %      worst" in text_of(pilot)
+            await press(pilot, "z", "o")
+            assert "of the family, worst Ms" in text_of(pilot)
+
+    run(story())
+
+
 # --- proposals -----------------------------------------------------------------------------------
 
 
@@ -349,6 +431,69 @@ def test_the_list_of_rules_scrolls_with_what_is_told_of_each(work: Work) -> None
                 assert proposal.source.split()[-1] in " ".join(lines[14:])
             await press(pilot, "end")
             assert "does not apply" in text_of(pilot)
+
+    run(story())
+
+
+def test_what_is_wished_for_is_edited_and_everything_is_worked_out_anew(work: Work) -> None:
+    async def story() -> None:
+        async with running(work) as pilot:
+            await press(pilot, "o")
+            page = page_of(pilot, ProposalsPage)
+            before = page.table.rows
+            await press(pilot, "w", "down", "enter", *"0.9", "enter")
+            assert "0.9 is outside what is accepted; give a number above 1" in text_of(pilot)
+            await press(pilot, "ctrl+u", *"1.4", "enter")
+            shown = text_of(pilot)
+            assert "Ms at most              1.4" in shown
+            assert "largest upset" in shown
+            assert work.wish.max_sensitivity == 1.4
+            best = {row.method: row for row in page.table.rows}["best-pi"]
+            assert best.max_sensitivity.value == pytest.approx(1.4, rel=2e-3)
+            was = {row.method: row for row in before}["best-pi"]
+            assert best.load_iae.value != was.load_iae.value
+            # Esc leads to the list, then to the loop; the wish is kept.
+            await press(pilot, "escape", "escape", "o")
+            assert page_of(pilot, ProposalsPage).work.wish.max_sensitivity == 1.4
+
+    run(story())
+
+
+def test_the_trade_off_is_drawn_over_the_list(work: Work) -> None:
+    async def story() -> None:
+        async with running(work) as pilot:
+            await press(pilot, "o", "t")
+            shown = text_of(pilot)
+            for words in ("best PI", "best PID", "rules", "present", "Ms", "load IAE degC s"):
+                assert words in shown
+            lines = shown.split("\n")
+            assert max(len(line) for line in lines) <= 80
+            assert sum("X" in line for line in lines[1:11]) >= 1
+            assert "noise gain" in shown
+            await press(pilot, "t")
+            assert "best PI " not in text_of(pilot)
+
+    run(story())
+
+
+def test_leaving_the_page_ends_its_search(work: Work, monkeypatch: pytest.MonkeyPatch) -> None:
+    stopped: list[bool] = []
+
+    def propose(case: Case, wish: study.Wish, should_stop: Callable[[], bool]) -> tuple[()]:
+        while not should_stop():
+            time.sleep(0.01)
+        stopped.append(True)
+        return ()
+
+    async def story() -> None:
+        async with running(work) as pilot:
+            monkeypatch.setattr(study, "propose", propose)
+            await pilot.press("o")
+            await pilot.pause()
+            await pilot.press("escape")
+            while not stopped:
+                await pilot.pause(0.01)
+            page_of(pilot, MainPage)
 
     run(story())
 

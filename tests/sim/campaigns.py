@@ -319,7 +319,11 @@ def leapt_loops(size: int, seed: int) -> tuple[float, list[str]]:
         large = np.flatnonzero(np.abs(stepped.pv) + np.abs(stepped.outputs) > 1e3)
         end = int(large[0]) if len(large) else len(stepped.pv)
         apart = 0.0
-        for one, other in ((leapt.pv, stepped.pv), (leapt.outputs, stepped.outputs)):
+        for one, other in (
+            (leapt.pv, stepped.pv),
+            (leapt.outputs, stepped.outputs),
+            (leapt.states, stepped.states),
+        ):
             size_of = max(1.0, float(np.abs(other[:end]).max(initial=0.0)))
             if len(one) < end:
                 failures.append(f"the leap ends at {len(one)}, before {end}: {loop} {events}")

@@ -67,17 +67,17 @@ def cascades_at_limits(size: int, seed: int) -> tuple[float, list[str]]:
         events = Events(
             draw.uniform(-5.0, 5.0), 4.0, draw.uniform(-5.0, 5.0), draw.uniform(20.0, 40.0), 90.0
         )
-        further, reached = _further(loop, events)
+        beyond, reached = further(loop, events)
         held += reached
-        worst = max(worst, further)
-        if further > 0.0:
-            failures.append(f"goes on by {further:g} %: {loop} {events}")
+        worst = max(worst, beyond)
+        if beyond > 0.0:
+            failures.append(f"goes on by {beyond:g} %: {loop} {events}")
     if 3 * held < size:
         failures.append(f"only {held} of {size} met a limit")
     return worst, failures
 
 
-def _further(loop: Structure, events: Events) -> tuple[float, bool]:
+def further(loop: Structure, events: Events) -> tuple[float, bool]:
     """The largest move into a limit that the inner output stood at, and whether it ever did."""
     inside = simulate(loop, events).inner
     assert inside is not None

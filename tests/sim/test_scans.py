@@ -209,6 +209,25 @@ def test_leaping_and_stepping_agree(name: str) -> None:
     )
     assert leapt.pv == pytest.approx(stepped.pv, abs=1e-10)
     assert leapt.outputs == pytest.approx(stepped.outputs, abs=1e-9)
+    assert leapt.states == pytest.approx(stepped.states, abs=1e-9)
+
+
+def test_an_upset_is_the_same_scan_by_scan_and_at_once() -> None:
+    # exact: a step of 2 on a lag adds 2 (1 - exp(-h/T)) to PV in every scan from its own on, and
+    # less in that one, of which only 0.7 is left
+    plant = TransferFunction.ratio((1.0,), [(10.0, 1.0)])
+    held = Held(process(Loop(plant, plant, Gains(1.0))), Clock(1.0, 0.0))
+    upset = held.upset((Step(2.0, 3.3), Step(-2.0, 7.0)), 12, 1.0)
+    pushes, direct = upset.over(0, 12)
+    whole, part = -2.0 * math.expm1(-0.1), -2.0 * math.expm1(-0.07)
+    expected = [0.0] * 3 + [part] + [whole] * 3 + [0.0] * 5
+    assert pushes @ held.process.c == pytest.approx(expected, abs=1e-15)
+    assert not direct.any()
+    one_by_one = [*upset.scans(2, 9)]
+    assert [pushed for pushed, _ in one_by_one] == pushes[2:9].tolist()
+    spliced = upset.until(4, held.upset((Step(1.0, 0.0),), 12, 1.0))
+    assert spliced.over(0, 4)[0].tolist() == pushes[:4].tolist()
+    assert np.ptp(spliced.over(4, 12)[0]) == 0.0
 
 
 def test_setpoint_is_seen_at_the_next_scan_and_upset_at_its_instant() -> None:

@@ -350,7 +350,7 @@ def test_feedforward_keeps_to_the_limits_and_winds_nothing_up() -> None:
 @pytest.mark.parametrize(
     ("scan", "inner_scan", "key", "words"),
     [
-        (None, 0.5, "controller.scan", "scan by scan"),
+        (None, 0.5, "controller.scan", "the inner controller has one"),
         (1.0, None, "inner.scan", "is needed"),
         (1.0, 0.3, "inner.scan", "does not go into"),
         (1.0, 2.0, "inner.scan", "does not go into"),
@@ -366,20 +366,55 @@ def test_scans_that_do_not_go_together_are_refused(
     assert refused.value.problems[0].key == key
 
 
-@pytest.mark.parametrize(
-    ("asked", "key"),
-    [
-        ({"manual_at": 5.0}, "scenario.manual_at"),
-        ({"settings_at": 5.0, "settings": PI}, "scenario.settings_at"),
-        ({"change_at": 5.0}, "scenario.change_at"),
-    ],
-)
-def test_what_is_not_played_with_a_structure_is_refused(asked: dict[str, Any], key: str) -> None:
+def test_what_is_not_played_with_an_inner_loop_is_refused() -> None:
     inner = Loop(Lag(1.0, (2.0,)).function(), NOTHING, PI, scan=0.5)
     loop = Structure(SLOW.function(), NOTHING, PI, scan=1.0, inner=inner)
     with pytest.raises(InputError, match="is not played with") as refused:
-        simulate(loop, replace(EVENTS, **asked))
-    assert refused.value.problems[0].key == key
+        simulate(loop, replace(EVENTS, change_at=5.0))
+    assert refused.value.problems[0].key == "scenario.change_at"
+
+
+HANDLED: list[dict[str, Any]] = [
+    {"manual_at": 5.0, "automatic_at": 21.3},
+    {"manual_at": 5.0, "manual_output": 2.0, "automatic_at": 40.0},
+    {"settings_at": 12.2, "settings": Gains(0.7, 0.01, 1.0, 0.2, 0.5)},
+    {"manual_at": 3.0, "automatic_at": 9.0, "settings_at": 6.0, "settings": Gains(0.4, 0.02)},
+]
+
+
+@pytest.mark.parametrize("asked", HANDLED)
+@pytest.mark.parametrize("high", [None, 1.2])
+def test_modes_and_settings_are_those_of_a_single_loop(
+    asked: dict[str, Any], high: float | None
+) -> None:
+    # other route: the engine of a single loop; an inner loop without lags that is done in one scan
+    # is not there
+    plant, events = SLOW.function(), replace(EVENTS, **asked)
+    single = Loop(plant, NOTHING, PI, scan=0.5, high=high)
+    bare = Structure(plant, NOTHING, PI, scan=0.5, high=high)
+    one, wanted = simulate(bare, events), simulate(single, events)
+    assert np.abs(one.pv - wanted.pv).max() < 1e-12
+    assert np.abs(one.output - wanted.output).max() < 1e-12
+
+
+@pytest.mark.parametrize("start", ["cascade", "automatic", "manual"])
+@pytest.mark.parametrize("then", ["cascade", "automatic", "manual"])
+def test_a_change_of_the_inner_mode_bumps_nothing(start: str, then: str) -> None:
+    # Nothing moves while the error is 0: begin at rest, change, and only then step.
+    inner = Loop(Lag(1.0, (2.0,)).function(), TransferFunction.constant(1.0), PI, scan=0.5)
+    loop = Structure(SLOW.function(), NOTHING, PI, scan=1.0, inner=inner, inner_mode=start)
+    events = Events(0.0, 0.0, 2.0, 1.0, 60.0, inner_mode_at=30.0, inner_mode=then)
+    inside = simulate(loop, events).inner
+    assert inside is not None
+    at = 60
+    # exact: what the output may move by on the scan of the change is what the controller itself
+    # asks for this error, P by the change of PV (weight 1, setpoint as it was) and I by Ki h e
+    moved = abs(inside.output[at] - inside.output[at - 1])
+    asked = PI.proportional * abs(inside.pv[at] - inside.pv[at - 1])
+    asked += PI.integral * 0.5 * abs(inside.setpoint[at] - inside.pv[at])
+    if then == "cascade":
+        asked += PI.proportional * abs(inside.setpoint[at] - inside.setpoint[at - 1])
+    assert moved <= asked + 1e-9
 
 
 def test_structures_are_not_run_side_by_side() -> None:

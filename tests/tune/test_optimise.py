@@ -20,7 +20,7 @@ from workbench.sim.loop import settle_horizon, simulate
 from workbench.sim.metrics import Measures, measure
 from workbench.sim.scenario import Events
 from workbench.tune.bench import Aim
-from workbench.tune.optimise import best, noise_gain
+from workbench.tune.optimise import best, noise_gain, trade_off
 
 DRYER = lags(1.8, 40.0, dead_time=6.0)
 
@@ -240,6 +240,59 @@ def test_other_kinds_of_plant(plant: TransferFunction, limit: float, reverse: bo
     found = best([loop], ideal, Aim(Limits(limit)), derivative=False)
 
     assert ms_of(replace(loop, gains=found.gains)) == pytest.approx(limit, rel=2e-3)
+
+
+@pytest.mark.parametrize(
+    ("plant", "limit", "grid"),
+    [
+        (lags(1, 1000, dead_time=1), 1.2, 1.01 * 0.03187),
+        (lags(10, 10, 0.5, dead_time=0.5), 1.4, 1.01 * 4.562),
+        (TransferFunction.ratio((1.0,), [(1.0, 0.0)], 1.0), 1.4, 1.01 * 11.27),
+    ],
+    ids=["lag", "two lags", "integrating"],
+)
+def test_a_window_of_gains_that_closes_at_the_limit_is_not_left(
+    plant: TransferFunction, limit: float, grid: float
+) -> None:
+    """Other route: the best of a grid.  Here the best lies where the highest window ends."""
+    found = best([a_loop(plant)], ideal, Aim(Limits(limit)), derivative=True)
+
+    assert load_iae(plant, found.gains) <= grid
+    assert ms_of(a_loop(plant, gains=found.gains)) <= 1.001 * limit
+
+
+# --- trade-off -----------------------------------------------------------------------------------
+
+
+@pytest.mark.parametrize("derivative", [False, True], ids=["PI", "PID"])
+def test_the_trade_off_is_the_best_at_each_limit(derivative: bool) -> None:
+    """Other route: each limit searched alone, from nothing."""
+    limits = (1.25, 1.5, 2.0)
+
+    curve = trade_off([a_loop()], ideal, Aim(Limits(1.7)), limits, derivative=derivative)
+
+    assert [limit for limit, _ in curve] == list(limits)
+    for limit, found in curve:
+        alone = best([a_loop()], ideal, Aim(Limits(limit)), derivative=derivative)
+        assert found.cost == pytest.approx(alone.cost, rel=5e-3)
+        assert ms_of(a_loop(gains=found.gains)) == pytest.approx(limit, rel=1e-3)
+
+
+def test_a_derivative_that_only_costs_noise_does_not_shrink_without_end() -> None:
+    aim = Aim(Limits(1.7, noise_gain=2.8), setpoint_share=0.3)
+
+    curve = trade_off([a_loop()], ideal, aim, (1.2, 1.5, 1.8, 2.2), derivative=True)
+
+    for _, found in curve:
+        assert found.derivative_time == 0.0 or found.derivative_time > 1e-3 * found.integral_time
+
+
+def test_limits_that_nobody_can_keep_are_not_on_the_trade_off() -> None:
+    unstable = TransferFunction.ratio((2.0,), [(20.0, -1.0)], 2.0)
+
+    curve = trade_off([a_loop(unstable)], ideal, Aim(Limits()), (1.1, 2.5, 3.0), derivative=False)
+
+    assert [limit for limit, _ in curve] == [2.5, 3.0]
 
 
 # --- where there is no answer --------------------------------------------------------------------

@@ -15,7 +15,8 @@ from hypothesis import given
 from hypothesis import strategies as st
 
 from tests.model.published import Plant as PublishedPlant
-from tests.tune.published import RULE_CASES, RuleCase
+from tests.tune.published import CLOSED_FORM, PUBLISHED, RULE, RULE_CASES, RuleCase
+from tests.tune.published import MEMORY as FROM_MEMORY
 from workbench.errors import NotApplicable
 from workbench.model.feedback import Loop
 from workbench.model.pid import Gains
@@ -359,6 +360,16 @@ def test_published_margins_of_the_settings(case: RuleCase) -> None:
 def test_the_checks_are_many() -> None:
     assert len(RULE_CASES) + len(WORKED_EXAMPLES) >= 60
     assert sum(len(case.figures) for case in RULE_CASES) >= 30
+
+
+def test_every_check_says_what_it_is_worth() -> None:
+    labels = (PUBLISHED, CLOSED_FORM, RULE)
+    for case in RULE_CASES:
+        for worth in (case.settings_worth, *(worth for _, worth in case.figures.values())):
+            assert worth.removesuffix(FROM_MEMORY) in labels, case.name
+        assert case.source, case.name
+    for worked in WORKED_EXAMPLES:
+        assert worked.source.startswith((READ, MEMORY, "exact", "common practice")), worked
 
 
 @pytest.mark.parametrize(

@@ -200,7 +200,7 @@ def _edit_all(case: Case, changes: Mapping[str, str]) -> Case:
             tables.pop("controller", None)
         built, faults = assemble(tables, {}, case.history)
         if built is not None and not faults:
-            return built
+            return replace(built, folder=case.folder)
     raise InputError(_told_together(faults, case, shape))
 
 

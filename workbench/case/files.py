@@ -80,7 +80,8 @@ def read_case(path: str | os.PathLike[str]) -> CaseFile:
     name = os.fspath(path)
     try:
         raw = _contents(name)
-        return CaseFile(parse_case(_decoded(raw)), name, raw)
+        case = parse_case(_decoded(raw))
+        return CaseFile(replace(case, folder=os.path.dirname(name)), name, raw)
     except CaseFileError as fault:
         raise fault.at(path=harmless(name)) from None
 

@@ -11,6 +11,7 @@ from dataclasses import replace
 from datetime import datetime
 from typing import Any, Final
 
+from workbench.case.family import FamilyTable
 from workbench.case.structures import CompensationTable, FeedforwardTable, InnerTable
 from workbench.case.tables import (
     AT_MEND,
@@ -404,6 +405,7 @@ TOLD_WITH: Final[dict[tuple[type, str], tuple[str, ...]]] = {
     (OpTable, "start"): ("low", "high", "min", "max"),
     (PlantTable, "load"): ("time_unit",),
     (Formula, "formula"): ("time_unit",),
+    (FamilyTable, "plants"): ("time_unit",),
     (Controller, "gain"): ("form", "proportional_band"),
     (Controller, "proportional_band"): ("gain",),
     (Controller, "integral"): ("form",),
@@ -414,6 +416,9 @@ TOLD_WITH: Final[dict[tuple[type, str], tuple[str, ...]]] = {
     (CompensationTable, "model"): ("time_unit",),
     (FeedforwardTable, "lead"): ("lag",),
     (InnerTable, "plant"): ("time_unit",),
+    (InnerTable, "gain"): ("form",),
+    (InnerTable, "integral"): ("form",),
+    (InnerTable, "derivative_filter"): ("form", "gain", "derivative"),
     (InnerTable, "high"): ("low",),
     (InnerTable, "min"): ("low", "high"),
     (InnerTable, "max"): ("low", "high", "min"),
@@ -422,8 +427,12 @@ TOLD_WITH: Final[dict[tuple[type, str], tuple[str, ...]]] = {
     (Valve, "slip_jump"): ("stick_slip",),
     (Valve, "signal_high"): ("signal_low",),
     (Scenario, "load_time"): ("load_shape",),
-    (Scenario, "load_record"): ("load_shape",),
+    (Scenario, "load_record"): ("load_shape", "load_file", "load_column"),
+    (Scenario, "load_column"): ("load_file",),
     (Scenario, "automatic_at"): ("manual_at",),
+    (Scenario, "new_gain"): ("settings_at",),
+    (Scenario, "new_integral"): ("settings_at",),
+    (Scenario, "new_derivative"): ("settings_at",),
     (Scenario, "setpoint_at"): ("until",),
     (Scenario, "load_at"): ("until",),
 }

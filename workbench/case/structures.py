@@ -8,12 +8,13 @@ from __future__ import annotations
 from collections.abc import Iterator
 from dataclasses import dataclass
 
+from workbench.case.ranges import Limited
 from workbench.errors import InputError, Problem
 from workbench.model.feedforward import Feedforward
 from workbench.model.formula import parse_formula
 from workbench.model.pid import Controller
 from workbench.model.transfer import TransferFunction
-from workbench.units import TIME_UNITS, Amount, Range, check_fields, plain, quantities, quantity
+from workbench.units import TIME_UNITS, Amount, check_fields, quantities, quantity
 
 
 class _Extra:
@@ -104,7 +105,7 @@ class FeedforwardTable(_Extra):
 
 
 @dataclass(frozen=True)
-class InnerTable(_Extra):
+class InnerTable(Limited, _Extra):
     """The inner loop of a cascade: OP is its setpoint, and the plant begins at its PV."""
 
     plant: str | None = quantity(
@@ -125,22 +126,45 @@ class InnerTable(_Extra):
         default="cascade",
         choices=("cascade", "automatic", "manual"),
     )
-    gain: float | None = quantity(
-        "gain of the inner controller (ideal form), percent of its output per percent of the OP"
-        " span",
+    form: str = quantity(
+        "algorithm form of the inner controller",
+        "choice",
+        default="ideal",
+        choices=("ideal", "series", "parallel"),
+    )
+    gain: float = quantity(
+        "gain of the inner controller, percent of its output per percent of the OP span",
         "number",
         "%/%",
-        above=0,
-        default=None,
+        low=0,
+        default=1.0,
     )
     integral: Amount | None = quantity(
-        "its integral time", "integral", above=0, default=None, example="5 s"
+        "its integral time; in the parallel form its integral gain",
+        "integral",
+        above=0,
+        default=None,
+        example="5 s",
     )
     derivative: Amount | None = quantity(
-        "its derivative time", "derivative", low=0, default=None, example="1 s"
+        "its derivative time; in the parallel form its derivative gain",
+        "derivative",
+        low=0,
+        default=None,
+        example="1 s",
+    )
+    derivative_filter: float | Amount | None = quantity(
+        "its derivative filter: N (filter time = derivative time / N), a filter time, or none",
+        "filter",
+        above=0,
+        default=10.0,
+        example="0.4 s",
     )
     setpoint_weight: float = quantity(
         "weight of the setpoint in its proportional part", "number", low=0, high=1, default=1.0
+    )
+    derivative_on: str = quantity(
+        "what its derivative acts on", "choice", default="pv", choices=("pv", "error")
     )
     action: str = quantity(
         "reverse: its output rises when its PV falls; direct: it rises with its PV",
@@ -175,16 +199,6 @@ class InnerTable(_Extra):
         "its fastest change", "rate", "inner OP", above=0, default=None, example="5 /s"
     )
 
-    @property
-    def range(self) -> Range:
-        """The range of the inner output [inner OP unit]."""
-        return Range(self.low, self.high)
-
-    @property
-    def rest(self) -> float:
-        """Where the inner output rests before the scenario [inner OP unit]."""
-        return self.low + self.range.span / 2 if self.start is None else self.start
-
     def transfer(self) -> TransferFunction:
         """From the inner output to the inner PV [OP unit per inner OP unit]."""
         assert self.plant is not None
@@ -193,10 +207,13 @@ class InnerTable(_Extra):
     def controller(self) -> Controller:
         """The inner controller; for a table that is there."""
         return Controller(
+            form=self.form,
             gain=self.gain,
             integral=self.integral,
             derivative=self.derivative,
+            derivative_filter=self.derivative_filter,
             setpoint_weight=self.setpoint_weight,
+            derivative_on=self.derivative_on,
             action=self.action,
             scan=self.scan,
             windup=self.windup,
@@ -204,24 +221,8 @@ class InnerTable(_Extra):
 
     def _faults(self) -> Iterator[Problem]:
         yield from _formula(self.plant, self.time_unit, "plant")
-        if self.gain is None:
-            yield Problem("is missing", "give the gain of the inner controller", "gain")
-        else:
-            try:
-                self.controller()
-            except InputError as fault:
-                yield from fault.problems
-        if self.low >= self.high:
-            yield Problem(f"{plain(self.high)} is not above low", "give a high above low", "high")
-            return
-        least = self.low if self.min is None else self.min
-        most = self.high if self.max is None else self.max
-        for key in ("min", "max", "start"):
-            value = getattr(self, key)
-            if value is not None and not self.low <= value <= self.high:
-                yield Problem(f"{plain(value)} is outside low to high", "give one inside", key)
-        if least >= most:
-            yield Problem(f"{plain(most)} is not above min", "give a larger max", "max")
-        elif not least <= self.rest <= most:
-            what = f"{plain(self.rest)} is outside min to max"
-            yield Problem(what, "give the operating point, inside the limits", "start")
+        try:
+            self.controller()
+        except InputError as fault:
+            yield from fault.problems
+        yield from self.limit_faults()

@@ -7,13 +7,14 @@ What a table refuses by itself is said here; how a case is read and edited, in `
 from __future__ import annotations
 
 import dataclasses
-import math
 import re
 from collections.abc import Iterable, Iterator
 from dataclasses import dataclass, field, replace
 from datetime import date, datetime
 from typing import Any, ClassVar, Final
 
+from workbench.case.family import FamilyTable
+from workbench.case.ranges import Limited, Ranged, outside
 from workbench.case.structures import CompensationTable, FeedforwardTable, InnerTable
 from workbench.case.tags import KINDS, kind_of
 from workbench.errors import InputError, Problem
@@ -30,13 +31,11 @@ from workbench.units import (
     TIME_UNITS,
     Amount,
     Quantity,
-    Range,
     Value,
     check_fields,
     harmless,
     nearest,
     one_of,
-    plain,
     quantities,
     quantity,
 )
@@ -87,7 +86,7 @@ class LoopTable(_Table):
 
 
 @dataclass(frozen=True)
-class PvTable(_Table):
+class PvTable(Ranged, _Table):
     """The process variable: its instrument range and operating point, in its own unit."""
 
     unit: str = quantity("engineering unit of PV", "text", default="%", example="degC", longest=20)
@@ -107,23 +106,13 @@ class PvTable(_Table):
         "standard deviation of the measurement noise", "number", "PV", low=0, default=0.0
     )
 
-    @property
-    def range(self) -> Range:
-        """The instrument range [PV unit]."""
-        return Range(self.low, self.high)
-
-    @property
-    def rest(self) -> float:
-        """Where PV rests before the scenario [PV unit]."""
-        return self.low + self.range.span / 2 if self.start is None else self.start
-
     def _faults(self) -> Iterator[Problem]:
-        yield from _range_faults(self.low, self.high)
-        yield from _outside("start", self.start, self.low, self.high, "the range")
+        yield from self.range_faults()
+        yield from outside("start", self.start, self.low, self.high, "the range")
 
 
 @dataclass(frozen=True)
-class OpTable(_Table):
+class OpTable(Limited, _Table):
     """The controller output: its range, operating point and limits, in its own unit."""
 
     unit: str = quantity("engineering unit of OP", "text", default="%", example="%", longest=20)
@@ -147,35 +136,8 @@ class OpTable(_Table):
         "whether a rising signal closes the valve", "flag", default=False
     )
 
-    @property
-    def range(self) -> Range:
-        """The output range [OP unit]."""
-        return Range(self.low, self.high)
-
-    @property
-    def rest(self) -> float:
-        """Where OP rests before the scenario [OP unit]."""
-        return self.low + self.range.span / 2 if self.start is None else self.start
-
     def _faults(self) -> Iterator[Problem]:
-        yield from _range_faults(self.low, self.high)
-        yield from _outside("min", self.min, self.low, self.high, "the range")
-        yield from _outside("max", self.max, self.low, self.high, "the range")
-        least = self.low if self.min is None else self.min
-        most = self.high if self.max is None else self.max
-        if self.min is not None and self.max is not None and self.min >= self.max:
-            yield Problem(
-                f"{plain(self.max)} is not above min, {plain(self.min)}", "give a larger max", "max"
-            )
-        elif self.start is not None:
-            yield from _outside("start", self.start, least, most, "the limits")
-        elif self.low < self.high and not least <= self.rest <= most:
-            yield Problem(
-                f"is left out, and the middle of the range, {plain(self.rest)}, is outside "
-                f"the limits {plain(least)} to {plain(most)}",
-                "give the operating point",
-                "start",
-            )
+        yield from self.limit_faults()
 
 
 Process = Shape | Blocks
@@ -332,23 +294,6 @@ def _is_day(words: str) -> bool:
 AT_MEND: Final = "write it like 2026-11-30T14:05:00+01:00, without quotes"
 
 
-def _range_faults(low: float, high: float) -> Iterator[Problem]:
-    if low >= high:
-        what = "is the same as low" if low == high else f"is below low, {plain(low)}"
-        yield Problem(f"{plain(high)} {what}", "give a high above low", "high")
-    elif not math.isfinite(high - low):
-        yield Problem("makes the span too large for a number", "give a smaller range", "high")
-
-
-def _outside(
-    key: str, value: float | None, low: float, high: float, where: str
-) -> Iterator[Problem]:
-    # A reversed range is a fault of its own, and then says nothing about the value.
-    if value is not None and low < high and not low <= value <= high:
-        within = f"{plain(low)} to {plain(high)}"
-        yield Problem(f"{plain(value)} is outside {where} {within}", "give a value inside", key)
-
-
 @dataclass(frozen=True)
 class Case:
     """Everything kept about one loop."""
@@ -365,6 +310,9 @@ class Case:
     compensation: CompensationTable = CompensationTable()
     feedforward: FeedforwardTable = FeedforwardTable()
     inner: InnerTable = InnerTable()
+    family: FamilyTable = FamilyTable()
+    folder: str = field(default="", compare=False)
+    """Where the case file lies, and with it the records that it names; not kept in the file."""
 
     def with_entry(self, entry: Revision) -> Case:
         """The case with one more entry at the end of its history."""
@@ -402,7 +350,9 @@ def table_values(case: Case) -> dict[str, Values]:
     }
     if case.controller is not None:
         tables["controller"] = values_of(case.controller)
-    for name in ("compensation", "feedforward", "inner", "valve", "measurement", "scenario"):
+    for name in TABLES:
+        if name in tables or name == "controller":
+            continue
         tables[name] = values_of(getattr(case, name))
     return tables
 
@@ -498,6 +448,7 @@ TABLES: Final[dict[str, type]] = {
     "pv": PvTable,
     "op": OpTable,
     "plant": PlantTable,
+    "family": FamilyTable,
     "controller": Controller,
     "compensation": CompensationTable,
     "feedforward": FeedforwardTable,

@@ -3,32 +3,63 @@
 from __future__ import annotations
 
 from dataclasses import replace
-from typing import Final
+from typing import TYPE_CHECKING, Final
 
 from workbench import report
 from workbench.cli.answer import Answer, Status, check_target, loop_of, no_controller, replace_file
 from workbench.cli.options import Given
 from workbench.cli.output import progress, width
-from workbench.errors import problem
+from workbench.errors import InputError, problem
 from workbench.units import GAIN_RATE_UNITS, INTEGRAL_UNITS, TIME_UNITS, Note, one_of
+
+if TYPE_CHECKING:
+    from workbench.study import Wish
 
 
 def assess(given: Given) -> Answer:
     """Gain, final values, stability and margins."""
     from workbench import study
 
+    axis = given.choice("--tolerance", ("dead-time", "lag"))
+    limit = given.number("--max-sensitivity", above=1.0)
+    if limit is not None and axis is None:
+        raise problem("is given without --tolerance", "add it", key="--max-sensitivity")
     case = loop_of(given)
+    if axis is not None and case.controller is None:
+        raise no_controller(given, "a tolerance map")
     found = study.assess(case)
-    found = replace(found, notes=study.cautions(case, found))
+    family = study.family_figures(case)
+    notes = (*study.family_cautions(family), *study.cautions(case, found))
+    found = replace(found, notes=notes)
     small = None
     if "--small-models" in given:
         with progress("reducing the plant"):
             small = study.reductions(case)
+    survived, drawn = None, None
+    if axis is not None:
+        from workbench import charts
+
+        with progress("looking at other plants"):
+            survived = study.tolerance(
+                case,
+                axis="lag" if axis == "lag" else "dead time",
+                limit=limit or study.TOLERANCE_LIMIT,
+                columns=MAP_COLUMNS,
+                rows=MAP_ROWS,
+            )
+        field, size = charts.tolerance_field(survived), charts.map_size(MAP_COLUMNS, MAP_ROWS)
+        drawn = survived, charts.draw_map(field, *size, ascii_only=True).rows
+    units = study.units_of(case)
     return Answer(
-        report.assess_text(case, found, study.units_of(case), width(), small),
-        report.assess_data(case, found, study.units_of(case), small),
+        report.assess_text(case, found, units, width(), small, family, drawn),
+        report.assess_data(case, found, units, small, family, survived),
         Status.DONE if report.is_stable(found) else Status.NO,
     )
+
+
+MAP_COLUMNS: Final = 61
+MAP_ROWS: Final = 25
+"""Cells of the map that `assess` prints."""
 
 
 def predict(given: Given) -> Answer:
@@ -106,36 +137,63 @@ def propose(given: Given) -> Answer:
     """The present settings and candidates, each judged on this loop."""
     from workbench import study
 
-    limit = given.number("--max-sensitivity", above=1.0)
-    swing = given.swing("--relay")
-    wish = study.Wish(
-        goal="setpoint" if given.choice("--for", ("load", "setpoint")) == "setpoint" else "load",
-        closed_loop_time=given.seconds("--closed-loop-time"),
-        max_sensitivity=study.Wish.max_sensitivity if limit is None else limit,
-        method=given.word("--method"),
-        largest_upset=given.number("--largest-upset", above=0.0),
-        allowed_deviation=given.number("--allowed-deviation", above=0.0),
-        relay=None if swing is None else study.RelayTest(*swing),
-    )
+    wish = _wish(given)
     # What a controller is like, its gain left open, is enough to propose settings for it.
     case = loop_of(given, gain="1")
     with progress("judging the candidates"):
         proposals = study.propose(case, wish)
+        curves = study.trade_off(case, wish) if "--trade-off" in given else None
     if case.controller is not None and not given.file and not given.tells_gain:
         case, proposals = replace(case, controller=None), proposals[1:]
     # The present settings are an answer only where they were asked for.
     candidates = [
         row for row in proposals if (row.method == "present") is (wish.method == "present")
     ]
-    done = any(row.within_limit if limit is not None else row.applies for row in candidates)
+    limited = any(given.word(name) is not None for name in _LIMITS)
+    done = any(row.within_limit if limited else row.applies for row in candidates)
     chosen = study.action_of(case)[1]
     notes = [Note("info", chosen)] if chosen else []
     units = study.units_of(case)
     return Answer(
-        report.propose_text(case, proposals, notes, units, width()),
-        report.propose_data(case, proposals, notes, units),
+        report.propose_text(case, proposals, notes, units, width(), curves),
+        report.propose_data(case, proposals, notes, units, curves),
         Status.DONE if done else Status.NO,
     )
+
+
+_WISHES: Final = {
+    "--setpoint-share": "setpoint_share",
+    "--max-sensitivity": "max_sensitivity",
+    "--max-complementary-sensitivity": "max_complementary_sensitivity",
+    "--max-noise-gain": "max_noise_gain",
+    "--max-load-travel": "max_load_travel",
+    "--closed-loop-time": "closed_loop_time",
+    "--largest-upset": "largest_upset",
+    "--allowed-deviation": "allowed_deviation",
+    "--relay": "relay",
+}
+"""Option -> quantity of a wish."""
+_LIMITS: Final = tuple(option for option in _WISHES if option.startswith("--max-"))
+
+
+def _wish(given: Given) -> Wish:
+    """What the options ask for.  Raises `InputError` with the option as key."""
+    from workbench import study
+
+    aim = given.choice("--for", ("load", "setpoint"))
+    if aim is not None and "--setpoint-share" in given:
+        raise problem("is given beside --for", "keep one of the two", key="--setpoint-share")
+    wish = study.Wish(
+        setpoint_share=100.0 if aim == "setpoint" else 0.0, method=given.word("--method")
+    )
+    for option, name in _WISHES.items():
+        word = given.word(option)
+        if word is not None:
+            try:
+                wish = study.edit_wish(wish, name, word or " ?")
+            except InputError as fault:
+                raise fault.at(key=option) from None
+    return wish
 
 
 def convert(given: Given) -> Answer:

@@ -147,27 +147,6 @@ class Given:
             raise problem(f"{amount} is {least}", 'write it like "30 s"', key=name)
         return amount.seconds
 
-    def swing(self, name: str) -> tuple[float, float, float, float] | None:
-        """A relay test: OP and PV amplitudes, period [s], hysteresis.  Raises `InputError`."""
-        word = self.word(name)
-        if word is None:
-            return None
-        output, pv, time, *rest = [part.strip() for part in word.split(":")] + [""] * 2
-        numbers = []
-        for part in (output, pv, (rest or ["0"])[0] or "0"):
-            try:
-                numbers.append(float(part))
-            except ValueError:
-                numbers.append(math.nan)
-        sound = word.count(":") in (2, 3) and all(map(math.isfinite, numbers))
-        if not (sound and numbers[0] > 0.0 and numbers[1] > numbers[2] >= 0.0):
-            raise problem(
-                f"{harmless(word, 40)!r} is no relay test",
-                'write it like "5:1.2:36 s", amplitudes above 0 and the hysteresis below the swing',
-                key=name,
-            )
-        return numbers[0], numbers[1], self._time(name, time), numbers[2]
-
     def choice(self, name: str, choices: tuple[str, ...]) -> str | None:
         """The word of an option that takes one of a few.  Raises `InputError`."""
         word = self.word(name)

@@ -191,6 +191,15 @@ RUN: Final[tuple[Option, ...]] = (
 SMALL_MODELS: Final = Option(
     "--small-models", "", "the plant as one and two lags with dead time, and how far off each is"
 )
+TOLERANCE: Final[tuple[Option, ...]] = (
+    Option(
+        "--tolerance",
+        "dead-time|lag",
+        "a map of how much error of the plant's gain and dead time, or gain and lags, the loop"
+        " survives, and the distances from where it is now",
+    ),
+    Option("--max-sensitivity", "MS", "limit on Ms in that map", "2"),
+)
 MOVES: Final[tuple[Option, ...]] = (
     Option(
         "--input", "step|ramp|pulse|doublet|sine|impulse", "what moves the plant's input", "step"
@@ -261,12 +270,41 @@ FIT: Final[tuple[Option, ...]] = (
 WISHES: Final[tuple[Option, ...]] = (
     Option("--for", "load|setpoint", "what the settings are for", "load"),
     Option(
+        "--setpoint-share",
+        "PERCENT",
+        "for both: share of the setpoint IAE in what is made least, the load IAE having the rest",
+    ),
+    Option(
         "--closed-loop-time",
         "TIME",
         "wanted time constant of the answer to a setpoint step",
         "from the method",
     ),
     Option("--max-sensitivity", "MS", "limit on the peak of the sensitivity", "1.7"),
+    Option(
+        "--max-complementary-sensitivity",
+        "MT",
+        "limit on the peak of the complementary sensitivity",
+        "none",
+    ),
+    Option(
+        "--max-noise-gain",
+        "G",
+        "limit on how much OP swings for a swing of the measurement by 1 %, percent OP per percent"
+        " PV",
+        "none",
+    ),
+    Option(
+        "--max-load-travel",
+        "CHANGE",
+        "limit on how far OP moves after the load step, all its moves added up, OP units",
+        "none",
+    ),
+    Option(
+        "--trade-off",
+        "",
+        "the best settings at limits on the sensitivity from low to high too",
+    ),
     Option("--method", "NAME", "this method only", "every method that applies"),
     Option(
         "--largest-upset",
@@ -324,7 +362,7 @@ COMMANDS: Final[dict[str, Grammar]] = {
             "assess",
             "Gain, final values, stability and margins of a loop; a plant alone is enough.",
             "[CASE]",
-            (SMALL_MODELS, SET, *INLINE, JSON),
+            (SMALL_MODELS, *TOLERANCE, SET, *INLINE, JSON),
             'workbench assess --plant "1.8 exp(-6 s)/(40 s + 1)" --gain 1.1 --integral "32 s"',
         ),
         Grammar(

@@ -72,3 +72,13 @@ class Loop:
     def from_load(self) -> TransferFunction:
         """PV [%] for the upset [its own unit], analogue loop."""
         return self.load * (TransferFunction.constant(1.0) / (1.0 + self.open_loop()))
+
+    def output_from_setpoint(self) -> TransferFunction:
+        """OP [%] for the setpoint [%], analogue loop."""
+        forward = self.sign * self.gains.from_setpoint()
+        return forward * (TransferFunction.constant(1.0) / (1.0 + self.open_loop()))
+
+    def output_from_load(self) -> TransferFunction:
+        """OP [%] for the upset [its own unit], analogue loop."""
+        back = self.sign * self.gains.from_pv() * self.filter() * self.load
+        return -back * (TransferFunction.constant(1.0) / (1.0 + self.open_loop()))

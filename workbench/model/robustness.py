@@ -89,12 +89,15 @@ def analogue_margins(loop: Loop) -> Margins:
     return _margins(response, grid, open_loop, far=far)
 
 
-def sampled_margins(loop: Loop) -> Margins:
+def sampled_margins(loop: Loop, known: SampledLoop | None = None) -> Margins:
     """Margins of the loop as sampled: hold, scan and computing delay included.
+
+    `known` is its open loop in z where that is not had from a state space.
 
     Frequencies run up to half the scan rate.
     """
-    sampled = loop.sampled() if isinstance(loop, Structure) else SampledLoop.of(loop)
+    made = loop.sampled if isinstance(loop, Structure) else lambda: SampledLoop.of(loop)
+    sampled = known or made()
     verdict = sampled.verdict()
     if not verdict.stable:
         return _none(verdict)
@@ -223,6 +226,10 @@ def _grid(
 ) -> Floats:
     """Frequencies dense enough that the response never turns unseen between two of them."""
     low = float(corners.min(initial=min(1.0, top))) * 1e-3
+    # An integrating loop crosses 1 however small its gain, only at a lower frequency.
+    size, below = np.abs(response(np.array([low, 0.1 * low])))
+    if below > 5.0 * size and size < 10.0:
+        low *= max(float(size) / 10.0, 1e-12)
     high = min(float(corners.max(initial=low)) * 1e3, top)
     coarse = np.geomspace(low, high, 30 * math.ceil(math.log10(high / low)) + 2)
     pieces = [coarse]
@@ -260,7 +267,7 @@ def _refined(response: Response, grid: Floats, finest: int) -> Floats:
 # --- crossovers and peaks ------------------------------------------------------------------------
 
 
-def _crossings(f: Callable[[Floats], Floats], low: Floats, high: Floats) -> Floats:
+def crossings(f: Callable[[Floats], Floats], low: Floats, high: Floats) -> Floats:
     """Roots of f between brackets, all at once, by the Illinois variant of false position."""
     if not len(low):
         return low
@@ -352,7 +359,7 @@ def _bandwidth(response: Response, grid: Floats, values: Complex, at_zero: float
     first = int(fallen[0])
     if not first:
         return Figure(None, "it is below every frequency looked at")
-    found = _crossings(
+    found = crossings(
         lambda w: above(response(w)), grid[first - 1 : first], grid[first : first + 1]
     )
     return Figure.of(float(found[0]))
@@ -407,7 +414,7 @@ def _phase_crossovers(
     """(1/|L|, frequency) wherever L crosses the negative real axis."""
     turn = np.angle(-values)
     cut = (turn[:-1] * turn[1:] <= 0.0) & (np.abs(turn[:-1] - turn[1:]) < math.pi)
-    at = _crossings(lambda w: np.angle(-response(w)), grid[:-1][cut], grid[1:][cut])
+    at = crossings(lambda w: np.angle(-response(w)), grid[:-1][cut], grid[1:][cut])
     sizes = np.abs(response(at)) if len(at) else at
     return [(float(1.0 / m), float(w)) for m, w in zip(sizes, at, strict=True) if m]
 
@@ -425,7 +432,7 @@ def _phase_margins(
 
     size = log_size(values)
     cut = size[:-1] * size[1:] <= 0.0
-    at = _crossings(lambda w: log_size(response(w)), grid[:-1][cut], grid[1:][cut])
+    at = crossings(lambda w: log_size(response(w)), grid[:-1][cut], grid[1:][cut])
     if not len(at):
         never = Figure(None, "the loop gain never crosses 1")
         return never, never, never

@@ -46,6 +46,15 @@ def controller_in_z(gains: Gains, scan: float, z: Complex) -> Complex:
     return value
 
 
+def whole_scans(
+    late: NDArray[np.float64], scan: float
+) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
+    """Dead times [s] as whole scans, and what is left to the last of them [s]; same shapes."""
+    whole = np.ceil(late / scan - _ON_SCAN)
+    left = np.maximum(0.0, whole * scan - late)
+    return whole, np.where(left < _ON_SCAN * scan, 0.0, left)
+
+
 @dataclass(frozen=True)
 class _Reading:
     """One delayed reading of the held plant: whole scans, then what the state and input give."""
@@ -75,15 +84,14 @@ class SampledLoop:
         phi, gamma = hold(plant.a, plant.b, h)
         readings = []
         for output in plant.outputs:
-            scans = (output.dead_time + loop.computing_delay) / h
-            whole = math.ceil(scans - _ON_SCAN)
-            left = max(0.0, (whole - scans) * h)
-            if left < _ON_SCAN * h:
-                readings.append(_Reading(whole, output.c, 0.0, output.d))
+            late = np.array([output.dead_time + loop.computing_delay])
+            whole, left = (float(each[0]) for each in whole_scans(late, h))
+            if left == 0.0:
+                readings.append(_Reading(int(whole), output.c, 0.0, output.d))
                 continue
             onward, pushed = hold(plant.a, plant.b, left)
             readings.append(
-                _Reading(whole, output.c @ onward, float(output.c @ pushed) + output.d, 0.0)
+                _Reading(int(whole), output.c @ onward, float(output.c @ pushed) + output.d, 0.0)
             )
         return cls(loop, h, phi, gamma, tuple(readings))
 

@@ -21,10 +21,11 @@ Compensation: O.J.M. Smith, "Closer control of loops with dead time", Chem. Eng.
 from __future__ import annotations
 
 from collections import Counter
-from dataclasses import dataclass, fields
+from dataclasses import dataclass, fields, replace
 from typing import Final
 
 from workbench.errors import problem
+from workbench.model.cascade import SampledCascade
 from workbench.model.feedback import Loop
 from workbench.model.feedforward import Feedforward
 from workbench.model.sampled import SampledLoop
@@ -103,18 +104,33 @@ class Structure(Loop):
     def from_setpoint(self) -> TransferFunction:
         """PV [%] for the setpoint [%], analogue loop."""
         forward = self.sign * self.gains.from_setpoint() * self.acted_on
-        return _closed(forward, self._back() * self._met())
+        return _closed(forward, self._back() * self.met())
 
     def from_load(self) -> TransferFunction:
         """PV [%] for the upset [its own unit], analogue loop."""
         inside = 1.0 + self._back() * self.correction()
-        return _closed(self.upset * inside, self._back() * self._met())
+        return _closed(self.upset * inside, self._back() * self.met())
 
-    def sampled(self) -> SampledStructure:
+    def output_from_setpoint(self) -> TransferFunction:
+        """OP [%] for the setpoint [%], analogue loop."""
+        return _closed(self.sign * self.gains.from_setpoint(), self._back() * self.met())
+
+    def output_from_load(self) -> TransferFunction:
+        """OP [%] for the upset [its own unit], analogue loop."""
+        alone = replace(self, feedforward=None).upset
+        given = -self._back() * alone
+        if self.feedforward is not None:
+            given = given + self.feedforward.transfer()
+        return _closed(given, self._back() * self.met())
+
+    def sampled(self) -> SampledLoop:
         """The open loop in z; the model is run at the scan, with the computing delay.
 
-        Raises `ModelError` for an inner loop with a dead time: two scans have no single z.
+        Of a cascade in the outer z.  Raises `ModelError` for a plant without a state space.
         """
+        if self.inner is not None:
+            correction = None if self.model is None else self.correction()
+            return SampledCascade.around(self.around(self.plant), self.inner, correction)
         alone = SampledLoop.of(self.around(self.acted_on))
         return SampledStructure(
             alone.loop,
@@ -123,7 +139,7 @@ class Structure(Loop):
             alone.gamma,
             alone.readings,
             SampledLoop.of(self.around(self.correction())),
-            SampledLoop.of(self.around(self._met())),
+            SampledLoop.of(self.around(self.met())),
         )
 
     def around(self, plant: TransferFunction) -> Loop:
@@ -135,7 +151,7 @@ class Structure(Loop):
         """Q, from PV to OP."""
         return self.sign * self.gains.from_pv() * self.filter()
 
-    def _met(self) -> TransferFunction:
+    def met(self) -> TransferFunction:
         """G + M0 - M, the plant as the controller meets it."""
         return self.acted_on + self.correction()
 

@@ -24,6 +24,8 @@ from workbench.errors import ModelError, Problem
 from workbench.units import Figure
 
 Coefficients = tuple[float, ...]
+Powers = tuple[tuple[Coefficients, int], ...]
+"""Factors, each with its power."""
 Complex = NDArray[np.complex128]
 
 _ROUNDING: Final = 8 * np.finfo(float).eps
@@ -36,6 +38,10 @@ def _fault(what: str, mend: str) -> ModelError:
     return ModelError(Problem(what, mend))
 
 
+def _not_finite() -> ModelError:
+    return _fault("a coefficient is not finite", "bring the numbers closer together")
+
+
 # --- polynomials kept factored -------------------------------------------------------------------
 
 
@@ -44,7 +50,7 @@ class Factored:
     """A polynomial as gain times factors to whole powers; a factor has constant term 1, or is s."""
 
     gain: float
-    factors: tuple[tuple[Coefficients, int], ...] = ()
+    factors: Powers = ()
 
     @classmethod
     def of(cls, coefficients: Sequence[float], power: int = 1) -> Factored:
@@ -58,26 +64,28 @@ class Factored:
         while trimmed[-1] == 0.0:
             trimmed, at_origin = trimmed[:-1], at_origin + 1
         constant = trimmed[-1]
-        factors: Counter[Coefficients] = Counter()
-        if at_origin:
-            factors[(1.0, 0.0)] = at_origin * power
+        factors: Powers = (((1.0, 0.0), at_origin * power),) if at_origin else ()
         if len(trimmed) > 1:
-            factors[tuple(c / constant for c in trimmed)] = power
+            factor = tuple(c / constant for c in trimmed)
+            if not all(map(math.isfinite, factor)):
+                raise _not_finite()
+            factors = (*factors, (factor, power))
         return cls._checked(constant**power, factors)
 
     @classmethod
-    def _checked(cls, gain: float, factors: Counter[Coefficients]) -> Factored:
-        numbers = [gain, *(c for factor in factors for c in factor)]
-        if not all(map(math.isfinite, numbers)):
-            raise _fault("a coefficient is not finite", "bring the numbers closer together")
-        if gain == 0.0:
-            return cls(0.0)
-        return cls(gain, tuple((f, p) for f, p in factors.items() if p))
+    def _checked(cls, gain: float, factors: Powers) -> Factored:
+        if not math.isfinite(gain):
+            raise _not_finite()
+        return cls(gain, factors) if gain else cls(0.0)
 
     def __mul__(self, other: Factored) -> Factored:
-        counted = Counter(dict(self.factors))
-        counted.update(dict(other.factors))
-        return self._checked(self.gain * other.gain, counted)
+        gain = self.gain * other.gain
+        if not (self.factors and other.factors):
+            return self._checked(gain, self.factors or other.factors)
+        powers = dict(self.factors)
+        for factor, power in other.factors:
+            powers[factor] = powers.get(factor, 0) + power
+        return self._checked(gain, tuple(powers.items()))
 
     def __add__(self, other: Factored) -> Factored:
         if not self.gain or not other.gain:
@@ -87,14 +95,14 @@ class Factored:
         a = _expand(self.gain, (mine - common).items())
         b = _expand(other.gain, (theirs - common).items())
         size = max(len(a), len(b))
-        a, b = (np.pad(x, (size - len(x), 0)) for x in (a, b))
+        a, b = (np.concatenate([np.zeros(size - len(x)), x]) for x in (a, b))
         total = a + b
         total[np.abs(total) <= _ROUNDING * (np.abs(a) + np.abs(b))] = 0.0
         return Factored.of(total.tolist()) * Factored(1.0, tuple(common.items()))
 
     def scaled(self, factor: float) -> Factored:
         """The polynomial times a number."""
-        return self._checked(self.gain * factor, Counter(dict(self.factors)))
+        return self._checked(self.gain * factor, self.factors)
 
     @cached_property
     def degree(self) -> int:
@@ -121,12 +129,17 @@ class Factored:
         """Every root [1/s], repeated as often as it occurs."""
         return tuple(root for f, p in self.factors for root in _roots(f) for _ in range(p))
 
+    @property
+    def roots_at_origin(self) -> int:
+        """How often s is a factor."""
+        return next((p for f, p in self.factors if f == (1.0, 0.0)), 0)
+
     def divided_by(self, other: Factored) -> Factored | None:
         """The exact quotient where every factor of `other` is a factor here, else None."""
         mine, theirs = Counter(dict(self.factors)), Counter(dict(other.factors))
         if theirs - mine:
             return None
-        return self._checked(self.gain / other.gain, mine - theirs)
+        return self._checked(self.gain / other.gain, tuple((mine - theirs).items()))
 
 
 def _expand(gain: float, factors: Iterable[tuple[Coefficients, int]]) -> NDArray[np.float64]:
@@ -478,6 +491,7 @@ class TransferFunction:
         """The answer to a step stays finite."""
         return self.relative_degree >= 0
 
+    @cached_property
     def _at_origin(self) -> tuple[int, float]:
         """(p, c) with G(s) -> c s^p as s -> 0."""
         above, top = _lowest_power(self.numerator)
@@ -487,13 +501,13 @@ class TransferFunction:
     @property
     def integrators(self) -> int:
         """How many free integrators the function has; below 0: it differentiates."""
-        return -self._at_origin()[0] if self.numerator else 0
+        return -self._at_origin[0] if self.numerator else 0
 
     def gain(self) -> Figure:
         """The limit of G(s) at s = 0, where it exists."""
         if not self.numerator:
             return Figure(0.0)
-        power, value = self._at_origin()
+        power, value = self._at_origin
         if power > 0:
             return Figure(0.0)
         if power < 0:
@@ -504,7 +518,7 @@ class TransferFunction:
         """The limit of s G(s) at s = 0 [per s]: how fast the output moves for a lasting input."""
         if not self.numerator:
             return Figure(0.0)
-        power, value = self._at_origin()
+        power, value = self._at_origin
         if power > -1:
             return Figure(0.0)
         if power < -1:
@@ -523,28 +537,32 @@ class TransferFunction:
         sections = _sections(self.denominator[0].polynomial)
         gain = self.denominator[0].polynomial.gain / math.prod(f[0] for f in sections if not f[-1])
         n = sum(len(f) - 1 for f in sections)
-        a, b = np.zeros((n, n)), np.zeros(n)
+        # Numbers in lists: for a handful of them arrays take far longer.
+        a, b = [[0.0] * n for _ in range(n)], [0.0] * n
         row = 0
         source: int | None = None
         for factor in sections:
-            # The state that feeds this section, or the input for the first one.
-            target = b if source is None else a[:, source]
+            first, last = row, row + len(factor) - 2
             if len(factor) == 2:
-                a[row, row] = -factor[1] / factor[0]
-                target[row] = 1.0 / factor[0]
-                source, row = row, row + 1
+                a[row][row] = -factor[1] / factor[0]
+                fed = 1.0 / factor[0]
             else:
                 t = math.sqrt(abs(factor[0]))
-                a[row, row + 1] = 1.0 / t
-                a[row + 1, row] = -factor[2] * t / factor[0]
-                a[row + 1, row + 1] = -factor[1] / factor[0]
-                target[row + 1] = t / factor[0]
-                source, row = row, row + 2
+                a[first][last] = 1.0 / t
+                a[last][first] = -factor[2] * t / factor[0]
+                a[last][last] = -factor[1] / factor[0]
+                fed = t / factor[0]
+            # The section is fed by the state before it, the first one by the input.
+            if source is None:
+                b[last] = fed
+            else:
+                a[last][source] = fed
+            source, row = first, last + 1
         outputs = tuple(
-            _read_out(t.dead_time, t.polynomial.coefficients / gain, sections, n)
+            _read_out(t.dead_time, (t.polynomial.coefficients / gain).tolist(), sections, n)
             for t in self.numerator
         )
-        return Realisation(a, b, outputs)
+        return Realisation(np.array(a).reshape(n, n), np.array(b), outputs)
 
 
 def _in_seconds(term: Delayed, seconds: float) -> Delayed:
@@ -557,10 +575,10 @@ def _in_seconds(term: Delayed, seconds: float) -> Delayed:
 
 
 def _read_out(
-    dead_time: float, numerator: NDArray[np.float64], sections: list[Coefficients], n: int
+    dead_time: float, numerator: list[float], sections: list[Coefficients], n: int
 ) -> Output:
     """The row C and feedthrough D of numerator / product of sections, by repeated division."""
-    c = np.zeros(n)
+    c = [0.0] * n
     row = n
     rest = numerator
     for factor in reversed(sections):
@@ -569,18 +587,16 @@ def _read_out(
         c[row] = remainder[-1]
         if len(factor) == 3:
             c[row + 1] = remainder[0] / math.sqrt(abs(factor[0]))
-    return Output(dead_time, c, float(rest[-1]))
+    return Output(dead_time, np.array(c), rest[-1])
 
 
-def _divided(
-    numerator: NDArray[np.float64], factor: Coefficients
-) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
-    """Quotient and remainder of all its powers; numpy's own drops what is below 1e-8."""
+def _divided(numerator: list[float], factor: Coefficients) -> tuple[list[float], list[float]]:
+    """Quotient and remainder of all its powers."""
     degree = len(factor) - 1
-    rest = np.concatenate([np.zeros(max(0, degree + 1 - len(numerator))), numerator])
+    rest = [0.0] * max(0, degree + 1 - len(numerator)) + numerator
     steps = len(rest) - degree
-    quotient = np.empty(steps)
     for i in range(steps):
-        quotient[i] = rest[i] / factor[0]
-        rest[i : i + degree + 1] -= quotient[i] * np.array(factor)
-    return quotient, rest[steps:]
+        rest[i] /= factor[0]
+        for k in range(1, degree + 1):
+            rest[i + k] -= rest[i] * factor[k]
+    return rest[:steps], rest[steps:]

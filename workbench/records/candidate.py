@@ -10,6 +10,7 @@ from workbench.model.plant import Shape
 from workbench.records.certainty import Certainty
 from workbench.records.judgement import Judgement
 from workbench.records.response import FITTED, Array
+from workbench.units import rounded as typed
 
 Several = float | tuple[float, ...]
 Interval = tuple[float, float] | tuple[tuple[float, float], ...]
@@ -111,10 +112,10 @@ class Candidate:
                 own[1] = min(own[1], 0.999)
             plants.append(
                 shape.make(
-                    rounded(float(values[0])),
-                    tuple(map(rounded, own)),
-                    rounded(lead),
-                    rounded(late),
+                    typed(float(values[0])),
+                    tuple(map(typed, own)),
+                    typed(lead),
+                    typed(late),
                 )
             )
         return tuple(plants)

@@ -33,7 +33,7 @@ _STANDSTILL: Final = 20
 """Rows of one and the same extreme value that are taken for a limit."""
 _UPSET: Final = 6.0
 """Standard deviations of its mean by which PV must leave the fit."""
-_UPSET_SHARE: Final = 0.15
+_UPSET_SHARE: Final = 0.1
 """Share of the PV's excursion below which leaving the fit does not spoil a test."""
 _DRIFT_SHARE: Final = 0.4
 
@@ -290,8 +290,9 @@ def _excursion(record: Record, best: Candidate) -> float:
 def _upsets(record: Record, best: Candidate) -> list[str]:
     """A stretch in which PV leaves the fit by more than noise does.
 
-    The mean of the residual over half a slowest time is compared with its own standard deviation
-    under the fitted noise; one stretch in 500 million does so by chance where noise is normal.
+    The mean of the residual over half a slowest time is compared with what noise that is as large
+    as the residual's row-to-row changes would make of it, and with PV's excursion: noise that
+    wanders by less than a tenth of that is noise, more of it is an upset.
     """
     residual = record.pv - best.fitted_pv
     rows = int(0.5 * _slowest(best, record) / record.interval)
@@ -299,12 +300,9 @@ def _upsets(record: Record, best: Candidate) -> list[str]:
     if len(residual) < 4 * rows:
         return []
     mean = np.convolve(residual, np.ones(rows) / rows, mode="valid")
-    memory = best.noise_time_s / record.interval if best.noise_time_s else 0.0
-    alike = min(float(rows), 1.0 + 2.0 * memory)
-    spread = best.residual_sd * math.sqrt(alike / rows)
-    if best.noise_time_s:
-        # Innovations were fitted; what wanders is larger than they are.
-        spread = max(spread, float(np.std(residual)) * math.sqrt(alike / rows))
+    # From the median, because an upset has large changes of its own.
+    noise = 1.4826 * float(np.median(np.abs(np.diff(residual)))) / math.sqrt(2.0)
+    spread = noise / math.sqrt(rows)
     at = int(np.argmax(np.abs(mean)))
     size = float(mean[at])
     if abs(size) < max(_UPSET * spread, _UPSET_SHARE * _excursion(record, best)):

@@ -173,6 +173,17 @@ def read_record(  # noqa: PLR0913 - one argument for each option of the command
     return _Assembly(table, dates, decimal).record(window, identity.sha256)
 
 
+def read_signal(path: str | os.PathLike[str], column: str) -> Record:
+    """One column of a CSV file as a record of which PV and OP both are that column.
+
+    Raises `RecordError` as `read_record` does.
+    """
+    table, identity = read_table(path, Wanted(pv=column, alone=True))
+    if not len(table.lines):
+        raise refused(table.path, None, "has headings and no rows", "give rows of values")
+    return _Assembly(table, None, None).record(Window(), identity.sha256)
+
+
 @dataclass(frozen=True)
 class Window:
     """The part of a record that is used."""

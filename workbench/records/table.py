@@ -91,6 +91,8 @@ class Wanted:
     mode: str | None = None
     quality: str | None = None
     """`none` leaves quality columns aside."""
+    alone: bool = False
+    """PV is the only column needed, and stands for OP too."""
 
 
 class Table:
@@ -437,7 +439,7 @@ def _layout(headings: list[str], wanted: Wanted, name: str, line: int) -> Layout
         columns = {"tag": tag, "value": value}
         roles: tuple[str, ...] = ("time",)
     else:
-        columns, roles = {}, tuple(COLUMN_NAMES)
+        columns, roles = {}, ("time", "pv") if wanted.alone else tuple(COLUMN_NAMES)
     for role in roles:
         given = getattr(wanted, role)
         index = None
@@ -455,6 +457,8 @@ def _layout(headings: list[str], wanted: Wanted, name: str, line: int) -> Layout
                 f"the column {quoted(headings[columns[role]])} is named as both {role} and {other}"
             )
             raise refused(name, line, what, f"name two columns; {_listed(headings)}")
+    if wanted.alone and "pv" in columns:
+        columns["op"] = columns["pv"]
     return Layout(headings, columns | _quality_columns(headings, columns, wanted, name, line))
 
 

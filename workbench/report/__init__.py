@@ -5,6 +5,7 @@ number wears its unit, and lines are wrapped to the width that is asked for.  JS
 of plain values: a figure that does not exist is `None` with its reason beside it.
 """
 
+from workbench.report.families import distance_lines
 from workbench.report.files import (
     between_data,
     between_text,
@@ -25,7 +26,13 @@ from workbench.report.loops import (
     response_csv,
     trend_csv,
 )
-from workbench.report.settings import convert_data, convert_text, propose_data, propose_text
+from workbench.report.settings import (
+    convert_data,
+    convert_text,
+    family_words,
+    propose_data,
+    propose_text,
+)
 from workbench.report.sheet import WIDTH as SHEET_WIDTH
 from workbench.report.sheet import sheet_text
 from workbench.report.survey import survey_data, survey_text
@@ -43,6 +50,8 @@ __all__ = [
     "check_text",
     "convert_data",
     "convert_text",
+    "distance_lines",
+    "family_words",
     "fit_data",
     "fit_text",
     "history_data",

@@ -16,13 +16,21 @@ if TYPE_CHECKING:
     from workbench.study import (
         Assessment,
         Evaluation,
+        FamilyFigures,
         LoopFigures,
         PlantFigures,
         Prediction,
         Reduced,
         Response,
+        Tolerance,
         Trend,
     )
+from workbench.report.families import (
+    family_data,
+    family_lines,
+    tolerance_data,
+    tolerance_lines,
+)
 from workbench.report.words import (
     Json,
     Rows,
@@ -46,8 +54,10 @@ def assess_data(
     found: Assessment,
     units: Mapping[str, str],
     small: Sequence[Reduced] | None = None,
+    family: FamilyFigures | None = None,
+    tolerance: Tolerance | None = None,
 ) -> Json:
-    """The assessment as `assess --json` prints it, with the small models where they are given."""
+    """The assessment as `assess --json` prints it, with what else was asked for."""
     plant = _plant_data(found.plant)
     if small is not None:
         plant["small_models"] = [_small_data(model) for model in small]
@@ -66,6 +76,9 @@ def assess_data(
     data["action"] = found.action
     if found.action is None:
         data["action_reason"] = missing
+    data |= family_data(family)
+    if tolerance is not None:
+        data |= tolerance_data(tolerance)
     data["notes"] = noted(found.notes)
     data["units"] = dict(units)
     return data
@@ -134,8 +147,10 @@ def assess_text(
     units: Mapping[str, str],
     width: int,
     small: Sequence[Reduced] | None = None,
+    family: FamilyFigures | None = None,
+    tolerance: tuple[Tolerance, Sequence[str]] | None = None,
 ) -> str:
-    """The assessment for people, with the small models where they are given."""
+    """The assessment for people, with what else was asked for; a tolerance map with its picture."""
     pv, op = units["pv"], units["op"]
     plant = found.plant
     rows: Rows = [("formula", plant.formula)]
@@ -167,7 +182,10 @@ def assess_text(
         lines += ["", wrapped("No controller is given, so no loop is judged.", width)]
     if found.sampled_reason:
         lines += ["", "Loop, sampled", *two_columns([("none", found.sampled_reason)], width)]
-    told = [note for note in found.notes if not note.text.startswith("NOT STABLE")]
+    lines += family_lines(family, units, width)
+    if tolerance is not None:
+        lines += tolerance_lines(*tolerance, width)
+    told = [note for note in found.notes if not note.text.startswith("NOT STABLE:")]
     return "\n".join([*lines, *note_lines(told, width)])
 
 
@@ -317,6 +335,7 @@ def predict_data(evaluation: Evaluation, prediction: Prediction, units: Mapping[
             "final_op": float(inner.output[-1]),
             "time_at_limit_s": inner.time_at_limit_s,
         }
+    data |= family_data(evaluation.family)
     data["notes"] = noted(evaluation.cautions)
     data["units"] = dict(units)
     return data
@@ -362,9 +381,10 @@ def predict_text(
         ]
         lines += ["", "Inner loop", *two_columns(rows, width)]
     lines += ["", *floor_lines(prediction, units, width)]
+    lines += family_lines(evaluation.family, units, width)
     if trend_file is not None:
         lines += ["", wrapped(f"The trend is in {trend_file}.", width)]
-    told = [note for note in evaluation.cautions if not note.text.startswith("NOT STABLE")]
+    told = [note for note in evaluation.cautions if not note.text.startswith("NOT STABLE:")]
     return "\n".join([*lines, *note_lines(told, width), *handover_lines(width)])
 
 

@@ -13,6 +13,7 @@ if TYPE_CHECKING:
     from workbench.study import (
         Conversion,
         Proposal,
+        TradeOff,
     )
 from workbench.report.files import settings_data
 from workbench.report.loops import heading
@@ -33,15 +34,31 @@ from workbench.report.words import (
 
 
 def propose_data(
-    case: Case, proposals: Sequence[Proposal], notes: Sequence[Note], units: Mapping[str, str]
+    case: Case,
+    proposals: Sequence[Proposal],
+    notes: Sequence[Note],
+    units: Mapping[str, str],
+    curves: TradeOff | None = None,
 ) -> Json:
     """The proposals as `propose --json` prints them."""
-    return {
+    data: Json = {
         "tag": case.loop.tag,
         "proposals": [_proposal_data(proposal) for proposal in proposals],
         "notes": noted(notes),
-        "units": dict(units),
+        "units": {**units, "noise_gain": "%/%"},
     }
+    if curves is not None:
+        data["trade_off"] = [_curve_data(method, curves) for method in curves.known]
+    return data
+
+
+def _curve_data(method: str, curves: TradeOff) -> Json:
+    """One curve: the best settings at each limit on Ms that can be kept."""
+    points = [
+        {"max_sensitivity_limit": point.limit, **_proposal_data(point.best)}
+        for point in curves.curves.get(method, ())
+    ]
+    return {"method": method, "points": points, "reason": curves.reasons.get(method, "")}
 
 
 def _proposal_data(proposal: Proposal) -> Json:
@@ -60,12 +77,44 @@ def _proposal_data(proposal: Proposal) -> Json:
     put(data, "gain", gain)
     put(data, "integral_s", integral_seconds(controller))
     put(data, "derivative_s", derivative_seconds(controller))
-    for key in ("max_sensitivity", "phase_margin_deg", "setpoint_iae", "load_iae"):
+    for key in _JUDGED:
         put(data, key, getattr(proposal, key))
+    put(data, "family_max_sensitivity_worst", over_family(proposal)[0])
+    put(data, "family_stable_percent", over_family(proposal)[1])
     data["within_limit"] = bool(proposal.within_limit)
     data["applies"] = bool(proposal.applies)
     data["reason"] = proposal.reason
     return data
+
+
+_JUDGED: Final = (
+    "max_sensitivity",
+    "max_complementary_sensitivity",
+    "phase_margin_deg",
+    "noise_gain",
+    "setpoint_iae",
+    "load_iae",
+    "load_travel",
+)
+"""Figures of a proposal."""
+
+
+def over_family(proposal: Proposal) -> tuple[Figure, Figure]:
+    """The worst Ms over the family of plants, and the share of it that is stable [%]."""
+    family = proposal.family
+    if family is None or family.reason:
+        reason = family.reason if family else proposal.reason or "the case states no family"
+        return Figure(None, reason), Figure(None, reason)
+    return family.figures["max_sensitivity"].worst, Figure(family.stable_percent)
+
+
+def family_words(proposal: Proposal) -> str:
+    """The same in words; nothing where there is no family."""
+    worst, share = over_family(proposal)
+    if share.value is None:
+        return ""
+    said = f"stable with {text(share.value, '%', digits=3)} of the family"
+    return said if worst.value is None else f"{said}, worst Ms {text(worst.value, digits=3)}"
 
 
 def propose_text(
@@ -74,12 +123,15 @@ def propose_text(
     notes: Sequence[Note],
     units: Mapping[str, str],
     width: int,
+    curves: TradeOff | None = None,
 ) -> str:
     """The proposals for people: one table, what does not apply, and where each comes from."""
     lines = heading(case, width)
     fitting = [proposal for proposal in proposals if proposal.applies]
     if fitting:
         lines += _proposal_table(fitting, units, width)
+    if curves is not None:
+        lines += _trade_off_table(curves, units)
     if not any(proposal.method != "present" for proposal in fitting):
         lines += ["", "No method gives settings for this loop."]
     lines += _grouped(
@@ -88,6 +140,9 @@ def propose_text(
     remarks = [(p.method, p.reason) for p in fitting if p.reason]
     if remarks:
         lines += ["", "Remarks", *two_columns(remarks, width)]
+    over = [(p.method, family_words(p)) for p in fitting if family_words(p)]
+    if over:
+        lines += ["", "Over the family of plants", *two_columns(over, width)]
     rules = [proposal for proposal in fitting if proposal.method != "present"]
     lines += _grouped("Aims", [(f"{p.objective}; for {p.limits}", p.method) for p in rules], width)
     lines += _grouped("Sources", [(p.source, p.method) for p in rules], width)
@@ -117,37 +172,59 @@ def _proposal_table(
         for proposal in proposals
     ]
     judged = [
-        [
-            text(figure.value, digits=3)
-            for figure in (
-                proposal.max_sensitivity,
-                proposal.phase_margin_deg,
-                proposal.setpoint_iae,
-                proposal.load_iae,
-            )
-        ]
-        for proposal in proposals
+        [text(getattr(proposal, key).value, digits=3) for key in _JUDGED] for proposal in proposals
     ]
-    settings_head = [["", "gain", "integral", "derivative"], ["method", "%/%", "", ""]]
     area = f"{units['pv']} s"
-    judged_head = [
-        ["max.", "phase", "setpoint", "load"],
-        ["sens.", "margin", "IAE", "IAE"],
-        ["", "deg", area, area],
-    ]
-    wide = grid(
-        [
-            ["", "", "", "", *judged_head[0]],
-            [*settings_head[0], *judged_head[1]],
-            [*settings_head[1], *judged_head[2]],
-        ],
-        [[*left, *right] for left, right in zip(settings, judged, strict=True)],
-    )
-    if max(len(line) for line in wide) <= width:
-        return wide
-    below = [[one[0], *right] for one, right in zip(settings, judged, strict=True)]
-    heads = [["", *judged_head[0]], ["", *judged_head[1]], ["method", *judged_head[2]]]
-    return [*grid(settings_head, settings), "", *grid(heads, below)]
+    named = [("", "", "method")]
+    set_to = [("", "gain", "%/%"), ("", "integral", ""), ("", "derivative", "")]
+    loop = [("", "Ms", ""), ("", "Mt", ""), ("", "PM", "deg"), ("noise", "gain", "%/%")]
+    answers = [("setpoint", "IAE", area), ("load", "IAE", area), ("load", "travel", units["op"])]
+    head = [*named, *set_to, *loop, *answers]
+    rows = [[*left, *right] for left, right in zip(settings, judged, strict=True)]
+    # Side by side, or in parts below each other, each with the names again.
+    for parts in ((range(1, 11),), (range(1, 4), range(4, 11)), _PARTS):
+        tables = [
+            grid(
+                [list(line) for line in zip(*(head[i] for i in (0, *part)), strict=True)],
+                [[row[i] for i in (0, *part)] for row in rows],
+            )
+            for part in parts
+        ]
+        if max(len(line) for table in tables for line in table) <= width:
+            break
+    lines = [line for table in tables for line in ("", *table)]
+    return lines[1:]
+
+
+_PARTS: Final = (range(1, 4), range(4, 8), range(8, 11))
+"""Columns of settings, of margins and of answers."""
+
+
+def _trade_off_table(curves: TradeOff, units: Mapping[str, str]) -> list[str]:
+    """What caution costs: gain and load IAE of the best at each limit on the sensitivity."""
+    limits = sorted({point.limit for curve in curves.curves.values() for point in curve})
+    found = {
+        method: {point.limit: point.best for point in curve}
+        for method, curve in curves.curves.items()
+    }
+    lines = ["", "Trade-off between speed and caution: the best at each limit on Ms"]
+    if limits:
+        head = [["", *(word for method in found for word in (method, method))]]
+        head += [["Ms", *(word for _ in found for word in ("gain", "load IAE"))]]
+        head += [["", *(word for _ in found for word in ("%/%", f"{units['pv']} s"))]]
+        rows = []
+        for limit in limits:
+            row = [text(limit)]
+            for points in found.values():
+                best = points.get(limit)
+                gain = None if best is None or not best.controller else best.controller.gain_value
+                iae = None if best is None else best.load_iae.value
+                row += [
+                    text(value, digits=4) if value is not None else "-" for value in (gain, iae)
+                ]
+            rows.append(row)
+        lines += grid(head, rows)
+    return lines + [f"  {method}: {words}" for method, words in curves.reasons.items()]
 
 
 def convert_data(case: Case, found: Conversion, units: Mapping[str, str]) -> Json:

@@ -23,6 +23,7 @@ from workbench.screens.record import RecordPage
 from workbench.screens.saving import DraftPage, LeavePage, SavePage
 from workbench.screens.start import StartPage
 from workbench.screens.terminal import ASKED_TO_END, Guard, TolerantDriver, abilities
+from workbench.screens.tolerance import TolerancePage
 from workbench.screens.work import Work
 
 
@@ -105,6 +106,10 @@ class WorkbenchApp(App[None], inherit_bindings=False):
     def show_proposals(self, work: Work) -> None:
         """Settings by rules."""
         self.push_screen(ProposalsPage(work))
+
+    def show_tolerance(self, work: Work) -> None:
+        """What the settings survive."""
+        self.push_screen(TolerancePage(work))
 
     def show_save(self, work: Work, *, and_then_leave: bool = False) -> None:
         """Ask who and why, then save."""

@@ -217,6 +217,11 @@ TONES: Final = (
     "output",
     "record",
     "fit",
+    "best-pi",
+    "best-pid",
+    "rule",
+    "present",
+    "chosen-point",
 )
 """Every way words and curves are shown; colours are in the stylesheet, one class for each."""
 

@@ -74,8 +74,20 @@ LABEL = 18
 SHORTER = {
     "plant.second_time_constant": "2nd time constant",
     "op.valve_closes_on_rise": "OP closes on rise",
+    "valve.resolution": "valve resolution",
+    "valve.table": "valve table",
+    "measurement.lag": "sensor lag",
+    "measurement.resolution": "sensor resolution",
+    "measurement.clips": "sensor clips",
+    "compensation.model": "compensator model",
+    "compensation.time_unit": "model time unit",
+    "feedforward.dead_time": "its dead time",
+    "inner.derivative_filter": "inner der. filter",
+    "inner.setpoint_weight": "inner SP weight",
+    "inner.derivative_on": "inner der. on",
+    "scenario.inner_mode": "inner mode then",
 }
-"""Names too long for the column of labels."""
+"""Names too long for the column of labels, or the same as another beside them."""
 
 
 def label_of(key: str) -> str:
@@ -84,6 +96,8 @@ def label_of(key: str) -> str:
         return SHORTER[key]
     table, _, name = key.partition(".")
     words = name.replace("_", " ")
+    if table in ("feedforward", "inner", "family"):
+        return f"{table} {words}"
     return f"{table.upper()} {words}" if table in ("pv", "op") else words
 
 

@@ -27,6 +27,8 @@ class Row:
     """`PV`, `OP` and `time` are put into the loop's own words."""
     better: Better = ""
     """Which way is better; empty where neither is."""
+    name: str = ""
+    """Of the same figure over a family of plants; empty where there is none."""
     above: Callable[[Evaluation], Figure | None] | None = None
     """Of a floor: the present figure as a multiple of it."""
 
@@ -57,13 +59,14 @@ class FiguresPanel(Panel):
         now, was = self.work.evaluation, self.work.pinned
         if now is None:
             return wrapped(self.work.fault or "computing", width, "quiet", " ")
-        lines = self._verdict(now, width)
+        lines = [*self._verdict(now, width), *self._over_family(now, width)]
         for row in FIGURES:
             figure = row.read(now)
             if figure is None:
                 continue
             earlier = row.read(was) if was is not None and was is not now else None
             lines.append(self._line(row, figure, earlier, row.above(now) if row.above else None))
+        lines += self._family(now, width)
         for note in now.cautions:
             if note.severity == "info":
                 lines += wrapped(note.text, width, "quiet", " ")
@@ -81,6 +84,33 @@ class FiguresPanel(Panel):
         if loop.margins.stable:
             return [((f" stable ({which})", "good"),)]
         return wrapped(f"UNSTABLE ({which}): {loop.margins.reason}", width, "worse", " ")
+
+    def _over_family(self, now: Evaluation, width: int) -> list[Line]:
+        """In one line whether the family is stable too."""
+        family = now.family
+        if family is None or family.reason:
+            return []
+        share = units.text(family.stable_percent, "%", digits=3)
+        said = f"family of {family.plants}: {share} stable"
+        worst = family.figures["max_sensitivity"].worst
+        if worst.value is not None:
+            said += f", worst Ms {units.text(worst.value, digits=3)}"
+        return wrapped(said, width, "good" if family.stable_percent == 100.0 else "worse", " ")
+
+    def _family(self, now: Evaluation, width: int) -> list[Line]:
+        """The same figures over the family of plants: 95 % of them are not worse than that."""
+        family = now.family
+        if family is None or family.reason:
+            return []
+        lines: list[Line] = [((f" {'family':<15}{'nominal':<10}{'95 %':<10}worst", "label"),)]
+        for row in FIGURES:
+            among = family.figures.get(row.name)
+            if among is None:
+                continue
+            each = (among.nominal, among.at_95, among.worst)
+            cells = "".join(_among(figure).ljust(10) for figure in each).rstrip()
+            lines.append(((f" {row.label}".ljust(16), "label"), (cells, "plain")))
+        return [*lines, *wrapped(f"worst: {family.worst_plant}", width, "quiet", " ")]
 
     def _line(
         self, row: Row, figure: Figure, earlier: Figure | None, above: Figure | None = None
@@ -100,6 +130,12 @@ class FiguresPanel(Panel):
         own = {"PV": self.work.case.pv.unit, "OP": self.work.case.op.unit}
         unit = " ".join(own.get(part, part) for part in row.unit.split())
         return units.text(value, unit)
+
+
+def _among(figure: Figure) -> str:
+    if figure.value is None:
+        return "unstable" if "not stable" in figure.reason else "none"
+    return units.text(figure.value, digits=3)
 
 
 def compared(row: Row, now: Figure, earlier: Figure | None) -> tuple[str, str]:
@@ -173,16 +209,22 @@ def _own_gain(evaluation: Evaluation) -> Figure | None:
 
 
 FIGURES: Final = (
-    Row("Sensitivity Ms", _margin("max_sensitivity"), "", "lower"),
-    Row("Gain margin", _margin("gain_margin"), "", "higher"),
-    Row("Phase margin", _margin("phase_margin_deg"), "deg", "higher"),
+    Row("Sensitivity Ms", _margin("max_sensitivity"), "", "lower", "max_sensitivity"),
+    Row("Gain margin", _margin("gain_margin"), "", "higher", "gain_margin"),
+    Row("Phase margin", _margin("phase_margin_deg"), "deg", "higher", "phase_margin_deg"),
     Row("Delay margin", _margin("delay_margin_s"), "time", "higher"),
-    Row("Load IAE", _measure("load_iae"), "PV s", "lower"),
-    Row("Load peak", _measure("load_peak_deviation"), "PV", "lower"),
-    Row("SP overshoot", _measure("setpoint_overshoot_percent"), "%", "lower"),
+    Row("Load IAE", _measure("load_iae"), "PV s", "lower", "load_iae"),
+    Row("Load peak", _measure("load_peak_deviation"), "PV", "lower", "load_peak_deviation"),
+    Row(
+        "SP overshoot",
+        _measure("setpoint_overshoot_percent"),
+        "%",
+        "lower",
+        "setpoint_overshoot_percent",
+    ),
     Row("SP settling", _measure("setpoint_settling_time_s"), "time", "lower"),
     Row("Load settling", _measure("load_settling_time_s"), "time", "lower"),
-    Row("SP IAE", _measure("setpoint_iae"), "PV s", "lower"),
+    Row("SP IAE", _measure("setpoint_iae"), "PV s", "lower", "setpoint_iae"),
     Row("SP rise", _measure("setpoint_rise_time_s"), "time", "lower"),
     Row("OP travel", _measure("output_travel"), "OP", "lower"),
     Row("OP reversals", _measure("output_reversals"), "", "lower"),

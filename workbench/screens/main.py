@@ -22,12 +22,14 @@ from workbench.screens.entry import Entry
 from workbench.screens.fields import FieldsPanel, label_of
 from workbench.screens.figures import FiguresPanel
 from workbench.screens.history import HistoryPanel, changed_by
+from workbench.screens.instruments import InstrumentsPanel
 from workbench.screens.keys import Command, bindings
 from workbench.screens.page import HELP, MOVING, Page
 from workbench.screens.panel import Panel
 from workbench.screens.plant import PlantPanel
 from workbench.screens.ranges import LoopPanel
 from workbench.screens.scenario import ScenarioPanel
+from workbench.screens.structure import StructurePanel
 from workbench.screens.trend import TrendPanel
 from workbench.screens.work import LARGE, SMALL, Work
 from workbench.study import Evaluation
@@ -44,8 +46,14 @@ BURST_S: Final = 0.015
 LONG_S: Final = 0.7
 """Time after which it is said that answers are still being computed [s]."""
 
+LEAST: Final = 8
+"""Rows that are kept for the lower panel of a pair, where there is less room than both want."""
+
 LEFT: Final = 36
 """Columns of the settings where panels share their places."""
+
+
+CHOOSE: Final = "choose a setting first, in a panel of settings: 1, 2, 6, 7, 8, 9"
 
 
 class CaseChanged(Message):
@@ -73,7 +81,7 @@ class DraftFailed(Message):
 
 
 class MainPage(Page):
-    """Plant, Controller, Trend, Figures, History, Scenario, Loop."""
+    """Plant, Controller, Trend, Figures, History, Scenario, Loop, Instruments, Structure."""
 
     about = (
         "Choose a setting with the arrows and press Enter to type another value, or nudge it. Each "
@@ -87,13 +95,13 @@ class MainPage(Page):
         Command("minus", "-", "", f"nudge({1 / SMALL})", "2 % down, or the choice before"),
         Command("greater_than_sign,full_stop", ">", "", f"nudge({LARGE})", "20 % up", "."),
         Command("less_than_sign,comma", "<", "", f"nudge({1 / LARGE})", "20 % down", ","),
-        Command("", "+-", "2%", "", ""),
-        Command("", "<>", "20%", "", ""),
+        Command("", "+-<>", "step", "", ""),
         Command("p,f5", "p", "pin", "pin", "pin the present prediction for comparison", "F5"),
         Command("u,f6", "u", "undo", "undo", "undo the last change", "F6"),
         Command("y,f7", "y", "redo", "redo", "redo what was undone", "F7"),
-        Command("r,f3", "r", "record", "record", "fit the plant to a test record", "F3"),
+        Command("r,f3", "r", "fit", "record", "fit the plant to a test record", "F3"),
         Command("o,f8", "o", "propose", "proposals", "best settings and published rules", "F8"),
+        Command("t,f10", "t", "map", "tolerance", "how much plant error the loop survives", "F10"),
         Command("s,f2", "s", "save", "save", "save with a reason", "F2"),
         Command("z,f9", "z", "zoom", "zoom", "the focused panel alone, and back", "F9"),
         Command("q,ctrl+c", "q", "leave", "leave", "leave; asks about unsaved work", "ctrl+c"),
@@ -108,6 +116,8 @@ class MainPage(Page):
                 HistoryPanel,
                 ScenarioPanel,
                 LoopPanel,
+                InstrumentsPanel,
+                StructurePanel,
             )
         ),
         Command("tab", "Tab", "", "app.focus_next", "to the next panel"),
@@ -123,13 +133,13 @@ class MainPage(Page):
             kind.number: kind(work, css_id=f"panel-{kind.number}") for kind in PANELS
         }
         panels = self.panels
-        self._left = Vertical(*(panels[number] for number in "1267"), id="left")
+        self._left = Vertical(*(panels[number] for number in SETTINGS), id="left")
         self._divider = Divider()
         self._lower = Horizontal(panels["4"], panels["5"], id="lower")
         self._right = Vertical(panels["3"], self._lower, id="right")
         self.editor = Editor(work)
         """The entry over the settings."""
-        self._in_view = {"left": "1", "lower": "4"}
+        self._in_view = {"left": "1", "more": "6", "lower": "4"}
         self._zoomed = ""
         self._evaluating: Case | None = None
         self._answered: Case | None = None
@@ -179,16 +189,17 @@ class MainPage(Page):
         shown = set(self.panels)
         if self._zoomed:
             shown = {self._zoomed}
-        elif not roomy:
-            settings = {"1", "2"} if self._in_view["left"] in "12" else {"6", "7"}
-            shown = {"3", self._in_view["lower"], *settings}
+        elif roomy:
+            shown = {*"12345", *_pair_of(self._in_view["more"])}
+        else:
+            shown = {"3", self._in_view["lower"], *_pair_of(self._in_view["left"])}
+        partners = {} if self._zoomed else ROOMY_PARTNERS if roomy else PARTNERS
         for number, panel in self.panels.items():
             panel.display = number in shown
-            partner = PARTNERS.get(number, "")
-            alone = not roomy and not self._zoomed and partner
-            panel.elsewhere = (f"{partner} {self.panels[partner].title}",) if alone else ()
+            partner = partners.get(number, "")
+            panel.elsewhere = (f"{partner} {self.panels[partner].title}",) if partner else ()
         left, right = self._left, self._right
-        left.display = bool(shown & set("1267"))
+        left.display = bool(shown & set(SETTINGS))
         right.display = bool(shown & set("345"))
         self._lower.display = bool(shown & set("45"))
         self._divider.display = left.display and right.display
@@ -198,13 +209,18 @@ class MainPage(Page):
         self._set_heights(shown, roomy)
 
     def _set_heights(self, shown: set[str], roomy: bool) -> None:
-        settings = [number for number in "1267" if number in shown]
+        settings = [number for number in SETTINGS if number in shown]
         for number in settings:
             panel = self.panels[number]
             assert isinstance(panel, FieldsPanel)
             formula = 2 if number == "1" and roomy else 0
-            last = number == settings[-1]
-            panel.styles.height = "1fr" if last else panel.wanted_height + formula
+            wanted: int | str = panel.wanted_height + formula
+            if number == settings[-1] or (roomy and number not in "12"):
+                # Where two pairs stand one above the other, the lower one shares what is left.
+                wanted = "1fr"
+            elif not roomy:
+                wanted = min(panel.wanted_height, self.size.height - 3 - LEAST)
+            panel.styles.height = wanted
         self.panels["3"].styles.height = "1fr" if self._zoomed else "12fr"
         self._lower.styles.height = "1fr" if self._zoomed else "9fr"
 
@@ -310,9 +326,11 @@ class MainPage(Page):
 
     def action_panel(self, number: str) -> None:
         """Bring a panel into view and give it the keys."""
-        place = "lower" if number in "45" else "left" if number in "1267" else ""
-        if place:
-            self._in_view[place] = number
+        if number in "45":
+            self._in_view["lower"] = number
+        elif number in SETTINGS:
+            self._in_view["left"] = number
+            self._in_view["more"] = number if number not in "12" else self._in_view["more"]
         if self._zoomed:
             self._zoomed = number
         self._arrange()
@@ -332,7 +350,7 @@ class MainPage(Page):
         elif isinstance(panel, HistoryPanel):
             self._put_back(panel.chosen())
         else:
-            self.tell("choose a setting first: 1 Plant, 2 Controller, 6 Scenario, 7 Loop")
+            self.tell(CHOOSE)
 
     def _put_back(self, entry: Revision | None) -> None:
         """The way back to earlier settings, in one change."""
@@ -355,7 +373,7 @@ class MainPage(Page):
         """Change the chosen setting by a share."""
         panel = self.focused_list()
         if not isinstance(panel, FieldsPanel):
-            self.tell("choose a setting first: 1 Plant, 2 Controller, 6 Scenario, 7 Loop")
+            self.tell(CHOOSE)
             return
         key = panel.key
         try:
@@ -394,6 +412,13 @@ class MainPage(Page):
     def action_proposals(self) -> None:
         """Open the Proposals page."""
         self.program.show_proposals(self.work)
+
+    def action_tolerance(self) -> None:
+        """Open the Tolerance page."""
+        if self.work.case.controller is None:
+            self.tell("the map needs a controller: give its gain in 2 Controller")
+            return
+        self.program.show_tolerance(self.work)
 
     def action_save(self) -> None:
         """Open the Save page."""
@@ -459,6 +484,11 @@ class MainPage(Page):
         self._greeting = (words, tone)
 
 
+def _pair_of(number: str) -> str:
+    """The pair of panels to which one belongs."""
+    return next(pair for pair in PAIRS if number in pair)
+
+
 PANELS: Final[tuple[type[Panel], ...]] = (
     PlantPanel,
     ControllerPanel,
@@ -467,8 +497,19 @@ PANELS: Final[tuple[type[Panel], ...]] = (
     HistoryPanel,
     ScenarioPanel,
     LoopPanel,
+    InstrumentsPanel,
+    StructurePanel,
 )
 """Every panel of the main page, in the order of its key."""
 
-PARTNERS: Final = {"1": "6", "6": "1", "2": "7", "7": "2", "4": "5", "5": "4"}
-"""Panels that share a place where there is not room for all."""
+PAIRS: Final = ("12", "67", "89")
+"""Panels of settings that are shown together; each pair takes the place of another."""
+
+SETTINGS: Final = "".join(PAIRS)
+"""Panels of settings, from top to bottom."""
+
+PARTNERS: Final = {"1": "6", "2": "7", "6": "8", "7": "9", "8": "1", "9": "2", "4": "5", "5": "4"}
+"""The panel that comes next in the place of another where there is not room for all."""
+
+ROOMY_PARTNERS: Final = {"6": "8", "7": "9", "8": "6", "9": "7"}
+"""The same where there is more room."""

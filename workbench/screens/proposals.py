@@ -5,20 +5,24 @@ from __future__ import annotations
 from collections.abc import Iterable
 from typing import Final
 
+from textual import on
 from textual.message import Message
 from textual.widget import Widget
-from textual.worker import Worker, WorkerState
+from textual.worker import Worker, WorkerState, get_current_worker
 
-from workbench import study, units
+from workbench import report, study, units
 from workbench.case.case import Case
 from workbench.errors import WorkbenchError
 from workbench.model.pid import Controller
 from workbench.screens.cells import Line
+from workbench.screens.entry import Entry
 from workbench.screens.keys import Command, bindings
 from workbench.screens.page import HELP, MOVING, Page
 from workbench.screens.panel import Panel, remark, wrapped
+from workbench.screens.trade_off import TradeOffPicture
+from workbench.screens.wishes import Wishes, label_of
 from workbench.screens.work import Work
-from workbench.study import Proposal
+from workbench.study import Proposal, TradeOff, Wish
 from workbench.units import Amount, Figure
 
 COLUMNS: Final = "{:<31}{:<8}{:<9}{:<9}{:>5}{:>4}{:>7}{:>7}"
@@ -28,9 +32,17 @@ COLUMNS: Final = "{:<31}{:<8}{:<9}{:<9}{:>5}{:>4}{:>7}{:>7}"
 class Proposed(Message):
     """Posted when the proposals are there, or why there are none."""
 
-    def __init__(self, case: Case, rows: tuple[Proposal, ...], fault: str = "") -> None:
+    def __init__(self, ticket: int, rows: tuple[Proposal, ...], fault: str = "") -> None:
         super().__init__()
-        self.case, self.rows, self.fault = case, rows, fault
+        self.ticket, self.rows, self.fault = ticket, rows, fault
+
+
+class TradedOff(Message):
+    """Posted when the trade-off is there, or why there is none."""
+
+    def __init__(self, ticket: int, found: TradeOff | None, fault: str = "") -> None:
+        super().__init__()
+        self.ticket, self.found, self.fault = ticket, found, fault
 
 
 class ProposalTable(Panel):
@@ -41,13 +53,17 @@ class ProposalTable(Panel):
     help = (
         "Settings in the form and units of this controller. Ms is the maximum sensitivity (below "
         "1.6 is calm, above 2 is nervous), PM the phase margin, IAE the integral of the absolute "
-        "error after the load step and after the setpoint step of the scenario.",
-        "The present settings come first; then the rules that apply, the quickest calm one first.",
+        "error after the load step and after the setpoint step of the scenario, without noise.",
+        "The present settings come first; then what keeps the limits, the quickest first; then "
+        "the rest. Below the list stands what the chosen line aims at, and its other figures: Mt, "
+        "how much OP swings with the noise of the measurement, and how far it moves after a load.",
     )
 
     def __init__(self, work: Work) -> None:
         super().__init__(work, css_id="proposals")
         self.rows: tuple[Proposal, ...] = ()
+        self.is_brief = False
+        """Something else has the room of the lines at the foot."""
 
     @property
     def chosen(self) -> Proposal | None:
@@ -113,20 +129,39 @@ class ProposalTable(Panel):
         if chosen is None:
             return []
         lines: list[Line] = [(("─" * width, "frame"),)]
+        lines += wrapped(self._other_figures(chosen), width)
+        if self.is_brief:
+            return [*lines, (), ()][:3]
         if chosen.reason:
             lines += remark(chosen.reason, width, "caution")[:2]
+        if over := report.family_words(chosen):
+            lines += wrapped(f"{over}.", width)
         aim = f" aims at {chosen.objective}; for {chosen.limits}." if chosen.objective else ""
         lines += wrapped(f"{chosen.title}{':' if aim else ','}{aim} {chosen.source}", width)
         # A fixed height, so that the list does not jump as the cursor moves.
-        return [*lines, *[()] * 8][:8]
+        return [*lines, *[()] * 9][:9]
+
+    def _other_figures(self, proposal: Proposal) -> str:
+        """The figures that have no column."""
+        travel = _with_unit(proposal.load_travel, self.work.case.op.unit)
+        told = [
+            f"Mt {_figure(proposal.max_complementary_sensitivity, 3)}",
+            f"noise gain {_with_unit(proposal.noise_gain, '%/%')}",
+            f"travel after the load step {travel}",
+        ]
+        return f" {proposal.method}: {', '.join(told)}" if proposal.controller else ""
 
 
 def _figure(figure: Figure, digits: int) -> str:
     return "-" if figure.value is None else units.text(figure.value, digits=digits)
 
 
+def _with_unit(figure: Figure, unit: str) -> str:
+    return "-" if figure.value is None else units.text(figure.value, unit, digits=3)
+
+
 class ProposalsPage(Page):
-    """Look at proposals, take one."""
+    """Look at proposals, say what they should aim at, take one."""
 
     about = (
         "Every rule is worked out for this plant and judged on this loop, with its scan interval "
@@ -134,8 +169,12 @@ class ProposalsPage(Page):
         "back. Where settings and plant part, so do the figures: look at the trend.",
     )
     commands = (
-        Command("enter,a", "Enter", "take the settings", "take", "take the chosen settings", "a"),
-        Command("escape,q", "Esc", "back", "back", "back to the loop", "q"),
+        Command(
+            "enter,a", "Enter", "take/edit", "take", "take the settings, or edit the wish", "a"
+        ),
+        Command("w", "w", "wishes", "wishes", "what proposals aim at, and their limits"),
+        Command("t", "t", "trade-off", "trade_off", "what caution costs, as a picture"),
+        Command("escape,q", "Esc", "back", "back", "back to the list, or to the loop", "q"),
         HELP,
         *MOVING,
     )
@@ -145,6 +184,10 @@ class ProposalsPage(Page):
         super().__init__()
         self.work = work
         self.table = ProposalTable(work)
+        self.picture = TradeOffPicture(work)
+        self.wishes = Wishes(work)
+        self.entry = Entry(css_id="wish")
+        self._ticket = 0
 
     def head(self) -> Line:
         """The loop, and the units of the figures."""
@@ -152,33 +195,80 @@ class ProposalsPage(Page):
         return ((f" {loop.tag}  {loop.service}", "title"), ("  proposals", "quiet"))
 
     def body(self) -> Iterable[Widget]:
-        """The table."""
-        yield self.table
+        """The picture, the table, the wishes, and the entry of one."""
+        yield from (self.picture, self.table, self.wishes, self.entry)
 
     def on_mount(self) -> None:
         """Work the rules out in a thread."""
         super().on_mount()
+        for widget in (self.picture, self.wishes, self.entry):
+            widget.display = False
         self.table.focus()
-        self.tell("working out the rules ...")
-        case = self.work.case
-        self.run_worker(lambda: self._propose(case), thread=True, exit_on_error=False)
+        self._begin()
 
-    def _propose(self, case: Case) -> None:
+    def on_unmount(self) -> None:
+        """Nobody waits for a search any more."""
+        self.workers.cancel_node(self)
+
+    # -- working out ------------------------------------------------------------------------------
+
+    def _begin(self) -> None:
+        """Work everything out anew; what is being worked out is stopped, and dropped."""
+        self.workers.cancel_node(self)
+        self._ticket += 1
+        ticket, case, wish = self._ticket, self.work.case, self.work.wish
+        self.tell("working out the rules ...")
+        self.picture.found = None
+        self.run_worker(lambda: self._propose(ticket, case, wish), thread=True, exit_on_error=False)
+
+    def _propose(self, ticket: int, case: Case, wish: Wish) -> None:
+        worker = get_current_worker()
         try:
-            self.post_message(Proposed(case, study.propose(case)))
+            rows = study.propose(case, wish, lambda: worker.is_cancelled)
         except WorkbenchError as fault:
-            self.post_message(Proposed(case, (), str(fault)))
+            self.post_message(Proposed(ticket, (), str(fault)))
+        else:
+            self.post_message(Proposed(ticket, rows))
 
     def on_proposed(self, message: Proposed) -> None:
         """Show them."""
-        self.table.rows = message.rows
+        if message.ticket != self._ticket:
+            return
+        self.table.rows = self.picture.rows = message.rows
         if message.fault:
             self.tell(f"{message.fault}", "worse")
-        else:
+        elif not self.entry.display:
+            # What is wrong with a wish being typed stays to be read.
             self.tell(f"{self._units()}", "quiet")
         # The present settings are the first line, the best proposal the second.
         self.table.cursor = min(1, max(0, len(message.rows) - 1))
-        self.table.redraw()
+        self.moved()
+        if self.picture.display:
+            self._begin_trade_off()
+
+    def _begin_trade_off(self) -> None:
+        ticket, case, wish = self._ticket, self.work.case, self.work.wish
+        self.run_worker(
+            lambda: self._trade_off(ticket, case, wish), thread=True, exit_on_error=False
+        )
+
+    def _trade_off(self, ticket: int, case: Case, wish: Wish) -> None:
+        worker = get_current_worker()
+        try:
+            found = study.trade_off(case, wish, lambda: worker.is_cancelled)
+        except WorkbenchError as fault:
+            self.post_message(TradedOff(ticket, None, str(fault)))
+        else:
+            self.post_message(TradedOff(ticket, found))
+
+    def on_traded_off(self, message: TradedOff) -> None:
+        """Draw it."""
+        if message.ticket != self._ticket:
+            return
+        if message.fault:
+            self.tell(f"{message.fault}", "worse")
+        self.picture.found = message.found
+        self.picture.redraw()
 
     def _units(self) -> str:
         """In which units the columns are."""
@@ -195,8 +285,66 @@ class ProposalsPage(Page):
             fault = event.worker.error
             self.tell(f"could not be worked out ({type(fault).__name__}: {fault})", "worse")
 
+    # -- keys -------------------------------------------------------------------------------------
+
+    def moved(self) -> None:
+        """Mark the chosen line in the picture."""
+        self.picture.chosen = self.table.chosen
+        self.table.redraw()
+        self.picture.redraw()
+        self.wishes.redraw()
+
+    def action_trade_off(self) -> None:
+        """Show or hide the picture; the wishes make room for it."""
+        self.picture.display = not self.picture.display
+        self.wishes.display = False
+        self.table.is_brief = self.picture.display
+        self.table.focus()
+        self.moved()
+        if self.picture.display and self.picture.found is None and self.table.rows:
+            self._begin_trade_off()
+
+    def action_wishes(self) -> None:
+        """Show or hide the wishes; the picture makes room for them."""
+        self.wishes.display = not self.wishes.display
+        self.picture.display = False
+        self.table.is_brief = self.wishes.display
+        (self.wishes if self.wishes.display else self.table).focus()
+        self.moved()
+
+    def action_back(self) -> None:
+        """From the wishes to the list, and from there to the loop."""
+        if self.wishes.display:
+            self.action_wishes()
+        else:
+            super().action_back()
+
+    @on(Entry.Submitted)
+    def typed(self, message: Entry.Submitted) -> None:
+        """Change the wish, or say what is wrong with it."""
+        try:
+            changed = self.wishes.edit(message.value)
+        except WorkbenchError as fault:
+            self.tell(f"{fault}", "worse")
+            return
+        self.left()
+        if changed:
+            self._begin()
+
+    @on(Entry.Left)
+    def left(self) -> None:
+        """Back to the list of wishes."""
+        self.entry.display = False
+        self.wishes.focus()
+
     def action_take(self) -> None:
-        """Take the chosen settings."""
+        """Take the chosen settings, or edit the chosen wish."""
+        if self.wishes.has_focus:
+            name = self.wishes.name_chosen
+            self.entry.ask(f"  {label_of(name)}:", study.show_wish(self.work.wish, name))
+            self.entry.display = True
+            self.entry.focus()
+            return
         chosen = self.table.chosen
         if chosen is None:
             return

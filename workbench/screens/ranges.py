@@ -10,10 +10,11 @@ class LoopPanel(FieldsPanel):
 
     number = "7"
     title = "Loop"
-    tables = ("loop", "pv", "op", "valve", "measurement")
+    tables = ("loop", "pv", "op", "family")
     help = (
         "The loop's tag and service, and the range, the operating point and the limits of PV and "
         "OP in engineering units.",
-        "What the valve makes of OP, and how PV is measured; a healthy valve and a plain sensor "
-        "where nothing is set.",
+        "The family is the plants that the loop must put up with beside the nominal one: "
+        "tolerances of its gain, dead time and lags, operating points, further plants. Every "
+        "figure is then given for all of them too.",
     )

@@ -36,6 +36,8 @@ class Work:
         self.fault = ""
         """Why there is no evaluation of the present case."""
         self.pinned: Evaluation | None = None
+        self.wish = study.Wish()
+        """What proposals aim at, until the case is closed."""
         self._before: list[Case] = []
         self._after: list[Case] = []
         self.keeper = drafts.Keeper(self.path)

@@ -236,6 +236,11 @@ def _echoes(eq: Equations, event: tuple[float, int], until: float) -> set[float]
     return found
 
 
+def powers(nodes: Array) -> Array:
+    """Values at the nodes of a piece as coefficients in rising powers of the share of it."""
+    return np.asarray(_TO_POWERS @ nodes, np.float64)
+
+
 # --- the piece -----------------------------------------------------------------------------------
 
 

@@ -49,7 +49,7 @@ def passage(
     """The passage of a loop through its events, scan by scan or in leaps.
 
     `made` gives the algorithm of a loop, the sampled one where it is left out; `by` is executed in
-    its place while the loop is in automatic.
+    its place, and sees to changes of mode and of settings itself.
     """
     scans = clock.place(events.until)[0] + 1
     held, made = Held(whole, clock), made or (lambda one: Algorithm.of(one, clock.scan))
@@ -67,9 +67,11 @@ def passage(
         happening.until(scan)
         if run.diverged or scan == scans:
             break
-        if scan == _mark(events.settings_at, clock) and events.settings is not None:
+        changes = by is None and events.settings is not None
+        if changes and scan == _mark(events.settings_at, clock):
+            assert events.settings is not None
             run.algorithm = made(replace(loop, gains=events.settings))
-            last = float(given.setpoint[max(scan - 1, 0)])
+            last = float(given.setpoint[scan - 1]) if scan else 0.0
             run.algorithm.takes_over(run.memory, algorithm, last)
             algorithm = run.algorithm
         if scan == _mark(events.change_at, clock):
@@ -89,7 +91,7 @@ class _Happening:
     events: Events
     is_manual: bool
     by: Callable[[float, float], float] | None
-    """What is executed in automatic, where it is not the algorithm alone."""
+    """What is executed where it is not the algorithm alone; it sees to its modes itself."""
 
     def marks(self, clock: Clock, scans: int) -> list[int]:
         """Scans at which something changes."""
@@ -105,8 +107,10 @@ class _Happening:
     def until(self, scan: int) -> None:
         """Go on to a scan, and take its mode."""
         run = self.run
-        if run.at < scan and not self.is_manual:
-            follow(run, scan) if self.by is None else run.step(scan, self.by)
+        if run.at < scan and self.by is not None:
+            run.step(scan, self.by)
+        elif run.at < scan and not self.is_manual:
+            follow(run, scan)
         elif run.at < scan:
             goal = self.events.manual_output
             if goal is None:
@@ -117,6 +121,14 @@ class _Happening:
 
 def _mark(time: float | None, clock: Clock) -> int | None:
     return None if time is None else clock.first_scan(time)
+
+
+def setpoints(loop: Loop, events: Events, clock: Clock, scans: int) -> Array:
+    """The setpoint as the algorithm takes it at each scan (scans,) [%]."""
+    taken = _setpoint(loop, events, clock, scans)
+    if not isinstance(taken, Step):
+        return taken
+    return taken.values(np.arange(float(scans)) * clock.scan + 1e-9 * clock.scan)
 
 
 def _setpoint(loop: Loop, events: Events, clock: Clock, scans: int) -> Array | Step:
@@ -153,8 +165,7 @@ def _spliced(before: Inputs, later: Inputs, scan: int) -> Inputs:
     """The inputs of one plant up to a scan, of another from there on."""
     return replace(
         before,
-        state=np.concatenate([before.state[:scan], later.state[scan:]]),
-        direct=np.concatenate([before.direct[:scan], later.direct[scan:]]),
+        upset=before.upset.until(scan, later.upset),
         cuts=tuple(sorted({*before.cuts, *later.cuts, scan})),
         varying=before.varying | later.varying,
     )

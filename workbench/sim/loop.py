@@ -17,9 +17,9 @@ from numpy.typing import NDArray
 from workbench.errors import problem
 from workbench.model.feedback import Loop
 from workbench.model.structures import Structure
-from workbench.sim import analogue, signals
+from workbench.sim import analogue, delayed, signals
 from workbench.sim.controller import Algorithm
-from workbench.sim.course import Passage, passage
+from workbench.sim.course import Passage, passage, setpoints
 from workbench.sim.instruments import Instruments
 from workbench.sim.process import Process, process
 from workbench.sim.scans import Clock, Course, Held
@@ -95,8 +95,12 @@ def simulate(loop: Loop, events: Events, instruments: Instruments = _PLAIN) -> T
     steps or more, and to about 1e-3, while a limit or rate limit of the output is in force, and
     where more happens than a step of each, or something in the loop is not linear.
     """
+    if loop.scan is None and (isinstance(loop, Structure) or delayed.beyond_state_space(loop)):
+        return _as_trace(delayed.play_analogue(loop, events, instruments, _ROWS))
     if isinstance(loop, Structure):
         return _structured(loop, events, instruments)
+    if delayed.beyond_state_space(loop):
+        return _structured(Structure(**vars(loop)), events, instruments)
     if loop.scan is None:
         return _analogue(loop, events, instruments)
     clock = Clock(loop.scan, loop.computing_delay)
@@ -112,9 +116,19 @@ def _structured(loop: Structure, events: Events, instruments: Instruments) -> Tr
     _check(events.until, clock)
     execution = Execution(loop, clock, events, instruments)
     outside = execution.outside(instruments)
+    if delayed.beyond_state_space(played):
+        taken = setpoints(loop, events, clock, clock.place(events.until)[0] + 1)
+        done = delayed.play_sampled(played, clock, events, outside, execution.step, taken)
+        return replace(_as_trace(done), inner=execution.inside())
     found = passage(played, process(played), clock, events, outside, by=execution.step)
     own = replace(found.course, outputs=np.array(execution.outputs))
     return replace(_sampled_trace(replace(found, course=own), events), inner=execution.inside())
+
+
+def _as_trace(done: delayed.Played) -> Trace:
+    return Trace(
+        done.time, done.setpoint, done.pv, done.output, done.measured, diverged=done.diverged
+    )
 
 
 def _check(until: float, clock: Clock) -> None:
@@ -135,9 +149,9 @@ def _sampled_trace(found: Passage, events: Events) -> Trace:
     scans = len(course.pv)
     # Rows at the same places in every scan, and single ones where something happens in between.
     offsets = _offsets(held, events.until)
-    number = np.arange(scans)
-    time: Array = number * np.float64(clock.scan)
-    values = course.pv
+    time: Array = np.arange(float(scans))
+    time *= clock.scan
+    number, values = np.arange(scans), course.pv
     if len(offsets) > 1 or clock.lead:
         time = np.add.outer(time, offsets).ravel()
         values = np.column_stack([_pv(found, load, offset) for offset in offsets]).ravel()
@@ -230,7 +244,7 @@ def _pv(found: Passage, load: Signal, offset: float) -> Array:
         pv = course.states @ row
         for back, weight in weights.items():
             pv[back:] += weight * course.acting[: max(0, scans - back)]
-        state, direct = held.upset(load, scans, offset)
+        state, direct = held.upset(load, scans, offset).over(0, scans)
         parts.append((pv + state @ held.process.c + direct)[start:end])
     return np.concatenate(parts)
 
@@ -244,8 +258,8 @@ def _pv_once(found: Passage, load: Signal, scan: int, offset: float) -> float:
     for back, weight in weights.items():
         if scan >= back:
             pv += weight * float(course.acting[scan - back])
-    state, direct = held.upset(load, scan + 1, offset)
-    return pv + float(state[-1] @ held.process.c) + float(direct[-1])
+    upset = held.upset(load, scan + 1, offset)
+    return pv + float(upset.state[-1] @ held.process.c) + float(upset.direct[-1])
 
 
 def _in_force(held: Held, course: Course, time: Array, number: NDArray[np.signedinteger]) -> Array:
@@ -448,9 +462,16 @@ def settle_horizon(loop: Loop) -> float:
 def _time_scale(loop: Loop) -> float:
     """Sum of lags, dead times and controller times [s]."""
     gains = loop.gains
-    poles = {*loop.plant.poles(), *loop.load.poles()}
+    poles = {
+        pole
+        for path in (loop.plant, loop.load)
+        for term in path.denominator
+        for pole in term.polynomial.roots
+    }
     lags = [1.0 / max(abs(p.real), 0.05 * abs(p)) for p in poles if p]
-    scale = sum(lags) + loop.plant.dead_time + loop.load.dead_time + loop.pv_filter
+    # A dead time inside a feedback goes round a few times before all is calm.
+    scale = sum(lags) + 3.0 * sum(term.dead_time for term in loop.plant.denominator)
+    scale += loop.plant.dead_time + loop.load.dead_time + loop.pv_filter
     scale += 2.0 * (loop.scan or 0.0) + loop.computing_delay
     if gains.integral:
         scale += abs(gains.proportional / gains.integral)
@@ -467,6 +488,8 @@ def _look(loop: Loop, window: float) -> Trace | None:
     """Unit steps of setpoint and load, a window [s] for each; None where it would take too long."""
     events = Events(1.0, 0.0, 1.0, window, 2.0 * window)
     if loop.scan is not None:
+        return simulate(loop, events)
+    if isinstance(loop, Structure) or delayed.beyond_state_space(loop):
         return simulate(loop, events)
     try:
         return _analogue(loop, events, most_pieces=_GLANCE)

@@ -60,7 +60,8 @@ def process(loop: Loop) -> Process:
     # inputs; as both have the same denominator, they then share A and C.  Listing the states
     # backwards keeps A lower triangular, for which the matrix exponential is at its best.
     a = np.ascontiguousarray(plant.a.T[::-1, ::-1])
-    return Process(a, plant.b[::-1].copy(), _entries(plant), _entries(load))
+    output = _entries(plant)
+    return Process(a, plant.b[::-1].copy(), output, output if load is plant else _entries(load))
 
 
 def _entries(realisation: Realisation) -> tuple[Entry, ...]:

@@ -9,8 +9,11 @@ stretch at once.  Both give the same numbers.
 from __future__ import annotations
 
 import math
-from collections.abc import Callable, Sequence
-from dataclasses import dataclass, field
+from bisect import bisect_left, bisect_right
+from collections.abc import Callable, Iterator, Sequence
+from dataclasses import dataclass, field, replace
+from functools import cached_property
+from itertools import pairwise, repeat
 from operator import mul
 from typing import Final
 
@@ -60,8 +63,6 @@ class Clock:
 class Course:
     """What the loop went through, at its scans."""
 
-    states: Array
-    """(n_scans, n), the process at each scan."""
     outputs: Array
     """(n_scans,), what each scan computed [%]."""
     pv: Array
@@ -71,6 +72,13 @@ class Course:
     """(n_scans,), what came through the valve of it [%]; the output itself where it is healthy."""
     measured: Array
     """(n_scans,), PV as the controller received it [%]."""
+    pieces: tuple[Callable[[], Array], ...]
+    """What works out the states of one stretch after the other, (its scans, n)."""
+
+    @cached_property
+    def states(self) -> Array:
+        """(n_scans, n), the process at each scan; worked out where it is asked for."""
+        return np.concatenate([piece() for piece in self.pieces])
 
 
 # --- the plant between scans ---------------------------------------------------------------------
@@ -105,10 +113,8 @@ class Held:
             for entry in (*process.output, *process.load)
         }
         n = len(process.c)
-        self._inputs = np.array([np.frombuffer(b) for b in columns]).reshape(len(columns), n).T
-        self._known: dict[float, tuple[Array, Array]] = {
-            0.0: (np.eye(n), np.zeros((n, len(columns))))
-        }
+        self._inputs = np.frombuffer(b"".join(columns)).reshape(len(columns), n).T
+        self._known: dict[float, tuple[Array, Array]] = {}
         self._learn([rest for _, _, rest in self.entries])
 
     def _learn(self, rests: Sequence[float]) -> None:
@@ -139,17 +145,21 @@ class Held:
         taps: dict[int, Array] = {}
         weights: dict[int, float] = {}
         for entry, whole, rest in self.entries:
-            after, new = self.hold(entry, max(0.0, time - rest))
-            old = self.hold(entry, min(time, rest))[1]
-            for back, tap in ((whole, new), (whole + 1, after @ old)):
-                taps[back] = taps[back] + tap if back in taps else tap
+            early = min(time, rest)
+            old = self.hold(entry, early)[1] if early else None
+            if time > rest:
+                after, new = self.hold(entry, time - rest)
+                old = None if old is None else after @ old
+                taps[whole] = taps[whole] + new if whole in taps else new
+            if old is not None:
+                taps[whole + 1] = taps[whole + 1] + old if whole + 1 in taps else old
             # PV is sampled just before what arrives at that same instant.
             late = time < rest or time == rest == 0.0
             back = whole + 1 if late else whole
             weights[back] = weights.get(back, 0.0) + entry.d
         if time not in self._known:
             self._known[time] = holds(self.process.a, self._inputs, (time,))[0]
-        taps = {back: tap for back, tap in taps.items() if tap.any()}
+        taps = {back: tap for back, tap in taps.items() if any(tap.tolist())}
         weights = {back: weight for back, weight in weights.items() if weight}
         part = Part(self._known[time][0], taps, weights)
         self._parts[time] = part
@@ -170,28 +180,38 @@ class Held:
 
     # --- what comes from outside ---
 
-    def upset(self, load: Signal, scans: int, time: float) -> tuple[Array, Array]:
-        """What an upset adds to the state (scans, n) and to PV (scans,) up to `time` after a scan.
-
-        Each scan by itself: what it adds to the state from that scan on.
-        """
-        state, pv = np.zeros((scans, len(self.process.c))), np.zeros(scans)
-        for part in load:
-            for entry in self.process.load:
-                self._add(part, entry, time, state, pv)
-        return state, pv
+    def upset(self, load: Signal, scans: int, time: float) -> Upset:
+        """What an upset adds to the state and to PV up to `time` after each scan."""
+        ways = [
+            (part, entry, *self.clock.place(part.time + entry.dead_time))
+            for part in load
+            for entry in self.process.load
+        ]
+        ways = [way for way in ways if way[2] < scans]
+        starts: Sequence[int] = range(scans)
+        if all(isinstance(part, Step) for part in load):
+            marks = {0, *(way[2] for way in ways), *(way[2] + 1 for way in ways)}
+            starts = sorted(marks - {scans})
+        found = Upset(starts, np.zeros((len(starts), len(self.process.c))), np.zeros(len(starts)))
+        for part, entry, whole, rest in ways:
+            self._add(part, entry, time, rest, found, found.place(whole))
+        return found
 
     def _add(
-        self, part: Step | Ramp | Sine, entry: Entry, time: float, state: Array, pv: Array
+        self,
+        part: Step | Ramp | Sine,
+        entry: Entry,
+        time: float,
+        rest: float,
+        upset: Upset,
+        place: int,
     ) -> None:
-        whole, rest = self.clock.place(part.time + entry.dead_time)
-        if whole >= len(pv):
-            return
-        following = whole + 1
+        """What is added from `rest` after the start of a place on."""
+        state, pv, following = upset.state, upset.direct, place + 1
         if isinstance(part, Step):
             if time >= rest:
-                state[whole] += self.hold(entry, time - rest)[1] * part.size
-                pv[whole] += entry.d * part.size
+                state[place] += self.hold(entry, time - rest)[1] * part.size
+                pv[place] += entry.d * part.size
             state[following:] += self.hold(entry, time)[1] * part.size
             if entry.d:
                 pv[following:] += entry.d * part.size
@@ -200,9 +220,9 @@ class Held:
         rates, start, shown = _generator(part)
         if time >= rest:
             moved = _driven(self.process.a, entry.b, rates, shown, time - rest)
-            state[whole] += moved @ start
-            pv[whole] += entry.d * float(part.values(np.array([part.time + time - rest]))[0])
-        since: Array = np.arange(float(following), len(pv)) - whole
+            state[place] += moved @ start
+            pv[place] += entry.d * float(part.values(np.array([part.time + time - rest]))[0])
+        since: Array = np.arange(float(following), len(pv)) - place
         since *= self.clock.scan
         since -= rest
         moving = np.column_stack(
@@ -210,6 +230,53 @@ class Held:
         )
         state[following:] += moving[:, :-1] @ _driven(self.process.a, entry.b, rates, shown, time).T
         pv[following:] += entry.d * moving[:, -1]
+
+
+@dataclass(frozen=True)
+class Upset:
+    """What comes from an upset at each scan by itself, the same from one of `starts` to the next.
+
+    A signal that is not made of steps has a start at every scan.
+    """
+
+    starts: Sequence[int]
+    """Scans, rising from 0."""
+    state: Array
+    """(starts, n), what it adds to the state from that scan on."""
+    direct: Array
+    """(starts,), what it adds to PV [%]."""
+
+    def place(self, scan: int) -> int:
+        """Which of the starts a scan belongs to."""
+        return bisect_right(self.starts, scan) - 1
+
+    def scans(self, start: int, end: int) -> Iterator[tuple[list[float], float]]:
+        """As `over`, scan by scan."""
+        first, last = self.place(start), self.place(end - 1) + 1
+        marks = [start, *self.starts[first + 1 : last], end]
+        for place, (before, later) in enumerate(pairwise(marks), first):
+            yield from repeat(
+                (self.state[place].tolist(), float(self.direct[place])), later - before
+            )
+
+    def over(self, start: int, end: int) -> tuple[Array, Array]:
+        """For each scan from `start` to before `end`: (scans, n) and (scans,)."""
+        first, last = self.place(start), self.place(end - 1) + 1
+        marks = [start, *self.starts[first + 1 : last], end]
+        lengths = [later - before for before, later in pairwise(marks)]
+        return (
+            self.state[first:last].repeat(lengths, axis=0),
+            self.direct[first:last].repeat(lengths),
+        )
+
+    def until(self, scan: int, later: Upset) -> Upset:
+        """The same before a scan, another from there on."""
+        kept, place = bisect_left(self.starts, scan), later.place(scan)
+        return Upset(
+            [*self.starts[:kept], scan, *later.starts[place + 1 :]],
+            np.concatenate([self.state[:kept], later.state[place:]]),
+            np.concatenate([self.direct[:kept], later.direct[place:]]),
+        )
 
 
 def _generator(part: Ramp | Sine) -> tuple[Array, Array, Array]:
@@ -243,14 +310,13 @@ class Inputs:
 
     setpoint: Array
     """(scans,) [%]"""
-    state: Array
-    """(scans, n), what the upset adds to the state in the scan."""
-    direct: Array
-    """(scans,), what the upset adds to PV as it is read [%]."""
+    upset: Upset
+    """What it adds to the state in the scan, and to PV as it is read."""
     noise: Array | None
     """(scans,), what the sensor adds to that [%]."""
     cuts: tuple[int, ...]
-    """Scans, rising from 0 to the last, between which nothing changes that is not `varying`."""
+    """Scans, rising from 0 to the last, between which nothing changes that is not `varying`, but
+    for what the upset adds to the state in the scan before a cut."""
     varying: frozenset[str]
     """What may change at any scan: setpoint, load, noise."""
 
@@ -267,28 +333,29 @@ def inputs(
     marks, varying = {0, scans}, set[str]()
     if isinstance(setpoint, Step):
         seen = clock.first_scan(setpoint.time) if setpoint.size else scans
-        marks |= {seen, seen + 1}
+        marks.add(seen)
         taken = np.zeros(scans)
         taken[seen:] = setpoint.size
     else:
         taken = setpoint
         varying.add("setpoint")
     load = tuple(part for part in load if not isinstance(part, Step) or part.size)
-    state, direct = held.upset(load, scans, clock.scan)
-    if clock.lead or any(entry.d for entry in held.process.load):
-        ahead, direct = held.upset(load, scans, clock.lead)
-        direct += ahead @ held.process.c
+    upset = held.upset(load, scans, clock.scan)
+    is_direct = bool(clock.lead) or any(entry.d for entry in held.process.load)
+    if is_direct:
+        ahead = held.upset(load, scans, clock.lead)
+        upset = replace(upset, direct=ahead.direct + ahead.state @ held.process.c)
     if len(load) > _FEW_STEPS or not all(isinstance(part, Step) for part in load):
         varying.add("load")
     else:
         for part in load:
             for entry in held.process.load:
                 whole, _ = clock.place(part.time + entry.dead_time)
-                marks |= {whole, whole + 1}
+                marks |= {whole, whole + 1} if is_direct else {whole + 1}
     if noise is not None:
         varying.add("noise")
     cuts = tuple(sorted(mark for mark in marks if 0 <= mark <= scans))
-    return Inputs(taken, state, direct, noise, cuts, frozenset(varying))
+    return Inputs(taken, upset, noise, cuts, frozenset(varying))
 
 
 # --- the run -------------------------------------------------------------------------------------
@@ -312,12 +379,10 @@ class Run:
 
     def __post_init__(self) -> None:
         n = len(self.held.process.c)
-        self.read, self.weights = self.held.reading()
-        taps = self.held.over(self.held.clock.scan).taps
-        self.back = max([1, *taps, *self.weights])
-        """How far back outputs still act [scans]."""
+        self._take(self.held)
         self.x = np.zeros(n)
-        self.states = np.empty((n, self.scans))
+        self.pieces: list[Callable[[], Array]] = []
+        """What works out the states of each stretch so far."""
         self.pv = np.empty(self.scans)
         self.measured = self.pv if self._is_plain else np.empty(self.scans)
         self.acting = np.zeros(self.back + self.scans)
@@ -325,6 +390,15 @@ class Run:
         self.outputs = self.acting[self.back :]
         if self.through is not None:
             self.outputs = np.zeros(self.scans)
+
+    def _take(self, held: Held) -> None:
+        self.held, self.over = held, held.over(held.clock.scan)
+        self.read, self.weights = held.reading()
+        self.back = max([1, *self.over.taps, *self.weights])
+        """How far back outputs still act [scans]."""
+        columns = [*self.over.phi.T, *self.over.taps.values(), *np.eye(len(self.over.phi))]
+        self._rows = np.array(columns).T.tolist()
+        """The next state from the state, the outputs of `over.taps` and what the upset adds."""
 
     @property
     def _is_plain(self) -> bool:
@@ -335,20 +409,19 @@ class Run:
         done = self.at
         acting = self.acting[self.back : self.back + done]
         return Course(
-            self.states[:, :done].T,
             self.outputs[:done],
             self.pv[:done],
             self.diverged,
             acting,
             self.measured[:done],
+            tuple(self.pieces),
         )
 
     def change(self, held: Held) -> None:
         """Go on with a plant of the same states whose gain or dead times are others."""
         past = self.acting[self.back : self.back + self.at]
-        self.held = held
-        self.read, self.weights = held.reading()
-        before, self.back = self.back, max([1, *held.over(held.clock.scan).taps, *self.weights])
+        before = self.back
+        self._take(held)
         earlier = self.acting[:before]
         longer = np.zeros(self.back + self.scans)
         kept = min(before, self.back)
@@ -364,29 +437,21 @@ class Run:
 
         Plain numbers and lists: for a handful of states they are far faster than arrays.
         """
-        over, start, back, given = (
-            self.held.over(self.held.clock.scan),
-            self.at,
-            self.back,
-            self.inputs,
-        )
+        start, back, given = self.at, self.back, self.inputs
         x, row = self.x.tolist(), self.read.tolist()
         acting: list[float] = self.acting[start : start + back].tolist()
         outputs, states, pv, measured = [], [], [], []
         backs = [(back - far, weight) for far, weight in self.weights.items()]
-        taps = [back - far for far in over.taps]
-        rows = np.column_stack([over.phi, *over.taps.values()]).tolist()
-        upset = given.state[start:end].tolist()
-        noise = [0.0] * (end - start) if given.noise is None else given.noise[start:end].tolist()
+        taps = [back - far for far in self.over.taps]
+        rows = self._rows
         outside = zip(
+            given.upset.scans(start, end),
             given.setpoint[start:end].tolist(),
-            given.direct[start:end].tolist(),
-            noise,
-            upset,
-            strict=True,
+            repeat(0.0) if given.noise is None else given.noise[start:end].tolist(),
+            strict=False,
         )
         through, received = self.through, self.received
-        for i, (setpoint, direct, disturbance, pushed) in enumerate(outside):
+        for i, ((pushed, direct), setpoint, disturbance) in enumerate(outside):
             y = direct + sum(map(mul, row, x))
             for place, weight in backs:
                 y += weight * acting[i + place]
@@ -402,10 +467,10 @@ class Run:
             output = by(setpoint, seen)
             outputs.append(output)
             acting.append(output if through is None else through(output))
-            moved = [*x, *[acting[i + tap] for tap in taps]]
-            x = [sum(map(mul, line, moved)) + push for line, push in zip(rows, pushed, strict=True)]
+            moved = x + [acting[i + tap] for tap in taps] + pushed
+            x = [sum(map(mul, line, moved)) for line in rows]
         done = start + len(pv)
-        self.states[:, start:done] = np.array(states).reshape(len(pv), len(self.x)).T
+        self.pieces.append(lambda: np.array(states).reshape(len(pv), len(x)))
         self.pv[start:done] = pv
         if not self._is_plain:
             self.measured[start:done] = measured

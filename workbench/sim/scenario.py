@@ -4,11 +4,19 @@ from __future__ import annotations
 
 from collections.abc import Iterator
 from dataclasses import dataclass
+from typing import Final
 
 from workbench.errors import InputError, Problem
-from workbench.model.pid import Gains
+from workbench.model.pid import Controller, Gains
 from workbench.sim.signals import Ramp, Signal, Sine, Step
-from workbench.units import Amount, check_fields, quantity
+from workbench.units import Amount, check_fields, quantities, quantity
+
+NEW_SETTINGS: Final = {
+    "new_gain": "gain",
+    "new_integral": "integral",
+    "new_derivative": "derivative",
+}
+"""Keys of settings that change on the way, and what they are of the controller."""
 
 
 @dataclass(frozen=True)
@@ -63,6 +71,17 @@ class Scenario:
         example="0:0.2 60:1 180:-0.4 300:0",
         longest=20_000,
     )
+    load_file: str = quantity(
+        "CSV record of the upset, beside the case file; its changes from the first row on act from"
+        " load_at on",
+        "text",
+        default="",
+        example="feed.csv",
+    )
+    load_column: str = quantity(
+        "heading of its column, in the unit of the load path's input", "text", default=""
+    )
+    load_sha256: str = quantity("SHA-256 of that file", "text", default="")
     manual_at: Amount | None = quantity(
         "when the controller is put in manual", "duration", low=0, default=None, example="300 s"
     )
@@ -80,6 +99,41 @@ class Scenario:
     )
     dead_time_factor: float = quantity(
         "what its dead time is then multiplied by", "number", low=0, default=1.0
+    )
+    settings_at: Amount | None = quantity(
+        "when the controller gets other settings, in automatic",
+        "duration",
+        low=0,
+        default=None,
+        example="600 s",
+    )
+    new_gain: float | None = quantity(
+        "its gain from then on; left out: as it is", "number", "%/%", low=0, default=None
+    )
+    new_integral: str = quantity(
+        "its integral setting from then on, or none; left out: as it is",
+        "text",
+        default="",
+        example="20 s",
+    )
+    new_derivative: str = quantity(
+        "its derivative setting from then on, or none; left out: as it is",
+        "text",
+        default="",
+        example="3 s",
+    )
+    inner_mode_at: Amount | None = quantity(
+        "when the inner loop of a cascade is put in another mode",
+        "duration",
+        low=0,
+        default=None,
+        example="300 s",
+    )
+    inner_mode: str = quantity(
+        "the mode that it then gets",
+        "choice",
+        default="cascade",
+        choices=("cascade", "automatic", "manual"),
     )
     until: Amount | None = quantity(
         "end of the prediction; left out: long enough for both to settle",
@@ -106,8 +160,9 @@ class Scenario:
             yield Problem(f"is missing for a {self.load_shape}", "give it", "load_time")
         if self.load_shape == "record" or self.load_record:
             try:
-                if not self.recorded_load():
-                    yield Problem("is missing for a record", "give it", "load_record")
+                if not self.recorded_load() and not self.load_file:
+                    mend = "give it, or load_file and load_column"
+                    yield Problem("is missing for a record", mend, "load_record")
             except ValueError:
                 mend = "give rising seconds and values like 0:0.2 60:1 180:0"
                 yield Problem("cannot be read", mend, "load_record")
@@ -116,6 +171,39 @@ class Scenario:
         ):
             mend = "give manual_at before it, or leave it out"
             yield Problem("does not come after manual", mend, "automatic_at")
+        yield from self._file_faults()
+        yield from self._settings_faults()
+
+    def _file_faults(self) -> Iterator[Problem]:
+        """What a recorded upset in a file lacks."""
+        if not self.load_file and self.load_sha256:
+            yield Problem("has no load_file to go with", "give load_file too", "load_sha256")
+        if self.load_file and not self.load_column:
+            yield Problem("is missing for a file", "give the column's heading", "load_column")
+        if self.load_file and self.load_record:
+            yield Problem("is given beside load_file", "keep one of them", "load_record")
+
+    def _settings_faults(self) -> Iterator[Problem]:
+        """What the new settings lack, or do not say by themselves."""
+        given = [key for key in NEW_SETTINGS if getattr(self, key) not in (None, "")]
+        for key in given:
+            if self.settings_at is None:
+                yield Problem("has no time to begin at", "give settings_at too", key)
+        for key in ("new_integral", "new_derivative"):
+            try:
+                self.new_amount(key)
+            except InputError as fault:
+                yield from fault.at(key=key).problems
+
+    def new_amount(self, key: str) -> Amount | None:
+        """The new integral or derivative setting that is given; `None` for none.
+
+        Raises `InputError` where it cannot be read.
+        """
+        words = getattr(self, key)
+        found = quantities(Controller)[NEW_SETTINGS[key]].read(words) if words else None
+        assert found is None or isinstance(found, Amount)
+        return found
 
     def recorded_load(self) -> tuple[tuple[float, float], ...]:
         """Seconds after `load_at` and shares of the load step.  Raises `ValueError`."""
@@ -168,6 +256,10 @@ class Events:
     """When the controller gets other settings [s]."""
     settings: Gains | None = None
     """Those settings."""
+    inner_mode_at: float | None = None
+    """When the inner loop of a cascade gets another mode [s]."""
+    inner_mode: str = "cascade"
+    """That mode."""
 
     @property
     def setpoint(self) -> Signal:

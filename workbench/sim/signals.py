@@ -23,8 +23,10 @@ class Step:
     """[s]"""
 
     def values(self, time: Array) -> Array:
-        """At the instants (n,) [s]; a step is there at its own instant."""
-        return np.where(time >= self.time, self.size, 0.0)
+        """At the rising instants (n,) [s]; a step is there at its own instant."""
+        found = np.zeros(len(time))
+        found[time.searchsorted(self.time) :] = self.size
+        return found
 
 
 @dataclass(frozen=True)

@@ -29,6 +29,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from workbench.errors import problem
+from workbench.model.cascade import scans_in
 from workbench.model.feedback import Loop
 from workbench.model.feedforward import Feedforward
 from workbench.model.pid import Gains
@@ -51,15 +52,10 @@ _SAME: Final = 1e-9
 def as_played(loop: Structure, events: Events) -> Loop:
     """The loop from the output that moves the plant to PV, at the scan at which that is changed.
 
-    A cascade is played at the scan of its inner loop.  Raises `InputError` where a structure has no
-    scan, the two scans do not go together, or the scenario asks for what is not played with it.
+    A cascade is played at the scan of its inner loop.  Raises `InputError` where the
+    two scans do not go together, or the scenario asks for what is not played with it.
     """
-    if loop.scan is None:
-        raise problem(
-            "is needed: compensation, feedforward and inner loops are played scan by scan",
-            'give the controller a scan, like "1 s"',
-            key="controller.scan",
-        )
+    assert loop.scan is not None
     _refuse(loop, events)
     if loop.inner is None:
         return loop.around(loop.plant)
@@ -74,16 +70,12 @@ def as_played(loop: Structure, events: Events) -> Loop:
 
 def _refuse(loop: Structure, events: Events) -> None:
     """What a scenario may not ask of a structure."""
-    asked = {"manual_at": events.manual_at, "settings_at": events.settings_at}
-    if loop.inner is not None:
-        asked["change_at"] = events.change_at
-    for key, at in asked.items():
-        if at is not None:
-            raise problem(
-                "is not played with compensation, feedforward or an inner loop",
-                "leave it out, or take those out for this run",
-                key=f"scenario.{key}",
-            )
+    if loop.inner is not None and events.change_at is not None:
+        raise problem(
+            "is not played with an inner loop, of which it does not say what part changes",
+            "leave it out, or draw the inner loop as a block of the plant",
+            key="scenario.change_at",
+        )
 
 
 def _ratio(loop: Structure) -> int:
@@ -92,8 +84,8 @@ def _ratio(loop: Structure) -> int:
     assert loop.scan is not None
     if loop.inner.scan is None:
         raise problem("is needed", 'give the inner controller one, like "0.5 s"', key="inner.scan")
-    ratio = round(loop.scan / loop.inner.scan)
-    if not ratio or abs(loop.scan - ratio * loop.inner.scan) > _SAME * loop.scan:
+    ratio = scans_in(loop.scan, loop.inner.scan)
+    if ratio is None:
         raise problem(
             f"{loop.inner.scan:g} s does not go into the outer scan of {loop.scan:g} s",
             "give it a whole number of times",
@@ -120,7 +112,7 @@ class Beside:
         self._row, self._weights = held.reading()
         self._part = held.over(clock.scan)
         given = inputs(held, scans, np.zeros(scans), upset)
-        self._state, self._direct = given.state, given.direct
+        self._state, self._direct = given.upset.over(0, scans)
         self._x = np.zeros(len(self._row))
         length = max([1, *self._part.taps, *self._weights]) + 1
         self._past = deque([0.0] * length, length)
@@ -186,6 +178,9 @@ class Execution:
         self.algorithm = Algorithm.of(loop, loop.scan)
         self.memory = Memory(integral=self.algorithm.sign * loop.bias)
         self._own = self.algorithm.start(self.memory)
+        self._loop = loop
+        self._hand = _Hand.of(events, loop.scan)
+        self._setpoint = 0.0
         self.outputs: list[float] = []
         """Of the structure's own controller, at every scan of the clock [%]."""
         self._predictor = None
@@ -198,7 +193,7 @@ class Execution:
             self._added = fed_forward(loop.feedforward, values(events.load, seen), loop.scan)
         self._inner = None
         if loop.inner is not None:
-            self._inner = _Inner(loop, clock, scans, events.load, instruments.through(clock.scan))
+            self._inner = _Inner(loop, clock, scans, events, instruments.through(clock.scan))
 
     def step(self, setpoint: float, measured: float) -> float:
         """One scan of the clock: what moves the plant [%]."""
@@ -225,9 +220,15 @@ class Execution:
     def _execute(self, number: int, setpoint: float, measured: float) -> float:
         """The structure's own controller at its scan."""
         memory, sign = self.memory, self.algorithm.sign
-        inner = self._inner
-        if inner is not None and inner.mode != "cascade":
+        inner, hand = self._inner, self._hand
+        if number == hand.settings_from and hand.settings is not None:
+            self._take(hand.settings)
+        self._setpoint = setpoint
+        if inner is not None and inner.goes_its_own_way():
             return self.algorithm.in_manual(memory, inner.followed())(setpoint, measured)
+        if hand.manual_from <= number < hand.manual_until:
+            given = sign * memory.output if hand.output is None else hand.output
+            return self.algorithm.in_manual(memory, given)(setpoint, measured)
         # In the integral the feedforward passes the limits with the rest, and what they take of it
         # is held like the rest.
         before = float(self._added[number - 1]) if number else 0.0
@@ -242,6 +243,36 @@ class Execution:
         memory.output -= sign * beyond
         return self.outputs[-1]
 
+    def _take(self, settings: Gains) -> None:
+        """Go on with other settings, the output staying where it is."""
+        assert self._loop.scan is not None
+        before = self.algorithm
+        self.algorithm = Algorithm.of(replace(self._loop, gains=settings), self._loop.scan)
+        self.algorithm.takes_over(self.memory, before, self._setpoint)
+        self._own = self.algorithm.start(self.memory)
+
+
+@dataclass(frozen=True)
+class _Hand:
+    """What the operator does to the structure's own controller, in its scans."""
+
+    manual_from: float
+    manual_until: float
+    output: float | None
+    """[%]; `None` leaves it as it is."""
+    settings_from: float
+    settings: Gains | None
+
+    @classmethod
+    def of(cls, events: Events, scan: float) -> _Hand:
+        """From a scenario; what does not happen is at infinity."""
+        clock = Clock(scan, 0.0)
+        manual, automatic, settings = (
+            math.inf if time is None else clock.first_scan(time)
+            for time in (events.manual_at, events.automatic_at, events.settings_at)
+        )
+        return cls(manual, automatic, events.manual_output, settings, events.settings)
+
 
 class _Inner:
     """The inner loop of a cascade under way."""
@@ -251,24 +282,40 @@ class _Inner:
         loop: Structure,
         clock: Clock,
         scans: int,
-        upset: Signal,
+        events: Events,
         through: Callable[[float], float] | None,
     ) -> None:
         assert loop.inner is not None
-        self.mode = loop.inner_mode
         self._through = through
         self._late = clock.first_scan(loop.computing_delay)
-        self._path = Beside(loop.inner.plant, clock, scans, loop.inner.load, upset)
+        self._path = Beside(loop.inner.plant, clock, scans, loop.inner.load, events.load)
         self._algorithm = Algorithm.of(loop.inner, clock.scan)
-        self._step = self._started()
+        self._memory = Memory()
+        at = events.inner_mode_at
+        self._turns = math.inf if at is None else clock.first_scan(at)
+        self._next_mode = events.inner_mode
+        self._kept = 0.0
         self.setpoints: list[float] = []
         self.pv: list[float] = []
         self.outputs: list[float] = []
+        self._enter(loop.inner_mode)
 
-    def _started(self) -> Step:
-        if self.mode == "manual":
-            return self._algorithm.in_manual(Memory(), 0.0)
-        return self._algorithm.start()
+    def _enter(self, mode: str) -> None:
+        """Take a mode: each begins where the one before has left the setpoint and the output."""
+        self.mode = mode
+        if mode == "manual":
+            held = self._algorithm.sign * self._memory.output
+            self._step: Step = self._algorithm.in_manual(self._memory, held)
+        else:
+            self._step = self._algorithm.start(self._memory)
+        self._kept = self.setpoints[-1] if self.setpoints else 0.0
+
+    def goes_its_own_way(self) -> bool:
+        """At this scan, the outer output does not move its setpoint."""
+        if len(self.outputs) == self._turns:
+            self._turns = math.inf
+            self._enter(self._next_mode)
+        return self.mode != "cascade"
 
     @property
     def blocked(self) -> float:
@@ -281,17 +328,19 @@ class _Inner:
 
     def followed(self) -> float:
         """What the outer output follows: the inner setpoint, or the inner PV in manual [%]."""
-        return self._path.read() if self.mode == "manual" else 0.0
+        return self._path.read() if self.mode == "manual" else self._kept
 
     def step(self, outer: list[float]) -> float:
         """One scan: what comes through the valve [%] for the outer outputs so far."""
-        known = len(outer) > self._late
-        setpoint = outer[-1 - self._late] if known and self.mode == "cascade" else 0.0
+        self.goes_its_own_way()
         pv = self._path.read()
+        setpoint = pv if self.mode == "manual" else self._kept
+        if self.mode == "cascade" and len(outer) > self._late:
+            setpoint = outer[-1 - self._late]
         output = self._step(setpoint, pv)
         acting = output if self._through is None else self._through(output)
         self._path.move(acting)
-        self.setpoints.append(pv if self.mode == "manual" else setpoint)
+        self.setpoints.append(setpoint)
         self.pv.append(pv)
         self.outputs.append(output)
         return acting

@@ -284,6 +284,23 @@ def _characteristic(valve: Valve, setting: Setting) -> Move | None:
     return lambda position: sign * (flow(opening(position)) - at_rest) / slope
 
 
+def gains_over_travel(
+    valve: Valve, setting: Setting, low: float, high: float
+) -> tuple[float, float]:
+    """Smallest and largest gain of a characteristic between two signals [% of the output's span].
+
+    As shares of the gain at the operating point, each over 1 % of travel; (1, 1) for a linear
+    valve.  Raises `InputError` as `follow` does.
+    """
+    flow = _characteristic(valve, setting)
+    if flow is None:
+        return 1.0, 1.0
+    steps = max(1, round(high - low))
+    places = [low + (high - low) * k / steps for k in range(steps + 1)]
+    slopes = [(flow(b) - flow(a)) / (b - a) for a, b in pairwise(places)]
+    return min(slopes), max(slopes)
+
+
 def _equal_percentage(valve: Valve) -> Move:
     """R^(opening - 1).  Source: IEC 60534-2-4, from memory."""
     ratio = valve.rangeability

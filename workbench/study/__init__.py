@@ -15,7 +15,22 @@ from workbench.study.assessment import (
     reductions,
 )
 from workbench.study.conversion import Conversion, convert
-from workbench.study.evaluation import HANDOVER, Evaluation, cautions, evaluate
+from workbench.study.evaluation import (
+    HANDOVER,
+    Evaluation,
+    cautions,
+    evaluate,
+    family_cautions,
+)
+from workbench.study.family import (
+    Among,
+    FamilyFigures,
+    Member,
+    drawn_plants,
+    family_figures,
+    members,
+    with_family,
+)
 from workbench.study.fitting import (
     Live,
     LiveTest,
@@ -44,23 +59,34 @@ from workbench.study.prediction import (
     respond_to_record,
     response_horizon,
 )
-from workbench.study.proposals import Proposal, RelayTest, Wish, propose, take
+from workbench.study.proposals import LIMITS, Proposal, propose, take
 from workbench.study.sheet import Retune, Stage, retune
 from workbench.study.survey import Surveyed, survey
+from workbench.study.tolerance import LIMIT as TOLERANCE_LIMIT
+from workbench.study.tolerance import Axis, Distance, Tolerance, tolerance
+from workbench.study.trade_off import TradeOff, TradeOffPoint, trade_off
+from workbench.study.wish import RelayTest, Wish, edit_wish, show_wish
 
 __all__ = [
     "CERTAINTY",
     "HANDOVER",
+    "LIMITS",
+    "TOLERANCE_LIMIT",
     "Advice",
+    "Among",
     "Assessment",
+    "Axis",
     "Bump",
     "Conversion",
+    "Distance",
     "Evaluation",
+    "FamilyFigures",
     "FileCheck",
     "InnerTrend",
     "Live",
     "LiveTest",
     "LoopFigures",
+    "Member",
     "PlantFigures",
     "Prediction",
     "Proposal",
@@ -71,6 +97,9 @@ __all__ = [
     "Source",
     "Stage",
     "Surveyed",
+    "Tolerance",
+    "TradeOff",
+    "TradeOffPoint",
     "Trend",
     "Wish",
     "accept",
@@ -83,11 +112,16 @@ __all__ = [
     "chosen_candidate",
     "controller_of",
     "convert",
+    "drawn_plants",
+    "edit_wish",
     "evaluate",
+    "family_cautions",
+    "family_figures",
     "fit_plants",
     "fit_record",
     "fit_sources",
     "loop_of",
+    "members",
     "narrowed",
     "plant_of",
     "predict",
@@ -99,7 +133,11 @@ __all__ = [
     "respond_to_record",
     "response_horizon",
     "retune",
+    "show_wish",
     "survey",
     "take",
+    "tolerance",
+    "trade_off",
     "units_of",
+    "with_family",
 ]

@@ -14,7 +14,7 @@ from workbench.model.feedback import Loop
 from workbench.model.formula import format_formula
 from workbench.model.limits import least_peaks
 from workbench.model.reduction import SmallModel, best_fit, half_rule, misfit
-from workbench.model.robustness import Margins, analogue_margins, sampled_margins
+from workbench.model.robustness import Margins, analogue_margins
 from workbench.model.stability import plant_verdict
 from workbench.model.transfer import TransferFunction
 from workbench.study.loop import (
@@ -26,7 +26,8 @@ from workbench.study.loop import (
     runs_away,
     units_of,
 )
-from workbench.study.structure import has_one_scan, structure_notes
+from workbench.study.operating import about_rest, operating_notes
+from workbench.study.structure import margins_as_sampled, structure_notes
 from workbench.units import RATE_UNITS, Amount, Figure, Note, rounded, text
 
 
@@ -107,16 +108,15 @@ def assess(case: Case) -> Assessment:
         return Assessment(figures, None, None, None, notes, valve=valve)
     action, chosen = action_of(case)
     notes = (*_plant_notes(plant), *([Note("info", chosen)] if chosen else []))
-    loop = loop_of(case)
+    whole = loop_of(case)
+    loop = about_rest(whole)
     notes = (*notes, *structure_notes(case, loop))
     analogue = _loop_figures(case, loop, analogue_margins(replace(loop, scan=None)))
     sampled, missing = None, ""
-    if loop.scan is not None and not has_one_scan(loop):
-        missing = "a cascade has two scans; its margins are those of analogue controllers"
-    elif loop.scan is not None:
-        missing = no_time_domain(loop.plant)
-        if not missing:
-            sampled = _loop_figures(case, loop, sampled_margins(loop))
+    if loop.scan is not None:
+        margins, missing = margins_as_sampled(loop)
+        sampled = None if margins is None else _loop_figures(case, loop, margins)
+    notes = (*notes, *operating_notes(case, whole, (sampled or analogue).margins))
     gain = case.controller.gain_value
     scale = case.op.range.span / case.pv.range.span
     return Assessment(figures, analogue, sampled, action, notes, missing, gain, gain * scale, valve)

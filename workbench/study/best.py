@@ -2,16 +2,24 @@
 
 from __future__ import annotations
 
-from collections.abc import Callable
+from collections.abc import Callable, Sequence
 from dataclasses import dataclass, replace
 from typing import Final
 
 from workbench.case.case import Case
+from workbench.errors import NotApplicable
+from workbench.model.feedback import Loop
 from workbench.model.pid import Controller, Gains, settings_like
+from workbench.model.structures import Structure
 from workbench.model.sweep import Limits
 from workbench.study.loop import loop_of
+from workbench.study.prediction import steps_of
+from workbench.study.structure import has_one_scan
+from workbench.study.wish import Wish
+from workbench.tune import optimise
 from workbench.tune.bench import Aim
-from workbench.tune.optimise import best
+
+Stop = Callable[[], bool]
 
 
 @dataclass(frozen=True)
@@ -26,14 +34,9 @@ SEARCH_SOURCE: Final = "search by this program: least IAE within the limits"
 
 
 def searched(
-    case: Case,
-    method: str,
-    *,
-    max_sensitivity: float,
-    setpoint: bool = False,
-    should_stop: Callable[[], bool] | None = None,
-) -> Controller:
-    """Settings with the least IAE whose Ms is within a limit, on the loop as it will run.
+    case: Case, method: str, wish: Wish, should_stop: Stop | None = None
+) -> tuple[Controller, bool]:
+    """Settings with the least IAE within the limits of a wish, on the loop as it will run.
 
     Parameters
     ----------
@@ -41,32 +44,121 @@ def searched(
         With a plant; the controller's form, filter and scan are kept, ideal and analogue without.
     method
         A key of `SEARCHES`.
-    max_sensitivity
-        Limit on Ms, above 1.
-    setpoint
-        Least IAE after a setpoint step; otherwise after a load step.
+    wish
+        Limits, and the share of the setpoint IAE; steps are those of the scenario.
     should_stop
         True ends the search with the best so far.
+
+    Returns
+    -------
+    tuple
+        The settings, and whether the search came to its end.
 
     Raises
     ------
     CannotSolve
-        No settings keep the limit, or nothing limits the gain.
+        No settings keep the limits, or nothing limits the gain.
     NotApplicable
-        A lasting upset that no controller with an integral can take out.
+        A lasting upset that no controller with an integral can take out, or dead-time compensation.
     ModelError
         A dead time inside an inner feedback.
     """
-    like = case.controller or Controller(gain=1.0)
-    form = "series" if like.form == "series" else "ideal"
+    task = _Task.of(case, wish)
+    found = optimise.best(
+        task.loops,
+        task.law,
+        task.aim,
+        derivative=SEARCHES[method].derivative,
+        should_stop=should_stop,
+    )
+    return task.settings(found), found.finished
 
-    def law(gain: float, integral_time: float | None, derivative_time: float) -> Gains:
-        return settings_like(like, gain, integral_time, derivative_time, form).gains()
 
-    loop = loop_of(replace(case, controller=like))
-    aim = Aim(Limits(max_sensitivity), setpoint_share=1.0 if setpoint else 0.0)
-    found = best([loop], law, aim, derivative=SEARCHES[method].derivative, should_stop=should_stop)
-    return settings_like(like, found.gain, found.integral_time, found.derivative_time, form)
+def best_by_limit(
+    case: Case,
+    method: str,
+    wish: Wish,
+    limits: Sequence[float],
+    should_stop: Stop | None = None,
+) -> tuple[tuple[float, Controller], ...]:
+    """As `searched`, at each of several limits on Ms that can be kept, the smallest first.
+
+    The limit on Ms of the wish does not count.  Raises as `searched` does, but not `CannotSolve`.
+    """
+    task = _Task.of(case, wish)
+    curve = optimise.trade_off(
+        task.loops,
+        task.law,
+        task.aim,
+        limits,
+        derivative=SEARCHES[method].derivative,
+        should_stop=should_stop,
+    )
+    return tuple((limit, task.settings(found)) for limit, found in curve)
+
+
+@dataclass(frozen=True)
+class _Task:
+    """What a search is given, and how its answer becomes settings."""
+
+    loops: tuple[Loop, ...]
+    """One for each plant that the settings are for, nominal first."""
+    like: Controller
+    form: str
+    aim: Aim
+
+    @classmethod
+    def of(cls, case: Case, wish: Wish) -> _Task:
+        like = case.controller or Controller(gain=1.0)
+        loops = _loops(replace(case, controller=like))
+        setpoint_step, load_step = steps_of(case)
+        # A step that the scenario leaves out counts with 5 % where the wish wants it.
+        setpoint_step, load_step = setpoint_step or 5.0, load_step or 5.0
+        limits = Limits(
+            wish.max_sensitivity,
+            wish.max_complementary_sensitivity or Limits.max_complementary_sensitivity,
+            wish.max_noise_gain or Limits.noise_gain,
+        )
+        travel = Aim.load_travel
+        if wish.max_load_travel is not None:
+            travel = case.op.range.percent(wish.max_load_travel)
+        aim = Aim(limits, travel, wish.share, load_step, setpoint_step)
+        return cls(loops, like, searched_form(case), aim)
+
+    def law(self, gain: float, integral_time: float | None, derivative_time: float) -> Gains:
+        """Canonical gains for the settings of the form."""
+        return settings_like(self.like, gain, integral_time, derivative_time, self.form).gains()
+
+    def settings(self, found: optimise.Best) -> Controller:
+        """In the controller's own form and units."""
+        return settings_like(
+            self.like, found.gain, found.integral_time, found.derivative_time, self.form
+        )
+
+
+def searched_form(case: Case) -> str:
+    """The form in which the search looks: the series form has no complex zeros."""
+    return "series" if case.controller and case.controller.form == "series" else "ideal"
+
+
+def _loops(case: Case) -> tuple[Loop, ...]:
+    """A loop for each plant that the settings are for: the nominal one."""
+    return (_alone(loop_of(case)),)
+
+
+def _alone(loop: Loop) -> Loop:
+    """The controller round all that it acts on, as a single loop."""
+    if not isinstance(loop, Structure):
+        return loop
+    if loop.model is not None:
+        raise NotApplicable(
+            "the loop has dead-time compensation",
+            limit="the search wants a loop in which the gain is a factor",
+        )
+    alone = loop.around(loop.acted_on)
+    alone = replace(alone, load=loop.upset)
+    # Two scans have no single z: such a loop is judged with analogue controllers.
+    return alone if has_one_scan(loop) else replace(alone, scan=None, computing_delay=0.0)
 
 
 SEARCHES: Final[dict[str, Search]] = {

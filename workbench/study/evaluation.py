@@ -11,8 +11,9 @@ from workbench.errors import (
     InputError,
 )
 from workbench.study.assessment import Assessment, assess
-from workbench.study.loop import action_of, controller_of, no_time_domain, plant_of
-from workbench.study.prediction import Prediction, predict
+from workbench.study.family import FamilyFigures, family_figures
+from workbench.study.loop import action_of, controller_of
+from workbench.study.prediction import Prediction, predicted
 from workbench.units import Note, text
 
 HANDOVER: Final = (
@@ -36,6 +37,8 @@ class Evaluation:
     cautions: tuple[Note, ...]
     prediction_reason: str = ""
     """Why there is no prediction although there is a controller."""
+    family: FamilyFigures | None = None
+    """The same over the family of plants, where the case states one."""
 
 
 def evaluate(case: Case, seed: int = 0, like: Evaluation | None = None) -> Evaluation:
@@ -46,10 +49,25 @@ def evaluate(case: Case, seed: int = 0, like: Evaluation | None = None) -> Evalu
     assessment = assess(case)
     prediction, missing = None, ""
     if case.controller is not None:
-        missing = no_time_domain(plant_of(case))
-        prediction = None if missing else predict(case, seed, like.prediction if like else None)
-    notes = cautions(case, assessment, prediction)
-    return Evaluation(case, assessment, prediction, notes, missing)
+        prediction, missing = predicted(case, seed, like.prediction if like else None)
+    family = family_figures(case, None if prediction is None else prediction.events)
+    notes = (*family_cautions(family), *cautions(case, assessment, prediction))
+    if missing:
+        notes = (*notes, Note("caution", f"not predicted: {missing}"))
+    return Evaluation(case, assessment, prediction, notes, missing, family)
+
+
+def family_cautions(family: FamilyFigures | None) -> tuple[Note, ...]:
+    """What the engineer should mind of the family."""
+    if family is None:
+        return ()
+    if family.reason:
+        return (Note("caution", f"the family is not judged: {family.reason}"),)
+    if family.stable_percent == 100.0:
+        return ()
+    share = text(100.0 - family.stable_percent, "%", digits=3)
+    words = f"NOT STABLE for {share} of the family, {family.worst_plant} among them"
+    return (Note("caution", words),)
 
 
 def cautions(
@@ -60,10 +78,8 @@ def cautions(
     judged = assessment.judged
     if judged is None:
         return tuple(notes)
-    missing = no_time_domain(plant_of(case))
-    if missing:
-        judged_as = "judged as analogue and " if assessment.sampled_reason else ""
-        notes.append(Note("caution", f"{judged_as}not predicted: {missing}"))
+    if assessment.sampled_reason:
+        notes.append(Note("caution", f"judged as analogue: {assessment.sampled_reason}"))
     margins = judged.margins
     if not margins.stable:
         notes.insert(0, Note("caution", f"NOT STABLE: {margins.reason}"))

@@ -26,8 +26,9 @@ from workbench.records.candidate import Candidate
 from workbench.records.identify import Fit
 from workbench.records.table import LARGEST_FILE
 from workbench.study.assessment import assess
-from workbench.study.loop import controller_of, no_time_domain, plant_of
-from workbench.study.prediction import predict
+from workbench.study.loop import controller_of
+from workbench.study.prediction import predicted
+from workbench.study.upset import upset_faults, with_upset_named
 from workbench.units import Amount, harmless, rounded, text
 
 
@@ -126,6 +127,7 @@ def record_change(
         faults.append(Problem(what, mend, "reference"))
     if faults:
         raise InputError(faults)
+    case = with_upset_named(case)
     figures = _figures_now(case)
     entry = Revision(
         at=now,
@@ -151,8 +153,9 @@ def _figures_now(case: Case) -> dict[str, float]:
         "max_sensitivity": judged.margins.max_sensitivity,
         "phase_margin_deg": judged.margins.phase_margin_deg,
     }
-    if not no_time_domain(plant_of(case)):
-        measures = predict(case).measures
+    prediction, _ = predicted(case)
+    if prediction is not None:
+        measures = prediction.measures
         found |= {"load_iae": measures.load_iae, "setpoint_iae": measures.setpoint_iae}
     return {name: figure.value for name, figure in found.items() if figure.value is not None}
 
@@ -174,7 +177,10 @@ def check_case(path: str | Path) -> FileCheck:
 
 def faults_of(case: Case, path: Path) -> list[Problem]:
     """What of a sound case in the file at `path` no longer holds: its record, its figures."""
-    return [*_record_faults(case, path), *_figure_faults(case)]
+    missing = [*_record_faults(case, path), *upset_faults(case)]
+    # Figures that come from a record are not made again from another.
+    from_upset = any(fault.key.startswith("scenario.") for fault in missing)
+    return [*missing, *([] if from_upset else _figure_faults(case))]
 
 
 def _record_faults(case: Case, path: Path) -> list[Problem]:

@@ -5,17 +5,27 @@ from __future__ import annotations
 import math
 
 from workbench.case.case import Case
-from workbench.errors import (
-    ModelError,
-    problem,
-)
+from workbench.errors import problem
 from workbench.model.blocks import Blocks
 from workbench.model.feedback import Loop
 from workbench.model.pid import Controller
 from workbench.model.stability import plant_verdict
 from workbench.model.transfer import TransferFunction
 from workbench.sim.instruments import Instruments
-from workbench.study.structure import built_round
+from workbench.study.structure import built_round, no_time_domain
+
+__all__ = [
+    "action_of",
+    "controller_of",
+    "instruments_of",
+    "load_scale",
+    "loop_of",
+    "no_time_domain",
+    "plant_in_percent",
+    "plant_of",
+    "runs_away",
+    "units_of",
+]
 
 
 def units_of(case: Case) -> dict[str, str]:
@@ -47,15 +57,6 @@ def runs_away(plant: TransferFunction) -> bool:
     if plant.has_delayed_feedback:
         return plant.integrators <= 0 and not plant_verdict(plant).stable
     return any(p.real > 0 for p in plant.poles())
-
-
-def no_time_domain(plant: TransferFunction) -> str:
-    """Why neither a prediction nor sampled figures can be computed; nothing where they can."""
-    try:
-        plant.realise()
-    except ModelError as fault:
-        return fault.problems[0].what
-    return ""
 
 
 def controller_of(case: Case) -> Controller:
@@ -96,11 +97,14 @@ def action_of(case: Case) -> tuple[str, str]:
     return action, f"{action} action, because the plant's {word} is {sign}"
 
 
-def loop_of(case: Case) -> Loop:
-    """The loop in percent of span.  Raises `InputError` where plant or controller is missing."""
+def loop_of(case: Case, other: TransferFunction | None = None) -> Loop:
+    """The loop in percent of span, with another plant [PV unit per OP unit] where one is given.
+
+    Raises `InputError` where plant or controller is missing.
+    """
     controller = controller_of(case)
     pv, op = case.pv, case.op
-    plant = plant_in_percent(case)
+    plant = (plant_of(case) if other is None else other) * (op.range.span / pv.range.span)
     load = case.plant.load_path()
     if case.measurement.lag and case.measurement.lag.seconds:
         # The sensor's lag is felt by everything that is measured: PV is what the sensor shows.

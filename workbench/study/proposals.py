@@ -16,48 +16,23 @@ from workbench.errors import (
     NotApplicable,
     problem,
 )
+from workbench.model.feedback import Loop
 from workbench.model.pid import Controller, settings_like
 from workbench.model.reduction import double_integrator, half_rule, unstable_lag
-from workbench.model.robustness import analogue_margins, sampled_margins, ultimate
-from workbench.study.best import SEARCH_SOURCE, SEARCHES, searched
-from workbench.study.loop import action_of, loop_of, no_time_domain, plant_in_percent
+from workbench.model.robustness import analogue_margins, ultimate
+from workbench.model.structures import Structure
+from workbench.study.best import SEARCH_SOURCE, SEARCHES, searched, searched_form
+from workbench.study.family import FamilyFigures, family_figures
+from workbench.study.loop import action_of, loop_of, plant_in_percent
+from workbench.study.operating import about_rest
 from workbench.study.prediction import predicted_measures
-from workbench.study.structure import has_one_scan
+from workbench.study.structure import margins_as_sampled
+from workbench.study.wish import Wish
 from workbench.tune import rules
+from workbench.tune.optimise import noise_gain
 from workbench.tune.oscillation import astrom_hagglund_relay
 from workbench.tune.tuning import Ultimate
 from workbench.units import Amount, Figure, nearest, plain, rounded, text
-
-
-@dataclass(frozen=True)
-class RelayTest:
-    """The steady swing that a relay in place of the controller made; halves of peak to peak."""
-
-    output: float
-    """[OP unit]"""
-    swing: float
-    """[PV unit]"""
-    period: float
-    """[s]"""
-    hysteresis: float = 0.0
-    """[PV unit]"""
-
-
-@dataclass(frozen=True)
-class Wish:
-    """What a proposal should aim at."""
-
-    goal: Literal["load", "setpoint"] = "load"
-    closed_loop_time: float | None = None
-    """[s]"""
-    max_sensitivity: float = 1.7
-    method: str | None = None
-    largest_upset: float | None = None
-    """Largest lasting upset, as the change of OP that balances it [OP unit]."""
-    allowed_deviation: float | None = None
-    """By how much PV may leave its setpoint [PV unit]."""
-    relay: RelayTest | None = None
-    """Gives the ultimate gain and period in place of the plant's."""
 
 
 @dataclass(frozen=True)
@@ -75,13 +50,20 @@ class Proposal:
     phase_margin_deg: Figure
     setpoint_iae: Figure
     load_iae: Figure
+    max_complementary_sensitivity: Figure = Figure(None, "it is not judged")
+    noise_gain: Figure = Figure(None, "it is not judged")
+    """How much OP swings at most for a swing of the measurement by 1 % [%/%]."""
+    load_travel: Figure = Figure(None, "it is not judged")
+    """All moves of OP from the load step on [OP unit]."""
     within_limit: bool = False
-    """Stable, and the maximum sensitivity is within the limit asked for."""
+    """Stable, and within every limit asked for."""
     objective: str = ""
     """What a rule aims at."""
     limits: str = ""
     """The plants that a rule was published for."""
     published_form: str = ""
+    family: FamilyFigures | None = None
+    """Margins over the family of plants, where the case states one."""
 
 
 def propose(
@@ -98,7 +80,7 @@ def propose(
     wish
         What to aim at; a method that is not known raises `InputError`.
     should_stop
-        True ends a search with the best so far.
+        True ends a search with the best so far, and leaves what is then missing out.
     """
     wish = wish or Wish()
     known = (*SEARCHES, *rules.RULES)
@@ -106,7 +88,7 @@ def propose(
         meant = nearest(wish.method, (*known, "present"))
         hint = f"did you mean {meant!r}?" if meant else f"use one of {', '.join(known)}"
         raise problem(f"the method {wish.method!r} is not known", hint, key="--method")
-    present = _present(case, wish)
+    present = _present(case)
     methods = known if wish.method is None else tuple(m for m in known if m == wish.method)
     plant = _rule_plant(case, wish)
     rows = [
@@ -115,14 +97,23 @@ def propose(
         else _proposal(case, method, wish, plant)
         for method in methods
     ]
-    present, *rows = _with_errors(case, [present, *rows])
+    present, *rows = predicted(case, [present, *rows], wish, should_stop)
     rows.sort(key=lambda row: _rank(row, wish))
     return (present, *rows)
 
 
 def _rank(row: Proposal, wish: Wish) -> tuple[bool, bool, float]:
-    iae = (row.load_iae if wish.goal == "load" else row.setpoint_iae).value
-    return (not row.applies, not row.within_limit, math.inf if iae is None else iae)
+    return (not row.applies, not row.within_limit, wished_iae(row, wish))
+
+
+def wished_iae(row: Proposal, wish: Wish) -> float:
+    """What is made least [PV unit s]; infinite where it is not known."""
+    parts = ((1.0 - wish.share, row.load_iae), (wish.share, row.setpoint_iae))
+    return sum(
+        share * (math.inf if figure.value is None else figure.value)
+        for share, figure in parts
+        if share
+    )
 
 
 def _blank(method: str, title: str, source: str, reason: str) -> Proposal:
@@ -130,11 +121,11 @@ def _blank(method: str, title: str, source: str, reason: str) -> Proposal:
     return Proposal(method, title, source, None, False, reason, none, none, none, none)
 
 
-def _present(case: Case, wish: Wish) -> Proposal:
+def _present(case: Case) -> Proposal:
     title, source = "present settings", "the case"
     if case.controller is None:
         return _blank("present", title, source, "the case has no controller yet")
-    return _judged(case, case.controller, "present", title, source, wish)
+    return judged(case, case.controller, "present", title, source)
 
 
 def _search(
@@ -142,26 +133,37 @@ def _search(
 ) -> Proposal:
     title = SEARCHES[method].title
     try:
-        settings = searched(
-            case,
-            method,
-            max_sensitivity=wish.max_sensitivity,
-            setpoint=wish.goal == "setpoint",
-            should_stop=should_stop,
-        )
+        settings, finished = searched(case, method, wish, should_stop)
     except (CannotSolve, ModelError, NotApplicable) as refusal:
         row = _blank(method, title, SEARCH_SOURCE, str(refusal))
     else:
-        row = _judged(case, settings, method, title, SEARCH_SOURCE, wish)
-    step = "setpoint" if wish.goal == "setpoint" else "load"
+        row = judged(case, settings, method, title, SEARCH_SOURCE)
+        if not finished:
+            row = replace(row, reason="the search was stopped before its end")
     return replace(
         row,
-        objective=f"least IAE after a {step} step with Ms at most {plain(wish.max_sensitivity)}",
+        objective=f"least {_aimed_at(wish)} with {_limits_in_words(case, wish)}",
         limits="any plant without a dead time inside an inner feedback",
-        published_form="series"
-        if case.controller and case.controller.form == "series"
-        else "ideal",
+        published_form=searched_form(case),
     )
+
+
+def _aimed_at(wish: Wish) -> str:
+    if wish.share == 0.0:
+        return "IAE after a load step"
+    if wish.share == 1.0:
+        return "IAE after a setpoint step"
+    mixed = f"{plain(wish.setpoint_share)} % setpoint IAE and {plain(100 - wish.setpoint_share)} %"
+    return f"sum of {mixed} load IAE"
+
+
+def _limits_in_words(case: Case, wish: Wish) -> str:
+    limits = [
+        f"{limit.name} at most {plain(getattr(wish, limit.wish))} {limit.unit(case)}".rstrip()
+        for limit in LIMITS
+        if getattr(wish, limit.wish) is not None
+    ]
+    return ", ".join(limits)
 
 
 def rule_settings(case: Case, wish: Wish) -> list[Controller]:
@@ -192,7 +194,7 @@ def _proposal(case: Case, method: str, wish: Wish, plant: rules.Plant) -> Propos
     except NotApplicable as refusal:
         row = _blank(method, rule.title, rule.source, str(refusal))
     else:
-        row = _judged(case, settings, method, rule.title, rule.source, wish)
+        row = judged(case, settings, method, rule.title, rule.source)
     return replace(row, objective=rule.objective, limits=rule.limits, published_form=rule.form)
 
 
@@ -218,7 +220,7 @@ def _rule_plant(case: Case, wish: Wish) -> rules.Plant:
     return rules.Plant(
         cache(lambda lags: half_rule(upright, lags)),
         swing,
-        wish.closed_loop_time,
+        None if wish.closed_loop_time is None else wish.closed_loop_time.seconds,
         None if upset is None else op.percent(upset),
         None if deviation is None else pv.percent(deviation),
         lambda: unstable_lag(upright),
@@ -226,62 +228,131 @@ def _rule_plant(case: Case, wish: Wish) -> rules.Plant:
     )
 
 
-def _judged(
-    case: Case, settings: Controller, method: str, title: str, source: str, wish: Wish
-) -> Proposal:
-    """A row with its margins; how far PV errs is added for all rows at once."""
+def judged(case: Case, settings: Controller, method: str, title: str, source: str) -> Proposal:
+    """A row with its margins; what a prediction tells is added by `predicted`."""
     trial = replace(case, controller=settings)
-    loop = loop_of(trial)
-    analogue = not has_one_scan(loop) or no_time_domain(loop.plant)
-    margins = analogue_margins(replace(loop, scan=None)) if analogue else sampled_margins(loop)
+    loop = about_rest(loop_of(trial))
+    sampled = margins_as_sampled(loop)[0] if loop.scan is not None else None
+    if sampled is None:
+        loop = replace(loop, scan=None)
+    margins = sampled or analogue_margins(loop)
     if not margins.stable:
         none = Figure(None, f"the loop is not stable: {margins.reason}")
+        row = Proposal(method, title, source, settings, True, "", none, none, none, none)
         reason = f"not stable on this loop: {margins.reason}"
-        return Proposal(method, title, source, settings, True, reason, none, none, none, none)
-    peak = margins.max_sensitivity
-    within = peak.value is not None and peak.value <= wish.max_sensitivity
-    reason = ""
-    if not within and peak.value is not None:
-        limit = plain(wish.max_sensitivity)
-        reason = f"Ms {text(peak.value, digits=3)} is above the limit of {limit}"
+        return replace(
+            row,
+            reason=reason,
+            max_complementary_sensitivity=none,
+            noise_gain=none,
+            load_travel=none,
+        )
     return Proposal(
         method,
         title,
         source,
         settings,
         True,
-        reason,
-        peak,
+        "",
+        margins.max_sensitivity,
         margins.phase_margin_deg,
         _LATER,
         _LATER,
-        within,
+        margins.max_complementary_sensitivity,
+        _noise_gain(loop),
+        _LATER,
+        family=family_figures(trial),
     )
+
+
+def _noise_gain(loop: Loop) -> Figure:
+    met = loop.around(loop.met()) if isinstance(loop, Structure) else loop
+    try:
+        found = noise_gain(met)
+    except ModelError as refusal:
+        return Figure(None, str(refusal))
+    if math.isinf(found):
+        return Figure(None, "the derivative has no filter, so that it grows without end")
+    return Figure.of(found)
 
 
 _LATER: Final = Figure(None, "not predicted yet")
 """Stands in a stable row until all rows are predicted together."""
 
 
-def _with_errors(case: Case, rows: list[Proposal]) -> list[Proposal]:
-    """The rows with the integral errors that the scenario predicts for those that are stable."""
-    missing = no_time_domain(plant_in_percent(case))
-    stable = [
-        number
-        for number, row in enumerate(rows)
-        if row.controller is not None and row.load_iae is _LATER
-    ]
-    if missing:
-        none = Figure(None, f"not predicted: {missing}")
-        measured = [(none, none)] * len(stable)
-    else:
-        trials = [replace(case, controller=rows[number].controller) for number in stable]
-        found = [predicted_measures(trial) for trial in trials]
-        measured = [(measures.setpoint_iae, measures.load_iae) for measures in found]
-    filled = list(rows)
-    for number, (setpoint_iae, load_iae) in zip(stable, measured, strict=True):
-        filled[number] = replace(rows[number], setpoint_iae=setpoint_iae, load_iae=load_iae)
+def predicted(
+    case: Case, rows: list[Proposal], wish: Wish, should_stop: Callable[[], bool] | None = None
+) -> list[Proposal]:
+    """The rows with what the scenario does to those that are stable, held to the limits."""
+    # What noise adds to an integral grows with the scenario's length, whatever the settings are;
+    # what noise does to the output is told by the noise gain.
+    quiet = replace(case, pv=replace(case.pv, noise=0.0))
+    filled = []
+    for row in rows:
+        if row.controller is None or row.load_iae is not _LATER:
+            filled.append(row)
+            continue
+        found, missing = None, "stopped"
+        if should_stop is None or not should_stop():
+            found, missing = predicted_measures(replace(quiet, controller=row.controller))
+        if found is None:
+            none = Figure(None, f"not predicted: {missing}")
+            told = replace(row, setpoint_iae=none, load_iae=none, load_travel=none)
+        else:
+            measures, travel = found
+            told = replace(
+                row,
+                setpoint_iae=measures.setpoint_iae,
+                load_iae=measures.load_iae,
+                load_travel=travel,
+            )
+        over = _over_limits(case, told, wish)
+        reason = "; ".join([*filter(None, [told.reason]), *over])
+        filled.append(replace(told, within_limit=not over, reason=reason))
     return filled
+
+
+@dataclass(frozen=True)
+class Limit:
+    """One limit that a wish can set."""
+
+    name: str
+    wish: str
+    """Field of `Wish`."""
+    figure: str
+    """Field of `Proposal`."""
+    of: Literal["", "gain", "op"] = ""
+
+    def unit(self, case: Case) -> str:
+        """Unit of the figure."""
+        return {"": "", "gain": "%/%", "op": case.op.unit}[self.of]
+
+
+LIMITS: Final = (
+    Limit("Ms", "max_sensitivity", "max_sensitivity"),
+    Limit("Mt", "max_complementary_sensitivity", "max_complementary_sensitivity"),
+    Limit("noise gain", "max_noise_gain", "noise_gain", "gain"),
+    Limit("travel after the load step", "max_load_travel", "load_travel", "op"),
+)
+"""Limits on the loop, as every row is held to them."""
+
+_ROUNDING: Final = 1.001
+"""Of a limit that counts as kept: searches keep theirs to a thousandth."""
+
+
+def _over_limits(case: Case, row: Proposal, wish: Wish) -> list[str]:
+    """The limits that a row does not keep, in words."""
+    over = []
+    for limit in LIMITS:
+        most, figure = getattr(wish, limit.wish), getattr(row, limit.figure)
+        if most is None:
+            continue
+        if figure.value is None:
+            over.append(f"{limit.name} is not known ({figure.reason})")
+        elif figure.value > most * _ROUNDING:
+            found = text(figure.value, limit.unit(case), digits=3)
+            over.append(f"{limit.name} {found} is above the limit of {plain(most)}")
+    return over
 
 
 def take(case: Case, proposal: Proposal) -> Case:

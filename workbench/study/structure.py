@@ -5,12 +5,14 @@ from __future__ import annotations
 from dataclasses import fields, replace
 
 from workbench.case.case import Case
-from workbench.errors import NotApplicable
+from workbench.errors import ModelError, NotApplicable
+from workbench.model.cascade import scans_in
 from workbench.model.feedback import Loop
 from workbench.model.feedforward import Feedforward, ideal_feedforward
-from workbench.model.robustness import analogue_margins
+from workbench.model.robustness import Margins, analogue_margins, sampled_margins
 from workbench.model.structures import NOTHING, Structure
 from workbench.model.transfer import TransferFunction
+from workbench.sim.delayed import sampled_steps, without_state_space
 from workbench.units import Note, text, time_text
 
 
@@ -66,8 +68,43 @@ def _inner(case: Case, outer: Loop) -> Loop:
 
 
 def has_one_scan(loop: Loop) -> bool:
-    """The loop is sampled, with one scan; else its margins are those of analogue controllers."""
-    return loop.scan is not None and not (isinstance(loop, Structure) and loop.inner is not None)
+    """The loop has one scan, and a plant that many can be judged of side by side as sampled."""
+    nested = isinstance(loop, Structure) and loop.inner is not None
+    return loop.scan is not None and not nested and not loop.plant.has_delayed_feedback
+
+
+def margins_as_sampled(loop: Loop) -> tuple[Margins | None, str]:
+    """Margins of a loop that has a scan, as sampled, or why it has none."""
+    try:
+        missing = _not_in_z(loop)
+        if missing:
+            return None, missing
+        if not isinstance(loop, Structure) and loop.plant.has_delayed_feedback:
+            return sampled_margins(loop, sampled_steps(loop)), ""
+        return sampled_margins(loop), ""
+    except ModelError as fault:
+        return None, fault.problems[0].what
+
+
+def _not_in_z(loop: Loop) -> str:
+    """Why the open loop of a cascade is not had in z; nothing where it is."""
+    if not isinstance(loop, Structure) or loop.inner is None:
+        return ""
+    if loop.inner_mode != "cascade":
+        return f"the inner loop is in {loop.inner_mode}"
+    assert loop.scan is not None
+    assert loop.inner.scan is not None
+    if scans_in(loop.scan, loop.inner.scan) is None:
+        inner, outer = text(loop.inner.scan, "s"), text(loop.scan, "s")
+        return f"the inner scan of {inner} does not go into the outer one of {outer}"
+    if not sampled_margins(loop.inner).stable:
+        return "the inner loop is not stable by itself, as sampled"
+    return ""
+
+
+def no_time_domain(plant: TransferFunction) -> str:
+    """Why there can be no prediction; nothing where there can."""
+    return without_state_space(plant)
 
 
 # --- what is to be said --------------------------------------------------------------------------
@@ -92,14 +129,12 @@ def _inner_notes(loop: Structure, inner: Loop) -> list[Note]:
     if loop.inner_mode != "cascade":
         words = f"the inner loop is in {loop.inner_mode}: the controller moves nothing"
         return [Note("caution", words)]
-    margins = analogue_margins(replace(inner, scan=None))
+    known = margins_as_sampled(inner)[0] if inner.scan is not None else None
+    margins = known or analogue_margins(replace(inner, scan=None))
     if not margins.stable:
         return [Note("caution", f"the inner loop is not stable by itself: {margins.reason}")]
     peak = text(margins.max_sensitivity.value, digits=3)
-    words = f"the inner loop by itself has Ms {peak}"
-    if loop.scan is not None:
-        words += "; margins of the whole are those of analogue controllers, as it has two scans"
-    return [Note("info", words)]
+    return [Note("info", f"the inner loop by itself has Ms {peak}")]
 
 
 def _feedforward_notes(case: Case, loop: Structure, given: Feedforward) -> list[Note]:

@@ -18,7 +18,8 @@ from workbench.errors import InputError, WorkbenchError
 from workbench.study.assessment import assess
 from workbench.study.keep import faults_of
 from workbench.study.loop import controller_of
-from workbench.study.proposals import Wish, rule_settings
+from workbench.study.proposals import rule_settings
+from workbench.study.wish import Wish
 from workbench.units import Figure, harmless, text
 
 

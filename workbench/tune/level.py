@@ -20,7 +20,10 @@ SKOGESTAD_SMOOTH: Final = (
 )
 SKOGESTAD_SMOOTH_PI: Final = f"{SKOGESTAD_SMOOTH} (the factor 2/e of PI derived)"
 _MOST_DELAY: Final = 0.1
-"""Dead time over 1/(K k'): up to here it adds less than a tenth to the deviation."""
+"""Dead time over 1/(K k'): up to here it adds less than a tenth to the deviation.
+
+The sources leave the dead time out and state no limit; this one is our own.
+"""
 
 
 def skogestad_averaging_level(
@@ -55,8 +58,12 @@ def skogestad_averaging_level(
     Raises
     ------
     NotApplicable
-        Self-regulating, upset or deviation not given, or a dead time above a tenth of 1/(K k'):
-        the formulas leave it out.
+        Self-regulating, upset or deviation not given, or a dead time above a tenth of 1/(K k').
+
+    Notes
+    -----
+    The formulas leave the dead time out.  The source states no limit for it; a tenth of 1/(K k') is
+    our own: before the controller answers, PV then moves by about a tenth of dh at most.
 
     Source
     ------
@@ -81,8 +88,7 @@ def skogestad_averaging_level(
     if share > _MOST_DELAY:
         raise NotApplicable(
             f"the dead time is {text(share, digits=3)} of 1/(K k')",
-            limit=f"wants at most {text(_MOST_DELAY)}",
-            source=SKOGESTAD_SMOOTH,
+            limit=f"wants at most {text(_MOST_DELAY)}, a limit of this program",
         )
     return Tuning(gain, None if kind == "p" else 4.0 / (gain * abs(model.gain)))
 

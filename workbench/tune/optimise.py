@@ -16,6 +16,7 @@ from __future__ import annotations
 import math
 from collections.abc import Callable, Sequence
 from dataclasses import dataclass, replace
+from functools import partial
 from typing import Final
 
 import numpy as np
@@ -27,6 +28,9 @@ from workbench.model.pid import Gains
 from workbench.model.robustness import analogue_margins, sampled_margins
 from workbench.model.sampled import SampledLoop, controller_in_z
 from workbench.model.sweep import Limits, frequencies, scale_of
+from workbench.sim.loop import settle_horizon, simulate
+from workbench.sim.metrics import measure
+from workbench.sim.scenario import Events
 from workbench.tune.bench import Aim, Bench, at_infinity
 
 Floats = NDArray[np.float64]
@@ -39,6 +43,8 @@ _INTEGRAL_TIMES: Final = {False: 45, True: 24}
 """Of the coarse look, by whether there is a derivative."""
 _RATIOS: Final = np.geomspace(0.02, 1.6, 14)
 """Derivative time over integral time, in the coarse look."""
+_LEAST_RATIO: Final = math.log(0.002)
+"""Logarithm of the smallest such share: below it a derivative does nothing but multiply noise."""
 _LOWER: Final = (0.0, 0.12, 0.35, 0.7)
 """How far below the highest gain that keeps the limits, as a logarithm, in the coarse look."""
 _SEEDS: Final = 3
@@ -51,6 +57,8 @@ _MOST_TRIES: Final = 6
 _MOST_ROUNDS: Final = 40
 _MOST_PLANTS: Final = 6
 """Times that worse plants of a family are added."""
+_MUCH_WORSE: Final = 1.01
+"""More than drawing a limit in by a little can cost."""
 _SPARE: Final = 0.9999
 """Share of a limit that is aimed at once the exact figure was over it."""
 
@@ -104,25 +112,89 @@ def best(
     ModelError
         A plant with a dead time inside an inner feedback.
     """
+    return _Family(loops, law, derivative, should_stop or (lambda: False)).best(aim)
+
+
+def trade_off(
+    loops: Sequence[Loop],
+    law: Law,
+    aim: Aim,
+    limits: Sequence[float],
+    *,
+    derivative: bool,
+    should_stop: Stop | None = None,
+) -> tuple[tuple[float, Best], ...]:
+    """The best settings at each of several limits on Ms, each search begun where the last ended.
+
+    Parameters
+    ----------
+    loops, law, aim
+        As for `best`; the limit on Ms in `aim` does not count.
+    limits
+        On Ms, above 1.
+    derivative, should_stop
+        As for `best`.
+
+    Returns
+    -------
+    tuple
+        (limit, best settings), the smallest limit first; limits that no settings keep, or within
+        which nothing limits the gain, are left out.
+
+    Raises
+    ------
+    ModelError
+        A plant with a dead time inside an inner feedback.
+    """
     stop = should_stop or (lambda: False)
-    whole = Bench.of(loops)
-    chosen = [0]
-    search = _Search(whole.only(chosen), law, aim, derivative, stop)
-    found = search.run()
-    for _ in range(_MOST_PLANTS if len(loops) > 1 else 0):
-        worse = _worst(whole, found, aim)
-        if stop() or all(plant in chosen for plant in worse):
+    family = _Family(loops, law, derivative, stop)
+    curve: list[tuple[float, Best]] = []
+    for limit in sorted(limits, reverse=True):
+        if stop():
             break
-        chosen = sorted({*chosen, *worse})
-        search = _Search(whole.only(chosen), law, aim, derivative, stop)
-        found = search.from_here(found)
-    found = _held_to_limits(search, [loops[i] for i in chosen], found)
-    if derivative and math.isfinite(aim.limits.noise_gain):
-        # A derivative filtered by a share of its time multiplies noise however short it is.
-        without = _or_none(lambda: best(loops, law, aim, derivative=False, should_stop=should_stop))
-        if without is not None and without.cost < found.cost:
-            return without
-    return found
+        within = replace(aim, limits=replace(aim.limits, max_sensitivity=limit))
+        found = _or_none(partial(family.best, within))
+        if found is not None:
+            curve.append((limit, found))
+        else:
+            # Smaller limits leave even less, and what has no limit here hardly has one there.
+            break
+    return tuple(reversed(curve))
+
+
+class _Family:
+    """A family of plants, those of them that have mattered so far, and the last best settings."""
+
+    def __init__(self, loops: Sequence[Loop], law: Law, derivative: bool, stop: Stop) -> None:
+        self.loops, self.law, self.derivative, self.stop = loops, law, derivative, stop
+        self.whole = Bench.of(loops)
+        self.chosen = [0]
+        self.last: Best | None = None
+        self.without: _Family | None = None
+        """The same without a derivative."""
+
+    def best(self, aim: Aim) -> Best:
+        """The best settings, looked for near the last ones where there are any."""
+        search = self._search(aim)
+        found = search.run() if self.last is None else search.from_here(self.last)
+        for _ in range(_MOST_PLANTS if len(self.loops) > 1 else 0):
+            worse = _worst(self.whole, found, aim)
+            if self.stop() or all(plant in self.chosen for plant in worse):
+                break
+            self.chosen = sorted({*self.chosen, *worse})
+            search = self._search(aim)
+            found = search.from_here(found)
+        found = self.last = _held_to_limits(search, [self.loops[i] for i in self.chosen], found)
+        if self.derivative and math.isfinite(aim.limits.noise_gain):
+            # A derivative filtered by a share of its time multiplies noise however short it is.
+            self.without = self.without or _Family(self.loops, self.law, False, self.stop)
+            without = _or_none(partial(self.without.best, aim))
+            if without is not None and without.cost < found.cost:
+                return without
+        return found
+
+    def _search(self, aim: Aim) -> _Search:
+        return _Search(self.whole.only(self.chosen), self.law, aim, self.derivative, self.stop)
 
 
 def _or_none(search: Callable[[], Best]) -> Best | None:
@@ -203,6 +275,9 @@ class _Search:
 
     def look(self, places: Sequence[_Spot], lower: Sequence[float], enough: float) -> list[_Spot]:
         """Every place with the gain lowered by every amount, for what it costs."""
+        places = [p for p in places if p.ratio is None or p.ratio >= _LEAST_RATIO]
+        if not places:
+            return []
         rays = self.bench.rays([self.law(1.0, *place.times) for place in places])
         low, high, far = self.bench.windows(rays, self.aim.limits)
         ray = np.repeat(np.arange(len(places)), len(lower))
@@ -219,13 +294,18 @@ class _Search:
         ]
 
     def near(self, found: Best) -> Best:
-        """The best of the times found, and a little lower in gain, within these limits."""
+        """The best of the times found, and a little lower in gain, within these limits.
+
+        Where these times have no such gain any more, the best near them: the window of gains that
+        held the best may have closed, and what is left lie far below it.
+        """
         ratio = math.log(found.derivative_time / found.integral_time) if self.derivative else None
         place = _Spot(math.log(found.integral_time), ratio)
         spots = self.look([place], (0.0, 0.01, 0.03, 0.1, 0.3), math.inf)
-        if not spots:
-            raise CannotSolve("no settings keep the limits on this plant", change="allow more")
-        return self.as_best(min(spots, key=lambda spot: spot.cost))
+        best = min(spots, key=lambda spot: spot.cost, default=None)
+        if best is None or best.cost > _MUCH_WORSE * found.cost:
+            return self.from_here(found)
+        return self.as_best(best)
 
     def _coarse(self) -> tuple[list[_Spot], tuple[float, float, float]]:
         """Seeds, best first, and the steps with which to go on."""
@@ -283,42 +363,55 @@ def _apart(spot: _Spot, seed: _Spot, steps: tuple[float, float, float]) -> bool:
 
 def _held_to_limits(search: _Search, loops: Sequence[Loop], found: Best) -> Best:
     """The settings found, drawn in until the exact figures keep the limits."""
-    limits = wanted = search.aim.limits
+    aim = search.aim
     for _ in range(_MOST_TRIES):
-        over_ms, over_mt, over_noise = _exceeded(loops, found.gains, wanted)
-        if max(over_ms, over_mt, over_noise) <= 1.0:
+        over = _exceeded(loops, found.gains, search.aim)
+        if max(over.values()) <= 1.0:
             return found
         limits = Limits(
-            _drawn_in(limits.max_sensitivity, over_ms),
-            _drawn_in(limits.max_complementary_sensitivity, over_mt),
-            limits.noise_gain * min(_SPARE / over_noise, 1.0) if over_noise else math.inf,
+            _drawn_in(aim.limits.max_sensitivity, over["ms"], 1.0001),
+            _drawn_in(aim.limits.max_complementary_sensitivity, over["mt"], 1.0001),
+            _drawn_in(aim.limits.noise_gain, over["noise"]),
         )
-        tighter = _Search(
-            search.bench,
-            search.law,
-            replace(search.aim, limits=limits),
-            search.derivative,
-            search.stop,
-        )
+        travel = _drawn_in(aim.load_travel, over["travel"])
+        aim = replace(aim, limits=limits, load_travel=travel)
+        tighter = _Search(search.bench, search.law, aim, search.derivative, search.stop)
         found = tighter.near(found)
     return found
 
 
-def _drawn_in(limit: float, over: float) -> float:
-    return max(1.0001, _SPARE * limit / over) if over > 1.0 else limit
+def _drawn_in(limit: float, over: float, least: float = 0.0) -> float:
+    return max(least, _SPARE * limit / over) if over > 1.0 else limit
 
 
-def _exceeded(loops: Sequence[Loop], gains: Gains, limits: Limits) -> tuple[float, float, float]:
-    """The largest exact Ms, Mt and noise gain as shares of their limits."""
-    worst = [0.0, 0.0, 0.0]
+def _exceeded(loops: Sequence[Loop], gains: Gains, aim: Aim) -> dict[str, float]:
+    """The largest exact figures as shares of their limits, 0 where there is no limit."""
+    limits = aim.limits
+    worst = {"ms": 0.0, "mt": 0.0, "noise": 0.0, "travel": 0.0}
     for loop in (replace(loop, gains=gains) for loop in loops):
         margins = analogue_margins(loop) if loop.scan is None else sampled_margins(loop)
         ms, mt = margins.max_sensitivity.value, margins.max_complementary_sensitivity.value
-        worst[0] = max(worst[0], (ms or 2.0 * limits.max_sensitivity) / limits.max_sensitivity)
-        worst[1] = max(worst[1], (mt or 1.0) / limits.max_complementary_sensitivity)
+        shares = {
+            "ms": (ms or 2.0 * limits.max_sensitivity) / limits.max_sensitivity,
+            "mt": (mt or 1.0) / limits.max_complementary_sensitivity,
+        }
         if math.isfinite(limits.noise_gain):
-            worst[2] = max(worst[2], noise_gain(loop) / limits.noise_gain)
-    return worst[0], worst[1], worst[2]
+            shares["noise"] = noise_gain(loop) / limits.noise_gain
+        if math.isfinite(aim.load_travel):
+            shares["travel"] = load_travel(loop, aim.load_step) / aim.load_travel
+        worst |= {name: max(worst[name], share) for name, share in shares.items()}
+    return worst
+
+
+def load_travel(loop: Loop, load_step: float) -> float:
+    """All moves of OP after a load step from rest, added up, by the engine [% of OP span].
+
+    Without the output's own limits, which the search does not know of.
+    """
+    free = replace(loop, low=None, high=None, rate=None)
+    events = Events(0.0, 0.0, load_step, 0.0, settle_horizon(free))
+    travel = measure(simulate(free, events), events).output_travel.value
+    return math.inf if travel is None else travel
 
 
 def noise_gain(loop: Loop) -> float:

@@ -71,7 +71,7 @@ _SWINGS: Final = "a plant whose phase reaches -180 deg"
 _QUARTER: Final = "a decay ratio of a quarter: fast, lively, easily upset by a changed plant"
 _GIVEN: Final = "a first-order answer to the setpoint with the closed-loop time constant"
 _SMOOTH: Final = "the smoothest output that keeps the level within the allowed deviation"
-_AVERAGED: Final = "an integrating plant whose dead time is at most 0.1/(K k')"
+_AVERAGED: Final = "an integrating plant whose dead time is at most 0.1/(K k') (a limit of ours)"
 _TIGHT: Final = "tight control with good margins, Ms near 1.6"
 
 RULES: Final[dict[str, Rule]] = {
