@@ -107,7 +107,7 @@ def test_options_become_keys_of_the_case() -> None:
         ("assess", ["a", "b"], "'b': is one word too many", "quotes"),
         ("history", [], "CASE: is missing", "workbench history CASE"),
         ("history", ["c", "--between", "1"], "--between: has too few values", "--between A B"),
-        ("fit", [], "RECORD.csv...: is missing", "workbench fit RECORD.csv"),
+        ("fit", [], "RECORD.csv...: is missing", "workbench fit RECORD.csv..."),
         (
             "assess",
             ["c", "--set", "gain"],
