@@ -35,6 +35,7 @@ from tests.model.test_robustness import brinks, sampled_circles, sampled_verdict
 from tests.model.test_stability import verdicts
 from tests.model.test_transfer import laws, limits, step_responses
 from tests.plain import sampled_pv
+from tests.records.campaigns import certain, choices
 from tests.records.damage import damaged_records
 from tests.records.replaying import recognised
 from tests.records.swinging import blamed
@@ -480,6 +481,12 @@ CAMPAIGNS: Final[dict[str, Campaign]] = {
     "fits of made records": Campaign(fitted_records, 10, 400),
     "controllers recognised": Campaign(_judged(recognised, 301, 0.0, "share wrong"), 3, 200),
     "why loops swing": Campaign(_judged(blamed, 302, 0.05, "share of valves judged wrong"), 3, 300),
+    "intervals of every shape": Campaign(
+        _judged(certain, 0, 3.1, "sd that a share held is off 95 %"), 16, 4000
+    ),
+    "the right shape chosen": Campaign(
+        _judged(choices, 0, 0.1, "share in which another was chosen"), 4, 400
+    ),
     "damaged case files": Campaign(damaged_files, 100, 20_000),
     "case files kept": Campaign(kept_files, 20, 2000),
     "damaged records": Campaign(

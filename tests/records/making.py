@@ -33,6 +33,28 @@ def two_lags(gain: float, first: float, second: float) -> Answer:
     )
 
 
+def lead(gain: float, numerator: float, first: float, second: float) -> Answer:
+    """Step response of gain (Tz s + 1)/((T1 s + 1)(T2 s + 1)), T1 not T2 (exact)."""
+    lags = two_lags(gain, first, second)
+    return lambda t: (
+        lags(t) + gain * numerator * (np.exp(-t / first) - np.exp(-t / second)) / (first - second)
+    )
+
+
+def swing(gain: float, period: float, damping: float) -> Answer:
+    """Step response of gain/(t^2 s^2 + 2 d t s + 1), t = period/(2 pi) (exact)."""
+    decay = 2 * np.pi * damping / period
+    turn = 2 * np.pi * np.sqrt(1 - damping**2) / period
+    return lambda t: (
+        gain * (1 - np.exp(-decay * t) * (np.cos(turn * t) + decay / turn * np.sin(turn * t)))
+    )
+
+
+def runaway(gain: float, time_constant: float) -> Answer:
+    """Step response of gain/(T s - 1) (exact)."""
+    return lambda t: gain * np.expm1(t / time_constant)
+
+
 def ramp(slope: float) -> Answer:
     """Step response of slope/s (exact)."""
     return lambda t: slope * t

@@ -9,16 +9,16 @@ import numpy as np
 import pytest
 
 from tests.model.spreads import exact
+from tests.records.making import bump, lag, ramp, stamps
 from workbench import study
 from workbench.case.case import Case, edit_all, new_case
 from workbench.case.files import read_case
-from workbench.errors import InputError, NotApplicable
-from workbench.model.plant import EqualLags, FirstOrder, Integrating
-from workbench.records.identify import Candidate
+from workbench.errors import InputError
+from workbench.model.plant import FirstOrder, Integrating
+from workbench.records.candidate import Candidate
 from workbench.sim.loop import simulate
 from workbench.sim.metrics import measure
 from workbench.study.loop import loop_of
-from workbench.units import Amount
 
 
 def a_case(**changes: str) -> Case:
@@ -165,57 +165,35 @@ def test_a_family_is_kept_in_the_file(tmp_path: Path) -> None:
 # --- from a fit ----------------------------------------------------------------------------------
 
 
-def _candidate(plant: FirstOrder | Integrating | EqualLags) -> Candidate:
-    """As a fit hands it on, of gain 2 +- 0.1, time constant 40 +- 4 s, dead time 6 s, 4 to 10 s."""
-    integrating = isinstance(plant, Integrating)
-    return Candidate(
-        shape=plant.shape,
-        plant=plant,
-        gain=None if integrating else 2.0,
-        slope_per_s=0.02 if integrating else None,
-        dead_time_s=6.0,
-        time_constants_s=() if integrating else (40.0,),
-        standard_errors={
-            **({"slope_per_s": 0.001} if integrating else {"gain": 0.1}),
-            "dead_time_s": 1.5,
-            "time_constants_s": () if integrating else (4.0,),
-        },
-        interval_95={"dead_time_s": (4.0, 10.0)},
-        agreement_percent=90.0,
-        bic=0.0,
-        noise_model="white",
-        fitted_pv=np.zeros(3),
-        residual_sd=0.1,
-    )
+def _candidate(shape: str) -> Candidate:
+    """As a fit of a made record hands it on, its gain known to a few percent."""
+    answer = lag(2.0, 40.0) if shape == "first-order" else ramp(0.02)
+    made = bump(stamps(300, 3.0), answer, 6.0, noise=1.0)
+    best = study.fit_plants(made, shapes=(shape,), noise_model="white").best
+    assert best is not None
+    return best
 
 
 def test_plants_are_drawn_as_uncertain_as_the_fit() -> None:
-    fit = _candidate(FirstOrder(2.0, Amount(40.0, "s"), Amount(6.0, "s")))
+    fit = _candidate("first-order")
     plants = study.drawn_plants(fit, 2000)
     drawn = [plant for plant in plants if isinstance(plant, FirstOrder)]
     assert len(drawn) == 2000
-    gains = np.log([plant.gain for plant in drawn])
-    lags = np.log([plant.time_constant.seconds for plant in drawn])
+    gains = np.array([plant.gain for plant in drawn])
     late = np.array([plant.dead_time.seconds for plant in drawn])
-    # exact: sd of a logarithm is the standard error as a share; 2000 draws know it within 5 %
-    assert gains.std() == pytest.approx(0.05, rel=0.06)
-    assert lags.std() == pytest.approx(0.1, rel=0.06)
-    assert float(np.mean(late < 4.0)) == pytest.approx(0.025, abs=0.012)
-    assert float(np.mean(late > 10.0)) == pytest.approx(0.025, abs=0.012)
+    for values, key in ((gains, "gain"), (late, "dead_time_s")):
+        low, high = (float(end) for end in np.ravel(np.array(fit.interval_95[key])))
+        # exact: 2.5 % on each side; 2000 draws know it within 1 %
+        assert float(np.mean(values < low)) == pytest.approx(0.025, abs=0.012)
+        assert float(np.mean(values > high)) == pytest.approx(0.025, abs=0.012)
     assert study.drawn_plants(fit, 3) == plants[:3]
 
 
 def test_plants_drawn_from_a_fit_become_the_family() -> None:
-    fit = _candidate(FirstOrder(2.0, Amount(40.0, "s"), Amount(6.0, "s")))
-    case = study.with_family(a_case(), study.drawn_plants(fit, 20))
+    case = study.with_family(a_case(), study.drawn_plants(_candidate("first-order"), 20))
     found = study.family_figures(case)
     assert found is not None
     assert found.plants == 21
     assert math.isfinite(found.figures["max_sensitivity"].worst.value or math.inf)
-    level = study.drawn_plants(_candidate(Integrating(Amount(0.02, "/s"))), 5)
+    level = study.drawn_plants(_candidate("integrating"), 5)
     assert all(isinstance(plant, Integrating) for plant in level)
-
-
-def test_a_shape_whose_lags_cannot_be_told_apart_is_refused() -> None:
-    with pytest.raises(NotApplicable, match="equal-lags"):
-        study.drawn_plants(_candidate(EqualLags(2.0, Amount(10.0, "s"), 4.0)), 3)

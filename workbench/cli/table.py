@@ -269,7 +269,7 @@ FOLLOWING: Final[tuple[Option, ...]] = (
 )
 FIT: Final[tuple[Option, ...]] = (
     *READING,
-    Option("--shape", "SHAPE", "fit this shape only", "first-order and integrating"),
+    Option("--shape", "SHAPE", "fit this shape only", "every shape that can be fitted"),
     Option("--noise-model", "auto|white|correlated", "how the noise is described", "auto"),
     Option("--no-drift", "", "PV has no drift of its own in the record"),
     *FOLLOWING,

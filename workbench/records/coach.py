@@ -15,7 +15,8 @@ from numpy.typing import NDArray
 
 from workbench.model.plant import Shape
 from workbench.model.response import held_response
-from workbench.records.identify import Candidate, Fit
+from workbench.records.candidate import Candidate
+from workbench.records.identify import Fit
 from workbench.records.record import Record
 from workbench.units import Amount, Figure, Range, text, time_text
 

@@ -4,12 +4,15 @@ from __future__ import annotations
 
 from collections.abc import Mapping
 from dataclasses import asdict
-from typing import TYPE_CHECKING, Final
+from typing import TYPE_CHECKING, Any, Final
 
 from workbench.units import Amount, harmless, text, time_text
 
 if TYPE_CHECKING:
-    from workbench.records.identify import Candidate, Fit
+    from workbench.records.candidate import Candidate
+    from workbench.records.closed_loop import StepModel
+    from workbench.records.identify import Fit
+    from workbench.records.judgement import Judgement
     from workbench.study import Advice, Live
 from workbench.report.words import Json, Rows, note_lines, put, two_columns, wrapped
 
@@ -28,6 +31,8 @@ def fit_data(fit: Fit, advice: Advice | None = None) -> Json:
         "chosen": fit.chosen,
         **({} if fit.chosen else {"chosen_reason": fit.reason}),
         "warnings": [note.text for note in (*record.notes, *fit.warnings)],
+        "cross_checks": _cross_check_data(fit),
+        **_loop_data(fit),
         "bumps": [asdict(bump) for bump in bumps(record)],
         **({} if advice is None else {"advice": _advice_data(advice)}),
         "units": {"pv": "PV unit of the record", "op": "OP unit of the record"},
@@ -77,7 +82,83 @@ def _candidate_data(candidate: Candidate) -> Json:
         **({} if candidate.noise_time_s else {"noise_time_s_reason": "white noise has none"}),
         "residual_sd": float(candidate.residual_sd),
         "drift_per_s": float(candidate.drift_per_s),
+        **_certainty_data(candidate),
     }
+
+
+def _certainty_data(candidate: Candidate) -> Json:
+    """What the likelihood says of all parameters together, and what the fit leaves over."""
+    known, judged = candidate.certainty, candidate.judgement
+    seen = judged.holdout_percent
+    return {
+        "correlation": {"of": list(known.names), "matrix": _plain(known.correlation.tolist())},
+        "dead_time_profile": [
+            {"dead_time_s": float(at), "rise": float(rise)} for at, rise in known.profile
+        ],
+        "residual_whiteness": _plain(asdict(judged.whiteness)),
+        "input_residual": _plain(asdict(judged.input_residual)),
+        "holdout_percent": seen,
+        **({} if seen is not None else {"holdout_percent_reason": "there is one bump only"}),
+        "moves": [_plain(asdict(move)) for move in judged.moves],
+        **_directions(judged),
+    }
+
+
+def _directions(judged: Judgement) -> Json:
+    data: Json = {}
+    for key, found in (("gain_up", judged.gain_up), ("gain_down", judged.gain_down)):
+        if found is None:
+            data[key] = None
+            data[f"{key}_reason"] = "OP did not move a few times both ways"
+        else:
+            data[key] = {"gain": found[0], "standard_error": found[1]}
+    return data
+
+
+def _cross_check_data(fit: Fit) -> list[Json]:
+    """Graphical and published one-test methods, none of which is the fit."""
+    read = [model for model in _step_models(fit) if not isinstance(model, str)]
+    return [_plain(asdict(each)) for each in fit.readings] + [_plain(asdict(m)) for m in read]
+
+
+def _step_models(fit: Fit) -> list[StepModel | str]:
+    """What the published methods read from a setpoint step, or why they do not."""
+    from workbench.errors import NotApplicable
+    from workbench.records.closed_loop import shamsuzzoha_skogestad, yuwana_seborg
+
+    if fit.step is None:
+        return []
+    found: list[StepModel | str] = []
+    for method in (shamsuzzoha_skogestad, yuwana_seborg):
+        try:
+            found.append(method(fit.step))
+        except NotApplicable as fault:
+            found.append(str(fault))
+    return found
+
+
+def _loop_data(fit: Fit) -> Json:
+    """How OP came about, and the swing of a relay test."""
+    loop, relay = fit.loop, fit.relay
+    data: Json = {"relay": None}
+    if loop is None:
+        data |= {"feedback": None, "feedback_reason": fit.reason}
+    else:
+        data["feedback"] = {
+            "time_in_auto_percent": 100.0 * loop.automatic_share,
+            "op_explained_by_pv_percent": max(100.0 * loop.follows_pv, 0.0),
+            "setpoint_moves": loop.setpoint_moves,
+            "manual_moves": loop.manual_moves,
+        }
+    if relay is None:
+        data["relay_reason"] = "OP did not switch as a relay does"
+    else:
+        data["relay"] = {
+            **_plain(asdict(relay)),
+            "ultimate_gain": relay.ultimate_gain,
+            "option": relay.option,
+        }
+    return data
 
 
 def _plant_parameters(candidate: Candidate) -> Json:
@@ -86,12 +167,8 @@ def _plant_parameters(candidate: Candidate) -> Json:
         key: list(values) if key == "time_constants_s" else values[0]
         for key, values in _fitted(candidate).items()
     }
-    plant = candidate.plant
-    period, damping = getattr(plant, "natural_period", None), getattr(plant, "damping", None)
-    data["natural_period_s"] = None if period is None else float(period.seconds)
-    data["damping"] = None if damping is None else float(damping)
-    for key in ("natural_period_s", "damping"):
-        if data[key] is None:
+    for key in ("natural_period_s", "damping", "numerator_time_s"):
+        if data.setdefault(key, None) is None:
             data[f"{key}_reason"] = f"the shape {candidate.shape} has none"
     return data
 
@@ -103,6 +180,9 @@ def _fitted(candidate: Candidate) -> dict[str, list[float]]:
         ("gain", ("gain",)),
         ("slope_per_s", ("slope",)),
         ("dead_time_s", ("dead_time",)),
+        ("numerator_time_s", ("numerator_time",)),
+        ("natural_period_s", ("natural_period",)),
+        ("damping", ("damping",)),
         ("time_constants_s", ("time_constant", "second_time_constant")),
     ):
         for name in names:
@@ -115,7 +195,7 @@ def _fitted(candidate: Candidate) -> dict[str, list[float]]:
     return found
 
 
-def _plain(value: object) -> object:
+def _plain(value: object) -> Any:
     """Numbers, tuples and dictionaries of a result as JSON takes them."""
     if isinstance(value, Mapping):
         return {str(key): _plain(one) for key, one in value.items()}
@@ -124,11 +204,17 @@ def _plain(value: object) -> object:
     return float(value) if isinstance(value, int | float) else value
 
 
+_DOUBT: Final = 0.01
+"""Chance below which a test of what is left over is taken to have failed."""
+
 _ERRORS: Final = {
     "gain": ("gain", "PV per OP"),
     "slope_per_s": ("slope", "PV/s per OP"),
     "dead_time_s": ("dead time", "s"),
     "time_constants_s": ("time constant", "s"),
+    "numerator_time_s": ("numerator time", "s"),
+    "natural_period_s": ("natural period", "s"),
+    "damping": ("damping", ""),
 }
 """Key of `standard_errors` -> words, unit, in the units of the record."""
 
@@ -158,9 +244,13 @@ def fit_text(fit: Fit, width: int, advice: Advice | None = None) -> str:
     ]
     for candidate in fit.candidates:
         mark = " (chosen)" if candidate.shape == fit.chosen else ""
-        lines += ["", f"{candidate.shape}{mark}", *two_columns(_candidate_rows(candidate), width)]
+        rows = _candidate_rows(candidate)
+        if candidate is fit.best:
+            rows += _chosen_rows(candidate)
+        lines += ["", f"{candidate.shape}{mark}", *two_columns(rows, width)]
     if fit.chosen is None:
         lines += ["", wrapped(f"No model is chosen. {fit.reason}", width)]
+    lines += _cross_check_lines(fit, width)
     if advice is not None:
         lines += ["", wrapped(advice.say, width)]
     told = [note for note in (*record.notes, *fit.warnings) if note.text != fit.reason]
@@ -185,6 +275,62 @@ def _candidate_rows(candidate: Candidate) -> Rows:
         ("BIC", text(candidate.bic, digits=6)),
     ]
     return rows
+
+
+def _chosen_rows(candidate: Candidate) -> Rows:
+    """What more is said of the model to use."""
+    judged = candidate.judgement
+    rows: Rows = []
+    if judged.holdout_percent is not None:
+        shown = f"{text(judged.holdout_percent, '%', 3)} agreement, by a fit to the rows before it"
+        rows.append(("last bump", shown))
+    for test, kept, broken, name in (
+        (judged.whiteness, "white", "not white", "Ljung-Box"),
+        (judged.input_residual, "no trace of OP", "OP still shows", "score test"),
+    ):
+        verdict = kept if test.p_value > _DOUBT else broken
+        rows.append(("left over", f"{verdict} ({name}, p = {text(test.p_value, digits=2)})"))
+    level, unit = _ERRORS[candidate.certainty.names[0]]
+    for way, found in (("up", judged.gain_up), ("down", judged.gain_down)):
+        if found is not None:
+            shown = f"{text(found[0], unit)}, standard error {text(found[1], digits=2)}"
+            rows.append((f"{level} {way}", shown))
+    for move in judged.moves:
+        shown = f"{text(move.gain)}, standard error {text(move.standard_error, digits=2)}"
+        rows.append((f"OP {text(move.op_from)} to {text(move.op_to)}", f"{level} {shown}"))
+    known = candidate.certainty
+    for i, name in enumerate(known.names):
+        for k in range(i):
+            if abs(known.correlation[i, k]) > 0.5:
+                pair = f"{_ERRORS[known.names[k]][0]} and {_ERRORS[name][0]}"
+                rows.append(("correlation", f"{known.correlation[i, k]:.2f} of {pair}"))
+    return rows
+
+
+def _cross_check_lines(fit: Fit, width: int) -> list[str]:
+    """Other methods' answers, labelled as what they are."""
+    rows: Rows = []
+    for each in (*fit.readings, *_step_models(fit)):
+        if isinstance(each, str):
+            rows.append(("setpoint step", each))
+            continue
+        shown = (
+            f"gain {text(each.gain)}, time constant {text(each.time_constant_s, 's')}, "
+            f"dead time {text(each.dead_time_s, 's')}{'; ' if each.remark else ''}{each.remark}"
+        )
+        rows.append((each.method, shown))
+    lines: list[str] = []
+    if rows:
+        lines += ["", "Cross-check only, not a fit:", *two_columns(rows, width)]
+    if fit.relay is not None:
+        found = fit.relay
+        shown = (
+            f"Relay test: ultimate gain {text(found.ultimate_gain)} OP per PV, period "
+            f"{text(found.period_s, 's')}; hand it on with: workbench propose ... "
+            f'--relay "{found.option}"'
+        )
+        lines += ["", wrapped(shown, width, hang="  ")]
+    return lines
 
 
 def _with_error(value: float, error: object, ends: object, unit: str) -> str:

@@ -27,7 +27,8 @@ from workbench.screens.view import View
 from workbench.screens.work import Work
 
 if TYPE_CHECKING:
-    from workbench.records.identify import Candidate, Fit
+    from workbench.records.candidate import Candidate
+    from workbench.records.identify import Fit
     from workbench.records.record import Reading, Record
 
 MOST: Final = 2000

@@ -21,12 +21,12 @@ from numpy.typing import NDArray
 from workbench.case.case import Case, edit
 from workbench.errors import CannotSolve, InputError, NotApplicable
 from workbench.model.feedback import Loop
-from workbench.model.plant import FirstOrder, Integrating, Shape, write_function
+from workbench.model.plant import Shape, write_function
 from workbench.model.spread import judge
 from workbench.model.structures import Structure
 from workbench.model.transfer import TransferFunction
 from workbench.model.variation import Variation
-from workbench.records.identify import Candidate
+from workbench.records.candidate import Candidate
 from workbench.sim.family import side_by_side
 from workbench.sim.loop import simulate
 from workbench.sim.metrics import absolute_area
@@ -34,7 +34,7 @@ from workbench.sim.scenario import Events
 from workbench.study.loop import instruments_of, loop_of, no_time_domain, plant_of
 from workbench.study.operating import about_rest
 from workbench.study.structure import has_one_scan
-from workbench.units import Amount, Figure, harmless, rounded
+from workbench.units import Figure, harmless
 
 Floats = NDArray[np.float64]
 
@@ -122,57 +122,19 @@ def _varied(centre: Member, ratios: dict[str, float]) -> Member:
 def drawn_plants(candidate: Candidate, count: int, seed: int = _SEED) -> tuple[Shape, ...]:
     """Plants that a record cannot tell apart, drawn from the uncertainty of a fit.
 
-    Gain or slope and time constants are drawn from normal distributions of their logarithms, the
-    dead time from a normal distribution of which each half has the width of its own side of the
-    95 % interval; all with the standard errors of the fit, each by itself.
+    As `Candidate.family` draws them: each value as far up and down as its own 95 % interval
+    reaches, all with the correlation that the fit found between them.
 
     Parameters
     ----------
     candidate
-        Of a shape with one lag or none.
+        Of any shape.
     count
         How many.
     seed
         The same plants each time.
-
-    Raises
-    ------
-    NotApplicable
-        Another shape.
     """
-    draw = np.random.default_rng(seed)
-    size = candidate.gain if candidate.gain is not None else candidate.slope_per_s
-    word = "gain" if candidate.gain is not None else "slope_per_s"
-    if size is None or not isinstance(candidate.plant, FirstOrder | Integrating):
-        raise NotApplicable(
-            f"a family is not drawn from a fit of the shape {candidate.shape}",
-            limit="wants first-order or integrating",
-        )
-    found: list[Shape] = []
-    for _ in range(count):
-        dice = draw.normal(size=3)
-        level = size * math.exp(_error(candidate, word) / abs(size) * dice[0])
-        late = Amount(rounded(_dead_time(candidate, float(dice[1]))), "s")
-        if isinstance(candidate.plant, Integrating):
-            found.append(Integrating(Amount(rounded(level), "/s"), late))
-            continue
-        lag = candidate.time_constants_s[0]
-        longer = math.exp(_error(candidate, "time_constants_s") / lag * dice[2])
-        found.append(FirstOrder(rounded(level), Amount(rounded(lag * longer), "s"), late))
-    return tuple(found)
-
-
-def _error(candidate: Candidate, key: str) -> float:
-    """Standard error of a parameter; of the first where there are several."""
-    value = candidate.standard_errors[key]
-    return float(value if isinstance(value, float | int) else value[0])
-
-
-def _dead_time(candidate: Candidate, dice: float) -> float:
-    low, high = (float(end) for end in np.ravel(candidate.interval_95["dead_time_s"])[:2])
-    middle = candidate.dead_time_s
-    side = (high - middle) if dice > 0.0 else (middle - low)
-    return max(0.0, middle + dice * side / 1.96)
+    return candidate.family(count, seed)
 
 
 def with_family(case: Case, plants: Sequence[Shape], name: str = "drawn") -> Case:

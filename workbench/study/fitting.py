@@ -11,15 +11,13 @@ from workbench.records.coach import CERTAINTY, Advice, advise
 from workbench.records.following import Following
 from workbench.records.identify import Fit, fit
 from workbench.records.record import Reading, Record, begin, join, read_record
+from workbench.records.response import FITTED
 from workbench.units import Range
 
 _GROWN: Final = 1.25
 """Growth of a followed record after which every shape is fitted again."""
 
 Stop = Callable[[], bool] | None
-
-FITTED: Final = ("first-order", "integrating")
-"""Shapes that are fitted where none is named."""
 
 
 def read_records(paths: Sequence[str | Path], **reading: Unpack[Reading]) -> Record:
@@ -38,10 +36,10 @@ def fit_plants(
     drift: bool = True,
     should_stop: Stop = None,
 ) -> Fit:
-    """Plants fitted to a record, the usual shapes where none is named.  Raises `CannotSolve`."""
+    """Plants fitted to a record, every shape where none is named.  Raises `CannotSolve`."""
     return fit(
         record,
-        shapes=shapes or FITTED,
+        shapes=shapes or tuple(FITTED),
         noise_model=noise_model,
         drift=drift,
         should_stop=should_stop,

@@ -22,7 +22,8 @@ from workbench.errors import (
 )
 from workbench.model.pid import Controller
 from workbench.model.plant import Formula, Shape
-from workbench.records.identify import Candidate, Fit
+from workbench.records.candidate import Candidate
+from workbench.records.identify import Fit
 from workbench.records.table import LARGEST_FILE
 from workbench.study.assessment import assess
 from workbench.study.loop import controller_of
