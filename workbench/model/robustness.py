@@ -143,11 +143,11 @@ def _soonest(loop: Loop, delay: float) -> float:
     assert loop.scan is not None
     count = max(_LOOKS, math.ceil(_LOOKS * min(delay / loop.scan, _MOST_SCANS)))
     before = 0.0
-    for further in np.linspace(0.0, delay, count, endpoint=False)[1:].tolist():
-        if stable(further):
-            before = further
+    for part in range(1, count):
+        after = delay * part / count
+        if stable(after):
+            before = after
             continue
-        after = further
         for _ in range(_HALVINGS):
             middle = 0.5 * (before + after)
             before, after = (middle, after) if stable(middle) else (before, middle)
