@@ -7,6 +7,7 @@ from __future__ import annotations
 
 import json
 import os
+import pkgutil
 import subprocess
 import sys
 from pathlib import Path
@@ -14,6 +15,7 @@ from typing import Any, Final
 
 import pytest
 
+from workbench import study
 from workbench.cli.table import COMMANDS
 
 ROOT: Final = Path(__file__).resolve().parents[1]
@@ -125,3 +127,27 @@ def test_the_first_screen_is_drawn_without_scipy(tmp_path: Path) -> None:
     assert "stable" in shown
     assert "textual" in _roots(modules)
     assert "scipy" not in _roots(modules)
+
+
+def test_every_name_that_study_offers_is_found_when_first_asked_for() -> None:
+    rooms = {room.name for room in pkgutil.iter_modules(study.__path__)}
+
+    assert not rooms & set(study.__all__), "a room that is loaded would hide what is offered"
+    assert all(getattr(study, name) is not None for name in study.__all__)
+
+
+_FRAME: Final = """
+import json, pathlib, sys
+from workbench.screens.app import WorkbenchApp
+from workbench.screens.work import Work
+Work.open(pathlib.Path(sys.argv[2]))
+pathlib.Path(sys.argv[1]).write_text(json.dumps(sorted(sys.modules)))
+"""
+
+
+def test_the_first_frame_waits_for_no_answers(tmp_path: Path) -> None:
+    modules = _run(_FRAME, tmp_path, str(ROOT / "cases" / "TIC-307.toml"))
+
+    late = ("workbench.records", "workbench.tune", "workbench.study.evaluation", "workbench.report")
+    assert not [name for name in modules if name.startswith(late)]
+    assert not _roots(modules) & {"scipy", "plotext"}

@@ -69,7 +69,7 @@ if TYPE_CHECKING:
         response_horizon,
     )
     from workbench.study.proposals import LIMITS, Proposal, propose, take
-    from workbench.study.records import Columns, SheetCheck, diagnose, plan_test, recognise
+    from workbench.study.records import SheetCheck, diagnose, plan_test, recognise
     from workbench.study.sheet import Retune, Stage, retune
     from workbench.study.surveying import Surveyed, survey
     from workbench.study.tolerances import LIMIT as TOLERANCE_LIMIT
@@ -87,7 +87,6 @@ __all__ = [
     "Assessment",
     "Axis",
     "Bump",
-    "Columns",
     "Conversion",
     "Distance",
     "Evaluation",
