@@ -165,9 +165,11 @@ def __getattr__(name: str) -> Any:
     """Load rooms until one has the name."""
     if name in __all__:
         for room in _rooms():
-            own = _RENAMED.get(name, name)
-            if own in vars(room):
-                found = globals()[name] = vars(room)[own]
+            found = vars(room).get(_RENAMED.get(name, name))
+            home = str(getattr(found, "__module__", room.__name__))
+            # What a room only uses may have the same name as what another one offers.
+            if found is not None and (home == room.__name__ or not home.startswith("workbench.")):
+                globals()[name] = found
                 return found
     raise AttributeError(f"module {__name__!r} has no attribute {name!r}")
 
