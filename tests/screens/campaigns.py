@@ -144,7 +144,7 @@ def _answered(terminal: Terminal, wide: int) -> float:
 def _changed(terminal: Terminal) -> None:
     """A setting is changed, so that there is a draft to keep."""
     terminal.wait_for("Gain margin")
-    terminal.press(b"2\x1b[B\x1b[B")
+    terminal.press(b"2\x1b[B")
     terminal.settle(0.3)
     terminal.press(b"+")
     terminal.wait_for("not saved")
