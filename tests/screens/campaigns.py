@@ -134,6 +134,9 @@ def _answered(terminal: Terminal, wide: int) -> float:
     if terminal.process.poll() is None:
         terminal.resize(wide, 24)
     while terminal.process.poll() is None and not terminal.read(0.02):
+        if " T " in Path(f"/proc/{terminal.process.pid}/stat").read_text(encoding="utf-8")[:40]:
+            # ctrl+z was among the keys; the shell that is not there would say `fg`.
+            terminal.process.send_signal(signal.SIGCONT)
         assert time.monotonic() - started < 30.0, "it does not answer any more"
     return time.monotonic() - started
 
@@ -355,6 +358,7 @@ class _Walk:
         self.terminal, self.ascii_only = terminal, ascii_only
         self.left = {kind: _in_turn(kind) for kind in pages()}
         self.faults: list[str] = []
+        self.last = "the first page"
 
     def page(self) -> type[Page] | None:
         """The page that is shown, told by its key line."""
@@ -368,8 +372,11 @@ class _Walk:
         """One key; whether there was anything left to press."""
         kind = self.page()
         if kind is None:
-            # Something is asked, or a list of another kind is open.
-            self._press(b"\x1b", "Esc")
+            self.terminal.settle(0.5)
+            if self.page() is None and self.terminal.process.poll() is None:
+                shown = self.terminal.text()
+                self.faults.append(f"{self.last}: no whole key line at the foot\n{shown}")
+                self._press(b"\x1b", "Esc")
             return True
         commands = self.left[kind]
         if not commands:
@@ -383,6 +390,7 @@ class _Walk:
         return True
 
     def _press(self, keys: bytes, words: str) -> None:
+        self.last = words
         self.terminal.press(keys)
         self.terminal.settle(0.5 if keys == b"\x1b" else 0.2)
         sent, self.terminal.sent = self.terminal.sent, b""
