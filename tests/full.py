@@ -502,7 +502,7 @@ CAMPAIGNS: Final[dict[str, Campaign]] = {
     ),
     "line noise": Campaign(_judged(line_noise, 401, 20.0, "seconds until it answers"), 2, 600),
     "bad lines": Campaign(_judged(bad_lines, 402, 0.0, "ended or went on badly"), 1, 120),
-    "every page and action": Campaign(_judged(walks, 403, 0.0, "screens at fault"), 12, 1680),
+    "every page and action": Campaign(_judged(walks, 403, 0.0, "screens at fault"), 6, 1680),
     "command lines at random": Campaign(command_lines, 40, 3000),
 }
 """Name -> campaign, and its sizes."""
