@@ -41,6 +41,7 @@ from workbench.study.fitting import (
     narrowed,
     read_records,
 )
+from workbench.study.frequency import FrequencyReading, FrequencyResponse, frequency_response
 from workbench.study.keep import (
     FileCheck,
     accept,
@@ -55,6 +56,7 @@ from workbench.study.prediction import (
     Prediction,
     Response,
     Trend,
+    TrendReading,
     predict,
     respond,
     respond_to_record,
@@ -85,6 +87,8 @@ __all__ = [
     "Evaluation",
     "FamilyFigures",
     "FileCheck",
+    "FrequencyReading",
+    "FrequencyResponse",
     "InnerTrend",
     "Live",
     "LiveTest",
@@ -107,6 +111,7 @@ __all__ = [
     "TradeOff",
     "TradeOffPoint",
     "Trend",
+    "TrendReading",
     "Wish",
     "accept",
     "action_of",
@@ -127,6 +132,7 @@ __all__ = [
     "fit_plants",
     "fit_record",
     "fit_sources",
+    "frequency_response",
     "loop_of",
     "members",
     "narrowed",
