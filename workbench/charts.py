@@ -302,8 +302,10 @@ class Axis:
 
     def share(self, values: Floats) -> Floats:
         """Values as shares of the axis: 0 at the low end, 1 at the high end."""
-        # Halved before subtracting, so that no span of finite numbers overflows.
-        return (values / 2 - self.low / 2) / (self.high / 2 - self.low / 2)
+        # Halved before subtracting, so that no span of finite numbers overflows; what lies out of
+        # view may be so far off that its share does, and infinity is as far.
+        with np.errstate(over="ignore"):
+            return (values / 2 - self.low / 2) / (self.high / 2 - self.low / 2)
 
     def with_ticks(self, most: int) -> Axis:
         """The axis with round ticks; a time axis in the unit that reads best."""
@@ -347,7 +349,6 @@ def decade_ticks(low: float, high: float, most: int) -> Ticks:
     >>> decade_ticks(-2.5, 1.2, 6)
     ((-2.0, -1.0, 0.0, 1.0), ('0.01', '0.1', '1', '10'))
     """
-    low, high = (min(max(end, -290.0), 290.0) for end in (low, high))
     if high - low < 1.0:
         values, labels = round_ticks(10.0**low, 10.0**high, most)
         kept = [(math.log10(v), label) for v, label in zip(values, labels, strict=True) if v > 0.0]
@@ -409,7 +410,7 @@ def _span(arrays: Sequence[Floats]) -> tuple[float, float] | None:
 def _x_axis(
     panes: Sequence[Pane], limits: tuple[float, float] | None, name: str, scale: Scale
 ) -> Axis:
-    low, high = limits or x_span(panes)
+    low, high = (_held(end, scale) for end in limits or x_span(panes))
     if high - low < 1e-9 * max(1.0, abs(low), abs(high)):
         high = low + max(1.0, abs(low) * 1e-6)
     return Axis(low, high, unit=name or time_unit(high - low), scale=scale)
@@ -436,10 +437,16 @@ def _in_view(curve: Curve, limits: tuple[float, float]) -> Floats:
     return curve.y[:count][shown]
 
 
+def _held(end: float, scale: Scale) -> float:
+    """An end of an axis where its ticks are still numbers."""
+    most = 300.0 if scale == "decades" else 1e290
+    return min(max(end, -most), most)
+
+
 def _y_axis(pane: Pane, rows: int, limits: tuple[float, float] | None) -> Axis:
     shown = [curve.y if limits is None else _in_view(curve, limits) for curve in pane.curves]
     span = _span(shown) or _span([curve.y for curve in pane.curves]) or pane.bounds or (0.0, 1.0)
-    low, high = (min(max(end, -1e290), 1e290) for end in span)
+    low, high = (_held(end, pane.scale) for end in span)
     least = 0.0
     if pane.bounds is not None:
         size = abs(pane.bounds[1] - pane.bounds[0])

@@ -99,7 +99,7 @@ def sensitivity_panes(
 
 
 def _point(frequency: float, y: float, ink: str, name: str | None) -> Curve:
-    return Curve(np.array([math.log10(frequency)]), np.array([y]), ink, name)
+    return Curve(decades(np.array([frequency])), np.array([y]), ink, name)
 
 
 def decades(values: Floats) -> Floats:

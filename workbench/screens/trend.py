@@ -140,7 +140,7 @@ class TrendPanel(Panel):
     def _picture(
         self, panes: tuple[Pane, ...], width: int, height: int, at: float | None
     ) -> Picture:
-        view = self._look.view
+        view = self.look.view
         if view is not None:
             view = view.within(*charts.x_span(panes))
         return charts.draw(
@@ -189,7 +189,7 @@ class TrendPanel(Panel):
     # -- the stretch shown -------------------------------------------------------------------------
 
     @property
-    def _look(self) -> _Look:
+    def look(self) -> _Look:
         return self._looks[self.over_frequency]
 
     def _view(self) -> View | None:
@@ -198,17 +198,17 @@ class TrendPanel(Panel):
         if isinstance(panes, str):
             return None
         whole = charts.x_span(panes)
-        known = self._look.view
+        known = self.look.view
         return View.whole(*whole) if known is None else known.within(*whole)
 
     def _show(self, view: View) -> None:
-        self._look.view = None if view.is_whole else view
+        self.look.view = None if view.is_whole else view
         self.redraw()
 
     def action_zoom(self, share: float) -> None:
         """Show a shorter or a longer stretch, about the place that is read."""
         if (view := self._view()) is not None:
-            self._show(view.zoomed(share, self._look.at))
+            self._show(view.zoomed(share, self.look.at))
 
     def action_pan(self, share: float) -> None:
         """Show a later or an earlier stretch."""
@@ -226,7 +226,7 @@ class TrendPanel(Panel):
         """Move the place that is read; it begins in the middle."""
         if (view := self._view()) is None:
             return
-        look = self._look
+        look = self.look
         if look.at is None or not view.start <= look.at <= view.end:
             look.at = (view.low + view.high) / 2
         else:
@@ -240,7 +240,7 @@ class TrendPanel(Panel):
 
     def _reading(self, panes: tuple[Pane, ...], width: int) -> tuple[list[Line], float | None]:
         """The values at the place that is read, a line for each prediction, and that place."""
-        at, evaluation = self._look.at, self.work.evaluation
+        at, evaluation = self.look.at, self.work.evaluation
         if at is None or evaluation is None:
             return [], None
         pins = self._pins(evaluation)
