@@ -368,9 +368,11 @@ def angle_ticks(low: float, high: float, most: int) -> Ticks:
     >>> angle_ticks(-360.0, 90.0, 4)
     ((-360.0, -180.0, 0.0), ('-360', '-180', '0'))
     """
+    if high - low < 45.0:
+        return round_ticks(low, high, most)
     for step in (15.0, 30.0, 45.0, 90.0, 180.0, 360.0):
         first, last = math.ceil(low / step - 1e-9), math.floor(high / step + 1e-9)
-        if 2 <= last - first + 1 <= most:
+        if (1 if step >= 90.0 else 2) <= last - first + 1 <= most:
             values = tuple(k * step for k in range(first, last + 1))
             return values, tuple(f"{value:.0f}" for value in values)
     return round_ticks(low, high, most)

@@ -103,7 +103,7 @@ def test_keys_of_the_picture_zoom_pan_and_read_and_change_no_setting(work: Work)
             assert f"7.5 min: SP 125, PV {read.pv:.4g} degC, OP {read.output:.4g} %" in text_of(
                 pilot
             )
-            assert "o SP 125, PV" in text_of(pilot)
+            assert "o PV 125 degC, OP" in text_of(pilot)
             await press(pilot, "plus", "plus", "less_than_sign")
             # exact: a quarter of 900 s about 450 s, earlier by a quarter of that, in seconds
             view = trend.look.view

@@ -87,16 +87,8 @@ class Pins:
             for mark, told in pairs
         )
         values = "  ".join(f"{m} {', '.join(value for _, value in told)}" for m, told in pairs)
-        alone = values
-        if len(keys) == 1:
-            each = [value.rpartition(" ") for _, [(_, value)] in pairs]
-            if len({unit for _, _, unit in each}) == 1 and each[0][1]:
-                told_once = "  ".join(
-                    f"{m} {n}" for (m, _), (n, _, _) in zip(pairs, each, strict=True)
-                )
-                values = f"{told_once} {each[0][2]}"
-            alone = f"{label_of(keys[0])} {values}"
-        shown = next((each for each in (whole, alone) if len(each) <= width), alone)
+        shorter = [values] if len(keys) > 1 else _with_one_unit(label_of(keys[0]), pairs)
+        shown = next((each for each in (whole, *shorter) if len(each) <= width), shorter[-1])
         return shown if len(shown) <= width else shown[: max(0, width - 1)] + "…"
 
     def words_of(self, pin: Pin, present: Settings) -> str:
@@ -110,3 +102,14 @@ class Pins:
         keys = dict.fromkeys(key for settings in all_of for key in settings)
         found = [key for key in keys if len({settings.get(key, "") for settings in all_of}) > 1]
         return sorted(found, key=lambda key: not key.startswith("controller."))
+
+
+def _with_one_unit(label: str, pairs: list[tuple[str, list[tuple[str, str]]]]) -> list[str]:
+    """One setting of several pins, its name once; its unit once, and without."""
+    split = [value.rpartition(" ") for _, [(_, value)] in pairs]
+    units = {unit for _, _, unit in split}
+    if len(units) > 1 or not split[0][1]:
+        return [f"{label} {'  '.join(f'{mark} {value}' for mark, [(_, value)] in pairs)}"]
+    marks = [mark for mark, _ in pairs]
+    numbers = "  ".join(f"{m} {n}" for m, (n, _, _) in zip(marks, split, strict=True))
+    return [f"{label} {numbers} {units.pop()}", f"{label} {numbers}"]

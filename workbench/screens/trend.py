@@ -34,7 +34,7 @@ _ROOMY: Final = 70
 
 
 @dataclass
-class _Look:
+class Look:
     """Which stretch is shown, and where values are read; of time [s] or of log10 of rad/s."""
 
     view: View | None = None
@@ -84,7 +84,7 @@ class TrendPanel(Panel):
     def __init__(self, work: Work, *, css_id: str | None = None) -> None:
         super().__init__(work, css_id=css_id)
         self.shows: Shown = "Trend"
-        self._looks = {True: _Look(), False: _Look()}
+        self._looks = {True: Look(), False: Look()}
 
     @property
     def over_frequency(self) -> bool:
@@ -129,9 +129,9 @@ class TrendPanel(Panel):
             remark = "sampled" if present and present.sampled else "analogue"
         elif evaluation is not None and evaluation.prediction is not None:
             remark = "grows without bound" if evaluation.prediction.diverged else ""
-        room = width - len(f"> {self.number} {self.name_now}  ") - 4
+        room = width - len(f"> {self.number} {self.name_now} ") - 3
         settings = self.work.settings
-        words = self.work.pins.words(settings, room - len(remark) - 2)
+        words = self.work.pins.words(settings, room - (len(remark) + 2 if remark else 0))
         if words.endswith("…") and self.over_frequency:
             # The Figures panel says it too.
             return self.work.pins.words(settings, room)
@@ -189,7 +189,8 @@ class TrendPanel(Panel):
     # -- the stretch shown -------------------------------------------------------------------------
 
     @property
-    def look(self) -> _Look:
+    def look(self) -> Look:
+        """What is shown and read of the present view."""
         return self._looks[self.over_frequency]
 
     def _view(self) -> View | None:
@@ -217,7 +218,7 @@ class TrendPanel(Panel):
 
     def action_whole(self) -> None:
         """Show everything and read nothing."""
-        self._looks[self.over_frequency] = _Look()
+        self._looks[self.over_frequency] = Look()
         self.redraw()
 
     # -- reading values ----------------------------------------------------------------------------
@@ -250,20 +251,24 @@ class TrendPanel(Panel):
         now = evaluation.prediction.trend.at(at)
         if now is None:
             return [], at
-        low, high = charts.x_span(panes)
-        unit = charts.time_unit(high - low)
+        view = self._view()
+        length = 0.0 if view is None else view.high - view.low
+        unit = charts.time_unit(length)
+        told = [
+            (ink, self._values(then, width, now))
+            for ink, trend in _trends(pins).items()
+            if (then := trend.at(at)) is not None
+        ]
         words = f"{text(now.time_s / TIME_UNITS[unit], unit)}: {self._values(now, width)}"
-        lines = wrapped(words, width, "plain", " ")
-        for ink, trend in _trends(pins).items():
-            if (then := trend.at(at)) is not None:
-                mark = charts.INKS[ink].ascii
-                lines += wrapped(f"{mark} {self._values(then, width)}", width, ink, " ")
-        return lines, now.time_s
+        return _lines(words, told, width), now.time_s
 
-    def _values(self, read: TrendReading, width: int) -> str:
+    def _values(self, read: TrendReading, width: int, present: TrendReading | None = None) -> str:
+        """The three values; the setpoint of a pin only where it is another one."""
         pv, op = self.work.case.pv.unit, self.work.case.op.unit
-        setpoint = text(read.setpoint, pv if width >= _ROOMY else "")
-        return f"SP {setpoint}, PV {text(read.pv, pv)}, OP {text(read.output, op)}"
+        setpoint = f"SP {text(read.setpoint, pv if width >= _ROOMY else '')}, "
+        if present is not None and read.setpoint == present.setpoint and width < _ROOMY:
+            setpoint = ""
+        return f"{setpoint}PV {text(read.pv, pv)}, OP {text(read.output, op)}"
 
     def _over_frequency(
         self, evaluation: Evaluation, pins: tuple[Pin, ...], at: float, width: int
@@ -274,18 +279,31 @@ class TrendPanel(Panel):
             return [], None
         period = f" (period {time_text(now.period_s, 3)})" if width >= _ROOMY else ""
         words = f"{text(now.frequency_rad_s, 'rad/s')}{period}: {self._gains(now)}"
-        lines = wrapped(words, width, "plain", " ")
-        for pin in pins:
-            response = self._response(pin.evaluation)
-            then = None if response is None else response.at(10.0**at)
-            if then is not None:
-                lines += wrapped(f"{pin.mark} {self._gains(then)}", width, pin.ink, " ")
-        return lines, float(np.log10(now.frequency_rad_s))
+        told = [
+            (pin.ink, self._gains(then))
+            for pin in pins
+            if (response := self._response(pin.evaluation)) is not None
+            and (then := response.at(10.0**at)) is not None
+        ]
+        return _lines(words, told, width), float(np.log10(now.frequency_rad_s))
 
     def _gains(self, read: FrequencyReading) -> str:
         if self.shows == "Open loop":
-            return f"gain {text(read.gain)}, phase {text(read.phase_deg, 'deg')}"
+            return f"gain {text(read.gain)}, phase {text(read.phase_deg, 'deg', digits=3)}"
         return f"|S| {text(read.sensitivity)}, |T| {text(read.complementary_sensitivity)}"
+
+
+def _lines(now: str, pinned: list[tuple[str, str]], width: int) -> list[Line]:
+    """The present values, then each pin's on a line of its own, or all of them in a row."""
+    told = [f"{charts.INKS[ink].ascii} {words}" for ink, words in pinned]
+    if width < _ROOMY:
+        # The picture needs the rows.
+        told = ["; ".join(told)] if told else []
+    return [
+        line
+        for words, tone in ((now, "plain"), *((words, "quiet") for words in told))
+        for line in wrapped(words, width, tone, " ")
+    ]
 
 
 NO_CONTROLLER: Final = "no prediction without a controller"
