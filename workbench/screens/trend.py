@@ -280,17 +280,20 @@ class TrendPanel(Panel):
         period = f" (period {time_text(now.period_s, 3)})" if width >= _ROOMY else ""
         words = f"{text(now.frequency_rad_s, 'rad/s')}{period}: {self._gains(now)}"
         told = [
-            (pin.ink, self._gains(then))
+            (pin.ink, self._gains(then, short=width < _ROOMY))
             for pin in pins
             if (response := self._response(pin.evaluation)) is not None
             and (then := response.at(10.0**at)) is not None
         ]
         return _lines(words, told, width), float(np.log10(now.frequency_rad_s))
 
-    def _gains(self, read: FrequencyReading) -> str:
+    def _gains(self, read: FrequencyReading, *, short: bool = False) -> str:
+        """The two values of the view; without their names where the present ones have them."""
+        first, second = ("gain ", "phase ") if self.shows == "Open loop" else ("|S| ", "|T| ")
+        pair = (text(read.sensitivity), text(read.complementary_sensitivity))
         if self.shows == "Open loop":
-            return f"gain {text(read.gain)}, phase {text(read.phase_deg, 'deg', digits=3)}"
-        return f"|S| {text(read.sensitivity)}, |T| {text(read.complementary_sensitivity)}"
+            pair = (text(read.gain), text(read.phase_deg, "deg", digits=3))
+        return ", ".join(pair) if short else f"{first}{pair[0]}, {second}{pair[1]}"
 
 
 def _lines(now: str, pinned: list[tuple[str, str]], width: int) -> list[Line]:
