@@ -15,6 +15,9 @@ from workbench.study import Evaluation
 Settings = Mapping[str, str]
 """Key of the case file -> the setting in words, with its unit."""
 
+_NAMED_FROM = 18
+"""Columns for a pin from which on its settings are named."""
+
 
 @dataclass(frozen=True)
 class Pin:
@@ -79,22 +82,28 @@ class Pins:
         if not keys:
             return ""
         pairs = [
-            (pin.mark, [(label_of(key), pin.settings.get(key) or "-") for key in keys])
+            (pin.mark, [(_named(key), pin.settings.get(key) or "-") for key in keys])
             for pin in self.kept
         ]
-        whole = "  ".join(
-            f"{mark} {', '.join(f'{label} {value}' for label, value in told)}"
-            for mark, told in pairs
-        )
-        values = "  ".join(f"{m} {', '.join(value for _, value in told)}" for m, told in pairs)
-        shorter = [values] if len(keys) > 1 else _with_one_unit(label_of(keys[0]), pairs)
-        shown = next((each for each in (whole, *shorter) if len(each) <= width), shorter[-1])
-        return shown if len(shown) <= width else shown[: max(0, width - 1)] + "…"
+        labelled = [f"{m} {', '.join(f'{label} {value}' for label, value in t)}" for m, t in pairs]
+        forms = ["  ".join(labelled)]
+        if len(keys) == 1:
+            forms += _with_one_unit(_named(keys[0]), pairs)
+        shown = next((form for form in forms if len(form) <= width), None)
+        if shown is not None:
+            return shown
+        if len(keys) == 1:
+            return _cut(forms[-1], width)
+        # Each gets its share of the room; names are left out where that is small.
+        room = max(0, width - 2 * (len(pairs) - 1)) // len(pairs)
+        if room < _NAMED_FROM:
+            labelled = [f"{mark} {', '.join(value for _, value in told)}" for mark, told in pairs]
+        return "  ".join(_cut(each, room) for each in labelled)
 
     def words_of(self, pin: Pin, present: Settings) -> str:
         """In what one pin is not like the others and the present settings."""
         keys = self._different(present)
-        return ", ".join(f"{label_of(key)} {pin.settings.get(key) or '-'}" for key in keys)
+        return ", ".join(f"{_named(key)} {pin.settings.get(key) or '-'}" for key in keys)
 
     def _different(self, present: Settings) -> list[str]:
         """The keys, those of the controller first."""
@@ -102,6 +111,15 @@ class Pins:
         keys = dict.fromkeys(key for settings in all_of for key in settings)
         found = [key for key in keys if len({settings.get(key, "") for settings in all_of}) > 1]
         return sorted(found, key=lambda key: not key.startswith("controller."))
+
+
+def _named(key: str) -> str:
+    """The name of a setting where there is no panel around it to say whose gain it is."""
+    return "plant gain" if key == "plant.gain" else label_of(key)
+
+
+def _cut(words: str, width: int) -> str:
+    return words if len(words) <= width else words[: max(0, width - 1)] + "…"
 
 
 def _with_one_unit(label: str, pairs: list[tuple[str, list[tuple[str, str]]]]) -> list[str]:

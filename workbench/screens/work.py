@@ -23,6 +23,9 @@ from workbench.screens.pins import Pins
 from workbench.study import Evaluation, FrequencyResponse
 from workbench.units import Amount, Quantity, plain
 
+_SAYS_WHENCE = ("plant.from", "plant.dated")
+"""Keys about where a plant was had from."""
+
 SMALL, LARGE = 1.02, 1.2
 """Factors of a nudge."""
 
@@ -64,11 +67,11 @@ class Work:
 
     @property
     def settings(self) -> dict[str, str]:
-        """The present settings in words, those apart that no figure depends on."""
+        """The present settings in words, those left out that no figure depends on."""
         return {
             key: with_unit(text, self.quantities[key], self)
             for key, text in self._texts.items()
-            if not key.startswith("loop.") and not key.endswith("sha256")
+            if key not in _SAYS_WHENCE and not key.startswith("loop.") and "sha256" not in key
         }
 
     def response_of(self, evaluation: Evaluation) -> Response | None:
