@@ -29,9 +29,9 @@ class FrequencyResponse:
     """Why it is analogue although there is a scan interval."""
 
     def at(self, frequency: float) -> FrequencyReading | None:
-        """The figures at the frequency of the grid nearest to one [rad/s]."""
+        """The figures at the frequency of the grid nearest to one [rad/s]; nothing beyond it."""
         grid = self.open_loop.frequency
-        if not len(grid) or not frequency > 0.0:
+        if not len(grid) or not 0.99 * grid[0] <= frequency <= 1.01 * grid[-1]:
             return None
         row = int(np.abs(np.log(grid / frequency)).argmin())
         found = self.open_loop
