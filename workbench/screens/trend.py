@@ -276,7 +276,7 @@ class TrendPanel(Panel):
         present = self._response(evaluation)
         now = None if present is None else present.at(10.0**at)
         if now is None:
-            return [], None
+            return wrapped("beyond the frequencies of the present loop", width, "quiet", " "), at
         period = f" (period {time_text(now.period_s, 3)})" if width >= _ROOMY else ""
         words = f"{text(now.frequency_rad_s, 'rad/s')}{period}: {self._gains(now)}"
         told = [
