@@ -29,6 +29,7 @@ from tests.case.campaigns import (
     laid_out_files,
     surveyed_cases,
 )
+from tests.drawing import pictures
 from tests.model.spreads import spreads_judged
 from tests.model.test_formula import fuzzed
 from tests.model.test_robustness import brinks, sampled_circles, sampled_verdicts
@@ -478,6 +479,9 @@ CAMPAIGNS: Final[dict[str, Campaign]] = {
     "sampled margins": Campaign(sampled_brinks, 5, 500),
     "best settings by search": Campaign(
         _judged(searched, 41, 0.01, "cost above the best of a grid, as a share"), 2, 108
+    ),
+    "pictures of any numbers": Campaign(
+        _judged(pictures, 307, 0.0, "processes that ended early"), 200, 10_000
     ),
     "fits of made records": Campaign(fitted_records, 10, 400),
     "controllers recognised": Campaign(_judged(recognised, 301, 0.0, "share wrong"), 3, 200),

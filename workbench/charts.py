@@ -11,11 +11,11 @@ from __future__ import annotations
 import math
 import sys
 import threading
-from collections.abc import Sequence
-from dataclasses import dataclass
+from collections.abc import Callable, Iterable, Mapping, Sequence
+from dataclasses import dataclass, replace
 from functools import cache, lru_cache
 from types import ModuleType
-from typing import TYPE_CHECKING, Any, Final
+from typing import TYPE_CHECKING, Any, Final, Literal
 
 import numpy as np
 from numpy.typing import NDArray
@@ -29,6 +29,10 @@ if TYPE_CHECKING:
 Floats = NDArray[np.float64]
 
 
+Scale = Literal["plain", "decades", "degrees"]
+"""What an axis counts: numbers, their logarithms to 10, or angles."""
+
+
 @dataclass(frozen=True)
 class Ink:
     """How a kind of curve is drawn."""
@@ -39,6 +43,8 @@ class Ink:
     """One ASCII character."""
     joined: bool = True
     """Points joined by lines."""
+    turn: int | None = None
+    """Curves that have one take turns, column by column, in the cells where they meet."""
 
 
 @dataclass(frozen=True)
@@ -49,8 +55,9 @@ class Curve:
     y: Floats
     ink: str
     """A key of INKS."""
-    name: str
-    """Word for the legend."""
+    name: str | None
+    """Word for the legend; empty where the next curve's word is for both, `None` where it needs
+    none."""
 
 
 @dataclass(frozen=True)
@@ -65,6 +72,8 @@ class Pane:
     """The y axis never shows more than one span outside these, whatever the curves do."""
     share: float = 1.0
     """Share of the height."""
+    scale: Scale = "plain"
+    """What the y of the curves are; `bounds` are in the same."""
 
 
 @dataclass(frozen=True)
@@ -93,6 +102,8 @@ def draw(
     *,
     x_limits: tuple[float, float] | None = None,
     x_name: str = "",
+    x_scale: Scale = "plain",
+    cursor: float | None = None,
     ascii_only: bool = False,
 ) -> Picture:
     """Draw panes above each other over one axis, of time unless it is named.
@@ -107,6 +118,10 @@ def draw(
         Ends of the x axis; left out, those of the curves.
     x_name
         What the x axis is; left out, a time.
+    x_scale
+        What the x of the curves are; `x_limits` and `cursor` are in the same.
+    cursor
+        Where a line stands across the panes; nowhere if left out or out of view.
     ascii_only
         Use no character above 0x7e.
 
@@ -119,11 +134,12 @@ def draw(
     if width < SMALLEST[0] or height < SMALLEST[1] or not panes:
         sheet.text(0, 0, "too small to draw" if panes else "nothing to draw")
         return sheet.picture()
-    x_axis = _x_axis(panes, x_limits, x_name)
+    x_axis = _x_axis(panes, x_limits, x_name, x_scale)
     heights = _heights(panes, height - 2)
-    axes = [_y_axis(pane, rows - 1) for pane, rows in zip(panes, heights, strict=True)]
+    axes = [_y_axis(pane, rows - 1, x_limits) for pane, rows in zip(panes, heights, strict=True)]
     gutter = min(9, max(axis.label_width for axis in axes))
-    x_axis = x_axis.with_ticks(max(2, (width - gutter - 1) // 10))
+    apart = 10 if x_scale == "plain" else 8
+    x_axis = x_axis.with_ticks(max(2, (width - gutter - 1) // apart))
     top = 0
     for pane, rows, axis in zip(panes, heights, axes, strict=True):
         sheet.legend(top, gutter, pane)
@@ -131,6 +147,8 @@ def draw(
         area = (top + 1, gutter + 1, rows - 1, width - gutter - 1)
         for curve in pane.curves:
             sheet.curve(area, curve, x_axis, axis)
+        if cursor is not None and x_axis.low <= cursor <= x_axis.high:
+            sheet.cursor(area, _share(x_axis, cursor))
         top += rows
     sheet.x_axis(top, gutter, x_axis)
     return sheet.picture()
@@ -240,13 +258,14 @@ def _ratio_ticks(ratios: Floats, apart: int) -> list[tuple[int, str]]:
 
 
 def trend_panes(
-    case: Case, present: Trend | None, earlier: Trend | None = None
+    case: Case, present: Trend | None, pinned: Mapping[str, Trend] | None = None
 ) -> tuple[Pane, ...]:
-    """PV and SP above, OP below, in the loop's own units; an earlier trend under the present."""
+    """PV and SP above, OP below, in the loop's own units; those of PINS under the present."""
     pv, op = [], []
-    if earlier is not None:
-        pv.append(Curve(earlier.time, earlier.pv, "pinned", "pinned"))
-        op.append(Curve(earlier.time, earlier.output, "pinned", "pinned"))
+    names = pin_names(pinned or {})
+    for ink, trend in (pinned or {}).items():
+        pv.append(Curve(trend.time, trend.pv, ink, names[ink]))
+        op.append(Curve(trend.time, trend.output, ink, names[ink]))
     if present is not None:
         pv.append(Curve(present.time, present.setpoint, "setpoint", "SP"))
         pv.append(Curve(present.time, present.pv, "pv", "PV"))
@@ -255,6 +274,12 @@ def trend_panes(
         Pane(f"PV {case.pv.unit}", tuple(pv), (case.pv.low, case.pv.high), 2.0),
         Pane(f"OP {case.op.unit}", tuple(op), (case.op.low, case.op.high), 1.0),
     )
+
+
+def pin_names(pinned: Iterable[str]) -> dict[str, str]:
+    """Words of pinned curves for the legend: one for all of them, after the last sample."""
+    inks = list(pinned)
+    return {ink: "pinned" if ink == inks[-1] else "" for ink in inks}
 
 
 # --- axes ----------------------------------------------------------------------------------------
@@ -270,6 +295,7 @@ class Axis:
     labels: tuple[str, ...] = ()
     unit: str = ""
     """Unit of the labels of a time axis, or what an x axis is."""
+    scale: Scale = "plain"
 
     @property
     def label_width(self) -> int:
@@ -278,18 +304,24 @@ class Axis:
 
     def share(self, values: Floats) -> Floats:
         """Values as shares of the axis: 0 at the low end, 1 at the high end."""
-        # Halved before subtracting, so that no span of finite numbers overflows.
-        return (values / 2 - self.low / 2) / (self.high / 2 - self.low / 2)
+        # Halved before subtracting, so that no span of finite numbers overflows; what lies out of
+        # view may be so far off that its share does, and infinity is as far.
+        with np.errstate(over="ignore"):
+            return (values / 2 - self.low / 2) / (self.high / 2 - self.low / 2)
 
     def with_ticks(self, most: int) -> Axis:
         """The axis with round ticks; a time axis in the unit that reads best."""
         scale = TIME_UNITS.get(self.unit, 1.0)
-        values, labels = round_ticks(self.low / scale, self.high / scale, most)
+        values, labels = TICKS[self.scale](self.low / scale, self.high / scale, most)
         ticks = tuple(value * scale for value in values)
-        return Axis(self.low, self.high, ticks, labels, self.unit)
+        return replace(self, ticks=ticks, labels=labels)
 
 
-def round_ticks(low: float, high: float, most: int) -> tuple[tuple[float, ...], tuple[str, ...]]:
+Ticks = tuple[tuple[float, ...], tuple[str, ...]]
+"""Places on an axis, and their text."""
+
+
+def round_ticks(low: float, high: float, most: int) -> Ticks:
     """At most `most` round numbers from `low` to `high`, and their text.
 
     >>> round_ticks(0.0, 1.0, 6)
@@ -311,6 +343,49 @@ def round_ticks(low: float, high: float, most: int) -> tuple[tuple[float, ...], 
         return values, tuple(f"{value:.{digits}g}" for value in values)
     decimals = max(0, -math.floor(math.log10(step) + 1e-9))
     return values, tuple(f"{value:.{decimals}f}" for value in values)
+
+
+def decade_ticks(low: float, high: float, most: int) -> Ticks:
+    """At most `most` places between two logarithms to 10 where the number itself is round.
+
+    >>> decade_ticks(-2.5, 1.2, 6)
+    ((-2.0, -1.0, 0.0, 1.0), ('0.01', '0.1', '1', '10'))
+    """
+    if high - low < 1.0:
+        values, labels = round_ticks(10.0**low, 10.0**high, most)
+        kept = [(math.log10(v), label) for v, label in zip(values, labels, strict=True) if v > 0.0]
+        return tuple(at for at, _ in kept), tuple(label for _, label in kept)
+    first, last = math.ceil(low - 1e-9), math.floor(high + 1e-9)
+    fine = [k + part for k in range(first - 1, last + 1) for part in map(math.log10, (1, 2, 5))]
+    places = [float(at) for at in fine if low - 1e-9 <= at <= high + 1e-9]
+    if len(places) > most:
+        step = next(n for n in range(1, 1000) if (last - first) // n + 1 <= most)
+        places = [float(k) for k in range(first, last + 1) if k % step == 0] or [float(first)]
+    return tuple(places), tuple(f"{10.0**at:.4g}" for at in places)
+
+
+def angle_ticks(low: float, high: float, most: int) -> Ticks:
+    """At most `most` angles [deg] a fraction of a turn apart; round numbers where they are close.
+
+    >>> angle_ticks(-360.0, 90.0, 4)
+    ((-360.0, -180.0, 0.0), ('-360', '-180', '0'))
+    """
+    if high - low < 45.0:
+        return round_ticks(low, high, most)
+    for step in (15.0, 30.0, 45.0, 90.0, 180.0, 360.0):
+        first, last = math.ceil(low / step - 1e-9), math.floor(high / step + 1e-9)
+        if (1 if step >= 90.0 else 2) <= last - first + 1 <= most:
+            values = tuple(k * step for k in range(first, last + 1))
+            return values, tuple(f"{value:.0f}" for value in values)
+    return round_ticks(low, high, most)
+
+
+TICKS: Final[dict[Scale, Callable[[float, float, int], Ticks]]] = {
+    "plain": round_ticks,
+    "decades": decade_ticks,
+    "degrees": angle_ticks,
+}
+"""How the ticks of each scale are found."""
 
 
 def _round_step(least: float) -> float:
@@ -336,19 +411,46 @@ def _span(arrays: Sequence[Floats]) -> tuple[float, float] | None:
     return float(min(v.min() for v in kept)), float(max(v.max() for v in kept))
 
 
-def _x_axis(panes: Sequence[Pane], limits: tuple[float, float] | None, name: str) -> Axis:
-    span = limits or _span([curve.x for pane in panes for curve in pane.curves]) or (0.0, 1.0)
-    low, high = (min(max(end, -1e12), 1e12) for end in span)
+def _x_axis(
+    panes: Sequence[Pane], limits: tuple[float, float] | None, name: str, scale: Scale
+) -> Axis:
+    low, high = (_held(end, scale) for end in limits or x_span(panes))
     if high - low < 1e-9 * max(1.0, abs(low), abs(high)):
         high = low + max(1.0, abs(low) * 1e-6)
-    length = high - low
-    unit = "s" if length < 600 else "min" if length < 4 * 3600 else "h"
-    return Axis(low, high, unit=name or unit)
+    return Axis(low, high, unit=name or time_unit(high - low), scale=scale)
 
 
-def _y_axis(pane: Pane, rows: int) -> Axis:
-    span = _span([curve.y for curve in pane.curves]) or pane.bounds or (0.0, 1.0)
-    low, high = (min(max(end, -1e290), 1e290) for end in span)
+def x_span(panes: Sequence[Pane]) -> tuple[float, float]:
+    """From the lowest to the highest x of the curves."""
+    low, high = _span([curve.x for pane in panes for curve in pane.curves]) or (0.0, 1.0)
+    return min(max(low, -1e12), 1e12), min(max(high, -1e12), 1e12)
+
+
+def time_unit(length: float) -> str:
+    """The unit that reads best on an axis of so many seconds."""
+    return "s" if length < 600 else "min" if length < 4 * 3600 else "h"
+
+
+def _in_view(curve: Curve, limits: tuple[float, float]) -> Floats:
+    """The y of what is shown, and of one point beyond each end, to which its lines go on."""
+    count = min(curve.x.size, curve.y.size)
+    inside = (curve.x[:count] >= limits[0]) & (curve.x[:count] <= limits[1])
+    shown = inside.copy()
+    shown[1:] |= inside[:-1]
+    shown[:-1] |= inside[1:]
+    return curve.y[:count][shown]
+
+
+def _held(end: float, scale: Scale) -> float:
+    """An end of an axis where its ticks are still numbers."""
+    most = 300.0 if scale == "decades" else 1e290
+    return min(max(end, -most), most)
+
+
+def _y_axis(pane: Pane, rows: int, limits: tuple[float, float] | None) -> Axis:
+    shown = [curve.y if limits is None else _in_view(curve, limits) for curve in pane.curves]
+    span = _span(shown) or _span([curve.y for curve in pane.curves]) or pane.bounds or (0.0, 1.0)
+    low, high = (_held(end, pane.scale) for end in span)
     least = 0.0
     if pane.bounds is not None:
         size = abs(pane.bounds[1] - pane.bounds[0])
@@ -363,8 +465,7 @@ def _y_axis(pane: Pane, rows: int) -> Axis:
     # The ends sit on round numbers, so that the axis holds still while a setting is nudged.
     grid = _round_step((high - low) / 20)
     low, high = (math.floor(low / grid - 0.1) * grid, math.ceil(high / grid + 0.1) * grid)
-    ticks, labels = round_ticks(low, high, max(2, (rows + 1) // 3))
-    return Axis(low, high, ticks, labels)
+    return Axis(low, high, scale=pane.scale).with_ticks(max(2, (rows + 1) // 3))
 
 
 def _heights(panes: Sequence[Pane], height: int) -> list[int]:
@@ -406,12 +507,19 @@ class _Sheet:
         column = gutter + len(pane.label) + 3
         seen: set[str] = set()
         for curve in pane.curves:
-            if curve.name in seen or column + len(curve.name) + 3 > self.width:
+            if (
+                curve.name is None
+                or curve.name in seen
+                or column + len(curve.name) + 3 > self.width
+            ):
                 continue
-            seen.add(curve.name)
             ink = INKS[curve.ink]
             sample = ink.ascii if self.ascii_only else SAMPLES.get(ink.unicode, ink.unicode)
             self.text(row, column, sample * 2, curve.ink)
+            if not curve.name:
+                column += 3
+                continue
+            seen.add(curve.name)
             self.text(row, column + 3, curve.name)
             column += len(curve.name) + 5
 
@@ -449,10 +557,23 @@ class _Sheet:
         styles = self.styles[top : top + rows, left : left + columns]
         marked = (drawn != ord(" ")) & (drawn != _BRAILLE)
         # Two curves through the same cell keep the dots of both.
+        if ink.turn is not None:
+            # Curves of marks that lie on each other show each other's marks by turns.
+            others = [STYLES.index(name) for name, other in INKS.items() if other.turn is not None]
+            theirs = np.isin(styles, others) & (cells != ord(" "))
+            marked &= ~theirs | (np.arange(columns) % len(others) == ink.turn)
         both = marked & (cells > _BRAILLE) & (drawn > _BRAILLE) & (cells <= _BRAILLE + 255)
         cells[both] |= drawn[both]
         cells[marked & ~both] = drawn[marked & ~both]
         styles[marked] = STYLES.index(curve.ink)
+
+    def cursor(self, area: tuple[int, int, int, int], share: float) -> None:
+        """A line from top to bottom, under the curves."""
+        top, left, rows, columns = area
+        column = left + _place(share, columns)
+        for row in range(top, top + rows):
+            if self.characters[row, column] == ord(" "):
+                self.text(row, column, self.lines.cursor, "cursor")
 
 
 _BRAILLE: Final = 0x2800
@@ -547,11 +668,12 @@ class _Lines:
     base: str
     base_tick: str
     corner: str
+    cursor: str
 
 
 LINES: Final = {
-    False: _Lines("│", "┤", "─", "┬", "└"),
-    True: _Lines("|", "+", "-", "+", "+"),
+    False: _Lines("│", "┤", "─", "┬", "└", "│"),
+    True: _Lines("|", "+", "-", "+", "+", ":"),
 }
 """Frame characters, by `ascii_only`."""
 
@@ -559,7 +681,9 @@ SAMPLES: Final = {"braille": "⠒"}
 """Legend sample of plotext's code words."""
 
 INKS: Final = {
-    "pinned": Ink("o", "o", joined=False),
+    "pinned": Ink("o", "o", joined=False, turn=0),
+    "pinned-2": Ink("x", "x", joined=False, turn=1),
+    "pinned-3": Ink("+", "+", joined=False, turn=2),
     "setpoint": Ink("─", "-", joined=False),
     "pv": Ink("braille", "*"),
     "output": Ink("braille", "*"),
@@ -570,8 +694,17 @@ INKS: Final = {
     "rule": Ink("o", "o", joined=False),
     "present": Ink("P", "P", joined=False),
     "chosen-point": Ink("X", "X", joined=False),
+    "reference": Ink("·", "."),
+    "response": Ink("braille", "*"),
+    "gain-margin": Ink("G", "G", joined=False),
+    "phase-margin": Ink("P", "P", joined=False),
+    "peak": Ink("M", "M", joined=False),
 }
 """Kinds of curve; no two that meet in a pane look alike without colour."""
+
+
+PINS: Final = ("pinned", "pinned-2", "pinned-3")
+"""Inks of the pinned curves, as many as are compared."""
 
 
 @dataclass(frozen=True)
@@ -592,5 +725,5 @@ GROUNDS: Final = (
 HERE: Final = Ground("O", "O", "chosen")
 """The present point of a map."""
 
-STYLES: Final = ("frame", "label", *INKS, *(ground.style for ground in (*GROUNDS, HERE)))
+STYLES: Final = ("frame", "label", "cursor", *INKS, *(ground.style for ground in (*GROUNDS, HERE)))
 """What a picture's style numbers mean."""

@@ -23,10 +23,22 @@ SMALL: Steps = (
     ("records-80x24", ("escape", "r")),
     ("tolerance-80x24", ("escape", "t")),
 )
+FREQUENCY: Steps = (
+    ("pins-80x24", ("down", "greater_than_sign", "p", "greater_than_sign", "p", "comma")),
+    ("reading-80x24", ("3", "right", "plus")),
+    ("open-loop-80x24", ("v", "right")),
+    ("sensitivity-80x24", ("v",)),
+)
+LARGE_FREQUENCY: Steps = (
+    ("reading-160x50", ("down", "full_stop", "p", "full_stop", "p", "comma", "3", "right")),
+    ("open-loop-160x50", ("v", "right")),
+    ("sensitivity-160x50", ("v", "z")),
+)
 PLAIN: Steps = (
     ("what-if-80x24-ascii", ("down", "greater_than_sign")),
     ("history-80x24-ascii", ("5", "z")),
     ("tolerance-80x24-ascii", ("z", "t", "m")),
+    ("open-loop-80x24-ascii", ("escape", "3", "v")),
 )
 LARGE: Steps = (
     ("loop-160x50", ("down", "greater_than_sign")),
@@ -36,8 +48,14 @@ LARGE: Steps = (
 
 @pytest.mark.parametrize(
     ("size", "ascii_only", "steps"),
-    [((80, 24), False, SMALL), ((80, 24), True, PLAIN), ((160, 50), False, LARGE)],
-    ids=["80x24", "80x24 ascii", "160x50"],
+    [
+        ((80, 24), False, SMALL),
+        ((80, 24), False, FREQUENCY),
+        ((80, 24), True, PLAIN),
+        ((160, 50), False, LARGE),
+        ((160, 50), False, LARGE_FREQUENCY),
+    ],
+    ids=["80x24", "80x24 views", "80x24 ascii", "160x50", "160x50 views"],
 )
 def test_pages_look_as_they_did(
     work: Work, size: tuple[int, int], ascii_only: bool, steps: Steps

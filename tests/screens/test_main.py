@@ -126,7 +126,7 @@ def test_a_nudge_without_a_number_says_what_to_do(work: Work) -> None:
         async with running(work) as pilot:
             await press(pilot, "down", "down", "plus")
             assert "press Enter to type one" in text_of(pilot)
-            await press(pilot, "3", "plus")
+            await press(pilot, "4", "plus")
             assert "choose a setting first" in text_of(pilot)
             assert not work.unsaved
 

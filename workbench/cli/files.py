@@ -80,7 +80,10 @@ def sheet(given: Given) -> Answer:
         for e in (retune.before, retune.after)
     )
     picture = charts.draw(
-        charts.trend_panes(case, after, before), report.SHEET_WIDTH, 14, ascii_only=True
+        charts.trend_panes(case, after, {"pinned": before} if before else None),
+        report.SHEET_WIDTH,
+        14,
+        ascii_only=True,
     )
     words = report.sheet_text(
         retune,

@@ -74,7 +74,7 @@ def analogue_margins(loop: Loop) -> Margins:
     def response(w: Floats) -> Complex:
         return open_loop((1j * w).astype(np.complex128))
 
-    corners = _corners(open_loop)
+    corners = corner_frequencies(open_loop)
     terms = (*open_loop.numerator, *open_loop.denominator)
     delays = {t.dead_time for t in terms} - {0.0}
     longest = max(delays, default=0.0)
@@ -109,7 +109,7 @@ def sampled_margins(loop: Loop, known: SampledLoop | None = None) -> Margins:
 
     open_loop = loop.open_loop()
     delay = max(open_loop.delays, default=0.0) + loop.computing_delay + sampled.scan
-    corners = _corners(open_loop)
+    corners = corner_frequencies(open_loop)
     grid = _grid(response, corners[corners < top], delay, top)
     last = float(response(np.array([top]))[0].real)
 
@@ -224,7 +224,7 @@ def ultimate(plant: TransferFunction) -> tuple[float, float]:
     def response(w: Floats) -> Complex:
         return plant((1j * w).astype(np.complex128))
 
-    grid = _grid(response, _corners(plant), max(plant.delays, default=0.0))
+    grid = _grid(response, corner_frequencies(plant), max(plant.delays, default=0.0))
     found = _phase_crossovers(response, grid, response(grid))
     if not found:
         raise NotApplicable(
@@ -243,7 +243,7 @@ def _none(verdict: Verdict) -> Margins:
 # --- the frequencies to look at ------------------------------------------------------------------
 
 
-def _corners(function: TransferFunction) -> Floats:
+def corner_frequencies(function: TransferFunction) -> Floats:
     """Frequencies where something happens [rad/s]: every root and every dead time."""
     terms = (*function.numerator, *function.denominator)
     found = [abs(r) for t in terms for r in t.polynomial.roots if r]

@@ -46,8 +46,8 @@ class FiguresPanel(Panel):
     title = "Figures"
     help = (
         "Margins of the loop (of the sampled loop where there is a scan interval) and measures of "
-        "the predicted trend. In brackets: the same figure of the pinned prediction, where it is "
-        "another one; 'worse' says so where it got worse by more than 1 %.",
+        "the predicted trend. In brackets: the same figure of the newest pin, which the title "
+        "names, where it is another one; 'worse' says so where it got worse by more than 1 %.",
         "Sensitivity Ms: the largest factor by which the loop magnifies an upset; below 1.6 is "
         "calm, above 2 is nervous. IAE: integral of the absolute error.",
         "Floor: what any controller leaves at least after this load step, and how many times that "
@@ -73,6 +73,16 @@ class FiguresPanel(Panel):
             if note.severity == "info":
                 lines += wrapped(note.text, width, "quiet", " ")
         return lines
+
+    def heading(self, width: int, more: str = "") -> Line:
+        """The title line, and which pin the figures are compared with."""
+        pin, now = self.work.pins.newest, self.work.evaluation
+        if pin is None or now is None or pin.evaluation is now:
+            return super().heading(width, more)
+        against = f"against {pin.mark}"
+        words = f"{against} {self.work.pins.words_of(pin, self.work.settings)}".rstrip()
+        room = width - len("> 4 Figures ") - len("  ".join((*self.elsewhere, more))) - 8
+        return super().heading(width, f"{words if len(words) <= room else against}  {more}".strip())
 
     def fixed(self, width: int) -> list[Line]:
         """Cautions stay in view."""

@@ -19,7 +19,7 @@ class HelpText(Listing):
 
     def __init__(self, page: Page) -> None:
         super().__init__(css_id="help")
-        self.about, self.commands = page.about, page.commands
+        self.about, self.of_page = page.about, page.commands
         focused = page.focused
         self.panel = focused if isinstance(focused, Listing) else None
 
@@ -35,8 +35,11 @@ class HelpText(Listing):
         lines.append((("  This page", "title"),))
         for paragraph in self.about:
             lines += wrapped(paragraph, room, "plain", "  ")
+        if self.panel is not None and self.panel.commands:
+            lines += [(), ((f"  Keys in {self.panel.title}", "title"),)]
+            lines += [_key_line(command) for command in self.panel.commands]
         lines += [(), (("  Keys", "title"),)]
-        lines += [_key_line(command) for command in self.commands if command.help]
+        lines += [_key_line(command) for command in self.of_page if command.help]
         lines += [_key_line(command) for command in EVERYWHERE]
         return lines
 

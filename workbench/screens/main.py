@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Iterable
-from typing import TYPE_CHECKING, Final
+from typing import TYPE_CHECKING, Final, cast
 
 from textual import on
 from textual.app import ComposeResult
@@ -12,7 +12,7 @@ from textual.message import Message
 from textual.widget import Widget
 from textual.worker import Worker, WorkerState
 
-from workbench import study
+from workbench import charts, study
 from workbench.case.case import Case, Revision
 from workbench.errors import InputError, WorkbenchError
 from workbench.screens.cells import Divider, Line
@@ -23,7 +23,7 @@ from workbench.screens.fields import FieldsPanel, label_of
 from workbench.screens.figures import FiguresPanel
 from workbench.screens.history import HistoryPanel, changed_by
 from workbench.screens.instruments import InstrumentsPanel
-from workbench.screens.keys import Command, bindings
+from workbench.screens.keys import Command, KeyLine, bindings
 from workbench.screens.page import HELP, MOVING, Page
 from workbench.screens.panel import Panel
 from workbench.screens.plant import PlantPanel
@@ -36,6 +36,7 @@ from workbench.screens.work import LARGE, SMALL, Work
 if TYPE_CHECKING:
     from textual.events import DescendantFocus
 
+    from workbench.screens.work import Responses
     from workbench.study import Evaluation
 
 ROOMY: Final = (140, 40)
@@ -68,9 +69,24 @@ class CaseChanged(Message):
 class Evaluated(Message):
     """Posted when the answers for a case are there, or why there are none."""
 
-    def __init__(self, case: Case, evaluation: Evaluation | None, fault: str = "") -> None:
+    def __init__(
+        self,
+        case: Case,
+        evaluation: Evaluation | None,
+        fault: str = "",
+        responses: Responses | None = None,
+    ) -> None:
         super().__init__()
         self.case, self.evaluation, self.fault = case, evaluation, fault
+        self.responses = responses or []
+
+
+class Responded(Message):
+    """Posted when frequency responses are there."""
+
+    def __init__(self, responses: Responses) -> None:
+        super().__init__()
+        self.responses = responses
 
 
 class DraftFailed(Message):
@@ -97,7 +113,11 @@ class MainPage(Page):
         Command("greater_than_sign,full_stop", ">", "", f"nudge({LARGE})", "20 % up", "."),
         Command("less_than_sign,comma", "<", "", f"nudge({1 / LARGE})", "20 % down", ","),
         Command("", "+-<>", "step", "", ""),
-        Command("p,f5", "p", "pin", "pin", "pin the present prediction for comparison", "F5"),
+        Command(
+            "p,f5", "p", "pin", "pin", "pin the present prediction; up to three are compared", "F5"
+        ),
+        Command("d", "d", "", "drop_pin", "drop the newest pin"),
+        Command("v", "v", "", "view", "trend, open loop or sensitivity in panel 3, by turns"),
         Command("u,f6", "u", "undo", "undo", "undo the last change", "F6"),
         Command("y,f7", "y", "redo", "redo", "redo what was undone", "F7"),
         Command("r,f3", "r", "fit", "record", "fit the plant to a test record", "F3"),
@@ -134,6 +154,7 @@ class MainPage(Page):
             kind.number: kind(work, css_id=f"panel-{kind.number}") for kind in PANELS
         }
         panels = self.panels
+        self.trend = cast("TrendPanel", panels[TrendPanel.number])
         self._left = Vertical(*(panels[number] for number in SETTINGS), id="left")
         self._divider = Divider()
         self._lower = Horizontal(panels["4"], panels["5"], id="lower")
@@ -290,8 +311,9 @@ class MainPage(Page):
 
     def _answers(self, case: Case) -> None:
         try:
-            pinned = self.work.pinned
-            self.post_message(Evaluated(case, study.evaluate(case, like=pinned)))
+            found = study.evaluate(case, like=self.work.pinned)
+            responses = self.work.missing_responses(found) if self.trend.over_frequency else []
+            self.post_message(Evaluated(case, found, responses=responses))
         except WorkbenchError as fault:
             self.post_message(Evaluated(case, None, str(fault)))
 
@@ -306,11 +328,33 @@ class MainPage(Page):
         if message.evaluation is None:
             self.tell(f"{message.fault}", "worse")
         else:
+            if self.work.evaluation is None:
+                self.work.pins = self.work.pins.with_(message.evaluation, self.work.settings)
             self.work.evaluation = message.evaluation
-        if self.work.pinned is None:
-            self.work.pinned = self.work.evaluation
+            self.work.keep_responses(message.responses)
         for panel in self.panels.values():
             panel.redraw()
+        self._respond()
+
+    def _respond(self) -> None:
+        """Compute the frequency responses that are asked for and not there."""
+        if self.trend.over_frequency and self._evaluating is None:
+            present = self.work.evaluation
+            self.run_worker(
+                lambda: self._missing_responses(present),
+                thread=True,
+                group="respond",
+                exit_on_error=False,
+            )
+
+    def _missing_responses(self, present: Evaluation | None) -> None:
+        if found := self.work.missing_responses(present):
+            self.post_message(Responded(found))
+
+    def on_responded(self, message: Responded) -> None:
+        """Show them."""
+        self.work.keep_responses(message.responses)
+        self.trend.redraw()
 
     def on_worker_state_changed(self, event: Worker.StateChanged) -> None:
         """A fault of the program itself must not take the work with it."""
@@ -387,14 +431,45 @@ class MainPage(Page):
             self.post_message(CaseChanged())
 
     def action_pin(self) -> None:
-        """Compare with the present prediction from now on."""
-        if self.work.evaluation is not None and self._is_current():
-            self.work.pinned = self.work.evaluation
-            self.tell("pinned: figures and trend are compared with these settings")
-            for panel in self.panels.values():
-                panel.redraw()
-        else:
+        """Compare with the present prediction too."""
+        if self.work.evaluation is None or not self._is_current():
             self.tell("still computing; press p again when the figures are there")
+            return
+        before = self.work.pins
+        self.work.pins = before.with_(self.work.evaluation, self.work.settings)
+        newest = self.work.pins.newest
+        assert newest is not None
+        told = self.work.pins.words_of(newest, self.work.settings)
+        words = f"pinned as {newest.mark}{f': {told}' if told else ''}"
+        gone = before.kept[0] if len(before.kept) == len(charts.PINS) else None
+        if newest in before.kept:
+            words = f"these settings are pin {newest.mark}"
+        elif gone is not None:
+            words += f"; in the place of the oldest pin, {gone.mark}"
+        self.tell(f"{words}; figures are compared with it from now on")
+        self._redraw_compared()
+
+    def action_drop_pin(self) -> None:
+        """Compare with the pin before the newest."""
+        dropped = self.work.pins.newest
+        if dropped is None:
+            self.tell("nothing is pinned; p pins the present prediction")
+            return
+        self.work.pins = self.work.pins.without_newest()
+        newest = self.work.pins.newest
+        left = f"figures are compared with pin {newest.mark}" if newest else "nothing is pinned"
+        self.tell(f"pin {dropped.mark} dropped; {left}")
+        self._redraw_compared()
+
+    def _redraw_compared(self) -> None:
+        for number in "34":
+            self.panels[number].redraw()
+        self._respond()
+
+    def action_view(self) -> None:
+        """Trend, open loop and sensitivity, by turns."""
+        self.trend.show_next()
+        self._respond()
 
     def action_undo(self) -> None:
         """Back by one change."""
@@ -454,7 +529,10 @@ class MainPage(Page):
         self.editor.leave()
 
     def on_descendant_focus(self, event: DescendantFocus) -> None:
-        """Say what the chosen setting is."""
+        """Say what the chosen setting is, and which keys there are."""
+        panel, keys = self.focused_list(), self.query_one(KeyLine)
+        keys.commands = (panel.key_line if panel else ()) or self.commands
+        keys.redraw()
         self.moved()
 
     def moved(self) -> None:

@@ -8,6 +8,7 @@ from typing import TYPE_CHECKING, ClassVar
 from workbench.screens.cells import Cells, Line, Span
 
 if TYPE_CHECKING:
+    from workbench.screens.keys import Command
     from workbench.screens.work import Work
 
 
@@ -21,6 +22,10 @@ class Listing(Cells):
     title: ClassVar[str] = ""
     help: ClassVar[tuple[str, ...]] = ()
     """What the help page says while this panel has the focus, one paragraph each."""
+    commands: ClassVar[tuple[Command, ...]] = ()
+    """What keys do while this panel has the focus, beside those of the page."""
+    key_line: ClassVar[tuple[Command, ...]] = ()
+    """What the key line shows meanwhile; empty where that is what the page always shows."""
     selects: ClassVar[bool] = False
     """The list has a chosen row; without it the arrows scroll."""
 
@@ -58,9 +63,14 @@ class Listing(Cells):
         yield from [()] * (room - len(shown))
         yield from foot
 
+    @property
+    def name_now(self) -> str:
+        """What the title line says."""
+        return self.title
+
     def heading(self, width: int, more: str = "") -> Line:
         """The title line: the key, the name, and who shares the place."""
-        name = f"{self.number} {self.title}".strip()
+        name = f"{self.number} {self.name_now}".strip()
         mark: Span = (f"> {name} ", "chosen") if self.has_focus else (f"  {name} ", "title")
         right = "  ".join((*self.elsewhere, more)).strip()
         fill = width - len(mark[0]) - len(right) - (2 if right else 0)

@@ -30,13 +30,14 @@ class View:
         """Whether nothing is out of view."""
         return self.low <= self.start and self.high >= self.end
 
-    def zoomed(self, share: float) -> View:
-        """A share of what is shown, about its middle; above 1 it is more.
+    def zoomed(self, share: float, about: float | None = None) -> View:
+        """A share of what is shown, about its middle or another place; above 1 it is more.
 
         >>> View.whole(0.0, 100.0).zoomed(0.5)
         View(start=0.0, end=100.0, low=25.0, high=75.0)
         """
-        middle, half = (self.low + self.high) / 2, (self.high - self.low) / 2 * share
+        middle = (self.low + self.high) / 2 if about is None else about
+        half = (self.high - self.low) / 2 * share
         half = max(half, _NARROWEST * (self.end - self.start))
         return replace(self, low=middle - half, high=middle + half)._inside()
 
@@ -49,11 +50,24 @@ class View:
         step = share * (self.high - self.low)
         return replace(self, low=self.low + step, high=self.high + step)._inside()
 
+    def showing(self, place: float) -> View:
+        """Moved no further than it takes to show a place.
+
+        >>> View(0.0, 100.0, 0.0, 50.0).showing(60.0)
+        View(start=0.0, end=100.0, low=10.0, high=60.0)
+        """
+        shift = max(place - self.high, 0.0) - max(self.low - place, 0.0)
+        return replace(self, low=self.low + shift, high=self.high + shift)._inside()
+
+    def within(self, start: float, end: float) -> View:
+        """The same view of another whole; all of it where the whole was shown."""
+        if self.is_whole:
+            return View.whole(start, end)
+        return replace(self, start=start, end=end)._inside()
+
     def grown(self, end: float) -> View:
         """The same view of a record that grew; the whole of it where the whole was shown."""
-        if self.is_whole:
-            return View.whole(self.start, end)
-        return replace(self, end=end)._inside()
+        return self.within(self.start, end)
 
     def _inside(self) -> View:
         low, high = self.low, self.high

@@ -17,12 +17,21 @@ from workbench import study
 from workbench.case import case as cases
 from workbench.case.case import Case, Revision
 from workbench.case.files import CaseFile, Merge, merge, read_case, save_case, write_new
-from workbench.errors import problem
+from workbench.errors import WorkbenchError, problem
 from workbench.screens import drafts
+from workbench.screens.fields import with_unit
+from workbench.screens.pins import Pins
 from workbench.units import Amount, Quantity, plain
 
 if TYPE_CHECKING:
-    from workbench.study import Evaluation
+    from workbench.study import Evaluation, FrequencyResponse
+
+    Response = FrequencyResponse | str
+    # Of one loop, or why there is none.
+    Responses = list[tuple[Evaluation, Response]]
+
+_SAYS_WHENCE = ("plant.from", "plant.dated")
+"""Keys about where a plant was had from."""
 
 SMALL, LARGE = 1.02, 1.2
 """Factors of a nudge."""
@@ -38,7 +47,8 @@ class Work:
         """Of `case`, or of the one before it until the new one is there."""
         self.fault = ""
         """Why there is no evaluation of the present case."""
-        self.pinned: Evaluation | None = None
+        self.pins = Pins()
+        self._responses: Responses = []
         self.wish = study.Wish()
         """What proposals aim at, until the case is closed."""
         self._before: list[Case] = []
@@ -54,6 +64,46 @@ class Work:
     def open(cls, path: Path) -> Work:
         """Open a case file.  Raises `InputError`."""
         return cls(read_case(path))
+
+    # -- what is compared --------------------------------------------------------------------------
+
+    @property
+    def pinned(self) -> Evaluation | None:
+        """What figures are compared with: the newest pin."""
+        return self.pins.newest.evaluation if self.pins.newest else None
+
+    @property
+    def settings(self) -> dict[str, str]:
+        """The present settings in words, those left out that no figure depends on."""
+        return {
+            key: with_unit(text, self.quantities[key], self)
+            for key, text in self._texts.items()
+            if key not in _SAYS_WHENCE and not key.startswith("loop.") and "sha256" not in key
+        }
+
+    def response_of(self, evaluation: Evaluation) -> Response | None:
+        """Its frequency response, or why it has none; nothing while that is not computed."""
+        return next((found for known, found in self._responses if known is evaluation), None)
+
+    def missing_responses(self, present: Evaluation | None) -> Responses:
+        """Frequency responses of an evaluation and the pins, those known apart; in any thread."""
+        compared = [pin.evaluation for pin in self.pins.kept]
+        wanted = compared if present is None else [present, *compared]
+        found: Responses = []
+        for evaluation in {id(each): each for each in wanted}.values():
+            if self.response_of(evaluation) is None:
+                try:
+                    found.append((evaluation, study.frequency_response(evaluation.case)))
+                except WorkbenchError as fault:
+                    found.append((evaluation, str(fault)))
+        return found
+
+    def keep_responses(self, found: Responses) -> None:
+        """Take note of frequency responses; those that nothing shows any more are dropped."""
+        alive = [self.evaluation, *(pin.evaluation for pin in self.pins.kept)]
+        self._responses = [
+            pair for pair in (*self._responses, *found) if any(pair[0] is each for each in alive)
+        ]
 
     # -- what is -----------------------------------------------------------------------------------
 
@@ -212,9 +262,8 @@ class Work:
         self._set(file.case)
         if self.evaluation is not None:
             # Only the history is new; the figures are those of the same settings.
-            same = self.pinned is self.evaluation
-            self.evaluation = replace(self.evaluation, case=self.case)
-            self.pinned = self.evaluation if same else self.pinned
+            before, self.evaluation = self.evaluation, replace(self.evaluation, case=self.case)
+            self.pins = self.pins.renewed(before, self.evaluation)
         self.keeper.write_last()
         if elsewhere:
             self.keeper = drafts.Keeper(self.path)

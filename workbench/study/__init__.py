@@ -49,6 +49,7 @@ if TYPE_CHECKING:
         narrowed,
         read_records,
     )
+    from workbench.study.frequency import FrequencyReading, FrequencyResponse, frequency_response
     from workbench.study.keep import (
         FileCheck,
         accept,
@@ -63,6 +64,7 @@ if TYPE_CHECKING:
         Prediction,
         Response,
         Trend,
+        TrendReading,
         predict,
         respond,
         respond_to_record,
@@ -92,6 +94,8 @@ __all__ = [
     "Evaluation",
     "FamilyFigures",
     "FileCheck",
+    "FrequencyReading",
+    "FrequencyResponse",
     "InnerTrend",
     "Live",
     "LiveTest",
@@ -114,6 +118,7 @@ __all__ = [
     "TradeOff",
     "TradeOffPoint",
     "Trend",
+    "TrendReading",
     "Wish",
     "accept",
     "action_of",
@@ -134,6 +139,7 @@ __all__ = [
     "fit_plants",
     "fit_record",
     "fit_sources",
+    "frequency_response",
     "loop_of",
     "members",
     "narrowed",
@@ -185,9 +191,9 @@ def _rooms() -> Iterator[ModuleType]:
     from workbench.study import evaluation
 
     yield evaluation
-    from workbench.study import assessment, family, prediction
+    from workbench.study import assessment, family, frequency, prediction
 
-    yield from (assessment, family, prediction)
+    yield from (assessment, family, frequency, prediction)
     from workbench.study import conversion, keep, sheet
 
     yield from (conversion, keep, sheet)

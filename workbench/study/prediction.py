@@ -59,6 +59,26 @@ class Trend:
     """As measured, with its noise."""
     output: Floats
 
+    def at(self, time: float) -> TrendReading | None:
+        """The row nearest to a time [s]; nothing where a value of it is not finite."""
+        if not len(self.time):
+            return None
+        after = int(np.searchsorted(self.time, time))
+        near = [row for row in (after - 1, after) if 0 <= row < len(self.time)]
+        row = min(near, key=lambda each: abs(float(self.time[each]) - time))
+        values = [float(of[row]) for of in (self.time, self.setpoint, self.pv, self.output)]
+        return TrendReading(*values) if all(map(math.isfinite, values)) else None
+
+
+@dataclass(frozen=True)
+class TrendReading:
+    """One row of a trend."""
+
+    time_s: float
+    setpoint: float
+    pv: float
+    output: float
+
 
 @dataclass(frozen=True)
 class InnerTrend:

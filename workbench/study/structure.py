@@ -10,6 +10,7 @@ from workbench.model.cascade import scans_in
 from workbench.model.feedback import Loop
 from workbench.model.feedforward import Feedforward, ideal_feedforward
 from workbench.model.robustness import Margins, analogue_margins, sampled_margins
+from workbench.model.sampled import SampledLoop
 from workbench.model.structures import NOTHING, Structure
 from workbench.model.transfer import TransferFunction
 from workbench.sim.delayed import sampled_steps, without_state_space
@@ -82,6 +83,21 @@ def margins_as_sampled(loop: Loop) -> tuple[Margins | None, str]:
         if not isinstance(loop, Structure) and loop.plant.has_delayed_feedback:
             return sampled_margins(loop, sampled_steps(loop)), ""
         return sampled_margins(loop), ""
+    except ModelError as fault:
+        return None, fault.problems[0].what
+
+
+def open_loop_in_z(loop: Loop) -> tuple[SampledLoop | None, str]:
+    """The open loop in z of a loop that has a scan, or why it has none."""
+    try:
+        missing = _not_in_z(loop)
+        if missing:
+            return None, missing
+        if isinstance(loop, Structure):
+            return loop.sampled(), ""
+        if loop.plant.has_delayed_feedback:
+            return sampled_steps(loop), ""
+        return SampledLoop.of(loop), ""
     except ModelError as fault:
         return None, fault.problems[0].what
 
