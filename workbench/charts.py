@@ -22,7 +22,7 @@ from workbench.units import TIME_UNITS, harmless, text
 
 if TYPE_CHECKING:
     from workbench.case.case import Case
-    from workbench.study import Tolerance, Trend
+    from workbench.study import Retune, Tolerance, Trend
 
 Floats = NDArray[np.float64]
 
@@ -253,6 +253,18 @@ def trend_panes(
         Pane(f"PV {case.pv.unit}", tuple(pv), (case.pv.low, case.pv.high), 2.0),
         Pane(f"OP {case.op.unit}", tuple(op), (case.op.low, case.op.high), 1.0),
     )
+
+
+def retune_rows(retune: Retune, width: int, height: int) -> tuple[str, ...]:
+    """What to expect of a change of settings, in plain ASCII; nothing where it is not predicted."""
+    before, after = (
+        None if each is None or each.prediction is None else each.prediction.trend
+        for each in (retune.before, retune.after)
+    )
+    if after is None:
+        return ()
+    panes = trend_panes(retune.case, after, before)
+    return tuple(draw(panes, width, height, ascii_only=True).rows)
 
 
 # --- axes ----------------------------------------------------------------------------------------

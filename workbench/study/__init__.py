@@ -15,6 +15,7 @@ from workbench.study.assessment import (
     reductions,
 )
 from workbench.study.conversion import Conversion, convert
+from workbench.study.demo import write_demo
 from workbench.study.evaluation import (
     HANDOVER,
     Evaluation,
@@ -151,4 +152,5 @@ __all__ = [
     "units_of",
     "with_family",
     "with_observation",
+    "write_demo",
 ]
