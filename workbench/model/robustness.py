@@ -114,7 +114,9 @@ def sampled_margins(loop: Loop, known: SampledLoop | None = None) -> Margins:
 
     def survived(frequency: float, delay: float) -> float:
         found = _held_delay(loop, frequency, delay)
-        return _soonest(loop, found) if _is_coarse(loop) else found
+        if found is not None and not _is_coarse(loop):
+            return found
+        return _soonest(loop, delay, found)
 
     # A loop that is not had from a state space takes its further dead time as a delay of L.
     exact = survived if known is None else None
@@ -128,11 +130,12 @@ def _is_coarse(loop: Loop) -> bool:
     return loop.scan > 0.5 * max(lags, default=0.0)
 
 
-def _soonest(loop: Loop, delay: float) -> float:
-    """The least dead time up to `delay` [s] with which the loop is not stable any more.
+def _soonest(loop: Loop, delay: float, known: float | None) -> float:
+    """The least dead time [s] with which the loop is not stable any more.
 
-    What the root at the crossover does is known up to `delay`; before it another root may leave,
-    because with each part of a scan the held plant is another one.
+    With `known` the root at the crossover leaves; before it another root may, because with each
+    part of a scan the held plant is another one.  Without it the root is looked for beyond `delay`,
+    where a delay of L alone would have it, and taken to be there if it is not found.
     """
 
     def stable(further: float) -> bool:
@@ -141,18 +144,19 @@ def _soonest(loop: Loop, delay: float) -> float:
         return sampled.verdict().stable
 
     assert loop.scan is not None
-    count = max(_LOOKS, math.ceil(_LOOKS * min(delay / loop.scan, _MOST_SCANS)))
+    until = known if known is not None else delay + 2.0 * loop.scan
+    count = max(_LOOKS, math.ceil(_LOOKS * min(until / loop.scan, _MOST_SCANS)))
     before = 0.0
-    for further in np.linspace(0.0, delay, count, endpoint=False)[1:].tolist():
-        if stable(further):
-            before = further
+    for part in range(1, count):
+        after = until * part / count
+        if stable(after):
+            before = after
             continue
-        after = further
         for _ in range(_HALVINGS):
             middle = 0.5 * (before + after)
             before, after = (middle, after) if stable(middle) else (before, middle)
         return after
-    return delay
+    return delay if known is None else known
 
 
 _LOOKS: Final = 12
@@ -161,8 +165,8 @@ _MOST_SCANS: Final = 5
 _HALVINGS: Final = 34
 
 
-def _held_delay(loop: Loop, frequency: float, delay: float) -> float:
-    """The dead time [s] that makes L = -1, from where a delay of L alone would.
+def _held_delay(loop: Loop, frequency: float, delay: float) -> float | None:
+    """The dead time [s] that makes L = -1, from where a delay of L alone would; `None` if lost.
 
     A dead time of a part of a scan changes the held plant otherwise than exp(-d s) would.  So L is
     worked out anew with it, until frequency and dead time no longer change: Newton's steps for
@@ -180,13 +184,13 @@ def _held_delay(loop: Loop, frequency: float, delay: float) -> float:
         change = -short.real / slope.real if slope.real else math.inf
         more = (short.imag + slope.imag * change) / frequency
         if not math.isfinite(change + more) or not 0.0 < frequency + change <= limit:
-            return first
+            return None
         frequency, delay = frequency + change, delay + more
         if delay < 0.0 or abs(delay - first) > sampled.scan:
-            return first
+            return None
         if abs(more) <= 1e-9 * delay and abs(change) <= 1e-7 * frequency:
             return delay
-    return first
+    return None
 
 
 def ultimate(plant: TransferFunction) -> tuple[float, float]:

@@ -62,7 +62,7 @@ from workbench.study.prediction import (
     response_horizon,
 )
 from workbench.study.proposals import LIMITS, Proposal, propose, take
-from workbench.study.records import Columns, SheetCheck, diagnose, plan_test, recognise
+from workbench.study.records import SheetCheck, diagnose, plan_test, recognise
 from workbench.study.sheet import Retune, Stage, retune
 from workbench.study.survey import Surveyed, survey
 from workbench.study.tolerance import LIMIT as TOLERANCE_LIMIT
@@ -80,7 +80,6 @@ __all__ = [
     "Assessment",
     "Axis",
     "Bump",
-    "Columns",
     "Conversion",
     "Distance",
     "Evaluation",
