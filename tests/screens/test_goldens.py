@@ -73,5 +73,22 @@ def test_the_list_looks_as_it_did(folder: Path) -> None:
     async def story() -> None:
         async with running(Path()) as pilot:
             compare_with_golden("list-80x24", text_of(pilot))
+            await press(pilot, "v")
+            compare_with_golden("survey-80x24", text_of(pilot))
+            await press(pilot, "down", "enter", "slash")
+            await type_in(pilot, "reset")
+            await pilot.pause()
+            compare_with_golden("finder-80x24", text_of(pilot))
+
+
+def test_an_empty_folder_looks_as_it_did(folder: Path) -> None:
+    (folder / "empty").mkdir()
+
+    async def story() -> None:
+        async with running(Path("empty"), ascii_only=True) as pilot:
+            compare_with_golden("empty-80x24-ascii", text_of(pilot))
+            await press(pilot, "d", "v")
+            compare_with_golden("survey-80x24-ascii", text_of(pilot))
+            assert text_of(pilot).isascii()
 
     run(story())
