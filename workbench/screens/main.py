@@ -523,7 +523,7 @@ class MainPage(Page):
             panel.cursor = panel.keys.index(key)
             self.moved()
             panel.redraw()
-            self.call_after_refresh(self.action_edit)
+            self.call_after_refresh(self.editor.open, panel)
 
     # -- editing -----------------------------------------------------------------------------------
 
@@ -589,7 +589,7 @@ def _pair_of(number: str) -> str:
 SETTING_CALLED: Final = {
     "plant.gain": "process static",
     "plant.time_constant": "lag process",
-    "plant.dead_time": "delay transport lag",
+    "plant.dead_time": "deadtime delay transport lag",
     "plant.shape": "model transfer function",
     "plant.formula": "transfer function model",
     "controller.gain": "proportional p kp kc tune",

@@ -36,13 +36,13 @@ def copy_settings(app: App[None], case: Case, path: Path) -> str:
         place.parent.mkdir(parents=True, exist_ok=True, mode=0o700)
         _replace(place, words)
     except OSError as fault:
-        written = f"they could not be written to a file: {fault.strerror}"
+        written = f"settings not written to a file: {fault.strerror}"
     else:
-        written = f"they are in {_short(place)}"
+        written = f"settings copied to {_short(place)}"
     if not has_clipboard(os.environ):
-        return f"settings copied: {written} (this terminal has no clipboard to fill)"
+        return f"{written}; this terminal has no clipboard"
     app.copy_to_clipboard(words)
-    return f"settings sent to the terminal's clipboard, if it lets them in; {written}"
+    return f"{written}; sent to the terminal's clipboard too"
 
 
 def write_sheet(case: Case, path: Path) -> Path:
