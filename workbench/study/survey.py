@@ -2,13 +2,16 @@
 
 from __future__ import annotations
 
+import contextlib
 import multiprocessing
 import os
 import signal
+import sys
 from collections.abc import Callable, Sequence
 from concurrent.futures import FIRST_COMPLETED, ProcessPoolExecutor, wait
 from dataclasses import dataclass
 from datetime import date, datetime
+from multiprocessing import resource_tracker
 from pathlib import Path
 from typing import Final
 
@@ -107,6 +110,9 @@ def _shared(
     """
     batches = [files[start : start + BATCH] for start in range(0, len(files), BATCH)]
     found: list[Surveyed] = []
+    with contextlib.redirect_stderr(sys.__stderr__):
+        # It hands on the number of standard error, and what a screen puts there has none.
+        resource_tracker.ensure_running()
     pool = ProcessPoolExecutor(
         workers,
         multiprocessing.get_context("spawn"),
