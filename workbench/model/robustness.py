@@ -28,6 +28,7 @@ from workbench.model.transfer import Complex, TransferFunction
 from workbench.units import Figure
 
 Floats = NDArray[np.float64]
+Indices = NDArray[np.intp]
 Response = Callable[[Floats], Complex]
 
 _NOT_STABLE: Final = "the loop is not stable"
@@ -335,20 +336,52 @@ def crossings(f: Callable[[Floats], Floats], low: Floats, high: Floats) -> Float
 def _peak(f: Callable[[Floats], Floats], grid: Floats, values: Floats) -> float:
     """Largest value of f on the grid, each promising hill climbed between its neighbours."""
     best = float(values.max())
-    inside = np.flatnonzero((values[1:-1] >= values[:-2]) & (values[1:-1] >= values[2:])) + 1
-    inside = inside[values[inside] > 0.8 * best]
-    if not len(inside):
-        return best
-    low, high = grid[inside - 1], grid[inside + 1]
+    inside = _hills(values)
+    _, heights = _tips(f, grid, inside[values[inside] > 0.8 * best])
+    return max(best, float(heights.max(initial=-math.inf)))
+
+
+def _hills(values: Floats) -> Indices:
+    """Where a value is not below its neighbours; the ends are not looked at."""
+    return np.flatnonzero((values[1:-1] >= values[:-2]) & (values[1:-1] >= values[2:])) + 1
+
+
+def _tips(f: Callable[[Floats], Floats], grid: Floats, hills: Indices) -> tuple[Floats, Floats]:
+    """The highest point of f between the neighbours of each hill of a grid, and its height."""
+    at, best = grid[hills], np.full(len(hills), -math.inf)
+    if not len(hills):
+        return at, best
+    low, high = grid[hills - 1], grid[hills + 1]
+    columns = np.arange(len(hills))
     for _ in range(7):
         points = np.linspace(low, high, 13)
         heights = f(points.ravel()).reshape(points.shape)
         top = heights.argmax(axis=0)
-        best = max(best, float(heights.max()))
-        columns = np.arange(points.shape[1])
+        higher = heights[top, columns] > best
+        at = np.where(higher, points[top, columns], at)
+        best = np.maximum(best, heights[top, columns])
         low = points[np.maximum(top - 1, 0), columns]
         high = points[np.minimum(top + 1, 12), columns]
-    return best
+    return at, best
+
+
+def _grazed(f: Callable[[Floats], Floats], grid: Floats, values: Floats) -> tuple[Floats, Floats]:
+    """A grid and f on it with the tips that reach over 0 between two of its points."""
+    grid, values = _topped(f, grid, values)
+    grid, values = _topped(lambda w: -f(w), grid, -values)
+    return grid, -values
+
+
+def _topped(f: Callable[[Floats], Floats], grid: Floats, values: Floats) -> tuple[Floats, Floats]:
+    hills = _hills(values)
+    at, height = _tips(f, grid, hills[(values[hills] < 0.0) & (values[hills] > -_NEAR_ONE)])
+    over = height > 0.0
+    where = np.searchsorted(grid, at[over])
+    return np.insert(grid, where, at[over]), np.insert(values, where, height[over])
+
+
+_NEAR_ONE: Final = 0.1
+"""How near to 1 the loop gain comes between two frequencies, as a logarithm, to be looked at."""
 
 
 def _margins(
@@ -477,7 +510,7 @@ def _phase_margins(
     def log_size(response: Complex) -> Floats:
         return np.log(np.maximum(np.abs(response), 1e-300))
 
-    size = log_size(values)
+    grid, size = _grazed(lambda w: log_size(response(w)), grid, log_size(values))
     cut = size[:-1] * size[1:] <= 0.0
     at = crossings(lambda w: log_size(response(w)), grid[:-1][cut], grid[1:][cut])
     if not len(at):
