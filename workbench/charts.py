@@ -24,7 +24,7 @@ from workbench.units import TIME_UNITS, harmless, text
 
 if TYPE_CHECKING:
     from workbench.case.case import Case
-    from workbench.study import Tolerance, Trend
+    from workbench.study import Retune, Tolerance, Trend
 
 Floats = NDArray[np.float64]
 
@@ -280,6 +280,18 @@ def pin_names(pinned: Iterable[str]) -> dict[str, str]:
     """Words of pinned curves for the legend: one for all of them, after the last sample."""
     inks = list(pinned)
     return {ink: "pinned" if ink == inks[-1] else "" for ink in inks}
+
+
+def retune_rows(retune: Retune, width: int, height: int) -> tuple[str, ...]:
+    """What to expect of a change of settings, in plain ASCII; nothing where it is not predicted."""
+    before, after = (
+        None if each is None or each.prediction is None else each.prediction.trend
+        for each in (retune.before, retune.after)
+    )
+    if after is None:
+        return ()
+    panes = trend_panes(retune.case, after, {"pinned": before} if before else None)
+    return tuple(draw(panes, width, height, ascii_only=True).rows)
 
 
 # --- axes ----------------------------------------------------------------------------------------

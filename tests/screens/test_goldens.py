@@ -91,5 +91,29 @@ def test_the_list_looks_as_it_did(folder: Path) -> None:
     async def story() -> None:
         async with running(Path()) as pilot:
             compare_with_golden("list-80x24", text_of(pilot))
+            await press(pilot, "down", "enter", "slash")
+            await type_in(pilot, "reset")
+            await pilot.pause()
+            compare_with_golden("finder-80x24", text_of(pilot))
+
+    run(story())
+
+
+@pytest.mark.parametrize(
+    ("size", "ascii_only", "name"),
+    [((80, 24), True, "80x24-ascii"), ((160, 50), False, "160x50")],
+    ids=["80x24 ascii", "160x50"],
+)
+def test_a_folder_that_was_empty_looks_as_it_did(
+    folder: Path, size: tuple[int, int], ascii_only: bool, name: str
+) -> None:
+    (folder / "empty").mkdir()
+
+    async def story() -> None:
+        async with running(Path("empty"), size, ascii_only=ascii_only) as pilot:
+            compare_with_golden(f"empty-{name}", text_of(pilot))
+            await press(pilot, "d", "v")
+            compare_with_golden(f"survey-{name}", text_of(pilot))
+            assert not ascii_only or text_of(pilot).isascii()
 
     run(story())

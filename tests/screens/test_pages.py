@@ -30,13 +30,16 @@ from workbench.case.case import Case, show
 from workbench.case.files import read_case
 from workbench.errors import problem
 from workbench.screens import drafts
+from workbench.screens.finder import FinderPage
 from workbench.screens.help import HelpPage
+from workbench.screens.keys import FIND
 from workbench.screens.main import MainPage
 from workbench.screens.page import Page
 from workbench.screens.proposals import ProposalsPage
 from workbench.screens.record import RecordFitted, RecordPage
 from workbench.screens.saving import ConflictPage, DraftPage, LeavePage, SavePage
 from workbench.screens.start import StartPage
+from workbench.screens.survey import SurveyPage
 from workbench.screens.tolerance import TolerancePage
 from workbench.screens.work import Work
 
@@ -93,8 +96,9 @@ def test_an_empty_folder_says_how_to_begin(tmp_path: Path) -> None:
     async def story() -> None:
         async with running(empty) as pilot:
             assert "no case files" in text_of(pilot)
-            assert "workbench new TAG" in text_of(pilot)
+            assert "n  begins a new case" in text_of(pilot)
             await press(pilot, "enter", "down", "up")
+            assert "n makes one, d writes the demo" in text_of(pilot)
 
     run(story())
 
@@ -476,10 +480,14 @@ def test_the_trade_off_is_drawn_over_the_list(work: Work) -> None:
     run(story())
 
 
-def test_leaving_the_page_ends_its_search(work: Work, monkeypatch: pytest.MonkeyPatch) -> None:
+def test_esc_ends_a_search_and_then_leaves_the_page(
+    work: Work, monkeypatch: pytest.MonkeyPatch
+) -> None:
     stopped: list[bool] = []
 
-    def propose(case: Case, wish: study.Wish, should_stop: Callable[[], bool]) -> tuple[()]:
+    def propose(
+        case: Case, wish: study.Wish, should_stop: Callable[[], bool], tell: object
+    ) -> tuple[()]:
         while not should_stop():
             time.sleep(0.01)
         stopped.append(True)
@@ -491,8 +499,9 @@ def test_leaving_the_page_ends_its_search(work: Work, monkeypatch: pytest.Monkey
             await pilot.press("o")
             await pilot.pause()
             await pilot.press("escape")
-            while not stopped:
-                await pilot.pause(0.01)
+            await until(pilot, lambda: bool(stopped) and "stopped: " in text_of(pilot))
+            page_of(pilot, ProposalsPage)
+            await press(pilot, "escape")
             page_of(pilot, MainPage)
 
     run(story())
@@ -845,12 +854,16 @@ def pages() -> list[type[Page]]:
     """Every page of the program."""
     return [
         StartPage,
+        SurveyPage,
         MainPage,
         RecordPage,
         ProposalsPage,
+        TolerancePage,
         SavePage,
+        ConflictPage,
         LeavePage,
         DraftPage,
+        FinderPage,
         HelpPage,
     ]
 
@@ -883,7 +896,11 @@ def test_no_command_hangs_on_a_key_that_may_never_arrive(kind: type[Page]) -> No
 def test_the_key_line_fits_80_columns_on_every_page() -> None:
     for kind in pages():
         for commands in kind.key_lines or (kind.commands,):
-            shown = [f"{command.shown} {command.words}" for command in commands if command.words]
+            shown = [
+                f"{command.shown} {command.words}"
+                for command in (*commands, *([] if kind is FinderPage else [FIND]))
+                if command.words and not command.spare
+            ]
             assert len(" ".join(shown)) <= 80, kind
 
 

@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+import io
+import sys
 from datetime import UTC, date, datetime
 from pathlib import Path
 from typing import Final
@@ -94,7 +96,9 @@ def test_figures_that_no_longer_come_out_are_found(tmp_path: Path) -> None:
     assert any("max_sensitivity was" in finding for finding in row.findings)
 
 
-def test_the_worst_come_first_and_a_broken_file_stops_nothing(tmp_path: Path) -> None:
+def test_the_worst_come_first_and_a_broken_file_stops_nothing(
+    tmp_path: Path, monkeypatch: pytest.MonkeyPatch
+) -> None:
     write_new(tmp_path / "a_fine.toml", oven())
     write_new(tmp_path / "b_away.toml", oven(controller_gain="15"))
     write_new(tmp_path / "c_near.toml", oven(controller_gain="6"))
@@ -107,7 +111,24 @@ def test_the_worst_come_first_and_a_broken_file_stops_nothing(tmp_path: Path) ->
 
     assert [Path(row.path).name[0] for row in rows] == ["b", "d", "c", "e", "f", "a"]
     assert sorted(rows, key=lambda row: STATUSES.index(row.status)) == list(rows)
+    # What a screen puts in the place of standard error has no number to hand on.
+    monkeypatch.setattr(sys, "stderr", type("Screen", (io.StringIO,), {"fileno": lambda _: -1})())
     assert rows == study.survey(paths, TODAY, workers=2), "the processes change nothing"
+
+
+def test_a_stopped_survey_keeps_what_is_judged(tmp_path: Path) -> None:
+    for name in "abc":
+        write_new(tmp_path / f"{name}.toml", oven())
+    told: list[int] = []
+
+    rows = study.survey(
+        sorted(tmp_path.glob("*.toml")),
+        TODAY,
+        tell=told.append,
+        should_stop=lambda: len(told) == 2,
+    )
+
+    assert [Path(row.path).name for row in rows] == ["a.toml", "b.toml"]
 
 
 def test_progress_is_told(tmp_path: Path) -> None:

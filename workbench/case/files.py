@@ -21,6 +21,7 @@ import tomllib
 from collections.abc import Iterator
 from dataclasses import dataclass, replace
 from functools import cached_property
+from pathlib import Path
 from typing import Any, Final
 
 from workbench.case.case import Case, differences, edit_all
@@ -103,6 +104,27 @@ def file_name(tag: str) -> str:
         what = f"{harmless(tag, 60)!r} cannot be a file's name"
         raise InputError(Problem(what, "use letters, digits, - and _", "loop.tag"))
     return f"{tag}.toml"
+
+
+def files_below(folder: str | os.PathLike[str]) -> list[Path]:
+    """Every case file in a folder and below it.
+
+    Raises `InputError` where there is none, `OSError` where a folder cannot be looked into.
+    """
+
+    def stop(fault: OSError) -> None:
+        raise fault
+
+    below = sorted(
+        Path(inner, name)
+        for inner, _, names in os.walk(folder, onerror=stop)
+        for name in names
+        if name.endswith(".toml")
+    )
+    if not below:
+        what, mend = "has no case file (*.toml) in or below it", "name another"
+        raise InputError(Problem(what, mend, path=harmless(os.fspath(folder))))
+    return below
 
 
 def _contents(path: str) -> bytes:

@@ -75,20 +75,10 @@ def sheet(given: Given) -> Answer:
         raise no_controller(given, "a retune sheet")
     with progress("predicting"):
         retune = study.retune(case)
-    before, after = (
-        None if e is None or e.prediction is None else e.prediction.trend
-        for e in (retune.before, retune.after)
-    )
-    picture = charts.draw(
-        charts.trend_panes(case, after, {"pinned": before} if before else None),
-        report.SHEET_WIDTH,
-        14,
-        ascii_only=True,
-    )
     words = report.sheet_text(
         retune,
         study.units_of(case),
-        () if after is None else picture.rows,
+        charts.retune_rows(retune, report.SHEET_WIDTH, 14),
         file=given.file or "TAG.toml",
         tag_words=tag_words(case.loop.tag),
         markdown="--markdown" in given,
@@ -117,24 +107,12 @@ def new(given: Given) -> Answer:
 
 def case_files(paths: Iterable[str]) -> list[Path]:
     """The files named, and every case file below the folders named."""
-
-    def stop(fault: OSError) -> None:
-        raise fault
+    from workbench.case.files import files_below
 
     files: dict[Path, None] = {}
     for path in paths:
         if os.path.isdir(path):
-            below = sorted(
-                Path(folder, name)
-                for folder, _, names in os.walk(path, onerror=stop)
-                for name in names
-                if name.endswith(".toml")
-            )
-            if not below:
-                raise InputError(
-                    Problem("has no case file (*.toml) in or below it", "name another", path=path)
-                )
-            files |= dict.fromkeys(below)
+            files |= dict.fromkeys(files_below(path))
         else:
             if not os.path.exists(path):
                 raise InputError(

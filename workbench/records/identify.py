@@ -79,6 +79,7 @@ def fit(
     noise_model: str = "auto",
     drift: bool = True,
     should_stop: Callable[[], bool] | None = None,
+    tell: Callable[[int, int], None] = lambda done, total: None,
 ) -> Fit:
     """Plants fitted to a record, with their uncertainty.
 
@@ -99,6 +100,8 @@ def fit(
         it is the OP at which they would stand still.
     should_stop
         Asked now and then; the search ends with `CannotSolve` once it says true.
+    tell
+        Called with the number of shapes tried, and of all.
 
     Returns
     -------
@@ -135,7 +138,10 @@ def fit(
         notes = (Note("caution", reason), *cautions)
         return Fit((), None, notes, record, reason, loop=loop, relay=_relay(record))
     search = Search(Rows.of(record), record.interval, noise_model, drift, should_stop)
-    tried = [_candidate(search, shape) for shape in shapes]
+    tried = []
+    for number, shape in enumerate(shapes):
+        tell(number, len(shapes))
+        tried.append(_candidate(search, shape))
     found = sorted((c for c in tried if c is not None), key=lambda candidate: candidate.bic)
     best = _choice(found)
     reason = _undecided(best, search, loop)

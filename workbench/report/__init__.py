@@ -38,7 +38,7 @@ from workbench.report.settings import (
     propose_text,
 )
 from workbench.report.sheet import WIDTH as SHEET_WIDTH
-from workbench.report.sheet import sheet_text
+from workbench.report.sheet import settings_block, sheet_text
 from workbench.report.survey import survey_data, survey_text
 from workbench.report.words import Json, Rows, settings_text, wrapped
 
@@ -77,6 +77,7 @@ __all__ = [
     "respond_data",
     "respond_text",
     "response_csv",
+    "settings_block",
     "settings_text",
     "sheet_text",
     "survey_data",

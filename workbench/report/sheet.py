@@ -16,7 +16,7 @@ from workbench.report.words import (
     two_columns,
     wrapped,
 )
-from workbench.units import Note, harmless, text, time_text
+from workbench.units import Note, harmless, quantities, text, time_text
 
 if TYPE_CHECKING:
     from workbench.case.case import Case
@@ -128,6 +128,25 @@ def _settings_lines(retune: Retune) -> list[str]:
         )
         lines += ["", wrapped(words, WIDTH)]
     return lines
+
+
+def settings_block(case: Case) -> str:
+    """The settings alone, to be pasted: a line each in the order of entry, in their own units.
+
+    Raises `InputError` where the case has no controller.
+    """
+    from workbench.study import controller_of
+
+    controller = controller_of(case)
+    own = {"PV": case.pv.unit, "OP": case.op.unit}
+    rows = []
+    for key, value in settings_data(controller).items():
+        declared = quantities(type(controller))[key]
+        unit = "/".join(own.get(part, part) for part in declared.unit.split("/"))
+        said = f"{_said(value)} {unit}" if isinstance(value, float | int) and unit else _said(value)
+        rows.append((key.replace("_", " "), said))
+    title = harmless(f"{case.loop.tag}  {case.loop.service}".rstrip(), WIDTH)
+    return "\n".join([title, *two_columns(rows, WIDTH, ""), *handover_lines(WIDTH), ""])
 
 
 _ALWAYS: Final = ("form", "gain", "proportional_band", "integral", "derivative")

@@ -11,8 +11,11 @@ import os
 import signal
 import sys
 import traceback
+from collections.abc import Iterable
+from dataclasses import replace
+from functools import partial
 from pathlib import Path
-from typing import ClassVar
+from typing import ClassVar, Final
 
 from textual.app import App
 from textual.binding import BindingType
@@ -21,7 +24,7 @@ from workbench.errors import WorkbenchError
 from workbench.screens import drafts
 from workbench.screens.help import HelpPage
 from workbench.screens.main import MainPage
-from workbench.screens.page import Page
+from workbench.screens.page import MOVING, Offer, Page
 from workbench.screens.terminal import ASKED_TO_END, Guard, TolerantDriver, abilities
 from workbench.screens.work import Work
 
@@ -106,6 +109,44 @@ class WorkbenchApp(App[None], inherit_bindings=False):
         """Explain a page."""
         self.push_screen(HelpPage(page))
 
+    def show_finder(self, page: Page) -> None:
+        """Everything that can be done from a page."""
+        from workbench.screens.finder import FinderPage
+
+        self.push_screen(FinderPage([*page.offers(), *self._offers_elsewhere(page)]))
+
+    def _offers_elsewhere(self, page: Page) -> Iterable[Offer]:
+        """What can be done on the pages that a page leads to, and on the one it came from."""
+        pages = leads_to()
+        for action, kind in pages.get(type(page), {}).items():
+            for command in kind.commands:
+                if command.action and command.help and command.action not in NOT_FROM_AFAR:
+                    yield replace(
+                        page.offer(command),
+                        run=partial(self._go_and_do, page, action, command.action),
+                        place=kind.called,
+                    )
+        before = self.screen_stack[-2]
+        if isinstance(before, Page) and type(page) in pages.get(type(before), {}).values():
+            for offer in before.offers():
+                yield replace(offer, run=partial(self._back_and_do, offer), place=before.called)
+
+    async def _go_and_do(self, page: Page, action: str, wanted: str) -> None:
+        """Open a page by the action that leads there, then do what is wanted on it."""
+        await page.run_action(action)
+        if self.screen is not page:
+            self.screen.call_after_refresh(self.screen.run_action, wanted)
+
+    def _back_and_do(self, offer: Offer) -> None:
+        self.pop_screen()
+        offer.run()
+
+    def show_survey(self, folder: Path) -> None:
+        """How every loop of a folder stands."""
+        from workbench.screens.survey import SurveyPage
+
+        self.push_screen(SurveyPage(folder))
+
     def show_record(self, work: Work) -> None:
         """Fit the plant to a record."""
         from workbench.screens.record import RecordPage
@@ -155,6 +196,24 @@ class WorkbenchApp(App[None], inherit_bindings=False):
             self.pop_screen()
         else:
             self.finish()
+
+
+def leads_to() -> dict[type[Page], dict[str, type[Page]]]:
+    """Page -> its action -> the page that this opens."""
+    from workbench.screens.proposals import ProposalsPage
+    from workbench.screens.record import RecordPage
+    from workbench.screens.start import StartPage
+    from workbench.screens.survey import SurveyPage
+    from workbench.screens.tolerance import TolerancePage
+
+    return {
+        StartPage: {"survey": SurveyPage},
+        MainPage: {"record": RecordPage, "proposals": ProposalsPage, "tolerance": TolerancePage},
+    }
+
+
+NOT_FROM_AFAR: Final = frozenset({"back", "help", *(command.action for command in MOVING)})
+"""What says nothing before the page is open."""
 
 
 def run(

@@ -30,6 +30,9 @@ class Entry(Cells):
             """The entry."""
             return self.entry
 
+    class Changed(Message):
+        """Posted when the text is another one."""
+
     class Left(Message):
         """Posted when Esc is pressed."""
 
@@ -86,6 +89,7 @@ class Entry(Cells):
 
     def on_key(self, event: events.Key) -> None:
         """Edit the text."""
+        before = self.value
         if event.is_printable and event.character:
             self._insert(event.character)
         elif event.key in _EDITS:
@@ -101,14 +105,21 @@ class Entry(Cells):
             return
         event.stop()
         event.prevent_default()
+        self._tell_of_change(before)
         self.redraw()
+
+    def _tell_of_change(self, before: str) -> None:
+        if self.value != before:
+            self.post_message(self.Changed())
 
     def on_paste(self, event: events.Paste) -> None:
         """The first pasted line, without anything that is not a character."""
         event.stop()
         lines = event.text.splitlines()
         if lines:
+            before = self.value
             self._insert("".join(c for c in lines[0] if c.isprintable()))
+            self._tell_of_change(before)
             self.redraw()
 
     def _insert(self, words: str) -> None:

@@ -7,7 +7,7 @@ from collections.abc import Iterable
 from textual.widget import Widget
 
 from workbench.screens.cells import Line
-from workbench.screens.keys import Command, bindings
+from workbench.screens.keys import FIND, Command, bindings
 from workbench.screens.page import BACK, MOVING, Page
 from workbench.screens.panel import Listing, wrapped
 
@@ -49,7 +49,10 @@ def _key_line(command: Command) -> Line:
     return ((f"  {keys}".ljust(16), "key"), (command.help, "plain"))
 
 
-EVERYWHERE = (Command("ctrl+z", "ctrl+z", "", "", "to the shell; `fg` comes back"),)
+EVERYWHERE = (
+    FIND,
+    Command("ctrl+z", "ctrl+z", "", "", "to the shell; `fg` comes back"),
+)
 """Keys of the program rather than of a page."""
 
 

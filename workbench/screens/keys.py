@@ -25,6 +25,10 @@ class Command:
     """The sentence of the help page."""
     also: str = ""
     """Further keys, named in the help only."""
+    called: str = ""
+    """Other words of the trade by which the finder finds it."""
+    spare: bool = False
+    """Left out of the key line where there is no room; the help has it."""
 
 
 def bindings(commands: Iterable[Command]) -> list[BindingType]:
@@ -36,8 +40,14 @@ def bindings(commands: Iterable[Command]) -> list[BindingType]:
     ]
 
 
+FIND = Command(
+    "slash,ctrl+f", "/", "find", "find", "find an action or a setting by plain words", "ctrl+f"
+)
+"""On every page."""
+
+
 class KeyLine(Cells):
-    """The one line at the bottom that shows every key of the page."""
+    """The one line at the bottom that shows the keys of the page."""
 
     def __init__(self, commands: Sequence[Command]) -> None:
         super().__init__(classes="one-line")
@@ -46,9 +56,17 @@ class KeyLine(Cells):
     def lines(self, width: int, height: int) -> Iterable[Line]:
         """Keys and words, with two spaces between them where there is room."""
         entries = [command for command in self.commands if command.words]
-        length = sum(len(entry.shown) + 1 + len(entry.words) for entry in entries)
-        gap = "  " if length + 2 * (len(entries) - 1) <= width else " "
+        length = _length(entries)
+        if length > width:
+            entries = [entry for entry in entries if not entry.spare]
+            length = _length(entries)
+        gap = "  " if length + len(entries) - 1 <= width else " "
         spans: list[Span] = []
         for entry in entries:
             spans += [(entry.shown, "key"), (f" {entry.words}{gap}", "quiet")]
         yield spans
+
+
+def _length(entries: Sequence[Command]) -> int:
+    """Columns, with one space between the entries."""
+    return sum(len(entry.shown) + 2 + len(entry.words) for entry in entries) - 1

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Iterable
+from functools import partial
 from typing import TYPE_CHECKING, Final, cast
 
 from textual import on
@@ -24,7 +25,8 @@ from workbench.screens.figures import FiguresPanel
 from workbench.screens.history import HistoryPanel, changed_by
 from workbench.screens.instruments import InstrumentsPanel
 from workbench.screens.keys import Command, KeyLine, bindings
-from workbench.screens.page import HELP, MOVING, Page
+from workbench.screens.output import copy_settings, write_sheet
+from workbench.screens.page import HELP, MOVING, Offer, Page
 from workbench.screens.panel import Panel
 from workbench.screens.plant import PlantPanel
 from workbench.screens.ranges import LoopPanel
@@ -32,6 +34,7 @@ from workbench.screens.scenario import ScenarioPanel
 from workbench.screens.structure import StructurePanel
 from workbench.screens.trend import TrendPanel
 from workbench.screens.work import LARGE, SMALL, Work
+from workbench.units import harmless
 
 if TYPE_CHECKING:
     from textual.events import DescendantFocus
@@ -56,6 +59,21 @@ LEFT: Final = 36
 
 
 CHOOSE: Final = "choose a setting first, in a panel of settings: 1, 2, 6, 7, 8, 9"
+
+
+PIN: Final = "compare hold freeze reference baseline"
+FIT: Final = "identify identification model step bump response data csv historian measure estimate"
+TUNE: Final = (
+    "tune tuning autotune calculate optimise recommend rule lambda simc imc propose search"
+)
+MAP: Final = "robust robustness margin sensitivity map tolerance uncertainty mismatch"
+COPY: Final = "clipboard export paste yank hand over dcs block"
+SHEET: Final = "print report paper document handover control room page approval export"
+ZOOM: Final = "maximise enlarge full bigger large alone"
+QUIT: Final = "quit exit close end"
+MORE: Final = "nudge increase raise higher faster larger"
+LESS: Final = "nudge decrease lower reduce smaller slower"
+"""Other words of the trade by which actions are found."""
 
 
 class CaseChanged(Message):
@@ -89,6 +107,14 @@ class Responded(Message):
         self.responses = responses
 
 
+class SheetWritten(Message):
+    """Posted when the retune sheet is on the disk, or why it is not."""
+
+    def __init__(self, words: str, tone: str) -> None:
+        super().__init__()
+        self.words, self.tone = words, tone
+
+
 class DraftFailed(Message):
     """Posted when the draft cannot be written."""
 
@@ -100,6 +126,8 @@ class DraftFailed(Message):
 class MainPage(Page):
     """Plant, Controller, Trend, Figures, History, Scenario, Loop, Instruments, Structure."""
 
+    called = "loop's page"
+
     about = (
         "Choose a setting with the arrows and press Enter to type another value, or nudge it. Each "
         "accepted change is predicted at once and drawn over the pinned prediction. '*' marks a "
@@ -108,24 +136,45 @@ class MainPage(Page):
     )
     commands = (
         Command("enter,f4", "Enter", "", "edit", "type another value for the chosen setting", "F4"),
-        Command("plus,equals_sign", "+", "", f"nudge({SMALL})", "2 % up, or the next choice", "="),
-        Command("minus", "-", "", f"nudge({1 / SMALL})", "2 % down, or the choice before"),
-        Command("greater_than_sign,full_stop", ">", "", f"nudge({LARGE})", "20 % up", "."),
-        Command("less_than_sign,comma", "<", "", f"nudge({1 / LARGE})", "20 % down", ","),
+        Command(
+            "plus,equals_sign", "+", "", f"nudge({SMALL})", "2 % up, or the next choice", "=", MORE
+        ),
+        Command(
+            "minus", "-", "", f"nudge({1 / SMALL})", "2 % down, or the choice before", called=LESS
+        ),
+        Command("greater_than_sign,full_stop", ">", "", f"nudge({LARGE})", "20 % up", ".", MORE),
+        Command("less_than_sign,comma", "<", "", f"nudge({1 / LARGE})", "20 % down", ",", LESS),
         Command("", "+-<>", "step", "", ""),
         Command(
-            "p,f5", "p", "pin", "pin", "pin the present prediction; up to three are compared", "F5"
+            *("p,f5", "p", "pin", "pin"),
+            "pin the present prediction; up to three are compared",
+            "F5",
+            PIN,
         ),
-        Command("d", "d", "", "drop_pin", "drop the newest pin"),
-        Command("v", "v", "", "view", "trend, open loop or sensitivity in panel 3, by turns"),
-        Command("u,f6", "u", "undo", "undo", "undo the last change", "F6"),
-        Command("y,f7", "y", "redo", "redo", "redo what was undone", "F7"),
-        Command("r,f3", "r", "fit", "record", "fit the plant to a test record", "F3"),
-        Command("o,f8", "o", "propose", "proposals", "best settings and published rules", "F8"),
-        Command("t,f10", "t", "map", "tolerance", "how much plant error the loop survives", "F10"),
-        Command("s,f2", "s", "save", "save", "save with a reason", "F2"),
-        Command("z,f9", "z", "zoom", "zoom", "the focused panel alone, and back", "F9"),
-        Command("q,ctrl+c", "q", "leave", "leave", "leave; asks about unsaved work", "ctrl+c"),
+        Command("d", "d", "", "drop_pin", "drop the newest pin", called=PIN),
+        Command(
+            *("v", "v", "", "view"),
+            "trend, open loop or sensitivity in panel 3, by turns",
+            called="frequency response bode nyquist robustness chart",
+        ),
+        Command("u,f6", "u", "undo", "undo", "undo the last change", "F6", "revert take back"),
+        Command("y,f7", "y", "redo", "redo", "redo what was undone", "F7", "again", spare=True),
+        Command("r,f3", "r", "fit", "record", "fit the plant to a test record", "F3", FIT),
+        Command(
+            "o,f8", "o", "propose", "proposals", "best settings and published rules", "F8", TUNE
+        ),
+        Command(
+            "t,f10", "t", "map", "tolerance", "how much plant error the loop survives", "F10", MAP
+        ),
+        Command("c", "c", "copy", "copy", "copy the settings: clipboard and a file", called=COPY),
+        Command("w", "w", "sheet", "sheet", "write the retune sheet", called=SHEET, spare=True),
+        Command(
+            "s,f2", "s", "save", "save", "save with a reason", "F2", "write store keep file disk"
+        ),
+        Command("z,f9", "z", "zoom", "zoom", "the focused panel alone, and back", "F9", ZOOM, True),
+        Command(
+            "q,ctrl+c", "q", "leave", "leave", "leave; asks about unsaved work", "ctrl+c", QUIT
+        ),
         HELP,
         *(
             Command(kind.number, kind.number, "", f"panel('{kind.number}')", f"panel {kind.title}")
@@ -496,6 +545,34 @@ class MainPage(Page):
             return
         self.program.show_tolerance(self.work)
 
+    def action_copy(self) -> None:
+        """The settings to the clipboard and to a file."""
+        try:
+            self.tell(copy_settings(self.app, self.work.case, self.work.path))
+        except InputError as fault:
+            self.tell(str(fault), "worse")
+
+    def action_sheet(self) -> None:
+        """Write the retune sheet beside the case, in a thread."""
+        case, path = self.work.case, self.work.path
+        unsaved = "; these settings are not saved yet" if self.work.unsaved else ""
+        self.tell("writing the sheet ...", "quiet")
+
+        def write() -> None:
+            try:
+                place = write_sheet(case, path)
+            except (WorkbenchError, OSError) as fault:
+                self.post_message(SheetWritten(f"no sheet: {fault}", "worse"))
+            else:
+                told = f"{harmless(place.name)} is written beside the case{unsaved}"
+                self.post_message(SheetWritten(told, "caution" if unsaved else "plain"))
+
+        self.run_worker(write, thread=True, group="sheet", exit_on_error=False)
+
+    def on_sheet_written(self, message: SheetWritten) -> None:
+        """Say where it is."""
+        self.tell(message.words, message.tone)
+
     def action_save(self) -> None:
         """Open the Save page."""
         self.program.show_save(self.work)
@@ -503,6 +580,33 @@ class MainPage(Page):
     def action_leave(self) -> None:
         """Leave the loop."""
         self.program.leave(self.work)
+
+    # -- finding -----------------------------------------------------------------------------------
+
+    def offers(self) -> Iterable[Offer]:
+        """The commands, and every setting that can be edited now."""
+        yield from super().offers()
+        for number in SETTINGS:
+            panel = self.panels[number]
+            assert isinstance(panel, FieldsPanel)
+            for key in panel.keys:
+                meaning = self.work.quantities[key].meaning
+                yield Offer(
+                    f"set {label_of(key)}: {meaning}",
+                    number,
+                    partial(self._edit_setting, number, key),
+                    f"{key.replace('_', ' ')} {panel.title} {SETTING_CALLED.get(key, '')}",
+                )
+
+    def _edit_setting(self, number: str, key: str) -> None:
+        """Go to a setting, and type another value for it."""
+        panel = self.panels[number]
+        if isinstance(panel, FieldsPanel) and key in panel.keys:
+            self.action_panel(number)
+            panel.cursor = panel.keys.index(key)
+            self.moved()
+            panel.redraw()
+            self.call_after_refresh(self.editor.open, panel)
 
     # -- editing -----------------------------------------------------------------------------------
 
@@ -567,6 +671,30 @@ def _pair_of(number: str) -> str:
     """The pair of panels to which one belongs."""
     return next(pair for pair in PAIRS if number in pair)
 
+
+SETTING_CALLED: Final = {
+    "plant.gain": "process static",
+    "plant.time_constant": "lag process",
+    "plant.dead_time": "deadtime delay transport lag",
+    "plant.shape": "model transfer function",
+    "plant.formula": "transfer function model",
+    "controller.gain": "proportional p kp kc tune",
+    "controller.proportional_band": "pb band p tune",
+    "controller.integral": "reset i ti tune",
+    "controller.derivative": "rate preact d td tune",
+    "controller.scan": "execution interval sample period cycle",
+    "controller.action": "direct reverse sign",
+    "controller.windup": "antireset saturation",
+    "controller.setpoint_weight": "two degrees beta",
+    "scenario.load_step": "upset disturbance",
+    "scenario.setpoint_step": "sp target",
+    "pv.low": "range span scale",
+    "pv.high": "range span scale",
+    "op.min": "limit clamp low",
+    "op.max": "limit clamp high",
+    "op.rate": "slew ramp limit",
+}
+"""What a setting is called elsewhere."""
 
 PANELS: Final[tuple[type[Panel], ...]] = (
     PlantPanel,

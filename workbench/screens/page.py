@@ -2,15 +2,17 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterable
+from collections.abc import Callable, Iterable
+from dataclasses import dataclass
 from typing import TYPE_CHECKING, ClassVar, cast
 
 from textual.app import ComposeResult
+from textual.binding import BindingType
 from textual.screen import Screen
 from textual.widget import Widget
 
 from workbench.screens.cells import Cells, Line
-from workbench.screens.keys import Command, KeyLine
+from workbench.screens.keys import FIND, Command, KeyLine, bindings
 from workbench.screens.panel import Listing, wrapped
 
 if TYPE_CHECKING:
@@ -38,7 +40,9 @@ class TextLine(Cells):
 
     def tell(self, words: str, tone: str) -> None:
         """Show a message, on more than one line where it is long."""
-        lines = wrapped(words, max(20, self.size.width - 1), tone, " ")
+        # A page that says something before it is laid out is as wide as the terminal.
+        width = self.size.width or self.app.size.width
+        lines = wrapped(words, max(20, width - 1), tone, " ")
         self.shown = lines[:MOST_LINES]
         self.styles.height = len(self.shown)
         self.redraw()
@@ -48,10 +52,29 @@ class TextLine(Cells):
         return self.shown
 
 
+@dataclass(frozen=True)
+class Offer:
+    """Something that can be done, as the finder lists it."""
+
+    words: str
+    """What it does."""
+    key: str
+    """The key that does it too."""
+    run: Callable[[], object]
+    called: str = ""
+    """Other words for it."""
+    place: str = ""
+    """The page that it is on, where that is another one."""
+
+
 class Page(Screen[None]):
     """A page of the program."""
 
     AUTO_FOCUS: ClassVar[str | None] = ""
+    BINDINGS: ClassVar[list[BindingType]] = bindings((FIND,))
+
+    called: ClassVar[str] = ""
+    """The name of the page in a sentence."""
 
     commands: ClassVar[tuple[Command, ...]] = ()
     key_lines: ClassVar[tuple[tuple[Command, ...], ...]] = ()
@@ -85,8 +108,12 @@ class Page(Screen[None]):
         yield self._head
         yield from self.body()
         yield self._message
-        yield KeyLine(self.commands)
+        yield KeyLine(self.key_line(self.commands))
         yield self._notice
+
+    def key_line(self, commands: Iterable[Command]) -> tuple[Command, ...]:
+        """What the key line shows: the finder is never missing."""
+        return (*commands, FIND)
 
     def on_mount(self) -> None:
         """Fill the head line."""
@@ -147,6 +174,25 @@ class Page(Screen[None]):
     def action_help(self) -> None:
         """Explain this page and its keys."""
         self.program.show_help(self)
+
+    def action_find(self) -> None:
+        """Find an action by plain words."""
+        self.program.show_finder(self)
+
+    def offers(self) -> Iterable[Offer]:
+        """What can be done on this page, for the finder."""
+        for command in self.commands:
+            if command.action and command.help:
+                yield self.offer(command)
+
+    def offer(self, command: Command) -> Offer:
+        """A command as something to be found."""
+        return Offer(
+            command.help,
+            command.shown,
+            lambda: self.call_after_refresh(self.run_action, command.action),
+            f"{command.words} {command.called}",
+        )
 
 
 MOVING: tuple[Command, ...] = (

@@ -112,10 +112,13 @@ class Panel(Listing):
 
 
 def wrapped(words: str, width: int, tone: str = "plain", indent: str = "") -> list[Line]:
-    """A paragraph as lines."""
+    """A paragraph as lines; a word longer than a line, like a path, goes on below itself."""
     lines: list[Line] = []
-    row = ""
-    for word in words.split():
+    row, room = "", max(1, width - len(indent))
+    pieces = (
+        word[start : start + room] for word in words.split() for start in range(0, len(word), room)
+    )
+    for word in pieces:
         if row and len(row) + 1 + len(word) > width - len(indent):
             lines.append(((indent + row, tone),))
             row = ""

@@ -17,9 +17,11 @@ from workbench.model.pid import Controller
 from workbench.screens.cells import Line
 from workbench.screens.entry import Entry
 from workbench.screens.keys import Command, bindings
+from workbench.screens.output import copy_settings
 from workbench.screens.page import HELP, MOVING, Page
 from workbench.screens.panel import Panel, remark, wrapped
 from workbench.screens.trade_off import TradeOffPicture
+from workbench.screens.waiting import Waiting
 from workbench.screens.wishes import Wishes, label_of
 from workbench.screens.work import Work
 from workbench.study import Proposal, TradeOff, Wish
@@ -163,6 +165,7 @@ def _with_unit(figure: Figure, unit: str) -> str:
 class ProposalsPage(Page):
     """Look at proposals, say what they should aim at, take one."""
 
+    called = "Proposals page"
     about = (
         "Every rule is worked out for this plant and judged on this loop, with its scan interval "
         "and filters. Taking one changes the controller's settings; u on the loop's page takes it "
@@ -174,7 +177,15 @@ class ProposalsPage(Page):
         ),
         Command("w", "w", "wishes", "wishes", "what proposals aim at, and their limits"),
         Command("t", "t", "trade-off", "trade_off", "what caution costs, as a picture"),
-        Command("escape,q", "Esc", "back", "back", "back to the list, or to the loop", "q"),
+        Command("c", "c", "copy", "copy", "copy the chosen settings: clipboard and a file"),
+        Command(
+            "escape,q",
+            "Esc",
+            "back",
+            "back",
+            "stop the work, or back to the list, or to the loop",
+            "q",
+        ),
         HELP,
         *MOVING,
     )
@@ -188,6 +199,8 @@ class ProposalsPage(Page):
         self.wishes = Wishes(work)
         self.entry = Entry(css_id="wish")
         self._ticket = 0
+        self._waiting = Waiting(self)
+        self._stopped = False
 
     def head(self) -> Line:
         """The loop, and the units of the figures."""
@@ -216,15 +229,16 @@ class ProposalsPage(Page):
         """Work everything out anew; what is being worked out is stopped, and dropped."""
         self.workers.cancel_node(self)
         self._ticket += 1
+        self._stopped = False
         ticket, case, wish = self._ticket, self.work.case, self.work.wish
-        self.tell("working out the rules ...")
+        self._waiting.begin("working out searches and rules")
         self.picture.found = None
         self.run_worker(lambda: self._propose(ticket, case, wish), thread=True, exit_on_error=False)
 
     def _propose(self, ticket: int, case: Case, wish: Wish) -> None:
         worker = get_current_worker()
         try:
-            rows = study.propose(case, wish, lambda: worker.is_cancelled)
+            rows = study.propose(case, wish, lambda: worker.is_cancelled, self._waiting.reach)
         except WorkbenchError as fault:
             self.post_message(Proposed(ticket, (), str(fault)))
         else:
@@ -234,9 +248,12 @@ class ProposalsPage(Page):
         """Show them."""
         if message.ticket != self._ticket:
             return
+        self._waiting.end()
         self.table.rows = self.picture.rows = message.rows
         if message.fault:
             self.tell(f"{message.fault}", "worse")
+        elif self._stopped:
+            self.tell("stopped: what is shown is the best found until then", "caution")
         elif not self.entry.display:
             # What is wrong with a wish being typed stays to be read.
             self.tell(f"{self._units()}", "quiet")
@@ -248,6 +265,7 @@ class ProposalsPage(Page):
 
     def _begin_trade_off(self) -> None:
         ticket, case, wish = self._ticket, self.work.case, self.work.wish
+        self._waiting.begin("working out the trade-off")
         self.run_worker(
             lambda: self._trade_off(ticket, case, wish), thread=True, exit_on_error=False
         )
@@ -265,8 +283,11 @@ class ProposalsPage(Page):
         """Draw it."""
         if message.ticket != self._ticket:
             return
+        self._waiting.end()
         if message.fault:
             self.tell(f"{message.fault}", "worse")
+        elif not self._stopped:
+            self.tell(f"{self._units()}", "quiet")
         self.picture.found = message.found
         self.picture.redraw()
 
@@ -282,6 +303,7 @@ class ProposalsPage(Page):
     def on_worker_state_changed(self, event: Worker.StateChanged) -> None:
         """A fault of the program itself must not take the work with it."""
         if event.state is WorkerState.ERROR:
+            self._waiting.end()
             fault = event.worker.error
             self.tell(f"could not be worked out ({type(fault).__name__}: {fault})", "worse")
 
@@ -312,9 +334,25 @@ class ProposalsPage(Page):
         (self.wishes if self.wishes.display else self.table).focus()
         self.moved()
 
+    def action_copy(self) -> None:
+        """The chosen settings to the clipboard and to a file; the case stays as it is."""
+        if self.table.chosen is None:
+            self.tell("nothing to copy yet")
+            return
+        try:
+            case = study.take(self.work.case, self.table.chosen)
+            self.tell(copy_settings(self.app, case, self.work.path))
+        except WorkbenchError as fault:
+            self.tell(f"{fault}", "worse")
+
     def action_back(self) -> None:
-        """From the wishes to the list, and from there to the loop."""
-        if self.wishes.display:
+        """Stop what is being worked out; from the wishes to the list, from there to the loop."""
+        if self._waiting.goes_on:
+            self._waiting.end()
+            self._stopped = True
+            self.tell("stopping ...")
+            self.workers.cancel_node(self)
+        elif self.wishes.display:
             self.action_wishes()
         else:
             super().action_back()
@@ -347,6 +385,7 @@ class ProposalsPage(Page):
             return
         chosen = self.table.chosen
         if chosen is None:
+            self.tell("nothing to take yet")
             return
         try:
             self.work.change(study.take(self.work.case, chosen))

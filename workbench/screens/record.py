@@ -24,6 +24,7 @@ from workbench.screens.page import HELP, MOVING, Page
 from workbench.screens.panel import Listing, Panel, remark
 from workbench.screens.trend import as_cells
 from workbench.screens.view import View
+from workbench.screens.waiting import Waiting
 from workbench.screens.work import Work
 
 if TYPE_CHECKING:
@@ -251,6 +252,7 @@ def _with_error(
 class RecordPage(Page):
     """Choose records, look at the fits, take one; or follow a test that is being made."""
 
+    called = "Record page"
     about = (
         "A test record is a CSV file with time, PV and OP (columns named time_s or timestamp, pv, "
         "op are found by themselves). The program fits plant shapes to it and draws the chosen fit "
@@ -272,9 +274,9 @@ class RecordPage(Page):
         Command("minus", "+-", "zoom", "zoom(2.0)", "show twice as long a stretch", "-"),
         Command("less_than_sign,left", "<", "", "pan(-0.25)", "show earlier rows", "Left"),
         Command("greater_than_sign,right", "<>", "pan", "pan(0.25)", "show later rows", "Right"),
-        Command("0", "0", "all", "whole", "show the whole record"),
+        Command("0", "0", "all", "whole", "show the whole record", spare=True),
         Command("u", "u", "use", "use(True)", "fit only what is shown"),
-        Command("x", "x", "leave out", "use(False)", "leave out what is shown, fit the rest"),
+        Command("x", "x", "omit", "use(False)", "leave out what is shown, fit the rest"),
         Command("r", "r", "reset", "reset", "fit all rows again"),
         Command("l", "l", "list", "list", "back to the list of records"),
         Command("escape,q", "Esc", "back", "back", "stop the fit, or back to the loop", "q"),
@@ -307,6 +309,7 @@ class RecordPage(Page):
         self._read: tuple[Record, ...] = ()
         self._question: RecordQuestion | None = None
         self._follows = False
+        self._waiting = Waiting(self)
 
     def head(self) -> Line:
         """The loop."""
@@ -326,7 +329,7 @@ class RecordPage(Page):
         for widget in (self.records, self.path_entry, self.picture, self.candidates):
             widget.display = widget in shown
         keys = self.query_one(KeyLine)
-        keys.commands = self.looking if self.candidates in shown else self.choosing
+        keys.commands = self.key_line(self.looking if self.candidates in shown else self.choosing)
         keys.redraw()
 
     # -- choosing ----------------------------------------------------------------------------------
@@ -401,7 +404,7 @@ class RecordPage(Page):
         self._stop()
         self._sources, self._follows, self._question = sources, False, None
         more = f" and {len(sources) - 1} more" if len(sources) > 1 else ""
-        self.tell(f"fitting {_named(sources[0])}{more} ... Esc stops", "plain")
+        self._waiting.begin(f"fitting {_named(sources[0])}{more}")
         ticket = self._ticket
         self._worker = self.run_worker(
             lambda: self._fit(ticket, sources), thread=True, group="fit", exit_on_error=False
@@ -410,7 +413,9 @@ class RecordPage(Page):
     def _fit(self, ticket: int, sources: tuple[study.Source, ...]) -> None:
         worker = get_current_worker()
         try:
-            fit, records = study.fit_sources(sources, should_stop=lambda: worker.is_cancelled)
+            fit, records = study.fit_sources(
+                sources, should_stop=lambda: worker.is_cancelled, tell=self._waiting.reach
+            )
         except WorkbenchError as fault:
             self.post_message(RecordFitted(ticket, None, fault))
         else:
@@ -448,6 +453,7 @@ class RecordPage(Page):
         fit, fault, live = message.fit, message.fault, message.live
         if live is None:
             self._worker = None
+            self._waiting.end()
         if isinstance(fault, RecordQuestion):
             self._ask(fault)
             return
@@ -500,6 +506,7 @@ class RecordPage(Page):
     def on_worker_state_changed(self, event: Worker.StateChanged) -> None:
         """A fault of the program itself must not take the work with it."""
         if event.state is WorkerState.ERROR:
+            self._waiting.end()
             fault = event.worker.error
             self.tell(f"could not be fitted ({type(fault).__name__}: {fault})", "worse")
 
@@ -557,6 +564,7 @@ class RecordPage(Page):
         if self._worker is not None:
             self._worker.cancel()
             self._worker = None
+        self._waiting.end()
         self._ticket += 1
 
     def action_back(self) -> None:

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import getpass
 from collections.abc import Iterable
+from dataclasses import replace
 from datetime import datetime
 
 from textual import on
@@ -19,7 +20,7 @@ from workbench.screens.cells import Line
 from workbench.screens.drafts import Draft
 from workbench.screens.entry import Entry
 from workbench.screens.figures import cautions
-from workbench.screens.keys import Command, bindings
+from workbench.screens.keys import FIND, Command, bindings
 from workbench.screens.page import MOVING, Page
 from workbench.screens.panel import Panel, remark, wrapped
 from workbench.screens.work import Work, Writer
@@ -82,7 +83,7 @@ class SavePage(Page):
         Command("tab", "Tab", "next line", "app.focus_next", "to the next line"),
         Command("shift+tab", "shift+Tab", "", "app.focus_previous", "to the line before"),
         Command("", "Up Down", "another kind", "", "on the line 'kind': another kind"),
-        Command("", "Esc", "back without saving", "", "back without saving"),
+        Command("", "Esc", "back", "", "back without saving"),
         Command("f1", "F1", "help", "help", "this help"),
     )
     BINDINGS = bindings(commands)
@@ -102,6 +103,10 @@ class SavePage(Page):
     def head(self) -> Line:
         """The file."""
         return ((" Save ", "title"), (f" {self.work.path}", "quiet"))
+
+    def key_line(self, commands: Iterable[Command]) -> tuple[Command, ...]:
+        """Letters and signs are text here: the finder has its other key."""
+        return (*commands, replace(FIND, shown=FIND.also))
 
     def body(self) -> Iterable[Widget]:
         """The lines to fill in, and what is saved."""

@@ -86,6 +86,7 @@ class MapPanel(Panel):
 class TolerancePage(Page):
     """Look at what the settings survive."""
 
+    called = "Tolerance page"
     about = (
         "A plant is never quite its model: the map shows how much error of its gain and of its "
         "dead time, or its lags, the present settings survive.",

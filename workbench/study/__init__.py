@@ -23,6 +23,7 @@ if TYPE_CHECKING:
         reductions,
     )
     from workbench.study.conversion import Conversion, convert
+    from workbench.study.demo import write_demo
     from workbench.study.evaluation import (
         HANDOVER,
         Evaluation,
@@ -164,6 +165,7 @@ __all__ = [
     "units_of",
     "with_family",
     "with_observation",
+    "write_demo",
 ]
 
 
@@ -194,9 +196,9 @@ def _rooms() -> Iterator[ModuleType]:
     from workbench.study import assessment, family, frequency, prediction
 
     yield from (assessment, family, frequency, prediction)
-    from workbench.study import conversion, keep, sheet
+    from workbench.study import conversion, demo, keep, sheet
 
-    yield from (conversion, keep, sheet)
+    yield from (conversion, demo, keep, sheet)
     from workbench.study import tolerances
 
     yield tolerances

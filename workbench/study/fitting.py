@@ -18,6 +18,11 @@ _GROWN: Final = 1.25
 """Growth of a followed record after which every shape is fitted again."""
 
 Stop = Callable[[], bool] | None
+Tell = Callable[[int, int], None]
+
+
+def _untold(done: int, total: int) -> None:
+    """Nobody asks how far the work is."""
 
 
 def read_records(paths: Sequence[str | Path], **reading: Unpack[Reading]) -> Record:
@@ -35,6 +40,7 @@ def fit_plants(
     noise_model: str = "auto",
     drift: bool = True,
     should_stop: Stop = None,
+    tell: Tell = _untold,
 ) -> Fit:
     """Plants fitted to a record, every shape where none is named.  Raises `CannotSolve`."""
     return fit(
@@ -43,6 +49,7 @@ def fit_plants(
         noise_model=noise_model,
         drift=drift,
         should_stop=should_stop,
+        tell=tell,
     )
 
 
@@ -71,14 +78,16 @@ class Source:
 
 
 def fit_sources(
-    sources: Sequence[Source], *, should_stop: Stop = None
+    sources: Sequence[Source], *, should_stop: Stop = None, tell: Tell = _untold
 ) -> tuple[Fit, tuple[Record, ...]]:
     """One fit over several records, each read in its own way, and these records.
+
+    `tell` is called with the number of shapes tried, and of all.
 
     Raises `RecordQuestion`, `RecordError` or `CannotSolve`.
     """
     records = tuple(read_record(source.path, **source.reading) for source in sources)
-    return fit_plants(join(records), should_stop=should_stop), records
+    return fit_plants(join(records), should_stop=should_stop, tell=tell), records
 
 
 def narrowed(

@@ -68,7 +68,10 @@ class Proposal:
 
 
 def propose(
-    case: Case, wish: Wish | None = None, should_stop: Callable[[], bool] | None = None
+    case: Case,
+    wish: Wish | None = None,
+    should_stop: Callable[[], bool] | None = None,
+    tell: Callable[[int, int], None] = lambda done, total: None,
 ) -> tuple[Proposal, ...]:
     """The present settings, the best by search and every rule's, usable and quickest first.
 
@@ -82,6 +85,8 @@ def propose(
         What to aim at; a method that is not known raises `InputError`.
     should_stop
         True ends a search with the best so far, and leaves what is then missing out.
+    tell
+        Called with the number of searches and rules worked out, and of all.
     """
     wish = wish or Wish()
     known = (*SEARCHES, *rules.RULES)
@@ -92,12 +97,13 @@ def propose(
     present = _present(case)
     methods = known if wish.method is None else tuple(m for m in known if m == wish.method)
     plant = _rule_plant(case, wish)
-    rows = [
-        _search(case, method, wish, should_stop)
-        if method in SEARCHES
-        else _proposal(case, method, wish, plant)
-        for method in methods
-    ]
+    rows = []
+    for number, method in enumerate(methods):
+        tell(number, len(methods))
+        if method in SEARCHES:
+            rows.append(_search(case, method, wish, should_stop))
+        else:
+            rows.append(_proposal(case, method, wish, plant))
     present, *rows = predicted(case, [present, *rows], wish, should_stop)
     rows.sort(key=lambda row: _rank(row, wish))
     return (present, *rows)

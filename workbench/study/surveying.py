@@ -2,13 +2,16 @@
 
 from __future__ import annotations
 
+import contextlib
 import multiprocessing
 import os
 import signal
+import sys
 from collections.abc import Callable, Sequence
-from concurrent.futures import ProcessPoolExecutor, as_completed
+from concurrent.futures import FIRST_COMPLETED, ProcessPoolExecutor, wait
 from dataclasses import dataclass
 from datetime import date, datetime
+from multiprocessing import resource_tracker
 from pathlib import Path
 from typing import Final
 
@@ -46,6 +49,7 @@ def survey(
     *,
     workers: int | None = None,
     tell: Callable[[int], None] = lambda done: None,
+    should_stop: Callable[[], bool] = lambda: False,
 ) -> tuple[Surveyed, ...]:
     """Every case, the worst first; a file that cannot be read is told and stops nothing.
 
@@ -60,11 +64,16 @@ def survey(
         files.
     tell
         Called now and then with the number of cases done.
+    should_stop
+        Asked now and then; true ends the survey with the cases that are done.
     """
     files = [str(path) for path in paths]
     if workers is None:
         workers = min(len(os.sched_getaffinity(0)), MOST_WORKERS, len(files) // FEW)
-    found = _alone(files, today, tell) if workers < 2 else _shared(files, today, workers, tell)
+    if workers < 2:
+        found = _alone(files, today, tell, should_stop)
+    else:
+        found = _shared(files, today, workers, tell, should_stop)
     return tuple(sorted(found, key=_rank))
 
 
@@ -73,16 +82,27 @@ def _rank(row: Surveyed) -> tuple[int, float, str]:
     return STATUSES.index(row.status), -(0.0 if peak is None else peak), row.path
 
 
-def _alone(files: Sequence[str], today: date, tell: Callable[[int], None]) -> list[Surveyed]:
-    found = []
+def _alone(
+    files: Sequence[str],
+    today: date,
+    tell: Callable[[int], None],
+    should_stop: Callable[[], bool],
+) -> list[Surveyed]:
+    found: list[Surveyed] = []
     for number, path in enumerate(files):
+        if should_stop():
+            break
         tell(number)
         found.append(surveyed(path, today))
     return found
 
 
 def _shared(
-    files: Sequence[str], today: date, workers: int, tell: Callable[[int], None]
+    files: Sequence[str],
+    today: date,
+    workers: int,
+    tell: Callable[[int], None],
+    should_stop: Callable[[], bool],
 ) -> list[Surveyed]:
     """The same on several processors, started afresh: a screen's threads would not survive a fork.
 
@@ -90,6 +110,9 @@ def _shared(
     """
     batches = [files[start : start + BATCH] for start in range(0, len(files), BATCH)]
     found: list[Surveyed] = []
+    with contextlib.redirect_stderr(sys.__stderr__):
+        # It hands on the number of standard error, and what a screen puts there has none.
+        resource_tracker.ensure_running()
     pool = ProcessPoolExecutor(
         workers,
         multiprocessing.get_context("spawn"),
@@ -97,8 +120,11 @@ def _shared(
         (signal.SIGINT, signal.SIG_IGN),
     )
     try:
-        for done in as_completed([pool.submit(_batch, batch, today) for batch in batches]):
-            found += done.result()
+        left = {pool.submit(_batch, batch, today) for batch in batches}
+        while left and not should_stop():
+            done, left = wait(left, LOOK_EVERY_S, FIRST_COMPLETED)
+            for batch in done:
+                found += batch.result()
             tell(len(found))
     finally:
         pool.shutdown(cancel_futures=True)
@@ -225,3 +251,6 @@ FEW: Final = 20
 
 BATCH: Final = 8
 """Cases that a process is given at once."""
+
+LOOK_EVERY_S: Final = 0.2
+"""How often it is asked whether to go on, while the processes are at work [s]."""
