@@ -255,11 +255,15 @@ def _end(node: ast.expr) -> Place:
 
 
 class _Timed:
-    """Keeps how long each test took; a test of its own making for pytest."""
+    """Keeps what each test runs, and for how long."""
 
-    def __init__(self) -> None:
+    def __init__(self, watch: coverage.Coverage) -> None:
+        self.watch = watch
         self.seconds: dict[str, float] = {}
         self.failed: list[str] = []
+
+    def pytest_runtest_logstart(self, nodeid: str) -> None:
+        self.watch.switch_context(nodeid)
 
     def pytest_runtest_logreport(self, report: pytest.TestReport) -> None:
         self.seconds[report.nodeid] = self.seconds.get(report.nodeid, 0.0) + report.duration
@@ -311,7 +315,11 @@ def _alone(work: Callable[[], int], limit: float, folder: Path) -> int | None:
     return None
 
 
-_PLAIN: Final = ("-x", "-q", "-n", "0", "-p", "no:cacheprovider", "--no-header", "--tb=line")
+_PLAIN: Final = (
+    *("-x", "-q", "-n", "0", "-p", "no:cacheprovider", "--no-header", "--tb=line"),
+    # They are loaded already, in the process from which each run is a fork.
+    *("-W", "ignore::pytest.PytestAssertRewriteWarning"),
+)
 
 
 @dataclass(frozen=True)
@@ -351,14 +359,19 @@ def learn(folder: Path) -> Reach:
     kept, database = folder / "seconds.json", folder / ".coverage"
 
     def work() -> int:
-        timed = _Timed()
-        options = ("--cov=workbench", "--cov-context=test", "--cov-report=")
-        status = pytest.main([*_PLAIN[1:], *options, *TESTS], plugins=[timed])
+        watch = coverage.Coverage(
+            str(database), config_file=False, source=[str(folder / "workbench")]
+        )
+        watch.start()
+        timed = _Timed(watch)
+        status = pytest.main([*_PLAIN[1:], *TESTS], plugins=[timed])
+        watch.stop()
+        watch.save()
         kept.write_text(json.dumps([timed.seconds, timed.failed]), "utf-8")
         return int(status)
 
     if _alone(work, 3600.0, folder) is None or not kept.exists():
-        raise SystemExit("the tests do not come to an end as they are")
+        raise SystemExit(f"the tests do not run as they are, see {folder / 'said'}")
     return reach(folder, kept, database)
 
 
@@ -371,7 +384,7 @@ def reach(folder: Path, kept: Path, database: Path) -> Reach:
     for name in data.measured_files():
         path = Path(name).relative_to(folder).as_posix()
         lines[path] = {
-            line: tuple({context.rpartition("|")[0] for context in contexts if context})
+            line: tuple(context for context in contexts if context)
             for line, contexts in data.contexts_by_lineno(name).items()
         }
     return Reach({k: v for k, v in seconds.items() if k not in failed}, lines)
@@ -421,6 +434,8 @@ def caught(folder: Path, reached: Reach, fault: Fault) -> str:
     finally:
         path.write_text(sound, "utf-8")
         os.utime(path, ns=(times.st_atime_ns, times.st_mtime_ns))
+    if status in (pytest.ExitCode.USAGE_ERROR, pytest.ExitCode.NO_TESTS_COLLECTED):
+        raise SystemExit(f"{fault.path}: its tests cannot be found any more")
     if status is None:
         return "took too long"
     return "" if status == 0 else "failed" if status == 1 else f"ended with {status}"
