@@ -371,7 +371,8 @@ def learn(folder: Path) -> Reach:
         return int(status)
 
     if _alone(work, 3600.0, folder) is None or not kept.exists():
-        raise SystemExit(f"the tests do not run as they are, see {folder / 'said'}")
+        said = (folder / "said").read_text("utf-8")[-2000:]
+        raise SystemExit(f"the tests do not run as they are:\n{said}")
     return reach(folder, kept, database)
 
 
