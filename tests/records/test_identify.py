@@ -24,6 +24,7 @@ from tests.records.making import (
 from workbench.errors import CannotSolve, InputError
 from workbench.model.plant import SHAPES
 from workbench.records.candidate import Candidate
+from workbench.records.certainty import student
 from workbench.records.identify import Fit, fit
 from workbench.records.record import Record, read_record
 from workbench.records.response import FITTED
@@ -140,6 +141,16 @@ def test_a_shape_that_is_hardly_better_is_not_chosen_over_a_plainer_one(
     result = fit(made, shapes=("second-order", rival), noise_model="correlated")
     assert [c.shape for c in result.candidates] == [rival, "second-order"]
     assert result.chosen == "second-order"
+
+
+@pytest.mark.parametrize(
+    ("freedom", "point", "within"),
+    # other route: quadrature of the density at 30 digits; what the expansion leaves out falls with
+    # the fifth power of the freedom
+    [(3, 3.182446, 4e-3), (5, 2.570582, 3e-4), (10, 2.2281389, 1e-5), (30, 2.04227246, 1e-7)],
+)
+def test_student_s_t(freedom: int, point: float, within: float) -> None:
+    assert student(freedom) == pytest.approx(point, abs=within)
 
 
 def test_intervals_hold_the_truth_as_often_as_they_say() -> None:
