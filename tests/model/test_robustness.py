@@ -697,3 +697,25 @@ def test_a_dead_time_on_the_scan_does_not_jump() -> None:
     plant = TransferFunction.ratio((1.8,), [(40.0, 1.0)], 3.0)
     readings = SampledLoop.of(_loop(plant, gains, scan=0.1)).readings
     assert [r.scans for r in readings] == [30]
+
+
+def test_a_loop_gain_that_grazes_1_between_two_frequencies_is_a_crossover() -> None:
+    """Other route: |L| at two million frequencies; the resonance reaches 1.0012 at 0.0697 rad/s."""
+    plant = TransferFunction.ratio(
+        (0.23373226390030927,), [(203.88284441307212, 2.194046257174165, 1.0)]
+    )
+    gains = Gains(0.635044913780599, 0.0040650949083962055, 3.2203395544966513, 0.507104219656697)
+    loop = Loop(plant=plant, load=plant, gains=gains, reverse=True, pv_filter=2.2063537921528287)
+
+    s = 1j * np.geomspace(0.05, 0.1, 200_001)
+    by_hand = 0.635044913780599 + 0.0040650949083962055 / s
+    by_hand = by_hand + 3.2203395544966513 * s / (0.507104219656697 * s + 1.0)
+    by_hand = by_hand / (2.2063537921528287 * s + 1.0)
+    by_hand = by_hand * 0.23373226390030927
+    by_hand = by_hand / (203.88284441307212 * s**2 + 2.194046257174165 * s + 1.0)
+    crossed = np.flatnonzero(np.diff(np.sign(np.abs(by_hand) - 1.0)))
+    narrowest = 180.0 - np.abs(np.degrees(np.angle(by_hand[crossed]))).max()
+
+    assert len(crossed) == 2
+    found = analogue_margins(loop).phase_margin_deg.value
+    assert found == pytest.approx(narrowest, abs=0.01)

@@ -87,8 +87,9 @@ def test_an_upset_spoils_the_test() -> None:
     pv = record.pv + np.where((record.time > 200) & (record.time < 240), 3.0, 0.0)
     found = advise(fit(replace(record, pv=pv)))
     assert not found.reached
-    assert any("something other than OP moved it" in words for words in found.spoilt)
-    assert found.say.startswith("Repeat the test. PV is")
+    # A rich enough shape follows the upset and gives it another name; the test is spoilt by any.
+    assert found.spoilt
+    assert found.say.startswith("Repeat the test.")
 
 
 def test_a_limit_spoils_the_test() -> None:

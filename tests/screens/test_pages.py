@@ -894,6 +894,9 @@ def test_help_explains_the_focused_panel_and_lists_every_key(work: Work) -> None
             page_of(pilot, HelpPage)
             shown = text_of(pilot)
             assert "Sensitivity Ms: the largest factor" in shown
+            # The list is longer than the screen: the rest of it is a page further.
+            await press(pilot, "end")
+            shown += text_of(pilot)
             for command in MainPage.commands:
                 if command.help:
                     assert command.help in shown

@@ -12,7 +12,8 @@ from workbench.case.case import Case, edit_all
 from workbench.case.files import parse_case, read_case
 from workbench.case.writing import format_case
 from workbench.errors import InputError
-from workbench.study import Columns, Observation, observe, with_observation
+from workbench.records.record import read_record
+from workbench.study import Observation, observe, with_observation
 
 CASES = Path(__file__).resolve().parents[2] / "cases"
 RUN = CASES / "FIC-204_run.csv"
@@ -27,7 +28,7 @@ def wash(**changes: str) -> Case:
 
 
 def told(**changes: str) -> Observation:
-    return observe(Columns(RUN), wash(**changes))
+    return observe(read_record(RUN), wash(**changes))
 
 
 def test_a_plant_as_it_was_fitted_does_what_was_predicted() -> None:
@@ -57,7 +58,7 @@ def test_a_dead_time_that_is_not_the_plants_is_named(tmp_path: Path) -> None:
     truth = make_runs.Truth(gain=1.6, integral_time=4.0, dead_time=1.9)
     (tmp_path / "late.csv").write_text(make_runs.run_record(truth))
     case = wash(controller__proportional_band="62.5", controller__integral="15 repeats/min")
-    found = observe(Columns(tmp_path / "late.csv"), case)
+    found = observe(read_record(tmp_path / "late.csv"), case)
 
     assert found.verdict == "different"
     assert found.explanations[0].what == "dead time"
@@ -65,9 +66,9 @@ def test_a_dead_time_that_is_not_the_plants_is_named(tmp_path: Path) -> None:
 
 def test_an_upset_that_was_not_known_is_named(tmp_path: Path) -> None:
     (tmp_path / "upset.csv").write_text(make_runs.run_record(make_runs.Truth(upset=(200.0, -9.0))))
-    found = observe(Columns(tmp_path / "upset.csv"), wash())
+    found = observe(read_record(tmp_path / "upset.csv"), wash())
     known = observe(
-        Columns(tmp_path / "upset.csv"),
+        read_record(tmp_path / "upset.csv"),
         wash(scenario__load_step="-9", scenario__load_at="200 s"),
     )
 
@@ -78,7 +79,7 @@ def test_an_upset_that_was_not_known_is_named(tmp_path: Path) -> None:
 
 
 def test_a_valve_that_sticks_is_named_by_its_swing() -> None:
-    found = observe(Columns(CASES / "FIC-204_swing.csv"), wash())
+    found = observe(read_record(CASES / "FIC-204_swing.csv"), wash())
 
     assert found.verdict == "different"
     assert any("best explained by the valve" in reason for reason in found.reasons)
@@ -92,11 +93,11 @@ def test_a_record_in_which_nothing_happened_cannot_tell(tmp_path: Path) -> None:
     manual = RUN.read_text().replace("AUTO", "MAN")
     (tmp_path / "manual.csv").write_text(manual)
 
-    still = observe(Columns(tmp_path / "still.csv"), wash())
+    still = observe(read_record(tmp_path / "still.csv"), wash())
     assert still.verdict == "cannot tell"
     assert "SP never moved" in still.reasons[0]
-    assert observe(Columns(tmp_path / "manual.csv"), wash()).verdict == "cannot tell"
-    assert observe(Columns(CASES / "FIC-204_bump.csv"), wash()).verdict == "cannot tell"
+    assert observe(read_record(tmp_path / "manual.csv"), wash()).verdict == "cannot tell"
+    assert observe(read_record(CASES / "FIC-204_bump.csv"), wash()).verdict == "cannot tell"
 
 
 def test_an_observed_entry_is_kept_and_read_again() -> None:

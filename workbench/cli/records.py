@@ -19,7 +19,6 @@ from workbench.units import harmless
 if TYPE_CHECKING:
     from workbench.case.case import Case
     from workbench.records.record import Reading
-    from workbench.study import Columns
 
 
 class _Asked(TypedDict):
@@ -107,6 +106,8 @@ def _reading(given: Given) -> Reading:
         "time": given.word("--time"),
         "pv": given.word("--pv"),
         "op": given.word("--op"),
+        "sp": given.word("--sp"),
+        "mode": given.word("--mode"),
         "quality": given.word("--quality"),
         "dates": given.choice("--dates", ("day-first", "month-first", "serial", "seconds")),
         "decimal": given.choice("--decimal", ("point", "comma")),
@@ -139,13 +140,14 @@ def plan(given: Given) -> Answer:
 def diagnose(given: Given) -> Answer:
     """Why does this loop swing."""
     from workbench import study
+    from workbench.records.record import read_record
 
     dead_time = given.seconds("--dead-time", or_zero=True)
     integral_time = given.seconds("--integral-time")
     case = _case_beside(given)
     with progress("diagnosing"):
         found = study.diagnose(
-            _columns(given),
+            read_record(given.file, **_reading(given)),
             case,
             dead_time=dead_time,
             integral_time=integral_time,
@@ -162,11 +164,12 @@ def diagnose(given: Given) -> Answer:
 def recognise(given: Given) -> Answer:
     """Is the controller what its sheet says."""
     from workbench import study
+    from workbench.records.record import read_record
 
     scan = given.seconds("--scan")
     case = _case_beside(given)
     with progress("replaying"):
-        check = study.recognise(_columns(given), case, scan=scan)
+        check = study.recognise(read_record(given.file, **_reading(given)), case, scan=scan)
     no = not check.found.candidates or check.as_in_case is False
     return Answer(
         report.recognise_text(check, width()),
@@ -180,6 +183,7 @@ def observe(given: Given) -> Answer:
     from workbench import study
     from workbench.case.case import edit_all
     from workbench.case.files import read_case, save_case
+    from workbench.records.record import read_record
 
     path, record = given.operands
     file = read_case(path)
@@ -188,7 +192,7 @@ def observe(given: Given) -> Answer:
     changes = given.settings() | given.changes()
     case = edit_all(case, changes) if changes else case
     with progress("playing"):
-        found = study.observe(_columns(given, record), case)
+        found = study.observe(read_record(record, **_reading(given)), case)
     saved = ""
     if "--save" in given:
         kept = study.with_observation(
@@ -214,19 +218,6 @@ def _user() -> str:
         return getpass.getuser()
     except (KeyError, OSError, ImportError):
         return ""
-
-
-def _columns(given: Given, path: str = "") -> Columns:
-    """The record of the command and how it is to be read."""
-    from workbench.study import Columns
-
-    names = ("time", "pv", "op", "sp", "mode")
-    return Columns(
-        path or given.file,
-        **{name: given.word(f"--{name}") for name in names},
-        start=given.word("--from"),
-        end=given.word("--to"),
-    )
 
 
 def _case_beside(given: Given) -> Case:

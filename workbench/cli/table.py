@@ -232,6 +232,8 @@ READING: Final[tuple[Option, ...]] = (
     Option("--time", "COLUMN", "column of time; DATE+TIME for two", "time_s or timestamp"),
     Option("--pv", "COLUMN", "column, or tag, of the process variable", "pv"),
     Option("--op", "COLUMN", "column, or tag, of the controller output", "op"),
+    Option("--sp", "COLUMN", "column, or tag, of the setpoint", "sp"),
+    Option("--mode", "COLUMN", "column, or tag, of the controller's mode", "mode"),
     Option("--quality", "COLUMN", "column of quality, or none", "quality or status"),
     Option(
         "--dates",
@@ -274,15 +276,7 @@ FIT: Final[tuple[Option, ...]] = (
     Option("--no-drift", "", "PV has no drift of its own in the record"),
     *FOLLOWING,
 )
-RECORD: Final[tuple[Option, ...]] = (
-    Option("--time", "COLUMN", "column of time", "time_s or timestamp"),
-    Option("--pv", "COLUMN", "column of the process variable", "pv"),
-    Option("--op", "COLUMN", "column of the controller output", "op"),
-    Option("--sp", "COLUMN", "column of the setpoint", "sp"),
-    Option("--mode", "COLUMN", "column of the controller's mode", "mode"),
-    Option("--from", "STAMP", "first row to use", "the first of the record"),
-    Option("--to", "STAMP", "last row to use", "the last of the record"),
-)
+RECORD: Final = tuple(option for option in READING if option.name != "--leave-out")
 """What is read of a record taken in normal running."""
 BESIDE: Final[tuple[Option, ...]] = (
     Option("--case", "CASE", "the case of this loop: its ranges, limits, plant and settings"),

@@ -28,6 +28,7 @@ from workbench.model.transfer import Complex, TransferFunction
 from workbench.units import Figure
 
 Floats = NDArray[np.float64]
+Indices = NDArray[np.intp]
 Response = Callable[[Floats], Complex]
 
 _NOT_STABLE: Final = "the loop is not stable"
@@ -113,7 +114,9 @@ def sampled_margins(loop: Loop, known: SampledLoop | None = None) -> Margins:
 
     def survived(frequency: float, delay: float) -> float:
         found = _held_delay(loop, frequency, delay)
-        return _soonest(loop, found) if _is_coarse(loop) else found
+        if found is not None and not _is_coarse(loop):
+            return found
+        return _soonest(loop, delay, found)
 
     # A loop that is not had from a state space takes its further dead time as a delay of L.
     exact = survived if known is None else None
@@ -127,11 +130,12 @@ def _is_coarse(loop: Loop) -> bool:
     return loop.scan > 0.5 * max(lags, default=0.0)
 
 
-def _soonest(loop: Loop, delay: float) -> float:
-    """The least dead time up to `delay` [s] with which the loop is not stable any more.
+def _soonest(loop: Loop, delay: float, known: float | None) -> float:
+    """The least dead time [s] with which the loop is not stable any more.
 
-    What the root at the crossover does is known up to `delay`; before it another root may leave,
-    because with each part of a scan the held plant is another one.
+    With `known` the root at the crossover leaves; before it another root may, because with each
+    part of a scan the held plant is another one.  Without it the root is looked for beyond `delay`,
+    where a delay of L alone would have it, and taken to be there if it is not found.
     """
 
     def stable(further: float) -> bool:
@@ -140,18 +144,19 @@ def _soonest(loop: Loop, delay: float) -> float:
         return sampled.verdict().stable
 
     assert loop.scan is not None
-    count = max(_LOOKS, math.ceil(_LOOKS * min(delay / loop.scan, _MOST_SCANS)))
+    until = known if known is not None else delay + 2.0 * loop.scan
+    count = max(_LOOKS, math.ceil(_LOOKS * min(until / loop.scan, _MOST_SCANS)))
     before = 0.0
-    for further in np.linspace(0.0, delay, count, endpoint=False)[1:].tolist():
-        if stable(further):
-            before = further
+    for part in range(1, count):
+        after = until * part / count
+        if stable(after):
+            before = after
             continue
-        after = further
         for _ in range(_HALVINGS):
             middle = 0.5 * (before + after)
             before, after = (middle, after) if stable(middle) else (before, middle)
         return after
-    return delay
+    return delay if known is None else known
 
 
 _LOOKS: Final = 12
@@ -160,8 +165,8 @@ _MOST_SCANS: Final = 5
 _HALVINGS: Final = 34
 
 
-def _held_delay(loop: Loop, frequency: float, delay: float) -> float:
-    """The dead time [s] that makes L = -1, from where a delay of L alone would.
+def _held_delay(loop: Loop, frequency: float, delay: float) -> float | None:
+    """The dead time [s] that makes L = -1, from where a delay of L alone would; `None` if lost.
 
     A dead time of a part of a scan changes the held plant otherwise than exp(-d s) would.  So L is
     worked out anew with it, until frequency and dead time no longer change: Newton's steps for
@@ -179,13 +184,13 @@ def _held_delay(loop: Loop, frequency: float, delay: float) -> float:
         change = -short.real / slope.real if slope.real else math.inf
         more = (short.imag + slope.imag * change) / frequency
         if not math.isfinite(change + more) or not 0.0 < frequency + change <= limit:
-            return first
+            return None
         frequency, delay = frequency + change, delay + more
         if delay < 0.0 or abs(delay - first) > sampled.scan:
-            return first
+            return None
         if abs(more) <= 1e-9 * delay and abs(change) <= 1e-7 * frequency:
             return delay
-    return first
+    return None
 
 
 def ultimate(plant: TransferFunction) -> tuple[float, float]:
@@ -330,20 +335,52 @@ def crossings(f: Callable[[Floats], Floats], low: Floats, high: Floats) -> Float
 def _peak(f: Callable[[Floats], Floats], grid: Floats, values: Floats) -> float:
     """Largest value of f on the grid, each promising hill climbed between its neighbours."""
     best = float(values.max())
-    inside = np.flatnonzero((values[1:-1] >= values[:-2]) & (values[1:-1] >= values[2:])) + 1
-    inside = inside[values[inside] > 0.8 * best]
-    if not len(inside):
-        return best
-    low, high = grid[inside - 1], grid[inside + 1]
+    inside = _hills(values)
+    _, heights = _tips(f, grid, inside[values[inside] > 0.8 * best])
+    return max(best, float(heights.max(initial=-math.inf)))
+
+
+def _hills(values: Floats) -> Indices:
+    """Where a value is not below its neighbours; the ends are not looked at."""
+    return np.flatnonzero((values[1:-1] >= values[:-2]) & (values[1:-1] >= values[2:])) + 1
+
+
+def _tips(f: Callable[[Floats], Floats], grid: Floats, hills: Indices) -> tuple[Floats, Floats]:
+    """The highest point of f between the neighbours of each hill of a grid, and its height."""
+    at, best = grid[hills], np.full(len(hills), -math.inf)
+    if not len(hills):
+        return at, best
+    low, high = grid[hills - 1], grid[hills + 1]
+    columns = np.arange(len(hills))
     for _ in range(7):
         points = np.linspace(low, high, 13)
         heights = f(points.ravel()).reshape(points.shape)
         top = heights.argmax(axis=0)
-        best = max(best, float(heights.max()))
-        columns = np.arange(points.shape[1])
+        higher = heights[top, columns] > best
+        at = np.where(higher, points[top, columns], at)
+        best = np.maximum(best, heights[top, columns])
         low = points[np.maximum(top - 1, 0), columns]
         high = points[np.minimum(top + 1, 12), columns]
-    return best
+    return at, best
+
+
+def _grazed(f: Callable[[Floats], Floats], grid: Floats, values: Floats) -> tuple[Floats, Floats]:
+    """A grid and f on it with the tips that reach over 0 between two of its points."""
+    grid, values = _topped(f, grid, values)
+    grid, values = _topped(lambda w: -f(w), grid, -values)
+    return grid, -values
+
+
+def _topped(f: Callable[[Floats], Floats], grid: Floats, values: Floats) -> tuple[Floats, Floats]:
+    hills = _hills(values)
+    at, height = _tips(f, grid, hills[(values[hills] < 0.0) & (values[hills] > -_NEAR_ONE)])
+    over = height > 0.0
+    where = np.searchsorted(grid, at[over])
+    return np.insert(grid, where, at[over]), np.insert(values, where, height[over])
+
+
+_NEAR_ONE: Final = 0.1
+"""How near to 1 the loop gain comes between two frequencies, as a logarithm, to be looked at."""
 
 
 def _margins(
@@ -472,7 +509,7 @@ def _phase_margins(
     def log_size(response: Complex) -> Floats:
         return np.log(np.maximum(np.abs(response), 1e-300))
 
-    size = log_size(values)
+    grid, size = _grazed(lambda w: log_size(response(w)), grid, log_size(values))
     cut = size[:-1] * size[1:] <= 0.0
     at = crossings(lambda w: log_size(response(w)), grid[:-1][cut], grid[1:][cut])
     if not len(at):

@@ -614,8 +614,11 @@ class _Block:
             low = near.real**2 + near.imag**2
             at = low.argmin(axis=1)
             found = low[np.arange(len(at)), at]
-            # The bottom is reached where the points beside it are hardly higher.
-            beside = low[np.arange(len(at)), np.clip(at + np.where(at, -1, 1), 0, _CLOSER - 1)]
+            # The bottom is reached where the points to both sides of it are hardly higher.
+            row = np.arange(len(at))
+            beside = np.maximum(
+                low[row, np.maximum(at - 1, 0)], low[row, np.minimum(at + 1, _CLOSER - 1)]
+            )
             np.minimum.at(least, where.loops, found)
             promising = (found <= _HILL * least[where.loops]) & (beside > found * (1.0 + 1e-4))
             where = where.about(w, at).chosen(promising)

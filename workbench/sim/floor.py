@@ -140,6 +140,8 @@ def _not_known(loop: Loop, events: Events, instruments: Instruments | None) -> s
         return "the scenario has no load step"
     if isinstance(loop, Structure) and loop.inner is not None:
         return "it is only known without an inner loop"
+    if loop.plant.has_delayed_feedback or loop.load.has_delayed_feedback:
+        return "it is only known without a dead time inside a feedback of the plant"
     if not events.are_steps:
         return "it is only known for a load step, in automatic, on one plant"
     if events.setpoint_step and events.setpoint_at >= events.load_at:

@@ -61,7 +61,7 @@ from workbench.study.prediction import (
     response_horizon,
 )
 from workbench.study.proposals import LIMITS, Proposal, propose, take
-from workbench.study.records import Columns, SheetCheck, diagnose, plan_test, recognise
+from workbench.study.records import SheetCheck, diagnose, plan_test, recognise
 from workbench.study.sheet import Retune, Stage, retune
 from workbench.study.survey import Surveyed, survey
 from workbench.study.tolerance import LIMIT as TOLERANCE_LIMIT
@@ -79,7 +79,6 @@ __all__ = [
     "Assessment",
     "Axis",
     "Bump",
-    "Columns",
     "Conversion",
     "Distance",
     "Evaluation",

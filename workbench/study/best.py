@@ -14,8 +14,9 @@ from workbench.model.structures import Structure
 from workbench.model.sweep import Limits
 from workbench.study.family import members
 from workbench.study.loop import loop_of
+from workbench.study.operating import about_rest
 from workbench.study.prediction import steps_of
-from workbench.study.structure import has_one_scan
+from workbench.study.structure import has_one_scan, margins_as_sampled
 from workbench.study.wish import Wish
 from workbench.tune import optimise
 from workbench.tune.bench import Aim
@@ -65,14 +66,41 @@ def searched(
         A dead time inside an inner feedback.
     """
     task = _Task.of(case, wish)
-    found = optimise.best(
-        task.loops,
-        task.law,
-        task.aim,
-        derivative=SEARCHES[method].derivative,
-        should_stop=should_stop,
-    )
+
+    def search(task: _Task) -> optimise.Best:
+        return optimise.best(
+            task.loops,
+            task.law,
+            task.aim,
+            derivative=SEARCHES[method].derivative,
+            should_stop=should_stop,
+        )
+
+    found = search(task)
+    for _ in range(_MOST_ROUNDS):
+        # A cascade with two scans is searched with analogue controllers and judged as sampled: the
+        # limit for the search is moved until the limit asked for is just kept.
+        judged = _as_judged(case, task.settings(found))
+        if judged is None or abs(judged - wish.max_sensitivity) <= _KEPT:
+            break
+        limit = task.aim.limits.max_sensitivity
+        limit = 1.0 + (limit - 1.0) * (wish.max_sensitivity - 1.0) / (judged - 1.0)
+        task = task.within(limit)
+        found = search(task)
     return task.settings(found), found.finished
+
+
+_MOST_ROUNDS: Final = 6
+_KEPT: Final = 3e-4
+
+
+def _as_judged(case: Case, settings: Controller) -> float | None:
+    """Ms of a cascade as sampled; `None` for what is searched as it is judged."""
+    loop = about_rest(loop_of(replace(case, controller=settings)))
+    if loop.scan is None or not isinstance(loop, Structure) or loop.inner is None:
+        return None
+    margins = margins_as_sampled(loop)[0]
+    return None if margins is None else margins.max_sensitivity.value
 
 
 def best_by_limit(
@@ -125,6 +153,11 @@ class _Task:
             travel = case.op.range.percent(wish.max_load_travel)
         aim = Aim(limits, travel, wish.share, load_step, setpoint_step)
         return cls(loops, like, searched_form(case), aim)
+
+    def within(self, max_sensitivity: float) -> _Task:
+        """The same with another limit on Ms."""
+        limits = replace(self.aim.limits, max_sensitivity=max_sensitivity)
+        return replace(self, aim=replace(self.aim, limits=limits))
 
     def law(self, gain: float, integral_time: float | None, derivative_time: float) -> Gains:
         """Canonical gains for the settings of the form."""

@@ -29,7 +29,7 @@ from workbench.sim.loop import simulate
 from workbench.sim.scenario import Events
 from workbench.sim.valve import Valve
 from workbench.study.loop import instruments_of, load_scale, loop_of
-from workbench.study.records import Columns, known_of
+from workbench.study.records import known_of
 from workbench.units import Amount, Figure, rounded, text, time_text
 
 Floats = NDArray[np.float64]
@@ -91,13 +91,13 @@ class Observation:
     op: tuple[Floats, Floats]
 
 
-def observe(source: Columns, case: Case) -> Observation:
+def observe(record: Record, case: Case) -> Observation:
     """Whether a record of the loop shows what the case predicts.
 
     The case's load step, where it has one, is taken for a known upset, `scenario.load_at` after the
     first row.  Raises `RecordError`, and `InputError` where plant or controller is missing.
     """
-    record, loop = source.read(), loop_of(case)
+    loop = loop_of(case)
     stretch, reason = _stretch(record, case)
     if stretch is None:
         return _cannot_tell(reason)

@@ -8,7 +8,6 @@ from __future__ import annotations
 
 import math
 from dataclasses import dataclass
-from pathlib import Path
 
 from workbench.case.case import Case
 from workbench.errors import NotApplicable, WorkbenchError, problem
@@ -16,7 +15,7 @@ from workbench.model.pid import Controller, settings_like
 from workbench.model.robustness import ultimate
 from workbench.records.diagnose import Diagnosis, Known
 from workbench.records.diagnose import diagnose as diagnose_record
-from workbench.records.record import Record, read_record
+from workbench.records.record import Record
 from workbench.records.replay import (
     Difference,
     Ranges,
@@ -30,33 +29,6 @@ from workbench.records.testplan import Plan
 from workbench.records.testplan import plan_test as plan_for
 from workbench.study.assessment import assess
 from workbench.study.loop import action_of, plant_of
-
-
-@dataclass(frozen=True)
-class Columns:
-    """Which record, which of its columns and which part of it."""
-
-    path: str | Path
-    time: str | None = None
-    pv: str | None = None
-    op: str | None = None
-    sp: str | None = None
-    mode: str | None = None
-    start: str | None = None
-    end: str | None = None
-
-    def read(self) -> Record:
-        """The record.  Raises `RecordError`."""
-        return read_record(
-            self.path,
-            time=self.time,
-            pv=self.pv,
-            op=self.op,
-            sp=self.sp,
-            mode=self.mode,
-            start=self.start,
-            end=self.end,
-        )
 
 
 def plan_test(
@@ -95,7 +67,7 @@ def plan_test(
 
 
 def diagnose(
-    source: Columns,
+    record: Record,
     case: Case,
     *,
     dead_time: float | None = None,
@@ -106,9 +78,8 @@ def diagnose(
     """Why the loop of a record swings, with what the case knows of the loop.
 
     Times in s stand in for those of the case; `knows_range` says that the case's PV range is the
-    loop's own and not a default.  Raises `RecordError`.
+    loop's own and not a default.
     """
-    record = source.read()
     known = known_of(
         case,
         dead_time=dead_time,
@@ -186,12 +157,12 @@ class SheetCheck:
     """What ran, in the form and the units of the sheet, where that form can hold it."""
 
 
-def recognise(source: Columns, case: Case, *, scan: float | None = None) -> SheetCheck:
+def recognise(record: Record, case: Case, *, scan: float | None = None) -> SheetCheck:
     """Which controller ran in a record, and whether it is the case's.
 
     Raises `RecordError`.
     """
-    record, pv, op = source.read(), case.pv, case.op
+    pv, op = case.pv, case.op
     sheet = case.controller
     found = recognise_in(
         record,
