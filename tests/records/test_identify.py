@@ -313,7 +313,7 @@ def test_a_controller_in_automatic_is_cautioned_against_and_refused_when_sp_stoo
     answer, _ = MADE["first-order"]
     time = stamps(400, 4.0)
     resting = bump(time, answer, 25.0, noise=0.2, mode="AUTO", sp=np.full(400, 50.0))
-    assert "SP never moved" in fit(resting).reason
+    assert "the controller was in automatic and SP never moved" in fit(resting).reason
     moved = bump(time, answer, 25.0, noise=0.2, mode="Auto", sp=np.where(time > 99, 55.0, 50.0))
     result = fit(moved)
     assert result.chosen == "first-order"
