@@ -15,9 +15,9 @@ What is planted, a fifth of the faults each:
 - dropped term: the second summand of two.
 
 What is not: text, messages, annotations, decorators, default arguments and declarations of
-quantities (`quantity`); and what steers effort and tolerance alone: numbers that a module keeps
-under a name in capitals (tables are not left out), grids and counts (`linspace`, `range` ...),
-arguments named in `EFFORT`, numbers below 1e-4 or above 1e4.  A fault there changes how long the
+quantities (`quantity`); and what steers effort and tolerance alone: numbers and rows of numbers
+that a module keeps under a name in capitals (tables are not left out), grids and counts
+(`linspace`, `range` ...), arguments named in `EFFORT`, numbers below 1e-4 or above 1e4.  A fault there changes how long the
 work takes or the last digits of it, and no test should notice.  A line that no test runs is planted
 like any other.
 """
@@ -66,6 +66,8 @@ EFFORT: Final = (
     "gtol",
     "maxiter",
 )
+SHOWN: Final = ("text", "time_text", "harmless", "quoted")
+"""Make text: how many digits or characters of it are shown is not planted, what is shown is."""
 LOADED: Final = ("numpy", "scipy.linalg", "scipy.optimize", "hypothesis", "mpmath", "sympy")
 """Packages of others that the tests need: loaded once, each run is a fork that has them already."""
 LONGEST: Final = 90.0
@@ -163,6 +165,8 @@ def _left_out(child: ast.AST, parent: ast.AST) -> bool:
         return True
     if isinstance(child, ast.keyword) and child.arg in (*EFFORT, "axis"):
         return True
+    if isinstance(child, ast.Constant) and isinstance(parent, ast.Call):
+        return _called(parent) in SHOWN
     if isinstance(parent, ast.AnnAssign) and child is parent.annotation:
         return True
     if isinstance(parent, ast.FunctionDef) and (
@@ -171,8 +175,11 @@ def _left_out(child: ast.AST, parent: ast.AST) -> bool:
         return True
     if isinstance(parent, ast.Module) and isinstance(child, ast.Assign | ast.AnnAssign):
         target = child.targets[0] if isinstance(child, ast.Assign) else child.target
-        number = isinstance(child.value, ast.Constant | ast.UnaryOp | ast.BinOp)
-        return isinstance(target, ast.Name) and target.id.isupper() and number
+        value = child.value
+        # A row of numbers tells where to look; a table by name is what a rule or a shape is made of.
+        parts = value.elts if isinstance(value, ast.Tuple) else [value]
+        numbers = all(isinstance(p, ast.Constant | ast.UnaryOp | ast.BinOp) for p in parts)
+        return isinstance(target, ast.Name) and target.id.isupper() and numbers
     return False
 
 

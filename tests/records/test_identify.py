@@ -3,11 +3,13 @@
 from __future__ import annotations
 
 import time as clock
+from dataclasses import replace
 from pathlib import Path
 
 import numpy as np
 import pytest
 
+from tests.records.campaigns import MADE as CASES
 from tests.records.making import (
     Answer,
     Array,
@@ -151,6 +153,17 @@ def test_a_shape_that_is_hardly_better_is_not_chosen_over_a_plainer_one(
 )
 def test_student_s_t(freedom: int, point: float, within: float) -> None:
     assert student(freedom) == pytest.approx(point, abs=within)
+
+
+def test_standard_errors_of_few_rows_count_what_was_fitted() -> None:
+    """Other route: the Cramer-Rao bound by plain differences, with the noise that the residual
+    shows: its sum of squares over rows less gain, time, dead time, level and drift."""
+    made = replace(CASES[0], rows=40, interval=28.0, noise=0.002)
+    record = made.record(3, 0.0)
+    found = best_of(fit(record, shapes=("first-order",), noise_model="white"))
+    noise = np.sqrt(((record.pv - found.fitted_pv) ** 2).sum() / (40 - 5))
+    errors = [float(np.ravel(found.standard_errors[key])[0]) for key in made.truth]
+    assert errors == pytest.approx((made.bound(record) * noise / made.noise).tolist(), rel=0.02)
 
 
 def test_intervals_hold_the_truth_as_often_as_they_say() -> None:

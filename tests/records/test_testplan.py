@@ -58,6 +58,12 @@ def test_errors_agree_with_derivatives_by_hand() -> None:
     assert (found.size, found.dead_time_s) == pytest.approx(tuple(exact[:2]), rel=1e-6)
 
 
+def test_a_path_ends_as_long_after_its_last_move_as_the_first_move_comes() -> None:
+    model = half_rule(lag())
+    levels = [(0.0, 0.0), (200.0, 5.0), (400.0, 0.0)]
+    assert errors_of(model, levels, 1.0, 0.3) == errors_of(model, levels, 1.0, 0.3, until=600.0)
+
+
 def test_the_path_stays_within_what_is_allowed_and_returns() -> None:
     plan = plan_test(lag(), noise=0.15, max_pv_change=3.0)
 
