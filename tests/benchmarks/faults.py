@@ -17,9 +17,9 @@ What is planted, a fifth of the faults each:
 What is not: text, messages, annotations, decorators, default arguments and declarations of
 quantities (`quantity`); and what steers effort and tolerance alone: numbers and rows of numbers
 that a module keeps under a name in capitals (tables are not left out), grids and counts
-(`linspace`, `range` ...), arguments named in `EFFORT`, numbers below 1e-4 or above 1e4.  A fault there changes how long the
-work takes or the last digits of it, and no test should notice.  A line that no test runs is planted
-like any other.
+(`linspace`, `range` ...), arguments named in `EFFORT`, numbers below 1e-4 or above 1e4.  A fault
+there changes how long the work takes or the last digits of it, and no test should notice.  A line
+that no test runs is planted like any other.
 """
 
 from __future__ import annotations
@@ -176,7 +176,7 @@ def _left_out(child: ast.AST, parent: ast.AST) -> bool:
     if isinstance(parent, ast.Module) and isinstance(child, ast.Assign | ast.AnnAssign):
         target = child.targets[0] if isinstance(child, ast.Assign) else child.target
         value = child.value
-        # A row of numbers tells where to look; a table by name is what a rule or a shape is made of.
+        # A row of numbers tells where to look; a table by name is what a rule is made of.
         parts = value.elts if isinstance(value, ast.Tuple) else [value]
         numbers = all(isinstance(p, ast.Constant | ast.UnaryOp | ast.BinOp) for p in parts)
         return isinstance(target, ast.Name) and target.id.isupper() and numbers
