@@ -107,8 +107,9 @@ def test_a_gain_that_differs_up_and_down_is_said() -> None:
     assert "for moves up and" in words(result)
 
 
-def test_a_gain_that_changes_with_the_operating_point_is_said() -> None:
-    op = levels(5, 5, 5, -5, -5, -5)
+@pytest.mark.parametrize("steps", [(5, 5, 5, -5, -5, -5), (5, 5, 5)])
+def test_a_gain_that_changes_with_the_operating_point_is_said(steps: tuple[float, ...]) -> None:
+    op = levels(*steps)
     bent = op + 0.03 * (op - 40.0) ** 2
     result = fit(record(op, noisy(through(bent, 1.0, 20.0, 6))), shapes=FIRST)
     assert "The gain goes from" in words(result)
@@ -222,6 +223,9 @@ def test_the_family_of_a_richer_shape_spreads_as_its_intervals_say(shape: str) -
         drawn = np.array([getattr(value, "seconds", value) for value in held])
         low, high = np.ravel(np.array(best.interval_95[key]))
         inside = np.mean((drawn >= low) & (drawn <= high))
+        # exact where a value enters nearly linearly: t standard errors to each side
+        error = float(np.ravel(best.standard_errors[key])[0])
+        assert 0.5 * (high - low) == pytest.approx(1.97 * error, rel=0.05), key
         # three standard deviations of a share of 0.95 among 400
         assert inside == pytest.approx(0.95, abs=0.033), key
 
