@@ -1,5 +1,6 @@
-"""Makes the three shipped loops of the invented Port Ellery alginate works, records included.
+"""Makes the nine shipped loops of the invented Port Ellery alginate works, records included.
 
+The three plain loops are here, the others in `port_ellery`, what runs in automatic in `make_runs`.
 Run `python -m tests.make_cases` from the repository to write `cases/` again.  The random numbers
 come from the one generator whose stream Python promises never to change, and every value is
 rounded far above the last digit, so that the files come out byte for byte the same everywhere.
@@ -9,14 +10,11 @@ from __future__ import annotations
 
 import hashlib
 import math
-import random
-from collections.abc import Callable
-from dataclasses import dataclass
 from datetime import datetime, timedelta
 from pathlib import Path
-from statistics import NormalDist
 
-from tests import make_runs
+from tests import make_runs, port_ellery
+from tests.made_bumps import Loop
 
 FOLDER = Path(__file__).parent.parent / "cases"
 
@@ -24,48 +22,6 @@ INVENTED = (
     "# Invented data.  Port Ellery alginate works is a made-up site: its loops, records and\n"
     "# people do not exist.  {what}\n"
 )
-
-
-@dataclass(frozen=True)
-class Loop:
-    """The truth behind an invented record: a plant, its bump test, and what disturbs it."""
-
-    answer: Callable[[float], float]
-    """PV change for a lasting unit change of OP, by the time since the dead time passed [s]."""
-    dead_time: float
-    """[s]"""
-    rest: tuple[float, float]
-    """PV and OP before the first move."""
-    moves: tuple[tuple[float, float], ...]
-    """(time [s], change of OP)."""
-    interval: float
-    rows: int
-    noise: float
-    """Standard deviation of the noise."""
-    memory: float = 0.0
-    """Time over which the noise forgets itself [s]; 0 for white noise."""
-    drift: float = 0.0
-    """[PV units per s]"""
-    seed: int = 0
-
-    def table(self) -> list[tuple[float, float, float]]:
-        """(time [s], PV, OP) of every row, in closed form: each move adds its own answer."""
-        draw, normal = random.Random(self.seed), NormalDist()
-        keep = math.exp(-self.interval / self.memory) if self.memory else 0.0
-        noise, found = 0.0, []
-        for row in range(self.rows):
-            time = row * self.interval
-            fresh = normal.inv_cdf(draw.random()) * self.noise
-            noise = keep * noise + math.sqrt(1 - keep * keep) * fresh if row else fresh
-            pv, op = self.rest
-            op += sum(change for at, change in self.moves if time >= at)
-            pv += self.drift * time + noise
-            for at, change in self.moves:
-                since = time - at - self.dead_time
-                pv += change * self.answer(since) if since > 0 else 0.0
-            found.append((time, pv, op))
-        return found
-
 
 DRYER = Loop(
     answer=lambda t: 1.8 * -math.expm1(-t / 155.0),
@@ -346,6 +302,8 @@ def files() -> dict[str, bytes]:
         "FIC-204_bump.csv": wash_record(),
         "FIC-204_run.csv": make_runs.run_record(),
         "FIC-204_swing.csv": make_runs.swing_record(),
+        **{f"{tag}_bump.csv": record() for tag, record in port_ellery.RECORDS.items()},
+        "AIC-630_feed.csv": port_ellery.feed_record(),
     }
     sha256 = {name: hashlib.sha256(text.encode()).hexdigest() for name, text in records.items()}
     tank = TANK_CASE.format(slope=-0.0007, dead_time=7, sha256=sha256["LIC-112_bump.csv"])
@@ -353,6 +311,12 @@ def files() -> dict[str, bytes]:
         gain=0.421, time_constant=3.11, dead_time=0.93, sha256=sha256["FIC-204_bump.csv"]
     )
     cases = {"TIC-307.toml": DRYER_CASE, "LIC-112.toml": tank, "FIC-204.toml": wash}
+    for tag, text in port_ellery.CASES.items():
+        record = f"{tag}_bump.csv"
+        said = INVENTED.format(what=f"The bump record beside this file is {record}.")
+        cases[f"{tag}.toml"] = said + text.format(
+            sha256=sha256[record], feed_sha256=sha256["AIC-630_feed.csv"]
+        )
     return {name: text.encode() for name, text in (cases | records).items()}
 
 

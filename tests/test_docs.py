@@ -32,6 +32,7 @@ from typing import Final
 
 import pytest
 
+from tests import outside
 from tests.screens.conftest import press, running, text_of, type_in
 from workbench.case.tables import SHAPE, TABLES, PlantTable, Revision
 from workbench.cli.options import Option
@@ -180,9 +181,17 @@ def rules() -> str:
     return _table(("methods", "aims at", "published for", "source"), rows)
 
 
+def outside_checks() -> str:
+    """Every source outside the program, and how many figures were compared with it."""
+    found = outside.rows()
+    heads = ("source", "checks", "from memory", "held to")
+    return f"{outside.in_short(found)}\n\n{_table(heads, outside.sources(found))}"
+
+
 TABLES_MADE: Final[dict[str, Callable[[], str]]] = {
     "case keys": case_keys,
     "commands": commands,
+    "outside checks": outside_checks,
     "rules": rules,
 }
 """Name in a document -> the text between its marks."""

@@ -55,16 +55,16 @@ def test_every_form_can_be_converted_to() -> None:
 # --- published numbers ---------------------------------------------------------------------------
 
 
-@pytest.mark.parametrize(
-    ("series", "ideal"),
-    [
-        # published rule (S. Skogestad, J. Process Control 13 (2003) 291-309, from memory),
-        # recomputed; without a filter
-        ((0.0625, 8.0, 8.0), (0.125, 16.0, 4.0)),
-        ((0.5, 1.5, 1.0), (0.83333333, 2.5, 0.6)),
-        ((2.0, 10.0, 2.5), (2.5, 12.5, 2.0)),
-    ],
+SERIES = (
+    # published rule (S. Skogestad, J. Process Control 13 (2003) 291-309, from memory),
+    # recomputed; without a filter
+    ((0.0625, 8.0, 8.0), (0.125, 16.0, 4.0)),
+    ((0.5, 1.5, 1.0), (0.83333333, 2.5, 0.6)),
+    ((2.0, 10.0, 2.5), (2.5, 12.5, 2.0)),
 )
+
+
+@pytest.mark.parametrize(("series", "ideal"), SERIES)
 def test_series_as_ideal(
     series: tuple[float, float, float], ideal: tuple[float, float, float]
 ) -> None:

@@ -119,17 +119,18 @@ def test_op_moved_by_hand_is_not_taken_for_a_controller() -> None:
 # --- setpoint steps under proportional control ---------------------------------------------------
 
 
-@pytest.mark.parametrize(
-    ("plant", "gain", "read", "recovered"),
-    [
-        ((1, 1, 1), 0.852, (0.5982, 0.4228, 2.435), (0.997, 1.075, 1.020)),
-        ((1, 5, 1), 4.001, (1.0401, 0.7322, 3.025), (0.984, 4.707, 0.967)),
-        ((1, 8, 1), 6.385, (1.1240, 0.7909, 3.115), (0.976, 7.454, 0.968)),
-        ((1, 20, 1), 15.94, (1.2232, 0.8604, 3.215), (0.943, 18.44, 0.993)),
-        ((2, 20, 5), 1.604, (0.9911, 0.6978, 14.88), (1.974, 19.11, 4.88)),
-        ((1, 0.2, 1), 0.309, (0.3065, 0.2163, 2.005), (0.997, 0.362, 0.952)),
-    ],
+UNDER_P = (
+    ((1, 1, 1), 0.852, (0.5982, 0.4228, 2.435), (0.997, 1.075, 1.020)),
+    ((1, 5, 1), 4.001, (1.0401, 0.7322, 3.025), (0.984, 4.707, 0.967)),
+    ((1, 8, 1), 6.385, (1.1240, 0.7909, 3.115), (0.976, 7.454, 0.968)),
+    ((1, 20, 1), 15.94, (1.2232, 0.8604, 3.215), (0.943, 18.44, 0.993)),
+    ((2, 20, 5), 1.604, (0.9911, 0.6978, 14.88), (1.974, 19.11, 4.88)),
+    ((1, 0.2, 1), 0.309, (0.3065, 0.2163, 2.005), (0.997, 0.362, 0.952)),
 )
+"""Plant (k, T, L), gain, (first peak, first low, time of the peak), and (k, T, L) as found."""
+
+
+@pytest.mark.parametrize(("plant", "gain", "read", "recovered"), UNDER_P)
 def test_setpoint_step_by_shamsuzzoha_and_skogestad(
     plant: Plant,
     gain: float,
@@ -172,25 +173,31 @@ def test_a_small_overshoot_is_a_caution_and_none_a_refusal() -> None:
     assert "outside the 10 to 60 %" in shamsuzzoha_skogestad(nearly).remark
 
 
-@pytest.mark.parametrize(
-    ("plant", "gain", "recovered"),
-    [
-        ((1, 1, 1), 0.8, (1.000, 1.157, 0.905)),
-        ((1, 5, 1), 2.6, (1.000, 4.65, 0.90)),
-        ((2, 20, 5), 1.2, (2.000, 18.9, 4.70)),
-    ],
+SWINGING = (
+    ((1, 1, 1), 0.8, (1.000, 1.157, 0.905)),
+    ((1, 5, 1), 2.6, (1.000, 4.65, 0.90)),
+    ((2, 20, 5), 1.2, (2.000, 18.9, 4.70)),
 )
-def test_setpoint_step_by_yuwana_and_seborg(
-    plant: Plant, gain: float, recovered: tuple[float, float, float]
-) -> None:
-    """Other route: the published formulas (Yuwana and Seborg 1982, from memory) on a finely stepped
-    loop, worked out apart from this program."""
+"""Plant (k, T, L), gain, and what is found of the plant."""
+
+
+def step_under_p(plant: Plant, gain: float) -> SetpointStep:
+    """A setpoint step of a finely stepped loop, read from its record."""
     h = plant[2] / 400.0
     rows = int(20 * plant[2] / h)
     sp = np.append([0.0] * 30, [1.0] * rows)[:rows]
     seen = setpoint_step(played(plant, gain, None, rows=rows, step=h, sp=sp))
     assert seen is not None
-    found = yuwana_seborg(seen)
+    return seen
+
+
+@pytest.mark.parametrize(("plant", "gain", "recovered"), SWINGING)
+def test_setpoint_step_by_yuwana_and_seborg(
+    plant: Plant, gain: float, recovered: tuple[float, float, float]
+) -> None:
+    """Other route: the published formulas (Yuwana and Seborg 1982, from memory) on a finely stepped
+    loop, worked out apart from this program."""
+    found = yuwana_seborg(step_under_p(plant, gain))
     assert found.gain == pytest.approx(recovered[0], rel=0.01)
     assert found.time_constant_s == pytest.approx(recovered[1], rel=0.02)
     assert found.dead_time_s == pytest.approx(recovered[2], rel=0.02)

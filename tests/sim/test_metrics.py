@@ -86,17 +86,23 @@ def test_decay_ratio_and_period_of_a_second_order_loop(damping: float) -> None:
     assert value(seen.setpoint_period_s) == pytest.approx(period, rel=2e-2)
 
 
-@pytest.mark.parametrize(
-    ("damping", "percent"),
+OVERSHOOTS = (
     # published and exact: exp(-pi z / sqrt(1 - z^2)); 52.7, 16.3, 9.5, 4.6 and 1.5 % in textbooks
-    [(0.2, 52.66206), (0.5, 16.303353), (0.6, 9.4780225), (0.7, 4.598791), (0.8, 1.516462)],
+    *((0.2, 52.66206), (0.5, 16.303353), (0.6, 9.4780225), (0.7, 4.598791), (0.8, 1.516462)),
 )
-def test_overshoot_of_a_second_order_loop(damping: float, percent: float) -> None:
-    # The loop: integral control of a first-order plant is second order; T = 1, Ki = 1/(4 z^2).
+
+
+def overshoot_percent(damping: float) -> float:
+    """Of a second-order loop: integral control of a first-order plant, T = 1, Ki = 1/(4 z^2)."""
     plant = TransferFunction.ratio((1.0,), [(1.0, 1.0)])
     events = Events(-3.0, 0.0, 0.0, 0.0, 40.0)
     seen = measure(simulate(Loop(plant, plant, Gains(0.0, 0.25 / damping**2)), events), events)
-    assert value(seen.setpoint_overshoot_percent) == pytest.approx(percent, abs=1e-4)
+    return value(seen.setpoint_overshoot_percent)
+
+
+@pytest.mark.parametrize(("damping", "percent"), OVERSHOOTS)
+def test_overshoot_of_a_second_order_loop(damping: float, percent: float) -> None:
+    assert overshoot_percent(damping) == pytest.approx(percent, abs=1e-4)
 
 
 def test_windows_end_at_the_load_step_and_at_the_end() -> None:

@@ -72,6 +72,13 @@ def test_what_is_wrong_is_found(
     assert any(finding.startswith(told) or told in finding for finding in row.findings)
 
 
+def test_a_vessel_that_is_meant_to_swing_is_not_called_slow(tmp_path: Path) -> None:
+    slow = {"plant": "integrating slope=0.001 /s, dead_time=6 s", "controller_gain": "0.01"}
+    row = found(oven(**slow, controller_integral="10 h"), tmp_path)
+
+    assert not any("below the smallest" in finding for finding in row.findings)
+
+
 def test_a_case_that_cannot_be_judged_is_told(tmp_path: Path) -> None:
     row = found(new_case("FIC-1"), tmp_path)
 

@@ -358,7 +358,7 @@ def test_a_method_is_written_in_lower_case_with_hyphens(method: str) -> None:
 # --- published settings --------------------------------------------------------------------------
 
 
-def _plant_of(case: RuleCase) -> Plant:
+def plant_of(case: RuleCase) -> Plant:
     """The plant of a published case, as rules see it."""
     whole = case.plant.transfer()
     return Plant(
@@ -369,7 +369,7 @@ def _plant_of(case: RuleCase) -> Plant:
     )
 
 
-def _as_ideal(found: Tuning) -> tuple[float, float, float]:
+def as_ideal(found: Tuning) -> tuple[float, float, float]:
     k, ti, td = found.gain, found.integral_time or math.inf, found.derivative_time
     if found.form == "series":
         f = 1.0 + td / ti
@@ -379,10 +379,10 @@ def _as_ideal(found: Tuning) -> tuple[float, float, float]:
 
 @pytest.mark.parametrize("case", RULE_CASES, ids=lambda case: case.name)
 def test_published_settings(case: RuleCase) -> None:
-    found = RULES[case.method].settings(_plant_of(case))
+    found = RULES[case.method].settings(plant_of(case))
     assert found.form == RULES[case.method].form
     # The collection gives six digits or more.
-    assert _as_ideal(found) == pytest.approx(case.settings, rel=2e-6), (
+    assert as_ideal(found) == pytest.approx(case.settings, rel=2e-6), (
         case.source,
         case.settings_worth,
     )
@@ -392,7 +392,7 @@ def test_published_settings(case: RuleCase) -> None:
     "case", [case for case in RULE_CASES if case.figures], ids=lambda case: case.name
 )
 def test_published_margins_of_the_settings(case: RuleCase) -> None:
-    k, ti, td = _as_ideal(RULES[case.method].settings(_plant_of(case)))
+    k, ti, td = as_ideal(RULES[case.method].settings(plant_of(case)))
     plant = case.plant.transfer()
     margins = analogue_margins(Loop(plant, plant, Gains(k, k / ti, k * td)))
     assert margins.stable
@@ -416,15 +416,15 @@ def test_every_check_says_what_it_is_worth() -> None:
         assert worked.source.startswith((READ, MEMORY, "exact", "common practice")), worked
 
 
-@pytest.mark.parametrize(
-    ("gain", "period", "published"),
-    [
-        # published (W.L. Luyben, IEC Proc. Des. Dev. 25 (1986) 654-660, from memory): the diagonal
-        # loops of a methanol column; printed with Ku/2.2, 1 % above 0.45 Ku, and rounded
-        (2.0994147, 3.9074106, (0.96, 3.25)),
-        (0.42210042, 11.132368, (0.19, 9.2)),
-    ],
+COLUMN = (
+    # published (W.L. Luyben, IEC Proc. Des. Dev. 25 (1986) 654-660, from memory): the diagonal
+    # loops of a methanol column; printed with Ku/2.2, 1 % above 0.45 Ku, and rounded
+    (2.0994147, 3.9074106, (0.96, 3.25)),
+    (0.42210042, 11.132368, (0.19, 9.2)),
 )
+
+
+@pytest.mark.parametrize(("gain", "period", "published"), COLUMN)
 def test_published_ziegler_nichols_settings_of_a_column(
     gain: float, period: float, published: tuple[float, float]
 ) -> None:
@@ -619,7 +619,7 @@ def test_without_dead_time_lambda_takes_the_lag() -> None:
 def test_integrating_pid_puts_both_poles_where_they_are_wanted(wanted: float, delay: float) -> None:
     # exact: with the Pade form of the dead time the loop is left with (lambda s + 1)^2
     found = chien_fruehauf_integrating_pid(SmallModel(0.5, True, 0.0, 0.0, delay, True), wanted)
-    k, ti, td = _as_ideal(found)
+    k, ti, td = as_ideal(found)
     gain = 0.5 * k / ti
     above = gain * np.polymul([ti * td, ti, 1.0], [-delay / 2.0, 1.0])
     closed = np.polyadd([delay / 2.0, 1.0, 0.0, 0.0], above)
@@ -631,7 +631,7 @@ def test_integrating_pid_puts_both_poles_where_they_are_wanted(wanted: float, de
 def test_integrating_lag_pid_puts_both_poles_where_they_are_wanted(wanted: float) -> None:
     # exact: with 1 - L s for the dead time the loop is left with (T s + 1)(lambda s + 1)^2
     model = SmallModel(0.5, True, 0.0, 3.0, 1.0, True)
-    k, ti, td = _as_ideal(chien_fruehauf_integrating_lag_pid(model, wanted))
+    k, ti, td = as_ideal(chien_fruehauf_integrating_lag_pid(model, wanted))
     above = 0.5 * k / ti * np.polymul([ti * td, ti, 1.0], [-1.0, 1.0])
     closed = np.polyadd([3.0, 1.0, 0.0, 0.0], above)
     wanted_poles = np.polymul([wanted**2, 2.0 * wanted, 1.0], [3.0, 1.0])
@@ -674,7 +674,7 @@ def test_unstable_pid_has_positive_settings(share: float, wanted: float, gain: f
 @pytest.mark.parametrize("share", [0.05, 0.2, 0.4, 0.6])
 def test_unstable_pid_makes_its_plant_stable(share: float) -> None:
     model = unstable_lag(TransferFunction.ratio((2.0,), [(10.0, -1.0)], 10.0 * share))
-    k, ti, td = _as_ideal(lee_imc_unstable_pid(model, None))
+    k, ti, td = as_ideal(lee_imc_unstable_pid(model, None))
     plant = TransferFunction.ratio((2.0,), [(10.0, -1.0)], 10.0 * share)
     assert analogue_margins(Loop(plant, plant, Gains(k, k / ti, k * td))).stable
 
@@ -711,23 +711,28 @@ def test_an_averaged_level_goes_as_far_as_it_may(kind: Literal["p", "pi"]) -> No
     assert level.max() == pytest.approx(deviation, rel=1e-4)
 
 
-@pytest.mark.parametrize(
-    ("damping", "factor"),
-    [
-        # published rule, value recomputed (S. Skogestad, Ind. Eng. Chem. Res. 45, 2006, 7817-7822)
-        (0.5, 0.54629284),
-        # published, read in a stored page (the same)
-        (0.707, 0.64479378),
-        (1.0, 0.73575888),
-    ],
+LEVELS = (
+    # published rule, value recomputed (S. Skogestad, Ind. Eng. Chem. Res. 45, 2006, 7817-7822)
+    (0.5, 0.54629284),
+    # published, read in a stored page (the same)
+    (0.707, 0.64479378),
+    (1.0, 0.73575888),
 )
-def test_published_peak_of_a_level(damping: float, factor: float) -> None:
+
+
+def level_peak(damping: float) -> float:
+    """Peak of a level under PI after a step of 1 in its feed, times the gain."""
     gain, area = 2.0, 10.0
     plant = TransferFunction.ratio((1.0 / area,), [(1.0, 0.0)])
     integral_time = 4.0 * damping**2 * area / gain
     loop = Loop(plant, plant, Gains(gain, gain / integral_time))
     level = np.abs(simulate(loop, Events(0.0, 0.0, 1.0, 0.0, 100.0)).pv)
-    assert gain * level.max() == pytest.approx(factor, abs=2e-4)
+    return gain * float(level.max())
+
+
+@pytest.mark.parametrize(("damping", "factor"), LEVELS)
+def test_published_peak_of_a_level(damping: float, factor: float) -> None:
+    assert level_peak(damping) == pytest.approx(factor, abs=2e-4)
 
 
 # --- relay test ----------------------------------------------------------------------------------

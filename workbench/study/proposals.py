@@ -12,6 +12,7 @@ from typing import Final, Literal
 from workbench.case.case import Case
 from workbench.errors import (
     CannotSolve,
+    InputError,
     ModelError,
     NotApplicable,
     problem,
@@ -178,13 +179,18 @@ def rule_settings(case: Case, wish: Wish) -> list[Controller]:
 def _by_rule(case: Case, rule: rules.Rule, plant: rules.Plant) -> Controller:
     """Raises `NotApplicable`."""
     tuning = rule.settings(plant)
-    return settings_like(
-        case.controller or Controller(gain=1.0),
-        tuning.gain,
-        tuning.integral_time,
-        tuning.derivative_time,
-        tuning.form,
-    )
+    try:
+        return settings_like(
+            case.controller or Controller(gain=1.0),
+            tuning.gain,
+            tuning.integral_time,
+            tuning.derivative_time,
+            tuning.form,
+        )
+    except InputError as fault:
+        # A controller of increments, say, cannot do without integral action.
+        told = fault.problems[0]
+        raise NotApplicable(f"the controller {told.what}", limit=told.mend) from None
 
 
 def _proposal(case: Case, method: str, wish: Wish, plant: rules.Plant) -> Proposal:

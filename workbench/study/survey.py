@@ -17,7 +17,7 @@ from workbench.case.files import read_case
 from workbench.errors import InputError, WorkbenchError
 from workbench.study.assessment import assess
 from workbench.study.keep import faults_of
-from workbench.study.loop import controller_of
+from workbench.study.loop import controller_of, plant_of
 from workbench.study.proposals import rule_settings
 from workbench.study.wish import Wish
 from workbench.units import Figure, harmless, text
@@ -186,19 +186,20 @@ def _beside_the_rules(case: Case) -> list[str]:
     """Whether gain or integral action lies beyond what any rule that applies would set."""
     present = controller_of(case).gains()
     rules = [settings.gains() for settings in rule_settings(case, Wish())]
-    told = []
+    # A vessel may be meant to take up upsets: then slow is right.
+    averaging, told = plant_of(case).integrators > 0, []
     for name, own, given in (
         ("gain", present.proportional, [each.proportional for each in rules]),
         ("integral action", present.integral, [each.integral for each in rules]),
     ):
         # Rules without the action in question have nothing to say of it.
         usual = [value for value in given if value > 0.0]
-        if not usual or own == 0.0:
+        if len(usual) < _ENOUGH or own == 0.0:
             continue
         if own > max(usual):
             times = text(own / max(usual), digits=2)
             told.append(f"{name} is {times} times the largest of {len(usual)} rules")
-        elif own < min(usual):
+        elif own < min(usual) and not averaging:
             times = text(min(usual) / own, digits=2)
             told.append(f"{name} is {times} times below the smallest of {len(usual)} rules")
     return told
@@ -212,6 +213,9 @@ FRAGILE: Final = 2.0
 
 STALE_DAYS: Final = 366
 """Age of a model after which the plant may well be another one (common practice: a year) [d]."""
+
+_ENOUGH: Final = 3
+"""Fewer rules than this tell little of what is usual."""
 
 MOST_WORKERS: Final = 8
 """Each needs some 100 MB."""
