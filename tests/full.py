@@ -39,6 +39,7 @@ from tests.records.campaigns import certain, choices
 from tests.records.damage import damaged_records
 from tests.records.replaying import recognised
 from tests.records.swinging import blamed
+from tests.screens.campaigns import bad_lines, line_noise, walks
 from tests.sim.campaigns import (
     analogue_by_mpmath,
     changed_loops,
@@ -499,6 +500,9 @@ CAMPAIGNS: Final[dict[str, Campaign]] = {
     "cases surveyed": Campaign(
         _judged(surveyed_cases, 305, 40.0, "seconds for 1,000 cases"), 10, 1000
     ),
+    "line noise": Campaign(_judged(line_noise, 401, 20.0, "seconds until it answers"), 2, 600),
+    "bad lines": Campaign(_judged(bad_lines, 402, 0.0, "ended or went on badly"), 1, 120),
+    "every page and action": Campaign(_judged(walks, 403, 0.0, "screens at fault"), 6, 1680),
     "command lines at random": Campaign(command_lines, 40, 3000),
 }
 """Name -> campaign, and its sizes."""

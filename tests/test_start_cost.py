@@ -5,8 +5,11 @@ Wall-clock limits would be flaky on a shared machine; what a process has loaded 
 
 from __future__ import annotations
 
+import ast
+import importlib
 import json
 import os
+import pkgutil
 import subprocess
 import sys
 from pathlib import Path
@@ -14,6 +17,7 @@ from typing import Any, Final
 
 import pytest
 
+from workbench import study
 from workbench.cli.table import COMMANDS
 
 ROOT: Final = Path(__file__).resolve().parents[1]
@@ -125,3 +129,33 @@ def test_the_first_screen_is_drawn_without_scipy(tmp_path: Path) -> None:
     assert "stable" in shown
     assert "textual" in _roots(modules)
     assert "scipy" not in _roots(modules)
+
+
+def test_every_name_that_study_offers_is_found_when_first_asked_for() -> None:
+    rooms = {room.name for room in pkgutil.iter_modules(study.__path__)}
+
+    assert not rooms & set(study.__all__), "a room that is loaded would hide what is offered"
+    tree = ast.parse(Path(study.__file__ or "").read_text(encoding="utf-8"))
+    offered = {}
+    for node in next(each for each in tree.body if isinstance(each, ast.If)).body:
+        assert isinstance(node, ast.ImportFrom)
+        room = importlib.import_module(node.module or "")
+        offered.update({each.asname or each.name: getattr(room, each.name) for each in node.names})
+    assert offered == {name: getattr(study, name) for name in study.__all__}
+
+
+_FRAME: Final = """
+import json, pathlib, sys
+from workbench.screens.app import WorkbenchApp
+from workbench.screens.work import Work
+Work.open(pathlib.Path(sys.argv[2]))
+pathlib.Path(sys.argv[1]).write_text(json.dumps(sorted(sys.modules)))
+"""
+
+
+def test_the_first_frame_waits_for_no_answers(tmp_path: Path) -> None:
+    modules = _run(_FRAME, tmp_path, str(ROOT / "cases" / "TIC-307.toml"))
+
+    late = ("workbench.records", "workbench.tune", "workbench.study.evaluation", "workbench.report")
+    assert not [name for name in modules if name.startswith(late)]
+    assert not _roots(modules) & {"scipy", "plotext"}

@@ -9,10 +9,12 @@ one span outside, because one NaN or one far-off point ends or hangs the whole p
 from __future__ import annotations
 
 import math
+import sys
 import threading
 from collections.abc import Sequence
 from dataclasses import dataclass
-from functools import lru_cache
+from functools import cache, lru_cache
+from types import ModuleType
 from typing import TYPE_CHECKING, Any, Final
 
 import numpy as np
@@ -496,6 +498,18 @@ _one_at_a_time = threading.Lock()
 """plotext keeps one figure for the whole process; two threads in it at once spoil both."""
 
 
+@cache
+def _plotext() -> Any:
+    """plotext, here and not at the top because the first screen is drawn without it."""
+    # Its own manual takes longer to load than all the rest of it, and nobody opens it here.
+    manual: Any = ModuleType("plotext._doc.doc")
+    manual.docs = None
+    sys.modules.setdefault(manual.__name__, manual)
+    import plotext
+
+    return plotext
+
+
 @lru_cache(maxsize=32)
 def _plot(
     x: bytes, y: bytes, columns: int, rows: int, marker: str, joined: bool
@@ -504,10 +518,7 @@ def _plot(
 
     Remembered, because the pinned curves and the setpoint seldom change with a what-if.
     """
-    # Here and not at the top: it costs 0.1 s, and the first screen is drawn without it.
-    import plotext
-
-    library: Any = plotext
+    library = _plotext()
     with _one_at_a_time:
         # Otherwise it trims the canvas to the size of the terminal it finds.
         library.terminal.limit(False, False)

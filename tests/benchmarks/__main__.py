@@ -9,10 +9,7 @@ from __future__ import annotations
 
 import asyncio
 import math
-import os
-import pty
 import random
-import select
 import statistics
 import subprocess
 import sys
@@ -26,6 +23,7 @@ from typing import Final
 
 import numpy as np
 
+from tests.benchmarks.lines import SIZES, empty_application, memory, screen_until, what_ifs
 from tests.benchmarks.recursion import Numbers, in_c, plain, plain_limited
 from workbench import study
 from workbench.case.case import edit, edit_all
@@ -49,36 +47,6 @@ def _seconds(work: Callable[[], object]) -> float:
     started = time.perf_counter()
     work()
     return time.perf_counter() - started
-
-
-_EMPTY_APP: Final = "from textual.app import App; App().run()"
-
-
-def _first_frame(*words: str) -> float:
-    """From the start of a process in a terminal of 80x24 to when it has drawn and fallen silent."""
-    parent, child = pty.openpty()
-    os.set_blocking(parent, False)
-    environment = {**os.environ, "TERM": "xterm-256color", "LINES": "24", "COLUMNS": "80"}
-    started = last = time.perf_counter()
-    process = subprocess.Popen(
-        [sys.executable, *words], stdin=child, stdout=child, stderr=child, env=environment
-    )
-    seen = 0
-    try:
-        # Drawn: several kilobytes have come, and then nothing for as long as a person would notice.
-        while time.perf_counter() - started < 20.0:
-            ready, _, _ = select.select([parent], [], [], 0.3)
-            if ready:
-                seen += len(os.read(parent, 65536))
-                last = time.perf_counter()
-            elif seen > 2000:
-                break
-    finally:
-        process.kill()
-        process.wait()
-        os.close(parent)
-        os.close(child)
-    return last - started
 
 
 def _process(*words: str) -> float:
@@ -225,10 +193,16 @@ ROWS: Final[
     tuple[tuple[str, int, Callable[[], float], tuple[str, Callable[[], float]] | None], ...]
 ] = (
     (
+        "screen drawn with the case's settings",
+        15,
+        lambda: screen_until(b"integral", b"leave"),
+        ("an empty Textual application", empty_application),
+    ),
+    (
         "screen drawn, trend and figures included",
-        7,
-        lambda: _first_frame("-m", "workbench", str(CASE)),
-        ("an empty Textual application", lambda: _first_frame("-c", _EMPTY_APP)),
+        15,
+        lambda: screen_until(b"Gain margin"),
+        ("an empty Textual application", empty_application),
     ),
     (
         "workbench --help",
@@ -326,6 +300,10 @@ def main() -> int:
     for name, count, ours, yardstick in ROWS:
         if not wanted or name.startswith(wanted):
             _in_turn(name, count, ours, yardstick)
+    if not wanted or "what-if at".startswith(wanted):
+        for size in SIZES:
+            print("\n".join(what_ifs(size)), flush=True)
+        print(memory())
     if wanted:
         return 0
     with tempfile.TemporaryDirectory() as folder:

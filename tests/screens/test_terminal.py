@@ -2,93 +2,17 @@
 
 from __future__ import annotations
 
-import fcntl
 import os
-import pty
-import select
 import signal
-import struct
-import subprocess
-import sys
 import termios
-import time
 from collections.abc import Callable, Iterator
 from pathlib import Path
 
-import pyte
 import pytest
 
+from tests.screens.terminals import Terminal, environment_of
 from workbench.screens import drafts
 from workbench.screens.terminal import Abilities, abilities
-
-PROGRAM = """
-import sys
-from workbench.screens.app import run
-sys.exit(run(sys.argv[1], ascii="--ascii" in sys.argv))
-"""
-
-
-class Terminal:
-    """The program behind a pseudo-terminal."""
-
-    def __init__(self, *arguments: str, environment: dict[str, str], stdin: int | None = None):
-        self.master, slave = pty.openpty()
-        fcntl.ioctl(slave, termios.TIOCSWINSZ, struct.pack("HHHH", 24, 80, 0, 0))
-        self.before = termios.tcgetattr(slave)
-        self.process = subprocess.Popen(
-            [sys.executable, "-c", PROGRAM, *arguments],
-            stdin=slave if stdin is None else stdin,
-            stdout=slave,
-            stderr=slave,
-            env=environment,
-            start_new_session=True,
-        )
-        self.slave = slave
-        self.sent = b""
-        self.screen = pyte.Screen(80, 24)
-        self.stream = pyte.ByteStream(self.screen)
-
-    def read(self, seconds: float) -> bytes:
-        """What the program sends within a time."""
-        got, end = b"", time.monotonic() + seconds
-        while (left := end - time.monotonic()) > 0:
-            if select.select([self.master], [], [], left)[0]:
-                try:
-                    got += os.read(self.master, 65536)
-                except OSError:
-                    break
-        self.sent += got
-        # pyte takes the private mode queries for text; they are answered by silence here.
-        self.stream.feed(got.replace(b"\x1b[?2026$p", b"").replace(b"\x1b[?2048$p", b""))
-        return got
-
-    def wait_for(self, words: str) -> None:
-        """Read until the screen shows the words."""
-        end = time.monotonic() + 30
-        while words not in self.text():
-            assert time.monotonic() < end, f"{words!r} never came:\n{self.text()}"
-            assert self.process.poll() is None, f"ended:\n{self.text()}"
-            self.read(0.05)
-
-    def press(self, keys: bytes) -> None:
-        """Send keys."""
-        os.write(self.master, keys)
-
-    def text(self) -> str:
-        """The screen."""
-        return "\n".join(self.screen.display)
-
-    def close(self) -> None:
-        """End the program if it is still there."""
-        if self.process.poll() is None:
-            self.process.kill()
-        self.process.wait(10)
-        for descriptor in (self.master, self.slave):
-            try:
-                os.close(descriptor)
-            except OSError:
-                continue
-
 
 Start = Callable[..., Terminal]
 
@@ -99,11 +23,7 @@ def start(folder: Path) -> Iterator[Start]:
     started: list[Terminal] = []
 
     def begin(*arguments: str, stdin: int | None = None, **environment: str) -> Terminal:
-        package = str(Path(__file__).parents[2])
-        plain = {"TERM": "xterm-256color", "LANG": "C.UTF-8", "PYTHONPATH": package}
-        keep = ("PATH", "HOME", "XDG_STATE_HOME")
-        inherited = {name: os.environ[name] for name in keep if name in os.environ}
-        whole = {**inherited, **plain, **environment}
+        whole = environment_of(None, **environment)
         started.append(Terminal(*arguments, environment=whole, stdin=stdin))
         return started[-1]
 

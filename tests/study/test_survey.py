@@ -11,7 +11,7 @@ import pytest
 from workbench import study
 from workbench.case.case import Case, edit_all, new_case
 from workbench.case.files import write_new
-from workbench.study.survey import STATUSES
+from workbench.study.surveying import STATUSES
 
 TODAY: Final = date(2026, 12, 1)
 OVEN: Final = {

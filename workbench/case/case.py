@@ -11,6 +11,7 @@ import dataclasses
 import math
 from collections.abc import Mapping
 from dataclasses import replace
+from functools import cache
 from typing import Any, Final, cast
 
 from workbench.case.drawing import show_part, spelled_out, told_as_typed
@@ -74,7 +75,12 @@ def new_case(tag: str) -> Case:
 
 def keys(case: Case) -> dict[str, Quantity]:
     """The keys that can be set now, in file order, with what each means."""
-    shape, has_load = shape_name(case.plant.process), case.plant.load is not None
+    return dict(_known(shape_name(case.plant.process), case.plant.load is not None))
+
+
+@cache
+def _known(shape: str | None, has_load: bool) -> Mapping[str, Quantity]:
+    """The keys for a shape; kept, because each setting on the screen asks at each change."""
     return {
         f"{table}.{key}": declared
         for table in TABLES
@@ -90,9 +96,11 @@ def show(case: Case, key: str) -> str:
     part = show_part(case, key)
     if part is not None:
         return part
-    declared = keys(case).get(key)
+    shape = shape_name(case.plant.process)
+    known = _known(shape, case.plant.load is not None)
+    declared = known.get(key)
     if declared is None:
-        raise InputError(unknown_key(key, list(keys(case)), shape_name(case.plant.process)))
+        raise InputError(unknown_key(key, list(known), shape))
     table, _, name = key.partition(".")
     value = _current(case, table, name)
     return "" if value is None and declared.kind not in _NONE_KINDS else declared.show(value)
@@ -176,11 +184,7 @@ def edit_all(case: Case, changes: Mapping[str, str]) -> Case:
 def _edit_all(case: Case, changes: Mapping[str, str]) -> Case:
     shape, tables = _reshape(case, changes)
     has_load = case.plant.load is not None or bool(changes.get("plant.load", "").strip())
-    known = {
-        f"{table}.{key}": declared
-        for table in TABLES
-        for key, declared in known_keys(table, shape, has_load).items()
-    }
+    known = _known(shape, has_load)
     faults: list[Problem] = []
     for key, typed in changes.items():
         table, _, name = key.partition(".")

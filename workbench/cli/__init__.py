@@ -8,6 +8,7 @@ Everything heavy is imported inside the command that needs it, so that `--help` 
 from __future__ import annotations
 
 import contextlib
+import gc
 import json
 import os
 import signal
@@ -64,6 +65,8 @@ def _screen(given: Given) -> int:
             raise _no_screen(f"the screen needs a terminal, and {name} is not one")
     if os.environ.get("TERM") == "dumb":
         raise _no_screen("the screen cannot be drawn where TERM is dumb")
+    # Nothing that a start makes is garbage; the screen collects again once it is drawn.
+    gc.disable()
     from workbench.screens import app
 
     return app.run(

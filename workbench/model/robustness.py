@@ -315,7 +315,11 @@ def _refined(response: Response, grid: Floats, finest: int) -> Floats:
 
 
 def crossings(f: Callable[[Floats], Floats], low: Floats, high: Floats) -> Floats:
-    """Roots of f between brackets, all at once, by the Illinois variant of false position."""
+    """Roots of f between brackets, all at once, by the false position of Anderson and Bjorck.
+
+    (N. Anderson and A. Bjorck, "A new high order method of regula falsi type for computing a root
+    of an equation", BIT 13, 1973, 253-264; from memory.)
+    """
     if not len(low):
         return low
     a, b, fa, fb = low.copy(), high.copy(), f(low), f(high)
@@ -324,7 +328,9 @@ def crossings(f: Callable[[Floats], Floats], low: Floats, high: Floats) -> Float
         x = np.where(fb == fa, b, b - fb * (b - a) / np.where(fb == fa, 1.0, fb - fa))
         fx = f(x)
         crossed = fx * fb < 0
-        fa = np.where(crossed, fb, fa / 2.0)
+        # The end that stays is given less weight, or the other would creep towards the root.
+        less = 1.0 - fx / np.where(fb == 0.0, 1.0, fb)
+        fa = np.where(crossed, fb, fa * np.where(less > 0.0, less, 0.5))
         a = np.where(crossed, b, a)
         b, fb = x, fx
         if np.all((np.abs(fx) < 1e-12) | (np.abs(b - a) <= 1e-13 * np.abs(b))):
@@ -493,9 +499,15 @@ def _phase_crossovers(
     """(1/|L|, frequency) wherever L crosses the negative real axis."""
     turn = np.angle(-values)
     cut = (turn[:-1] * turn[1:] <= 0.0) & (np.abs(turn[:-1] - turn[1:]) < math.pi)
-    at = crossings(lambda w: np.angle(-response(w)), grid[:-1][cut], grid[1:][cut])
-    sizes = np.abs(response(at)) if len(at) else at
-    return [(float(1.0 / m), float(w)) for m, w in zip(sizes, at, strict=True) if m]
+
+    def sine(response: Complex) -> Floats:
+        # Not the angle: it leaps on the positive axis, and a search would close in on the leap.
+        return np.asarray(-response.imag / np.maximum(np.abs(response), 1e-300))
+
+    at = crossings(lambda w: sine(response(w)), grid[:-1][cut], grid[1:][cut])
+    found = response(at) if len(at) else at
+    pairs = zip(found.tolist(), at.tolist(), strict=True)
+    return [(1.0 / abs(value), w) for value, w in pairs if value.real < 0.0]
 
 
 def _phase_margins(

@@ -1,8 +1,12 @@
-"""The program on the screen: which page is shown, and how it ends."""
+"""The program on the screen: which page is shown, and how it ends.
+
+A page is loaded when it is first shown: the first one is there sooner.
+"""
 
 from __future__ import annotations
 
 import asyncio
+import gc
 import os
 import signal
 import sys
@@ -18,13 +22,11 @@ from workbench.screens import drafts
 from workbench.screens.help import HelpPage
 from workbench.screens.main import MainPage
 from workbench.screens.page import Page
-from workbench.screens.proposals import ProposalsPage
-from workbench.screens.record import RecordPage
-from workbench.screens.saving import DraftPage, LeavePage, SavePage
-from workbench.screens.start import StartPage
 from workbench.screens.terminal import ASKED_TO_END, Guard, TolerantDriver, abilities
-from workbench.screens.tolerance import TolerancePage
 from workbench.screens.work import Work
+
+DRAWN_S = 2.0
+"""Time after the start by which the first page is drawn [s]."""
 
 
 class WorkbenchApp(App[None], inherit_bindings=False):
@@ -51,8 +53,11 @@ class WorkbenchApp(App[None], inherit_bindings=False):
         self.theme = "ansi-dark"
         self.app_resume_signal.subscribe(self, lambda _: self.screen.refresh(layout=True))
         if not self.is_headless:
+            self.set_timer(DRAWN_S, _collect_garbage)
             asyncio.get_running_loop().add_signal_handler(signal.SIGTERM, self._asked_to_end)
         if self._from_list:
+            from workbench.screens.start import StartPage
+
             self.push_screen(StartPage(self.path))
         elif self.work is not None:
             self._show_case(self.work)
@@ -87,6 +92,8 @@ class WorkbenchApp(App[None], inherit_bindings=False):
         self.work = work
         self.push_screen(MainPage(work))
         if work.draft is not None:
+            from workbench.screens.saving import DraftPage
+
             self.push_screen(DraftPage(work, work.draft))
 
     def back_to_loop(self, words: str) -> None:
@@ -101,18 +108,26 @@ class WorkbenchApp(App[None], inherit_bindings=False):
 
     def show_record(self, work: Work) -> None:
         """Fit the plant to a record."""
+        from workbench.screens.record import RecordPage
+
         self.push_screen(RecordPage(work))
 
     def show_proposals(self, work: Work) -> None:
         """Settings by rules."""
+        from workbench.screens.proposals import ProposalsPage
+
         self.push_screen(ProposalsPage(work))
 
     def show_tolerance(self, work: Work) -> None:
         """What the settings survive."""
+        from workbench.screens.tolerance import TolerancePage
+
         self.push_screen(TolerancePage(work))
 
     def show_save(self, work: Work, *, and_then_leave: bool = False) -> None:
         """Ask who and why, then save."""
+        from workbench.screens.saving import SavePage
+
         self.push_screen(SavePage(work, and_then_leave))
 
     def saved(self, work: Work, leave: bool) -> None:
@@ -126,6 +141,8 @@ class WorkbenchApp(App[None], inherit_bindings=False):
     def leave(self, work: Work) -> None:
         """Leave a loop; unsaved work is asked about."""
         if work.unsaved:
+            from workbench.screens.saving import LeavePage
+
             self.push_screen(LeavePage(work))
         else:
             self.close_case(work)
@@ -168,6 +185,12 @@ def run(
     if app.fault:
         raise _told(app.fault)
     return app.return_code or 0
+
+
+def _collect_garbage() -> None:
+    """From here on, and of what is made from here on: a key must not wait for a look at it all."""
+    gc.freeze()
+    gc.enable()
 
 
 def _told(details: str) -> WorkbenchError:

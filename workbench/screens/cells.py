@@ -10,7 +10,7 @@ from __future__ import annotations
 import itertools
 from collections.abc import Iterable, Sequence
 from dataclasses import dataclass
-from typing import ClassVar, Final
+from typing import Final
 
 import numpy as np
 from numpy.typing import NDArray
@@ -72,15 +72,12 @@ def plainer(words: str) -> str:
 class Cells(Widget):
     """A widget made of character cells."""
 
-    COMPONENT_CLASSES: ClassVar[set[str]] = set()
-
     can_focus = False
 
     def __init__(self, *, css_id: str | None = None, classes: str | None = None) -> None:
         super().__init__(id=css_id, classes=classes)
         self._shown = Screenful(np.zeros((0, 0), np.uint32), np.zeros((0, 0), np.uint8))
         self._strips: dict[int, Strip] = {}
-        self._styles: list[Style] = []
 
     @property
     def ascii_only(self) -> bool:
@@ -154,29 +151,17 @@ class Cells(Widget):
         strip = self._strips.get(y)
         if strip is None and y < self._shown.characters.shape[0]:
             strip = self._strips[y] = self._strip(y)
-        return strip or Strip([Segment(" " * self.size.width, self._tone_styles()[0])])
+        return strip or Strip([Segment(" " * self.size.width, _STYLES[0])])
 
     def _strip(self, row: int) -> Strip:
-        styles = self._tone_styles()
         characters, tones = self._shown.characters[row], self._shown.tones[row]
         edges = np.flatnonzero(np.diff(tones)) + 1
         bounds = [0, *edges.tolist(), len(tones)]
         segments = []
         for start, end in itertools.pairwise(bounds):
             words = "".join(map(chr, characters[start:end].tolist())).replace("\0", "")
-            segments.append(Segment(words, styles[int(tones[start])]))
+            segments.append(Segment(words, _STYLES[int(tones[start])]))
         return Strip(segments, len(tones))
-
-    def _tone_styles(self) -> list[Style]:
-        if not self._styles:
-            self._styles = [self.get_component_rich_style(f"tone-{name}") for name in TONES]
-        return self._styles
-
-    def notify_style_update(self) -> None:
-        """Colours changed: forget the prepared rows."""
-        super().notify_style_update()
-        self._styles.clear()
-        self._strips.clear()
 
     def on_resize(self, event: events.Resize) -> None:
         """Draw for the new size."""
@@ -198,33 +183,36 @@ def _stretches(row: int, columns: NDArray[np.intp]) -> list[Region]:
     return [Region(int(part[0]), row, int(part[-1] - part[0]) + 1, 1) for part in parts]
 
 
-TONES: Final = (
-    "plain",
-    "quiet",
-    "title",
-    "chosen",
-    "key",
-    "worse",
-    "caution",
-    "changed",
-    "good",
-    "typing",
-    "frame",
-    "label",
-    "pinned",
-    "setpoint",
-    "pv",
-    "output",
-    "record",
-    "fit",
-    "best-pi",
-    "best-pid",
-    "rule",
-    "present",
-    "chosen-point",
-)
-"""Every way words and curves are shown; colours are in the stylesheet, one class for each."""
+TONES: Final = {
+    "plain": "default",
+    "quiet": "dim default",
+    "title": "bold default",
+    "chosen": "reverse default",
+    "key": "bold cyan",
+    "worse": "bold red",
+    "caution": "bold magenta",
+    "changed": "bold cyan",
+    "good": "green",
+    "typing": "underline default",
+    "frame": "dim default",
+    "label": "default",
+    "pinned": "dim default",
+    "setpoint": "magenta",
+    "pv": "bold green",
+    "output": "bold cyan",
+    "record": "default",
+    "fit": "bold green",
+    "best-pi": "bold green",
+    "best-pid": "bold cyan",
+    "rule": "dim default",
+    "present": "bold magenta",
+    "chosen-point": "reverse default",
+}
+"""Every way words and curves are shown, in the terminal's own sixteen colours.
+
+Not in the stylesheet, where each widget would look up each of them again at every start.
+"""
 
 TONE_NUMBERS: Final = {name: number for number, name in enumerate(TONES)}
 
-Cells.COMPONENT_CLASSES = {f"tone-{name}" for name in TONES}
+_STYLES: Final = [Style.parse(f"{look} on default") for look in TONES.values()]

@@ -4,14 +4,16 @@ from __future__ import annotations
 
 from collections.abc import Callable
 from dataclasses import dataclass
-from typing import Final, Literal
+from typing import TYPE_CHECKING, Final, Literal
 
 from workbench import units
 from workbench.screens.cells import Line, Span
 from workbench.screens.panel import Panel, remark, wrapped
 from workbench.screens.work import Work
-from workbench.study import Evaluation, LoopFigures
 from workbench.units import Figure
+
+if TYPE_CHECKING:
+    from workbench.study import Evaluation, LoopFigures
 
 Better = Literal["lower", "higher", ""]
 

@@ -32,10 +32,11 @@ from workbench.screens.scenario import ScenarioPanel
 from workbench.screens.structure import StructurePanel
 from workbench.screens.trend import TrendPanel
 from workbench.screens.work import LARGE, SMALL, Work
-from workbench.study import Evaluation
 
 if TYPE_CHECKING:
     from textual.events import DescendantFocus
+
+    from workbench.study import Evaluation
 
 ROOMY: Final = (140, 40)
 """Columns and rows from which every panel is shown at once."""

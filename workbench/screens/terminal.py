@@ -9,15 +9,18 @@ from __future__ import annotations
 
 import codecs
 import os
+import re
 import select
 import signal
 import threading
-from collections.abc import Callable, Mapping
+from collections.abc import Callable, Iterable, Mapping
 from dataclasses import dataclass
 from typing import Final
 
+from textual import events
 from textual._xterm_parser import XTermParser
 from textual.drivers.linux_driver import LinuxDriver
+from textual.keys import Keys
 
 LINE_DROPPED: Final = 129
 """Exit status after a dropped line: 128 + SIGHUP."""
@@ -74,6 +77,30 @@ class Guard:
                 self.line_dropped()
 
 
+_UNKNOWN: Final = re.compile(r"\x1b\[(?!\[)[0-?]*[ -/]*(?![Mm]|(?<=\$)y)[@-~]")
+"""A whole control sequence, but for a mouse report, a mode report and the console's "[[" keys."""
+
+_STRINGS: Final = re.compile(r"\x1b[\]P_^X][^\x1b\x07]*(?:\x07|\x1b\\)")
+"""What a terminal tells in words: its title, its colours."""
+
+
+class TolerantParser(XTermParser):
+    """Knows where a control sequence ends that is none of its own.
+
+    Textual takes one for so many keys typed, and each of them for a command.
+    """
+
+    def _sequence_to_key_events(self, sequence: str, alt: bool = False) -> Iterable[events.Key]:
+        try:
+            keys = list(super()._sequence_to_key_events(sequence, alt=alt))
+        except (ValueError, OverflowError):
+            # A number that is no character.
+            keys = [events.Key(Keys.Ignore, None)]
+        if not keys and _UNKNOWN.fullmatch(sequence):
+            return [events.Key(Keys.Ignore, None)]
+        return keys
+
+
 class TolerantDriver(LinuxDriver):
     """Reads what a bad line delivers, and ends when it delivers no more."""
 
@@ -83,7 +110,7 @@ class TolerantDriver(LinuxDriver):
     def run_input_thread(self) -> None:
         """Wait for input and pass it on; bytes that are no text become U+FFFD."""
         decode = codecs.getincrementaldecoder("utf-8")(errors="replace").decode
-        parser = XTermParser(self._debug)
+        parser = TolerantParser(self._debug)
         while not self.exit_event.is_set():
             ready, _, _ = select.select([self.fileno], [], [], 0.1)
             if ready:
@@ -94,7 +121,7 @@ class TolerantDriver(LinuxDriver):
                 if not data:
                     self._input_ended()
                     return
-                words = decode(data)
+                words = _STRINGS.sub("", decode(data))
                 # Half a character is no text yet, and no text would mean the end to the parser.
                 for message in parser.feed(words) if words else ():
                     self.process_message(message)

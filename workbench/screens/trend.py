@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from typing import TYPE_CHECKING
+
 import numpy as np
 from numpy.typing import NDArray
 
@@ -9,7 +11,9 @@ from workbench import charts
 from workbench.charts import Pane, Picture
 from workbench.screens.cells import TONE_NUMBERS, Screenful
 from workbench.screens.panel import Panel, wrapped
-from workbench.study import Evaluation, Trend
+
+if TYPE_CHECKING:
+    from workbench.study import Evaluation, Trend
 
 
 class TrendPanel(Panel):

@@ -11,6 +11,7 @@ from collections.abc import Callable, Mapping
 from dataclasses import replace
 from datetime import datetime
 from pathlib import Path
+from typing import TYPE_CHECKING
 
 from workbench import study
 from workbench.case import case as cases
@@ -18,8 +19,10 @@ from workbench.case.case import Case, Revision
 from workbench.case.files import CaseFile, Merge, merge, read_case, save_case, write_new
 from workbench.errors import problem
 from workbench.screens import drafts
-from workbench.study import Evaluation
 from workbench.units import Amount, Quantity, plain
+
+if TYPE_CHECKING:
+    from workbench.study import Evaluation
 
 SMALL, LARGE = 1.02, 1.2
 """Factors of a nudge."""

@@ -35,6 +35,7 @@ from __future__ import annotations
 
 import math
 from dataclasses import dataclass, replace
+from functools import lru_cache
 from typing import Final
 
 import numpy as np
@@ -124,9 +125,10 @@ def floor(loop: Loop, events: Events, instruments: Instruments | None = None) ->
     peak, iae = fixed_peak, fixed_iae
     at_once = not acts and loop.load is loop.plant and low <= -events.load_step <= high
     if shows < window and not at_once:
-        rest = _Rest(loop, events.load_step, shows, window - shows, low, high)
+        step, lasts = events.load_step, window - shows
+        rest = _Rest(loop.plant, loop.load, loop.scan, step, shows, lasts, low, high)
         try:
-            peak, beyond = rest.bounds(fixed_peak, fixed_iae)
+            peak, beyond = _bounds(rest, fixed_peak, fixed_iae)
         except CannotSolve as fault:
             none = Figure(None, fault.what)
             return Floor(none, none, Figure(fixed_peak), Figure(fixed_iae), Figure(shows))
@@ -192,6 +194,7 @@ def _first_move(loop: Loop, events: Events) -> float:
     return at * loop.scan - events.load_at + loop.computing_delay
 
 
+@lru_cache(maxsize=64)
 def _fixed(load: TransferFunction, size: float, until: float) -> tuple[float, float]:
     """Peak and IAE of PV as nobody controls it [%, % s]."""
     if until <= load.dead_time:
@@ -259,7 +262,10 @@ class _Rows:
 class _Rest:
     """The load step after the first move has begun to show."""
 
-    loop: Loop
+    plant: TransferFunction
+    load: TransferFunction
+    scan: float | None
+    """[s]"""
     size: float
     """Of the load step."""
     shows: float
@@ -273,7 +279,7 @@ class _Rest:
         """Peak over all, and IAE beyond the fixed part: the best bounds of the grids tried."""
         peak, iae = fixed_peak, 0.0
         for grid in self._grids():
-            if self.loop.scan is None and math.isinf(self.high):
+            if self.scan is None and math.isinf(self.high):
                 return max(peak, self._turned(1.0)), self._turned(0.0)
             found, left = self._least_area(grid, self._rows(grid, True), fixed_iae)
             iae = max(iae, found)
@@ -286,7 +292,7 @@ class _Rest:
 
     def _grids(self) -> list[_Grid]:
         """Each longer than the one before, to the end of the window."""
-        scan = self.loop.scan
+        scan = self.scan
         if scan and scan > self.lasts:
             return []
         if math.isinf(self.high):
@@ -305,7 +311,7 @@ class _Rest:
 
     def _reaching(self, reach: float) -> _Grid:
         """The grid of a time [s]; few scans are looked at closely, as PV moves between them too."""
-        scan = self.loop.scan
+        scan = self.scan
         if not scan:
             return _Grid(reach / (2 * _MOVES), 2 * _MOVES, False, _PARTS // 2)
         scans = max(1, math.floor(reach / scan + 1e-9))
@@ -316,10 +322,10 @@ class _Rest:
 
     def _returns(self) -> float:
         """How long PV takes to come back with the output at its limit all the time [s]."""
-        plant, load, span = self.loop.plant * _INTEGRAL, self.loop.load * _INTEGRAL, self.lasts
+        plant, load, span = self.plant * _INTEGRAL, self.load * _INTEGRAL, self.lasts
         while True:
             step = span / _LOOKS
-            moved = _lattice(plant, self.loop.plant.dead_time, step, _LOOKS + 1)
+            moved = _lattice(plant, self.plant.dead_time, step, _LOOKS + 1)
             free = _lattice(load, self.shows, step, _LOOKS + 1) * self.size
             ends = np.array([self.low * moved, self.high * moved]) + free
             back = (ends.min(axis=0) <= 0.0) & (ends.max(axis=0) >= 0.0)
@@ -332,7 +338,7 @@ class _Rest:
             span = first * step
 
     def _zeros(self) -> list[float]:
-        return [zero.real for zero in self.loop.plant.zeros() if zero.real > 0.0 == zero.imag]
+        return [zero.real for zero in self.plant.zeros() if zero.real > 0.0 == zero.imag]
 
     def _turned(self, power: float) -> float:
         """What the worst zero in the right half plane leaves: area, or peak with power 1."""
@@ -342,13 +348,13 @@ class _Rest:
     def _left(self, zero: float, after: float) -> float:
         """exp(z T) times what Y(z) lacks at T, if the output never moves."""
         late = self.shows + after
-        growing = self.loop.load * TransferFunction.ratio((1.0,), [(1.0, -zero)]) * _INTEGRAL
-        whole = float(self.loop.load(complex(zero)).real) / zero
+        growing = self.load * TransferFunction.ratio((1.0,), [(1.0, -zero)]) * _INTEGRAL
+        whole = float(self.load(complex(zero)).real) / zero
         so_far = float(_lattice(growing, late, 1.0, 1)[0]) if late else 0.0
         return self.size * (math.exp(zero * late) * whole - so_far)
 
     def _rows(self, grid: _Grid, is_area: bool) -> _Rows:
-        plant, load, count = self.loop.plant, self.loop.load, grid.parts + 1
+        plant, load, count = self.plant, self.load, grid.parts + 1
         step = _INTEGRAL * _INTEGRAL if is_area else _INTEGRAL
         moved = _lattice(plant * step, plant.dead_time, grid.part, count)
         free = _lattice(load * step, self.shows, grid.part, count) * self.size
@@ -427,6 +433,12 @@ class _Rest:
         if grid.is_exact:
             pulled = pulled.reshape(grid.moves, grid.splits).sum(axis=1)
         return value + float(np.minimum(self.low * pulled, self.high * pulled).sum())
+
+
+@lru_cache(maxsize=64)
+def _bounds(rest: _Rest, fixed_peak: float, fixed_iae: float) -> tuple[float, float]:
+    """The bounds of a rest; kept, because a change of settings moves none of what they hang on."""
+    return rest.bounds(fixed_peak, fixed_iae)
 
 
 def _lattice(function: TransferFunction, start: float, step: float, count: int) -> Array:

@@ -13,7 +13,7 @@ import math
 from collections.abc import Iterator, Sequence
 from dataclasses import dataclass, field, replace
 from itertools import product
-from typing import Final
+from typing import TYPE_CHECKING, Final
 
 import numpy as np
 from numpy.typing import NDArray
@@ -26,7 +26,6 @@ from workbench.model.spread import judge
 from workbench.model.structures import Structure
 from workbench.model.transfer import TransferFunction
 from workbench.model.variation import Variation
-from workbench.records.candidate import Candidate
 from workbench.sim.family import side_by_side
 from workbench.sim.loop import simulate
 from workbench.sim.metrics import absolute_area
@@ -35,6 +34,9 @@ from workbench.study.loop import instruments_of, loop_of, no_time_domain, plant_
 from workbench.study.operating import about_rest
 from workbench.study.structure import has_one_scan
 from workbench.units import Figure, harmless
+
+if TYPE_CHECKING:
+    from workbench.records.candidate import Candidate
 
 Floats = NDArray[np.float64]
 

@@ -5,7 +5,7 @@ from __future__ import annotations
 import math
 from collections.abc import Callable
 from dataclasses import dataclass, replace
-from typing import Final, Literal, TypeVar
+from typing import TYPE_CHECKING, Final, Literal, TypeVar
 
 import numpy as np
 from numpy.typing import NDArray
@@ -23,7 +23,6 @@ from workbench.model.response import (
 from workbench.model.stability import plant_verdict
 from workbench.model.structures import Structure
 from workbench.model.transfer import TransferFunction
-from workbench.records.record import Record
 from workbench.sim.delayed import impulse_answer, upset_answer
 from workbench.sim.floor import floor
 from workbench.sim.instruments import Instruments
@@ -41,6 +40,9 @@ from workbench.study.loop import (
 )
 from workbench.study.upset import recorded_upset
 from workbench.units import Figure, rounded, text
+
+if TYPE_CHECKING:
+    from workbench.records.record import Record
 
 Floats = NDArray[np.float64]
 Answer = TypeVar("Answer")

@@ -4,11 +4,13 @@ from __future__ import annotations
 
 from dataclasses import replace
 from pathlib import Path
-from typing import Final
+from typing import TYPE_CHECKING, Final
 
 from workbench.case.case import Case
 from workbench.errors import InputError, Problem, RecordError, problem
-from workbench.records.record import Record, read_signal
+
+if TYPE_CHECKING:
+    from workbench.records.record import Record
 
 MOST_ROWS: Final = 5000
 """Changes of an upset that a prediction goes through."""
@@ -71,6 +73,9 @@ def upset_faults(case: Case) -> list[Problem]:
 
 
 def _read(case: Case) -> Record:
+    # A case without such a file is read without the reader of records.
+    from workbench.records.record import read_signal
+
     path, column = Path(case.folder) / case.scenario.load_file, case.scenario.load_column
     if not path.is_file():
         raise problem(
