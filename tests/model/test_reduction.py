@@ -151,9 +151,9 @@ def test_no_model_near_the_best_fit_is_nearer(lags: int) -> None:
     # exact condition of the crossover, by bisection: the phase is there -180 deg
     low, high = 1e-3, 1.0
     for _ in range(60):
-        w = math.sqrt(low * high)
-        phase = -2.0 * w - sum(math.atan(t * w) for t in (8.0, 5.0, 3.0, 3.0))
-        low, high = (w, high) if phase > -math.pi else (low, w)
+        middle = math.sqrt(low * high)
+        phase = -2.0 * middle - sum(math.atan(t * middle) for t in (8.0, 5.0, 3.0, 3.0))
+        low, high = (middle, high) if phase > -math.pi else (low, middle)
     w = np.geomspace(low / 100.0, low, 80)
     target = plant((1j * w).astype(np.complex128))
 
