@@ -93,10 +93,11 @@ def test_the_area_under_pv_cancels_for_more_lags() -> None:
     assert abs(whole(1e-5j) / 1e-5j) < 1e-3
 
 
-def test_a_load_without_a_lag_gets_one() -> None:
+@pytest.mark.parametrize("lead", [9.0, 0.9])
+def test_a_load_without_a_lag_gets_one(lead: float) -> None:
     # common practice: a tenth of the lead
-    found = ideal_feedforward(formula("2/(9 s + 1)"), formula("3")).feedforward
-    assert [found.lead, found.lag] == pytest.approx([9.0, 0.9])
+    found = ideal_feedforward(formula(f"2/({lead} s + 1)"), formula("3")).feedforward
+    assert [found.lead, found.lag] == pytest.approx([lead, 0.1 * lead])
 
 
 @pytest.mark.parametrize(

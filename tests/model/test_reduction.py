@@ -2,8 +2,10 @@
 
 from __future__ import annotations
 
+import math
 from typing import Any
 
+import numpy as np
 import pytest
 from hypothesis import given
 from hypothesis import strategies as st
@@ -11,7 +13,7 @@ from hypothesis import strategies as st
 from tests.model.published import HALF_RULES, HalfRuleCase
 from workbench.errors import NotApplicable
 from workbench.model.formula import parse_formula
-from workbench.model.reduction import SmallModel, half_rule
+from workbench.model.reduction import SmallModel, best_fit, half_rule, misfit
 from workbench.model.transfer import TransferFunction
 
 
@@ -117,3 +119,75 @@ def test_published_example_with_a_lead_is_refused_rather_than_guessed() -> None:
     for case in with_lead:
         with pytest.raises(NotApplicable, match="a lead"):
             half_rule(case.plant.transfer())
+
+
+# --- the fit where control happens ---------------------------------------------------------------
+
+
+@pytest.mark.parametrize(
+    ("formula", "lags", "expected"),
+    [
+        # exact: the nearest model to a plant that is one is that plant
+        ("-2 exp(-3 s)/(10 s + 1)", 1, (-2.0, 10.0, 0.0, 3.0)),
+        ("2 exp(-3 s)/((10 s + 1) (4 s + 1))", 2, (2.0, 10.0, 4.0, 3.0)),
+        ("0.2 exp(-3 s)/s", 1, (0.2, 0.0, 0.0, 3.0)),
+        ("0.2 exp(-3 s)/(s (4 s + 1))", 2, (0.2, 0.0, 4.0, 3.0)),
+    ],
+)
+def test_the_best_fit_to_a_small_model_is_that_model(
+    formula: str, lags: int, expected: tuple[float, ...]
+) -> None:
+    found = best_fit(parse_formula(formula), lags)
+    kept = (found.time_constant, found.second_time_constant)
+    if found.integrating:
+        kept = (0.0, sum(kept))
+    assert (found.gain, *kept, found.dead_time) == pytest.approx(expected, rel=1e-4, abs=1e-4)
+
+
+@pytest.mark.parametrize("lags", [1, 2])
+def test_no_model_near_the_best_fit_is_nearer(lags: int) -> None:
+    """Other route: the error of the docstring, written here, at models a little to each side."""
+    plant = parse_formula("1.5 exp(-2 s)/((8 s + 1) (5 s + 1) (3 s + 1)^2)")
+    # exact condition of the crossover, by bisection: the phase is there -180 deg
+    low, high = 1e-3, 1.0
+    for _ in range(60):
+        middle = math.sqrt(low * high)
+        phase = -2.0 * middle - sum(math.atan(t * middle) for t in (8.0, 5.0, 3.0, 3.0))
+        low, high = (middle, high) if phase > -math.pi else (low, middle)
+    w = np.geomspace(low / 100.0, low, 80)
+    target = plant((1j * w).astype(np.complex128))
+
+    def cost(*changes: float) -> float:
+        gain, first, second, dead_time = (
+            value * (1.0 + change)
+            for value, change in zip(
+                (best.gain, best.time_constant, best.second_time_constant, best.dead_time),
+                changes,
+                strict=True,
+            )
+        )
+        s = 1j * w
+        model = gain * np.exp(-dead_time * s) / ((first * s + 1) * (second * s + 1))
+        return float((np.abs(model - target) ** 2 / np.abs(target)).sum())
+
+    best = best_fit(plant, lags)
+    least = cost(0.0, 0.0, 0.0, 0.0)
+    for i in range(4):
+        for change in (-0.01, 0.01):
+            assert cost(*(change * (i == k) for k in range(4))) >= least
+
+
+def test_how_far_off_a_model_is() -> None:
+    plant = parse_formula("2 exp(-3 s)/(10 s + 1)")
+    # exact: the same shape a tenth larger is off by a tenth of the peak, and not in phase
+    larger = misfit(plant, SmallModel(2.2, False, 10.0, 0.0, 3.0, False))
+    assert larger.peak_step_error_percent == pytest.approx(10.0, rel=1e-9)
+    assert larger.phase_error_deg.value == pytest.approx(0.0, abs=1e-9)
+    # exact: 1 s later is w rad later, and off by 1 - exp(-1/10) in the first second of its own
+    later = misfit(plant, SmallModel(2.0, False, 10.0, 0.0, 4.0, False))
+    low, high = 1e-3, 10.0
+    for _ in range(60):
+        w = math.sqrt(low * high)
+        low, high = (w, high) if -3.0 * w - math.atan(10.0 * w) > -math.pi else (low, w)
+    assert later.phase_error_deg.value == pytest.approx(-math.degrees(low), rel=1e-6)
+    assert later.peak_step_error_percent == pytest.approx(100.0 * -math.expm1(-0.1), rel=0.02)

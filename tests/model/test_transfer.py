@@ -547,6 +547,23 @@ def test_no_gain_is_too_small_to_realise(gain: float, zero: float, damping: floa
     assert abs(value - plant(0.3 + 0.7j)) <= 1e-12 * size
 
 
+@given(st.floats(0.05, 0.9), st.floats(0.05, 0.9), st.floats(2.0, 8.0))
+@settings(max_examples=20)
+def test_a_polynomial_given_whole_has_the_state_space_of_its_factors(
+    damping: float, other: float, time: float
+) -> None:
+    """Exact: two pairs of complex poles and a lag, multiplied out."""
+    factors = [(9.0, 6.0 * damping, 1.0), (time**2, 2.0 * other * time, 1.0), (20.0, 1.0)]
+    whole = np.polymul(np.polymul(factors[0], factors[1]), factors[2])
+    plant = TransferFunction.ratio((3.0, 2.0), [tuple(whole.tolist())], 1.0)
+    for s in (0.3 + 0.7j, 0.02j):
+        value, size = _realised_value(plant, s)
+        exact = (3.0 * s + 2.0) * cmath.exp(-s)
+        for factor in factors:
+            exact /= complex(np.polyval(factor, s))
+        assert abs(value - exact) <= 1e-9 * size
+
+
 def step_responses(size: int, seed: int) -> tuple[float, list[str]]:
     """Step responses of random plants against 60-digit partial fractions: (worst share of the
     response's peak, failures above 1e-9).

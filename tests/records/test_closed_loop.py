@@ -82,6 +82,7 @@ def test_without_setpoint_moves_no_model_is_given(
     result = fit(record)
     assert result.chosen is None
     assert "OP only followed PV" in result.reason
+    assert "so that a controller was at work and SP never moved" in result.reason
     assert result.candidates == ()
 
 

@@ -109,6 +109,19 @@ def test_a_sticking_valve_is_named_with_its_amount(sticking: Record) -> None:
     assert any(one.cause == "valve" and one.supports for one in found.evidence)
 
 
+def test_a_plant_five_times_as_slow_is_judged_alike(sticking: Record) -> None:
+    # exact: nothing but the unit of time is another
+    known = Known(dead_time_s=3.0, integral_time_s=10.0, pv_span=100.0)
+    slow = Known(dead_time_s=15.0, integral_time_s=50.0, pv_span=100.0)
+    one = diagnose(sticking, known)
+    other = diagnose(replace(sticking, time=5.0 * sticking.time), slow)
+
+    assert (other.likely_cause, other.valve_verdict) == (one.likely_cause, one.valve_verdict)
+    assert other.stick_slip_percent.value == pytest.approx(one.stick_slip_percent.value)
+    assert other.minimum_variance_index.value == pytest.approx(one.minimum_variance_index.value)
+    assert other.swings[0].period_s == pytest.approx(5.0 * one.swings[0].period_s)
+
+
 def test_a_gain_that_is_too_high_is_named() -> None:
     record = record_of(pi_loop(proportional=3.2), 1800.0, skip=200, noise=0.3, seed=3)
     found = diagnose(record, Known(dead_time_s=3.0))

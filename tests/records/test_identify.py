@@ -3,11 +3,13 @@
 from __future__ import annotations
 
 import time as clock
+from dataclasses import replace
 from pathlib import Path
 
 import numpy as np
 import pytest
 
+from tests.records.campaigns import MADE as CASES
 from tests.records.making import (
     Answer,
     Array,
@@ -24,6 +26,7 @@ from tests.records.making import (
 from workbench.errors import CannotSolve, InputError
 from workbench.model.plant import SHAPES
 from workbench.records.candidate import Candidate
+from workbench.records.certainty import student
 from workbench.records.identify import Fit, fit
 from workbench.records.record import Record, read_record
 from workbench.records.response import FITTED
@@ -117,6 +120,50 @@ def test_with_noise_the_truth_lies_within_three_standard_errors(
         for key, expected in (truth | {"dead_time_s": (25.0,)}).items():
             off = np.subtract(found(candidate, key), expected)
             assert (np.abs(off) < 3.0 * np.array(spread(candidate, key))).all(), (seed, key)
+
+
+@pytest.mark.parametrize(
+    ("rival", "seed"),
+    # Of a hundred draws two in which the rival is best by BIC, by 0.3 and by 1.9.
+    [("oscillating", 10), ("lead", 47)],
+)
+def test_a_shape_that_is_hardly_better_is_not_chosen_over_a_plainer_one(
+    rival: str, seed: int
+) -> None:
+    """Exact: two lags made these records; neither a swing nor a zero was in them."""
+    made = bump(
+        stamps(200, 8.0, seed + 10_000),
+        two_lags(-0.6, 100.0, 50.0),
+        25.7,
+        noise=0.055,
+        memory=24.0,
+        moves=((0.1, 5.0), (0.55, -5.0)),
+        seed=seed,
+    )
+    result = fit(made, shapes=("second-order", rival), noise_model="correlated")
+    assert [c.shape for c in result.candidates] == [rival, "second-order"]
+    assert result.chosen == "second-order"
+
+
+@pytest.mark.parametrize(
+    ("freedom", "point", "within"),
+    # other route: quadrature of the density at 30 digits; what the expansion leaves out falls with
+    # the fifth power of the freedom
+    [(3, 3.182446, 4e-3), (5, 2.570582, 3e-4), (10, 2.2281389, 1e-5), (30, 2.04227246, 1e-7)],
+)
+def test_student_s_t(freedom: int, point: float, within: float) -> None:
+    assert student(freedom) == pytest.approx(point, abs=within)
+
+
+def test_standard_errors_of_few_rows_count_what_was_fitted() -> None:
+    """Other route: the Cramer-Rao bound by plain differences, with the noise that the residual
+    shows: its sum of squares over rows less gain, time, dead time, level and drift."""
+    made = replace(CASES[0], rows=40, interval=28.0, noise=0.002)
+    record = made.record(3, 0.0)
+    found = best_of(fit(record, shapes=("first-order",), noise_model="white"))
+    noise = np.sqrt(((record.pv - found.fitted_pv) ** 2).sum() / (40 - 5))
+    errors = [float(np.ravel(found.standard_errors[key])[0]) for key in made.truth]
+    assert errors == pytest.approx((made.bound(record) * noise / made.noise).tolist(), rel=0.02)
 
 
 def test_intervals_hold_the_truth_as_often_as_they_say() -> None:
@@ -279,7 +326,7 @@ def test_a_controller_in_automatic_is_cautioned_against_and_refused_when_sp_stoo
     answer, _ = MADE["first-order"]
     time = stamps(400, 4.0)
     resting = bump(time, answer, 25.0, noise=0.2, mode="AUTO", sp=np.full(400, 50.0))
-    assert "SP never moved" in fit(resting).reason
+    assert "the controller was in automatic and SP never moved" in fit(resting).reason
     moved = bump(time, answer, 25.0, noise=0.2, mode="Auto", sp=np.where(time > 99, 55.0, 50.0))
     result = fit(moved)
     assert result.chosen == "first-order"

@@ -8,7 +8,7 @@ from dataclasses import replace
 import numpy as np
 import pytest
 
-from tests.records.making import Array, bump, lag, stamps, swing, two_lags
+from tests.records.making import Array, bump, lag, lead, stamps, swing, two_lags
 from workbench import report
 from workbench.records.candidate import Candidate
 from workbench.records.identify import Fit, fit
@@ -107,8 +107,9 @@ def test_a_gain_that_differs_up_and_down_is_said() -> None:
     assert "for moves up and" in words(result)
 
 
-def test_a_gain_that_changes_with_the_operating_point_is_said() -> None:
-    op = levels(5, 5, 5, -5, -5, -5)
+@pytest.mark.parametrize("steps", [(5, 5, 5, -5, -5, -5), (5, 5, 5)])
+def test_a_gain_that_changes_with_the_operating_point_is_said(steps: tuple[float, ...]) -> None:
+    op = levels(*steps)
     bent = op + 0.03 * (op - 40.0) ** 2
     result = fit(record(op, noisy(through(bent, 1.0, 20.0, 6))), shapes=FIRST)
     assert "The gain goes from" in words(result)
@@ -207,6 +208,26 @@ def test_the_family_spreads_as_the_intervals_say() -> None:
     known = best.certainty
     pair = np.corrcoef(np.log(drawn["time_constants_s"]), drawn["dead_time_s"])[0, 1]
     assert pair == pytest.approx(known.correlation[1, 2], abs=0.06)
+
+
+@pytest.mark.parametrize("shape", ["oscillating", "lead"])
+def test_the_family_of_a_richer_shape_spreads_as_its_intervals_say(shape: str) -> None:
+    answer = swing(1.3, 300.0, 0.4) if shape == "oscillating" else lead(0.8, -60.0, 150.0, 40.0)
+    made = bump(stamps(250, 6.0), answer, 25.7, noise=0.1)
+    best = best_of(fit(made, shapes=(shape,), noise_model="white"))
+    family = best.family(400, seed=5)
+    keys = {"gain": "gain", "damping": "damping", "natural_period_s": "natural_period"}
+    keys["numerator_time_s"] = "numerator_time"
+    for key in keys.keys() & best.interval_95.keys():
+        held = [getattr(plant, keys[key]) for plant in family]
+        drawn = np.array([getattr(value, "seconds", value) for value in held])
+        low, high = np.ravel(np.array(best.interval_95[key]))
+        inside = np.mean((drawn >= low) & (drawn <= high))
+        # exact where a value enters nearly linearly: t standard errors to each side
+        error = float(np.ravel(best.standard_errors[key])[0])
+        assert 0.5 * (high - low) == pytest.approx(1.97 * error, rel=0.05), key
+        # three standard deviations of a share of 0.95 among 400
+        assert inside == pytest.approx(0.95, abs=0.033), key
 
 
 def test_the_profile_of_the_dead_time_rises_on_both_sides() -> None:

@@ -39,6 +39,20 @@ def test_values_and_identity_are_those_of_the_file(tmp_path: Path) -> None:
     assert (record.interval, record.duration) == (1.0, 3.0)
 
 
+def test_seconds_that_pass_twenty_thousand_are_not_days(tmp_path: Path) -> None:
+    rows = "".join(f"{19_999.0 + 0.25 * i},{10 + i},{40 + i % 3}\n" for i in range(9))
+    record = record_of(tmp_path, f"time,pv,op\n{rows}")
+    np.testing.assert_array_equal(record.time, 0.25 * np.arange(9))
+
+
+def test_rows_of_day_numbers_are_chosen_by_seconds_or_by_stamp(tmp_path: Path) -> None:
+    rows = "".join(f"{46356.5 + i / 8640:.10f},{10 + i},{40 + i % 3}\n" for i in range(9))
+    for start in (20.0, "20", "2026-11-30 12:00:20"):
+        record = record_of(tmp_path, f"time,pv,op\n{rows}", dates="serial", start=start)
+        assert record.start_stamp == "2026-11-30 12:00:20"
+        np.testing.assert_array_equal(record.pv, 12.0 + np.arange(7))
+
+
 @pytest.mark.parametrize(
     "content",
     [

@@ -53,6 +53,14 @@ def test_noise_that_rings_is_called_a_swing(damping: float, share: float) -> Non
     )
 
 
+def test_a_period_is_told_finer_than_its_rows() -> None:
+    # exact: zero crossings of a sine lie half a period apart, between the rows
+    found = regularity(np.sin(2.0 * np.pi * np.arange(ROWS) / 41.3))
+    assert found is not None
+    assert found.period == pytest.approx(41.3, rel=3e-3)
+    assert found.index > 40.0
+
+
 @pytest.mark.parametrize(("noise", "share"), [(1.0, 0.89), (0.5, 0.999)])
 def test_a_sine_is_found_through_noise(noise: float, share: float) -> None:
     """Other route: 89 % with noise as large as the amplitude, above 99.9 % with half of it."""
@@ -100,6 +108,9 @@ def test_upsets_are_half_waves_above_the_limit() -> None:
     assert (above.count, below.count) == (20, 0)
     assert above.alarm
     assert not below.alarm
+    # exact: each upset counts 1 and fades by 1 - h/(50 Ti) a row; they end 200 rows apart
+    fades = (1.0 - 0.1 / (50.0 * 40.0)) ** 200
+    assert above.most_at_once == pytest.approx((1.0 - fades**20) / (1.0 - fades), rel=1e-9)
 
 
 def test_noise_below_a_percent_is_no_upset() -> None:

@@ -58,6 +58,12 @@ def test_errors_agree_with_derivatives_by_hand() -> None:
     assert (found.size, found.dead_time_s) == pytest.approx(tuple(exact[:2]), rel=1e-6)
 
 
+def test_a_path_ends_as_long_after_its_last_move_as_the_first_move_comes() -> None:
+    model = half_rule(lag())
+    levels = [(0.0, 0.0), (200.0, 5.0), (400.0, 0.0)]
+    assert errors_of(model, levels, 1.0, 0.3) == errors_of(model, levels, 1.0, 0.3, until=600.0)
+
+
 def test_the_path_stays_within_what_is_allowed_and_returns() -> None:
     plan = plan_test(lag(), noise=0.15, max_pv_change=3.0)
 
@@ -66,6 +72,12 @@ def test_the_path_stays_within_what_is_allowed_and_returns() -> None:
     assert 0.85 * 3.0 <= plan.expected_pv_change <= 3.0
     assert plan.moves[0].pv_reached == pytest.approx(1.8 * plan.bump_op * -np.expm1(-5.0), rel=0.01)
     assert [np.sign(move.op_change) for move in plan.moves] == [1, -1, 1, -1]
+    # exact: each level is held until the next, the last as long as any
+    begins = [move.at_s for move in plan.moves]
+    held = [move.hold_s for move in plan.moves]
+    assert held[:-1] == pytest.approx(np.diff(begins).tolist())
+    assert held[-1] == pytest.approx(plan.hold_s)
+    assert abs(plan.moves[-1].pv_reached) < 0.02 * plan.expected_pv_change
     assert sum(move.op_change for move in plan.moves) == pytest.approx(0.0)
     assert abs(plan.path[2][-1]) < 0.02 * plan.expected_pv_change
 

@@ -280,6 +280,16 @@ def test_an_unstable_loop_is_cut_off_while_it_is_finite() -> None:
     plant = function(1.0, (20.0,), 10.0)
     trace = simulate(Loop(plant, plant, Gains(20.0, 1.0)), Events(1.0, 0.0, 1.0, 500.0, 5000.0))
     assert trace.diverged
+    assert (np.diff(trace.time) >= 0.0).all()
     assert np.isfinite(trace.pv).all()
     assert 1e2 < np.abs(trace.pv).max() <= 1e6
     assert trace.time[-1] < 500.0
+
+
+def test_the_end_of_a_limited_trend_is_there_whatever_it_is() -> None:
+    """Other route: the same trend looked at for longer; its end does not lie on a step."""
+    plant = function(1.8, (40.0,), 6.0)
+    loop = Loop(plant, plant, Gains(2.0, 0.05), low=-1.0, high=1.0)
+    short, long = (simulate(loop, Events(3.0, 22 / 3, 0.0, 0.0, end)) for end in (20.0, 40.0))
+    assert short.time[-1] == 20.0
+    assert short.pv[-1] == pytest.approx(np.interp(20.0, long.time, long.pv), abs=5e-6)

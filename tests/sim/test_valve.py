@@ -168,6 +168,9 @@ def test_table_is_read_along_straight_lines() -> None:
     # exact: at 50 % the slope is 1; 60 % gives 30 and 70 % gives 30 + 17.5
     move = moving(CURVES["table"])
     assert move(20.0) == pytest.approx(20.0 / 2.0 * 1.0 + 17.5, rel=1e-6)
+    # exact: 20 % gives 5, where 50 % gives 20; and the valve ends at 0 and at 100 %
+    assert move(-30.0) == pytest.approx(-15.0, rel=1e-6)
+    assert (move(-80.0), move(80.0)) == pytest.approx((-20.0, 80.0), rel=1e-6)
 
 
 @pytest.mark.parametrize(

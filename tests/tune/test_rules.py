@@ -68,6 +68,8 @@ from workbench.tune.tuning import Tuning, Ultimate
 LAG = SmallModel(2.0, False, 10.0, 0.0, 1.0, True)
 """2 exp(-s)/(10 s + 1)"""
 BALANCED = SmallModel(1.0, False, 1.0, 0.0, 1.0, True)
+HALF = SmallModel(1.0, False, 2.0, 0.0, 1.0, True)
+"""exp(-s)/(2 s + 1), where a power of L/T is not 1"""
 INTEGRATING = SmallModel(0.5, True, 0.0, 0.0, 2.0, True)
 """0.5 exp(-2 s)/s"""
 TWO_LAGS = SmallModel(2.0, False, 20.0, 2.0, 1.0, True)
@@ -253,6 +255,48 @@ WORKED_EXAMPLES = (
         a_plant(BALANCED),
         Tuning(1.086, 1 / 0.61, 0.348),
         MEMORY + "a, T/(c + d), T e at r = 1",
+    ),
+    Worked(
+        "lopez-ise-load-pi",
+        a_plant(HALF),
+        Tuning(1.305 * 0.5**-0.959, 2 / (0.492 * 0.5**-0.739)),
+        MEMORY + "a r^b, T/(c r^d), T e r^f",
+    ),
+    Worked(
+        "lopez-iae-load-pid",
+        a_plant(HALF),
+        Tuning(1.435 * 0.5**-0.921, 2 / (0.878 * 0.5**-0.749), 2 * 0.482 * 0.5**1.137),
+        MEMORY + "a r^b, T/(c r^d), T e r^f",
+    ),
+    Worked(
+        "lopez-ise-load-pid",
+        a_plant(HALF),
+        Tuning(1.495 * 0.5**-0.945, 2 / (1.101 * 0.5**-0.771), 2 * 0.56 * 0.5**1.006),
+        MEMORY + "a r^b, T/(c r^d), T e r^f",
+    ),
+    Worked(
+        "lopez-itae-load-pid",
+        a_plant(HALF),
+        Tuning(1.357 * 0.5**-0.947, 2 / (0.842 * 0.5**-0.738), 2 * 0.381 * 0.5**0.995),
+        MEMORY + "a r^b, T/(c r^d), T e r^f",
+    ),
+    Worked(
+        "rovira-iae-setpoint-pi",
+        a_plant(HALF),
+        Tuning(0.758 * 0.5**-0.861, 2 / (1.02 - 0.323 * 0.5)),
+        MEMORY + "a r^b, T/(c + d r), T e r^f",
+    ),
+    Worked(
+        "rovira-iae-setpoint-pid",
+        a_plant(HALF),
+        Tuning(1.086 * 0.5**-0.869, 2 / (0.74 - 0.13 * 0.5), 2 * 0.348 * 0.5**0.914),
+        MEMORY + "a r^b, T/(c + d r), T e r^f",
+    ),
+    Worked(
+        "rovira-itae-setpoint-pid",
+        a_plant(HALF),
+        Tuning(0.965 * 0.5**-0.85, 2 / (0.796 - 0.1465 * 0.5), 2 * 0.308 * 0.5**0.929),
+        MEMORY + "a r^b, T/(c + d r), T e r^f",
     ),
     Worked("averaging-level-p", a_plant(INTEGRATING), Tuning(0.1), READ + "dq/dh"),
     Worked(

@@ -78,8 +78,7 @@ def analogue_margins(loop: Loop) -> Margins:
     terms = (*open_loop.numerator, *open_loop.denominator)
     delays = {t.dead_time for t in terms} - {0.0}
     longest = max(delays, default=0.0)
-    settled = _at_infinity(open_loop)
-    far = abs(settled) if open_loop.dead_time > 0.0 else settled
+    far = _at_infinity(open_loop)
     margins = _margins(response, _grid(response, corners, longest), open_loop, far=far)
     if len(delays) < 2:
         return margins

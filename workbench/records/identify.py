@@ -43,6 +43,12 @@ scale (R.E. Kass and A.E. Raftery, "Bayes factors", J. Am. Stat. Assoc. 90, 1995
 _UNDECIDED: Final = 6.0
 """Difference in BIC below which a simpler shape may win by the bump that was left out: below strong
 evidence on the same scale."""
+_HARDLY: Final = 2.0
+"""Difference in BIC that is "not worth more than a bare mention" on the same scale: it buys no
+further parameter."""
+_NO_SWING: Final = 0.95
+"""Damping at which an answer passes its end by less than a hundredth of a per cent: where the
+interval reaches it, no swing was seen."""
 
 
 @dataclass(frozen=True)
@@ -120,8 +126,9 @@ def fit(
     -----
     Whether PV was still settling when the record starts is decided by BIC.  Intervals hold for a
     plant that is linear, and for OP that moved at its stamps: OP logged a row late or early shifts
-    the dead time by exactly that row.  Shapes are chosen by BIC; a simpler one within 6 of the best
-    is preferred where it predicts the bump it did not see clearly better.
+    the dead time by exactly that row.  Shapes are chosen by BIC; a simpler one is preferred within
+    2 of the best, and within 6 where it predicts the bump it did not see clearly better; two lags
+    within 6 of a swing whose damping may as well be critical.
 
     Source
     ------
@@ -263,22 +270,33 @@ def _drift(search: Search, terms: int, integrates: bool, best: Solution) -> floa
 
 
 def _choice(found: list[Candidate]) -> Candidate | None:
-    """The best by BIC, or a simpler one near it that predicts the bump left out clearly better.
+    """The best by BIC, or a plainer one near it: with fewer parameters and hardly worse, without a
+    swing that was not seen, or with fewer parameters and a clearly better prediction of the bump
+    that was left out.
 
-    Only a simpler one: one bump less makes rich shapes predict well or badly by chance.
+    Never a richer one: one bump less makes rich shapes predict well or badly by chance.
     """
     if not found:
         return None
     best = found[0]
     near = [c for c in found if c.bic - best.bic < _UNDECIDED]
+    fewest = min(_parameters(c) for c in found if c.bic - best.bic < _HARDLY)
+    if fewest < _parameters(best):
+        best = next(c for c in near if _parameters(c) == fewest)
+    if best.damping is not None and np.max(best.interval_95["damping"]) >= _NO_SWING:
+        best = next((c for c in near if c.shape == "second-order"), best)
     seen = best.judgement.holdout_percent
-    for candidate in near[1:]:
+    for candidate in near:
         other = candidate.judgement.holdout_percent
-        if len(candidate.certainty.names) >= len(best.certainty.names):
+        if _parameters(candidate) >= _parameters(best):
             continue
         if seen is not None and other is not None and 100.0 - other < 0.9 * (100.0 - seen):
             best, seen = candidate, other
     return best
+
+
+def _parameters(candidate: Candidate) -> int:
+    return len(candidate.certainty.names)
 
 
 def _hopeless(record: Record) -> str:
