@@ -154,8 +154,8 @@ class MainPage(Page):
         Command("d", "d", "", "drop_pin", "drop the newest pin", called=PIN),
         Command(
             *("v", "v", "", "view"),
-            "trend, open loop or sensitivity in panel 3, by turns",
-            called="frequency response bode nyquist robustness chart",
+            "the next chart: over time, gain and phase, sensitivity",
+            called="frequency response open loop",
         ),
         Command("u,f6", "u", "undo", "undo", "undo the last change", "F6", "revert take back"),
         Command("y,f7", "y", "redo", "redo", "redo what was undone", "F7", "again", spare=True),
@@ -635,7 +635,7 @@ class MainPage(Page):
     def on_descendant_focus(self, event: DescendantFocus) -> None:
         """Say what the chosen setting is, and which keys there are."""
         panel, keys = self.focused_list(), self.query_one(KeyLine)
-        keys.commands = (panel.key_line if panel else ()) or self.commands
+        keys.commands = self.key_line((panel.key_line if panel else ()) or self.commands)
         keys.redraw()
         self.moved()
 

@@ -7,7 +7,7 @@ from collections.abc import Mapping
 from pathlib import Path
 from typing import TYPE_CHECKING
 
-from workbench import charts, report, study
+from workbench import charts, study
 from workbench.case.case import Case
 from workbench.case.files import file_name
 from workbench.case.tags import tag_words
@@ -30,6 +30,8 @@ def has_clipboard(environment: Mapping[str, str]) -> bool:
 
 def copy_settings(app: App[None], case: Case, path: Path) -> str:
     """The settings of the case to the clipboard and to a file; what happened, in words."""
+    from workbench import report
+
     words = report.settings_block(case)
     place = drafts.folder().parent / "copied" / f"{harmless(path.stem, 60)}_settings.txt"
     try:
@@ -50,6 +52,8 @@ def write_sheet(case: Case, path: Path) -> Path:
 
     Raises `WorkbenchError` where there is nothing to tell, `OSError` where it cannot be written.
     """
+    from workbench import report
+
     retune = study.retune(case)
     trend = charts.retune_rows(retune, report.SHEET_WIDTH, 14)
     words = report.sheet_text(
