@@ -26,7 +26,7 @@ from textual.keys import _character_to_key
 from tests.screens.terminals import Terminal, environment_of
 from workbench import screens
 from workbench.case.files import read_case
-from workbench.screens.keys import Command
+from workbench.screens.keys import FIND, Command
 from workbench.screens.page import Page
 
 Found = tuple[float, list[str]]
@@ -364,7 +364,7 @@ class _Walk:
         """The page that is shown, told by its key line."""
         shown = " ".join(self.terminal.screen.display[-1].split())
         for kind in self.left:
-            if shown in {" ".join(_key_words(line).split()) for line in _lines_of(kind)}:
+            if shown in _lines_of(kind):
                 return kind
         return None
 
@@ -401,8 +401,14 @@ class _Walk:
             self.faults.append(f"{words}: a byte above 0x7e\n{shown}")
 
 
-def _lines_of(kind: type[Page]) -> tuple[tuple[Command, ...], ...]:
-    return kind.key_lines or (kind.commands,)
+def _lines_of(kind: type[Page]) -> set[str]:
+    """Every key line that a page may show: what is spare is left off where there is no room."""
+    found = set()
+    for line in kind.key_lines or (kind.commands,):
+        for whole in (line, (*line, FIND)):
+            short = tuple(each for each in whole if not each.spare)
+            found |= {" ".join(_key_words(each).split()) for each in (whole, short)}
+    return found
 
 
 def _in_turn(kind: type[Page]) -> list[Command]:

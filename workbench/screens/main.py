@@ -194,6 +194,7 @@ class MainPage(Page):
         Command("shift+tab", "shift+Tab", "", "app.focus_previous", "to the panel before"),
         *MOVING,
     )
+    key_lines = (commands, TrendPanel.key_line)
     BINDINGS = bindings(commands)
 
     def __init__(self, work: Work) -> None:
