@@ -70,13 +70,13 @@ class TrendPanel(Panel):
         Command("right", "Left Right", "read", "read(1)", "read values, one column on", "Down"),
         Command("pageup", "PgUp", "", "read(-10)", "ten columns earlier"),
         Command("pagedown", "PgDn", "", "read(10)", "ten columns on"),
-        Command("0", "0", "all", "whole", "show everything, and read nothing"),
+        Command("0", "0", "all", "whole", "show everything, and read nothing", spare=True),
     )
     key_line = (
         *commands,
         Command("v", "v", "view", "", ""),
         Command("p", "p", "pin", "", ""),
-        Command("d", "d", "drop", "", ""),
+        Command("d", "d", "drop", "", "", spare=True),
         Command("z", "z", "alone", "", ""),
         Command("q", "q", "leave", "", ""),
         Command("?", "?", "help", "", ""),
