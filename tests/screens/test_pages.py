@@ -123,6 +123,30 @@ def test_a_record_is_fitted_drawn_and_taken(work: Work) -> None:
             assert work.evaluation.assessment.plant.gain.value == pytest.approx(1.8, rel=0.02)
             await press(pilot, "u")
             assert not work.unsaved
+            await press(pilot, "r")
+            await press(pilot, "enter")
+            await press(pilot, "m")
+            page_of(pilot, MainPage)
+            assert "record cannot tell from it" in text_of(pilot)
+            assert work.evaluation is not None
+            family = work.evaluation.family
+            assert family is not None
+            assert family.plants == 31
+            assert family.stable_percent == 100.0
+            await press(pilot, "u")
+            assert not work.unsaved
+
+    run(story())
+
+
+def test_the_first_page_has_nothing_under_it_to_go_back_to(folder: Path) -> None:
+    async def story() -> None:
+        async with running(Path()) as pilot:
+            start = page_of(pilot, StartPage)
+            for _ in range(3):
+                start.action_back()
+            await settle(pilot)
+            page_of(pilot, StartPage)
 
     run(story())
 

@@ -18,6 +18,7 @@ from pathlib import Path
 from typing import ClassVar, Final
 
 from textual.app import App
+from textual.await_complete import AwaitComplete
 from textual.binding import BindingType
 
 from workbench.errors import WorkbenchError
@@ -98,6 +99,13 @@ class WorkbenchApp(App[None], inherit_bindings=False):
             from workbench.screens.saving import DraftPage
 
             self.push_screen(DraftPage(work, work.draft))
+
+    def pop_screen(self) -> AwaitComplete:
+        """Leave the page on top; the first page is left by ending the program alone."""
+        # Keys that came in a burst may each ask for it, and the last page has nothing under it.
+        if len(self.screen_stack) <= _FIRST:
+            return AwaitComplete.nothing()
+        return super().pop_screen()
 
     def back_to_loop(self, words: str) -> None:
         """Leave the page on top; the loop's page says what happened."""
@@ -211,6 +219,9 @@ def leads_to() -> dict[type[Page], dict[str, type[Page]]]:
         MainPage: {"record": RecordPage, "proposals": ProposalsPage, "tolerance": TolerancePage},
     }
 
+
+_FIRST: Final = 2
+"""Screens while the first page is shown: Textual's own empty one lies under it."""
 
 NOT_FROM_AFAR: Final = frozenset({"back", "help", *(command.action for command in MOVING)})
 """What says nothing before the page is open."""

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import os
 import threading
-from collections.abc import Iterable
+from collections.abc import Callable, Iterable
 from pathlib import Path
 from typing import TYPE_CHECKING, Final, cast
 
@@ -28,6 +28,7 @@ from workbench.screens.waiting import Waiting
 from workbench.screens.work import Work
 
 if TYPE_CHECKING:
+    from workbench.case.case import Case
     from workbench.records.candidate import Candidate
     from workbench.records.identify import Fit
     from workbench.records.record import Reading, Record
@@ -286,6 +287,10 @@ class RecordPage(Page):
         *choosing[:-2],
         *looking[1:],
         Command("a", "a", "", "accept", "take the chosen plant"),
+        Command(
+            *("m", "m", "", "accept_family"),
+            "take it with its family: the plants that the record cannot tell from it",
+        ),
         Command("1", "1", "", "answer(0)", "the first answer, where a question is asked"),
         Command("2", "2", "", "answer(1)", "the second answer"),
         *MOVING,
@@ -578,17 +583,24 @@ class RecordPage(Page):
 
     def action_accept(self) -> None:
         """Take the chosen plant."""
+        self._take(study.accept, "")
+
+    def action_accept_family(self) -> None:
+        """Take the chosen plant with those that the record cannot tell from it."""
+        self._take(study.accept_family, ", with the plants that the record cannot tell from it")
+
+    def _take(self, how: Callable[..., Case], more: str) -> None:
         fit, chosen = self.candidates.fit, self.candidates.chosen
         if fit is None or chosen is None or not self.candidates.display:
             self.tell("choose a record first", "plain")
             return
         try:
-            self.work.change(study.accept(self.work.case, fit, chosen.shape, self.work.path.parent))
+            self.work.change(how(self.work.case, fit, chosen.shape, self.work.path.parent))
         except WorkbenchError as fault:
             self.tell(f"{fault}", "worse")
             return
         self._stop()
-        self.program.back_to_loop(f"the plant is the {chosen.shape} fit of the record")
+        self.program.back_to_loop(f"the plant is the {chosen.shape} fit of the record{more}")
 
 
 def _named(source: study.Source) -> str:

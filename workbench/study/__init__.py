@@ -54,6 +54,7 @@ if TYPE_CHECKING:
     from workbench.study.keep import (
         FileCheck,
         accept,
+        accept_family,
         check_case,
         chosen_candidate,
         record_change,
@@ -122,6 +123,7 @@ __all__ = [
     "TrendReading",
     "Wish",
     "accept",
+    "accept_family",
     "action_of",
     "advise",
     "assess",

@@ -26,6 +26,7 @@ from workbench.records.candidate import Candidate
 from workbench.records.identify import Fit
 from workbench.records.table import LARGEST_FILE
 from workbench.study.assessment import assess
+from workbench.study.family import drawn_plants, with_family
 from workbench.study.loop import controller_of
 from workbench.study.prediction import predicted
 from workbench.study.upset import upset_faults, with_upset_named
@@ -70,6 +71,19 @@ def accept(case: Case, fit: Fit, shape: str | None = None, folder: Path | None =
         dated=_day(fit.record.start_stamp),
     )
     return replace(case, plant=plant)
+
+
+def accept_family(
+    case: Case, fit: Fit, shape: str | None = None, folder: Path | None = None
+) -> Case:
+    """As `accept`, with the plants that the record cannot tell from the fitted one as a family."""
+    drawn = drawn_plants(chosen_candidate(fit, shape), FAMILY)
+    taken = accept(case, fit, shape, folder)
+    return with_family(taken, [_shape_as_typed(plant) for plant in drawn])
+
+
+FAMILY: Final = 30
+"""Plants drawn for a family: enough that the worst of them lies beyond 95 % of all."""
 
 
 def _day(stamp: str | None) -> str:
