@@ -104,7 +104,7 @@ class WorkbenchApp(App[None], inherit_bindings=False):
         """Leave the page on top; the first page is left by ending the program alone."""
         # Keys that came in a burst may each ask for it, and the last page has nothing under it.
         if len(self.screen_stack) <= _FIRST:
-            return AwaitComplete.nothing()
+            return AwaitComplete()
         return super().pop_screen()
 
     def back_to_loop(self, words: str) -> None:
