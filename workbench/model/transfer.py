@@ -129,11 +129,6 @@ class Factored:
         """Every root [1/s], repeated as often as it occurs."""
         return tuple(root for f, p in self.factors for root in _roots(f) for _ in range(p))
 
-    @property
-    def roots_at_origin(self) -> int:
-        """How often s is a factor."""
-        return next((p for f, p in self.factors if f == (1.0, 0.0)), 0)
-
     def divided_by(self, other: Factored) -> Factored | None:
         """The exact quotient where every factor of `other` is a factor here, else None."""
         mine, theirs = Counter(dict(self.factors)), Counter(dict(other.factors))

@@ -17,12 +17,8 @@ from numpy.typing import NDArray
 from workbench.errors import NotApplicable
 from workbench.records.record import Record
 from workbench.records.response import Array
+from workbench.records.stretch import is_automatic
 from workbench.units import text
-
-_AUTOMATIC: Final = frozenset(
-    {"A", "AUT", "AUTO", "AUTOMATIC", "C", "CAS", "CASC", "CASCADE", "RCAS"}
-)
-"""Words for a controller that moves OP by itself."""
 
 _FOLLOWS: Final = 0.95
 """Share of the moves of OP that PV explains above which OP only follows PV."""
@@ -80,14 +76,13 @@ def feedback(record: Record) -> Feedback:
     memory): with a simple controller and no outside excitation the regressors are dependent.
     """
     moving = np.diff(record.op) != 0
-    automatic = np.zeros(len(record.op), dtype=bool)
-    if record.mode is not None:
-        automatic = np.array([mode.strip().upper() in _AUTOMATIC for mode in record.mode])
-    manual = 0 if record.mode is None else int(np.count_nonzero(moving & ~automatic[1:]))
+    logged = is_automatic(record)
+    automatic = np.zeros(len(record.op), dtype=bool) if logged is None else logged
+    manual = 0 if logged is None else int(np.count_nonzero(moving & ~automatic[1:]))
     moved_sp = 0
     if record.sp is not None:
         steps = np.diff(record.sp) != 0
-        moved_sp = int(np.count_nonzero(steps & (automatic[1:] | (record.mode is None))))
+        moved_sp = int(np.count_nonzero(steps & (automatic[1:] | (logged is None))))
     most = bool(np.count_nonzero(moving) > 0.5 * len(record.op))
     return Feedback(
         float(automatic.mean()), most, _explained(record) if most else 0.0, moved_sp, manual

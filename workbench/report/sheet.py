@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import re
-from collections.abc import Mapping, Sequence
+from collections.abc import Callable, Mapping, Sequence
 from typing import TYPE_CHECKING, Final
 
 from workbench.report.files import settings_data
@@ -218,11 +218,11 @@ _TOLERANCE: Final = (
 )
 
 
-def _margin(evaluation: Evaluation, of: object) -> str:
+def _margin(evaluation: Evaluation, of: Callable[[Margins], str]) -> str:
     judged = evaluation.assessment.judged
     if judged is None or not judged.margins.stable:
         return "NOT STABLE"
-    return str(of(judged.margins)) if callable(of) else ""
+    return of(judged.margins)
 
 
 def _assumed(retune: Retune, units: Mapping[str, str]) -> list[str]:
@@ -250,26 +250,21 @@ def _assumed(retune: Retune, units: Mapping[str, str]) -> list[str]:
 
 
 def _cautions(retune: Retune) -> list[str]:
+    from workbench.study import HANDOVER
+
     notes: list[Note] = [n for n in retune.after.cautions if n.severity == "caution"]
-    lines = [wrapped(f"- {note.text}", WIDTH, hang="  ") for note in notes]
-    return [
-        *lines,
-        *(f"- {line}" if i else line for i, line in enumerate(handover_lines(WIDTH - 2)) if line),
-    ]
+    told = [*(note.text for note in notes), *HANDOVER]
+    return [wrapped(f"- {words}", WIDTH, hang="  ") for words in told]
 
 
 def _way_back(retune: Retune, file: str) -> list[str]:
-    number = None
+    words = "Enter again the settings noted above; the case file has none on record."
     if retune.old is not None:
         number = retune.case.history.index(retune.old) + 1
-    if number is None:
-        words = "Enter again the settings noted above; the case file has none on record."
-    else:
         words = (
             "If the loop swings, put it in manual at its usual output, enter the present settings"
             " of the first column and put it back in automatic. They are entry"
-            f" {number} of `workbench history {file}`, by"
-            f" {retune.old.who if retune.old else ''}."
+            f" {number} of `workbench history {file}`, by {retune.old.who}."
         )
     return [wrapped(words, WIDTH)]
 

@@ -8,6 +8,7 @@ from dataclasses import dataclass, replace
 from workbench.case.case import Case, Revision, with_settings
 from workbench.errors import InputError
 from workbench.model.pid import Controller
+from workbench.study.assessment import Assessment, assess
 from workbench.study.evaluation import Evaluation, evaluate
 from workbench.study.loop import controller_of
 from workbench.units import Amount, Figure, rounded
@@ -50,12 +51,16 @@ def retune(case: Case) -> Retune:
     after = evaluate(case)
     old, earlier = _in_force(case)
     if old is None or earlier is None:
-        return Retune(case, None, None, after, (_stage("new", case),))
+        return Retune(case, None, None, after, (_stage("new", after.assessment, case),))
     before = evaluate(earlier)
-    steps = [_stage("present", earlier), _stage("new", case)]
+    steps = [
+        _stage("present", before.assessment, earlier),
+        _stage("new", after.assessment, case),
+    ]
     middle = _half_way(controller_of(earlier), controller_of(case))
     if middle is not None:
-        steps.insert(1, _stage("half way", replace(case, controller=middle)))
+        between = replace(case, controller=middle)
+        steps.insert(1, _stage("half way", assess(between), between))
     return Retune(case, old, before, after, tuple(steps))
 
 
@@ -70,8 +75,8 @@ def _in_force(case: Case) -> tuple[Revision | None, Case | None]:
     return None, None
 
 
-def _stage(name: str, case: Case) -> Stage:
-    judged = evaluate(case).assessment.judged
+def _stage(name: str, found: Assessment, case: Case) -> Stage:
+    judged = found.judged
     assert judged is not None
     return Stage(name, controller_of(case), judged.margins.max_sensitivity)
 
